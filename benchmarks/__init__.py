@@ -1,0 +1,1 @@
+"""Measurements of the library, each figure beside its goal: ``python -m benchmarks``."""

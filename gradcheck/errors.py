@@ -1,0 +1,93 @@
+"""Every exception of the package.
+
+GradcheckError (Exception)
+├── UsageError (ValueError)              the caller's mistake, told once, at the front door
+│   ├── DerivativeShapeError             a claim whose shape does not fit the model's
+│   └── ModelNotFound                    ``package.module:attribute`` leads nowhere
+├── ModelFailure (RuntimeError)          the model could not be evaluated at its start point
+└── DerivativeMismatch (AssertionError)  a claimed derivative was refuted; its text is the report
+UndecidedWarning (UserWarning)           a check that could not decide
+
+All of them carry plain data and survive pickling, because they cross between worker processes.
+"""
+
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from gradcheck.records.report import CheckReport
+
+
+class GradcheckError(Exception):
+    """What this package raises."""
+
+
+class UsageError(GradcheckError, ValueError):
+    """The call cannot be carried out as it stands: what, which value, and how to mend it."""
+
+
+class DerivativeShapeError(UsageError):
+    """A claimed derivative has a shape that does not fit the model.
+
+    Attributes
+    ----------
+    name : str
+        The claim, such as ``"gradient"``.
+    expected, found : tuple of int
+        The two shapes.
+    """
+
+    def __init__(
+        self, message: str, name: str = "", expected: tuple[int, ...] = (), found: tuple[int, ...] = ()
+    ) -> None:
+        super().__init__(message)
+        self.name = name
+        self.expected = expected
+        self.found = found
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        return type(self), (self.args[0], self.name, self.expected, self.found)
+
+
+class ModelNotFound(UsageError):
+    """The address of a model does not lead to one."""
+
+
+class ModelFailure(GradcheckError, RuntimeError):
+    """The model could not be evaluated at its start point.
+
+    Attributes
+    ----------
+    reason : str
+        One of ``"crash"``, ``"non-finite"``, ``"timeout"``.
+    last_words : str
+        The model's own message.
+    """
+
+    def __init__(self, message: str, reason: str = "crash", last_words: str = "") -> None:
+        super().__init__(message)
+        self.reason = reason
+        self.last_words = last_words
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        return type(self), (self.args[0], self.reason, self.last_words)
+
+
+class DerivativeMismatch(GradcheckError, AssertionError):
+    """A claimed derivative was refuted (or left undecided where that was asked to raise); the text is the report.
+
+    Attributes
+    ----------
+    report : CheckReport
+        Everything that was found.
+    """
+
+    def __init__(self, report: "CheckReport") -> None:
+        super().__init__(str(report))
+        self.report = report
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        return type(self), (self.report,)
+
+
+class UndecidedWarning(UserWarning):
+    """A derivative could be neither confirmed nor refuted."""

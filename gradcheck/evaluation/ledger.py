@@ -1,0 +1,58 @@
+"""What happened while the model was evaluated: counts, seconds, failures and other facts."""
+
+from collections import Counter, defaultdict
+from dataclasses import dataclass, field
+
+from gradcheck.evaluation.protocol import Status
+from gradcheck.records.arrays import Array
+
+#: Failures beyond this many are counted, not kept: a model that always fails must not fill the memory.
+FAILURES_KEPT = 200
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Failure:
+    """One evaluation that gave no finite value: where, what kind, and the model's own last words."""
+
+    function: str
+    point: Array
+    status: Status
+    message: str
+
+
+@dataclass(slots=True)
+class Ledger:
+    """Mutable account of one session of evaluations; written in one place only, the evaluator.
+
+    Attributes
+    ----------
+    calls, seconds : counters
+        Number of calls and time spent, by ``"model"``, ``"complex"``, ``"jax"``, ``"autograd"``, ``"claim"``.
+    failures : list of Failure
+    failed : int
+        How many evaluations failed, kept or not.
+    mutated : set of str
+        Functions that wrote into their input.
+    output_kinds : dict of function -> str
+        The dtype of what the model returned: ``"float64"``, ``"float32"``, ``"int64"`` ...
+    """
+
+    calls: Counter[str] = field(default_factory=Counter)
+    seconds: defaultdict[str, float] = field(default_factory=lambda: defaultdict(float))
+    failures: list[Failure] = field(default_factory=list)
+    failed: int = 0
+    mutated: set[str] = field(default_factory=set)
+    output_kinds: dict[str, str] = field(default_factory=dict)
+    notices: list[str] = field(default_factory=list)
+    refused: int = 0
+
+    @property
+    def evaluations(self) -> int:
+        """Calls of the user's model, in real and complex numbers."""
+        return self.calls["model"] + self.calls["complex"]
+
+    def fail(self, failure: Failure) -> None:
+        """Record a failed evaluation."""
+        self.failed += 1
+        if len(self.failures) < FAILURES_KEPT:
+            self.failures.append(failure)

@@ -1,0 +1,135 @@
+"""Where the model may be called: bounds, integers, typical sizes."""
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from gradcheck.errors import UsageError
+from gradcheck.records.arrays import Array, BoolArray, frozen
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Domain:
+    """The box in which the model may be called; all arrays have shape (n,).
+
+    Attributes
+    ----------
+    lower, upper : ndarray
+        Infinite where there is no bound.
+    scale : ndarray
+        Size of each variable, > 0: the typical size where it was given, else |x|, else the bounds' width, else 1.
+    integer : ndarray of bool
+    """
+
+    lower: Array
+    upper: Array
+    scale: Array
+    integer: BoolArray
+
+    @property
+    def size(self) -> int:
+        return int(self.lower.size)
+
+    @property
+    def bounded(self) -> BoolArray:
+        """Where both bounds are finite."""
+        result: BoolArray = np.isfinite(self.lower) & np.isfinite(self.upper)
+        return result
+
+
+def domain_of(x: Array, *, bounds: Any = None, typical: Any = None, integer: Any = None) -> Domain:
+    """The domain around the point x.
+
+    Parameters
+    ----------
+    x : ndarray, shape (n,)
+    bounds : list of (lower, upper) pairs, tuple (lower, upper), or object with ``lb`` and ``ub``
+        None stands for no bound.
+    typical : float or array, optional
+    integer : array of bool, optional
+
+    Raises
+    ------
+    UsageError
+        If shapes do not fit, a bound is NaN, lower exceeds upper, or x lies outside.
+    """
+    lower, upper = _bounds(bounds, x)
+    outside = np.flatnonzero((x < lower) | (x > upper))
+    if outside.size:
+        i = int(outside[0])
+        raise UsageError(
+            f"entry {i} of the point is {x[i]:g}, outside its bounds [{lower[i]:g}, {upper[i]:g}]; "
+            "move the point or widen the bounds"
+        )
+    return Domain(
+        lower=frozen(lower),
+        upper=frozen(upper),
+        scale=frozen(_scale(x, lower, upper, typical)),
+        integer=frozen(np.zeros(x.size, bool) if integer is None else integer, dtype=bool),
+    )
+
+
+def _scale(x: Array, lower: Array, upper: Array, typical: Any) -> Array:
+    width = np.where(np.isfinite(upper - lower) & (upper > lower), upper - lower, 1.0)
+    own = np.where(x != 0, np.abs(x), width)
+    if typical is None:
+        return own
+    given = np.asarray(typical, dtype=float)
+    if given.size not in (1, x.size):
+        raise UsageError(f"typical has {given.size} entries but there are {x.size} variables")
+    given = np.broadcast_to(given.ravel(), x.shape)
+    bad = np.flatnonzero(~(np.isnan(given) | ((given > 0) & np.isfinite(given))))
+    if bad.size:
+        raise UsageError(f"typical[{bad[0]}] is {given[bad[0]]:g}; a typical size must be finite and > 0")
+    return np.where(np.isnan(given), own, given)
+
+
+def _bounds(bounds: Any, x: Array) -> tuple[Array, Array]:
+    n = x.size
+    if bounds is None:
+        return np.full(n, -np.inf), np.full(n, np.inf)
+    if hasattr(bounds, "lb") and hasattr(bounds, "ub"):
+        return _ordered(_side(bounds.lb, n, -np.inf), _side(bounds.ub, n, np.inf))
+    if not isinstance(bounds, list | tuple | np.ndarray):
+        raise UsageError(f"bounds is {bounds!r}; give a list of (lower, upper) pairs or a tuple (lower, upper)")
+    readings = []
+    if len(bounds) == n and all(np.ndim(pair) == 1 and len(pair) == 2 for pair in bounds):
+        readings.append((_side([pair[0] for pair in bounds], n, -np.inf), _side([p[1] for p in bounds], n, np.inf)))
+    if len(bounds) == 2 and not (isinstance(bounds, list) and readings):
+        readings.append((_side(bounds[0], n, -np.inf), _side(bounds[1], n, np.inf)))
+    if not readings:
+        raise UsageError(
+            f"bounds has {len(bounds)} parts for {n} variables; give a list of {n} (lower, upper) pairs "
+            "or a tuple (lower, upper)"
+        )
+    fitting = [(low, high) for low, high in readings if np.all((low < high) & (low <= x) & (x <= high))]
+    if len(fitting) == 2 and not all(np.array_equal(a, b) for a, b in zip(*fitting, strict=True)):
+        raise UsageError(
+            f"bounds={bounds!r} can be read as two pairs or as (lower, upper); write the pairs as a list: "
+            f"{[tuple(pair) for pair in bounds]!r}, or use scipy.optimize.Bounds"
+        )
+    return _ordered(*(fitting or readings)[0])
+
+
+def _side(side: Any, n: int, missing: float) -> Array:
+    values = [missing if value is None else value for value in np.ravel(np.asarray(side, dtype=object))]
+    try:
+        array = np.array(values, dtype=float)
+    except (TypeError, ValueError):
+        raise UsageError(f"bounds holds {side!r}; numbers or None are needed") from None
+    if array.size == 1:
+        array = np.full(n, array[0])
+    if array.size != n:
+        raise UsageError(f"a side of bounds has {array.size} entries but there are {n} variables")
+    if np.isnan(array).any():
+        raise UsageError(f"a bound is NaN (entry {int(np.flatnonzero(np.isnan(array))[0])}); use None for no bound")
+    return array
+
+
+def _ordered(lower: Array, upper: Array) -> tuple[Array, Array]:
+    wrong = np.flatnonzero(lower > upper)
+    if wrong.size:
+        i = int(wrong[0])
+        raise UsageError(f"the bounds of entry {i} are the wrong way round: lower {lower[i]:g} > upper {upper[i]:g}")
+    return lower, upper

@@ -1,0 +1,244 @@
+"""The two reports that users receive."""
+
+import json
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from gradcheck.records.advice import Advice
+from gradcheck.records.arrays import Array, frozen
+from gradcheck.records.finding import Finding
+from gradcheck.records.plain import plain
+from gradcheck.records.verdict import DiagnosisCode, Verdict
+
+FORMAT_VERSION = 1
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Entries:
+    """The entries of a claim that were looked at, as parallel arrays of length k.
+
+    Attributes
+    ----------
+    index : ndarray of int
+        ``(k,)`` flat indices for a vector, ``(k, 2)`` (row, column) for a matrix.
+    name : tuple of str
+        Readable name of each entry.
+    claim, witness, bound : ndarray, shape (k,)
+        Claimed value, witness value, and the witness's absolute error bound.
+    digits : ndarray, shape (k,)
+        Decimal digits to which claim and witness are seen to agree.
+    verdict : tuple of Verdict
+    source : tuple of str
+        Which witness decided.
+    reason : tuple of str
+        Why an entry is undecided or was not judged by the plain rule; empty where there is nothing to say.
+    """
+
+    index: NDArray[np.intp]
+    name: tuple[str, ...]
+    claim: Array
+    witness: Array
+    bound: Array
+    digits: Array
+    verdict: tuple[Verdict, ...]
+    source: tuple[str, ...]
+    reason: tuple[str, ...]
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "index", frozen(self.index, dtype=np.intp))
+        for name in ("claim", "witness", "bound", "digits"):
+            object.__setattr__(self, name, frozen(getattr(self, name)))
+
+    def __len__(self) -> int:
+        return len(self.name)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class DirectionChecks:
+    """Directional derivatives that were compared instead of single entries, as parallel arrays of length d."""
+
+    claim: Array
+    witness: Array
+    bound: Array
+    verdict: tuple[Verdict, ...]
+    smallest_visible: float = float("nan")
+
+    def __post_init__(self) -> None:
+        for name in ("claim", "witness", "bound"):
+            object.__setattr__(self, name, frozen(getattr(self, name)))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Diagnosis:
+    """A likely mistake: its code, one sentence with the evidence and the mend, and the names of the entries."""
+
+    code: DiagnosisCode
+    text: str
+    entries: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class CheckReport:
+    """What `check` found out about one claim.
+
+    Attributes
+    ----------
+    verdict : Verdict
+    kind : str
+        ``"gradient"`` or ``"jacobian"``.
+    function : str
+        Name of the model or output whose derivative is claimed.
+    point : ndarray, shape (n,)
+    entries : Entries
+    directions : DirectionChecks or None
+    diagnoses : tuple of Diagnosis
+    findings : tuple of Finding
+    notices : tuple of str
+        What was changed on the way to the model (integers made floats, and the like).
+    evaluations : int
+        Model evaluations spent.
+    seconds : float
+    """
+
+    verdict: Verdict
+    kind: str
+    function: str
+    point: Array
+    entries: Entries
+    directions: DirectionChecks | None = None
+    diagnoses: tuple[Diagnosis, ...] = ()
+    findings: tuple[Finding, ...] = ()
+    notices: tuple[str, ...] = ()
+    evaluations: int = 0
+    seconds: float = 0.0
+    text: str = ""
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "point", frozen(self.point))
+
+    def __str__(self) -> str:
+        return self.text
+
+    def to_dict(self) -> dict[str, Any]:
+        """The report in builtin types; NaN and infinities as strings."""
+        return {"format": "gradcheck-check", "version": FORMAT_VERSION} | plain(self)  # type: ignore[no-any-return]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class WitnessRecord:
+    """How one derivative source fares on one function of this model.
+
+    Attributes
+    ----------
+    works : bool
+    bound : float
+        Median of bound/|value| over the entries; NaN if it does not work.
+    evaluations : int
+        Model evaluations (or AD passes) for one full derivative.
+    seconds : float
+    reason : str
+        Why it does not work, or a restriction.
+    """
+
+    function: str
+    source: str
+    works: bool
+    bound: float
+    evaluations: int
+    seconds: float
+    reason: str = ""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Steps:
+    """Best steps for the user's own solver, per variable, and the derivative error that each leaves.
+
+    All arrays have shape (n,); steps in units of the variable, errors in units of the function per unit of the
+    variable; `noise` is the noise level of the function.
+    """
+
+    function: str
+    names: tuple[str, ...]
+    forward: Array
+    forward_error: Array
+    central: Array
+    central_error: Array
+    noise: float
+
+    def __post_init__(self) -> None:
+        for name in ("forward", "forward_error", "central", "central_error"):
+            object.__setattr__(self, name, frozen(getattr(self, name)))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Scaling:
+    """Suggested divisor of each variable, shape (n,), and the spread of |typical × derivative| it evens out."""
+
+    names: tuple[str, ...]
+    variables: Array
+    spread: float
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "variables", frozen(self.variables))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class AuditReport:
+    """What `audit` found out about a problem.
+
+    Attributes
+    ----------
+    name : str
+    ready : bool
+        No blocker, nothing refuted, not everything undecided.
+    claims : tuple of CheckReport
+    witnesses : tuple of WitnessRecord
+    findings : tuple of Finding
+        Worst first.
+    accepted : tuple of dict
+        Findings silenced knowingly, each with its reason.
+    steps : tuple of Steps
+    scaling : Scaling or None
+    advice : Advice
+    environment : dict
+        Versions, seed, settings, threads.
+    complete : bool
+        False where budget or time cut the audit short; `not_looked_at` says what is missing.
+    evaluable : bool
+        False if the model could not be evaluated at its start point; nothing else was looked at then.
+    """
+
+    name: str
+    ready: bool
+    claims: tuple[CheckReport, ...]
+    witnesses: tuple[WitnessRecord, ...]
+    findings: tuple[Finding, ...]
+    steps: tuple[Steps, ...]
+    scaling: Scaling | None
+    advice: Advice
+    environment: dict[str, Any]
+    evaluations: int
+    seconds: float
+    complete: bool
+    evaluable: bool = True
+    accepted: tuple[dict[str, str], ...] = ()
+    not_looked_at: tuple[str, ...] = ()
+    notices: tuple[str, ...] = ()
+    variables: tuple[dict[str, Any], ...] = ()
+    text: str = field(default="")
+
+    def __str__(self) -> str:
+        return self.text
+
+    def to_dict(self) -> dict[str, Any]:
+        """The report in builtin types, with its format name and version; NaN and infinities as strings."""
+        return {"format": "gradcheck-audit", "version": FORMAT_VERSION} | plain(self)  # type: ignore[no-any-return]
+
+    def write_json(self, path: str | Path) -> None:
+        """Write the report as one JSON document (UTF-8) that holds to the schema in the package."""
+        text = json.dumps(self.to_dict(), indent=2, allow_nan=False, ensure_ascii=False)
+        Path(path).write_text(text + "\n", encoding="utf-8")
