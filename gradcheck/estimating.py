@@ -1,0 +1,195 @@
+"""The verb `estimate`: the best derivative from function values, value ± bound."""
+
+import time
+from typing import Any
+
+import numpy as np
+
+from gradcheck.errors import UsageError
+from gradcheck.evaluation.conduct import addressed, conduct_one
+from gradcheck.evaluation.pipeline import Session, open_session
+from gradcheck.evaluation.protocol import Directions
+from gradcheck.problem.layout import Points
+from gradcheck.problem.subject import Subject, subjects_of_function
+from gradcheck.records.arrays import Array
+from gradcheck.records.estimate import Estimate
+from gradcheck.report.estimate_text import estimate_text
+from gradcheck.witnesses.finite_difference import finite_difference
+from gradcheck.witnesses.steps import room_along
+from gradcheck.witnesses.testimony import Testimony
+
+
+def estimate(
+    function: Any,
+    at: Any,
+    *,
+    direction: Any = None,
+    order: int = 1,
+    output: Any = None,
+    wrt: Any = None,
+    bounds: Any = None,
+    names: Any = None,
+    typical: Any = None,
+    budget: int | None = None,
+    time_limit: float | str | None = None,
+) -> Estimate:
+    """The best derivative that function values give, with an error bound.
+
+    Parameters
+    ----------
+    function : callable
+        The model: takes what `at` holds, returns a number or an array.
+    at : float, list, array or nesting
+        The point.
+    direction : array, optional
+        Derivative along this direction (same number of entries as the point) instead of all variables.
+    order : 1 or 2
+        First derivatives, or second derivatives of a model that returns one number.
+    output : callable, optional
+        Picks what is differentiated from what the model returns.
+    wrt : str or list of str, optional
+        Which of several arguments (`gradcheck.args`) to differentiate with respect to.
+    bounds : list of (lower, upper) pairs or tuple (lower, upper), optional
+        The model is never called outside.
+    names : list of str, optional
+    typical : float or array, optional
+        Typical size of the variables; used where a value is zero or much smaller than what matters.
+    budget : int, optional
+        Largest number of evaluations.
+    time_limit : float or str, optional
+        Seconds, or text such as ``"10min"``.
+
+    Returns
+    -------
+    Estimate
+        ``value`` has the shape of the input for a model that returns a number, ``(m, n)`` for a vector model, ``(n, n)``
+        for order 2, ``()`` or ``(m,)`` along a direction. The bound is infinite where nothing can be said (kink, jump,
+        plateau, budget spent), with a reason.
+
+    Raises
+    ------
+    UsageError
+        If the call cannot be carried out as it stands.
+    ModelFailure
+        If the model raises or is not finite at the point.
+
+    Examples
+    --------
+    >>> import gradcheck, math
+    >>> answer = gradcheck.estimate(math.exp, at=0.0)
+    >>> bool(abs(answer.value - 1.0) <= answer.bound)
+    True
+    """
+    began = time.perf_counter()
+    if isinstance(at, Points):
+        raise UsageError("estimate takes one point; call it once for each of gradcheck.points(...)")
+    if order not in (1, 2):
+        raise UsageError(f"order is {order!r}; first (1) and second (2) derivatives are available")
+    subject = subjects_of_function(
+        function, at, claims={}, wrt=wrt, output=output, bounds=bounds, names=names, typical=typical
+    )[0]
+    session = open_session(subject, budget=budget, time_limit=time_limit)
+    centre = next(iter(session.start_values().values()))
+    if order == 2 and direction is None:
+        return _finished(_second_derivatives(session, centre), session, began)
+    directions = _directions(subject, direction)
+    testimony = differences_along(session, directions, centre, derivative=order)
+    return _finished(_shaped(testimony, subject, session, direction is not None), session, began)
+
+
+def differences_along(session: Session, directions: Directions, centre: Array, *, derivative: int = 1) -> Testimony:
+    """Testimony of the difference witness about the only function of the session's subject."""
+    subject = session.subject
+    room = room_along(subject.start, directions, subject.domain)
+    inquiry = finite_difference(subject.start, directions, room, centre, derivative=derivative)
+    return conduct_one(addressed(inquiry, function=subject.name), session.gate)
+
+
+def _directions(subject: Subject, direction: Any) -> Directions:
+    if direction is None:
+        return np.arange(subject.layout.size)
+    if subject.layout.single is None:
+        row = subject.layout.flatten(direction, "direction")
+    else:
+        row = np.ravel(np.asarray(direction, dtype=float))
+    if row.size != subject.layout.size:
+        raise UsageError(f"direction has {row.size} entries but there are {subject.layout.size} variables")
+    if not np.isfinite(row).all() or not row.any():
+        raise UsageError("direction must be finite and not all zero")
+    return row[None, :]
+
+
+def _shaped(testimony: Testimony, subject: Subject, session: Session, along: bool) -> dict[str, Any]:
+    """Fields of the record with the derivative's proper shape: (d, m) becomes output shape + input shape."""
+    output_shape = session.shape_of(subject.name)
+    shape = output_shape if along else (*output_shape, *subject.layout.shape)
+    m = testimony.value.shape[1]
+
+    def name(row: int, output: int) -> str:
+        variable = "direction" if along else subject.layout.name(row)
+        return variable if m == 1 else f"output {output}, {variable}"
+
+    return {
+        **{field: getattr(testimony, field).T.reshape(shape) for field in ("value", "bound", "step")},
+        "noise": testimony.noise,
+        "source": testimony.source,
+        "reasons": {name(row, output): reason for (row, output), reason in testimony.reasons.items()},
+        "names": ("direction",) if along else subject.names if subject.layout.size <= 1000 else (),
+    }
+
+
+def _second_derivatives(session: Session, centre: Array) -> dict[str, Any]:
+    """The Hessian (n, n) by second differences: along the axes, and along sums of two axes (polarisation).
+
+    With q(v) the second derivative along v, H_ij = (q(e_i s_i + e_j s_j) − s_i² H_ii − s_j² H_jj) / (2 s_i s_j); the sizes
+    s_i make all variables move alike.
+    """
+    subject = session.subject
+    n = subject.layout.size
+    if centre.size != 1:
+        raise UsageError(
+            f"second derivatives need a model that returns one number; this one returns {centre.size}: "
+            "pick one with output=..., or give a direction"
+        )
+    axes = differences_along(session, np.arange(n), centre, derivative=2)
+    value = np.diag(axes.value[:, 0])
+    bound = np.diag(axes.bound[:, 0])
+    step = np.diag(axes.step[:, 0])
+    pairs = [(i, j) for i in range(n) for j in range(i + 1, n)]
+    if pairs:
+        size = np.where(subject.start != 0, np.abs(subject.start), subject.domain.scale)
+        # Powers of two: scaling loses no digit.
+        size = 2.0 ** np.round(np.log2(size))
+        rows = np.zeros((len(pairs), n))
+        for row, (i, j) in zip(rows, pairs, strict=True):
+            row[i], row[j] = size[i], size[j]
+        mixed = differences_along(session, rows, centre, derivative=2)
+        for k, (i, j) in enumerate(pairs):
+            own = size[i] ** 2 * value[i, i] + size[j] ** 2 * value[j, j]
+            scale = 2 * size[i] * size[j]
+            value[i, j] = value[j, i] = (mixed.value[k, 0] - own) / scale
+            error = mixed.bound[k, 0] + size[i] ** 2 * bound[i, i] + size[j] ** 2 * bound[j, j]
+            bound[i, j] = bound[j, i] = error / scale
+            step[i, j] = step[j, i] = mixed.step[k, 0]
+    shape = (*subject.layout.shape, *subject.layout.shape)
+    return {
+        "value": value.reshape(shape),
+        "bound": bound.reshape(shape),
+        "step": step.reshape(shape),
+        "noise": axes.noise,
+        "source": axes.source,
+        "reasons": {subject.layout.name(row): reason for (row, _), reason in axes.reasons.items()},
+        "names": subject.names if n <= 1000 else (),
+    }
+
+
+def _finished(fields: dict[str, Any], session: Session, began: float) -> Estimate:
+    from dataclasses import replace
+
+    record = Estimate(
+        **fields,
+        evaluations=session.ledger.evaluations,
+        notices=tuple(session.ledger.notices),
+        seconds=time.perf_counter() - began,
+    )
+    return replace(record, text=estimate_text(record))

@@ -1,0 +1,215 @@
+"""The difference witness: derivatives from function values alone, each value ± bound.
+
+Per direction: three pairs of values around the point; where they show a line or a parabola, two wider pairs finish the
+work. Otherwise seven pairs; where their coefficients end in rounding, five more pairs (wider, if the function is nearly a
+low polynomial) sharpen the answer. Where the coefficients still decay, the interval shrinks; where they neither decay nor
+end in rounding, a ladder of tiny steps tells noise from structure. Near bounds and edges of the domain the values lie on
+one side. The answer is the fit of smallest bound that no finer fit contradicts.
+
+Sources: polynomial fits at Chebyshev abscissae; Richardson 1911 and Lyness & Moler 1966 for the use of several steps; the
+noise sample from coefficients that are left over follows Hamming's difference tables (see Moré & Wild 2011).
+"""
+
+from collections.abc import Generator
+
+import numpy as np
+
+from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request, Status
+from gradcheck.records.arrays import Array, IntArray
+from gradcheck.witnesses.difference_track import SPENT, Track
+from gradcheck.witnesses.ladder import LADDER, read_ladder
+from gradcheck.witnesses.polynomial_fit import fit, stencil_on
+from gradcheck.witnesses.stencils import stage_of
+from gradcheck.witnesses.steps import Room, rounded_half_width
+from gradcheck.witnesses.testimony import Testimony
+
+SOURCE = "finite difference"
+
+#: Half-width of the first interval, in units of the variable's size.
+FIRST_WIDTH = 0.1
+#: Where the bounds leave less than this share of it on one side, values are taken on the other side only.
+NARROW = 0.01
+
+
+def finite_difference(
+    base: Array, directions: Directions, room: Room, centre: Array, *, derivative: int = 1
+) -> Inquiry[Testimony]:
+    """Derivatives along several directions from function values.
+
+    Parameters
+    ----------
+    base : ndarray, shape (n,)
+    directions : ndarray
+        Coordinate indices (d,) or rows (d, n).
+    room : Room
+        How far one may step along each direction.
+    centre : ndarray, shape (m,)
+        Finite values of the function at `base`.
+    derivative : 1 or 2
+        First or second derivative along the direction.
+
+    Returns
+    -------
+    Testimony
+        Values and bounds (d, m). The bound is infinite, with a reason, at jumps, plateaus, steep points, and where the
+        model fails on all sides; at a kink it covers the slopes of both sides.
+    """
+    return (yield from _Rounds(base, directions, room, centre, derivative).run())
+
+
+class _Rounds:
+    """The rounds of one inquiry: directions in the same stage are evaluated and fitted together."""
+
+    def __init__(self, base: Array, directions: Directions, room: Room, centre: Array, derivative: int) -> None:
+        self.base, self.directions, self.room, self.centre = base, directions, room, centre
+        self.derivative = derivative
+        self.spent = 0
+        self.largest = np.abs(centre)
+        # Three quarters of a spacing of x: one rounding of a product inside the model, and a little.
+        self.wobble = 0.75 * np.finfo(float).eps * room.scale
+        self.tracks = _tracks(room, len(directions), centre.size)
+
+    def run(self) -> Generator[Request, Reply, Testimony]:
+        while True:
+            groups: dict[tuple[str, int, int], list[int]] = {}
+            for row, track in enumerate(self.tracks):
+                if track.stage != "done":
+                    groups.setdefault((track.stage, track.side, track.filled), []).append(row)
+            if not groups:
+                return self._testimony()
+            for (stage, side, filled), rows in groups.items():
+                if stage == "ladder":
+                    yield from self._climb(np.array(rows), side)
+                else:
+                    yield from self._measure(stage, side, filled, np.array(rows))
+
+    def _measure(self, name: str, side: int, filled: int, rows: IntArray) -> Generator[Request, Reply, None]:
+        stage = stage_of(name, side)
+        tracks = [self.tracks[row] for row in rows]
+        half = rounded_half_width(np.array([track.half for track in tracks]), self.room.grain[rows])
+        width = half * stage.ratio
+        known = min(filled, stage.shared)
+        sign = 1.0 if side == 0 else float(side)
+        meant = sign * width[:, None] * np.array(stage.nodes[known:])
+        offsets = self._realised(rows, meant)
+        reply = yield Request(base=self.base, directions=self.directions[rows], offsets=offsets)
+        self.spent += reply.spent
+        fitted = []
+        for i, track in enumerate(tracks):
+            track.half = float(half[i])
+            if (reply.status[i] == Status.REFUSED).any():
+                track.stop(SPENT)
+            elif not reply.finite[i].all():
+                track.after_failure(*_failed_sides(reply.finite[i], meant[i]))
+            else:
+                self._store(track, name, known, reply.values[i], sign * (offsets[i] - meant[i]))
+                fitted.append(i)
+        if fitted:
+            self._fit(name, side, rows[fitted], width[fitted])
+
+    @staticmethod
+    def _store(track: Track, name: str, known: int, values: Array, slips: Array) -> None:
+        track.values[known : known + len(values)] = values
+        track.slips[known : known + len(values)] = slips
+        # The wider nodes of `low` belong to no other stage; those of `probe` before them do.
+        track.filled = 6 if name == "low" else known + len(values)
+
+    def _fit(self, name: str, side: int, rows: IntArray, width: Array) -> None:
+        stage = stage_of(name, side)
+        tracks = [self.tracks[row] for row in rows]
+        k = len(stage.nodes)
+        values = np.stack([track.values[:k] for track in tracks])
+        slips = np.zeros((len(tracks), k + 1))
+        slips[:, :k] = np.stack([track.slips[:k] for track in tracks]) / width[:, None]
+        differences = np.concatenate([values - self.centre, np.zeros((len(tracks), 1, self.centre.size))], axis=1)
+        largest = np.maximum(np.abs(values).max(axis=1), np.abs(self.centre))
+        self.largest = np.maximum(self.largest, largest.max(axis=0))
+        # A function that is zero on the whole interval shows no size of its own: that of other directions, or 1.
+        largest = np.where(largest > 0, largest, np.where(self.largest > 0, self.largest, 1.0))
+        # On the lower side the stencil runs downwards, and so does its derivative.
+        signed = width if side >= 0 else -width
+        stencil = stencil_on(stage.nodes, side != 0)
+        fits = fit(stencil, signed, differences, largest, slips, self.derivative, self.wobble[rows])
+        for i, track in enumerate(tracks):
+            track.after_fit(fits, i, float(width[i]))
+
+    def _climb(self, rows: IntArray, side: int) -> Generator[Request, Reply, None]:
+        tracks = [self.tracks[row] for row in rows]
+        reach = np.array([track.reach for track in tracks]) / 2
+        size = np.minimum(self.room.scale[rows], reach / LADDER[-1])
+        steps = rounded_half_width(size, self.room.grain[rows])[:, None] * LADDER
+        sign = 1.0 if side == 0 else float(side)
+        offsets = sign * np.concatenate([steps, -steps if side == 0 else 2 * steps], axis=1)
+        offsets = self._realised(rows, offsets)
+        reply = yield Request(base=self.base, directions=self.directions[rows], offsets=offsets)
+        self.spent += reply.spent
+        r = LADDER.size
+        slope = np.stack([_coarse_slope(track) for track in tracks]) * sign
+        up, down = reply.values[:, :r], reply.values[:, r:]
+        realised = sign * offsets[:, :r] if side else (offsets[:, :r] - offsets[:, r:]) / 2
+        rungs = read_ladder(realised, up, down, self.centre, np.full(rows.size, side != 0), slope)
+        for i, track in enumerate(tracks):
+            if (reply.status[i] == Status.REFUSED).any():
+                track.stop(SPENT)
+            elif not reply.finite[i].all():
+                track.after_failure(*_failed_sides(reply.finite[i], offsets[i]))
+            else:
+                track.after_ladder(rungs, i)
+
+    def _realised(self, rows: IntArray, offsets: Array) -> Array:
+        """Displacements as rounding will leave them: coordinates move to the number that x + h really is."""
+        if self.directions.ndim == 2:
+            return offsets
+        x = self.base[self.directions[rows]][:, None]
+        realised: Array = (x + offsets) - x
+        return realised
+
+    def _testimony(self) -> Testimony:
+        answers = [track.answer() for track in self.tracks]
+        value, bound, half, noise = (np.stack([answer[j] for answer in answers]) for j in range(4))
+        finite = np.where(np.isfinite(noise), noise, np.nan)
+        quietest = np.full(self.centre.size, np.nan)
+        heard = np.isfinite(finite).any(axis=0)
+        quietest[heard] = np.nanmedian(finite[:, heard], axis=0)
+        return Testimony(
+            value=value,
+            bound=bound,
+            source=SOURCE,
+            step=half,
+            left=np.stack([track.left for track in self.tracks]),
+            right=np.stack([track.right for track in self.tracks]),
+            noise=quietest,
+            spent=self.spent,
+            works=bool(np.isfinite(bound).any()),
+            reasons={
+                (row, output): reason
+                for row, track in enumerate(self.tracks)
+                for output, reason in track.reasons.items()
+                if not np.isfinite(bound[row, output]) or track.reasons[output] != ""
+            },
+        )
+
+
+def _tracks(room: Room, d: int, outputs: int) -> list[Track]:
+    """One track a direction, with its first interval: both sides where there is room, else the roomier side."""
+    wanted = FIRST_WIDTH * room.scale
+    narrow = np.minimum(room.below, room.above)
+    both = narrow >= NARROW * wanted
+    side = np.where(both, 0, np.where(room.above >= room.below, 1, -1))
+    roomier = np.maximum(room.below, room.above)
+    reach = np.where(both, narrow, roomier)
+    # One-sided fits lose digits to the end of their interval; a wider one gives some of them back.
+    half = np.minimum(np.where(both, wanted, 2 * wanted), reach)
+    return [
+        Track.begin(outputs, float(half[i]), int(side[i]), float(reach[i]), float(room.below[i]), float(room.widest[i]))
+        for i in range(d)
+    ]
+
+
+def _coarse_slope(track: Track) -> Array:
+    return np.zeros(track.satisfied.size) if track.coarse is None else np.nan_to_num(track.coarse.value)
+
+
+def _failed_sides(finite: Array, offsets: Array) -> tuple[bool, bool]:
+    """Whether the model failed above, and below, the point."""
+    return bool((~finite & (offsets > 0)).any()), bool((~finite & (offsets < 0)).any())

@@ -1,0 +1,179 @@
+"""What pairs of values on a geometric ladder of tiny steps say where a polynomial fit does not settle.
+
+A fit whose coefficients stop decaying far above rounding has met either noise, or structure finer than its width: a fast
+wave, a kink, a jump, a plateau. Differences at steps that shrink by 8 tell them apart.
+"""
+
+from dataclasses import dataclass
+from enum import IntEnum
+
+import numpy as np
+
+from gradcheck.records.arrays import Array, BoolArray, IntArray
+from gradcheck.witnesses.polynomial_fit import ROUNDING
+
+#: Steps in units of the variable's size, finest first.
+LADDER = 8.0 ** -np.arange(8, 1, -1)
+#: Quotients that differ by less than this share still belong to one smooth piece.
+SIMILAR = 0.03
+#: A second difference of independent errors of size 1 has this standard deviation.
+_SECOND_DIFFERENCE = np.sqrt(6.0)
+
+
+class Nature(IntEnum):
+    """What the ladder shows at the point."""
+
+    SMOOTH = 0  # quotients settle as the step shrinks
+    NOISE = 1  # second differences do not shrink: errors of the values
+    KINK = 2  # the one-sided slopes stay apart
+    JUMP = 3  # the values on both sides stay apart
+    PLATEAU = 4  # values do not change at all at small steps
+    STEEP = 5  # quotients grow without limit
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Rungs:
+    """The ladder of several directions and outputs.
+
+    Attributes
+    ----------
+    nature : ndarray of int8, shape (d, m)
+    quotient : ndarray, shape (d, m)
+        Difference quotient at the largest step that agrees with all finer ones.
+    step : ndarray, shape (d, m)
+        That step.
+    wide_step : ndarray, shape (d, m)
+        The largest step whose quotient is still similar to the finer ones: a polynomial may see through so much.
+    noise : ndarray, shape (d, m)
+        Standard deviation of one value as the finest second differences show it.
+    left, right : ndarray, shape (d, m)
+        One-sided slopes at a kink; NaN elsewhere.
+    slope_error : ndarray, shape (d, m)
+        Uncertainty of the one-sided slopes.
+    """
+
+    nature: np.ndarray[tuple[int, ...], np.dtype[np.int8]]
+    quotient: Array
+    step: Array
+    wide_step: Array
+    noise: Array
+    left: Array
+    right: Array
+    slope_error: Array
+
+
+def read_ladder(steps: Array, up: Array, down: Array, centre: Array, one_sided: Array, coarse_slope: Array) -> Rungs:
+    """Tell the natures apart.
+
+    Parameters
+    ----------
+    steps : ndarray, shape (d, r)
+        Increasing.
+    up, down : ndarray, shape (d, r, m)
+        Values at +step and −step; where `one_sided`, at +step and +2 steps.
+    centre : ndarray, shape (m,)
+    one_sided : ndarray of bool, shape (d,)
+    coarse_slope : ndarray, shape (d, m)
+        The slope that a wide fit saw: how much should change over a tiny step.
+    """
+    h = steps[:, :, None]
+    side = one_sided[:, None, None]
+    centred = (up - down) / (2 * h)
+    forward = (4 * up - down - 3 * centre) / (2 * h)
+    quotient = np.where(side, forward, centred)
+    second = np.where(side, centre - 2 * up + down, up + down - 2 * centre)
+    spacing = np.spacing(np.maximum(np.abs(up).max(axis=1), np.abs(centre)))
+    floor = ROUNDING * spacing
+    noise = np.maximum(np.sqrt(np.mean(second[:, :2] ** 2, axis=1)) / _SECOND_DIFFERENCE, floor)
+
+    nature = np.full(noise.shape, Nature.SMOOTH, dtype=np.int8)
+    unchanged = (up == centre) & (down == centre)
+    expected = np.abs(coarse_slope)[:, None, :] * h
+    plateau = unchanged[:, :2].all(axis=1) & (expected[:, 1] > 8 * spacing)
+    # Thresholds rest on rounding, not on `noise`: a jump or a kink is itself a second difference that does not vanish.
+    rounding = np.broadcast_to(floor[:, None, :], second.shape)
+    gap = np.abs(up - down - 2 * h * coarse_slope[:, None, :])
+    jump = _stays(gap, 40 * rounding, rungs=5, within=0.05) & ~one_sided[:, None]
+    bend = np.abs(second) / h
+    kink = _stays(bend, 40 * rounding / h, rungs=3, within=0.25) & ~one_sided[:, None] & ~jump
+    grows = np.abs(quotient[:, :-1]) > 1.3 * np.abs(quotient[:, 1:])
+    significant = np.abs(quotient) * h > 40 * rounding
+    steep = (grows & significant[:, :-1])[:, :4].all(axis=1)
+    noisy = _does_not_shrink(second, floor)
+    for mark, where in (
+        (Nature.NOISE, noisy),
+        (Nature.STEEP, steep & ~jump),
+        (Nature.KINK, kink),
+        (Nature.JUMP, jump),
+        (Nature.PLATEAU, plateau),
+    ):
+        nature[where] = mark
+
+    error = 4 * noise[:, None, :] / h
+    agreed = _largest_agreed(quotient, error)
+    similar = _largest_agreed(quotient, error + SIMILAR * np.abs(quotient).max(axis=1, keepdims=True))
+    pick = np.take_along_axis
+    all_steps = np.broadcast_to(h, quotient.shape)
+    step = pick(all_steps, agreed[:, None, :], axis=1)[:, 0]
+    wide_step = pick(all_steps, similar[:, None, :], axis=1)[:, 0]
+    left, right, error = _one_sided_slopes(h, up, down, centre, noise)
+    at_kink = nature == Nature.KINK
+    return Rungs(
+        nature=nature,
+        quotient=pick(quotient, agreed[:, None, :], axis=1)[:, 0],
+        step=step,
+        wide_step=np.maximum(step, wide_step),
+        noise=noise,
+        left=np.where(at_kink, left, np.nan),
+        right=np.where(at_kink, right, np.nan),
+        slope_error=np.where(at_kink, error, np.nan),
+    )
+
+
+def _stays(size: Array, noise: Array, *, rungs: int, within: float) -> BoolArray:
+    """(d, m): sizes (d, r, m) stay the same, but for a share `within`, on the finest `rungs` where they exceed noise."""
+    r = size.shape[1]
+    seen = size > noise
+    first = np.argmax(seen, axis=1)  # finest rung above noise
+    enough = seen.any(axis=1) & (first <= r - rungs)
+    rows = np.minimum(first, r - rungs)[:, None, :] + np.arange(rungs)[None, :, None]
+    looked_at = np.take_along_axis(size, rows, axis=1)
+    visible = np.take_along_axis(seen, rows, axis=1).all(axis=1)
+    steady = looked_at.max(axis=1) <= (1 + within) * looked_at.min(axis=1)
+    result: BoolArray = enough & visible & steady
+    return result
+
+
+def _does_not_shrink(second: Array, floor: Array) -> BoolArray:
+    """(d, m): second differences of the two finest rungs are as large as those of the next two, and well above rounding.
+
+    Those of a smooth function shrink by 64 a rung.
+    """
+    fine, next_two = (np.sqrt(np.mean(second[:, rungs] ** 2, axis=1)) for rungs in (slice(0, 2), slice(2, 4)))
+    result: BoolArray = (fine > 8 * floor) & (fine > 0.1 * next_two)
+    return result
+
+
+def _largest_agreed(quotient: Array, error: Array) -> IntArray:
+    """(d, m): index of the largest step whose quotient agrees, within errors, with those of all finer steps."""
+    # Interval of values that all finer rungs allow; a rung agrees if it meets the interval.
+    low = np.maximum.accumulate(quotient - error, axis=1)
+    high = np.minimum.accumulate(quotient + error, axis=1)
+    agrees = low <= high
+    agrees[:, 0] = True
+    run = np.cumprod(agrees, axis=1).sum(axis=1) - 1
+    result: IntArray = run.astype(np.intp)
+    return result
+
+
+def _one_sided_slopes(h: Array, up: Array, down: Array, centre: Array, noise: Array) -> tuple[Array, Array, Array]:
+    """Slopes to the left and right, extrapolated from two rungs, with an error from rungs and noise."""
+    right = (up - centre) / h
+    left = (centre - down) / h
+    # The quotient has error c·h + noise/h: the best single rung balances both; its neighbour shows c·h.
+    change = np.abs(np.diff(right, axis=1)) + np.abs(np.diff(left, axis=1))
+    total = change + 4 * noise[:, None, :] / h[:, :-1]
+    best = np.argmin(total, axis=1)[:, None, :]
+    extrapolated = [(8 * side[:, :-1] - side[:, 1:]) / 7 for side in (left, right)]
+    picked = [np.take_along_axis(side, best, axis=1)[:, 0] for side in (*extrapolated, total)]
+    return picked[0], picked[1], picked[2]

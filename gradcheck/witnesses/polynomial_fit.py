@@ -1,0 +1,221 @@
+"""Least-squares polynomials through function values, and the derivative they give: value ± bound.
+
+Values at the nodes of a stencil are expanded in the polynomials that are orthonormal *on those nodes*. Then independent
+errors of the values give coefficients with the same independent errors: the coefficients that are too small to be
+anything else are the noise sample, and every lower order is already the least-squares fit of that order.
+
+Sources: discrete orthogonal polynomials, Forsythe 1957 (J. SIAM 5, 74-88); nodes near Chebyshev's, which keep the
+derivative's weights small.
+"""
+
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+from numpy.polynomial import chebyshev
+
+from gradcheck.records.arrays import Array, BoolArray, IntArray
+from gradcheck.witnesses.steps import NODE_GRID
+
+#: Multiples of the noise estimate that count as "surely no noise" when the order of a fit is chosen.
+SIGNIFICANT = 3.0
+#: Half-width of a bound in standard deviations of the fitted derivative, for a noise level that is known.
+DEVIATIONS = 5.0
+#: How much of the first dropped order goes into the bound.
+DROPPED_SHARE = 0.4
+#: Smallest noise of one value, in units of the spacing of floating-point numbers at its size: a correctly rounded value
+#: has a standard deviation of 0.29.
+ROUNDING = 0.3
+#: Coefficients that must be left over as a noise sample.
+SAMPLE_LEAST = 3
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Stencil:
+    """Nodes in units of the half-width, and the orthonormal polynomials on them.
+
+    Attributes
+    ----------
+    nodes : ndarray, shape (k,)
+        The centre 0 is the last one.
+    basis : ndarray, shape (k, k)
+        Column i: the orthonormal polynomial of degree i at the nodes.
+    slopes : ndarray, shape (k,)
+        Derivative of each polynomial at 0, per half-width.
+    curvatures : ndarray, shape (k,)
+        Second derivative of each polynomial at 0, per half-width squared.
+    node_slopes : ndarray, shape (k, k)
+        Derivative of polynomial i (column) at each node (row).
+    """
+
+    nodes: Array
+    basis: Array
+    slopes: Array
+    curvatures: Array
+    node_slopes: Array
+
+
+@lru_cache(maxsize=64)
+def stencil_on(nodes: tuple[float, ...], one_sided: bool) -> Stencil:
+    """The stencil on `nodes` (the centre is added); `one_sided` nodes lie in (0, 1], others in [-1, 1]."""
+    t = np.array([*nodes, 0.0])
+    z, stretch = (2 * t - 1, 2.0) if one_sided else (t, 1.0)
+    k = t.size
+    values = chebyshev.chebvander(z, k - 1)
+    basis, triangle = np.linalg.qr(values)
+    identity = np.eye(k)
+    first = chebyshev.chebder(identity, 1, axis=0)
+    second = chebyshev.chebder(identity, 2, axis=0) if k > 2 else np.zeros((1, k))
+    slopes_at = chebyshev.chebval(z, first).T * stretch
+    curvature_at = chebyshev.chebval(z[-1], second) * stretch**2
+    # basis = values @ inverse(triangle): the same combination gives the derivatives of the orthonormal polynomials.
+    node_slopes = np.linalg.solve(triangle.T, slopes_at.T).T
+    curvatures = np.linalg.solve(triangle.T, curvature_at)
+    return Stencil(t, basis, node_slopes[-1], curvatures, node_slopes)
+
+
+def chebyshev_pairs(pairs: int) -> Array:
+    """(pairs,) positive Chebyshev abscissae of 2·pairs points, largest first, rounded to the node grid."""
+    j = np.arange(1, pairs + 1)
+    return np.round(np.cos((2 * j - 1) * np.pi / (4 * pairs)) / NODE_GRID) * NODE_GRID
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Fit:
+    """Fits of several directions and outputs; all arrays have shape (d, m).
+
+    Attributes
+    ----------
+    value, bound : ndarray
+        Derivative along the direction; meaningful where `resolved`.
+    order : ndarray of int
+        Number of polynomials kept.
+    noise : ndarray
+        Standard deviation of one value, from the coefficients left over.
+    tail, before : ndarray
+        Root mean square of the last four coefficients, and of the four before: do they still decay?
+    floor : ndarray
+        Rounding of one value, from its size alone.
+    variation : ndarray
+        Largest coefficient but the constant: how much the function varies over the stencil.
+    resolved : ndarray of bool
+        The coefficients end in a sample of noise.
+    flat : ndarray of bool
+        The coefficients left over do not decay any more.
+    """
+
+    value: Array
+    bound: Array
+    order: IntArray
+    noise: Array
+    tail: Array
+    before: Array
+    floor: Array
+    variation: Array
+    resolved: BoolArray
+    flat: BoolArray
+
+
+def fit(
+    stencil: Stencil,
+    half_width: Array,
+    differences: Array,
+    largest: Array,
+    slips: Array | None = None,
+    derivative: int = 1,
+    wobble: Array | None = None,
+) -> Fit:
+    """Fit the values on a stencil.
+
+    Parameters
+    ----------
+    stencil : Stencil with k nodes
+    half_width : ndarray, shape (d,)
+        > 0.
+    differences : ndarray, shape (d, k, m)
+        f at each node minus f at the centre (the last node, hence 0).
+    largest : ndarray, shape (d, m)
+        Largest \|f\| on the stencil: the floor of the rounding.
+    slips : ndarray, shape (d, k), optional
+        Displacement realised minus displacement meant, in units of the half-width; corrected to first order.
+    derivative : 1 or 2
+    wobble : ndarray, shape (d,), optional
+        Size of the rounding of x itself, in units of the direction. A model that multiplies x by a constant rounds the
+        product alike at all nodes: its values are exact ones of a point beside x, and no residual shows it. The next
+        derivative times the wobble goes into the bound.
+
+    Returns
+    -------
+    Fit
+        NaN values where a difference is not finite.
+    """
+    a = np.einsum("ki,dkm->dim", stencil.basis, differences)
+    if slips is not None and slips.any():
+        # First order is enough: a slip is a rounding error of x, and its square is below rounding.
+        kept = a.copy()
+        kept[:, min(8, a.shape[1] - 1) :] = 0.0
+        slopes = np.einsum("ki,dim->dkm", stencil.node_slopes, kept)
+        a = np.einsum("ki,dkm->dim", stencil.basis, differences - slips[:, :, None] * slopes)
+    k = a.shape[1]
+    size = np.abs(a)
+    floor = ROUNDING * np.spacing(largest)
+    last = min(4, k - 2)
+    tail = np.sqrt(np.mean(a[:, k - last :] ** 2, axis=1))
+    before = np.sqrt(np.mean(a[:, max(1, k - 2 * last) : k - last] ** 2, axis=1)) if k > last + 1 else tail
+    level = np.maximum(tail, floor)
+    significant = size > SIGNIFICANT * level[:, None, :]
+    significant[:, 0] = True  # the constant is always fitted
+    order = k - np.argmax(significant[:, ::-1], axis=1)
+    return _concluded(stencil, half_width, a, order, floor, tail, before, derivative, wobble)
+
+
+def _concluded(
+    stencil: Stencil,
+    half_width: Array,
+    a: Array,
+    order: IntArray,
+    floor: Array,
+    tail: Array,
+    before: Array,
+    derivative: int,
+    wobble: Array | None,
+) -> Fit:
+    k = a.shape[1]
+    index = np.arange(k)[None, :, None]
+    kept = index < order[:, None, :]
+    left_over = k - order
+    noise = np.sqrt(np.where(kept, 0.0, a**2).sum(axis=1) / np.maximum(left_over, 1))
+    noise = np.maximum(noise, floor)
+    weights = (stencil.slopes if derivative == 1 else stencil.curvatures)[None, :, None]
+    width = half_width[:, None] ** derivative
+    size = np.abs(width)
+    half_way = (order + left_over // 2)[:, None, :]
+    sooner, later = (
+        np.sqrt(np.where(part, a**2, 0.0).sum(axis=1) / np.maximum(part.sum(axis=1), 1))
+        for part in (~kept & (index < half_way), ~kept & (index >= half_way))
+    )
+    value = np.where(kept, weights * a, 0.0).sum(axis=1) / width
+    # The derivative is fitted with the orders kept; where none of them moves it (a constant), the lowest that does sets the
+    # amplification, so that an exact zero gets a bound that means something.
+    counted = kept | (index <= derivative)
+    amplification = np.sqrt(np.where(counted, weights**2, 0.0).sum(axis=1)) / size
+    dropped = np.where(index >= order[:, None, :], np.abs(weights), 0.0)
+    next_weight = np.where(index <= order[:, None, :] + 1, dropped, 0.0).max(axis=1) / size
+    deviations = DEVIATIONS * (1 + 2 / np.maximum(left_over, 1))
+    bound = noise * (deviations * amplification + DROPPED_SHARE * next_weight) + 2 * np.finfo(float).eps * np.abs(value)
+    if wobble is not None and derivative == 1:
+        curvature = np.where(kept, stencil.curvatures[None, :, None] * a, 0.0).sum(axis=1) / half_width[:, None] ** 2
+        bound = bound + wobble[:, None] * np.abs(curvature)
+    variation = np.abs(a[:, 1:]).max(axis=1)
+    return Fit(
+        value=value,
+        bound=bound,
+        order=order,
+        noise=noise,
+        tail=tail,
+        before=before,
+        floor=floor,
+        variation=variation,
+        resolved=(left_over >= SAMPLE_LEAST) & np.isfinite(value),
+        flat=(left_over >= SAMPLE_LEAST + 1) & (sooner <= 3 * np.maximum(later, floor)),
+    )
