@@ -84,10 +84,11 @@ class Evaluator:
         return Outcome(values=values, status=status, message=message)
 
     def _output(self, call: Call, target: Target, result: Any) -> tuple[NDArray[Any], Status]:
-        picked = result if target.pick is None else target.pick(result)
-        array: NDArray[Any] = (
-            complex_numbers.as_array(picked) if call.arithmetic == "complex" else self._real_output(target, picked)
-        )
+        array: NDArray[Any]
+        if call.arithmetic == "complex":
+            array = complex_numbers.picked(result, target.pick, self.shapes.get(target.name))
+        else:
+            array = self._real_output(target, result if target.pick is None else target.pick(result))
         known = self.shapes.setdefault(target.name, array.shape)
         if array.shape != known:
             raise _ChangedShape(
@@ -138,6 +139,7 @@ class Evaluator:
     def _failed(self, call: Call, message: str) -> Outcome:
         names = [call.function] if call.function else [target.name for target in self._targets(call.run)]
         for name in names:
+            self.ledger.last_words[name, call.source] = message
             self._record(name, call, Status.CRASH, message)
         return Outcome(status=dict.fromkeys(names, Status.CRASH), message=message)
 

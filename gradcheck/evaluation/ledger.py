@@ -33,6 +33,8 @@ class Ledger:
         How many evaluations failed, kept or not.
     mutated : set of str
         Functions that wrote into their input.
+    last_words : dict of (function, source) -> str
+        What the last failing call of a source said: the message of a claim or an AD library.
     output_kinds : dict of function -> str
         The dtype of what the model returned: ``"float64"``, ``"float32"``, ``"int64"`` ...
     """
@@ -45,6 +47,7 @@ class Ledger:
     output_kinds: dict[str, str] = field(default_factory=dict)
     notices: list[str] = field(default_factory=list)
     refused: int = 0
+    last_words: dict[tuple[str, str], str] = field(default_factory=dict)
 
     @property
     def evaluations(self) -> int:

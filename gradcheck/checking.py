@@ -1,0 +1,416 @@
+"""The verb `check`: is a claimed derivative right?"""
+
+import time
+import warnings
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+
+from gradcheck.claims.examination import WITNESSES, Examined, examine
+from gradcheck.claims.mistakes.case import Case
+from gradcheck.claims.mistakes.naming import likely_mistakes
+from gradcheck.claims.rule import ALLOWANCE
+from gradcheck.counsel.claim_findings import failing_claim, kinks_at_point, mutation
+from gradcheck.errors import DerivativeMismatch, UndecidedWarning, UsageError
+from gradcheck.evaluation.conduct import addressed, conduct_one
+from gradcheck.evaluation.pipeline import Session, open_session
+from gradcheck.evaluation.protocol import Request, Status
+from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
+from gradcheck.problem.subject import CLAIM_KINDS, Subject, subject_of_problem, subjects_of_function
+from gradcheck.records.arrays import Array
+from gradcheck.records.finding import Finding
+from gradcheck.records.report import CheckReport, Entries
+from gradcheck.records.verdict import Verdict
+from gradcheck.report.check_text import check_text
+from gradcheck.witnesses.steps import room_along
+
+AD_SOURCES = ("jax", "autograd")
+#: Relative tolerance by the precision of the model's values.
+REL_TOL = {"float32": 1e-3, "float16": 1e-1}
+DEFAULT_REL_TOL = 1e-8
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Rules:
+    """How a claim is judged: tolerances and witnesses, validated."""
+
+    rel_tol: float | None = None
+    abs_tol: float = 0.0
+    witnesses: tuple[str, ...] = WITNESSES
+
+    @staticmethod
+    def of(rel_tol: float | None, abs_tol: float, witnesses: Any) -> "Rules":
+        """Rules from what the caller gave.
+
+        Raises
+        ------
+        UsageError
+            If a tolerance is negative or NaN, or a witness is unknown.
+        """
+        for name, value in (("rel_tol", rel_tol), ("abs_tol", abs_tol)):
+            if value is not None and not 0 <= value < np.inf:
+                raise UsageError(f"{name} is {value!r}; give a finite number >= 0")
+        if witnesses is None:
+            return Rules(rel_tol=rel_tol, abs_tol=abs_tol)
+        chosen = (witnesses,) if isinstance(witnesses, str) else tuple(witnesses)
+        unknown = [name for name in chosen if name not in WITNESSES]
+        if unknown or not chosen:
+            raise UsageError(f"witnesses is {witnesses!r}; choose among {', '.join(map(repr, WITNESSES))}")
+        return Rules(rel_tol=rel_tol, abs_tol=abs_tol, witnesses=chosen)
+
+
+def check(
+    function: Any,
+    at: Any,
+    *,
+    gradient: Any = None,
+    jacobian: Any = None,
+    wrt: Any = None,
+    output: Any = None,
+    bounds: Any = None,
+    names: Any = None,
+    typical: Any = None,
+    witnesses: Any = None,
+    rel_tol: float | None = None,
+    abs_tol: float = 0.0,
+    budget: int | None = None,
+    time_limit: float | str | None = None,
+    seed: int = 0,
+    on_refuted: str = "raise",
+    on_undecided: str = "warn",
+) -> CheckReport:
+    """Compare a claimed derivative with independent witnesses: silent, or raises with the story.
+
+    Parameters
+    ----------
+    function : callable
+        The model: takes what `at` holds, returns a number or an array.
+    at : float, list, array, nesting, `gradcheck.args(...)` or `gradcheck.points(...)`
+        Where to check.
+    gradient, jacobian : callable, array or str
+        The claim; exactly one. A callable with the model's own signature, its value at `at`, or the name of an AD
+        source (``"jax"``, ``"autograd"``). Shapes: gradient ``(n,)`` for a model that returns a number, Jacobian
+        ``(m, n)`` for one that returns ``(m,)``.
+    wrt : str or list of str, optional
+        Which of several arguments to differentiate with respect to.
+    output : callable, optional
+        Picks what is differentiated from what the model returns.
+    bounds : list of (lower, upper) pairs or tuple (lower, upper), optional
+        The model is never called outside.
+    names : list of str, optional
+        Names of the variables.
+    typical : float or array, optional
+        Typical sizes of the variables.
+    witnesses : str or list of str, optional
+        Among ``"differences"`` and ``"complex step"``; default both, as needed.
+    rel_tol, abs_tol : float, optional
+        Default 1e-8 (1e-3 for a model that returns single precision) and 0.
+    budget : int, optional
+        Largest number of evaluations.
+    time_limit : float or str, optional
+        Seconds, or text such as ``"10min"``.
+    seed : int
+        Reserved for checks along random directions; every step of this check is deterministic.
+    on_refuted : "raise" or "return"
+    on_undecided : "warn", "raise" or "pass"
+        Where every entry is undecided it raises unless ``"pass"``.
+
+    Returns
+    -------
+    CheckReport
+
+    Raises
+    ------
+    DerivativeMismatch
+        If the claim is refuted (or undecided where that was asked to raise). Its text is the report.
+    UsageError, DerivativeShapeError
+        If the call cannot be carried out as it stands.
+    ModelFailure
+        If the model raises or is not finite at the point.
+
+    Notes
+    -----
+    A claim that is NaN where the witness is finite is refuted. Values given as integers, lists or float32 reach the model as
+    float64, and the report says so.
+
+    Examples
+    --------
+    >>> import gradcheck
+    >>> def area(x):
+    ...     return x[0] * x[1]
+    >>> report = gradcheck.check(area, at=[2.0, 3.0], gradient=lambda x: [x[1], x[0]])
+    >>> str(report.verdict)
+    'confirmed'
+    """
+    _one_of("on_refuted", on_refuted, ("raise", "return"))
+    _one_of("on_undecided", on_undecided, ("warn", "raise", "pass"))
+    claims = {"gradient": gradient, "jacobian": jacobian}
+    if sum(claim is not None for claim in claims.values()) != 1:
+        given = [kind for kind, claim in claims.items() if claim is not None]
+        raise UsageError(
+            "check needs exactly one claim, gradient=... or jacobian=...; "
+            + (f"{' and '.join(given)} were given" if given else "none was given, so there is nothing to check")
+        )
+    rules = Rules.of(rel_tol, abs_tol, witnesses)
+    subjects = subjects_of_function(
+        function, at, claims=claims, wrt=wrt, output=output, bounds=bounds, names=names, typical=typical
+    )
+    reports = []
+    for subject in subjects:
+        session = open_session(subject, budget=budget, time_limit=time_limit)
+        reports.extend(checked_claims(session, rules))
+    report = reports[0] if len(reports) == 1 else _merged(reports)
+    return _told(report, on_refuted, on_undecided)
+
+
+def check_described(
+    thing: Any,
+    *,
+    budget: int | None = None,
+    time_limit: float | str | None = None,
+    seed: int = 0,
+    **overrides: Any,
+) -> list[CheckReport]:
+    """Reports on all claims of a described `Problem` or of a model decorated with `gradcheck.model`; never raises for
+    verdicts.
+
+    Raises
+    ------
+    UsageError
+        If there is nothing to check.
+    """
+    if isinstance(thing, Problem):
+        if not any(
+            getattr(f, k) is not None for f in (thing.objective, *thing.constraints.values()) for k in CLAIM_KINDS
+        ):
+            raise UsageError("this Problem claims no derivative: give its Functions gradient=... or jacobian=...")
+        rules = Rules.of(
+            overrides.pop("rel_tol", None), overrides.pop("abs_tol", 0.0), overrides.pop("witnesses", None)
+        )
+        if overrides:
+            raise UsageError(f"{', '.join(sorted(overrides))} cannot be set for a Problem; its description says it")
+        session = open_session(subject_of_problem(thing), budget=budget, time_limit=time_limit)
+        return checked_claims(session, rules)
+    spec = getattr(thing, SPEC_ATTRIBUTE, None)
+    options: dict[str, Any] = {}
+    if isinstance(spec, ModelSpec):
+        options = {"at": spec.at, **spec.options}
+    options |= {name: value for name, value in overrides.items() if value is not None}
+    if "at" not in options:
+        raise UsageError("the point is missing: give at=..., or describe the model with @gradcheck.model(at=...)")
+    options |= {
+        "on_refuted": "return",
+        "on_undecided": "pass",
+        "budget": budget,
+        "time_limit": time_limit,
+        "seed": seed,
+    }
+    return [check(thing, **options)]
+
+
+def checked_claims(session: Session, rules: Rules) -> list[CheckReport]:
+    """A report on each claim of each function of the session's subject.
+
+    Raises
+    ------
+    ModelFailure
+        If the model cannot be evaluated at the start point.
+    """
+    centres = session.start_values()
+    return [
+        checked_claim(session, name, kind, centres[name], rules)
+        for name, target in session.subject.targets.items()
+        for kind in target.claims
+    ]
+
+
+def checked_claim(session: Session, function: str, kind: str, centre: Array, rules: Rules) -> CheckReport:
+    """The report on one claim of one function."""
+    began, before = time.perf_counter(), session.ledger.evaluations
+    subject = session.subject
+    claim, failure = claimed_matrix(session, function, kind, centre)
+    precision = session.ledger.output_kinds.get(function, "float64")
+    unit = float(np.finfo(precision).eps / 2) if precision in REL_TOL else float(np.finfo(float).eps / 2)
+    rel_tol = REL_TOL.get(precision, DEFAULT_REL_TOL) if rules.rel_tol is None else rules.rel_tol
+    inquiry = examine(
+        subject.start,
+        claim,
+        room_along(subject.start, np.arange(subject.layout.size), subject.domain),
+        centre,
+        subject.domain.scale,
+        rel_tol=rel_tol,
+        abs_tol=rules.abs_tol,
+        unit_roundoff=unit,
+        witnesses=rules.witnesses,
+    )
+    examined = conduct_one(addressed(inquiry, function=function), session.gate)
+    findings: list[Finding] = [failure] if failure else []
+    findings += kinks_at_point(subject, function, examined)
+    findings += mutation(subject, session.ledger)
+    entries = _entries(subject, function, kind, examined)
+    report = CheckReport(
+        verdict=Verdict.overall(list(entries.verdict)),
+        kind=kind,
+        function=function,
+        point=subject.start,
+        entries=entries,
+        diagnoses=() if failure else _diagnoses(subject, function, kind, examined, rel_tol, rules.abs_tol),
+        findings=tuple(findings),
+        notices=tuple(session.ledger.notices),
+        evaluations=session.ledger.evaluations - before,
+        seconds=time.perf_counter() - began,
+    )
+    return replace(report, text=check_text(report))
+
+
+def claimed_matrix(session: Session, function: str, kind: str, centre: Array) -> tuple[Array, Finding | None]:
+    """The claim as a matrix (m, n); NaN with a finding where the user's derivative raised.
+
+    Raises
+    ------
+    UsageError
+        If the claim names an AD source that is not available, or that cannot differentiate the model.
+    """
+    subject = session.subject
+    claim = subject.targets[function].claims[kind]
+    if isinstance(claim, str):
+        return _automatic_claim(session, function, kind, claim, centre), None
+    reply = session.gate(
+        [
+            Request(
+                base=subject.start,
+                directions=np.zeros(1, dtype=np.intp),
+                offsets=np.zeros((1, 1)),
+                source=f"claim:{kind}",
+                function=function,
+            )
+        ]
+    )[0]
+    if reply.status[0, 0] == Status.CRASH:
+        words = session.ledger.last_words[function, f"claim:{kind}"]
+        return np.full((centre.size, subject.layout.size), np.nan), failing_claim(subject, function, kind, words)
+    return reply.values[0], None
+
+
+def _automatic_claim(session: Session, function: str, kind: str, source: str, centre: Array) -> Array:
+    """What AD says, in the mode that needs fewer sweeps, or the other one where that fails."""
+    subject = session.subject
+    if source not in AD_SOURCES:
+        raise UsageError(
+            f"{kind}={source!r} names no derivative source; use {' or '.join(map(repr, AD_SOURCES))}, a function, "
+            "or an array"
+        )
+    if kind == "gradient" and centre.size != 1:
+        raise UsageError(f"gradient={source!r}: the model returns {centre.size} outputs; use jacobian={source!r}")
+    n, m = subject.layout.size, centre.size
+    for arithmetic in ("vjp", "jvp") if m <= n else ("jvp", "vjp"):
+        size = m if arithmetic == "vjp" else n
+        request = Request(
+            base=subject.start,
+            directions=np.eye(size),
+            offsets=np.zeros((size, 1)),
+            arithmetic=arithmetic,
+            source=source,
+            function=function,
+        )
+        reply = session.gate([request])[0]
+        if reply.status[0, 0] in (Status.OK, Status.NONFINITE):
+            swept = reply.values[:, 0]
+            return swept if arithmetic == "vjp" else swept.T
+    words = session.ledger.last_words.get((function, source), "the budget was spent")
+    raise UsageError(f"{kind}={source!r}: {source} cannot differentiate {function}: {words}")
+
+
+def _entries(subject: Subject, function: str, kind: str, examined: Examined) -> Entries:
+    m, n = examined.claim.shape
+    rows, columns = np.divmod(np.arange(m * n), n)
+    index = columns if kind == "gradient" else np.stack([rows, columns], axis=1)
+
+    def flat(array: Any) -> Any:
+        return np.ravel(array)
+
+    return Entries(
+        index=index,
+        name=tuple(entry_name(subject, function, m, int(i), int(j)) for i, j in zip(rows, columns, strict=True)),
+        claim=flat(examined.claim),
+        witness=flat(examined.value),
+        bound=flat(examined.bound),
+        digits=flat(examined.digits),
+        verdict=tuple(flat(examined.verdict)),
+        source=tuple(flat(examined.source)),
+        reason=tuple(flat(examined.reason)),
+    )
+
+
+def entry_name(subject: Subject, function: str, outputs: int, row: int, column: int) -> str:
+    """Name of an entry: the variable, and for several outputs which one: ``stress[2] by span``."""
+    variable = subject.layout.name(column)
+    return variable if outputs == 1 else f"{function}[{row}] by {variable}"
+
+
+def _diagnoses(
+    subject: Subject, function: str, kind: str, examined: Examined, rel_tol: float, abs_tol: float
+) -> tuple[Any, ...]:
+    refuted = examined.verdict == Verdict.REFUTED
+    if not refuted.any():
+        return ()
+    size = np.fmax(np.abs(examined.claim), np.abs(examined.value))
+    noise = np.nan_to_num(examined.noise)[:, None] / subject.domain.scale[None, :]
+    m = examined.claim.shape[0]
+    return likely_mistakes(
+        Case(
+            kind=kind,
+            claim=examined.claim,
+            value=examined.value,
+            bound=examined.bound,
+            tolerance=abs_tol + rel_tol * size + ALLOWANCE * noise,
+            refuted=refuted,
+            name=lambda i, j: entry_name(subject, function, m, i, j),
+        )
+    )
+
+
+def _merged(reports: Sequence[CheckReport]) -> CheckReport:
+    """One report on the same claim at several points; each entry's name says at which."""
+    parts = [report.entries for report in reports]
+    entries = Entries(
+        index=np.concatenate([part.index for part in parts]),
+        name=tuple(f"{name} @ point {k}" for k, part in enumerate(parts) for name in part.name),
+        verdict=tuple(v for part in parts for v in part.verdict),
+        source=tuple(s for part in parts for s in part.source),
+        reason=tuple(r for part in parts for r in part.reason),
+        **{
+            field: np.concatenate([getattr(part, field) for part in parts])
+            for field in ("claim", "witness", "bound", "digits")
+        },
+    )
+    worst = next((r for v in (Verdict.REFUTED, Verdict.UNDECIDED) for r in reports if r.verdict == v), reports[0])
+    merged = replace(
+        worst,
+        verdict=Verdict.overall([report.verdict for report in reports]),
+        entries=entries,
+        diagnoses=tuple(d for report in reports for d in report.diagnoses),
+        findings=tuple(f for report in reports for f in report.findings),
+        notices=tuple(dict.fromkeys(n for report in reports for n in report.notices)),
+        evaluations=sum(report.evaluations for report in reports),
+        seconds=sum(report.seconds for report in reports),
+    )
+    return replace(merged, text=check_text(merged))
+
+
+def _told(report: CheckReport, on_refuted: str, on_undecided: str) -> CheckReport:
+    if report.verdict == Verdict.REFUTED and on_refuted == "raise":
+        raise DerivativeMismatch(report)
+    if report.verdict == Verdict.UNDECIDED and on_undecided != "pass":
+        everything = all(verdict == Verdict.UNDECIDED for verdict in report.entries.verdict)
+        if on_undecided == "raise" or everything:
+            raise DerivativeMismatch(report)
+        warnings.warn(str(report), UndecidedWarning, stacklevel=3)
+    return report
+
+
+def _one_of(name: str, value: str, choices: tuple[str, ...]) -> None:
+    if value not in choices:
+        raise UsageError(f"{name} is {value!r}; choose {' or '.join(map(repr, choices))}")

@@ -1,0 +1,261 @@
+"""The inquiry that compares one claimed derivative with witnesses, entry by entry, as cheaply as the verdict allows.
+
+A quick look confirms most right entries. Those it does not confirm get the whole difference witness, those still open the
+complex step; a refutation needs a second look, by other steps or another witness, that agrees.
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from gradcheck.claims.rule import Tolerance, digits_agreed, judge
+from gradcheck.evaluation.protocol import Inquiry
+from gradcheck.records.arrays import Array, BoolArray, IntArray
+from gradcheck.records.verdict import Verdict
+from gradcheck.witnesses.complex_step import complex_step
+from gradcheck.witnesses.finite_difference import finite_difference
+from gradcheck.witnesses.quick_look import quick_look
+from gradcheck.witnesses.steps import Room
+from gradcheck.witnesses.testimony import Testimony
+
+DIFFERENCES, COMPLEX_STEP = "differences", "complex step"
+WITNESSES = (DIFFERENCES, COMPLEX_STEP)
+#: The second look takes its values on intervals of another size, so that no node is shared.
+OTHER_WIDTH = 0.37
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Examined:
+    """Entries of a claim after examination; arrays have shape (m, n) of the Jacobian.
+
+    Attributes
+    ----------
+    claim, value, bound : ndarray
+    left, right : ndarray
+        One-sided slopes at kinks; NaN elsewhere.
+    verdict : ndarray of object
+        A `Verdict` each.
+    source, reason : ndarray of object
+        The witness that decided; why an entry is undecided, or was decided by more than the plain rule.
+    noise : ndarray, shape (m,)
+        Noise level of each output, where it was measured.
+    """
+
+    claim: Array
+    value: Array
+    bound: Array
+    left: Array
+    right: Array
+    verdict: np.ndarray[tuple[int, ...], np.dtype[np.object_]]
+    source: np.ndarray[tuple[int, ...], np.dtype[np.object_]]
+    reason: np.ndarray[tuple[int, ...], np.dtype[np.object_]]
+    noise: Array
+
+    @property
+    def digits(self) -> Array:
+        """Decimal digits to which claim and witness are seen to agree."""
+        return digits_agreed(self.claim, self.value, self.bound)
+
+
+def examine(
+    base: Array,
+    claim: Array,
+    room: Room,
+    centre: Array,
+    typical: Array,
+    *,
+    rel_tol: float,
+    abs_tol: float,
+    unit_roundoff: float = np.finfo(float).eps / 2,
+    witnesses: Sequence[str] = WITNESSES,
+) -> Inquiry[Examined]:
+    """Examine all entries of a claimed Jacobian (a gradient is one row).
+
+    Parameters
+    ----------
+    base : ndarray, shape (n,)
+    claim : ndarray, shape (m, n)
+    room : Room
+        Along all n coordinates.
+    centre : ndarray, shape (m,)
+        Values at the point.
+    typical : ndarray, shape (n,)
+        Typical sizes τ of the variables.
+    rel_tol, abs_tol : float
+    unit_roundoff : float
+        u of the arithmetic that the model returns its values in.
+    witnesses : sequence of str
+        Among ``"differences"``, ``"complex step"``; at least one.
+
+    Returns
+    -------
+    Examined
+    """
+    desk = _Desk(claim, centre, typical, rel_tol, abs_tol, unit_roundoff)
+    everything = np.arange(base.size)
+    if DIFFERENCES in witnesses:
+        desk.hear((yield from quick_look(base, everything, room, centre)), everything, final=False)
+        open_ = desk.open_columns()
+        if open_.size:
+            whole = yield from finite_difference(base, open_, _along(room, open_), centre)
+            desk.hear(whole, open_)
+            yield from _second_look(desk, base, room, centre, witnesses)
+    if COMPLEX_STEP in witnesses:
+        open_ = desk.open_columns() if DIFFERENCES in witnesses else everything
+        if open_.size:
+            desk.hear((yield from _complex(base, open_, room, centre)), open_)
+    return desk.result()
+
+
+def _second_look(desk: "_Desk", base: Array, room: Room, centre: Array, witnesses: Sequence[str]) -> Inquiry[None]:
+    """Refutations stand only if other steps, or else the complex step, refute as well."""
+    doubted = desk.refuted_columns()
+    if doubted.size == 0:
+        return
+    other = _along(room, doubted)
+    other = replace(other, scale=other.scale * OTHER_WIDTH, widest=other.widest * OTHER_WIDTH)
+    desk.second((yield from finite_difference(base, doubted, other, centre)), doubted)
+
+
+def _complex(base: Array, columns: IntArray, room: Room, centre: Array) -> Inquiry[Testimony]:
+    part = _along(room, columns)
+    reach = np.minimum(part.below, part.above)
+    return (yield from complex_step(base, columns, centre.size, scale=part.scale, f0=centre, reach=reach))
+
+
+def _along(room: Room, columns: IntArray) -> Room:
+    return Room(
+        scale=room.scale[columns],
+        widest=room.widest[columns],
+        below=room.below[columns],
+        above=room.above[columns],
+        grain=room.grain[columns],
+    )
+
+
+class _Desk:
+    """Collects testimonies about the entries of one claim and applies the rule after each."""
+
+    def __init__(
+        self, claim: Array, centre: Array, typical: Array, rel_tol: float, abs_tol: float, unit_roundoff: float
+    ) -> None:
+        self.claim = claim
+        self.typical = typical
+        self.rel_tol, self.abs_tol = rel_tol, abs_tol
+        largest = np.abs(centre)
+        # A value of zero shows no size: that of the other outputs, or 1 (as the difference witness assumes).
+        largest = np.where(largest > 0, largest, largest.max() if largest.max() > 0 else 1.0)
+        self.floor = unit_roundoff * largest
+        self.noise = np.full(centre.size, np.nan)
+        self.value = np.full(claim.shape, np.nan)
+        self.bound = np.full(claim.shape, np.inf)
+        self.left = np.full(claim.shape, np.nan)
+        self.right = np.full(claim.shape, np.nan)
+        self.confirmed = np.zeros(claim.shape, bool)
+        self.refuted = np.zeros(claim.shape, bool)
+        self.source = np.full(claim.shape, "", dtype=object)
+        self.reason = np.full(claim.shape, "", dtype=object)
+
+    def tolerance(self, columns: IntArray) -> Tolerance:
+        # The measured noise of an output, but never more than rounding can be: algorithmic noise buys no confirmation.
+        heard = np.where(np.isfinite(self.noise), self.noise, self.floor)
+        rounding = np.minimum(np.maximum(heard, self.floor), 1e3 * self.floor)
+        return Tolerance(
+            rel_tol=self.rel_tol, abs_tol=self.abs_tol, rounding=rounding[:, None] / self.typical[None, columns]
+        )
+
+    def hear(self, testimony: Testimony, columns: IntArray, *, final: bool = True) -> None:
+        """Apply the rule to the entries still open; a quick look (not final) may confirm but not refute."""
+        if final:
+            self.noise = np.fmax(self.noise, testimony.noise)
+        value, bound = testimony.value.T, testimony.bound.T
+        left, right = testimony.left.T, testimony.right.T
+        # At a kink the bound covers half the gap between the slopes; the rest is what the slopes may be off.
+        slope_error = np.nan_to_num(bound - np.abs(right - left) / 2)
+        outcome = judge(
+            self.claim[:, columns],
+            value,
+            bound,
+            self.tolerance(columns),
+            left=left,
+            right=right,
+            slope_error=slope_error,
+        )
+        part = np.ix_(range(self.claim.shape[0]), columns)
+        fresh = ~self.confirmed[part] & ~self.refuted[part]
+        # A later witness replaces an earlier one where it decides, or knows more.
+        better = fresh & (outcome.confirmed | (outcome.refuted & final) | ~(bound > self.bound[part]))
+        for mine, theirs in (
+            (self.value, value),
+            (self.bound, bound),
+            (self.left, left),
+            (self.right, right),
+        ):
+            mine[part] = np.where(better, theirs, mine[part])
+        self.source[part] = np.where(better, testimony.source, self.source[part])
+        self.confirmed[part] |= fresh & outcome.confirmed
+        if final:
+            self.refuted[part] |= fresh & outcome.refuted
+        self._note(testimony, columns, better)
+
+    def _note(self, testimony: Testimony, columns: IntArray, better: BoolArray) -> None:
+        for (row, output), reason in testimony.reasons.items():
+            if better[output, row]:
+                self.reason[output, columns[row]] = reason
+
+    def second(self, testimony: Testimony, columns: IntArray) -> None:
+        """Keep a refutation only where the second look refutes as well."""
+        outcome = judge(
+            self.claim[:, columns],
+            testimony.value.T,
+            testimony.bound.T,
+            self.tolerance(columns),
+            left=testimony.left.T,
+            right=testimony.right.T,
+        )
+        part = np.ix_(range(self.claim.shape[0]), columns)
+        fallen = self.refuted[part] & ~outcome.refuted
+        self.refuted[part] &= outcome.refuted
+        reason = self.reason[part]
+        reason[fallen] = "a second look with other steps did not agree with the first"
+        self.reason[part] = reason
+        # Two looks that part show how much the first bound is worth.
+        parted = np.abs(testimony.value.T - self.value[part])
+        self.bound[part] = np.where(fallen, np.fmax(self.bound[part], parted), self.bound[part])
+
+    def open_columns(self) -> IntArray:
+        return np.flatnonzero((~self.confirmed & ~self.refuted).any(axis=0))
+
+    def refuted_columns(self) -> IntArray:
+        return np.flatnonzero(self.refuted.any(axis=0))
+
+    def result(self) -> Examined:
+        columns = np.arange(self.claim.shape[1])
+        tolerance = self.tolerance(columns)
+        verdict = np.full(self.claim.shape, Verdict.UNDECIDED, dtype=object)
+        verdict[self.confirmed] = Verdict.CONFIRMED
+        verdict[self.refuted] = Verdict.REFUTED
+        by_floor = self.confirmed & tolerance.floor_decides(self.claim, self.value) & (self.reason == "")
+        self.reason[by_floor] = "confirmed within the rounding of the function's value"
+        undecided = ~self.confirmed & ~self.refuted & (self.reason == "")
+        self.reason[undecided & np.isfinite(self.bound)] = (
+            "the bound is wider than the tolerance: noise in the values, or steps that see too little"
+        )
+        self.reason[undecided & ~np.isfinite(self.bound)] = "no witness could give a finite bound"
+        self._note_plateaus(tolerance)
+        return Examined(
+            claim=self.claim,
+            value=self.value,
+            bound=self.bound,
+            left=self.left,
+            right=self.right,
+            verdict=verdict,
+            source=self.source,
+            reason=self.reason,
+            noise=self.noise,
+        )
+
+    def _note_plateaus(self, tolerance: Tolerance) -> None:
+        wrong = self.refuted & ~np.isfinite(self.claim)
+        self.reason[wrong] = "the claim is not a finite number while the witness is"

@@ -1,0 +1,39 @@
+"""Which likely mistakes explain a refuted claim: the families in the order in which they are asked."""
+
+from dataclasses import replace
+
+import numpy as np
+
+from gradcheck.claims.mistakes.case import Case, Family
+from gradcheck.claims.mistakes.factor import constant_factor
+from gradcheck.claims.mistakes.sign import sign_flipped
+from gradcheck.claims.mistakes.swapped import swapped_entries
+from gradcheck.claims.mistakes.transpose import transposed
+from gradcheck.claims.mistakes.zero import zero_entry
+from gradcheck.records.report import Diagnosis
+from gradcheck.records.verdict import DiagnosisCode
+from gradcheck.wording import listed
+
+#: A story about the whole claim comes before stories about single entries.
+FAMILIES: tuple[Family, ...] = (transposed, zero_entry, sign_flipped, swapped_entries, constant_factor)
+
+
+def likely_mistakes(case: Case) -> tuple[Diagnosis, ...]:
+    """Diagnoses that explain the refuted entries; each entry is explained once, what no family explains is said."""
+    diagnoses = []
+    left = case.refuted.copy()
+    for family in FAMILIES:
+        if not left.any():
+            break
+        diagnosis = family(replace(case, refuted=left))
+        if diagnosis is not None:
+            diagnoses.append(diagnosis)
+            named = set(diagnosis.entries)
+            for i, j in np.argwhere(left):
+                if case.name(int(i), int(j)) in named:
+                    left[i, j] = False
+    if left.any():
+        names = case.names(left)
+        text = f"{listed(names)}: no simple mistake explains the difference; derive {'it' if len(names) == 1 else 'them'} afresh."
+        diagnoses.append(Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names))
+    return tuple(diagnoses)

@@ -1,0 +1,110 @@
+"""When a claim counts as confirmed, refuted or undecided.
+
+For a claim c, a witness w ± b and the tolerance T = abs_tol + rel_tol·max(|c|, |w|) + allowance·ε/τ:
+
+* confirmed: |c − w| + b <= T;
+* refuted: |c − w| > T + 3b (a second look has to agree; see `examination`);
+* else undecided.
+
+At a kink the claim is measured against the hull of the one-sided slopes: inside it nobody can say, outside it by 3b the
+claim is refuted. A claim that is NaN where the witness is finite is refuted. An infinite bound decides nothing.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from gradcheck.records.arrays import Array, BoolArray
+
+#: Share of the rounding floor ε over the typical size τ of the variable that a claim may be off. A true zero at a smooth
+#: point (an optimum) must be confirmable: there the bound of the difference witness on its first interval (0.1 τ) is
+#: about 5·(1 + 2/ν)·3/0.1 = 200 times ε/τ.
+ALLOWANCE = 400.0
+#: How many bounds beyond the tolerance a claim must be off to be refuted.
+REFUTING_BOUNDS = 3.0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Tolerance:
+    """What may separate a right claim from the truth.
+
+    Attributes
+    ----------
+    rel_tol, abs_tol : float
+    rounding : ndarray, broadcastable to the claim
+        ε/τ: rounding floor of the output over the typical size of the variable.
+    """
+
+    rel_tol: float
+    abs_tol: float
+    rounding: Array
+
+    def of(self, claim: Array, value: Array) -> Array:
+        """T for each entry."""
+        size = np.fmax(np.abs(claim), np.abs(value))
+        return self.abs_tol + self.rel_tol * size + ALLOWANCE * self.rounding
+
+    def floor_decides(self, claim: Array, value: Array) -> BoolArray:
+        """Where the rounding floor is the larger part of T."""
+        size = np.fmax(np.abs(claim), np.abs(value))
+        decides: BoolArray = ALLOWANCE * self.rounding > self.abs_tol + self.rel_tol * size
+        return decides
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Judgement:
+    """The rule's outcome for arrays of entries; neither mark set means undecided."""
+
+    confirmed: BoolArray
+    refuted: BoolArray
+
+
+def judge(
+    claim: Array,
+    value: Array,
+    bound: Array,
+    tolerance: Tolerance,
+    *,
+    left: Array | None = None,
+    right: Array | None = None,
+    slope_error: Array | None = None,
+) -> Judgement:
+    """Apply the rule entry by entry.
+
+    Parameters
+    ----------
+    claim, value, bound : ndarray of one shape
+    tolerance : Tolerance
+    left, right : ndarray, optional
+        One-sided slopes where there is a kink; NaN elsewhere.
+    slope_error : ndarray, optional
+        Bound of these slopes.
+
+    Returns
+    -------
+    Judgement
+    """
+    allowed = tolerance.of(claim, value)
+    with np.errstate(invalid="ignore"):
+        gap = np.abs(claim - value)
+        known = np.isfinite(bound) & np.isfinite(value)
+        confirmed = known & (gap + bound <= allowed)
+        refuted = known & ((gap > allowed + REFUTING_BOUNDS * bound) | ~np.isfinite(claim))
+        if left is not None and right is not None:
+            kink = np.isfinite(left) & np.isfinite(right)
+            error = np.zeros_like(value) if slope_error is None else slope_error
+            outside = np.maximum(np.minimum(left, right) - claim, claim - np.maximum(left, right))
+            beyond = (outside > allowed + REFUTING_BOUNDS * error) | ~np.isfinite(claim)
+            confirmed = confirmed & ~kink
+            refuted = np.where(kink, beyond, refuted)
+    return Judgement(confirmed=confirmed, refuted=refuted)
+
+
+def digits_agreed(claim: Array, value: Array, bound: Array) -> Array:
+    """Decimal digits to which claim and witness are seen to agree: the worst that the bound allows, from 0 to 17."""
+    size = np.fmax(np.abs(claim), np.abs(value))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        relative = (np.abs(claim - value) + bound) / size
+        digits = -np.log10(relative)
+    digits = np.where(size == 0, np.where(bound == 0, 17.0, 0.0), digits)
+    return np.clip(np.nan_to_num(digits, nan=0.0, posinf=17.0, neginf=0.0), 0.0, 17.0)

@@ -1,0 +1,77 @@
+"""How x and f travel through autograd: Jacobian times tangents, and cotangents times Jacobian."""
+
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from gradcheck.problem.layout import Layout, Leaf
+from gradcheck.records.arrays import Array
+
+try:
+    import autograd
+    import autograd.numpy as anp
+    from autograd.tracer import isbox
+except ImportError as error:
+    raise ImportError(
+        f"autograd cannot be imported ({error}); install it with: pip install 'gradcheck[autograd]'"
+    ) from error
+
+
+class CutGraph(ArithmeticError):
+    """What the model returned does not hang on its input, as far as autograd can see."""
+
+
+def jvp(function: Callable[..., Any], layout: Layout, point: Array, tangents: NDArray[Any]) -> Array:
+    """Jacobian times tangents, by forward mode.
+
+    Parameters
+    ----------
+    function : callable
+        The model, written with ``autograd.numpy``; may return any shape, or a list of numbers, which is raveled.
+    layout : Layout
+        Leaves reach the model as autograd's boxes, everything else untouched.
+    point : ndarray, shape (n,)
+    tangents : ndarray, shape (d, n)
+
+    Returns
+    -------
+    ndarray, shape (d, m)
+        NaN and infinities as autograd gave them.
+
+    Raises
+    ------
+    CutGraph
+        If the model returned plain numbers: autograd alone would warn and give zeros.
+    Exception
+        Whatever tracing raises; several operations have no rule for forward mode (NotImplementedError).
+    """
+    push = autograd.make_jvp(_flat(function, layout))(np.array(point, dtype=float))
+    return np.array([push(row)[1] for row in tangents], dtype=float)
+
+
+def vjp(function: Callable[..., Any], layout: Layout, point: Array, cotangents: NDArray[Any]) -> Array:
+    """Cotangents ``(d, m)`` times Jacobian, by reverse mode: shape ``(d, n)``. Everything else as in `jvp`."""
+    pull, _ = autograd.make_vjp(_flat(function, layout))(np.array(point, dtype=float))
+    return np.array([pull(row) for row in cotangents], dtype=float)
+
+
+def _flat(function: Callable[..., Any], layout: Layout) -> Callable[[Any], Any]:
+    """The model as a function from one vector to one vector."""
+
+    def flat(vector: Any) -> Any:
+        positional, keywords = layout.arguments(lambda leaf: _part(vector, leaf))
+        output = anp.ravel(anp.array(function(*positional, **keywords)))
+        if not isbox(output):
+            raise CutGraph(
+                "the model returned plain numbers, so autograd sees no dependence on x: either it is constant, or a "
+                "step uses plain numpy where it needs `import autograd.numpy as np`"
+            )
+        return output
+
+    return flat
+
+
+def _part(vector: Any, leaf: Leaf) -> Any:
+    return vector[leaf.start] if leaf.scalar else anp.reshape(vector[leaf.start : leaf.stop], leaf.shape)

@@ -1,0 +1,72 @@
+"""The cheap difference witness: three pairs a direction, enough to confirm most right claims.
+
+Central differences at steps of ratio 2 and Richardson's extrapolation in h² (Richardson 1911). It is never the last word on
+a claim it does not confirm.
+"""
+
+import numpy as np
+
+from gradcheck.evaluation.protocol import Directions, Inquiry, Request, Status
+from gradcheck.records.arrays import Array
+from gradcheck.witnesses.finite_difference import SOURCE
+from gradcheck.witnesses.polynomial_fit import ROUNDING
+from gradcheck.witnesses.steps import Room, rounded_half_width
+from gradcheck.witnesses.testimony import Testimony
+
+#: Largest step in units of the variable's size.
+STEP = 0.01
+#: A variable this much smaller than its typical size is stepped as if it were larger.
+SMALLEST_SHARE = 0.1
+#: Half-width of the bound in standard deviations of rounding.
+DEVIATIONS = 8.0
+#: Weights of the three quotients (steps h, h/2, h/4) in the extrapolated value: exact to order 6.
+_VALUE = np.array([1.0, -20.0, 64.0]) / 45
+#: Their weights in the difference of the two extrapolated values of order 4, over 15: the error of the better of the two.
+_CHANGE = np.array([1.0, -5.0, 4.0]) / 45
+#: Rounding of the value in units of (rounding of f)/h, each quotient having 1/(√2·step).
+_AMPLIFICATION = float(np.sqrt(np.sum((_VALUE * np.array([1.0, 2.0, 4.0])) ** 2) / 2))
+
+
+def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -> Inquiry[Testimony]:
+    """Value ± bound along each direction from six evaluations.
+
+    Parameters
+    ----------
+    base, directions, room, centre
+        As in `finite_difference`.
+
+    Returns
+    -------
+    Testimony
+        Bound infinite where the bounds leave no room on both sides or the model fails. The bound covers truncation and
+        rounding, not noise inside the model: use it to confirm, never to refute.
+    """
+    d, m = len(directions), centre.size
+    wanted = STEP * np.maximum(room.scale, SMALLEST_SHARE * room.widest)
+    narrow = np.minimum(room.below, room.above)
+    able = narrow >= 0.1 * wanted
+    value, bound = np.full((d, m), np.nan), np.full((d, m), np.inf)
+    step = np.full((d, m), np.nan)
+    rows = np.flatnonzero(able)
+    if rows.size == 0:
+        return Testimony(value=value, bound=bound, source=SOURCE)
+    h = rounded_half_width(np.minimum(wanted, narrow)[rows], room.grain[rows])
+    offsets = h[:, None] * np.array([1.0, -1.0, 0.5, -0.5, 0.25, -0.25])
+    moved = offsets
+    if directions.ndim == 1:
+        x = base[directions[rows]][:, None]
+        moved = (x + offsets) - x
+    reply = yield Request(base=base, directions=directions[rows], offsets=moved)
+    up, down = reply.values[:, 0::2], reply.values[:, 1::2]
+    with np.errstate(invalid="ignore", over="ignore"):
+        quotients = (up - down) / (moved[:, 0::2] - moved[:, 1::2])[:, :, None]
+        value[rows] = np.einsum("k,dkm->dm", _VALUE, quotients)
+        change = np.abs(np.einsum("k,dkm->dm", _CHANGE, quotients))
+        floor = ROUNDING * np.spacing(np.maximum(np.abs(reply.values).max(axis=1), np.abs(centre)))
+    rounding = DEVIATIONS * _AMPLIFICATION * floor / h[:, None]
+    good = reply.finite.all(axis=1)[:, None] & np.isfinite(value[rows])
+    bound[rows] = np.where(good, 1.5 * change + rounding, np.inf)
+    step[rows] = h[:, None]
+    refused = (reply.status == Status.REFUSED).any(axis=1)
+    reasons = {(int(rows[i]), j): "the budget was spent" for i in np.flatnonzero(refused) for j in range(m)}
+    return Testimony(value=value, bound=bound, step=step, source=SOURCE, spent=reply.spent, reasons=reasons)
