@@ -247,7 +247,8 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
     )
     examined = conduct_one(addressed(inquiry, function=function), session.gate)
     findings: list[Finding] = [failure] if failure else []
-    findings += kinks_at_point(subject, function, examined)
+    columns = np.arange(subject.layout.size)
+    findings += kinks_at_point(subject, function, examined.left, examined.right, columns)
     findings += mutation(subject, session.ledger)
     entries = _entries(subject, function, kind, examined)
     report = CheckReport(

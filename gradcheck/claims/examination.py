@@ -18,6 +18,7 @@ from gradcheck.witnesses.finite_difference import finite_difference
 from gradcheck.witnesses.quick_look import quick_look
 from gradcheck.witnesses.steps import Room
 from gradcheck.witnesses.testimony import Testimony
+from gradcheck.wording import number
 
 DIFFERENCES, COMPLEX_STEP = "differences", "complex step"
 WITNESSES = (DIFFERENCES, COMPLEX_STEP)
@@ -99,7 +100,7 @@ def examine(
         open_ = desk.open_columns()
         if open_.size:
             whole = yield from finite_difference(base, open_, _along(room, open_), centre)
-            desk.hear(whole, open_)
+            desk.hear(whole, open_, replacing=True)
             yield from _second_look(desk, base, room, centre, witnesses)
     if COMPLEX_STEP in witnesses:
         open_ = desk.open_columns() if DIFFERENCES in witnesses else everything
@@ -165,8 +166,11 @@ class _Desk:
             rel_tol=self.rel_tol, abs_tol=self.abs_tol, rounding=rounding[:, None] / self.typical[None, columns]
         )
 
-    def hear(self, testimony: Testimony, columns: IntArray, *, final: bool = True) -> None:
-        """Apply the rule to the entries still open; a quick look (not final) may confirm but not refute."""
+    def hear(self, testimony: Testimony, columns: IntArray, *, final: bool = True, replacing: bool = False) -> None:
+        """Apply the rule to the entries still open.
+
+        A quick look (not final) may confirm but not refute; what replaces it is believed even where its bound is wider.
+        """
         if final:
             self.noise = np.fmax(self.noise, testimony.noise)
         value, bound = testimony.value.T, testimony.bound.T
@@ -185,7 +189,13 @@ class _Desk:
         part = np.ix_(range(self.claim.shape[0]), columns)
         fresh = ~self.confirmed[part] & ~self.refuted[part]
         # A later witness replaces an earlier one where it decides, or knows more.
-        better = fresh & (outcome.confirmed | (outcome.refuted & final) | ~(bound > self.bound[part]))
+        better = fresh & (
+            outcome.confirmed
+            | (outcome.refuted & final)
+            | (bound < self.bound[part])
+            | replacing
+            | (self.source[part] == "")
+        )
         for mine, theirs in (
             (self.value, value),
             (self.bound, bound),
@@ -239,11 +249,8 @@ class _Desk:
         by_floor = self.confirmed & tolerance.floor_decides(self.claim, self.value) & (self.reason == "")
         self.reason[by_floor] = "confirmed within the rounding of the function's value"
         undecided = ~self.confirmed & ~self.refuted & (self.reason == "")
-        self.reason[undecided & np.isfinite(self.bound)] = (
-            "the bound is wider than the tolerance: noise in the values, or steps that see too little"
-        )
-        self.reason[undecided & ~np.isfinite(self.bound)] = "no witness could give a finite bound"
-        self._note_plateaus(tolerance)
+        self._explain_doubt(undecided)
+        self.reason[self.refuted & ~np.isfinite(self.claim)] = "the claim is not a finite number while the witness is"
         return Examined(
             claim=self.claim,
             value=self.value,
@@ -256,6 +263,14 @@ class _Desk:
             noise=self.noise,
         )
 
-    def _note_plateaus(self, tolerance: Tolerance) -> None:
-        wrong = self.refuted & ~np.isfinite(self.claim)
-        self.reason[wrong] = "the claim is not a finite number while the witness is"
+    def _explain_doubt(self, undecided: BoolArray) -> None:
+        for output in np.flatnonzero(undecided.any(axis=1)):
+            row = undecided[output]
+            noise = self.noise[output]
+            noisy = np.isfinite(noise) and noise > 100 * self.floor[output]
+            doubt = f"noise of {number(noise, digits=2)} in the values" if noisy else "rounding and truncation"
+            leaves = "makes the bound wider than the tolerance" if noisy else "leave a bound wider than the tolerance"
+            self.reason[output, row & np.isfinite(self.bound[output])] = (
+                f"{doubt} {leaves}; values with more digits decide"
+            )
+            self.reason[output, row & ~np.isfinite(self.bound[output])] = "no witness could give a finite bound"

@@ -2,9 +2,9 @@
 
 import numpy as np
 
-from gradcheck.claims.examination import Examined
 from gradcheck.evaluation.ledger import Ledger
 from gradcheck.problem.subject import Subject
+from gradcheck.records.arrays import Array, IntArray
 from gradcheck.records.finding import Finding, FindingCode, Location, Severity
 from gradcheck.wording import number
 
@@ -12,13 +12,14 @@ from gradcheck.wording import number
 KINKS_SHOWN = 10
 
 
-def kinks_at_point(subject: Subject, function: str, examined: Examined) -> list[Finding]:
-    """Entries whose one-sided slopes part at the point itself."""
+def kinks_at_point(subject: Subject, function: str, left: Array, right: Array, columns: IntArray) -> list[Finding]:
+    """Entries whose one-sided slopes, each (m, d) for d columns, part at the point itself."""
     findings = []
-    for output, column in np.argwhere(np.isfinite(examined.left))[:KINKS_SHOWN]:
-        left, right = float(examined.left[output, column]), float(examined.right[output, column])
-        variable = subject.layout.name(int(column))
-        part = f"output {output} of {function}" if examined.claim.shape[0] > 1 else function
+    several = left.shape[0] > 1
+    for output, place in np.argwhere(np.isfinite(left))[:KINKS_SHOWN]:
+        below, above = float(left[output, place]), float(right[output, place])
+        variable = subject.layout.name(int(columns[place]))
+        part = f"output {output} of {function}" if several else function
         findings.append(
             Finding(
                 code=FindingCode.KINK,
@@ -26,10 +27,10 @@ def kinks_at_point(subject: Subject, function: str, examined: Examined) -> list[
                 function=function,
                 variable=variable,
                 where=Location(point=subject.start),
-                evidence={"left_slope": left, "right_slope": right, "output": int(output)},
+                evidence={"left_slope": below, "right_slope": above} | ({"output": int(output)} if several else {}),
                 text=(
-                    f"{part} has a kink in {variable} at the point itself: the slope is {number(left)} below it and "
-                    f"{number(right)} above."
+                    f"{part} has a kink in {variable} at the point itself: the slope is {number(below)} below it and "
+                    f"{number(above)} above."
                 ),
                 remedy="Move the point off the kink, or smooth the model there; no derivative exists at a kink.",
             )

@@ -54,3 +54,15 @@ def addressed(inquiry: Inquiry[Result], **where: Any) -> Inquiry[Result]:
     except StopIteration as end:
         result: Result = end.value
         return result
+
+
+def counted(inquiry: Inquiry[Result]) -> Inquiry[tuple[Result, int]]:
+    """The result of `inquiry`, and how many evaluations it asked for, cached or not: what it costs on its own."""
+    asked = 0
+    try:
+        request = next(inquiry)
+        while True:
+            asked += request.offsets.size
+            request = inquiry.send((yield request))
+    except StopIteration as end:
+        return end.value, asked

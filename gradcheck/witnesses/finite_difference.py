@@ -45,8 +45,9 @@ def finite_difference(
         How far one may step along each direction.
     centre : ndarray, shape (m,)
         Finite values of the function at `base`.
-    derivative : 1 or 2
-        First or second derivative along the direction.
+    derivative : 1, 2 or 3
+        Order of the derivative along the direction. All orders take the same values at the same points: a cache gives the
+        second one for free.
 
     Returns
     -------

@@ -40,18 +40,15 @@ class Stencil:
         The centre 0 is the last one.
     basis : ndarray, shape (k, k)
         Column i: the orthonormal polynomial of degree i at the nodes.
-    slopes : ndarray, shape (k,)
-        Derivative of each polynomial at 0, per half-width.
-    curvatures : ndarray, shape (k,)
-        Second derivative of each polynomial at 0, per half-width squared.
+    at_centre : ndarray, shape (3, k)
+        First, second and third derivative of each polynomial at 0, per half-width to that power.
     node_slopes : ndarray, shape (k, k)
         Derivative of polynomial i (column) at each node (row).
     """
 
     nodes: Array
     basis: Array
-    slopes: Array
-    curvatures: Array
+    at_centre: Array
     node_slopes: Array
 
 
@@ -64,14 +61,11 @@ def stencil_on(nodes: tuple[float, ...], one_sided: bool) -> Stencil:
     values = chebyshev.chebvander(z, k - 1)
     basis, triangle = np.linalg.qr(values)
     identity = np.eye(k)
-    first = chebyshev.chebder(identity, 1, axis=0)
-    second = chebyshev.chebder(identity, 2, axis=0) if k > 2 else np.zeros((1, k))
-    slopes_at = chebyshev.chebval(z, first).T * stretch
-    curvature_at = chebyshev.chebval(z[-1], second) * stretch**2
+    slopes_at = chebyshev.chebval(z, chebyshev.chebder(identity, 1, axis=0)).T * stretch
+    centre = [chebyshev.chebval(z[-1], chebyshev.chebder(identity, p, axis=0)) * stretch**p for p in (1, 2, 3)]
     # basis = values @ inverse(triangle): the same combination gives the derivatives of the orthonormal polynomials.
     node_slopes = np.linalg.solve(triangle.T, slopes_at.T).T
-    curvatures = np.linalg.solve(triangle.T, curvature_at)
-    return Stencil(t, basis, node_slopes[-1], curvatures, node_slopes)
+    return Stencil(t, basis, np.linalg.solve(triangle.T, np.array(centre).T).T, node_slopes)
 
 
 def chebyshev_pairs(pairs: int) -> Array:
@@ -138,7 +132,7 @@ def fit(
         Largest \|f\| on the stencil: the floor of the rounding.
     slips : ndarray, shape (d, k), optional
         Displacement realised minus displacement meant, in units of the half-width; corrected to first order.
-    derivative : 1 or 2
+    derivative : 1, 2 or 3
     wobble : ndarray, shape (d,), optional
         Size of the rounding of x itself, in units of the direction. A model that multiplies x by a constant rounds the
         product alike at all nodes: its values are exact ones of a point beside x, and no residual shows it. The next
@@ -186,7 +180,7 @@ def _concluded(
     left_over = k - order
     noise = np.sqrt(np.where(kept, 0.0, a**2).sum(axis=1) / np.maximum(left_over, 1))
     noise = np.maximum(noise, floor)
-    weights = (stencil.slopes if derivative == 1 else stencil.curvatures)[None, :, None]
+    weights = stencil.at_centre[derivative - 1][None, :, None]
     width = half_width[:, None] ** derivative
     size = np.abs(width)
     half_way = (order + left_over // 2)[:, None, :]
@@ -203,9 +197,9 @@ def _concluded(
     next_weight = np.where(index <= order[:, None, :] + 1, dropped, 0.0).max(axis=1) / size
     deviations = DEVIATIONS * (1 + 2 / np.maximum(left_over, 1))
     bound = noise * (deviations * amplification + DROPPED_SHARE * next_weight) + 2 * np.finfo(float).eps * np.abs(value)
-    if wobble is not None and derivative == 1:
-        curvature = np.where(kept, stencil.curvatures[None, :, None] * a, 0.0).sum(axis=1) / half_width[:, None] ** 2
-        bound = bound + wobble[:, None] * np.abs(curvature)
+    if wobble is not None and derivative < 3:
+        next_one = np.where(kept, stencil.at_centre[derivative][None, :, None] * a, 0.0).sum(axis=1)
+        bound = bound + wobble[:, None] * np.abs(next_one) / size / np.abs(half_width[:, None])
     variation = np.abs(a[:, 1:]).max(axis=1)
     return Fit(
         value=value,

@@ -24,6 +24,8 @@ _VALUE = np.array([1.0, -20.0, 64.0]) / 45
 #: Their weights in the difference of the two extrapolated values of order 4, over 15: the error of the better of the two.
 _CHANGE = np.array([1.0, -5.0, 4.0]) / 45
 #: Rounding of the value in units of (rounding of f)/h, each quotient having 1/(√2·step).
+#: Weights of second differences at steps h, h/2, h/4 that leave only a part ∝ h (a kink at the point): k·h.
+_KINK = np.array([1.0, -20.0, 64.0]) / 7
 _AMPLIFICATION = float(np.sqrt(np.sum((_VALUE * np.array([1.0, 2.0, 4.0])) ** 2) / 2))
 
 
@@ -38,8 +40,9 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
     Returns
     -------
     Testimony
-        Bound infinite where the bounds leave no room on both sides or the model fails. The bound covers truncation and
-        rounding, not noise inside the model: use it to confirm, never to refute.
+        Bound infinite where the bounds leave no room on both sides or the model fails. The bound covers truncation, rounding
+        and a kink at the point (central differences give its mean slope for every step, so this must be asked for), not
+        noise inside the model: use it to confirm, never to refute.
     """
     d, m = len(directions), centre.size
     wanted = STEP * np.maximum(room.scale, SMALLEST_SHARE * room.widest)
@@ -62,10 +65,11 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
         quotients = (up - down) / (moved[:, 0::2] - moved[:, 1::2])[:, :, None]
         value[rows] = np.einsum("k,dkm->dm", _VALUE, quotients)
         change = np.abs(np.einsum("k,dkm->dm", _CHANGE, quotients))
+        bend = np.abs(np.einsum("k,dkm->dm", _KINK, up + down - 2 * centre)) / h[:, None]
         floor = ROUNDING * np.spacing(np.maximum(np.abs(reply.values).max(axis=1), np.abs(centre)))
     rounding = DEVIATIONS * _AMPLIFICATION * floor / h[:, None]
     good = reply.finite.all(axis=1)[:, None] & np.isfinite(value[rows])
-    bound[rows] = np.where(good, 1.5 * change + rounding, np.inf)
+    bound[rows] = np.where(good, 1.5 * change + bend / 2 + rounding, np.inf)
     step[rows] = h[:, None]
     refused = (reply.status == Status.REFUSED).any(axis=1)
     reasons = {(int(rows[i]), j): "the budget was spent" for i in np.flatnonzero(refused) for j in range(m)}

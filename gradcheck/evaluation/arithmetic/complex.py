@@ -52,7 +52,7 @@ def picked(result: Any, pick: Callable[[Any], Any] | None, shape: tuple[int, ...
 
 @contextmanager
 def _nothing_discarded() -> Iterator[None]:
-    """A discarded imaginary part (ComplexWarning) is an error: numpy merely warns, and the derivative is lost in silence."""
+    """A discarded imaginary part (ComplexWarning) is an error; numpy merely warns, and the derivative would be lost."""
     with warnings.catch_warnings():
         warnings.simplefilter("error", ComplexWarning)
         yield

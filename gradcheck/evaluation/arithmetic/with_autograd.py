@@ -43,7 +43,7 @@ def jvp(function: Callable[..., Any], layout: Layout, point: Array, tangents: ND
     Raises
     ------
     CutGraph
-        If the model returned plain numbers: autograd alone would warn and give zeros.
+        If the model returned plain numbers or a plain array: autograd alone would warn and give zeros.
     Exception
         Whatever tracing raises; several operations have no rule for forward mode (NotImplementedError).
     """
@@ -65,8 +65,8 @@ def _flat(function: Callable[..., Any], layout: Layout) -> Callable[[Any], Any]:
         output = anp.ravel(anp.array(function(*positional, **keywords)))
         if not isbox(output):
             raise CutGraph(
-                "the model returned plain numbers, so autograd sees no dependence on x: either it is constant, or a "
-                "step uses plain numpy where it needs `import autograd.numpy as np`"
+                "what the model returned is cut off from x, as far as autograd can see: either it is constant, or a "
+                "step uses plain numpy (np.array, say) where it needs `import autograd.numpy as np`"
             )
         return output
 

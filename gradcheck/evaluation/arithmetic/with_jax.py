@@ -69,9 +69,12 @@ def vjp(function: Callable[..., Any], layout: Layout, point: Array, cotangents: 
 
 
 def _double_precision() -> AbstractContextManager[Any]:
-    switch = getattr(jax, "enable_x64", None)
-    if switch is None:  # before jax 0.8
-        from jax.experimental import enable_x64 as switch
+    if hasattr(jax, "enable_x64"):
+        switch = jax.enable_x64
+    else:  # before jax 0.8
+        from jax import experimental
+
+        switch = experimental.enable_x64
     scope: AbstractContextManager[Any] = switch(True)
     return scope
 
@@ -115,8 +118,8 @@ def _batched(sweep: Sweep, rows: NDArray[Any]) -> NDArray[Any]:
 def _agrees(batched: NDArray[Any], sweep: Sweep, rows: NDArray[Any]) -> bool:
     """Whether one plain sweep of a mixture of all rows gives the same mixture of the batched results.
 
-    A batching rule is user code too, and may be wrong. Rows are mixed in equal sizes, with weights that no two rows share.
-    Columns that are not finite are not compared.
+    A batching rule is user code too, and may be wrong. Rows are mixed in equal sizes, with weights that no two rows
+    share. Columns that are not finite are not compared.
     """
     finite = np.isfinite(batched).all(axis=0)
     if not finite.any():

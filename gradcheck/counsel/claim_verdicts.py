@@ -1,0 +1,66 @@
+"""Findings from the verdicts on claims."""
+
+from gradcheck.problem.subject import Subject
+from gradcheck.records.finding import Finding, FindingCode, Location, Severity
+from gradcheck.records.report import CheckReport
+from gradcheck.records.verdict import Verdict
+from gradcheck.wording import count, listed
+
+
+def verdict_findings(subject: Subject, report: CheckReport) -> list[Finding]:
+    """A refuted claim is a blocker; an undecided one a hazard, or a remark where only single entries stay open."""
+    findings = []
+    for verdict, code in (
+        (Verdict.REFUTED, FindingCode.CLAIM_REFUTED),
+        (Verdict.UNDECIDED, FindingCode.CLAIM_UNDECIDED),
+    ):
+        places = [k for k, v in enumerate(report.entries.verdict) if v == verdict]
+        if places:
+            findings.append(_finding(subject, report, code, places))
+    return findings
+
+
+def _finding(subject: Subject, report: CheckReport, code: FindingCode, places: list[int]) -> Finding:
+    names = [report.entries.name[k] for k in places]
+    total = len(report.entries)
+    what = f"the {report.kind} of {report.function}"
+    share = f"{count(len(places), 'entry', 'entries')} of {total}"
+    variable = _only_variable(subject, report, places)
+    if code == FindingCode.CLAIM_REFUTED:
+        likely = report.diagnoses[0].text if report.diagnoses else ""
+        text = f"{what} is wrong in {share}: {listed(names)}."
+        remedy = f"Mend the derivative before any run. {likely[:1].upper()}{likely[1:]}".strip()
+        severity = Severity.BLOCKER
+    elif _only_whole_numbers(subject, report, places):
+        text = f"{what} was not judged for {listed(names)}: whole numbers have no derivative."
+        remedy = "Nothing to mend; do not hand these entries to a gradient method."
+        severity = Severity.REMARK
+    else:
+        reasons = list(dict.fromkeys(r for k in places if (r := report.entries.reason[k])))
+        text = f"{what} could not be judged in {share} ({listed(names)}): {'; '.join(reasons[:2])}."
+        remedy = "Give the model more digits there (a tighter inner tolerance, more printed digits) and check again."
+        severity = Severity.HAZARD
+    return Finding(
+        code=code,
+        severity=severity,
+        function=report.function,
+        variable=variable,
+        where=Location(point=report.point),
+        evidence={"entries": len(places), "of": total},
+        text=text,
+        remedy=remedy,
+    )
+
+
+def _only_variable(subject: Subject, report: CheckReport, places: list[int]) -> str | None:
+    columns = _columns(report, places)
+    return subject.layout.name(columns.pop()) if len(columns) == 1 else None
+
+
+def _only_whole_numbers(subject: Subject, report: CheckReport, places: list[int]) -> bool:
+    return all(subject.domain.integer[column] for column in _columns(report, places))
+
+
+def _columns(report: CheckReport, places: list[int]) -> set[int]:
+    index = report.entries.index
+    return {int(index[k] if index.ndim == 1 else index[k, 1]) for k in places}

@@ -1,0 +1,255 @@
+"""A suspicion is believed only if fresh samples at ever smaller distances show the same break.
+
+A rounded corner such as sqrt(x² + 1e-10) looks like a kink from afar: the change of its slope fades once the distance
+falls below the rounding. So the change of slope (or of curvature) must keep its size down to the distance at which noise
+drowns it.
+"""
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from gradcheck.health.line_focus import Focus
+from gradcheck.health.line_report import Irregularity
+from gradcheck.health.line_samples import EPSILON, Quest, Samples
+from gradcheck.health.line_zoom import Suspect
+from gradcheck.records.arrays import Array
+from gradcheck.records.finding import FindingCode
+
+PLACES = np.array([1.0, 2.1, 3.2])  # in units of the distance; uneven, so that no wave hits all of them alike
+KINK_SIGMAS = 200.0  # distance at which a change of slope is this many times the noise
+CURVATURE_SIGMAS = 400.0
+SLOPE_KEEPS = (0.7, 1.45)
+CURVATURE_KEEPS = (0.6, 1.6)
+KINK_EXPONENTS = (0.6, 1.7)  # of |D| over the distance; a cusp has less
+CURVATURE_EXPONENTS = (1.3, 2.8)  # the third derivative of a C2 spline breaks with 3
+CLOSER = 30.0
+APART = 4.0  # least ratio of two distances at which the change is compared, where there is room for both
+JUMP_SIGMAS = 30.0
+JUMP_SHARE = 0.5  # of the gap first seen
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class TwoSides:
+    """Value, slope and second derivative at `centre`, from three samples on either side."""
+
+    centre: float
+    distance: float
+    left: Array
+    right: Array
+
+    @property
+    def change(self) -> Array:
+        """(3,): change of value, slope, second derivative from left to right."""
+        return np.asarray(self.right - self.left)
+
+
+def confirmed(
+    samples: Samples, focus: Focus, piece: tuple[float, float], suspect: Suspect
+) -> Quest[tuple[Samples, Irregularity | None]]:
+    """The irregularity that a suspicion turns out to be, or None."""
+    if suspect.jump:
+        return (yield from _jump(samples, focus, piece, suspect))
+    crossing = np.signbit(suspect.gap_left) != np.signbit(suspect.gap_right)
+    attempts = (_kink, _curvature_break) if crossing else (_curvature_break, _kink)
+    for attempt in attempts:
+        samples, found = yield from attempt(samples, focus, piece, suspect)
+        if found is not None:
+            return samples, found
+    return samples, None
+
+
+def _jump(
+    samples: Samples, focus: Focus, piece: tuple[float, float], suspect: Suspect
+) -> Quest[tuple[Samples, Irregularity | None]]:
+    _, (before, after) = samples.at(np.array([suspect.lower, suspect.upper]), focus.output)
+    height = float(after - before)
+    noise = max(focus.sigma, 0.3 * EPSILON * max(abs(before), abs(after)))
+    if abs(height) < max(JUMP_SHARE * suspect.least_gap, JUMP_SIGMAS * noise):
+        return samples, None
+    distance = 4.0 * max(suspect.upper - suspect.lower, focus.closest(suspect.upper))
+    asked = np.concatenate([suspect.lower - distance * PLACES, suspect.upper + distance * PLACES])
+    if asked.min() < piece[0] or asked.max() > piece[1]:
+        return samples, None
+    samples = yield asked
+    _, values = samples.at(asked, focus.output)
+    spread = np.abs(values - np.repeat([before, after], 3))
+    if not (spread <= 0.25 * abs(height)).all():
+        return samples, None
+    flat = bool((spread == 0.0).all())
+    return samples, Irregularity(
+        kind=FindingCode.JUMP,
+        output=focus.output,
+        lower=suspect.lower,
+        upper=suspect.upper,
+        size=height,
+        left=float(before),
+        right=float(after),
+        relative=abs(height) / focus.scale,
+        evidence={"flat_on_both_sides": float(flat), "noise": noise},
+    )
+
+
+def _kink(
+    samples: Samples, focus: Focus, piece: tuple[float, float], suspect: Suspect
+) -> Quest[tuple[Samples, Irregularity | None]]:
+    width = suspect.upper - suspect.lower
+    expected = (suspect.gap_right - suspect.gap_left) / width
+    samples, sides = yield from _traced(
+        samples, focus, piece, suspect, order=1, expected=expected, keeps=SLOPE_KEEPS, nearest=_kink_distance
+    )
+    if sides is None or not _exponent_within(suspect, sides, KINK_EXPONENTS):
+        return samples, None
+    change = float(sides.change[1])
+    noise = _noise_at(focus, sides)
+    half = max(8.0 * noise / abs(change), 0.02 * sides.distance, 0.5 * focus.closest(sides.centre))
+    return samples, Irregularity(
+        kind=FindingCode.KINK,
+        output=focus.output,
+        lower=sides.centre - half,
+        upper=sides.centre + half,
+        size=change,
+        left=float(sides.left[1]),
+        right=float(sides.right[1]),
+        relative=abs(change) / focus.slope,
+        evidence={"confirmed_at_distance": sides.distance, "noise": noise},
+    )
+
+
+def _curvature_break(
+    samples: Samples, focus: Focus, piece: tuple[float, float], suspect: Suspect
+) -> Quest[tuple[Samples, Irregularity | None]]:
+    reach = max(suspect.centre - suspect.lower, suspect.upper - suspect.centre)
+    gap = suspect.gap_left if suspect.centre - suspect.lower == reach else suspect.gap_right
+    expected = 2.0 * gap / (reach * reach)
+    samples, sides = yield from _traced(
+        samples,
+        focus,
+        piece,
+        suspect,
+        order=2,
+        expected=expected,
+        keeps=CURVATURE_KEEPS,
+        nearest=_curvature_distance,
+    )
+    if sides is None or not _exponent_within(suspect, sides, CURVATURE_EXPONENTS):
+        return samples, None
+    change = float(sides.change[2])
+    noise = _noise_at(focus, sides)
+    half = max(0.05 * sides.distance, 0.5 * focus.closest(sides.centre))
+    return samples, Irregularity(
+        kind=FindingCode.CURVATURE_BREAK,
+        output=focus.output,
+        lower=sides.centre - half,
+        upper=sides.centre + half,
+        size=change,
+        left=float(sides.left[2]),
+        right=float(sides.right[2]),
+        relative=abs(change) / focus.scale,
+        evidence={"confirmed_at_distance": sides.distance, "noise": noise},
+    )
+
+
+def _kink_distance(noise: float, change: float) -> float:
+    return KINK_SIGMAS * noise / abs(change)
+
+
+def _curvature_distance(noise: float, change: float) -> float:
+    return float(np.sqrt(CURVATURE_SIGMAS * noise / abs(change)))
+
+
+def _traced(
+    samples: Samples,
+    focus: Focus,
+    piece: tuple[float, float],
+    suspect: Suspect,
+    *,
+    order: int,
+    expected: float,
+    keeps: tuple[float, float],
+    nearest: Callable[[float, float], float],
+) -> Quest[tuple[Samples, TwoSides | None]]:
+    """Follow the change of a derivative from the suspect's scale down to the noise; None if it does not keep its size.
+
+    `expected` is the derivative of this order of D = right − left.
+    """
+    centre, sides = suspect.centre, None
+    if expected == 0.0 or not np.isfinite(expected):
+        return samples, None
+    noise = max(focus.sigma, _rounding_at(samples, focus, centre))
+    least = max(nearest(noise, expected), 8.0 * focus.closest(centre))
+    distance = max(2.5 * suspect.half, APART * least)
+    room = min(centre - piece[0], piece[1] - centre) / float(PLACES[-1])
+    if distance > room:
+        distance = max(2.5 * suspect.half, least)
+    while True:
+        asked = np.concatenate([centre - distance * PLACES, centre + distance * PLACES])
+        if asked.min() < piece[0] or asked.max() > piece[1]:
+            return samples, None
+        samples = yield asked
+        t, values = samples.at(asked, focus.output)
+        if not np.isfinite(values).all() or np.unique(t).size < t.size:
+            return samples, None
+        sides = _two_sides(t, values, centre, distance)
+        change = float(sides.change[order])
+        if not keeps[0] <= change / expected <= keeps[1]:
+            return samples, None
+        move = _centre_move(sides, order)
+        if abs(move) > distance:
+            return samples, None
+        centre, expected = centre + move, change
+        least = max(nearest(noise, expected), 8.0 * focus.closest(centre))
+        if distance <= 0.7 * APART * least:
+            return samples, _two_sides(t, values, centre, distance)
+        distance = max(distance / CLOSER, least)
+
+
+def _centre_move(sides: TwoSides, order: int) -> float:
+    """From the centre to where the quadratics cross (kink) or touch (curvature break)."""
+    value, slope, second = sides.change
+    if order == 2:
+        return float(-slope / second)
+    move = -value / slope
+    return float(-(value - 0.5 * second * move * move) / (slope + second * move))
+
+
+def _two_sides(t: Array, values: Array, centre: float, distance: float) -> TwoSides:
+    return TwoSides(
+        centre=centre,
+        distance=distance,
+        left=_quadratic(t[:3] - centre, values[:3]),
+        right=_quadratic(t[3:] - centre, values[3:]),
+    )
+
+
+def _quadratic(t: Array, f: Array) -> Array:
+    """(3,): value, slope and second derivative at 0 of the quadratic through three samples."""
+    first = (f[1] - f[0]) / (t[1] - t[0])
+    second = ((f[2] - f[1]) / (t[2] - t[1]) - first) / (t[2] - t[0])
+    value = f[0] - first * t[0] + second * t[0] * t[1]
+    return np.array([value, first - second * (t[0] + t[1]), 2.0 * second])
+
+
+def _exponent_within(suspect: Suspect, sides: TwoSides, limits: tuple[float, float]) -> bool:
+    """Whether |D| shrank from the first bracket to the last distance with an admissible power of the distance."""
+    value, slope, second = sides.change
+    d = sides.distance
+    gap = max(abs(sign * slope * d + 0.5 * second * d * d) for sign in (-1.0, 1.0))
+    span = suspect.first_distance / d
+    if span < 2.0 or gap == 0.0:
+        return True
+    exponent = float(np.log(suspect.first_gap / gap) / np.log(span))
+    return limits[0] <= exponent <= limits[1]
+
+
+def _rounding_at(samples: Samples, focus: Focus, t: float) -> float:
+    _, value = samples.at(np.array([t]), focus.output)
+    grain = float(focus.line.grain(np.array([t]))[0])
+    return max(0.3 * EPSILON * abs(float(value[0])), 0.15 * grain * focus.slope)
+
+
+def _noise_at(focus: Focus, sides: TwoSides) -> float:
+    slope = max(abs(sides.left[1]), abs(sides.right[1]))
+    grain = float(focus.line.grain(np.array([sides.centre]))[0])
+    return max(focus.sigma, 0.3 * EPSILON * abs(float(sides.left[0])), 0.15 * grain * slope)

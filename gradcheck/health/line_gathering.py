@@ -1,0 +1,113 @@
+"""Several quests on one line share their samples: one request a round, within a budget."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+
+from gradcheck.evaluation.protocol import Inquiry, Reply, Status
+from gradcheck.health.line_samples import Line, Quest, Samples, no_samples
+from gradcheck.records.arrays import Array, BoolArray
+
+MOST_ROUNDS = 2000  # a quest that asks only for what is known already would never end
+
+
+@dataclass(slots=True, kw_only=True, eq=False)
+class Gathering:
+    """The samples of a line while they are gathered.
+
+    Attributes
+    ----------
+    asked : int
+        Points asked for, which the budget limits; `evaluations` is what they cost (cached ones cost nothing).
+    refused : bool
+        The gate refused something: nothing more is asked.
+    complete : bool
+        False if a quest was ended by the budget.
+    """
+
+    line: Line
+    budget: int
+    worth: float
+    samples: Samples = field(default_factory=no_samples)
+    asked: int = 0
+    evaluations: int = 0
+    refused: bool = False
+    complete: bool = True
+
+    def sampled(self, t: Array) -> Inquiry[None]:
+        """Add samples at t to those known."""
+        wanted = self.samples.missing(self.line.realised(t))
+        if wanted.size == 0:
+            return
+        reply, answered = yield from self._answers(wanted, fresh=False)
+        if answered.any():
+            self.samples = self.samples.joined(wanted, reply, answered)
+
+    def repeated(self, t: Array) -> Inquiry[tuple[Array, BoolArray]]:
+        """Values (k, m) at known abscissae, evaluated once more, and which of them were answered."""
+        reply, answered = yield from self._answers(t, fresh=True)
+        return np.asarray(reply.values[0], dtype=float), answered
+
+    def affords(self, points: int) -> bool:
+        """Whether so many more points may be asked for."""
+        return not self.refused and self.asked + points <= self.budget
+
+    def pursued(self, quests: Mapping[int, Quest[Any]]) -> Inquiry[dict[int, Any]]:
+        """Follow all quests until they end or the budget does: the results of those that ended, by key."""
+        done: dict[int, Any] = {}
+        waiting: dict[int, tuple[Quest[Any], Array]] = {}
+        for key, quest in quests.items():
+            _advance(key, quest, None, waiting, done)
+        for _ in range(MOST_ROUNDS):
+            together = self._affordable(waiting)
+            if not waiting:
+                return done
+            yield from self.sampled(together)
+            for key, (quest, _) in list(waiting.items()):
+                if self.refused:
+                    break
+                _advance(key, quest, self.samples, waiting, done)
+        for quest, _ in waiting.values():
+            quest.close()
+        self.complete = False
+        return done
+
+    def _affordable(self, waiting: dict[int, tuple[Quest[Any], Array]]) -> Array:
+        """The abscissae of as many quests as can be afforded; the others are ended."""
+        together = np.empty(0)
+        for key, (quest, t) in list(waiting.items()):
+            union = np.concatenate([together, t])
+            if self.affords(self.samples.missing(self.line.realised(union)).size):
+                together = union
+                continue
+            quest.close()
+            del waiting[key]
+            self.complete = False
+        return together
+
+    def _answers(self, t: Array, *, fresh: bool) -> Inquiry[tuple[Reply, BoolArray]]:
+        reply = yield self.line.request(t, worth=self.worth, fresh=fresh)
+        self.asked += t.size
+        self.evaluations += reply.spent
+        answered = np.asarray(reply.status[0] != Status.REFUSED)
+        if not answered.all():
+            self.refused, self.complete = True, False
+        return reply, answered
+
+
+def _advance(
+    key: int,
+    quest: Quest[Any],
+    samples: Samples | None,
+    waiting: dict[int, tuple[Quest[Any], Array]],
+    done: dict[int, Any],
+) -> None:
+    try:
+        wanted = next(quest) if samples is None else quest.send(samples)
+    except StopIteration as end:
+        done[key] = end.value
+        waiting.pop(key, None)
+    else:
+        waiting[key] = quest, np.atleast_1d(wanted)

@@ -1,0 +1,129 @@
+"""How exact the values of one output are: noise, single precision, few digits, plateaus."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from gradcheck.health import fingerprints
+from gradcheck.health.line_focus import Focus
+from gradcheck.health.line_noise import StencilReading, read_stencil, stencil
+from gradcheck.health.line_plateaus import as_staircase, levels, risers, single_step
+from gradcheck.health.line_report import Irregularity
+from gradcheck.health.line_samples import EPSILON, Quest, Samples
+from gradcheck.records.arrays import Array
+from gradcheck.records.finding import FindingCode
+
+NOISY = 100.0  # units in the last place of f: what is above is noise, what is below is rounding
+NOISY_ARGUMENT = 10.0  # times what the rounding of the point alone explains
+SINGLE_NOISE = (3e-10, 3e-6)  # noise over values that single precision somewhere inside leaves
+SINGLE_ROUNDING = 3.5e-8  # standard deviation of one rounding to single precision, relative
+SINGLE_STEP = 6e-8  # relative spacing of single precision
+FINE_SPACING = 1e-11  # in t: far below the steps that single precision can tell apart
+FINE_GAIN = 30.0
+FEWEST_LEVELS = 8  # fewer levels of round values are a staircase
+COUNTED = 1e4  # whole numbers up to here are counts rather than rounded measurements
+UNIFORM = 0.3  # standard deviation of a uniform error, in units of its width
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Precision:
+    """What is known of the exactness of an output.
+
+    Attributes
+    ----------
+    sigma : float
+        Standard deviation of the error of one evaluation.
+    found : tuple of Irregularity
+    stepped : bool
+        The output is a staircase: between its risers there is nothing to look for.
+    """
+
+    sigma: float
+    found: tuple[Irregularity, ...]
+    stepped: bool = False
+
+
+def measured(
+    samples: Samples, focus: Focus, grid: Array, readings: list[StencilReading], repeatable: bool
+) -> Quest[tuple[Samples, Precision]]:
+    """Look at the digits and at the stencils, with a few more samples where these leave doubt."""
+    _, f = samples.at(grid, focus.output)
+    f = f[np.isfinite(f)]
+    magnitude = float(np.abs(f).max())
+    sigma = focus.sigma
+    if np.ptp(f) == 0.0:
+        return samples, Precision(sigma=sigma, found=())
+    single = fingerprints.single_precision(f)
+    quantum = fingerprints.decimal_quantum(f) if levels(f) >= FEWEST_LEVELS else 0.0
+    if single and quantum < SINGLE_STEP * magnitude:
+        quantum = 0.0  # every binary fraction is a decimal one; single precision is the coarser lattice
+    counted = quantum == 1.0 and np.ptp(f) < COUNTED and bool((f == np.rint(f)).all())
+    if all(reading.flat[focus.output] for reading in readings) and not single:
+        samples, precision = yield from _plateaus(samples, focus, f, 0.0 if counted else quantum)
+        if precision is not None:
+            return samples, precision
+    if quantum and not counted:
+        return samples, _coarse(focus, sigma, quantum)
+    if single:
+        return samples, _low(focus, max(sigma, SINGLE_ROUNDING * magnitude), magnitude)
+    argument = max(float(reading.argument[focus.output]) for reading in readings)
+    if sigma <= max(NOISY * EPSILON * magnitude, NOISY_ARGUMENT * argument):
+        return samples, Precision(sigma=sigma, found=())
+    if repeatable and SINGLE_NOISE[0] <= sigma / magnitude <= SINGLE_NOISE[1]:
+        samples, fine = yield from _fine_noise(samples, focus)
+        if fine * FINE_GAIN < sigma:
+            return samples, _low(focus, sigma, magnitude)
+    noise = _whole_line(focus, FindingCode.NOISE, sigma, {"relative_to_values": sigma / magnitude})
+    return samples, Precision(sigma=sigma, found=(noise,))
+
+
+def _plateaus(samples: Samples, focus: Focus, f: Array, quantum: float) -> Quest[tuple[Samples, Precision | None]]:
+    """What steps a model with flat stencils has; None if it has none that are flat on both sides."""
+    samples, found = yield from risers(samples, focus)
+    if not found:
+        return samples, None
+    if single_step(f):
+        return samples, Precision(sigma=focus.sigma, found=tuple(found[:1]), stepped=True)
+    highest = max(abs(riser.size) for riser in found)
+    if quantum and highest <= 1.5 * quantum:
+        return samples, _coarse(focus, focus.sigma, quantum)
+    if all(_at_a_single(riser, focus) for riser in found):
+        return samples, _low(focus, UNIFORM * highest, float(np.abs(f).max()))
+    steps = tuple(as_staircase(riser, samples) for riser in found)
+    return samples, Precision(sigma=focus.sigma, found=steps, stepped=True)
+
+
+def _at_a_single(riser: Irregularity, focus: Focus) -> bool:
+    return fingerprints.crosses_a_single(focus.line.point(riser.lower), focus.line.point(riser.upper))
+
+
+def _fine_noise(samples: Samples, focus: Focus) -> Quest[tuple[Samples, float]]:
+    spacing = max(FINE_SPACING, focus.closest(1.0) / 4.0)
+    t = stencil(float(focus.rng.uniform(0.1, 0.9)), spacing, focus.rng)
+    samples = yield t
+    at, values = samples.at(t, focus.output)
+    if not np.isfinite(values).all() or np.unique(at).size < at.size:
+        return samples, np.inf
+    return samples, float(read_stencil(at, values[:, None], 0.0).sigma[0])
+
+
+def _coarse(focus: Focus, sigma: float, quantum: float) -> Precision:
+    found = _whole_line(focus, FindingCode.COARSE_OUTPUT, quantum, {"quantum": quantum})
+    return Precision(sigma=max(sigma, UNIFORM * quantum), found=(found,))
+
+
+def _low(focus: Focus, sigma: float, magnitude: float) -> Precision:
+    evidence = {"relative_to_values": sigma / magnitude}
+    return Precision(sigma=sigma, found=(_whole_line(focus, FindingCode.LOW_PRECISION, sigma, evidence),))
+
+
+def _whole_line(focus: Focus, kind: FindingCode, size: float, evidence: dict[str, float]) -> Irregularity:
+    return Irregularity(
+        kind=kind,
+        output=focus.output,
+        lower=0.0,
+        upper=1.0,
+        size=size,
+        relative=size / focus.scale,
+        evidence=evidence,
+    )

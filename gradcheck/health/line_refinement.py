@@ -1,0 +1,154 @@
+"""Refining one output on one finite stretch of a line, until every cell is clean or its break is named."""
+
+import numpy as np
+
+from gradcheck.health.line_confirmation import confirmed
+from gradcheck.health.line_descent import descended
+from gradcheck.health.line_focus import NARROWEST, Focus, Ledger, Survey, surveyed
+from gradcheck.health.line_samples import Quest, Samples
+from gradcheck.health.line_zoom import suspicion, zoomed
+from gradcheck.records.arrays import Array, BoolArray
+
+DEEP = 1.0 / 64.0  # of a cell of the grid: what is not clean then is steep, or no polynomial
+MOST_DISAPPOINTMENTS = 3  # zooms in a row that found nothing
+FEWEST_CELLS = 8
+MOST_HALVED = 8  # cells a round
+MOST_CELLS = 64  # a grid that is doubled once has this many
+SPOTS = 3  # places of an unresolvable line that are looked at closely
+DEEPEST = 6  # spots within spots
+
+
+def refined(
+    samples: Samples, focus: Focus, ledger: Ledger, lower: float, upper: float, depth: int = 0
+) -> Quest[Samples]:
+    """Look at [lower, upper] until its cells are clean, enough is found, or only a closer look at spots makes sense.
+
+    After some suspicions that came to nothing, something else is tried first: near a cusp every cell is suspicious.
+    """
+    disappointments = 0
+    while not ledger.full:
+        survey = surveyed(samples, focus, ledger, lower, upper, to_the_noise=depth < 0)
+        bad = _worth_refining(survey, focus, ledger)
+        if not bad.any():
+            return samples
+        suspect = _strongest(survey, bad, ledger) if disappointments < MOST_DISAPPOINTMENTS else None
+        deep = _deepest(survey, bad, focus, ledger) if depth >= 0 else None
+        if suspect is not None:
+            samples, dismissed = yield from _examined(samples, focus, ledger, suspect)
+            disappointments += dismissed
+            continue
+        disappointments = 0
+        if deep is not None:
+            samples = yield from _followed_down(samples, focus, ledger, deep)
+        elif bad.size < FEWEST_CELLS:
+            samples = yield _filled(survey, focus)
+        elif bad.mean() <= 0.5:
+            samples = yield _halves(survey, bad, focus)
+        elif depth == 0 and bad.size < MOST_CELLS:
+            samples = yield _halves(survey, np.ones_like(bad), focus, most=MOST_CELLS)
+        else:
+            return (yield from _spots(samples, focus, ledger, survey, bad, depth))
+    return samples
+
+
+def looked_at_to_the_noise(
+    samples: Samples, focus: Focus, ledger: Ledger, lower: float, upper: float
+) -> Quest[Samples]:
+    """One spot down to the noise, if most cells are clean but not as clean as the noise: a fine saw would be so."""
+    survey = surveyed(samples, focus, ledger, lower, upper, to_the_noise=True)
+    rough = survey.hidden > survey.tolerance
+    if ledger.findings or rough.size < FEWEST_CELLS or rough.mean() < 0.5:
+        return samples
+    cell = int(focus.rng.choice(np.flatnonzero(rough)))
+    left = survey.cell[cell]
+    ends = float(survey.view.t[left]), float(survey.view.t[left + 1])
+    return (yield from refined(samples, focus, ledger, *ends, depth=-1))
+
+
+def _worth_refining(survey: Survey, focus: Focus, ledger: Ledger) -> BoolArray:
+    if survey.cell.size == 0:
+        return np.zeros(0, dtype=bool)
+    left = survey.view.t[survey.cell]
+    narrowest = np.maximum(NARROWEST, 32.0 * focus.line.grain(left))
+    rough = (survey.hidden > survey.tolerance) & (survey.width > narrowest)
+    return np.asarray(rough & ~ledger.in_a_shadow(left))
+
+
+def _strongest(survey: Survey, bad: BoolArray, ledger: Ledger) -> tuple[float, float] | None:
+    """Ends of the bad cell whose sides part most clearly, among those not yet dismissed."""
+    index = np.flatnonzero(bad)
+    strength = suspicion(survey.view, survey.cell[index])
+    for place in np.argsort(-strength):
+        if strength[place] == 0.0:
+            return None
+        left = survey.cell[index[place]]
+        ends = float(survey.view.t[left]), float(survey.view.t[left + 1])
+        if ledger.worth_a_zoom(*ends):
+            return ends
+    return None
+
+
+def _deepest(survey: Survey, bad: BoolArray, focus: Focus, ledger: Ledger) -> tuple[float, float] | None:
+    """Ends of the cell in which most may hide, if it is small already and no descent began near it."""
+    place = survey.roughest(bad)
+    left = survey.cell[place]
+    ends = float(survey.view.t[left]), float(survey.view.t[left + 1])
+    if survey.width[place] > DEEP * focus.cell or not ledger.worth_a_descent(*ends):
+        return None
+    return ends
+
+
+def _followed_down(samples: Samples, focus: Focus, ledger: Ledger, cell: tuple[float, float]) -> Quest[Samples]:
+    """Ask whether a small cell that will not come clean hides a break with a fractional power."""
+    ledger.descents.append(cell)
+    samples, found = yield from descended(samples, focus, ledger.piece_around(cell), *cell)
+    if found is not None:
+        ledger.findings.append(found)
+    return samples
+
+
+def _examined(samples: Samples, focus: Focus, ledger: Ledger, cell: tuple[float, float]) -> Quest[tuple[Samples, bool]]:
+    """Zoom in on a suspicious cell, and confirm what is there or dismiss it; True if it was dismissed."""
+    piece = ledger.piece_around(cell)
+    ledger.dismissed.append(cell)
+    samples, suspect = yield from zoomed(samples, focus, piece, *cell)
+    if suspect is None:
+        return samples, True
+    samples, found = yield from confirmed(samples, focus, piece, suspect)
+    if found is not None:
+        ledger.findings.append(found)
+    return samples, found is None
+
+
+def _halves(survey: Survey, chosen: BoolArray, focus: Focus, most: int = MOST_HALVED) -> Array:
+    """A sample near the middle of each chosen cell, worst cells first."""
+    index = np.flatnonzero(chosen)
+    index = index[np.argsort(-survey.excess[index], kind="stable")][:most]
+    left = survey.view.t[survey.cell[index]]
+    return np.asarray(left + survey.width[index] * focus.rng.uniform(0.46, 0.54, index.size))
+
+
+def _filled(survey: Survey, focus: Focus) -> Array:
+    """Samples that divide a region of few cells into at least eight."""
+    parts = int(np.ceil(FEWEST_CELLS / survey.cell.size))
+    left = survey.view.t[survey.cell][:, None]
+    steps = np.arange(1, parts) + focus.rng.uniform(-0.2, 0.2, (survey.cell.size, parts - 1))
+    return np.asarray(left + survey.width[:, None] * steps / parts).ravel()
+
+
+def _spots(
+    samples: Samples, focus: Focus, ledger: Ledger, survey: Survey, bad: BoolArray, depth: int
+) -> Quest[Samples]:
+    """Look closely at the worst cell, and at the first level at others too."""
+    if abs(depth) >= DEEPEST:
+        return samples
+    index = np.flatnonzero(bad)
+    count = SPOTS if depth == 0 else 1
+    worst = survey.roughest(bad)
+    others = focus.rng.permutation(index[index != worst])[: count - 1]
+    deeper = depth + 1 if depth >= 0 else depth - 1
+    for cell in (worst, *others):
+        left = survey.cell[cell]
+        ends = float(survey.view.t[left]), float(survey.view.t[left + 1])
+        samples = yield from refined(samples, focus, ledger, *ends, depth=deeper)
+    return samples

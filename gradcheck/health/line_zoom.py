@@ -1,0 +1,222 @@
+"""Zooming in on a suspicious cell: where do the predictions from its left and from its right part?
+
+With L and R the predictions from either side and D = R − L: a kink makes D cross zero, a break of curvature makes it
+touch zero, a jump keeps it away from zero. New samples must be foretold by their own side and not by the other, or the
+suspicion is dropped: a steep but smooth transition is foretold by neither.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from gradcheck.health.line_focus import Focus
+from gradcheck.health.line_predictions import SideView
+from gradcheck.health.line_samples import Quest, Samples
+from gradcheck.records.arrays import Array, IntArray
+
+ABSCISSAE = 33
+SUSPECT_WEAKER, SUSPECT_STRONGER = 3.0, 10.0  # |D| over its doubt at the two ends of a cell
+JUMP_WIDTH = 1e-11  # in t; a transition narrower than this is a jump
+MOST_ROUNDS = 80
+MOST_BEND_ROUNDS = 8
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Suspect:
+    """Where and how two sides part.
+
+    Attributes
+    ----------
+    jump : bool
+        The predictions never meet inside the bracket; otherwise they do at `centre` ± `half`.
+    lower, upper : float
+        The last bracket; both ends are samples.
+    first_gap, first_distance : float
+        Largest |D| at an end of the first bracket, and that end's distance from the centre.
+    least_gap : float
+        Smallest |D| in the first bracket.
+    gap_left, gap_right : float
+        D at the ends of the last bracket.
+    """
+
+    jump: bool
+    lower: float
+    upper: float
+    centre: float
+    half: float
+    first_gap: float
+    first_distance: float
+    least_gap: float
+    gap_left: float
+    gap_right: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Parting:
+    """L, R, D = R − L and its doubt at abscissae x, all of shape (q,)."""
+
+    x: Array
+    left: Array
+    right: Array
+    left_doubt: Array
+    right_doubt: Array
+
+    @property
+    def gap(self) -> Array:
+        return self.right - self.left
+
+    @property
+    def doubt(self) -> Array:
+        return self.left_doubt + self.right_doubt
+
+    def meeting(self) -> Array:
+        """(q,) of bool: where the two sides may agree."""
+        gap = self.gap
+        near = np.abs(gap) <= 3.0 * self.doubt
+        crossing = np.signbit(gap[1:]) != np.signbit(gap[:-1])
+        near[1:] |= crossing
+        near[:-1] |= crossing
+        return np.asarray(near)
+
+
+def suspicion(view: SideView, cell: IntArray) -> Array:
+    """(c,): how strongly the two sides part at the ends of each cell; 0 where it is no ground for a suspicion."""
+    ends = np.stack([view.t[cell], view.t[cell + 1]], axis=1)
+    left, right = view.from_left(cell, ends), view.from_right(cell, ends)
+    with np.errstate(invalid="ignore"):
+        ratio = np.abs(right.value - left.value) / (left.doubt + right.doubt)
+    ratio = np.nan_to_num(ratio)
+    strong = (ratio.min(axis=1) >= SUSPECT_WEAKER) & (ratio.max(axis=1) >= SUSPECT_STRONGER)
+    return np.where(strong, ratio.max(axis=1), 0.0)
+
+
+def parting(view: SideView, lower: float, x: Array) -> Parting:
+    """L and R at x inside the cell that begins at the sample `lower`."""
+    cell = np.searchsorted(view.t, [lower])
+    left, right = view.from_left(cell, x[None, :]), view.from_right(cell, x[None, :])
+    return Parting(
+        x=x,
+        left=left.value[0],
+        right=right.value[0],
+        left_doubt=left.doubt[0],
+        right_doubt=right.doubt[0],
+    )
+
+
+def zoomed(
+    samples: Samples, focus: Focus, piece: tuple[float, float], lower: float, upper: float
+) -> Quest[tuple[Samples, Suspect | None]]:
+    """Narrow the cell [lower, upper] of an unbroken piece down to a jump or a meeting of both sides."""
+    first: Parting | None = None
+    bends, jump_width = 0, max(JUMP_WIDTH, focus.closest(upper))
+    for _ in range(MOST_ROUNDS):
+        view = focus.view(samples, *piece)
+        whole = parting(view, lower, np.linspace(lower, upper, ABSCISSAE))
+        gap = whole.gap
+        if not np.isfinite(gap).all():
+            return samples, None
+        if first is None:
+            first = whole
+        zone = _meeting_zone(view, lower, whole)
+        if zone is None:
+            if upper - lower <= jump_width:
+                return samples, _suspect(True, lower, upper, lower, upper, gap, first)
+            narrower = yield from _halved(samples, focus, view, lower, upper)
+        else:
+            narrower = yield from _trimmed(samples, focus, view, lower, upper, zone)
+            bends += 1
+        samples, ends = narrower
+        if ends is None:
+            return samples, None
+        stalled = ends[1] - ends[0] > 0.6 * (upper - lower)
+        if zone is not None and (stalled or bends >= MOST_BEND_ROUNDS):
+            return samples, _suspect(False, lower, upper, *zone, gap, first)
+        lower, upper = ends
+    return samples, None
+
+
+def _suspect(
+    jump: bool,
+    lower: float,
+    upper: float,
+    zone_lower: float,
+    zone_upper: float,
+    gap: Array,
+    first: Parting,
+) -> Suspect:
+    centre = 0.5 * (zone_lower + zone_upper)
+    return Suspect(
+        jump=jump,
+        lower=lower,
+        upper=upper,
+        centre=centre,
+        half=0.5 * (zone_upper - zone_lower),
+        first_gap=float(np.abs(first.gap).max()),
+        first_distance=max(centre - float(first.x[0]), float(first.x[-1]) - centre),
+        least_gap=float(np.abs(first.gap).min()),
+        gap_left=float(gap[0]),
+        gap_right=float(gap[-1]),
+    )
+
+
+def _meeting_zone(view: SideView, lower: float, seen: Parting) -> tuple[float, float] | None:
+    """The part of a cell in which the two sides may meet, resolved as finely as their doubts allow."""
+    start = lower
+    for _ in range(12):
+        near = np.flatnonzero(seen.meeting())
+        if near.size == 0:
+            return None
+        a = float(seen.x[max(near[0] - 1, 0)])
+        b = float(seen.x[min(near[-1] + 1, ABSCISSAE - 1)])
+        if b - a > 0.4 * (seen.x[-1] - seen.x[0]) or b - a < 1e-15:
+            return float(seen.x[near[0]]), float(seen.x[near[-1]])
+        seen = parting(view, start, np.linspace(a, b, ABSCISSAE))
+    return float(seen.x[near[0]]), float(seen.x[near[-1]])
+
+
+def _halved(
+    samples: Samples, focus: Focus, view: SideView, lower: float, upper: float
+) -> Quest[tuple[Samples, tuple[float, float] | None]]:
+    """One sample in the middle goes to the side that foretold it."""
+    middle = lower + (0.5 + focus.rng.uniform(-0.04, 0.04)) * (upper - lower)
+    samples = yield np.array([middle])
+    t, value = samples.at(np.array([middle]), focus.output)
+    if not lower < t[0] < upper or not np.isfinite(value[0]):
+        return samples, None
+    on_left, on_right = _foretold(parting(view, lower, t), value, focus)
+    if on_left[0] == on_right[0]:
+        return samples, None
+    return samples, (float(t[0]), upper) if on_left[0] else (lower, float(t[0]))
+
+
+def _trimmed(
+    samples: Samples, focus: Focus, view: SideView, lower: float, upper: float, zone: tuple[float, float]
+) -> Quest[tuple[Samples, tuple[float, float] | None]]:
+    """A sample on either side of the meeting zone cuts off what lies beyond."""
+    centre, half = 0.5 * (zone[0] + zone[1]), 0.5 * (zone[1] - zone[0])
+    step = max(min(2.5 * half, 0.42 * (upper - lower)), focus.closest(centre))
+    asked = np.array([centre - step, centre + step])
+    inside = (asked > lower + 0.02 * step) & (asked < upper - 0.02 * step)
+    if not inside.any():
+        return samples, (lower, upper)
+    samples = yield asked[inside]
+    t, value = samples.at(asked[inside], focus.output)
+    if not np.isfinite(value).all():
+        return samples, None
+    on_left, on_right = _foretold(parting(view, lower, t), value, focus)
+    for place, fits_left, fits_right in zip(t, on_left, on_right, strict=True):
+        if not fits_left and not fits_right:
+            return samples, None
+        if fits_left and not fits_right:
+            lower = max(lower, float(place))
+        elif fits_right and not fits_left:
+            upper = min(upper, float(place))
+    return samples, (lower, upper) if lower < upper else None
+
+
+def _foretold(seen: Parting, value: Array, focus: Focus) -> tuple[Array, Array]:
+    """(q,) of bool twice: whether the left, the right side foretold the values."""
+    blur = 4.0 * focus.sigma + 2e-16 * np.abs(value)
+    left = np.abs(value - seen.left) <= 3.0 * seen.left_doubt + blur
+    right = np.abs(value - seen.right) <= 3.0 * seen.right_doubt + blur
+    return left, right

@@ -1,0 +1,247 @@
+"""What `check` found, as plain text for someone in a hurry: verdict, likely mistake, worst entries, cost."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from gradcheck import wording
+from gradcheck.records.report import CheckReport, Diagnosis, Entries
+from gradcheck.records.verdict import Verdict
+from gradcheck.report.finding_text import finding_lines
+from gradcheck.report.paragraphs import WIDTH, fits, paragraph, table
+
+#: Rows of the table of worst entries.
+WORST = 10
+
+#: Likely mistakes and different reasons that are told; more of them help nobody in a hurry.
+_MISTAKES, _REASONS = 4, 6
+
+#: Digits of a claim that is confirmed; there is nothing to tell apart.
+_DIGITS_OF_CONFIRMED = 6
+
+_RANK = {Verdict.REFUTED: 0, Verdict.UNDECIDED: 1, Verdict.CONFIRMED: 2}
+
+
+def check_text(report: CheckReport) -> str:
+    """The report as text of at most 80 columns; the first line alone says what is wrong and where.
+
+    Parameters
+    ----------
+    report : CheckReport
+        Its own ``text`` is not looked at.
+
+    Returns
+    -------
+    str
+        Without a newline at the end. NaN and infinities appear as ``nan`` and ``inf``.
+
+    Examples
+    --------
+    >>> import gradcheck
+    >>> report = gradcheck.check(lambda x: x[0] ** 2, at=[3.0], gradient=lambda x: [x[0]], on_refuted="return")
+    >>> print(check_text(report).partition(" ±")[0])
+    gradient of model refuted: x[0] is claimed 3, but it is 6
+    """
+    return "\n".join([headline(report), *check_details(report)])
+
+
+def headline(report: CheckReport, width: int = WIDTH) -> str:
+    """One line: which claim, of which model, the verdict, and the worst entry in words."""
+    # What gives way first: names beyond 24 characters, then the bound, then the sentence, then more of the names.
+    for name_width, style in (
+        (40, "bound"),
+        (24, "bound"),
+        (24, "sentence"),
+        (24, "brief"),
+        (16, "brief"),
+        (8, "brief"),
+    ):
+        function = wording.shortened(report.function, name_width)
+        text = f"{report.kind} of {function} {report.verdict}: {_story(report, name_width, style)}"
+        if len(text) <= width:
+            return text
+    # Figures too long for one line: the table below has them.
+    counts = f"of {wording.count(len(report.entries), 'entry', 'entries')}, {_tally(report.entries.verdict)}"
+    return wording.shortened(f"{report.kind} of {function} {report.verdict}: {counts}", width)
+
+
+def check_details(report: CheckReport, *, indent: int = 0, rows: int = WORST, findings: bool = True) -> list[str]:
+    """Everything below the headline, as lines; without the findings where they are told elsewhere."""
+    inner = indent + 2
+    confirmed = report.verdict == Verdict.CONFIRMED
+    lines: list[str] = []
+    # Several points often give the same explanation.
+    mistakes = list({(diagnosis.code, diagnosis.text): diagnosis for diagnosis in report.diagnoses}.values())
+    for diagnosis in mistakes[:_MISTAKES]:
+        lines += ["", *_diagnosis_lines(diagnosis, indent)]
+    if len(mistakes) > _MISTAKES:
+        more = wording.count(len(mistakes) - _MISTAKES, "other likely mistake")
+        lines += paragraph(f"and {more}, in the report's diagnoses", indent)
+    if len(report.entries) and not confirmed:
+        lines += ["", *_worst_lines(report.entries, indent, rows)]
+    lines += _direction_lines(report, indent)
+    lines += _reason_lines(report.entries, indent)
+    for finding in report.findings if findings else ():
+        lines += ["", *finding_lines(finding, indent=indent)]
+    if report.notices:
+        lines += ["", *(line for notice in report.notices for line in paragraph(notice, indent, first="Note: "))]
+    if not confirmed:
+        lines.append("")
+    return [*lines, *paragraph(_closing(report), inner if confirmed else indent)]
+
+
+def worst_order(entries: Entries) -> np.ndarray:
+    """Positions of the entries, worst first: by verdict, then by digits agreed, then by the size of the difference."""
+    rank = np.array([_RANK[verdict] for verdict in entries.verdict], dtype=int)
+    # An unknown number of digits (a claim of NaN) is as bad as none; an unknown difference as bad as the largest.
+    digits = np.where(np.isnan(entries.digits), -np.inf, entries.digits)
+    with np.errstate(invalid="ignore"):
+        difference = np.abs(entries.claim - entries.witness)
+    difference = np.where(np.isnan(difference), np.inf, difference)
+    return np.lexsort((-difference, digits, rank))
+
+
+@dataclass(frozen=True, slots=True)
+class _Entry:
+    """One row of the entries."""
+
+    name: str
+    claim: float
+    witness: float
+    bound: float
+    digits: float
+    verdict: Verdict
+
+
+def _entry(entries: Entries, position: int) -> _Entry:
+    return _Entry(
+        name=entries.name[position],
+        claim=float(entries.claim[position]),
+        witness=float(entries.witness[position]),
+        bound=float(entries.bound[position]),
+        digits=float(entries.digits[position]),
+        verdict=entries.verdict[position],
+    )
+
+
+def _story(report: CheckReport, name_width: int, style: str) -> str:
+    entries = report.entries
+    if not len(entries):
+        return _direction_story(report)
+    worst = _entry(entries, int(worst_order(entries)[0]))
+    if report.verdict == Verdict.CONFIRMED:
+        return _agreement(entries, worst)
+    if worst.verdict != report.verdict:  # the directions decided, and no single entry carries the verdict
+        return _direction_story(report)
+    name = wording.shortened(worst.name, name_width)
+    claim, witness = _figures(worst, wording.MOST_DIGITS)
+    alone = witness.partition(" ± ")[0]
+    if style == "brief":
+        return f"{name} claims {claim}, not {alone}"
+    told = witness if style == "bound" else alone
+    if report.verdict == Verdict.REFUTED:
+        return f"{name} is claimed {claim}, but it is {told}"
+    return f"{name} is claimed {claim}, seen as {told}"
+
+
+def _agreement(entries: Entries, worst: _Entry) -> str:
+    digits = wording.agreed_digits(worst.digits)
+    many = len(entries)
+    subject = f"all {wording.count(many, 'entry', 'entries')}" if many > 1 else "the entry"
+    agree = "agree" if many > 1 else "agrees"
+    if digits == "all":
+        return f"{subject} {agree} to all digits"
+    if digits in {"-", "0"}:  # a true zero: agreement is absolute, digits say nothing
+        return f"{subject} {agree} within the bounds"
+    return f"{subject} {agree} to {digits} digits" + (" or more" if many > 1 else "")
+
+
+def _direction_story(report: CheckReport) -> str:
+    if report.directions is None or not report.directions.verdict:
+        return "no entry was looked at"
+    verdicts = report.directions.verdict
+    return f"of {wording.count(len(verdicts), 'direction')}, {_tally(verdicts)}"
+
+
+def _tally(verdicts: Sequence[Verdict]) -> str:
+    return wording.tally(str(verdict) for verdict in sorted(verdicts, key=lambda verdict: _RANK[verdict]))
+
+
+def _figures(entry: _Entry, most: int) -> tuple[str, str]:
+    """Claim, and witness ± bound, with enough digits to look different where they are, but at most `most`."""
+    agree = entry.verdict == Verdict.CONFIRMED
+    digits = min(_DIGITS_OF_CONFIRMED if agree else wording.digits_to_tell_apart(entry.digits), most)
+    return wording.number(entry.claim, digits), wording.with_bound(entry.witness, entry.bound, max(digits, 4))
+
+
+def _diagnosis_lines(diagnosis: Diagnosis, indent: int) -> list[str]:
+    lines = paragraph(f"{wording.DIAGNOSIS_WORDS[diagnosis.code]} ({diagnosis.code})", indent, first="Likely mistake: ")
+    lines += paragraph(diagnosis.text, indent + 2)
+    if any(name not in diagnosis.text for name in diagnosis.entries):
+        lines += paragraph(wording.listed(diagnosis.entries), indent + 2, first="where: ")
+    return lines
+
+
+def _worst_lines(entries: Entries, indent: int, rows: int) -> list[str]:
+    order = worst_order(entries)
+    shown = [_entry(entries, int(position)) for position in order[:rows]]
+    if len(order) == 1:
+        head = "The only entry:"
+    elif len(order) <= rows:
+        head = "All entries, worst first:"
+    else:
+        head = f"The {len(shown)} worst of {len(order):,} entries, worst first:"
+    lines = [" " * indent + head, *_entry_table(shown, indent + 2)]
+    others = [entries.verdict[int(position)] for position in order[rows:]]
+    if others:
+        lines += paragraph(f"The other {len(others):,}: {_tally(others)}.", indent + 2)
+    return lines
+
+
+def _entry_table(shown: Sequence[_Entry], indent: int) -> list[str]:
+    # Figures are never cut, so they give way digit by digit until the table fits.
+    for most in range(wording.MOST_DIGITS, 3, -1):
+        rows = [
+            (entry.name, *_figures(entry, most), wording.agreed_digits(entry.digits), str(entry.verdict))
+            for entry in shown
+        ]
+        lines = table(("entry", "claim", "witness ± bound", "digits", "verdict"), rows, right="---r", indent=indent)
+        if fits(lines):
+            break
+    return lines
+
+
+def _direction_lines(report: CheckReport, indent: int) -> list[str]:
+    directions = report.directions
+    if directions is None or not directions.verdict:
+        return []
+    told = f"{wording.count(len(directions.verdict), 'random direction')}: {_tally(directions.verdict)}."
+    if np.isfinite(directions.smallest_visible):
+        told += (
+            f" The smallest single error that they would have seen: {wording.number(directions.smallest_visible, 2)}."
+        )
+    return ["", *paragraph(told, indent)]
+
+
+def _reason_lines(entries: Entries, indent: int) -> list[str]:
+    """Reasons, each once with the entries it holds for; undecided entries first."""
+    groups: dict[tuple[Verdict, str], list[str]] = {}
+    for name, verdict, reason in zip(entries.name, entries.verdict, entries.reason, strict=True):
+        if reason:
+            groups.setdefault((verdict, reason), []).append(name)
+    lines: list[str] = []
+    ordered = sorted(groups.items(), key=lambda group: (group[0][0] != Verdict.UNDECIDED, -len(group[1])))
+    for (verdict, reason), names in ordered[:_REASONS]:
+        lines += ["", *paragraph(f"{wording.capitalised(str(verdict))}: {wording.listed(names)}", indent)]
+        lines += paragraph(reason, indent + 2, first="because: ")
+    if len(ordered) > _REASONS:
+        lines += paragraph(f"and {len(ordered) - _REASONS:,} other reasons, in the report's entries", indent)
+    return lines
+
+
+def _closing(report: CheckReport) -> str:
+    witnesses = [source for source in dict.fromkeys(report.entries.source) if source]
+    against = f" against {wording.listed(witnesses)}" if witnesses else ""
+    spent = f": {wording.cost(report.evaluations, report.seconds)}" if report.evaluations else ""
+    return f"Checked at {wording.point(report.point.tolist())}{against}{spent}."

@@ -1,0 +1,115 @@
+"""The step-size curve as plain text, with a small plot of log10(error) over log10(step)."""
+
+import math
+
+import numpy as np
+
+from gradcheck import wording
+from gradcheck.records.arrays import Array
+from gradcheck.records.estimate import Scan
+from gradcheck.report.paragraphs import paragraph
+
+#: Size of the plot's field in characters.
+_COLUMNS, _LINES = 61, 15
+
+_POINT, _BEST = "*", "O"
+
+
+def scan_text(scan: Scan) -> str:
+    """The scan as text of at most 80 columns.
+
+    Parameters
+    ----------
+    scan : Scan
+        Its own ``text`` is not looked at. Steps whose error is not finite are counted below the plot, not drawn;
+        an error of zero stands at the bottom.
+
+    Examples
+    --------
+    >>> import gradcheck
+    >>> print(scan_text(gradcheck.scan(lambda x: x[0] ** 3, at=[3.0])).partition(" ±")[0])
+    model along x[0]: 27
+    """
+    name = f"{wording.shortened(scan.function or 'derivative', 30)} along {wording.shortened(scan.along, 20)}"
+    lines = paragraph(f"{name}: {wording.with_bound(scan.value, scan.bound)}")
+    lines += paragraph(_best(scan), 2)
+    lines += ["", *plot(scan.steps, scan.errors, scan.best_step), ""]
+    lines += [line for notice in scan.notices for line in paragraph(notice, first="Note: ")]
+    return "\n".join([*lines, *paragraph(_closing(scan))])
+
+
+def _best(scan: Scan) -> str:
+    if not (math.isfinite(scan.best_step) and scan.steps.size):
+        return "No step gives a finite difference quotient."
+    nearest = int(np.argmin(np.abs(scan.steps - scan.best_step)))
+    return (
+        f"Best step for a central difference: {wording.number(scan.best_step, 2)}, "
+        f"which leaves an error of about {wording.number(float(scan.errors[nearest]), 2)}."
+    )
+
+
+def _closing(scan: Scan) -> str:
+    order = f"Observed truncation order: {wording.number(scan.order, 2)}. " if math.isfinite(scan.order) else ""
+    noise = f"Noise of the value: {wording.number(scan.noise, 2)}. " if math.isfinite(scan.noise) else ""
+    return f"{order}{noise}{wording.count(scan.evaluations, 'evaluation').capitalize()}."
+
+
+def plot(steps: Array, errors: Array, best_step: float) -> list[str]:
+    """Lines of a character plot of log10(error) over log10(step); the best step is marked ``O``.
+
+    Parameters
+    ----------
+    steps, errors : ndarray, shape (k,)
+        Only finite errors at finite, positive steps are drawn.
+    best_step : float
+
+    Returns
+    -------
+    list of str
+        A single sentence if there are fewer than two points to draw.
+    """
+    drawn = np.isfinite(errors) & np.isfinite(steps) & (steps > 0) & (errors >= 0)
+    missing = int(drawn.size - drawn.sum())
+    positive = errors[drawn & (errors > 0)]
+    if drawn.sum() < 2 or not positive.size:
+        return ["  (no curve to draw: fewer than two steps with a finite error above zero)"]
+    across = np.log10(steps[drawn])
+    # An error of zero has no logarithm; the bottom of the field is as low as it goes.
+    bottom = 10.0 ** math.floor(math.log10(positive.min()))
+    up = np.log10(np.where(errors[drawn] > 0, errors[drawn], bottom))
+    lines = _field(across, up, int(np.argmin(np.abs(steps[drawn] - best_step))))
+    if missing:
+        lines += paragraph(f"not drawn: {wording.count(missing, 'step')} without a finite error", 2)
+    return lines
+
+
+def _field(across: Array, up: Array, best: int) -> list[str]:
+    left, right = math.floor(across.min()), max(math.ceil(across.max()), math.floor(across.min()) + 1)
+    low, high = math.floor(up.min()), max(math.ceil(up.max()), math.floor(up.min()) + 1)
+    columns = np.rint((across - left) / (right - left) * (_COLUMNS - 1)).astype(int)
+    rows = np.rint((high - up) / (high - low) * (_LINES - 1)).astype(int)
+    field = [[" "] * _COLUMNS for _ in range(_LINES)]
+    for row, column in zip(rows, columns, strict=True):
+        field[row][column] = _POINT
+    field[rows[best]][columns[best]] = _BEST
+    labels = {round((high - power) / (high - low) * (_LINES - 1)): f"1e{power}" for power in _ticks(low, high, 5)}
+    lines = ["  error"]
+    lines += [f"{labels.get(i, ''):>7} |{''.join(cells)}".rstrip() for i, cells in enumerate(field)]
+    return [*lines, " " * 8 + "+" + "-" * _COLUMNS, *_scale(left, right)]
+
+
+def _scale(left: int, right: int) -> list[str]:
+    """Labels below the field, at their columns, and the name of the axis."""
+    line = [" "] * (_COLUMNS + 18)
+    for power in _ticks(left, right, 6):
+        label = f"1e{power}"
+        centre = 9 + round((power - left) / (right - left) * (_COLUMNS - 1))
+        start = centre - len(label) // 2
+        line[start : start + len(label)] = label
+    return ["".join(line).rstrip(), f"{'step   (O: best)':>{_COLUMNS + 9}}"]
+
+
+def _ticks(low: int, high: int, most: int) -> list[int]:
+    """At most about `most` whole powers of ten from `low` to `high`, evenly spaced."""
+    stride = max(1, math.ceil((high - low) / most))
+    return list(range(low, high + 1, stride))

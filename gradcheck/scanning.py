@@ -1,0 +1,137 @@
+"""The verb `scan`: how the derivative error depends on the step size."""
+
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+
+from gradcheck.errors import UsageError
+from gradcheck.evaluation.conduct import addressed, conduct_one
+from gradcheck.evaluation.pipeline import open_session
+from gradcheck.evaluation.protocol import Directions
+from gradcheck.health.step_curve import step_curve
+from gradcheck.problem.layout import Points
+from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
+from gradcheck.problem.subject import Subject, subject_of_problem, subjects_of_function
+from gradcheck.records.estimate import Scan
+from gradcheck.report.scan_text import scan_text
+from gradcheck.witnesses.steps import room_along
+
+#: Options of a described model that a scan understands.
+_OPTIONS = ("wrt", "output", "bounds", "names", "typical")
+
+
+def scan(
+    function: Any,
+    at: Any = None,
+    *,
+    along: Any = 0,
+    wrt: Any = None,
+    output: Any = None,
+    bounds: Any = None,
+    names: Any = None,
+    typical: Any = None,
+    budget: int | None = None,
+    time_limit: float | str | None = None,
+    seed: int = 0,
+) -> Scan:
+    """The step-size curve of a central difference: errors, best step, noise, observed order.
+
+    Parameters
+    ----------
+    function : callable, decorated model or Problem
+        A model that returns one number (pick one of several outputs with `output`); of a Problem, the objective.
+    at : float, list, array or nesting
+        The point; a decorated model and a Problem bring their own.
+    along : str, int or array
+        A variable by name or position, or a direction with one entry a variable.
+    wrt, output, bounds, names, typical
+        As in `gradcheck.check`.
+    budget : int, optional
+        Largest number of evaluations; about 110 are usual.
+    time_limit : float or str, optional
+    seed : int
+        Reserved; a scan is deterministic.
+
+    Returns
+    -------
+    Scan
+
+    Raises
+    ------
+    UsageError
+        If there is no such variable, or the model returns several numbers.
+    ModelFailure
+        If the model cannot be evaluated at the point.
+
+    Examples
+    --------
+    >>> import gradcheck, math
+    >>> curve = gradcheck.scan(math.exp, at=1.0)
+    >>> bool(1e-7 < curve.best_step < 1e-3), round(curve.order)
+    (True, 2)
+    """
+    given = {"wrt": wrt, "output": output, "bounds": bounds, "names": names, "typical": typical}
+    subject = _subject(function, at, given)
+    session = open_session(subject, budget=budget, time_limit=time_limit)
+    name = next(iter(subject.targets))
+    centre = session.start_values()[name]
+    if centre.size != 1:
+        raise UsageError(
+            f"{name} returns {centre.size} numbers; a scan looks at one: pick it with output=lambda r: r[0]"
+        )
+    directions, label = _direction(subject, along)
+    room = room_along(subject.start, directions, subject.domain)
+    if max(room.below[0], room.above[0]) <= 0:
+        raise UsageError(f"the bounds leave no room for a step along {label}")
+    curve = conduct_one(addressed(step_curve(subject.start, directions, room, centre), function=name), session.gate)
+    record = Scan(
+        steps=curve.steps,
+        values=curve.values,
+        errors=curve.errors,
+        best_step=float(curve.steps[curve.best]),
+        noise=float(curve.reference.noise[0]),
+        order=curve.order,
+        value=float(curve.reference.value[0, 0]),
+        bound=float(curve.reference.bound[0, 0]),
+        along=label,
+        function=name,
+        evaluations=session.ledger.evaluations,
+        notices=tuple(session.ledger.notices),
+    )
+    return replace(record, text=scan_text(record))
+
+
+def _subject(function: Any, at: Any, given: dict[str, Any]) -> Subject:
+    if isinstance(function, Problem):
+        if at is not None:
+            raise UsageError("a Problem brings its own start point; at=... cannot be given with it")
+        return subject_of_problem(function)
+    spec = getattr(function, SPEC_ATTRIBUTE, None)
+    if isinstance(spec, ModelSpec):
+        described = {name: value for name, value in spec.options.items() if name in _OPTIONS}
+        given = described | {name: value for name, value in given.items() if value is not None}
+        at = spec.at if at is None else at
+        at = at.each[0] if isinstance(at, Points) else at
+    if at is None:
+        raise UsageError("the point is missing: give at=..., or describe the model with @gradcheck.model(at=...)")
+    if isinstance(at, Points):
+        raise UsageError("scan takes one point; call it once for each of gradcheck.points(...)")
+    return subjects_of_function(function, at, claims={}, **given)[0]
+
+
+def _direction(subject: Subject, along: Any) -> tuple[Directions, str]:
+    n = subject.layout.size
+    if isinstance(along, str):
+        if along not in subject.names:
+            raise UsageError(f"along={along!r} is no variable; the variables are {', '.join(subject.names[:20])}")
+        position = subject.names.index(along)
+        return np.array([position]), along
+    if isinstance(along, int | np.integer) and not isinstance(along, bool):
+        if not 0 <= along < n:
+            raise UsageError(f"along={along} is no variable; positions run from 0 to {n - 1}")
+        return np.array([int(along)]), subject.layout.name(int(along))
+    row = np.ravel(np.asarray(along, dtype=float))
+    if row.size != n or not np.isfinite(row).all() or not row.any():
+        raise UsageError(f"along must be a variable or a finite direction of {n} entries that are not all zero")
+    return row[None, :], "direction"
