@@ -44,7 +44,7 @@ from gradcheck.records.finding import Finding, FindingCode, Severity
 from gradcheck.records.report import AuditReport, CheckReport, Scaling, Steps, WitnessRecord
 from gradcheck.records.verdict import Verdict
 from gradcheck.report.audit_text import audit_text
-from gradcheck.witnesses.automatic import automatic
+from gradcheck.witnesses.automatic import Source, automatic
 from gradcheck.witnesses.complex_step import complex_step
 from gradcheck.witnesses.finite_difference import finite_difference
 from gradcheck.witnesses.steps import room_along
@@ -53,7 +53,7 @@ from gradcheck.wording import count
 
 #: With more variables than this, witnesses and lines look at so many of them, evenly spread.
 VARIABLES_MOST = 60
-AD_SOURCES = ("jax", "autograd")
+AD_SOURCES: tuple[Source, ...] = ("jax", "autograd")
 _SEVERITY_ORDER = {Severity.BLOCKER: 0, Severity.HAZARD: 1, Severity.REMARK: 2}
 
 
@@ -448,7 +448,7 @@ def _ready(findings: Sequence[Finding], claims: Sequence[CheckReport]) -> bool:
 
 def _once(findings: Sequence[Finding]) -> list[Finding]:
     """Findings without those that say the same again (one run behind several functions, one kink seen by two parts)."""
-    seen = {}
+    seen: dict[tuple[str, str], Finding] = {}
     for finding in findings:
         seen.setdefault((finding.code, finding.text), finding)
     return list(seen.values())

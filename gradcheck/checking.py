@@ -19,12 +19,13 @@ from gradcheck.evaluation.pipeline import Session, open_session
 from gradcheck.evaluation.protocol import Request, Status
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
 from gradcheck.problem.subject import CLAIM_KINDS, Subject, subject_of_problem, subjects_of_function
-from gradcheck.records.arrays import Array
+from gradcheck.records.arrays import Array, IntArray
 from gradcheck.records.finding import Finding
 from gradcheck.records.report import CheckReport, Entries
 from gradcheck.records.verdict import Verdict
 from gradcheck.report.check_text import check_text
 from gradcheck.witnesses.steps import room_along
+from gradcheck.wording import listed
 
 AD_SOURCES = ("jax", "autograd")
 #: Relative tolerance by the precision of the model's values.
@@ -234,12 +235,14 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
     precision = session.ledger.output_kinds.get(function, "float64")
     unit = float(np.finfo(precision).eps / 2) if precision in REL_TOL else float(np.finfo(float).eps / 2)
     rel_tol = REL_TOL.get(precision, DEFAULT_REL_TOL) if rules.rel_tol is None else rules.rel_tol
+    columns = _judgeable(subject)
     inquiry = examine(
         subject.start,
-        claim,
-        room_along(subject.start, np.arange(subject.layout.size), subject.domain),
+        columns,
+        claim[:, columns],
+        room_along(subject.start, columns, subject.domain),
         centre,
-        subject.domain.scale,
+        subject.domain.scale[columns],
         rel_tol=rel_tol,
         abs_tol=rules.abs_tol,
         unit_roundoff=unit,
@@ -247,19 +250,18 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
     )
     examined = conduct_one(addressed(inquiry, function=function), session.gate)
     findings: list[Finding] = [failure] if failure else []
-    columns = np.arange(subject.layout.size)
     findings += kinks_at_point(subject, function, examined.left, examined.right, columns)
     findings += mutation(subject, session.ledger)
-    entries = _entries(subject, function, kind, examined)
+    entries = _entries(subject, function, kind, examined, columns)
     report = CheckReport(
         verdict=Verdict.overall(list(entries.verdict)),
         kind=kind,
         function=function,
         point=subject.start,
         entries=entries,
-        diagnoses=() if failure else _diagnoses(subject, function, kind, examined, rel_tol, rules.abs_tol),
+        diagnoses=() if failure else _diagnoses(subject, function, kind, examined, columns, rel_tol, rules.abs_tol),
         findings=tuple(findings),
-        notices=tuple(session.ledger.notices),
+        notices=(*session.ledger.notices, *_left_out(subject)),
         evaluations=session.ledger.evaluations - before,
         seconds=time.perf_counter() - began,
     )
@@ -324,9 +326,29 @@ def _automatic_claim(session: Session, function: str, kind: str, source: str, ce
     raise UsageError(f"{kind}={source!r}: {source} cannot differentiate {function}: {words}")
 
 
-def _entries(subject: Subject, function: str, kind: str, examined: Examined) -> Entries:
-    m, n = examined.claim.shape
-    rows, columns = np.divmod(np.arange(m * n), n)
+def _judgeable(subject: Subject) -> IntArray:
+    """The variables whose entries are judged: a whole-number variable has no derivative.
+
+    Raises
+    ------
+    UsageError
+        If there is none.
+    """
+    columns = np.flatnonzero(~subject.domain.integer)
+    if columns.size == 0:
+        raise UsageError("every variable takes whole numbers only, so there is no derivative to check")
+    return columns
+
+
+def _left_out(subject: Subject) -> tuple[str, ...]:
+    whole = [subject.layout.name(int(i)) for i in np.flatnonzero(subject.domain.integer)]
+    return (f"entries for {listed(whole)} were not judged: whole numbers have no derivative",) if whole else ()
+
+
+def _entries(subject: Subject, function: str, kind: str, examined: Examined, looked_at: IntArray) -> Entries:
+    m, d = examined.claim.shape
+    rows = np.repeat(np.arange(m), d)
+    columns = np.tile(looked_at, m)
     index = columns if kind == "gradient" else np.stack([rows, columns], axis=1)
 
     def flat(array: Any) -> Any:
@@ -352,13 +374,13 @@ def entry_name(subject: Subject, function: str, outputs: int, row: int, column: 
 
 
 def _diagnoses(
-    subject: Subject, function: str, kind: str, examined: Examined, rel_tol: float, abs_tol: float
+    subject: Subject, function: str, kind: str, examined: Examined, columns: IntArray, rel_tol: float, abs_tol: float
 ) -> tuple[Any, ...]:
     refuted = examined.verdict == Verdict.REFUTED
     if not refuted.any():
         return ()
     size = np.fmax(np.abs(examined.claim), np.abs(examined.value))
-    noise = np.nan_to_num(examined.noise)[:, None] / subject.domain.scale[None, :]
+    noise = np.nan_to_num(examined.noise)[:, None] / subject.domain.scale[None, columns]
     m = examined.claim.shape[0]
     return likely_mistakes(
         Case(
@@ -368,7 +390,7 @@ def _diagnoses(
             bound=examined.bound,
             tolerance=abs_tol + rel_tol * size + ALLOWANCE * noise,
             refuted=refuted,
-            name=lambda i, j: entry_name(subject, function, m, i, j),
+            name=lambda i, j: entry_name(subject, function, m, i, int(columns[j])),
         )
     )
 

@@ -203,10 +203,10 @@ def _check(given: Options, progress: Progress) -> Answer:
         keywords["at"] = points(*points_from_file(given["points"]))
     limits = {name: given[name] for name in ("budget", "time_limit", "seed")}
     if _is_described(model):
-        found = check_described(model, **keywords, **limits)
+        reports = check_described(model, **keywords, **limits)
     else:
-        found = check(model, on_refuted="return", on_undecided="pass", **keywords, **limits)
-    return _answer_of_checks(found if isinstance(found, list) else [found], given["allow_undecided"])
+        reports = [check(model, on_refuted="return", on_undecided="pass", **keywords, **limits)]
+    return _answer_of_checks(reports, given["allow_undecided"])
 
 
 def _answer_of_checks(reports: list[Any], allow_undecided: bool) -> Answer:

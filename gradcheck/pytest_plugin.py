@@ -10,7 +10,7 @@ PYTEST_DONT_REWRITE: there is no assertion in here, and a run inside a run would
 import sys
 from collections.abc import Generator
 from pathlib import Path
-from typing import Any
+from types import TracebackType
 
 import pytest
 
@@ -166,10 +166,12 @@ def _leave_out_library_frames(excinfo: pytest.ExceptionInfo[BaseException]) -> N
     errors = sys.modules.get("gradcheck.errors")
     if errors is None or not isinstance(excinfo.value, errors.GradcheckError | errors.UndecidedWarning):
         return
-    kept = excinfo.traceback.filter(_is_outside)
-    if kept:
-        excinfo.traceback = kept
-
-
-def _is_outside(entry: Any) -> bool:
-    return _PACKAGE not in Path(entry.path).parents
+    entry: TracebackType | None = excinfo.tb
+    last_outside = None
+    while entry is not None:
+        if _PACKAGE not in Path(entry.tb_frame.f_code.co_filename).parents:
+            last_outside = entry
+        entry = entry.tb_next
+    if last_outside is not None:
+        # The traceback itself, not pytest's view of it: that is made anew from the traceback when it is printed.
+        last_outside.tb_next = None

@@ -28,7 +28,7 @@ OTHER_WIDTH = 0.37
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Examined:
-    """Entries of a claim after examination; arrays have shape (m, n) of the Jacobian.
+    """Entries of a claim after examination; arrays have shape (m, d): outputs by examined variables.
 
     Attributes
     ----------
@@ -61,6 +61,7 @@ class Examined:
 
 def examine(
     base: Array,
+    columns: IntArray,
     claim: Array,
     room: Room,
     centre: Array,
@@ -71,18 +72,21 @@ def examine(
     unit_roundoff: float = np.finfo(float).eps / 2,
     witnesses: Sequence[str] = WITNESSES,
 ) -> Inquiry[Examined]:
-    """Examine all entries of a claimed Jacobian (a gradient is one row).
+    """Examine columns of a claimed Jacobian (a gradient is one row).
 
     Parameters
     ----------
     base : ndarray, shape (n,)
-    claim : ndarray, shape (m, n)
+    columns : ndarray of int, shape (d,)
+        Which variables.
+    claim : ndarray, shape (m, d)
+        The claim in these columns.
     room : Room
-        Along all n coordinates.
+        Along these d coordinates.
     centre : ndarray, shape (m,)
         Values at the point.
-    typical : ndarray, shape (n,)
-        Typical sizes τ of the variables.
+    typical : ndarray, shape (d,)
+        Typical sizes τ of these variables.
     rel_tol, abs_tol : float
     unit_roundoff : float
         u of the arithmetic that the model returns its values in.
@@ -94,35 +98,35 @@ def examine(
     Examined
     """
     desk = _Desk(claim, centre, typical, rel_tol, abs_tol, unit_roundoff)
-    everything = np.arange(base.size)
+    everything = np.arange(columns.size)
     if DIFFERENCES in witnesses:
-        desk.hear((yield from quick_look(base, everything, room, centre)), everything, final=False)
+        desk.hear((yield from quick_look(base, columns, room, centre)), everything, final=False)
         open_ = desk.open_columns()
         if open_.size:
-            whole = yield from finite_difference(base, open_, _along(room, open_), centre)
+            whole = yield from finite_difference(base, columns[open_], _along(room, open_), centre)
             desk.hear(whole, open_, replacing=True)
-            yield from _second_look(desk, base, room, centre, witnesses)
+            yield from _second_look(desk, base, columns, room, centre)
     if COMPLEX_STEP in witnesses:
         open_ = desk.open_columns() if DIFFERENCES in witnesses else everything
         if open_.size:
-            desk.hear((yield from _complex(base, open_, room, centre)), open_)
+            desk.hear((yield from _complex(base, columns, open_, room, centre)), open_)
     return desk.result()
 
 
-def _second_look(desk: "_Desk", base: Array, room: Room, centre: Array, witnesses: Sequence[str]) -> Inquiry[None]:
-    """Refutations stand only if other steps, or else the complex step, refute as well."""
+def _second_look(desk: "_Desk", base: Array, columns: IntArray, room: Room, centre: Array) -> Inquiry[None]:
+    """Refutations stand only if differences at other steps refute as well."""
     doubted = desk.refuted_columns()
     if doubted.size == 0:
         return
     other = _along(room, doubted)
     other = replace(other, scale=other.scale * OTHER_WIDTH, widest=other.widest * OTHER_WIDTH)
-    desk.second((yield from finite_difference(base, doubted, other, centre)), doubted)
+    desk.second((yield from finite_difference(base, columns[doubted], other, centre)), doubted)
 
 
-def _complex(base: Array, columns: IntArray, room: Room, centre: Array) -> Inquiry[Testimony]:
-    part = _along(room, columns)
+def _complex(base: Array, columns: IntArray, open_: IntArray, room: Room, centre: Array) -> Inquiry[Testimony]:
+    part = _along(room, open_)
     reach = np.minimum(part.below, part.above)
-    return (yield from complex_step(base, columns, centre.size, scale=part.scale, f0=centre, reach=reach))
+    return (yield from complex_step(base, columns[open_], centre.size, scale=part.scale, f0=centre, reach=reach))
 
 
 def _along(room: Room, columns: IntArray) -> Room:
@@ -186,7 +190,7 @@ class _Desk:
             right=right,
             slope_error=slope_error,
         )
-        part = np.ix_(range(self.claim.shape[0]), columns)
+        part = np.ix_(np.arange(self.claim.shape[0]), columns)
         fresh = ~self.confirmed[part] & ~self.refuted[part]
         # A later witness replaces an earlier one where it decides, or knows more.
         better = fresh & (
@@ -224,7 +228,7 @@ class _Desk:
             left=testimony.left.T,
             right=testimony.right.T,
         )
-        part = np.ix_(range(self.claim.shape[0]), columns)
+        part = np.ix_(np.arange(self.claim.shape[0]), columns)
         fallen = self.refuted[part] & ~outcome.refuted
         self.refuted[part] &= outcome.refuted
         reason = self.reason[part]

@@ -20,6 +20,9 @@ def kinks_at_point(subject: Subject, function: str, left: Array, right: Array, c
         below, above = float(left[output, place]), float(right[output, place])
         variable = subject.layout.name(int(columns[place]))
         part = f"output {output} of {function}" if several else function
+        evidence: dict[str, float | int | str] = {"left_slope": below, "right_slope": above}
+        if several:
+            evidence["output"] = int(output)
         findings.append(
             Finding(
                 code=FindingCode.KINK,
@@ -27,7 +30,7 @@ def kinks_at_point(subject: Subject, function: str, left: Array, right: Array, c
                 function=function,
                 variable=variable,
                 where=Location(point=subject.start),
-                evidence={"left_slope": below, "right_slope": above} | ({"output": int(output)} if several else {}),
+                evidence=evidence,
                 text=(
                     f"{part} has a kink in {variable} at the point itself: the slope is {number(below)} below it and "
                     f"{number(above)} above."

@@ -31,10 +31,6 @@ def _finding(subject: Subject, report: CheckReport, code: FindingCode, places: l
         text = f"{what} is wrong in {share}: {listed(names)}."
         remedy = f"Mend the derivative before any run. {likely[:1].upper()}{likely[1:]}".strip()
         severity = Severity.BLOCKER
-    elif _only_whole_numbers(subject, report, places):
-        text = f"{what} was not judged for {listed(names)}: whole numbers have no derivative."
-        remedy = "Nothing to mend; do not hand these entries to a gradient method."
-        severity = Severity.REMARK
     else:
         reasons = list(dict.fromkeys(r for k in places if (r := report.entries.reason[k])))
         text = f"{what} could not be judged in {share} ({listed(names)}): {'; '.join(reasons[:2])}."
@@ -53,14 +49,6 @@ def _finding(subject: Subject, report: CheckReport, code: FindingCode, places: l
 
 
 def _only_variable(subject: Subject, report: CheckReport, places: list[int]) -> str | None:
-    columns = _columns(report, places)
-    return subject.layout.name(columns.pop()) if len(columns) == 1 else None
-
-
-def _only_whole_numbers(subject: Subject, report: CheckReport, places: list[int]) -> bool:
-    return all(subject.domain.integer[column] for column in _columns(report, places))
-
-
-def _columns(report: CheckReport, places: list[int]) -> set[int]:
     index = report.entries.index
-    return {int(index[k] if index.ndim == 1 else index[k, 1]) for k in places}
+    columns = {int(index[k] if index.ndim == 1 else index[k, 1]) for k in places}
+    return subject.layout.name(columns.pop()) if len(columns) == 1 else None

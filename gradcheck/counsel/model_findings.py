@@ -9,7 +9,7 @@ from gradcheck.evaluation.ledger import Ledger
 from gradcheck.evaluation.protocol import Status
 from gradcheck.health.repeatability import Repeatability
 from gradcheck.problem.subject import Subject
-from gradcheck.records.arrays import Array, BoolArray
+from gradcheck.records.arrays import BoolArray, IntArray
 from gradcheck.records.finding import Finding, FindingCode, Location, Severity
 from gradcheck.witnesses.testimony import Testimony
 from gradcheck.wording import count, listed, number
@@ -64,7 +64,7 @@ def unrepeatable(subject: Subject, function: str, seen: Repeatability) -> list[F
     ]
 
 
-def dead_variables(subject: Subject, unchanged: Mapping[str, BoolArray], coordinates: Array) -> list[Finding]:
+def dead_variables(subject: Subject, unchanged: Mapping[str, BoolArray], coordinates: IntArray) -> list[Finding]:
     """Variables that change no function at all, at the point and far from it."""
     still = np.all([marks.all(axis=1) for marks in unchanged.values()], axis=0)
     return [

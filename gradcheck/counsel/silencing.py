@@ -39,8 +39,8 @@ def silenced(
             f"{finding.code}:{finding.function}",
             f"{finding.code}:{finding.function}:{finding.variable}",
         )
-        reason = next((accept[key] for key in keys if key in accept), None)
-        if reason is None:
+        matching = [key for key in keys if key in accept]
+        if not matching:
             stay.append(finding)
         else:
             accepted.append(
@@ -48,7 +48,7 @@ def silenced(
                     "code": str(finding.code),
                     "function": finding.function,
                     "variable": finding.variable or "",
-                    "reason": str(reason),
+                    "reason": str(accept[matching[0]]),
                 }
             )
     return stay, tuple(accepted)

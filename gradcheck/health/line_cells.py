@@ -48,7 +48,7 @@ def hidden_jumps(t: Array, f: Array, noise: Array, tolerance: Array) -> Array:
     for order, weights in difference_weights(t):
         jump, unsure = _jumps_by_window(weights, f, noise, order)
         seen = jump
-        if order % 2 and lower is not None:
+        if lower is not None:
             # An odd difference vanishes on a symmetric feature; the even ones inside do not.
             seen = jump.copy()
             seen[:, :-1] = np.maximum(seen[:, :-1], lower[:-1])

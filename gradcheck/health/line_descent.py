@@ -5,6 +5,7 @@ h each time: if they keep shrinking with a smaller power, that power is the natu
 infinite there (reported as a kink), between 1 and 2 the second derivative is (reported as a curvature break).
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -18,7 +19,8 @@ from gradcheck.records.finding import FindingCode
 FINEST = 1e-9  # in t
 AUDIBLE = 50.0  # standard deviations of the noise
 LEVELS = 10  # that a power has to hold for
-SCATTER = 0.7  # of the second differences about their power law, in powers of two
+SCATTER = 1.0  # of the second differences about their power law, in powers of two
+DRIFT = 0.4  # of the power from the first half of the levels to the second
 CUSP = (0.1, 1.05)
 FINITE_SLOPES = 0.975  # with this power and more the slopes stay finite
 INFINITE_CURVATURE = (1.05, 1.9)
@@ -44,8 +46,8 @@ def descended(
     samples, path = yield from _followed(samples, focus, piece, lower, upper)
     if path is None or path.sizes.size <= LEVELS:
         return samples, None
-    power, scatter = _power_law(path.sizes[-LEVELS - 1 :])
-    if scatter > SCATTER:
+    power, scatter, drift = _power_law(path.sizes[-LEVELS - 1 :])
+    if scatter > SCATTER or drift > DRIFT or _settled(path.sizes):
         return samples, None
     if CUSP[0] < power < CUSP[1]:
         kind = FindingCode.KINK
@@ -68,17 +70,22 @@ def descended(
     )
 
 
-def _power_law(sizes: Array) -> tuple[float, float]:
-    """Power of the spacing, and largest deviation in powers of two, of sizes at spacings that are halved each time."""
+def _power_law(sizes: Array) -> tuple[float, float, float]:
+    """Power of the spacing that sizes at halved spacings follow, their scatter about it, and its drift.
+
+    The scatter is the largest deviation in powers of two; the drift is the change of the power between both halves.
+    """
     level, logs = np.arange(sizes.size), np.log2(sizes)
     slope, offset = np.polyfit(level, logs, 1)
-    return float(-slope), float(np.abs(logs - offset - slope * level).max())
+    half = sizes.size // 2
+    first, second = (logs[0] - logs[half]) / half, (logs[half] - logs[-1]) / (sizes.size - 1 - half)
+    return float(-slope), float(np.abs(logs - offset - slope * level).max()), float(abs(second - first))
 
 
 def _followed(
     samples: Samples, focus: Focus, piece: tuple[float, float], lower: float, upper: float
 ) -> Quest[tuple[Samples, Descent | None]]:
-    centre, spacing = 0.5 * (lower + upper), 0.5 * (upper - lower)
+    centre, spacing = 0.5 * (lower + upper), upper - lower
     sizes: list[float] = []
     finest = max(FINEST, 16.0 * focus.closest(centre))
     while True:
@@ -101,7 +108,7 @@ def _followed(
     return samples, Descent(centre=centre, spacing=spacing, values=f, sizes=np.array(sizes))
 
 
-def _settled(sizes: list[float]) -> bool:
+def _settled(sizes: Sequence[float] | Array) -> bool:
     """Whether the last levels shrank as those of a smooth function do, or not at all as at a jump."""
     if len(sizes) > 4 and float(np.log2(sizes[-5] / sizes[-1])) / 4.0 > SMOOTH:
         return True

@@ -145,10 +145,10 @@ class Survey:
         return np.where(self.hidden <= self.tolerance, np.minimum(np.nan_to_num(ratio), 1.0), ratio)
 
     def roughest(self, among: BoolArray) -> int:
-        """The one of these cells in which the largest jump may hide; where nothing is known, all of its rise is one."""
-        rise = np.abs(self.view.f[self.cell + 1] - self.view.f[self.cell])
-        hidden = np.where(np.isfinite(self.hidden), self.hidden, rise)
-        return int(np.where(among, hidden, -1.0).argmax())
+        """The one of these cells at whose ends the slope changes most: what may hide says little about where it hides."""
+        slope = (self.view.f[self.cell + 1] - self.view.f[self.cell]) / self.width
+        change = np.abs(np.diff(slope, prepend=slope[:1], append=slope[-1:]))
+        return int(np.where(among, change[:-1] + change[1:], -1.0).argmax())
 
 
 def surveyed(

@@ -89,7 +89,8 @@ def step_curve(base: Array, directions: Directions, room: Room, centre: Array) -
 def _errors(values: Array, reference: Testimony) -> Array:
     """Distance to the reference; where it has no finite value, the distance to the neighbouring quotients."""
     if np.isfinite(reference.value[0, 0]):
-        return np.abs(values - reference.value[0, 0])
+        distance: Array = np.abs(values - reference.value[0, 0])
+        return distance
     change = np.abs(np.diff(values, prepend=values[:1], append=values[-1:]))
     return np.maximum(change[:-1], change[1:])
 

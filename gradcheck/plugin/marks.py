@@ -50,7 +50,9 @@ def marks_on_model(model: Any, *, everything: bool = False) -> list[pytest.Mark]
     if spec is not None:
         options = {"at": spec.at} | _for_check(spec.options)
         marked = any(mark.name == MARK for mark in marks)
-        if everything or marked or any(options.get(claim) is not None for claim in CLAIMS):
+        claimed = any(options.get(claim) is not None for claim in CLAIMS)
+        misspelt = any(name not in allowed_names() for name in options)  # to be told, however little else there is
+        if everything or marked or claimed or misspelt:
             marks.append(getattr(pytest.mark, MARK).with_args(**options).mark)
     return marks
 

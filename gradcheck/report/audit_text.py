@@ -9,7 +9,7 @@ from gradcheck.records.finding import Finding, FindingCode, Severity
 from gradcheck.records.report import AuditReport, CheckReport, Scaling, Steps, WitnessRecord
 from gradcheck.records.verdict import Verdict
 from gradcheck.report.check_text import check_details, headline
-from gradcheck.report.finding_text import finding_lines
+from gradcheck.report.finding_text import Surroundings, finding_lines
 from gradcheck.report.paragraphs import WIDTH, bullets, paragraph, table
 
 #: What is told of a long list: actions, claims in full, entries of one claim, findings of one severity, rows.
@@ -38,12 +38,15 @@ def audit_text(report: AuditReport) -> str:
     >>> audit_text(report).splitlines()[0][:5]
     'READY'
     """
-    units = {str(variable.get("name", "")): str(variable.get("unit") or "") for variable in report.variables}
+    around = Surroundings(
+        units={str(variable.get("name", "")): str(variable.get("unit") or "") for variable in report.variables},
+        start=[variable.get("value", float("nan")) for variable in report.variables],
+    )
     sections = [
         _verdict(report),
         _section("What to do now", _actions(report)),
         _section("Claims", _claims(report.claims)),
-        *_findings(report.findings, units),
+        *_findings(report.findings, around),
         _section("Silenced on request", bullets([_accepted(item) for item in report.accepted])),
         _section("Witnesses", _witnesses(report.witnesses)),
         *[_section(f"Best steps for {wording.shortened(steps.function, 40)}", _steps(steps)) for steps in report.steps],
@@ -117,10 +120,14 @@ def _mends(report: AuditReport) -> list[str]:
     mends = [f"Mend the {claim.kind} of {claim.function}: {_likely(claim)}" for claim in wrong]
     blockers = [finding for finding in report.findings if finding.severity == Severity.BLOCKER]
     return mends + [
-        f"{wording.capitalised(finding.remedy)} [{finding.code} in {wording.shortened(finding.function, 30)}]"
+        f"{wording.capitalised(finding.remedy)} [{_named(finding)}]"
         for finding in blockers
         if finding.code != FindingCode.CLAIM_REFUTED or not wrong
     ]
+
+
+def _named(finding: Finding) -> str:
+    return f"{finding.code} in {wording.shortened(finding.function, 30)}" if finding.function else str(finding.code)
 
 
 def _likely(claim: CheckReport) -> str:
@@ -158,13 +165,17 @@ def _claims(claims: Sequence[CheckReport]) -> list[str]:
     return lines[:-1] if lines and not lines[-1] else lines
 
 
-def _findings(findings: Sequence[Finding], units: Mapping[str, str]) -> list[list[str]]:
+def _findings(findings: Sequence[Finding], around: Surroundings) -> list[list[str]]:
     sections = []
     for severity in Severity:
         group = [finding for finding in findings if finding.severity == severity]
         if not group:
             continue
-        body = [line for finding in group[:_FINDINGS] for line in ["", *finding_lines(finding, indent=2, units=units)]]
+        body: list[str] = []
+        told: list[str] = []
+        for finding in group[:_FINDINGS]:
+            body += ["", *finding_lines(finding, indent=2, around=around, told=told)]
+            told.append(finding.remedy)
         if len(group) > _FINDINGS:
             body += ["", f"  and {wording.count(len(group) - _FINDINGS, f'more {severity}')}, in the JSON report"]
         sections.append(
@@ -194,10 +205,17 @@ def _witnesses(witnesses: Sequence[WitnessRecord]) -> list[str]:
         return []
     header = ("function", "source", "works", "bound/value", "evaluations", "time")
     lines = table(header, rows[:_ROWS], right="---rrr", names=(0, 1))
-    for witness in witnesses[:_ROWS]:
+    return [*lines, *_more(len(rows)), *bullets(_restrictions(witnesses), 4)]
+
+
+def _restrictions(witnesses: Sequence[WitnessRecord]) -> list[str]:
+    """Why witnesses do not work, or work in part; what several functions share is told once."""
+    groups: dict[tuple[str, str], list[str]] = {}
+    for witness in witnesses:
         if witness.reason:
-            lines += paragraph(f"{witness.function}, {witness.source}: {witness.reason}", 4, first="- ")
-    return lines + _more(len(rows))
+            groups.setdefault((witness.source, witness.reason), []).append(witness.function)
+    told = [f"{source} on {wording.listed(functions)}: {reason}" for (source, reason), functions in groups.items()]
+    return told[:_ROWS]
 
 
 def _more(amount: int) -> list[str]:

@@ -17,8 +17,8 @@ WORST = 10
 #: Likely mistakes and different reasons that are told; more of them help nobody in a hurry.
 _MISTAKES, _REASONS = 4, 6
 
-#: Digits of a claim that is confirmed; there is nothing to tell apart.
-_DIGITS_OF_CONFIRMED = 6
+#: Digits of a claim that is not refuted; there is nothing to tell apart.
+_DIGITS_ELSEWHERE = 6
 
 _RANK = {Verdict.REFUTED: 0, Verdict.UNDECIDED: 1, Verdict.CONFIRMED: 2}
 
@@ -41,24 +41,17 @@ def check_text(report: CheckReport) -> str:
     >>> import gradcheck
     >>> report = gradcheck.check(lambda x: x[0] ** 2, at=[3.0], gradient=lambda x: [x[0]], on_refuted="return")
     >>> print(check_text(report).partition(" ±")[0])
-    gradient of model refuted: x[0] is claimed 3, but it is 6
+    gradient of model refuted: x[0] is claimed 3, found 6
     """
     return "\n".join([headline(report), *check_details(report)])
 
 
 def headline(report: CheckReport, width: int = WIDTH) -> str:
     """One line: which claim, of which model, the verdict, and the worst entry in words."""
-    # What gives way first: names beyond 24 characters, then the bound, then the sentence, then more of the names.
-    for name_width, style in (
-        (40, "bound"),
-        (24, "bound"),
-        (24, "sentence"),
-        (24, "brief"),
-        (16, "brief"),
-        (8, "brief"),
-    ):
+    # What gives way first: names beyond 24 characters, then the bound, then more of the names.
+    for name_width, bounded in ((40, True), (24, True), (24, False), (16, False), (8, False)):
         function = wording.shortened(report.function, name_width)
-        text = f"{report.kind} of {function} {report.verdict}: {_story(report, name_width, style)}"
+        text = f"{report.kind} of {function} {report.verdict}: {_story(report, name_width, bounded)}"
         if len(text) <= width:
             return text
     # Figures too long for one line: the table below has them.
@@ -82,13 +75,18 @@ def check_details(report: CheckReport, *, indent: int = 0, rows: int = WORST, fi
         lines += ["", *_worst_lines(report.entries, indent, rows)]
     lines += _direction_lines(report, indent)
     lines += _reason_lines(report.entries, indent)
+    brief = _brief_reasons(report.entries, indent)
+    lines += ["", *brief] if brief and not confirmed else brief
     for finding in report.findings if findings else ():
         lines += ["", *finding_lines(finding, indent=indent)]
-    if report.notices:
-        lines += ["", *(line for notice in report.notices for line in paragraph(notice, indent, first="Note: "))]
-    if not confirmed:
-        lines.append("")
-    return [*lines, *paragraph(_closing(report), inner if confirmed else indent)]
+    if confirmed:
+        return [*lines, *_notes(report, inner), *paragraph(_closing(report), inner)]
+    notes = _notes(report, indent)
+    return [*lines, *([""] if notes else []), *notes, "", *paragraph(_closing(report), indent)]
+
+
+def _notes(report: CheckReport, indent: int) -> list[str]:
+    return [line for notice in report.notices for line in paragraph(notice, indent, first="Note: ")]
 
 
 def worst_order(entries: Entries) -> np.ndarray:
@@ -125,36 +123,37 @@ def _entry(entries: Entries, position: int) -> _Entry:
     )
 
 
-def _story(report: CheckReport, name_width: int, style: str) -> str:
+def _story(report: CheckReport, name_width: int, bounded: bool) -> str:
     entries = report.entries
     if not len(entries):
         return _direction_story(report)
-    worst = _entry(entries, int(worst_order(entries)[0]))
     if report.verdict == Verdict.CONFIRMED:
-        return _agreement(entries, worst)
+        return _agreement(entries, brief=not bounded)
+    worst = _entry(entries, int(worst_order(entries)[0]))
     if worst.verdict != report.verdict:  # the directions decided, and no single entry carries the verdict
         return _direction_story(report)
     name = wording.shortened(worst.name, name_width)
     claim, witness = _figures(worst, wording.MOST_DIGITS)
-    alone = witness.partition(" ± ")[0]
-    if style == "brief":
-        return f"{name} claims {claim}, not {alone}"
-    told = witness if style == "bound" else alone
-    if report.verdict == Verdict.REFUTED:
-        return f"{name} is claimed {claim}, but it is {told}"
-    return f"{name} is claimed {claim}, seen as {told}"
+    if worst.verdict == Verdict.UNDECIDED and not np.isfinite([worst.witness, worst.bound]).all():
+        return f"{name} is claimed {claim}, and no witness can tell"
+    if worst.verdict == Verdict.UNDECIDED and worst.digits >= 1:
+        return f"{name} agrees to {wording.count(int(worst.digits), 'digit')} only"
+    return f"{name} is claimed {claim}, found {witness if bounded else witness.partition(' ± ')[0]}"
 
 
-def _agreement(entries: Entries, worst: _Entry) -> str:
-    digits = wording.agreed_digits(worst.digits)
+def _agreement(entries: Entries, *, brief: bool) -> str:
+    """How well confirmed entries agree; a true zero agrees absolutely, where digits say nothing."""
     many = len(entries)
-    subject = f"all {wording.count(many, 'entry', 'entries')}" if many > 1 else "the entry"
-    agree = "agree" if many > 1 else "agrees"
-    if digits == "all":
-        return f"{subject} {agree} to all digits"
-    if digits in {"-", "0"}:  # a true zero: agreement is absolute, digits say nothing
-        return f"{subject} {agree} within the bounds"
-    return f"{subject} {agree} to {digits} digits" + (" or more" if many > 1 else "")
+    subject = f"all {wording.count(many, 'entry', 'entries')} agree" if many > 1 else "the entry agrees"
+    counted = entries.digits[entries.digits >= 1]
+    if brief:
+        return subject
+    if not counted.size:
+        return f"{subject} within the bounds"
+    digits = wording.agreed_digits(float(counted.min()))
+    if counted.size < many:
+        return f"all {many:,} agree to {digits} digits or within bounds"
+    return f"{subject} to {digits} digits" + (" or more" if many > 1 and digits != "all" else "")
 
 
 def _direction_story(report: CheckReport) -> str:
@@ -169,9 +168,9 @@ def _tally(verdicts: Sequence[Verdict]) -> str:
 
 
 def _figures(entry: _Entry, most: int) -> tuple[str, str]:
-    """Claim, and witness ± bound, with enough digits to look different where they are, but at most `most`."""
-    agree = entry.verdict == Verdict.CONFIRMED
-    digits = min(_DIGITS_OF_CONFIRMED if agree else wording.digits_to_tell_apart(entry.digits), most)
+    """Claim, and witness ± bound: where refuted, with enough digits to look different, but at most `most`."""
+    refuted = entry.verdict == Verdict.REFUTED
+    digits = min(wording.digits_to_tell_apart(entry.digits) if refuted else _DIGITS_ELSEWHERE, most)
     return wording.number(entry.claim, digits), wording.with_bound(entry.witness, entry.bound, max(digits, 4))
 
 
@@ -225,19 +224,34 @@ def _direction_lines(report: CheckReport, indent: int) -> list[str]:
 
 
 def _reason_lines(entries: Entries, indent: int) -> list[str]:
-    """Reasons, each once with the entries it holds for; undecided entries first."""
-    groups: dict[tuple[Verdict, str], list[str]] = {}
-    for name, verdict, reason in zip(entries.name, entries.verdict, entries.reason, strict=True):
-        if reason:
-            groups.setdefault((verdict, reason), []).append(name)
+    """Why entries are undecided, or refuted otherwise than by the plain rule; each reason once, with its entries."""
+    groups = _by_reason(entries, (Verdict.UNDECIDED, Verdict.REFUTED))
     lines: list[str] = []
-    ordered = sorted(groups.items(), key=lambda group: (group[0][0] != Verdict.UNDECIDED, -len(group[1])))
-    for (verdict, reason), names in ordered[:_REASONS]:
+    for (verdict, reason), names in groups[:_REASONS]:
         lines += ["", *paragraph(f"{wording.capitalised(str(verdict))}: {wording.listed(names)}", indent)]
         lines += paragraph(reason, indent + 2, first="because: ")
-    if len(ordered) > _REASONS:
-        lines += paragraph(f"and {len(ordered) - _REASONS:,} other reasons, in the report's entries", indent)
+    if len(groups) > _REASONS:
+        lines += paragraph(f"and {len(groups) - _REASONS:,} other reasons, in the report's entries", indent)
     return lines
+
+
+def _brief_reasons(entries: Entries, indent: int) -> list[str]:
+    """What is to be said about confirmed entries, in as few lines as possible."""
+    groups = _by_reason(entries, (Verdict.CONFIRMED,))[:_REASONS]
+    return [
+        line
+        for (_, reason), names in groups
+        for line in paragraph(f"{wording.listed(names, limit=3)}: {reason}", indent + 2)
+    ]
+
+
+def _by_reason(entries: Entries, verdicts: Sequence[Verdict]) -> list[tuple[tuple[Verdict, str], list[str]]]:
+    """Names of the entries with these verdicts by their reason; in the order of the verdicts, the commonest first."""
+    groups: dict[tuple[Verdict, str], list[str]] = {}
+    for name, verdict, reason in zip(entries.name, entries.verdict, entries.reason, strict=True):
+        if reason and verdict in verdicts:
+            groups.setdefault((verdict, reason), []).append(name)
+    return sorted(groups.items(), key=lambda group: (verdicts.index(group[0][0]), -len(group[1])))
 
 
 def _closing(report: CheckReport) -> str:

@@ -22,7 +22,6 @@ from gradcheck.records.arrays import Array, BoolArray
 from gradcheck.witnesses.steps import room_along
 from gradcheck.witnesses.testimony import Testimony
 
-Source: TypeAlias = Literal["jax", "autograd"]
 _Mode: TypeAlias = Literal["jvp", "vjp"]
 _Swept: TypeAlias = Generator[Request, Reply, Array | None]
 
@@ -31,11 +30,11 @@ _Swept: TypeAlias = Generator[Request, Reply, Array | None]
 ROUNDING = 64.0
 DOUBLE = 2.0**-53
 SINGLE = 2.0**-24
-#: Places beside the start where derivatives are taken. With the start, three of six values are left over to show noise.
-BESIDE = 5
+#: Places where derivatives are taken, in steps. Three of the six values are left over to show noise.
+_BOTH_SIDES = np.array([0.0, 1.0, -1.0, 2.0, -2.0, 3.0])
 #: A noise level from three values; Student's t with three degrees of freedom exceeds this once in 2,000.
 NOISE_MARGIN = 16.0
-#: Distance of the places, in units of x; the second for models that vary too fast for the first.
+#: Steps between the places, in units of x; the second for models that vary too fast for the first.
 SPACINGS = (1e-6, 1e-9)
 #: The places are uneven: on even ones, rounding errors may follow a straight line (k·α modulo 1).
 _JITTER = 0.4
@@ -53,7 +52,7 @@ def automatic(
     base: Array,
     directions: Directions,
     outputs: int,
-    source: Source,
+    source: str,
     *,
     domain: Domain | None = None,
     seed: int = 0,
@@ -79,9 +78,9 @@ def automatic(
     Testimony
         ``bound = 64·u·Σ|terms| + 16·σ + gap``: u is 2⁻⁵³, or 2⁻²⁴ where the result shows single precision; the terms
         are those of the sum over variables, where reverse mode needs one, else the value alone; σ is the measured noise
-        of the derivative; the gap is what sweeps were seen to differ by. Where the derivative is exactly 0, saturation
-        may hide one unit in the last place of f over the size of x: that is the bound. Infinite where the derivative is
-        not finite at the point or beside it.
+        of the derivative; the gap is what sweeps were seen to differ by. Where the derivative is exactly 0, terms may
+        have been lost beside larger ones: the bound is then 64·u·|f| over the size of x. Infinite where the derivative
+        is not finite at the point or beside it.
         ``works`` is False if both modes raise, or contradict each other. If one mode raises, the other speaks alone,
         and ``reason`` says so.
 
@@ -174,7 +173,7 @@ class _Found:
     @property
     def bound(self) -> Array:
         bound = ROUNDING * self.unit * self.terms + NOISE_MARGIN * self.noise + self.gap
-        return np.where(bound == 0, self.unit * self.level, bound)
+        return np.where(bound == 0, ROUNDING * self.unit * self.level, bound)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -276,8 +275,7 @@ def _noise_of(
 ) -> Generator[Request, Reply, Array]:
     best = np.asarray(np.nan)
     for spacing in SPACINGS:
-        places = np.concatenate([[0.0], np.arange(1, BESIDE + 1) + rng.uniform(-_JITTER, _JITTER, BESIDE)])
-        step = _step_beside(span.base, domain, spacing, rng)
+        places, step = _beside(span.base, domain, spacing, rng)
         values = []
         for place in places:
             point = np.clip(span.base + place * step, domain.lower, domain.upper)
@@ -292,15 +290,25 @@ def _noise_of(
     return best
 
 
-def _step_beside(base: Array, domain: Domain, spacing: float, rng: np.random.Generator) -> Array:
-    """``(n,)``: all variables move, each by its own share, and near a bound towards the roomier side."""
+def _beside(base: Array, domain: Domain, spacing: float, rng: np.random.Generator) -> tuple[Array, Array]:
+    """Places on a line, the start (0) first, and the step ``(n,)`` of all variables between them.
+
+    On both sides of the start, so that a kink there shows; where a variable has no room for this, on one side, which is
+    the roomier one for each variable.
+    """
     size = np.where(base != 0, np.abs(base), domain.scale) * rng.uniform(0.5, 1.0, base.size)
     sign = rng.choice([-1.0, 1.0], base.size)
     below, above = base - domain.lower, domain.upper - base
-    reach = BESIDE + _JITTER
-    length = reach * spacing * size
-    sign = np.where(np.where(sign > 0, above, below) < length, np.where(above >= below, 1.0, -1.0), sign)
-    return np.asarray(sign * np.minimum(length, np.where(sign > 0, above, below)) / reach)
+    places = _BOTH_SIDES + np.where(_BOTH_SIDES == 0, 0.0, rng.uniform(-_JITTER, _JITTER, _BOTH_SIDES.size))
+    if (np.minimum(below, above) < np.abs(places).max() * spacing * size).any():
+        places = np.abs(places) * 2 - (places > 0)
+        sign = np.where(np.where(sign > 0, above, below) < places.max() * spacing * size, _roomier(below, above), sign)
+    room = np.where(sign > 0, above, below)
+    return places, np.asarray(sign * np.minimum(spacing * size, room / places.max()))
+
+
+def _roomier(below: Array, above: Array) -> Array:
+    return np.where(above >= below, 1.0, -1.0)
 
 
 def _level_of(places: Array, values: Array) -> tuple[Array, BoolArray]:
@@ -356,9 +364,9 @@ def _compare(found: _Found, span: _Span, mixture: _Mixture, mixed: dict[_Mode, A
         expected = (weights * found.value).sum(axis=axis)
         size = (np.abs(weights) * found.terms).sum(axis=axis) + extra
         rounding = DOUBLE * (size + (np.abs(weights) * found.level).sum(axis=axis))
-        gap = np.abs(got - expected)
-        known = np.isfinite(gap)  # what is not finite is told entry by entry, not compared
-        gap[~known] = 0.0
+        # what is not finite is told entry by entry, not compared
+        known = np.isfinite(got) & np.isfinite(expected)
+        gap = np.abs(np.where(known, got, 0.0) - np.where(known, expected, 0.0))
         own = np.nan_to_num((np.abs(weights) * NOISE_MARGIN * found.noise).sum(axis=axis), nan=np.inf)
         single = np.expand_dims(gap > own + ROUNDING * rounding, axis)
         found.unit = np.where(single, SINGLE, found.unit)
@@ -380,9 +388,9 @@ def _contradiction(each: _Mode, mode: _Mode, got: float, expected: float) -> str
 
 
 def _resolution(span: _Span, domain: Domain, desk: _Desk) -> Generator[Request, Reply, Array]:
-    """``(d, m)``: |f| over the size of x along each direction; times u, what a derivative of exactly 0 may hide.
+    """``(d, m)``: |f| over the size of x along each direction; a derivative of exactly 0 may hide its rounding.
 
-    The logistic function at x = 40, computed as s·(1 - s), has the derivative 0 and not 4e-18.
+    The logistic function s at x = 40, with the derivative s·(1 - s), has the derivative 0 and not 4e-18.
     """
     reply = yield Request(base=span.base, directions=np.zeros(1, dtype=np.intp), offsets=np.zeros((1, 1)))
     desk.spent += reply.spent

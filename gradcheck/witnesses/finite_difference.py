@@ -15,7 +15,7 @@ from collections.abc import Generator
 import numpy as np
 
 from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request, Status
-from gradcheck.records.arrays import Array, IntArray
+from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.witnesses.difference_track import SPENT, Track
 from gradcheck.witnesses.ladder import LADDER, read_ladder
 from gradcheck.witnesses.polynomial_fit import fit, stencil_on
@@ -211,6 +211,6 @@ def _coarse_slope(track: Track) -> Array:
     return np.zeros(track.satisfied.size) if track.coarse is None else np.nan_to_num(track.coarse.value)
 
 
-def _failed_sides(finite: Array, offsets: Array) -> tuple[bool, bool]:
+def _failed_sides(finite: BoolArray, offsets: Array) -> tuple[bool, bool]:
     """Whether the model failed above, and below, the point."""
     return bool((~finite & (offsets > 0)).any()), bool((~finite & (offsets < 0)).any())

@@ -62,7 +62,7 @@ class Rungs:
     slope_error: Array
 
 
-def read_ladder(steps: Array, up: Array, down: Array, centre: Array, one_sided: Array, coarse_slope: Array) -> Rungs:
+def read_ladder(steps: Array, up: Array, down: Array, centre: Array, one_sided: BoolArray, coarse_slope: Array) -> Rungs:
     """Tell the natures apart.
 
     Parameters

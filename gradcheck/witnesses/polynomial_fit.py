@@ -129,7 +129,7 @@ def fit(
     differences : ndarray, shape (d, k, m)
         f at each node minus f at the centre (the last node, hence 0).
     largest : ndarray, shape (d, m)
-        Largest \|f\| on the stencil: the floor of the rounding.
+        Largest size of f on the stencil: the floor of the rounding.
     slips : ndarray, shape (d, k), optional
         Displacement realised minus displacement meant, in units of the half-width; corrected to first order.
     derivative : 1, 2 or 3

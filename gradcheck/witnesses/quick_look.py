@@ -7,7 +7,7 @@ a claim it does not confirm.
 import numpy as np
 
 from gradcheck.evaluation.protocol import Directions, Inquiry, Request, Status
-from gradcheck.records.arrays import Array
+from gradcheck.records.arrays import Array, BoolArray
 from gradcheck.witnesses.finite_difference import SOURCE
 from gradcheck.witnesses.polynomial_fit import ROUNDING
 from gradcheck.witnesses.steps import Room, rounded_half_width
@@ -68,7 +68,8 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
         bend = np.abs(np.einsum("k,dkm->dm", _KINK, up + down - 2 * centre)) / h[:, None]
         floor = ROUNDING * np.spacing(np.maximum(np.abs(reply.values).max(axis=1), np.abs(centre)))
     rounding = DEVIATIONS * _AMPLIFICATION * floor / h[:, None]
-    good = reply.finite.all(axis=1)[:, None] & np.isfinite(value[rows])
+    works: BoolArray = np.asarray(reply.finite.all(axis=1))
+    good = works[:, None] & np.isfinite(value[rows])
     bound[rows] = np.where(good, 1.5 * change + bend / 2 + rounding, np.inf)
     step[rows] = h[:, None]
     refused = (reply.status == Status.REFUSED).any(axis=1)

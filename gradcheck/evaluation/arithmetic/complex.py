@@ -69,7 +69,7 @@ def as_array(result: Any) -> NDArray[np.complex128]:
     array = np.array(result)
     if array.dtype.kind == "O":
         array = array.astype(complex)
-    if array.dtype.kind not in "fciub":
+    if result is None or array.dtype.kind not in "fciub":
         raise LostImaginaryPart(f"returned {type(result).__name__}, which is no array of numbers")
     if array.dtype in _SHORT:
         raise LostImaginaryPart(f"returned {array.dtype}: single precision")
