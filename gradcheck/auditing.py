@@ -11,6 +11,7 @@ from typing import Any
 
 import numpy as np
 
+from gradcheck import __version__
 from gradcheck.checking import Rules, checked_claims
 from gradcheck.counsel.claim_findings import kinks_at_point
 from gradcheck.counsel.claim_verdicts import verdict_findings
@@ -478,7 +479,7 @@ def _environment(seed: int) -> dict[str, Any]:
 
     threads = {name: os.environ[name] for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS") if name in os.environ}
     return {
-        "gradcheck": version("gradcheck"),
+        "gradcheck": __version__,
         "python": platform.python_version(),
         "platform": platform.platform(terse=True),
         "numpy": np.__version__,

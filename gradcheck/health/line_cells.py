@@ -49,7 +49,7 @@ def hidden_jumps(t: Array, f: Array, noise: Array, tolerance: Array) -> Array:
         jump, unsure = _jumps_by_window(weights, f, noise, order)
         seen = jump
         if lower is not None:
-            # An odd difference vanishes on a symmetric feature; the even ones inside do not.
+            # A difference vanishes by accident, such as an odd one on a symmetric feature; those inside it do not.
             seen = jump.copy()
             seen[:, :-1] = np.maximum(seen[:, :-1], lower[:-1])
             seen[:, 1:] = np.maximum(seen[:, 1:], lower[1:])

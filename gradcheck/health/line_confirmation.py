@@ -51,7 +51,8 @@ def confirmed(
     """The irregularity that a suspicion turns out to be, or None."""
     if suspect.jump:
         return (yield from _jump(samples, focus, piece, suspect))
-    crossing = np.signbit(suspect.gap_left) != np.signbit(suspect.gap_right)
+    gap = suspect.clear.gap
+    crossing = np.signbit(gap[0]) != np.signbit(gap[-1])
     attempts = (_kink, _curvature_break) if crossing else (_curvature_break, _kink)
     for attempt in attempts:
         samples, found = yield from attempt(samples, focus, piece, suspect)
@@ -66,7 +67,7 @@ def _jump(
     _, (before, after) = samples.at(np.array([suspect.lower, suspect.upper]), focus.output)
     height = float(after - before)
     noise = max(focus.sigma, 0.3 * EPSILON * max(abs(before), abs(after)))
-    if abs(height) < max(JUMP_SHARE * suspect.least_gap, JUMP_SIGMAS * noise):
+    if abs(height) < max(JUMP_SHARE * float(np.abs(suspect.first.gap).min()), JUMP_SIGMAS * noise):
         return samples, None
     distance = 4.0 * max(suspect.upper - suspect.lower, focus.closest(suspect.upper))
     asked = np.concatenate([suspect.lower - distance * PLACES, suspect.upper + distance * PLACES])
@@ -94,8 +95,8 @@ def _jump(
 def _kink(
     samples: Samples, focus: Focus, piece: tuple[float, float], suspect: Suspect
 ) -> Quest[tuple[Samples, Irregularity | None]]:
-    width = suspect.upper - suspect.lower
-    expected = (suspect.gap_right - suspect.gap_left) / width
+    clear = suspect.clear
+    expected = float((clear.gap[-1] - clear.gap[0]) / (clear.x[-1] - clear.x[0]))
     samples, sides = yield from _traced(
         samples, focus, piece, suspect, order=1, expected=expected, keeps=SLOPE_KEEPS, nearest=_kink_distance
     )
@@ -120,9 +121,9 @@ def _kink(
 def _curvature_break(
     samples: Samples, focus: Focus, piece: tuple[float, float], suspect: Suspect
 ) -> Quest[tuple[Samples, Irregularity | None]]:
-    reach = max(suspect.centre - suspect.lower, suspect.upper - suspect.centre)
-    gap = suspect.gap_left if suspect.centre - suspect.lower == reach else suspect.gap_right
-    expected = 2.0 * gap / (reach * reach)
+    away = suspect.clear.x - suspect.centre
+    end = 0 if -away[0] > away[-1] else -1
+    expected = float(2.0 * suspect.clear.gap[end] / away[end] ** 2)
     samples, sides = yield from _traced(
         samples,
         focus,
@@ -236,10 +237,10 @@ def _exponent_within(suspect: Suspect, sides: TwoSides, limits: tuple[float, flo
     value, slope, second = sides.change
     d = sides.distance
     gap = max(abs(sign * slope * d + 0.5 * second * d * d) for sign in (-1.0, 1.0))
-    span = suspect.first_distance / d
+    span = suspect.reach / d
     if span < 2.0 or gap == 0.0:
         return True
-    exponent = float(np.log(suspect.first_gap / gap) / np.log(span))
+    exponent = float(np.log(float(np.abs(suspect.first.gap).max()) / gap) / np.log(span))
     return limits[0] <= exponent <= limits[1]
 
 

@@ -18,7 +18,10 @@ ABSCISSAE = 33
 SUSPECT_WEAKER, SUSPECT_STRONGER = 3.0, 10.0  # |D| over its doubt at the two ends of a cell
 JUMP_WIDTH = 1e-11  # in t; a transition narrower than this is a jump
 MOST_ROUNDS = 80
-MOST_BEND_ROUNDS = 8
+MOST_CLIPPED = 2  # rounds in which the meeting zone nearly fills the bracket
+CLEAR = 20.0  # |D| over its doubt
+STALLED = 0.9  # of the bracket is left
+DIP = 0.2  # of the largest |D|: where |D| falls below, it may touch zero between two abscissae
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -31,12 +34,8 @@ class Suspect:
         The predictions never meet inside the bracket; otherwise they do at `centre` ± `half`.
     lower, upper : float
         The last bracket; both ends are samples.
-    first_gap, first_distance : float
-        Largest |D| at an end of the first bracket, and that end's distance from the centre.
-    least_gap : float
-        Smallest |D| in the first bracket.
-    gap_left, gap_right : float
-        D at the ends of the last bracket.
+    first, clear : Parting
+        Predictions over the first bracket, and over the last one at whose ends D stood out from its doubt.
     """
 
     jump: bool
@@ -44,11 +43,13 @@ class Suspect:
     upper: float
     centre: float
     half: float
-    first_gap: float
-    first_distance: float
-    least_gap: float
-    gap_left: float
-    gap_right: float
+    first: "Parting"
+    clear: "Parting"
+
+    @property
+    def reach(self) -> float:
+        """Distance from the centre to the farther end of the first bracket."""
+        return max(self.centre - float(self.first.x[0]), float(self.first.x[-1]) - self.centre)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -68,6 +69,13 @@ class Parting:
     @property
     def doubt(self) -> Array:
         return self.left_doubt + self.right_doubt
+
+    @property
+    def clarity(self) -> float:
+        """|D| over its doubt at that end of the bracket where it is larger."""
+        ends = [0, -1]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            return float(np.nanmax(np.abs(self.gap[ends]) / self.doubt[ends]))
 
     def meeting(self) -> Array:
         """(q,) of bool: where the two sides may agree."""
@@ -107,71 +115,69 @@ def zoomed(
     samples: Samples, focus: Focus, piece: tuple[float, float], lower: float, upper: float
 ) -> Quest[tuple[Samples, Suspect | None]]:
     """Narrow the cell [lower, upper] of an unbroken piece down to a jump or a meeting of both sides."""
-    first: Parting | None = None
-    bends, jump_width = 0, max(JUMP_WIDTH, focus.closest(upper))
+    first = clear = None
+    clipped, jump_width = 0, max(JUMP_WIDTH, focus.closest(upper))
     for _ in range(MOST_ROUNDS):
         view = focus.view(samples, *piece)
-        whole = parting(view, lower, np.linspace(lower, upper, ABSCISSAE))
-        gap = whole.gap
-        if not np.isfinite(gap).all():
+        seen = parting(view, lower, np.linspace(lower, upper, ABSCISSAE))
+        if not np.isfinite(seen.gap).all():
             return samples, None
-        if first is None:
-            first = whole
-        zone = _meeting_zone(view, lower, whole)
-        if zone is None:
-            if upper - lower <= jump_width:
-                return samples, _suspect(True, lower, upper, lower, upper, gap, first)
-            narrower = yield from _halved(samples, focus, view, lower, upper)
+        first = first or seen
+        clear = seen if clear is None or seen.clarity >= CLEAR else clear
+        zone = _meeting_zone(view, lower, seen)
+        jump = zone is None
+        if zone is not None:
+            samples, ends = yield from _trimmed(samples, focus, view, lower, upper, zone)
+            clipped += 5.0 * (zone[1] - zone[0]) > 1.7 * (upper - lower)
         else:
-            narrower = yield from _trimmed(samples, focus, view, lower, upper, zone)
-            bends += 1
-        samples, ends = narrower
+            zone = ends = lower, upper
+            if upper - lower > jump_width:
+                samples, ends = yield from _halved(samples, focus, view, lower, upper)
         if ends is None:
             return samples, None
-        stalled = ends[1] - ends[0] > 0.6 * (upper - lower)
-        if zone is not None and (stalled or bends >= MOST_BEND_ROUNDS):
-            return samples, _suspect(False, lower, upper, *zone, gap, first)
+        if clipped >= MOST_CLIPPED or ends[1] - ends[0] > STALLED * (upper - lower):
+            return samples, Suspect(
+                jump=jump,
+                lower=lower,
+                upper=upper,
+                centre=0.5 * (zone[0] + zone[1]),
+                half=0.5 * (zone[1] - zone[0]),
+                first=first,
+                clear=clear,
+            )
         lower, upper = ends
     return samples, None
 
 
-def _suspect(
-    jump: bool,
-    lower: float,
-    upper: float,
-    zone_lower: float,
-    zone_upper: float,
-    gap: Array,
-    first: Parting,
-) -> Suspect:
-    centre = 0.5 * (zone_lower + zone_upper)
-    return Suspect(
-        jump=jump,
-        lower=lower,
-        upper=upper,
-        centre=centre,
-        half=0.5 * (zone_upper - zone_lower),
-        first_gap=float(np.abs(first.gap).max()),
-        first_distance=max(centre - float(first.x[0]), float(first.x[-1]) - centre),
-        least_gap=float(np.abs(first.gap).min()),
-        gap_left=float(gap[0]),
-        gap_right=float(gap[-1]),
-    )
-
-
 def _meeting_zone(view: SideView, lower: float, seen: Parting) -> tuple[float, float] | None:
-    """The part of a cell in which the two sides may meet, resolved as finely as their doubts allow."""
+    """The part of a cell in which the two sides may meet, resolved as finely as their doubts allow; None if there is none.
+
+    Where |D| only dips, the bottom of the dip is looked at more closely: a break of curvature makes D touch zero there.
+    """
     start = lower
     for _ in range(12):
         near = np.flatnonzero(seen.meeting())
-        if near.size == 0:
+        if near.size:
+            first, last = near[0], near[-1]
+        elif (bottom := _dip(seen)) is not None:
+            first = last = bottom
+        else:
             return None
-        a = float(seen.x[max(near[0] - 1, 0)])
-        b = float(seen.x[min(near[-1] + 1, ABSCISSAE - 1)])
+        a = float(seen.x[max(first - 1, 0)])
+        b = float(seen.x[min(last + 1, ABSCISSAE - 1)])
         if b - a > 0.4 * (seen.x[-1] - seen.x[0]) or b - a < 1e-15:
-            return float(seen.x[near[0]]), float(seen.x[near[-1]])
+            break
         seen = parting(view, start, np.linspace(a, b, ABSCISSAE))
-    return float(seen.x[near[0]]), float(seen.x[near[-1]])
+    return (float(seen.x[near[0]]), float(seen.x[near[-1]])) if near.size else None
+
+
+def _dip(seen: Parting) -> int | None:
+    """Index of an inner minimum of |D| that lies deep below the rest."""
+    size = np.abs(seen.gap)
+    bottom = int(size.argmin())
+    if 0 < bottom < size.size - 1 and size[bottom] < DIP * size.max():
+        return bottom
+    return None
 
 
 def _halved(

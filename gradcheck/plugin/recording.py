@@ -45,7 +45,7 @@ class JsonRecord:
         text = json.dumps(document, indent=2, allow_nan=False, ensure_ascii=False)
         self.path.write_text(text + "\n", encoding="utf-8")
 
-    def pytest_terminal_summary(self, terminalreporter: pytest.TerminalReporter) -> None:
+    def pytest_terminal_summary(self, terminalreporter: Any) -> None:
         terminalreporter.write_sep("-", f"gradcheck: {len(self.items)} items reported in {self.path}")
 
 

@@ -102,9 +102,10 @@ def _section(title: str, body: Sequence[str]) -> list[str]:
 
 
 def _actions(report: AuditReport) -> list[str]:
-    texts = _mends(report)
-    if not texts and report.evaluable:
-        texts = [*_doubts(report), *_start(report.advice)]
+    if report.evaluable:
+        texts = _mends(report) or [*_doubts(report), *_start(report.advice)]
+    else:
+        texts = [wording.capitalised(finding.text) for finding in report.findings]
     told = list(dict.fromkeys(texts))
     lines = [
         line for number, text in enumerate(told[:_ACTIONS], start=1) for line in paragraph(text, 2, first=f"{number}. ")

@@ -22,6 +22,7 @@ from gradcheck.records.arrays import Array, BoolArray
 from gradcheck.witnesses.steps import room_along
 from gradcheck.witnesses.testimony import Testimony
 
+Source: TypeAlias = Literal["jax", "autograd"]
 _Mode: TypeAlias = Literal["jvp", "vjp"]
 _Swept: TypeAlias = Generator[Request, Reply, Array | None]
 
@@ -40,6 +41,8 @@ SPACINGS = (1e-6, 1e-9)
 _JITTER = 0.4
 #: Scatter about a parabola beyond this many times that about a cubic is not noise: something smooth is left in it.
 _LEVEL = 4.0
+#: A derivative that is the same at all places, and so many units of f over the size of x or less, may be a remainder.
+DROWNED = 1024.0
 #: With more rows than this, noise is measured on mixtures of them.
 _ROWS_APART = 8
 #: Where the bound is more than this share of the derivative, a reason is given.
@@ -52,7 +55,7 @@ def automatic(
     base: Array,
     directions: Directions,
     outputs: int,
-    source: str,
+    source: Source,
     *,
     domain: Domain | None = None,
     seed: int = 0,
@@ -79,7 +82,8 @@ def automatic(
         ``bound = 64·u·Σ|terms| + 16·σ + gap``: u is 2⁻⁵³, or 2⁻²⁴ where the result shows single precision; the terms
         are those of the sum over variables, where reverse mode needs one, else the value alone; σ is the measured noise
         of the derivative; the gap is what sweeps were seen to differ by. Where the derivative is exactly 0, terms may
-        have been lost beside larger ones: the bound is then 64·u·|f| over the size of x. Infinite where the derivative
+        have been lost beside larger ones: the bound is then 64·u·|f| over the size of x; and where it is tiny and constant
+        beside this, it may be a remainder of such terms: the bound is then its own size. Infinite where the derivative
         is not finite at the point or beside it.
         ``works`` is False if both modes raise, or contradict each other. If one mode raises, the other speaks alone,
         and ``reason`` says so.
@@ -173,7 +177,11 @@ class _Found:
     @property
     def bound(self) -> Array:
         bound = ROUNDING * self.unit * self.terms + NOISE_MARGIN * self.noise + self.gap
-        return np.where(bound == 0, ROUNDING * self.unit * self.level, bound)
+        bound = np.where(bound == 0, ROUNDING * self.unit * self.level, bound)
+        # tanh at x = 19, with the derivative 1 - tanh²: some units in the last place of 1, and the same ones all around
+        size = np.abs(self.value)
+        drowned = (size <= DROWNED * self.unit * self.level) & (self.noise <= 4 * self.unit * size)
+        return np.where(drowned, np.maximum(bound, size), bound)
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -4,7 +4,7 @@ States: ``probe`` (three pairs) → ``low`` (a line or a parabola: two wider pai
 ``wide`` (five more pairs) → ``done``; from ``main`` also back to ``main`` on a smaller interval, or to ``ladder``.
 """
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -19,6 +19,8 @@ ROUNDING_MARGIN = 4.0
 AMPLIFIED_MARGIN = 1e3
 #: Coefficients left over are noise if they are not larger than this many times the noise that the ladder heard.
 HEARD_MARGIN = 6.0
+#: Noise that is no rounding (saws, cut-off digits) goes alike at neighbouring nodes: they are fewer samples than they seem.
+CORRELATED = 2.0
 SHRINKS_MOST = 4
 #: From the second half of the six coefficients of `probe` to the end of the fourteen of `main`, in halves of `probe`.
 FORESEEN_SPANS = 2.7
@@ -30,6 +32,8 @@ COARSE_BOUND = 1e-9
 #: A left-over tail below this share of the variation is a ripple: too fine to be what the function is about.
 RIPPLE = 1e-2
 
+#: What values look like at tiny steps when their last digits are cut off: they stay, or move by a whole digit.
+_CUT_OFF = (Nature.PLATEAU, Nature.STEEP, Nature.JUMP)
 REASONS = {
     Nature.KINK: "kink at the point: the slopes on both sides differ",
     Nature.JUMP: "jump at the point: the values on both sides differ",
@@ -98,6 +102,7 @@ class Track:
     tail: Array = field(default_factory=lambda: np.empty(0))
     ripple: BoolArray = field(default_factory=lambda: np.empty(0, bool))
     settled: float = 0.0
+    coarse_tail: Array = field(default_factory=lambda: np.empty(0))
     varied: Array = field(default_factory=lambda: np.zeros(0))
     heard: Array = field(default_factory=lambda: np.zeros(0))
     noisy: BoolArray = field(default_factory=lambda: np.zeros(0, bool))
@@ -170,7 +175,10 @@ class Track:
         still = (fits.variation[i] == 0) & (self.varied > AMPLIFIED_MARGIN * fits.floor[i]) & ~self.satisfied
         self.varied = np.maximum(self.varied, fits.variation[i])
         for output in np.flatnonzero(still):
-            self.reasons[int(output)] = REASONS[Nature.PLATEAU]
+            if self.coarse is not None and self.ripple[output]:
+                self._accept_noise(int(output))
+            else:
+                self.reasons[int(output)] = REASONS[Nature.PLATEAU]
         self.satisfied |= still
         if still.any() and self.satisfied.all():
             self.stage = "done"
@@ -218,12 +226,26 @@ class Track:
             self._restart(half * float(np.clip(ratio ** (1 / 13), 0.02, 0.7)))
         elif not self.laddered:
             self.coarse = _candidate(fits, i, half, fits.resolved[i])
+            self.coarse_tail = fits.tail[i]
             self.ripple = fits.tail[i] < RIPPLE * fits.variation[i]
             self.stage = "ladder"
         elif half > 1.5 * self.settled:
-            self._restart(max(half / 8, self.settled))
+            # Probably noise that the ladder missed, its few values falling on one digit; the finest interval will tell.
+            same = self._hears_the_same(fits, i, half)[waiting].all()
+            self._restart(self.settled if same else max(half / 8, self.settled))
         else:
+            for output in np.flatnonzero(self._hears_the_same(fits, i, half)):
+                self._accept_noise(int(output))
             self.stop(UNSETTLED)
+
+    def _hears_the_same(self, fits: Fit, i: int, half: float) -> BoolArray:
+        """Outputs whose left-over coefficients are as large on this interval as on the much wider one before the ladder.
+
+        Those of a smooth function, and of one with a kink, shrink with the interval; noise does not.
+        """
+        assert self.coarse is not None
+        narrower = 4 * half <= self.coarse.half
+        return ~self.satisfied & narrower & fits.flat[i] & (fits.tail[i] >= 0.5 * self.coarse_tail)
 
     # --- after the ladder ------------------------------------------------------------------------------------------
 
@@ -234,7 +256,7 @@ class Track:
         smaller = []
         for output in np.flatnonzero(~self.satisfied):
             nature = Nature(rungs.nature[i, output])
-            if nature == Nature.PLATEAU and self.ripple[output]:
+            if nature in _CUT_OFF and self.ripple[output]:
                 nature = Nature.NOISE  # digits that are cut off: steps much larger than they see through it
             if nature in REASONS:
                 self.reasons[int(output)] = REASONS[nature]
@@ -320,8 +342,9 @@ class Track:
             kept: list[Candidate] = []
             for one in ordered:
                 v, b = one.value[output], one.bound[output]
+                b = b * CORRELATED if self.noisy[output] else b
                 if np.isfinite(b) and all(abs(v - k.value[output]) <= b + k.bound[output] for k in kept):
-                    kept.append(one)
+                    kept.append(replace(one, bound=np.where(np.arange(m) == output, b, one.bound)))
             if kept:
                 best = min(kept, key=lambda candidate: float(candidate.bound[output]))
                 value[output], bound[output] = best.value[output], best.bound[output]
@@ -341,7 +364,7 @@ class Track:
             return
         apart = abs(coarse.value[output] - value[output])
         if self.ripple[output] and apart > bound[output] + coarse.bound[output]:
-            bound[output] += apart
+            bound[output] = max(bound[output], coarse.bound[output]) + apart
             self.reasons.setdefault(output, RIPPLED)
 
 

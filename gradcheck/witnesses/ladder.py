@@ -62,7 +62,9 @@ class Rungs:
     slope_error: Array
 
 
-def read_ladder(steps: Array, up: Array, down: Array, centre: Array, one_sided: BoolArray, coarse_slope: Array) -> Rungs:
+def read_ladder(
+    steps: Array, up: Array, down: Array, centre: Array, one_sided: BoolArray, coarse_slope: Array
+) -> Rungs:
     """Tell the natures apart.
 
     Parameters
@@ -89,7 +91,7 @@ def read_ladder(steps: Array, up: Array, down: Array, centre: Array, one_sided: 
     nature = np.full(noise.shape, Nature.SMOOTH, dtype=np.int8)
     unchanged = (up == centre) & (down == centre)
     expected = np.abs(coarse_slope)[:, None, :] * h
-    plateau = unchanged[:, :2].all(axis=1) & (expected[:, 1] > 8 * spacing)
+    plateau = unchanged[:, 0] & (expected[:, 0] > 8 * spacing)
     # Thresholds rest on rounding, not on `noise`: a jump or a kink is itself a second difference that does not vanish.
     rounding = np.broadcast_to(floor[:, None, :], second.shape)
     gap = np.abs(up - down - 2 * h * coarse_slope[:, None, :])

@@ -1,8 +1,8 @@
 """Weights of finite-difference formulas on nodes of any spacing, and what such a formula leaves out.
 
 A derivative of order m is approximated by Σ w_i·f(x_i), exactly for polynomials of a degree below the number of nodes.
-The steps of the other witnesses rest on fits; these weights are for formulas with a name: the centred and one-sided ones of
-the handbooks, and what a user's own stencil amounts to.
+The steps of the other witnesses rest on fits; these weights are for formulas with a name, the centred and one-sided ones
+of the handbooks, and what a user's own stencil amounts to.
 """
 
 from math import factorial
@@ -33,8 +33,8 @@ def derivative_weights(nodes: Any, at: float = 0.0, order: int = 1) -> Array:
     Returns
     -------
     ndarray, shape (k,)
-        In the order of `nodes`, read-only; unit of x to the power −m. On whole-number nodes each weight is right to a few
-        units in its last place (measured up to 20 nodes).
+        In the order of `nodes`, read-only; unit of x to the power −m. On whole-number nodes each weight is right to a
+        few units in its last place (measured up to 20 nodes).
 
     Raises
     ------
@@ -45,8 +45,8 @@ def derivative_weights(nodes: Any, at: float = 0.0, order: int = 1) -> Array:
     Notes
     -----
     B. Fornberg, "Generation of finite difference formulas on arbitrarily spaced grids", Math. Comp. 51 (1988) 699-706.
-    The noise of the values is amplified by the Euclidean norm of the weights at most (independent errors), or by
-    Σ|w_i| (errors that conspire).
+    Errors of the values come through multiplied by the Euclidean norm of the weights if they are independent, and by no
+    more than Σ|w_i| whatever they are.
 
     Examples
     --------
@@ -99,22 +99,22 @@ def leading_error(nodes: Any, at: float = 0.0, order: int = 1) -> tuple[int, flo
     return k, 0.0
 
 
-def _validated(nodes: Any, at: float, order: int) -> tuple[Array, int]:
+def _validated(nodes: Any, at: float, order: Any) -> tuple[Array, int]:
     places = np.asarray(nodes, dtype=float)
     if places.ndim != 1:
         raise UsageError(f"nodes has shape {places.shape}; give a vector of places")
     if not np.isfinite(places).all() or not np.isfinite(at):
         raise UsageError(f"nodes {places.tolist()} and at={at!r} must be finite numbers")
-    if isinstance(order, bool) or int(order) != order or order < 0:
+    if isinstance(order, bool) or not isinstance(order, int | np.integer) or order < 0:
         raise UsageError(f"order is {order!r}; the order of a derivative is a whole number >= 0")
     if places.size <= order:
         raise UsageError(
-            f"{places.size} nodes cannot give a derivative of order {order}; give {int(order) + 1} or more"
+            f"{places.size} nodes cannot give a derivative of order {order}; give {int(order) + 1} nodes or more"
         )
-    ordered = np.sort(places)
-    repeated = ordered[1:][np.diff(ordered) == 0]
+    away = np.sort(places - at)
+    repeated = away[1:][np.diff(away) == 0]
     if repeated.size:
-        raise UsageError(f"the node {float(repeated[0])!r} stands more than once; give different nodes")
+        raise UsageError(f"the node {float(repeated[0]) + at!r} stands more than once; give different nodes")
     return places, int(order)
 
 
