@@ -203,7 +203,9 @@ def _complaint(each: Told) -> str:
 
 
 def _places(marks: np.ndarray) -> str:
-    return ", ".join(str(tuple(map(int, place))) if place.size > 1 else str(int(place[0])) for place in np.argwhere(marks))
+    return ", ".join(
+        str(tuple(map(int, place))) if place.size > 1 else str(int(place[0])) for place in np.argwhere(marks)
+    )
 
 
 def run(points: int, seed: int = 0) -> str:

@@ -140,7 +140,13 @@ def audit(
     except ModelFailure as error:
         audit_.findings.append(start_failure(subject, error))
         return _concluded(audit_, began, accept, evaluable=False)
-    audit_.run(centres, more)
+    try:
+        audit_.run(centres, more)
+    except KeyboardInterrupt as interrupt:
+        # Whoever catches it can still show what was found.
+        audit_.interrupted = True
+        interrupt.found = _concluded(audit_, began, accept, evaluable=True)  # type: ignore[attr-defined]
+        raise
     return _concluded(audit_, began, accept, evaluable=True)
 
 
@@ -157,6 +163,7 @@ class _Audit:
     steps: list[Steps] = field(default_factory=list)
     scaling: Scaling | None = None
     largest: float = 0.0
+    interrupted: bool = False
     not_looked_at: list[str] = field(default_factory=list)
 
     @property
@@ -259,9 +266,11 @@ class _Audit:
         room = room_along(subject.start, columns, subject.domain)
         reach = np.minimum(room.below, room.above)
         inquiry = complex_step(subject.start, columns, centre.size, scale=room.scale, f0=centre, reach=reach)
+        refused = self.session.ledger.refused
         testimony, asked = self.ask(name, counted(inquiry))
         self._record(name, testimony, asked, "complex")
-        self.findings += complex_unsafe(subject, name, testimony)
+        if self.session.ledger.refused == refused:
+            self.findings += complex_unsafe(subject, name, testimony)
         for source in AD_SOURCES:
             if importlib.util.find_spec(source) is None:
                 continue
@@ -403,9 +412,11 @@ def _concluded(audit_: _Audit, began: float, accept: Mapping[str, str] | None, *
         largest=audit_.largest,
         seconds_per_evaluation=each,
     )
-    complete = ledger.refused == 0
+    complete = ledger.refused == 0 and not audit_.interrupted
     left_out = list(audit_.not_looked_at)
-    if not complete:
+    if audit_.interrupted:
+        left_out.insert(0, "whatever was still to come when the audit was interrupted")
+    if ledger.refused:
         left_out.insert(0, f"{count(ledger.refused, 'evaluation')} that the budget or the time did not allow")
     report = AuditReport(
         name=subject.name,

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from gradcheck.problem.subject import Subject
+from gradcheck.records.arrays import Array
 from gradcheck.records.advice import Advice, Family
 from gradcheck.records.finding import Finding, FindingCode, Severity
 from gradcheck.records.report import CheckReport, Scaling, Steps, WitnessRecord
@@ -171,19 +172,18 @@ def _tolerances(evidence: Evidence) -> dict[str, float]:
 def _snippet(evidence: Evidence) -> str:
     """Steps, scaling and tolerances as Python to paste."""
     lines = []
-    names = ", ".join(evidence.subject.names[:50])
     if evidence.scaling is not None:
-        lines += [f"# divide the variables ({names}) by", f"scale = {_row(evidence.scaling.variables)}"]
+        lines += _table("scale", "divide each variable by", evidence.scaling.names, evidence.scaling.variables)
     for steps in evidence.steps[:1]:
-        lines += [
-            f"# steps for differences of {steps.function} along {', '.join(steps.names[:50])}",
-            f"forward_steps = {_row(steps.forward)}",
-            f"central_steps = {_row(steps.central)}",
-        ]
+        what = f"differences of {steps.function}"
+        lines += _table("forward_steps", f"steps for forward {what}", steps.names, steps.forward)
+        lines += _table("central_steps", f"steps for central {what}", steps.names, steps.central)
     for name, value in _tolerances(evidence).items():
         lines.append(f"{name} = {value:.1e}  # stop no finer")
     return "\n".join(lines)
 
 
-def _row(values: np.ndarray[tuple[int, ...], np.dtype[np.float64]]) -> str:
-    return "[" + ", ".join(f"{value:.3g}" for value in values) + "]"
+def _table(name: str, comment: str, names: Sequence[str], values: Array) -> list[str]:
+    """A dict of one line a variable, so that nobody has to count positions."""
+    rows = [f"    {variable!r}: {value:.3g}," for variable, value in zip(names, values, strict=True)]
+    return [f"{name} = {{  # {comment}", *rows, "}"]

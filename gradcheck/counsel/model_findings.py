@@ -38,7 +38,8 @@ def start_failure(subject: Subject, error: ModelFailure) -> Finding:
 
 def unrepeatable(subject: Subject, function: str, seen: Repeatability) -> list[Finding]:
     """Values at one point that differ from call to call."""
-    at_once, later = float(np.nanmax(seen.at_once)), float(np.nanmax(seen.after_others))
+    # NaN where the budget refused the repetition: nothing was learned, so nothing is said.
+    at_once, later = (float(np.nan_to_num(part).max()) for part in (seen.at_once, seen.after_others))
     if at_once == 0 and later == 0:
         return []
     hidden = at_once == 0

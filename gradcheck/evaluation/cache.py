@@ -9,15 +9,19 @@ from gradcheck.evaluation.calls import REFUSED, Call, Engine, Outcome
 
 #: Points longer than this many bytes are remembered by their digest only.
 _LONG = 256
-#: Outcomes kept; beyond it new ones are simply not remembered.
-_MOST = 200_000
+#: Bytes of outcomes kept; beyond it new ones are simply not remembered.
+_MOST_BYTES = 256_000_000
+#: What one outcome takes beside its values: key, objects, dictionary.
+_OVERHEAD = 1_000
 
 
 def cached(engine: Engine) -> Engine:
     """`engine` with a memory of its outcomes; calls marked fresh are always made (and not remembered)."""
     memory: dict[tuple[Any, ...], Outcome] = {}
+    held = 0
 
     def recall(calls: Sequence[Call]) -> list[Outcome]:
+        nonlocal held
         keys = [_key(call) for call in calls]
         # Of equal calls in one batch only the first is made.
         first = {key: i for i, key in reversed(list(enumerate(keys))) if not calls[i].fresh}
@@ -31,8 +35,9 @@ def cached(engine: Engine) -> Engine:
         for i, key in enumerate(keys):
             if i in made:
                 outcome = made[i]
-                if not calls[i].fresh and outcome is not REFUSED and len(memory) < _MOST:
+                if not calls[i].fresh and outcome is not REFUSED and held < _MOST_BYTES:
                     memory[key] = replace(outcome, spent=0)
+                    held += _OVERHEAD + sum(values.nbytes for values in outcome.values.values())
             else:
                 outcome = memory[key] if key in memory else replace(made[first[key]], spent=0)
             outcomes.append(outcome)

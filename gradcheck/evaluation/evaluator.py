@@ -4,6 +4,7 @@ import time
 import traceback
 import warnings
 from collections.abc import Callable, Sequence
+from contextlib import AbstractContextManager, nullcontext
 from typing import Any
 
 import numpy as np
@@ -39,6 +40,7 @@ class Evaluator:
         self.subject = subject
         self.ledger = ledger
         self.shapes: dict[str, tuple[int, ...]] = {}
+        self.double: set[str] = set()
 
     def __call__(self, calls: Sequence[Call]) -> list[Outcome]:
         with warnings.catch_warnings(), np.errstate(all="ignore"):
@@ -64,7 +66,7 @@ class Evaluator:
         if call.arithmetic == "complex":
             result = complex_numbers.call(function, self.subject.layout, call.point)
         else:
-            result, mutated = real.call(function, self.subject.layout, call.point)
+            result, mutated = self._real_call(call.run, function, call.point)
             if mutated:
                 self.ledger.mutated.add(call.run)
         values: dict[str, NDArray[Any]] = {}
@@ -82,6 +84,24 @@ class Evaluator:
                 message = message or "returned a value that is not finite"
                 self._record(target.name, call, status[target.name], message)
         return Outcome(values=values, status=status, message=message)
+
+    def _real_call(self, run: str, function: Callable[..., Any], point: Array) -> tuple[Any, bool]:
+        with self._scope(run):
+            result, mutated = real.call(function, self.subject.layout, point)
+        if run in self.double or not real.is_single_precision_jax(result):
+            return result, mutated
+        # Seven digits show little of a derivative; jax models are called in double precision, in a scope of their own.
+        self.double.add(run)
+        self.ledger.notices.append(f"{run} is a jax model in single precision; it was evaluated in double precision")
+        self.ledger.calls["model"] += 1
+        return self._real_call(run, function, point)
+
+    def _scope(self, run: str) -> AbstractContextManager[Any]:
+        if run not in self.double:
+            return nullcontext()
+        from gradcheck.evaluation.arithmetic.with_jax import double_precision
+
+        return double_precision()
 
     def _output(self, call: Call, target: Target, result: Any) -> tuple[NDArray[Any], Status]:
         array: NDArray[Any]
@@ -117,7 +137,8 @@ class Evaluator:
         kind = call.source.partition(":")[2]
         claim = target.claims[kind]
         if callable(claim):
-            claim, mutated = real.call(claim, self.subject.layout, call.point)
+            with self._scope(target.run):
+                claim, mutated = real.call(claim, self.subject.layout, call.point)
             if mutated:
                 self.ledger.mutated.add(f"{kind} of {target.name}")
         return claim_matrix(kind, claim, self.subject.layout, self.shapes[target.name])

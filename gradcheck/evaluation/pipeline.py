@@ -1,7 +1,8 @@
 """The layers between a gate and the user's functions, and their order."""
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from itertools import islice
 from typing import Any
 
 import numpy as np
@@ -16,6 +17,9 @@ from gradcheck.evaluation.ledger import Ledger
 from gradcheck.evaluation.protocol import Gate, Reply, Request, Status, points_of
 from gradcheck.problem.subject import Subject
 from gradcheck.records.arrays import Array
+
+#: Points handed to the layers at once take about so much memory.
+BATCH_BYTES = 32_000_000
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -101,11 +105,11 @@ def gate_over(engine: Engine, subject: Subject, evaluator: Evaluator) -> Gate:
     """The gate: requests in, one call per point (one per sweep for AD), replies out."""
 
     def gate(requests: Sequence[Request]) -> list[Reply]:
-        batches = [_calls_of(request, subject) for request in requests]
-        outcomes = list(engine([call for batch in batches for call in batch]))
+        calls = (call for request in requests for call in _calls_of(request, subject))
+        outcomes = _in_batches(engine, calls, subject.layout.size)
         replies = []
-        for request, batch in zip(requests, batches, strict=True):
-            own, outcomes = outcomes[: len(batch)], outcomes[len(batch) :]
+        for request in requests:
+            own = list(islice(outcomes, _count_of(request)))
             width = int(np.prod(evaluator.shapes.get(request.function, (1,)), dtype=int))
             replies.append(_reply(request, own, width, subject.layout.size))
         return replies
@@ -113,28 +117,38 @@ def gate_over(engine: Engine, subject: Subject, evaluator: Evaluator) -> Gate:
     return gate
 
 
-def _calls_of(request: Request, subject: Subject) -> list[Call]:
+def _in_batches(engine: Engine, calls: Iterator[Call], size: int) -> Iterator[Outcome]:
+    """Outcomes of all calls, made in batches: a request may stand for more points than fit into the memory."""
+    most = max(64, BATCH_BYTES // (8 * size))
+    while batch := list(islice(calls, most)):
+        yield from engine(batch)
+
+
+def _count_of(request: Request) -> int:
+    return request.offsets.size if request.source == "model" else 1
+
+
+def _calls_of(request: Request, subject: Subject) -> Iterator[Call]:
     run = subject.targets[request.function].run
     if request.source == "model":
-        return [
-            Call(run=run, point=point, arithmetic=request.arithmetic, level=request.level, fresh=request.fresh)
-            for row in range(len(request.directions))
-            for point in points_of(request, row)
-        ]
+        for row in range(len(request.directions)):
+            for point in points_of(request, row):
+                yield Call(
+                    run=run, point=point, arithmetic=request.arithmetic, level=request.level, fresh=request.fresh
+                )
+        return
     rows = None
     if not request.source.startswith("claim:"):
         rows = _rows_of(request, subject.layout.size)
-    return [
-        Call(
-            run=run,
-            function=request.function,
-            point=np.array(request.base, dtype=float),
-            arithmetic=request.arithmetic,
-            source=request.source,
-            fresh=request.fresh,
-            rows=rows,
-        )
-    ]
+    yield Call(
+        run=run,
+        function=request.function,
+        point=np.array(request.base, dtype=float),
+        arithmetic=request.arithmetic,
+        source=request.source,
+        fresh=request.fresh,
+        rows=rows,
+    )
 
 
 def _rows_of(request: Request, size: int) -> NDArray[Any]:

@@ -43,19 +43,21 @@ def hidden_jumps(t: Array, f: Array, noise: Array, tolerance: Array) -> Array:
     if t.size < 2:
         return bound
     blur = np.maximum(noise[:-1], noise[1:])
-    audible = np.maximum(0.3 * tolerance, WEAKEST_VIEW * blur)
+    audible = _windows(np.maximum(0.3 * tolerance, WEAKEST_VIEW * blur))
+    values, noises = _windows(f), _windows(noise)
+    # Weights add up to zero only up to rounding; an offset of the values would be multiplied with that.
+    values = values - values[:, :1]
     lower: Array | None = None
     for order, weights in difference_weights(t):
-        jump, unsure = _jumps_by_window(weights, f, noise, order)
+        count = weights.shape[0]
+        jump, unsure = _jumps_by_window(weights, values[:count, : order + 1], noises[:count, : order + 1])
         seen = jump
         if lower is not None:
             # A difference vanishes by accident, such as an odd one on a symmetric feature; those inside it do not.
             seen = jump.copy()
             seen[:, :-1] = np.maximum(seen[:, :-1], lower[:-1])
             seen[:, 1:] = np.maximum(seen[:, 1:], lower[1:])
-        heard = unsure <= sliding_window_view(audible, order)
-        seen = np.where(heard, seen, np.inf)
-        count = seen.shape[0]
+        seen = np.where(unsure <= audible[:count, :order], seen, np.inf)
         for column in range(order):
             part = bound[column : column + count]
             np.minimum(part, seen[:, column], out=part)
@@ -63,12 +65,15 @@ def hidden_jumps(t: Array, f: Array, noise: Array, tolerance: Array) -> Array:
     return bound
 
 
-def _jumps_by_window(weights: Array, f: Array, noise: Array, order: int) -> tuple[Array, Array]:
+def _windows(values: Array) -> Array:
+    """(k, 10): from each entry to the ninth behind it; past the end stands NaN, which no order reads."""
+    return sliding_window_view(np.append(values, np.full(ORDERS.stop - 1, np.nan)), ORDERS.stop)
+
+
+def _jumps_by_window(weights: Array, values: Array, noise: Array) -> tuple[Array, Array]:
     """(windows, order) twice: the jump that each window allows in each of its cells, and the noise therein."""
-    values = sliding_window_view(f, order + 1)
-    # Weights add up to zero only up to rounding; an offset of the values would be multiplied with that.
-    weighted = weights * (values - values[:, :1])
-    blur = weights * sliding_window_view(noise, order + 1)
+    weighted = weights * values
+    blur = weights * noise
     amplitude = NOISE_SIGMAS * np.sqrt((blur * blur).sum(axis=1))
     amplitude += 4.0 * EPSILON * np.sqrt((weighted * weighted).sum(axis=1))
     excess = np.maximum(np.abs(weighted.sum(axis=1)) - amplitude, 0.0)
@@ -81,13 +86,12 @@ def difference_weights(t: Array) -> Iterator[tuple[int, Array]]:
 
     Each order follows from the one before: 1/Π(tᵢ − tⱼ) gains a factor, and the new node's own product is added.
     """
+    nodes = _windows(t)
     weights = np.ones((t.size, 1))
-    for order in range(1, ORDERS.stop):
-        if t.size <= order:
-            return
-        nodes = sliding_window_view(t, order + 1)
-        apart = nodes[:, :-1] - nodes[:, -1:]
+    for order in range(1, min(ORDERS.stop, t.size)):
+        count = t.size - order
+        apart = nodes[:count, :order] - nodes[:count, order : order + 1]
         own = (-1.0) ** order / apart.prod(axis=1)
-        weights = np.concatenate([weights[: len(nodes)] / apart, own[:, None]], axis=1)
+        weights = np.concatenate([weights[:count] / apart, own[:, None]], axis=1)
         if order in ORDERS:
             yield order, weights / np.abs(weights).max(axis=1, keepdims=True)

@@ -27,7 +27,7 @@ CURVATURE_EXPONENTS = (1.3, 2.8)  # the third derivative of a C2 spline breaks w
 CLOSER = 30.0
 APART = 4.0  # least ratio of two distances at which the change is compared, where there is room for both
 JUMP_SIGMAS = 30.0
-JUMP_SHARE = 0.5  # of the gap first seen
+JUMP_SHARE = 0.5  # of the gap between the predictions
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -67,7 +67,7 @@ def _jump(
     _, (before, after) = samples.at(np.array([suspect.lower, suspect.upper]), focus.output)
     height = float(after - before)
     noise = max(focus.sigma, 0.3 * EPSILON * max(abs(before), abs(after)))
-    if abs(height) < max(JUMP_SHARE * float(np.abs(suspect.first.gap).min()), JUMP_SIGMAS * noise):
+    if abs(height) < max(JUMP_SHARE * float(np.abs(suspect.clear.gap).min()), JUMP_SIGMAS * noise):
         return samples, None
     distance = 4.0 * max(suspect.upper - suspect.lower, focus.closest(suspect.upper))
     asked = np.concatenate([suspect.lower - distance * PLACES, suspect.upper + distance * PLACES])

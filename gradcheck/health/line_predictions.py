@@ -113,9 +113,10 @@ def extrapolated(z: Array, y: Array, noise: Array, count: IntArray, x: Array) ->
     size = np.abs(terms)
     doubt = size[:, :, 1:] + 0.1 * size[:, :, :-1] + NOISE_SIGMAS * np.abs(blur[:, :, 2:])
     doubt = np.where(orders[2:] < count[:, None, None], doubt, np.inf)
-    best = doubt.argmin(axis=2)[:, :, None]
-    value = np.take_along_axis(np.cumsum(terms, axis=2), best + 1, axis=2)[:, :, 0]
-    return Prediction(value=value + y[:, :1], doubt=np.take_along_axis(doubt, best, axis=2)[:, :, 0])
+    best = doubt.argmin(axis=2)
+    row, column = np.indices(best.shape)
+    value = np.cumsum(terms, axis=2)[row, column, best + 1] + y[:, :1]
+    return Prediction(value=value, doubt=doubt[row, column, best])
 
 
 def _difference_weights(z: Array) -> Array:

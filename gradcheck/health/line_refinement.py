@@ -4,9 +4,9 @@ import numpy as np
 
 from gradcheck.health.line_confirmation import confirmed
 from gradcheck.health.line_descent import descended
-from gradcheck.health.line_focus import NARROWEST, Focus, Ledger, Survey, surveyed
+from gradcheck.health.line_focus import GRAINS_BETWEEN_SAMPLES, NARROWEST, Focus, Ledger, Survey, surveyed
 from gradcheck.health.line_samples import Quest, Samples
-from gradcheck.health.line_zoom import suspicion, zoomed
+from gradcheck.health.line_zoom import JUMP_WIDTH, suspicion, zoomed
 from gradcheck.records.arrays import Array, BoolArray
 
 DEEP = 1.0 / 64.0  # of a cell of the grid: what is not clean then is steep, or no polynomial
@@ -14,7 +14,8 @@ MOST_DISAPPOINTMENTS = 3  # zooms in a row that found nothing
 FEWEST_CELLS = 8
 MOST_HALVED = 8  # cells a round
 MOST_CELLS = 64  # a grid that is doubled once has this many
-SPOTS = 3  # places of an unresolvable line that are looked at closely
+MANY_CELLS = 160  # even if each doubling helps
+NEARLY_CLEAN = 3.0  # expected excess over the tolerance for which a doubling is worth its price
 DEEPEST = 6  # spots within spots
 
 
@@ -25,30 +26,40 @@ def refined(
 
     After some suspicions that came to nothing, something else is tried first: near a cusp every cell is suspicious.
     """
-    disappointments = 0
+    disappointments, excess = 0, np.inf
     while not ledger.full:
         survey = surveyed(samples, focus, ledger, lower, upper, to_the_noise=depth < 0)
-        bad = _worth_refining(survey, focus, ledger)
-        if not bad.any():
-            return samples
-        suspect = _strongest(survey, bad, ledger) if disappointments < MOST_DISAPPOINTMENTS else None
-        deep = _deepest(survey, bad, focus, ledger) if depth >= 0 else None
+        rough = _rough(survey, focus, ledger)
+        bad = rough & (survey.width > NARROWEST)
+        suspect = _strongest(survey, rough, ledger) if disappointments < MOST_DISAPPOINTMENTS else None
+        deep = _deepest(survey, bad, focus, ledger) if depth >= 0 and bad.any() else None
         if suspect is not None:
             samples, dismissed = yield from _examined(samples, focus, ledger, suspect)
             disappointments += dismissed
             continue
+        if not bad.any():
+            return samples
         disappointments = 0
         if deep is not None:
             samples = yield from _followed_down(samples, focus, ledger, deep)
         elif bad.size < FEWEST_CELLS:
             samples = yield _filled(survey, focus)
-        elif bad.mean() <= 0.5:
+        elif survey.width[bad].sum() <= 0.5 * survey.width.sum():
             samples = yield _halves(survey, bad, focus)
-        elif depth == 0 and bad.size < MOST_CELLS:
-            samples = yield _halves(survey, np.ones_like(bad), focus, most=MOST_CELLS)
+        elif depth == 0 and _worth_doubling(survey, bad, excess):
+            excess = float(np.median(survey.excess[bad]))
+            samples = yield _halves(survey, bad, focus, most=bad.size)
         else:
             return (yield from _spots(samples, focus, ledger, survey, bad, depth))
     return samples
+
+
+def _worth_doubling(survey: Survey, bad: BoolArray, before: float) -> bool:
+    """Whether halving all bad cells once more is likely to clean them: the grid's first time, or a good trend since."""
+    if survey.cell.size < MOST_CELLS:
+        return True
+    excess = float(np.median(survey.excess[bad]))
+    return survey.cell.size < MANY_CELLS and excess * (excess / before) < NEARLY_CLEAN
 
 
 def looked_at_to_the_noise(
@@ -65,11 +76,12 @@ def looked_at_to_the_noise(
     return (yield from refined(samples, focus, ledger, *ends, depth=-1))
 
 
-def _worth_refining(survey: Survey, focus: Focus, ledger: Ledger) -> BoolArray:
+def _rough(survey: Survey, focus: Focus, ledger: Ledger) -> BoolArray:
+    """(c,): cells that are not clean and not too narrow to be looked into."""
     if survey.cell.size == 0:
         return np.zeros(0, dtype=bool)
     left = survey.view.t[survey.cell]
-    narrowest = np.maximum(NARROWEST, 32.0 * focus.line.grain(left))
+    narrowest = np.maximum(2.0 * JUMP_WIDTH, 4.0 * GRAINS_BETWEEN_SAMPLES * focus.line.grain(left))
     rough = (survey.hidden > survey.tolerance) & (survey.width > narrowest)
     return np.asarray(rough & ~ledger.in_a_shadow(left))
 
@@ -139,15 +151,14 @@ def _filled(survey: Survey, focus: Focus) -> Array:
 def _spots(
     samples: Samples, focus: Focus, ledger: Ledger, survey: Survey, bad: BoolArray, depth: int
 ) -> Quest[Samples]:
-    """Look closely at the worst cell, and at the first level at others too."""
+    """Look closely at the roughest cell, and at the first level also at the one that hides most, and at any."""
     if abs(depth) >= DEEPEST:
         return samples
-    index = np.flatnonzero(bad)
-    count = SPOTS if depth == 0 else 1
-    worst = survey.roughest(bad)
-    others = focus.rng.permutation(index[index != worst])[: count - 1]
+    chosen = [survey.roughest(bad)]
+    if depth == 0:
+        chosen += [int(np.where(bad, survey.excess, 0.0).argmax()), int(focus.rng.choice(np.flatnonzero(bad)))]
     deeper = depth + 1 if depth >= 0 else depth - 1
-    for cell in (worst, *others):
+    for cell in dict.fromkeys(chosen):
         left = survey.cell[cell]
         ends = float(survey.view.t[left]), float(survey.view.t[left + 1])
         samples = yield from refined(samples, focus, ledger, *ends, depth=deeper)

@@ -1,6 +1,7 @@
 """Nested inputs <-> one vector (n,), with a readable name for every entry."""
 
 import inspect
+import math
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field
 from typing import Any
@@ -68,7 +69,7 @@ class Leaf:
 
     @property
     def stop(self) -> int:
-        return self.start + int(np.prod(self.shape, dtype=int))
+        return self.start + math.prod(self.shape)
 
     def restore(self, vector: Array) -> Any:
         """The model's own copy of this part."""

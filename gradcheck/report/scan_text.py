@@ -42,9 +42,12 @@ def _best(scan: Scan) -> str:
     if not (math.isfinite(scan.best_step) and scan.steps.size):
         return "No step gives a finite difference quotient."
     nearest = int(np.argmin(np.abs(scan.steps - scan.best_step)))
+    # One quotient may be right by luck: its neighbours say what the step is worth.
+    beside = scan.errors[max(0, nearest - 1) : nearest + 2]
+    left = float(np.nanmax(beside)) if np.isfinite(beside).any() else math.nan
     return (
         f"Best step for a central difference: {wording.number(scan.best_step, 2)}, "
-        f"which leaves an error of about {wording.number(float(scan.errors[nearest]), 2)}."
+        f"which leaves an error of about {wording.number(left, 2)}."
     )
 
 

@@ -82,8 +82,8 @@ def automatic(
         ``bound = 64·u·Σ|terms| + 16·σ + gap``: u is 2⁻⁵³, or 2⁻²⁴ where the result shows single precision; the terms
         are those of the sum over variables, where reverse mode needs one, else the value alone; σ is the measured noise
         of the derivative; the gap is what sweeps were seen to differ by. Where the derivative is exactly 0, terms may
-        have been lost beside larger ones: the bound is then 64·u·|f| over the size of x; and where it is tiny and constant
-        beside this, it may be a remainder of such terms: the bound is then its own size. Infinite where the derivative
+        have been lost beside larger ones: the bound is then 64·u·|f| over the size of x. Where it is tiny beside this
+        and constant, it may be a remainder of such terms: the bound is then its own size. Infinite where the derivative
         is not finite at the point or beside it.
         ``works`` is False if both modes raise, or contradict each other. If one mode raises, the other speaks alone,
         and ``reason`` says so.
@@ -180,7 +180,7 @@ class _Found:
         bound = np.where(bound == 0, ROUNDING * self.unit * self.level, bound)
         # tanh at x = 19, with the derivative 1 - tanh²: some units in the last place of 1, and the same ones all around
         size = np.abs(self.value)
-        drowned = (size <= DROWNED * self.unit * self.level) & (self.noise <= 4 * self.unit * size)
+        drowned = (size <= DROWNED * self.unit * self.level) & (self.noise <= 16 * self.unit * size)
         return np.where(drowned, np.maximum(bound, size), bound)
 
 
@@ -331,8 +331,9 @@ def _level_of(places: Array, values: Array) -> tuple[Array, BoolArray]:
 def _scatter(places: Array, values: Array, degree: int) -> Array:
     """Standard deviation of values ``(k, ...)`` about a polynomial in `places`."""
     basis, _ = np.linalg.qr(np.vander(places, degree + 1))
-    rest = values - np.tensordot(basis @ basis.T, values, axes=1)
-    return np.asarray(np.sqrt((rest**2).sum(axis=0) / (places.size - degree - 1)))
+    with np.errstate(over="ignore", invalid="ignore"):  # derivatives of 1e160: the scatter is infinite or NaN then
+        rest = values - np.tensordot(basis @ basis.T, values, axes=1)
+        return np.asarray(np.sqrt((rest**2).sum(axis=0) / (places.size - degree - 1)))
 
 
 def _unit(span: _Span, mixed: dict[_Mode, Array]) -> Array:

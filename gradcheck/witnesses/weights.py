@@ -1,8 +1,8 @@
 """Weights of finite-difference formulas on nodes of any spacing, and what such a formula leaves out.
 
 A derivative of order m is approximated by Σ w_i·f(x_i), exactly for polynomials of a degree below the number of nodes.
-The steps of the other witnesses rest on fits; these weights are for formulas with a name, the centred and one-sided ones
-of the handbooks, and what a user's own stencil amounts to.
+The steps of the other witnesses rest on fits; these weights are for formulas with a name (the centred and one-sided
+ones of the handbooks) and for what a user's own stencil amounts to.
 """
 
 from math import factorial

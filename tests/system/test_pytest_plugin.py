@@ -702,10 +702,13 @@ def test_failed_models_run_again_with_last_failed(run) -> None:
 
 @pytest.mark.usefixtures("wing")
 def test_the_plain_command_finds_model_modules_in_the_root_directory(pytester, monkeypatch) -> None:
-    # `pytest`, unlike `python -m pytest`, does not put the current directory on the search path.
+    # `pytest`, unlike `python -m pytest` and runs in tests, does not put the current directory on the search path.
     monkeypatch.setenv("PYTEST_DISABLE_PLUGIN_AUTOLOAD", "1")
     monkeypatch.setenv("PYTHONPATH", str(ROOT))
-    command = "import sys; sys.path.remove(''); import pytest; sys.exit(pytest.main(sys.argv[1:]))"
+    command = (
+        "import os, sys; sys.path[:] = [path for path in sys.path if path not in ('', os.getcwd())]; "
+        "import pytest; sys.exit(pytest.main(sys.argv[1:]))"
+    )
     result = pytester.run(sys.executable, "-c", command, *PLUGIN)
 
     result.assert_outcomes(passed=2, failed=1)

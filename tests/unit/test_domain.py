@@ -48,7 +48,7 @@ def test_two_variables_with_pairs_in_a_list_are_read_as_pairs():
 
 
 def test_a_tuple_of_two_that_fits_only_one_way_is_read_that_way():
-    assert sides([0.5, 20.0], bounds=((0.0, 10.0), (1.0, 30.0))) == ([0, 10], [1, 30])
+    assert sides([5.0, 2.0], bounds=((0.0, 10.0), (1.0, 30.0))) == ([0, 1], [10, 30])
 
 
 def test_a_tuple_of_two_that_fits_both_ways_is_refused_with_the_mend():

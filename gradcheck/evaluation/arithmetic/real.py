@@ -25,10 +25,17 @@ def call(function: Callable[..., Any], layout: Layout, vector: Array) -> tuple[A
 
     positional, keywords = layout.arguments(copy)
     result = function(*positional, **keywords)
-    mutated = any(
-        not np.array_equal(np.ravel(part), vector[leaf.start : leaf.stop], equal_nan=True) for leaf, part in passed
-    )
+    mutated = any(not (part.ravel() == vector[leaf.start : leaf.stop]).all() for leaf, part in passed)
     return result, mutated
+
+
+def is_single_precision_jax(result: Any) -> bool:
+    """Whether a model returned jax arrays (or a nesting of them) in single precision, jax's choice unless told otherwise."""
+    if isinstance(result, list | tuple):
+        return any(is_single_precision_jax(part) for part in result)
+    if isinstance(result, dict):
+        return any(is_single_precision_jax(part) for part in result.values())
+    return type(result).__module__.startswith("jax") and getattr(result, "dtype", None) == np.float32
 
 
 def as_array(result: Any, who: str) -> np.ndarray[Any, Any]:

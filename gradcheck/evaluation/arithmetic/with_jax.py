@@ -52,7 +52,7 @@ def jvp(function: Callable[..., Any], layout: Layout, point: Array, tangents: ND
     -----
     Double precision holds in this thread and for this call only; the switch of the whole process is not touched.
     """
-    with _double_precision():
+    with double_precision():
         flat = _flat(function, layout)
         start = jnp.asarray(point, dtype=float)
         return _by_rows(lambda tangent: jax.jvp(flat, (start,), (tangent,))[1], tangents)
@@ -63,12 +63,13 @@ def vjp(function: Callable[..., Any], layout: Layout, point: Array, cotangents: 
 
     Everything else as in `jvp`.
     """
-    with _double_precision():
+    with double_precision():
         value, pull = jax.vjp(_flat(function, layout), jnp.asarray(point, dtype=float))
         return _by_rows(lambda cotangent: pull(cotangent.astype(value.dtype))[0], cotangents)
 
 
-def _double_precision() -> AbstractContextManager[Any]:
+def double_precision() -> AbstractContextManager[Any]:
+    """A scope in which jax computes in double precision; the user's own setting holds again after it."""
     if hasattr(jax, "enable_x64"):
         switch = jax.enable_x64
     else:  # before jax 0.8

@@ -1,0 +1,182 @@
+"""Kinks that everybody flies through: U.S. Standard Atmosphere, 1976 (NOAA, NASA, USAF), Tables 3 and 4.
+
+Table values typed from memory and recomputed with 40 digits from the constants; layers as in ISO 2533:1975.
+"""
+
+import numpy as np
+import pytest
+
+import gradcheck
+from tests.outside.asking import CONFIRMED, REFUTED, UNDECIDED, interval_of, places, report_on, verdict_on
+from tests.outside.atmosphere import (
+    BASES,
+    LAPSE_RATES,
+    TOP,
+    density,
+    geopotential,
+    gravity,
+    pressure,
+    pressure_slope,
+    temperature,
+)
+
+KINKS = BASES[1:]
+#: U.S. Standard Atmosphere (1976): pressure in Pa at the bases of the layers, as printed.
+PUBLISHED_PRESSURES = {0.0: 101325.0, 11e3: 22632.06, 20e3: 5474.889, 32e3: 868.0187, 47e3: 110.9063}
+#: Inside the layers, with 40 digits: H in m, T in K, p in Pa, dp/dH in Pa/m.
+INSIDE = [
+    (5000.0, 255.65, 54019.9121037621, -7.21882564771834),
+    (15000.0, 216.65, 12044.5708624232, -1.89928926788947),
+    (25000.0, 221.65, 2511.02335325259, -0.387027204171403),
+    (40000.0, 251.05, 277.521554012951, -0.0377654765714716),
+]
+#: Geometric altitudes of the bases, m.
+GEOMETRIC_KINKS = (11019.067832, 20063.1236817, 32161.903223, 47350.0922221)
+SPANS = [(0.0, TOP), (-1000.0, TOP), (0.0, 50000.0), (2000.0, 49000.0)]
+
+
+def half_digit(printed: float) -> float:
+    """Half a unit of the last place of seven significant digits."""
+    return 0.5 * 10.0 ** (np.floor(np.log10(printed)) - 6)
+
+
+# --- the model ---------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("height", PUBLISHED_PRESSURES)
+def test_pressures_at_the_bases_are_those_of_the_table(height):
+    printed = PUBLISHED_PRESSURES[height]
+
+    assert abs(pressure(height) - printed) <= half_digit(printed)
+
+
+@pytest.mark.parametrize(("height", "kelvin", "pascal", "slope"), INSIDE)
+def test_values_inside_the_layers_are_those_computed_with_forty_digits(height, kelvin, pascal, slope):
+    assert temperature(height) == pytest.approx(kelvin, rel=1e-14)
+    assert pressure(height) == pytest.approx(pascal, rel=1e-14)
+    assert pressure_slope(height) == pytest.approx(slope, rel=1e-14)
+
+
+# --- kinks -------------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(("lower", "upper"), SPANS)
+def test_the_kinks_of_the_temperature_are_found_at_the_bases_of_the_layers(lower, upper):
+    found = interval_of(temperature, lower, upper).of_kind("kink")
+
+    middles = places(found, lower, upper).mean(axis=1)
+    assert middles.tolist() == pytest.approx(KINKS, abs=1e-6 * (upper - lower))
+
+
+def test_an_audit_of_the_temperature_tells_its_kinks_with_places_and_slopes():
+    report = gradcheck.audit(temperature, at=15000.0, bounds=(0.0, TOP))
+
+    kinks = sorted((f for f in report.findings if f.code == "kink"), key=lambda f: f.where.lower)
+    told = [(f.where.lower + f.where.upper) / 2 for f in kinks]
+    # a report tells three of more places of one kind, and their number
+    assert len(told) >= 3
+    assert {f.evidence["places"] for f in kinks} == {len(KINKS)}
+    for finding, place in zip(kinks, told, strict=True):
+        nearest = int(np.argmin(np.abs(np.array(KINKS) - place)))
+        assert place == pytest.approx(KINKS[nearest], abs=1e-6 * TOP)
+        assert finding.evidence["left_slope"] == pytest.approx(LAPSE_RATES[nearest], rel=0.05, abs=1e-5)
+        assert finding.evidence["right_slope"] == pytest.approx(LAPSE_RATES[nearest + 1], rel=0.05, abs=1e-5)
+
+
+@pytest.mark.parametrize("height", KINKS)
+def test_the_mean_slope_at_a_kink_is_not_confirmed_although_every_central_difference_gives_it(height):
+    """The trap: (T(H + h) - T(H - h))/2h is the mean of both slopes for every step, and looks converged."""
+    i = BASES.index(height)
+    mean = (LAPSE_RATES[i - 1] + LAPSE_RATES[i]) / 2
+
+    report = report_on(temperature, height, gradient=np.array(mean))
+
+    assert report.verdict == UNDECIDED
+    assert [finding.code for finding in report.findings] == ["kink"]
+
+
+def test_the_two_slopes_at_eleven_kilometres_are_measured():
+    report = report_on(temperature, 11000.0, gradient=np.array(-0.0065 / 2))
+
+    evidence = report.findings[0].evidence
+    assert evidence["left_slope"] == pytest.approx(-0.0065, rel=1e-6)
+    assert evidence["right_slope"] == pytest.approx(0, abs=1e-9)
+
+
+@pytest.mark.parametrize("slope", [-0.0065, 0.0])
+def test_a_one_sided_slope_at_a_kink_is_left_undecided(slope):
+    assert verdict_on(temperature, 11000.0, slope) == UNDECIDED
+
+
+@pytest.mark.parametrize("slope", [-0.0066, 0.001])
+def test_a_slope_outside_the_two_at_a_kink_is_refuted(slope):
+    assert verdict_on(temperature, 11000.0, slope) == REFUTED
+
+
+@pytest.mark.parametrize("height", [10999.9, 11000.1])
+def test_close_to_a_kink_the_slope_of_the_own_side_is_confirmed(height):
+    assert verdict_on(temperature, height, -0.0065 if height < 11000 else 0.0) == CONFIRMED
+
+
+def test_the_kinks_of_the_density_are_found_too():
+    """At 11 km its slope jumps from -4.6467243494329e-5 to -5.73856166465336e-5 kg/m⁴ (40 digits)."""
+    found = interval_of(density, 0.0, TOP).of_kind("kink")
+
+    middles = places(found, 0.0, TOP).mean(axis=1)
+    assert middles.tolist() == pytest.approx(KINKS, abs=1e-6 * TOP)
+    assert found[0].left / TOP == pytest.approx(-4.6467243494329e-5, rel=0.05)
+    assert found[0].right / TOP == pytest.approx(-5.73856166465336e-5, rel=0.05)
+
+
+def test_in_geometric_altitude_the_kinks_do_not_sit_at_round_numbers():
+    found = interval_of(lambda altitude: temperature(geopotential(altitude)), 0.0, TOP).of_kind("kink")
+
+    assert places(found, 0.0, TOP).mean(axis=1).tolist() == pytest.approx(GEOMETRIC_KINKS, abs=1e-6 * TOP)
+
+
+# --- what is no kink ---------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(("lower", "upper"), SPANS)
+def test_the_pressure_has_no_kink_only_breaks_of_curvature_at_the_bases(lower, upper):
+    """p'' jumps by 23.5 % at 11 km, 2.9 % at 20 km, 5.1 % at 32 km and -7.6 % at 47 km."""
+    report = interval_of(pressure, lower, upper)
+
+    assert {str(found.kind) for found in report.irregularities} == {"curvature-break"}
+    for middle in places(report.irregularities, lower, upper).mean(axis=1):
+        assert np.abs(np.array(KINKS) - middle).min() <= 1e-6 * (upper - lower)
+
+
+@pytest.mark.parametrize(("height", "kelvin", "pascal", "slope"), INSIDE)
+def test_the_hydrostatic_law_is_confirmed_inside_the_layers(height, kelvin, pascal, slope):
+    assert report_on(pressure, height, gradient=pressure_slope).verdict == CONFIRMED
+    assert verdict_on(pressure, height, slope) == CONFIRMED
+
+
+@pytest.mark.parametrize("height", KINKS)
+def test_the_hydrostatic_law_is_not_refuted_where_the_curvature_breaks(height):
+    assert report_on(pressure, height, gradient=pressure_slope).verdict != REFUTED
+
+
+@pytest.mark.parametrize("height", [5000.0, 15000.0, 25000.0, 40000.0])
+def test_forgetting_that_the_temperature_varies_is_refuted_wherever_it_does(height):
+    """d rho/dH = -rho·(k + L)/T; without L it is right in the isothermal layer only: a claim right in one region."""
+    slope = -density(height) * 9.80665 * 28.9644 / 8314.32 / temperature(height)
+
+    assert verdict_on(density, height, slope) == (CONFIRMED if height == 15000 else REFUTED)
+
+
+@pytest.mark.parametrize(
+    ("altitude", "slope"), [(5000.0, -7.21054820379836), (30000.0, -0.178849991491567)], ids=["5 km", "30 km"]
+)
+def test_pressure_falls_with_the_local_weight_of_air_in_geometric_altitude(altitude, slope):
+    """dp/dZ = -rho·g(Z); values with 40 digits."""
+
+    def by_altitude(z):
+        return pressure(geopotential(z))
+
+    def weight(z):
+        return -density(geopotential(z)) * gravity(z)
+
+    assert weight(altitude) == pytest.approx(slope, rel=1e-13)
+    assert report_on(by_altitude, altitude, gradient=weight).verdict == CONFIRMED
