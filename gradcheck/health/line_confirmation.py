@@ -1,8 +1,8 @@
 """A suspicion is believed only if fresh samples at ever smaller distances show the same break.
 
-A rounded corner such as sqrt(x² + 1e-10) looks like a kink from afar: the change of its slope fades once the distance
-falls below the rounding. So the change of slope (or of curvature) must keep its size down to the distance at which noise
-drowns it.
+A rounded corner such as sqrt(x² + 1e-10) looks like a kink from afar: the change of its slope fades once the
+distance falls below the rounding. So the change of slope (or of curvature) must keep its size down to the distance
+at which noise drowns it.
 """
 
 from collections.abc import Callable
@@ -234,7 +234,7 @@ def _quadratic(t: Array, f: Array) -> Array:
 
 def _exponent_within(suspect: Suspect, sides: TwoSides, limits: tuple[float, float]) -> bool:
     """Whether |D| shrank from the first bracket to the last distance with an admissible power of the distance."""
-    value, slope, second = sides.change
+    _, slope, second = sides.change
     d = sides.distance
     gap = max(abs(sign * slope * d + 0.5 * second * d * d) for sign in (-1.0, 1.0))
     span = suspect.reach / d

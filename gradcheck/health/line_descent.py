@@ -1,8 +1,8 @@
 """Breaks that no polynomial foretells from either side: sqrt|x|, x·log x, max(0, x)^1.5.
 
-Second differences at spacing h shrink like h² where a function is smooth. Follow the place where they are largest, halving
-h each time: if they keep shrinking with a smaller power, that power is the nature of the break. Below 1 the slope is
-infinite there (reported as a kink), between 1 and 2 the second derivative is (reported as a curvature break).
+Second differences at spacing h shrink like h² where a function is smooth. Follow the place where they are largest,
+halving h each time: if they keep shrinking with a smaller power, that power is the nature of the break. Below 1 the
+slope is infinite there (reported as a kink), between 1 and 2 the second derivative is (reported as a curvature break).
 """
 
 from collections.abc import Sequence

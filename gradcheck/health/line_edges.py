@@ -7,7 +7,6 @@ import numpy as np
 from gradcheck.evaluation.protocol import Status
 from gradcheck.health.line_report import Irregularity
 from gradcheck.health.line_samples import Line, Quest, Samples
-from gradcheck.records.arrays import Array
 from gradcheck.records.finding import FindingCode
 
 EDGE_WIDTH = 1e-9  # in t
@@ -92,13 +91,3 @@ def _reason(samples: Samples, run: Run) -> FindingCode:
 def finite_stretches(samples: Samples, output: int) -> list[tuple[float, float]]:
     """Ends (lower, upper) of the runs of finite samples."""
     return [(float(samples.t[run.first]), float(samples.t[run.last])) for run in runs(samples, output) if run.finite]
-
-
-def near_an_edge(t: Array, samples: Samples, output: int, distance: float) -> Array:
-    """(k,) of bool: within `distance` of a sample without a finite value."""
-    bad = samples.t[~np.isfinite(samples.values[:, output])]
-    if bad.size == 0:
-        return np.zeros(t.size, dtype=bool)
-    right = np.clip(np.searchsorted(bad, t), 0, bad.size - 1)
-    left = np.maximum(right - 1, 0)
-    return np.asarray(np.minimum(np.abs(bad[right] - t), np.abs(t - bad[left])) < distance)

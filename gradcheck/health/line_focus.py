@@ -4,7 +4,7 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from gradcheck.health.line_cells import hidden_jumps, local_noise
+from gradcheck.health.line_cells import local_noise
 from gradcheck.health.line_predictions import SideView, whole
 from gradcheck.health.line_report import Irregularity
 from gradcheck.health.line_samples import Line, Samples
@@ -59,7 +59,7 @@ class Focus:
         return whole(t, f, local_noise(t, f, self.sigma, self.line.grain(t)))
 
     def tolerance(self, widths: Array) -> Array:
-        """What may hide in clean cells of these widths. It shrinks with the cell: a kink is as visible at every scale."""
+        """What may hide in clean cells of these widths; it shrinks with them, so that a kink is visible at every scale."""
         return np.asarray(CLEAN * self.scale * np.minimum(1.0, widths / self.cell))
 
 
@@ -116,79 +116,3 @@ class Ledger:
     def piece_around(self, cell: tuple[float, float]) -> tuple[float, float]:
         """The unbroken piece that holds a cell."""
         return next((a, b) for a, b in self.pieces(*self.stretch) if a <= cell[0] and cell[1] <= b)
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class Survey:
-    """The cells of a region, piece by piece.
-
-    Attributes
-    ----------
-    view : SideView
-        All samples, with the limits of their pieces.
-    cell : ndarray of int, shape (c,)
-        Index of the left sample of each cell.
-    width, hidden, tolerance : ndarray, shape (c,)
-    """
-
-    view: SideView
-    cell: Array
-    width: Array
-    hidden: Array
-    tolerance: Array
-
-    @property
-    def excess(self) -> Array:
-        """(c,): hidden jump over tolerance; a clean cell has at most 1."""
-        with np.errstate(divide="ignore", invalid="ignore"):
-            ratio = self.hidden / self.tolerance
-        return np.where(self.hidden <= self.tolerance, np.minimum(np.nan_to_num(ratio), 1.0), ratio)
-
-    def roughest(self, among: BoolArray) -> int:
-        """The one of these cells at whose ends the slope changes most: what may hide says little about where it hides."""
-        slope = (self.view.f[self.cell + 1] - self.view.f[self.cell]) / self.width
-        change = np.abs(np.diff(slope, prepend=slope[:1], append=slope[-1:]))
-        return int(np.where(among, change[:-1] + change[1:], -1.0).argmax())
-
-
-def surveyed(
-    samples: Samples, focus: Focus, ledger: Ledger, lower: float, upper: float, *, to_the_noise: bool = False
-) -> Survey:
-    """How clean the cells between `lower` and `upper` are.
-
-    With `to_the_noise` the tolerance is the noise itself, for regularities smaller than what matters on a line.
-    """
-    views = [focus.view(samples, a, b) for a, b in ledger.pieces(lower, upper)]
-    views = [view for view in views if view.t.size]
-    cells, hidden, tolerances, first, last, offset = [], [], [], [], [], 0
-    for view in views:
-        size = view.t.size
-        width = np.diff(view.t)
-        tolerance = focus.tolerance(width)
-        if to_the_noise:
-            tolerance = np.minimum(tolerance, 10.0 * np.maximum(view.noise[:-1], view.noise[1:]))
-        hidden.append(hidden_jumps(view.t, view.f, view.noise, tolerance))
-        tolerances.append(tolerance)
-        cells.append(np.arange(size - 1) + offset)
-        first.append(np.full(size, offset))
-        last.append(np.full(size, offset + size - 1))
-        offset += size
-    joined = SideView(
-        t=_joined([view.t for view in views]),
-        f=_joined([view.f for view in views]),
-        noise=_joined([view.noise for view in views]),
-        first=_joined(first).astype(np.intp),
-        last=_joined(last).astype(np.intp),
-    )
-    cell = _joined(cells).astype(np.intp)
-    return Survey(
-        view=joined,
-        cell=cell,
-        width=joined.t[cell + 1] - joined.t[cell] if cell.size else np.empty(0),
-        hidden=_joined(hidden),
-        tolerance=_joined(tolerances),
-    )
-
-
-def _joined(parts: list[Array]) -> Array:
-    return np.concatenate(parts) if parts else np.empty(0)

@@ -5,12 +5,13 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from gradcheck.health.line_edges import edges_located, finite_stretches, stretches
-from gradcheck.health.line_focus import Focus, Ledger, surveyed
+from gradcheck.health.line_focus import Focus, Ledger
 from gradcheck.health.line_noise import StencilReading
 from gradcheck.health.line_precision import Precision, measured
 from gradcheck.health.line_refinement import looked_at_to_the_noise, refined
 from gradcheck.health.line_report import Irregularity
 from gradcheck.health.line_samples import Line, Quest, Samples
+from gradcheck.health.line_survey import surveyed
 from gradcheck.records.arrays import Array
 from gradcheck.records.finding import FindingCode
 

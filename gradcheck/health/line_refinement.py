@@ -16,6 +16,7 @@ MOST_HALVED = 8  # cells a round
 MOST_CELLS = 64  # a grid that is doubled once has this many
 MANY_CELLS = 160  # even if each doubling helps
 NEARLY_CLEAN = 3.0  # expected excess over the tolerance for which a doubling is worth its price
+SPOTS = 6  # places of an unresolvable line that are looked at closely
 DEEPEST = 6  # spots within spots
 
 
@@ -151,14 +152,15 @@ def _filled(survey: Survey, focus: Focus) -> Array:
 def _spots(
     samples: Samples, focus: Focus, ledger: Ledger, survey: Survey, bad: BoolArray, depth: int
 ) -> Quest[Samples]:
-    """Look closely at the roughest cell, and at the first level also at the one that hides most, and at any."""
+    """Look closely at the roughest cell, and at the first level also at that which hides most and at random ones."""
     if abs(depth) >= DEEPEST:
         return samples
     chosen = [survey.roughest(bad)]
     if depth == 0:
-        chosen += [int(np.where(bad, survey.excess, 0.0).argmax()), int(focus.rng.choice(np.flatnonzero(bad)))]
+        others = focus.rng.permutation(np.flatnonzero(bad))
+        chosen += [int(np.where(bad, survey.excess, 0.0).argmax()), *map(int, others)]
     deeper = depth + 1 if depth >= 0 else depth - 1
-    for cell in dict.fromkeys(chosen):
+    for cell in list(dict.fromkeys(chosen))[:SPOTS]:
         left = survey.cell[cell]
         ends = float(survey.view.t[left]), float(survey.view.t[left + 1])
         samples = yield from refined(samples, focus, ledger, *ends, depth=deeper)

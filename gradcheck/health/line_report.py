@@ -47,6 +47,11 @@ class Irregularity:
     relative: float = float("nan")
     evidence: dict[str, float] = field(default_factory=dict)
 
+    def __post_init__(self) -> None:
+        for name in ("lower", "upper", "size", "left", "right", "relative"):
+            object.__setattr__(self, name, float(getattr(self, name)))
+        object.__setattr__(self, "evidence", {name: float(value) for name, value in self.evidence.items()})
+
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class LineReport:
@@ -55,7 +60,7 @@ class LineReport:
     Attributes
     ----------
     irregularities : tuple of Irregularity
-        By output, then along the line. Empty for a line on which nothing irregular was found.
+        By output, then along the line. Empty if nothing irregular was found.
     noise : ndarray, shape (m,)
         Standard deviation of the error of one evaluation, in units of each output; NaN where nothing could be measured.
     evaluations : int

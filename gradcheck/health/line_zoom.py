@@ -12,7 +12,7 @@ import numpy as np
 from gradcheck.health.line_focus import Focus
 from gradcheck.health.line_predictions import SideView
 from gradcheck.health.line_samples import Quest, Samples
-from gradcheck.records.arrays import Array, IntArray
+from gradcheck.records.arrays import Array, BoolArray, IntArray
 
 ABSCISSAE = 33
 SUSPECT_WEAKER, SUSPECT_STRONGER = 3.0, 10.0  # |D| over its doubt at the two ends of a cell
@@ -20,6 +20,7 @@ JUMP_WIDTH = 1e-11  # in t; a transition narrower than this is a jump
 MOST_ROUNDS = 80
 MOST_CLIPPED = 2  # rounds in which the meeting zone nearly fills the bracket
 CLEAR = 20.0  # |D| over its doubt
+SAME_SIDE = 1e-4  # of |D|: a sample so close to a prediction is on its side
 STALLED = 0.9  # of the bracket is left
 DIP = 0.2  # of the largest |D|: where |D| falls below, it may touch zero between two abscissae
 
@@ -77,7 +78,7 @@ class Parting:
         with np.errstate(divide="ignore", invalid="ignore"):
             return float(np.nanmax(np.abs(self.gap[ends]) / self.doubt[ends]))
 
-    def meeting(self) -> Array:
+    def meeting(self) -> BoolArray:
         """(q,) of bool: where the two sides may agree."""
         gap = self.gap
         near = np.abs(gap) <= 3.0 * self.doubt
@@ -150,7 +151,7 @@ def zoomed(
 
 
 def _meeting_zone(view: SideView, lower: float, seen: Parting) -> tuple[float, float] | None:
-    """The part of a cell in which the two sides may meet, resolved as finely as their doubts allow; None if there is none.
+    """The part of a cell in which the two sides may meet, as finely as their doubts allow; None if there is none.
 
     Where |D| only dips, the bottom of the dip is looked at more closely: a break of curvature makes D touch zero there.
     """
@@ -220,9 +221,10 @@ def _trimmed(
     return samples, (lower, upper) if lower < upper else None
 
 
-def _foretold(seen: Parting, value: Array, focus: Focus) -> tuple[Array, Array]:
+def _foretold(seen: Parting, value: Array, focus: Focus) -> tuple[BoolArray, BoolArray]:
     """(q,) of bool twice: whether the left, the right side foretold the values."""
-    blur = 4.0 * focus.sigma + 2e-16 * np.abs(value)
+    # Noise may vary along the line; what is small against the gap still tells the sides apart.
+    blur = 4.0 * focus.sigma + 2e-16 * np.abs(value) + SAME_SIDE * np.abs(seen.gap)
     left = np.abs(value - seen.left) <= 3.0 * seen.left_doubt + blur
     right = np.abs(value - seen.right) <= 3.0 * seen.right_doubt + blur
     return left, right

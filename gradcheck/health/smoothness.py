@@ -1,8 +1,8 @@
 """Is the model smooth along a line, and if not: what breaks, where, and how badly?
 
-The plan: a jittered grid and two fine stencils; bisection of the edges of what is finite; divided differences that bound
-what could hide in each cell; zooms into cells whose two sides predict differently; belief only in what keeps its size
-down to the noise.
+The plan: a jittered grid and two fine stencils; bisection of the edges of what is finite; divided differences that
+bound what could hide in each cell; zooms into cells whose two sides predict differently; belief only in what keeps its
+size down to the noise.
 """
 
 import numpy as np
@@ -97,7 +97,8 @@ def _stencils(line: Line, rng: np.random.Generator) -> list[Array]:
 def _reading(gathering: Gathering, line: Line, t: Array) -> StencilReading:
     samples = gathering.samples
     values = np.stack([samples.at(t, output)[1] for output in range(samples.values.shape[1])], axis=1)
-    return read_stencil(t, values, float(line.grain(t)[0]))
+    with np.errstate(all="ignore"):  # values that are not finite have no noise
+        return read_stencil(t, values, float(line.grain(t)[0]))
 
 
 def _repeat_gaps(gathering: Gathering, grid: Array) -> Inquiry[Array]:
@@ -116,11 +117,13 @@ def _repeat_gaps(gathering: Gathering, grid: Array) -> Inquiry[Array]:
 
 def _reported(gathering: Gathering, examinations: list[OutputExamination]) -> LineReport:
     samples = gathering.samples
+    with np.errstate(all="ignore"):
+        unresolved = max((e.unresolved(samples) for e in examinations), default=1.0)
     return LineReport(
         irregularities=tuple(found for e in examinations for found in e.irregularities(samples)),
         noise=np.array([e.noise for e in examinations]),
         evaluations=gathering.evaluations,
-        unresolved=max((e.unresolved(samples) for e in examinations), default=1.0),
+        unresolved=unresolved,
         repeatable=all(e.repeat_gap == 0.0 for e in examinations),
         complete=gathering.complete,
     )

@@ -43,14 +43,15 @@ def model_items(parent: pytest.Collector, name: str, model: Any) -> Iterator[pyt
         yield ModelItem.labelled(parent, name, f"{MARK}-{i}", source=model, marks=marks, point=point)
 
 
-def is_defined_in(module: str, obj: Any) -> bool:
-    """Whether something belongs to the module of this name, rather than being imported into it."""
-    return getattr(obj, "__module__", module) == module
+def home_of(obj: Any, found_in: str) -> str:
+    """Name of the module that defines something; where it was found, if it is an object that does not know."""
+    # An object without a name of its own (a partial, a callable instance) answers with the module of its class.
+    return getattr(obj, "__module__", found_in) if hasattr(obj, "__name__") else found_in
 
 
 def _belongs_to(collector: pytest.Collector, obj: Any) -> bool:
     module = collector.getparent(pytest.Module)
-    if module is None or not is_defined_in(module.obj.__name__, obj):
+    if module is None or home_of(obj, module.obj.__name__) != module.obj.__name__:
         return False
     return collector.path not in collector.config.stash.get(COLLECTED_ELSEWHERE, frozenset())
 

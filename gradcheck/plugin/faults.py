@@ -130,7 +130,7 @@ def _unfit_test(item: pytest.Function) -> Iterator[str]:
 
 
 def _unfit_model(item: ModelItem) -> Iterator[str]:
-    if item.get_closest_marker("parametrize") is not None:
+    if any(mark.name == "parametrize" for mark in item.own_markers):
         yield "a model function cannot be parametrized; give several points by at=gradcheck.points(...)"
 
 

@@ -9,7 +9,7 @@ from typing import Any
 
 import pytest
 
-from gradcheck.plugin.collecting import COLLECTED_ELSEWHERE, is_defined_in, model_items
+from gradcheck.plugin.collecting import COLLECTED_ELSEWHERE, home_of, model_items
 from gradcheck.plugin.marks import is_described
 from gradcheck.plugin.problems import claim_items
 from gradcheck.problem.problem import Problem
@@ -31,7 +31,7 @@ class ModelModule(pytest.File):
         for name, obj in found.items():
             if isinstance(obj, Problem):
                 yield from self._claims_of(name, obj)
-            elif is_defined_in(self.module, obj):
+            elif home_of(obj, self.module) == self.module:
                 yield from model_items(self, name, obj)
 
     def _imported(self) -> Any:
@@ -43,7 +43,7 @@ class ModelModule(pytest.File):
 
     def _refuse_empty(self, found: dict[str, Any]) -> None:
         """A module on the list without anything to check is a mistake that would otherwise pass for success."""
-        homes = {self.module if isinstance(obj, Problem) else obj.__module__ for obj in found.values()}
+        homes = {home_of(obj, self.module) for obj in found.values()}
         listed = self.config.getini("gradcheck_modules")
         if homes & set(listed):
             return
@@ -143,7 +143,7 @@ def _file_of(name: str, config: pytest.Config) -> Path:
             f"gradcheck_modules names {name!r}, but there is no such module; give the name that an `import` statement "
             "would use, and make its directory known, for example by pythonpath = src"
         )
-    return Path(origin)
+    return Path(origin).absolute()
 
 
 def _origin(name: str) -> str | None:

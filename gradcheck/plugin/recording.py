@@ -37,10 +37,11 @@ class JsonRecord:
             "reports": carried["reports"],
         }
 
-    def pytest_sessionfinish(self) -> None:
+    def pytest_sessionfinish(self, exitstatus: int) -> None:
         # By node id: with workers, the order in which items end is chance.
         items = [self.items[nodeid] for nodeid in sorted(self.items)]
-        document = {"format": FORMAT, "version": FORMAT_VERSION, "items": items}
+        # With the exit status, because few or no items may mean that the run ended early.
+        document = {"format": FORMAT, "version": FORMAT_VERSION, "exit_status": int(exitstatus), "items": items}
         self.path.parent.mkdir(parents=True, exist_ok=True)
         text = json.dumps(document, indent=2, allow_nan=False, ensure_ascii=False)
         self.path.write_text(text + "\n", encoding="utf-8")

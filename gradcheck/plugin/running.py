@@ -42,7 +42,7 @@ def run_check(item: pytest.Item, function: Callable[..., Any], options: dict[str
     """Check a function at each point of ``options["at"]``; see `run_each`."""
     from gradcheck.checking import check
 
-    at = options["at"]
+    at = options.get("at")
     each = at.each if isinstance(at, Points) else (at,)
     run_each(item, function, [partial(check, function, **(options | {"at": point})) for point in each])
 
@@ -62,7 +62,7 @@ def run_each(item: pytest.Item, source: object, checks: Sequence[Callable[[], Ch
     with warnings.catch_warnings(record=True) as caught:
         warnings.simplefilter("always", UndecidedWarning)
         errors = [error for check in checks if (error := _run_one(item, check)) is not None]
-    undecided = _pass_on_but_undecided(caught)
+    undecided = _held_back(caught)
     if errors:
         item.stash[STORY] = "\n\n".join(dict.fromkeys(str(told) for told in [*errors, *undecided]))
         raise errors[0]
@@ -120,8 +120,8 @@ def _telling(item: pytest.Item) -> Iterator[None]:
         raise
 
 
-def _pass_on_but_undecided(caught: list[warnings.WarningMessage]) -> list[UndecidedWarning]:
-    """Give the warnings of the model itself to whom they belong; returns ours, without having warned."""
+def _held_back(caught: list[warnings.WarningMessage]) -> list[UndecidedWarning]:
+    """Let through what others warned about; returns our own warnings, held back."""
     undecided = []
     for warning in caught:
         if isinstance(warning.message, UndecidedWarning):

@@ -109,6 +109,8 @@ def _bounds(bounds: Any, x: Array) -> tuple[Array, Array]:
             f"bounds={bounds!r} can be read as two pairs or as (lower, upper); write the pairs as a list: "
             f"{[tuple(pair) for pair in bounds]!r}, or use scipy.optimize.Bounds"
         )
+    if not fitting:  # a bound may pin its variable: lower = upper
+        fitting = [(low, high) for low, high in readings if np.all((low <= x) & (x <= high))]
     return _ordered(*(fitting or readings)[0])
 
 

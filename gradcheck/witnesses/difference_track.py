@@ -32,8 +32,6 @@ COARSE_BOUND = 1e-9
 #: A left-over tail below this share of the variation is a ripple: too fine to be what the function is about.
 RIPPLE = 1e-2
 
-#: What values look like at tiny steps when their last digits are cut off: they stay, or move by a whole digit.
-_CUT_OFF = (Nature.PLATEAU, Nature.STEEP, Nature.JUMP)
 REASONS = {
     Nature.KINK: "kink at the point: the slopes on both sides differ",
     Nature.JUMP: "jump at the point: the values on both sides differ",
@@ -44,6 +42,7 @@ UNSETTLED = "the values settle at no step size"
 SPENT = "the budget was spent"
 NO_ROOM = "the bounds leave no room for a step"
 FAILS = "the model fails close to the point"
+CUT_OFF = "digits are cut off: the values do not change at small steps"
 RIPPLED = "small steps and wide steps see different slopes: a ripple, an inner tolerance, or digits that were cut off"
 
 
@@ -107,6 +106,7 @@ class Track:
     heard: Array = field(default_factory=lambda: np.zeros(0))
     noisy: BoolArray = field(default_factory=lambda: np.zeros(0, bool))
     coarse: Candidate | None = None
+    latest: Candidate | None = None
     left: Array = field(default_factory=lambda: np.empty(0))
     right: Array = field(default_factory=lambda: np.empty(0))
     slope_error: Array = field(default_factory=lambda: np.empty(0))
@@ -139,6 +139,9 @@ class Track:
 
     def stop(self, reason: str) -> None:
         """End here; outputs without an answer get the reason."""
+        if reason == SPENT and self.latest is not None:
+            # Better than nothing: what is left over counts as noise, so the bound is wide.
+            self.candidates.append(replace(self.latest, bound=np.where(self.satisfied, np.inf, self.latest.bound)))
         for output in np.flatnonzero(~self.satisfied):
             self.reasons.setdefault(int(output), reason)
         self.stage = "done"
@@ -147,6 +150,7 @@ class Track:
 
     def after_fit(self, fits: Fit, i: int, half: float) -> None:
         """Decide what comes after the fit `i` of the stage just measured."""
+        self.latest = _candidate(fits, i, half, fits.resolved[i])
         if self._meets_plateau(fits, i):
             return
         at_floor = fits.resolved[i] & (
@@ -222,7 +226,7 @@ class Track:
         self.tail = fits.tail[i]
         if (waiting & decays & helped).any() and self.shrinks < SHRINKS_MOST:
             self.shrinks += 1
-            ratio = float((fits.floor[i] / np.maximum(fits.tail[i], fits.floor[i]))[waiting].min())
+            ratio = float((fits.floor[i] / np.maximum(fits.tail[i], fits.floor[i]))[waiting & (fits.tail[i] > 0)].min())
             self._restart(half * float(np.clip(ratio ** (1 / 13), 0.02, 0.7)))
         elif not self.laddered:
             self.coarse = _candidate(fits, i, half, fits.resolved[i])
@@ -245,7 +249,8 @@ class Track:
         """
         assert self.coarse is not None
         narrower = 4 * half <= self.coarse.half
-        return ~self.satisfied & narrower & fits.flat[i] & (fits.tail[i] >= 0.5 * self.coarse_tail)
+        same: BoolArray = ~self.satisfied & narrower & fits.flat[i] & (fits.tail[i] >= 0.5 * self.coarse_tail)
+        return same
 
     # --- after the ladder ------------------------------------------------------------------------------------------
 
@@ -256,8 +261,10 @@ class Track:
         smaller = []
         for output in np.flatnonzero(~self.satisfied):
             nature = Nature(rungs.nature[i, output])
-            if nature in _CUT_OFF and self.ripple[output]:
-                nature = Nature.NOISE  # digits that are cut off: steps much larger than they see through it
+            if nature == Nature.PLATEAU and self.ripple[output]:
+                # Digits that are cut off: steps much larger than they see through it.
+                nature = Nature.NOISE
+                self.reasons[int(output)] = CUT_OFF
             if nature in REASONS:
                 self.reasons[int(output)] = REASONS[nature]
                 self.satisfied[output] = True

@@ -172,13 +172,17 @@ class _Rounds:
         quietest = np.full(self.centre.size, np.nan)
         heard = np.isfinite(finite).any(axis=0)
         quietest[heard] = np.nanmedian(finite[:, heard], axis=0)
+        left, right = (np.stack([getattr(track, side) for track in self.tracks]) for side in ("left", "right"))
+        if self.derivative > 1:
+            # Slopes on both sides of a kink say nothing about higher derivatives.
+            bound = np.where(np.isfinite(left), np.inf, bound)
         return Testimony(
             value=value,
             bound=bound,
             source=SOURCE,
             step=half,
-            left=np.stack([track.left for track in self.tracks]),
-            right=np.stack([track.right for track in self.tracks]),
+            left=left,
+            right=right,
             noise=quietest,
             spent=self.spent,
             works=bool(np.isfinite(bound).any()),

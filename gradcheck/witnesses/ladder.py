@@ -95,10 +95,13 @@ def read_ladder(
     # Thresholds rest on rounding, not on `noise`: a jump or a kink is itself a second difference that does not vanish.
     rounding = np.broadcast_to(floor[:, None, :], second.shape)
     gap = np.abs(up - down - 2 * h * coarse_slope[:, None, :])
-    jump = _stays(gap, 40 * rounding, rungs=5, within=0.05) & ~one_sided[:, None]
+    # A jump at the point shows on every rung; one beside it only on the wider ones.
+    jump = _stays(gap, 40 * rounding, rungs=5, within=0.05) & (gap > 40 * rounding)[:, 0] & ~one_sided[:, None]
     bend = np.abs(second) / h
     kink = _stays(bend, 40 * rounding / h, rungs=3, within=0.25) & ~one_sided[:, None] & ~jump
-    grows = np.abs(quotient[:, :-1]) > 1.3 * np.abs(quotient[:, 1:])
+    # Steep: quotients grow as the step shrinks, and still the values come together (else it is a jump, or a digit).
+    moved = np.abs(np.where(side, up - centre, up - down))
+    grows = (np.abs(quotient[:, :-1]) > 1.3 * np.abs(quotient[:, 1:])) & (1.3 * moved[:, :-1] < moved[:, 1:])
     significant = np.abs(quotient) * h > 40 * rounding
     steep = (grows & significant[:, :-1])[:, :4].all(axis=1)
     noisy = _does_not_shrink(second, floor)

@@ -8,7 +8,7 @@ Sources: discrete orthogonal polynomials, Forsythe 1957 (J. SIAM 5, 74-88); node
 derivative's weights small.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 import numpy as np
@@ -143,6 +143,26 @@ def fit(
     Fit
         NaN values where a difference is not finite.
     """
+    # Squares of tiny or huge values would leave the range of floating-point numbers; powers of two lose nothing.
+    unit = 2.0 ** np.clip(np.floor(np.log2(np.where(largest > 0, largest, 1.0))), -1000, 1000)
+    fits = _fitted(stencil, half_width, differences / unit[:, None, :], largest / unit, slips, derivative, wobble)
+    scaled = {name: getattr(fits, name) * unit for name in _IN_UNITS_OF_VALUES}
+    return replace(fits, **scaled)
+
+
+#: Fields of a fit that scale with the values.
+_IN_UNITS_OF_VALUES = ("value", "bound", "noise", "tail", "before", "floor", "variation")
+
+
+def _fitted(
+    stencil: Stencil,
+    half_width: Array,
+    differences: Array,
+    largest: Array,
+    slips: Array | None,
+    derivative: int,
+    wobble: Array | None,
+) -> Fit:
     a = np.einsum("ki,dkm->dim", stencil.basis, differences)
     if slips is not None and slips.any():
         # First order is enough: a slip is a rounding error of x, and its square is below rounding.

@@ -714,6 +714,14 @@ def test_the_plain_command_finds_model_modules_in_the_root_directory(pytester, m
     result.assert_outcomes(passed=2, failed=1)
 
 
+def test_models_that_are_objects_without_a_name_are_collected_where_they_stand(project, run, pytester) -> None:
+    described = "from functools import partial\nmodel = gradcheck.model(at=[1.0, 2.0], gradient=slope)(partial(area))\n"
+    project(plain=source(MODELS, described), test_models=source(MODELS, described))
+    ini(pytester, "gradcheck_modules = plain")
+
+    run().assert_outcomes(passed=2)
+
+
 def test_each_claim_of_a_problem_in_a_listed_module_is_an_item(project, run, pytester) -> None:
     project(plates=dedent(PROBLEM), more="from plates import plate\nagain = plate\n")
     ini(pytester, "gradcheck_modules = plates more")
@@ -913,7 +921,14 @@ def test_the_record_of_a_run_without_checks_is_empty_but_there(project, run, pyt
     project(test_other="def test_other(): pass")
     run("--gradcheck-json", "reports.json")
 
-    assert record(pytester) == {"format": "gradcheck-pytest", "version": 1, "items": []}
+    assert record(pytester) == {"format": "gradcheck-pytest", "version": 1, "exit_status": 0, "items": []}
+
+
+def test_the_record_of_a_run_that_ended_early_says_so(project, run, pytester) -> None:
+    project(test_models=source(MODELS, "@pytest.mark.gradcheck(att=[1.0])\ndef one(x): pass\n"))
+    run("--gradcheck-json", "reports.json")
+
+    assert record(pytester)["exit_status"] == pytest.ExitCode.INTERRUPTED
 
 
 @pytest.mark.parametrize(("file", "told"), [("-", "name a file"), (".", "is a directory")])
