@@ -4,6 +4,9 @@ Use the plain import: ``import gradcheck``, then ``gradcheck.check(...)``, ``gra
 
 Each public name is loaded on first use (PEP 562), so that a program or a pytest run that only has the package
 installed never pays for numpy.
+
+PYTEST_DONT_REWRITE: the plugin is an entry point of this package; a program that imports the package before it starts
+pytest must not be warned about it.
 """
 
 from importlib import import_module

@@ -93,8 +93,8 @@ def audit(
     time_limit : float or str, optional
         Seconds, or text such as ``"10min"``.
     accept : mapping of str to str, optional
-        Findings to silence, ``"code"``, ``"code:function"`` or ``"code:function:variable"``, each with a reason that the
-        report shows.
+        Findings to silence, ``"code"``, ``"code:function"`` or ``"code:function:variable"``, each with a reason that
+        the report shows.
     progress : callable, optional
         Called with a line of text before each part.
     seed : int
@@ -344,7 +344,7 @@ def _relative_bound(testimony: Testimony) -> float:
     return float(np.median(ratio)) if ratio.size else float("nan")
 
 
-# --- what the user gave ------------------------------------------------------------------------------------------------
+# --- what the user gave ---------------------------------------------------------------------------------------------
 
 
 def _subject_and_points(thing: Any, options: dict[str, Any]) -> tuple[Subject, list[Array]]:
@@ -394,7 +394,7 @@ def _random_points(subject: Subject, samples: int, seed: int) -> list[Array]:
     return list(np.clip(rows, subject.domain.lower, subject.domain.upper))
 
 
-# --- the report --------------------------------------------------------------------------------------------------------
+# --- the report -----------------------------------------------------------------------------------------------------
 
 
 def _concluded(audit_: _Audit, began: float, accept: Mapping[str, str] | None, *, evaluable: bool) -> AuditReport:

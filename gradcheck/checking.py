@@ -51,7 +51,7 @@ class Rules:
             If a tolerance is negative or NaN, or a witness is unknown.
         """
         for name, value in (("rel_tol", rel_tol), ("abs_tol", abs_tol)):
-            if value is not None and not 0 <= value < np.inf:
+            if value is not None and not _is_tolerance(value):
                 raise UsageError(f"{name} is {value!r}; give a finite number >= 0")
         if witnesses is None:
             return Rules(rel_tol=rel_tol, abs_tol=abs_tol)
@@ -60,6 +60,42 @@ class Rules:
         if unknown or not chosen:
             raise UsageError(f"witnesses is {witnesses!r}; choose among {', '.join(map(repr, WITNESSES))}")
         return Rules(rel_tol=rel_tol, abs_tol=abs_tol, witnesses=chosen)
+
+
+def _is_tolerance(value: Any) -> bool:
+    return isinstance(value, int | float | np.number) and bool(0 <= value < np.inf)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Policy:
+    """What a verdict does: raise, warn, or only be returned; validated."""
+
+    on_refuted: str = "raise"
+    on_undecided: str = "warn"
+
+    @staticmethod
+    def of(on_refuted: str = "raise", on_undecided: str = "warn") -> "Policy":
+        """The policy in these words.
+
+        Raises
+        ------
+        UsageError
+            If a word is unknown.
+        """
+        _one_of("on_refuted", on_refuted, ("raise", "return"))
+        _one_of("on_undecided", on_undecided, ("warn", "raise", "pass"))
+        return Policy(on_refuted=on_refuted, on_undecided=on_undecided)
+
+    def carry_out(self, report: CheckReport, *, stacklevel: int = 2) -> CheckReport:
+        """The report, unless its verdict raises; where every entry is undecided that raises too, unless it may pass."""
+        if report.verdict == Verdict.REFUTED and self.on_refuted == "raise":
+            raise DerivativeMismatch(report)
+        if report.verdict == Verdict.UNDECIDED and self.on_undecided != "pass":
+            everything = all(verdict == Verdict.UNDECIDED for verdict in report.entries.verdict)
+            if self.on_undecided == "raise" or everything:
+                raise DerivativeMismatch(report)
+            warnings.warn(str(report), UndecidedWarning, stacklevel=stacklevel + 1)
+        return report
 
 
 def check(
@@ -133,8 +169,8 @@ def check(
 
     Notes
     -----
-    A claim that is NaN where the witness is finite is refuted. Values given as integers, lists or float32 reach the model as
-    float64, and the report says so.
+    A claim that is NaN where the witness is finite is refuted. Values given as integers, lists or float32 reach the
+    model as float64, and the report says so.
 
     Examples
     --------
@@ -145,8 +181,7 @@ def check(
     >>> str(report.verdict)
     'confirmed'
     """
-    _one_of("on_refuted", on_refuted, ("raise", "return"))
-    _one_of("on_undecided", on_undecided, ("warn", "raise", "pass"))
+    policy = Policy.of(on_refuted, on_undecided)
     claims = {"gradient": gradient, "jacobian": jacobian}
     if sum(claim is not None for claim in claims.values()) != 1:
         given = [kind for kind, claim in claims.items() if claim is not None]
@@ -163,7 +198,7 @@ def check(
         session = open_session(subject, budget=budget, time_limit=time_limit)
         reports.extend(checked_claims(session, rules))
     report = reports[0] if len(reports) == 1 else _merged(reports)
-    return _told(report, on_refuted, on_undecided)
+    return policy.carry_out(report)
 
 
 def check_described(
@@ -421,17 +456,6 @@ def _merged(reports: Sequence[CheckReport]) -> CheckReport:
         seconds=sum(report.seconds for report in reports),
     )
     return replace(merged, text=check_text(merged))
-
-
-def _told(report: CheckReport, on_refuted: str, on_undecided: str) -> CheckReport:
-    if report.verdict == Verdict.REFUTED and on_refuted == "raise":
-        raise DerivativeMismatch(report)
-    if report.verdict == Verdict.UNDECIDED and on_undecided != "pass":
-        everything = all(verdict == Verdict.UNDECIDED for verdict in report.entries.verdict)
-        if on_undecided == "raise" or everything:
-            raise DerivativeMismatch(report)
-        warnings.warn(str(report), UndecidedWarning, stacklevel=3)
-    return report
 
 
 def _one_of(name: str, value: str, choices: tuple[str, ...]) -> None:

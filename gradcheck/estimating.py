@@ -62,9 +62,9 @@ def estimate(
     Returns
     -------
     Estimate
-        ``value`` has the shape of the input for a model that returns a number, ``(m, n)`` for a vector model, ``(n, n)``
-        for order 2, ``()`` or ``(m,)`` along a direction. The bound is infinite where nothing can be said (kink, jump,
-        plateau, budget spent), with a reason.
+        ``value`` has the shape of the input for a model that returns a number, ``(m, n)`` for a vector model, ``(n,
+        n)`` for order 2, ``()`` or ``(m,)`` along a direction. The bound is infinite where nothing can be said (kink,
+        jump, plateau, budget spent), with a reason.
 
     Raises
     ------
@@ -141,8 +141,8 @@ def _shaped(testimony: Testimony, subject: Subject, session: Session, along: boo
 def _second_derivatives(session: Session, centre: Array) -> dict[str, Any]:
     """The Hessian (n, n) by second differences: along the axes, and along sums of two axes (polarisation).
 
-    With q(v) the second derivative along v, H_ij = (q(e_i s_i + e_j s_j) − s_i² H_ii − s_j² H_jj) / (2 s_i s_j); the sizes
-    s_i make all variables move alike.
+    With q(v) the second derivative along v, H_ij = (q(e_i s_i + e_j s_j) − s_i² H_ii − s_j² H_jj) / (2 s_i s_j); the
+    sizes s_i make all variables move alike.
     """
     subject = session.subject
     n = subject.layout.size

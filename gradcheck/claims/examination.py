@@ -1,7 +1,7 @@
 """The inquiry that compares one claimed derivative with witnesses, entry by entry, as cheaply as the verdict allows.
 
-A quick look confirms most right entries. Those it does not confirm get the whole difference witness, those still open the
-complex step; a refutation needs a second look, by other steps or another witness, that agrees.
+A quick look confirms most right entries. Those it does not confirm get the whole difference witness, those still open
+the complex step; a refutation needs a second look, by other steps or another witness, that agrees.
 """
 
 from collections.abc import Sequence

@@ -16,9 +16,9 @@ import numpy as np
 
 from gradcheck.records.arrays import Array, BoolArray
 
-#: Share of the rounding floor ε over the typical size τ of the variable that a claim may be off. A true zero at a smooth
-#: point (an optimum) must be confirmable: there the bound of the difference witness on its first interval (0.1 τ) is
-#: about 5·(1 + 2/ν)·3/0.1 = 200 times ε/τ.
+#: Share of the rounding floor ε over the typical size τ of the variable that a claim may be off. A true zero at a
+#: smooth point (an optimum) must be confirmable: there the bound of the difference witness on its first interval (0.1
+#: τ) is about 5·(1 + 2/ν)·3/0.1 = 200 times ε/τ.
 ALLOWANCE = 400.0
 #: How many bounds beyond the tolerance a claim must be off to be refuted.
 REFUTING_BOUNDS = 3.0
@@ -40,15 +40,18 @@ class Tolerance:
     rounding: Array
 
     def of(self, claim: Array, value: Array) -> Array:
-        """T for each entry."""
-        size = np.fmax(np.abs(claim), np.abs(value))
-        return self.abs_tol + self.rel_tol * size + ALLOWANCE * self.rounding
+        """T for each entry; an entry without finite size has no relative part."""
+        return self.abs_tol + self.rel_tol * _size(claim, value) + ALLOWANCE * self.rounding
 
     def floor_decides(self, claim: Array, value: Array) -> BoolArray:
         """Where the rounding floor is the larger part of T."""
-        size = np.fmax(np.abs(claim), np.abs(value))
-        decides: BoolArray = ALLOWANCE * self.rounding > self.abs_tol + self.rel_tol * size
+        decides: BoolArray = ALLOWANCE * self.rounding > self.abs_tol + self.rel_tol * _size(claim, value)
         return decides
+
+
+def _size(claim: Array, value: Array) -> Array:
+    size: Array = np.fmax(np.abs(claim), np.abs(value))
+    return np.where(np.isfinite(size), size, 0.0)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -88,7 +91,7 @@ def judge(
     with np.errstate(invalid="ignore"):
         gap = np.abs(claim - value)
         known = np.isfinite(bound) & np.isfinite(value)
-        confirmed = known & (gap + bound <= allowed)
+        confirmed = known & np.isfinite(claim) & (gap + bound <= allowed)
         refuted = known & ((gap > allowed + REFUTING_BOUNDS * bound) | ~np.isfinite(claim))
         if left is not None and right is not None:
             kink = np.isfinite(left) & np.isfinite(right)

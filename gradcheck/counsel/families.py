@@ -6,16 +6,16 @@ from dataclasses import dataclass
 import numpy as np
 
 from gradcheck.problem.subject import Subject
-from gradcheck.records.arrays import Array
 from gradcheck.records.advice import Advice, Family
+from gradcheck.records.arrays import Array
 from gradcheck.records.finding import Finding, FindingCode, Severity
 from gradcheck.records.report import CheckReport, Scaling, Steps, WitnessRecord
 from gradcheck.records.verdict import Verdict
 from gradcheck.wording import count, listed, number, seconds
 
 CAUTION = (
-    "A verified derivative is not a verified model: this report says whether derivatives fit the program, not whether the "
-    "program fits the world. Where people can be hurt, local codes and licensed practice decide."
+    "A verified derivative is not a verified model: this report says whether derivatives fit the program, not whether "
+    "the program fits the world. Where people can be hurt, local codes and licensed practice decide."
 )
 #: Noise beyond this share of the function's values drowns a gradient wherever the function changes little.
 LOUD = 1e-3
@@ -150,8 +150,9 @@ def _price(evidence: Evidence) -> list[str]:
     each = evidence.seconds_per_evaluation
     population = POPULATION * n * GENERATIONS
     return [
-        f"price: a gradient by central differences takes {count(2 * n, 'evaluation')} ({seconds(2 * n * each)}); a gradient "
-        f"method needs some tens of them, a population method about {population} evaluations ({seconds(population * each)})."
+        f"price: a gradient by central differences takes {count(2 * n, 'evaluation')} ({seconds(2 * n * each)}); a "
+        f"gradient method needs some tens of them, a population method about {population} evaluations "
+        f"({seconds(population * each)})."
     ]
 
 

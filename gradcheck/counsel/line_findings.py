@@ -80,8 +80,8 @@ def _break(subject: Subject, function: str, line: Line, found: Irregularity, pla
             f"at {place}{more}."
         )
         remedy = (
-            "Replace the table or the max/min/abs behind it by a smooth one (a monotone cubic, a rounded maximum), or use "
-            "a solver that stands kinks."
+            "Replace the table or the max/min/abs behind it by a smooth one (a monotone cubic, a rounded maximum), or "
+            "use a solver that stands kinks."
         )
     elif found.kind == FindingCode.CURVATURE_BREAK:
         severity = Severity.REMARK
@@ -92,8 +92,8 @@ def _break(subject: Subject, function: str, line: Line, found: Irregularity, pla
         word = "jumps" if found.kind == FindingCode.JUMP else "steps like a staircase, for example"
         text = f"{function} {word} by {number(abs(found.size))} at {place}{more}."
         remedy = (
-            "Find the if, table edge, rounding or switch of regime behind it and blend it smoothly; an optimizer does not "
-            "see a jump coming."
+            "Find the if, table edge, rounding or switch of regime behind it and blend it smoothly; an optimizer does "
+            "not see a jump coming."
         )
     return Finding(
         code=FindingCode(found.kind),
@@ -122,8 +122,8 @@ def _stretch(subject: Subject, function: str, line: Line, found: Irregularity) -
         variable=variable,
         where=Location(point=_moved(subject, line, (lower + upper) / 2), line=variable, lower=lower, upper=upper),
         text=(
-            f"{function} {what} for {variable} between {number(lower, digits=6)} and {number(upper, digits=6)}, which the "
-            "optimizer may try."
+            f"{function} {what} for {variable} between {number(lower, digits=6)} and {number(upper, digits=6)}, which "
+            "the optimizer may try."
         ),
         remedy="Tighten the bounds to where the model works, or make it give finite values there.",
     )
@@ -150,7 +150,7 @@ def _whole(subject: Subject, function: str, kind: FindingCode, worst: Irregulari
     text, remedy, severity = {
         FindingCode.NOISE: (
             f"{function} carries noise of about {size} (standard deviation of one value), far above rounding.",
-            "Tighten the inner tolerance behind it, or take steps made for this noise (see Best steps) and stop no finer.",
+            "Tighten the inner tolerance behind it, or take steps made for this noise (see Best steps); stop no finer.",
             Severity.HAZARD,
         ),
         FindingCode.LOW_PRECISION: (
@@ -165,7 +165,7 @@ def _whole(subject: Subject, function: str, kind: FindingCode, worst: Irregulari
         ),
         FindingCode.UNREPEATABLE: (
             f"{function} gave values that differ by {size} at one and the same point.",
-            "Seed the random numbers, reset hidden state between calls, and audit again: every other figure waits for this.",
+            "Seed random numbers, reset hidden state between calls, and audit again: every other figure waits for this.",
             Severity.BLOCKER,
         ),
     }[kind]

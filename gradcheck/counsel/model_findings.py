@@ -91,7 +91,7 @@ def integer_variables(subject: Subject) -> list[Finding]:
             function="",
             variable=subject.layout.name(int(i)),
             where=Location(point=subject.start),
-            text=f"{subject.layout.name(int(i))} takes whole numbers only; derivatives with respect to it mean nothing.",
+            text=f"{subject.layout.name(int(i))} takes whole numbers only; no derivative with respect to it exists.",
             remedy="Fix it and solve once for each value, or branch and bound over it with a gradient method inside.",
         )
         for i in np.flatnonzero(subject.domain.integer)

@@ -1,7 +1,7 @@
 """Steps for the user's own solver: forward and central differences, and the error each leaves.
 
-Forward: h = 8^(1/4)·sqrt(ε/|f''|) (Moré & Wild 2012, for noise of standard deviation ε). Central: h = (3ε/|f'''|)^(1/3) (Gill,
-Murray, Saunders & Wright 1983).
+Forward: h = 8^(1/4)·sqrt(ε/|f''|) (Moré & Wild 2012, for noise of standard deviation ε). Central: h = (3ε/|f'''|)^(1/3)
+(Gill, Murray, Saunders & Wright 1983).
 """
 
 import numpy as np
@@ -32,8 +32,8 @@ def solver_steps(
     Returns
     -------
     Steps
-        Where a derivative is zero or unknown the formula gives no step; the largest sensible one is returned then, and the
-        error is what noise leaves.
+        Where a derivative is zero or unknown the formula gives no step; the largest sensible one is returned then, and
+        the error is what noise leaves.
     """
     largest = LARGEST * sizes
     bend, twist = np.abs(np.nan_to_num(second)), np.abs(np.nan_to_num(third))

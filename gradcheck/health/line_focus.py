@@ -59,7 +59,7 @@ class Focus:
         return whole(t, f, local_noise(t, f, self.sigma, self.line.grain(t)))
 
     def tolerance(self, widths: Array) -> Array:
-        """What may hide in clean cells of these widths; it shrinks with them, so that a kink is visible at every scale."""
+        """What may hide in clean cells of these widths; it shrinks with them: a kink is as visible at every scale."""
         return np.asarray(CLEAN * self.scale * np.minimum(1.0, widths / self.cell))
 
 

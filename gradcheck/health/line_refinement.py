@@ -4,8 +4,9 @@ import numpy as np
 
 from gradcheck.health.line_confirmation import confirmed
 from gradcheck.health.line_descent import descended
-from gradcheck.health.line_focus import GRAINS_BETWEEN_SAMPLES, NARROWEST, Focus, Ledger, Survey, surveyed
+from gradcheck.health.line_focus import GRAINS_BETWEEN_SAMPLES, NARROWEST, Focus, Ledger
 from gradcheck.health.line_samples import Quest, Samples
+from gradcheck.health.line_survey import Survey, surveyed
 from gradcheck.health.line_zoom import JUMP_WIDTH, suspicion, zoomed
 from gradcheck.records.arrays import Array, BoolArray
 
@@ -21,7 +22,14 @@ DEEPEST = 6  # spots within spots
 
 
 def refined(
-    samples: Samples, focus: Focus, ledger: Ledger, lower: float, upper: float, depth: int = 0
+    samples: Samples,
+    focus: Focus,
+    ledger: Ledger,
+    lower: float,
+    upper: float,
+    *,
+    depth: int = 0,
+    to_the_noise: bool = False,
 ) -> Quest[Samples]:
     """Look at [lower, upper] until its cells are clean, enough is found, or only a closer look at spots makes sense.
 
@@ -29,11 +37,10 @@ def refined(
     """
     disappointments, excess = 0, np.inf
     while not ledger.full:
-        survey = surveyed(samples, focus, ledger, lower, upper, to_the_noise=depth < 0)
+        survey = surveyed(samples, focus, ledger, lower, upper, to_the_noise=to_the_noise)
         rough = _rough(survey, focus, ledger)
         bad = rough & (survey.width > NARROWEST)
         suspect = _strongest(survey, rough, ledger) if disappointments < MOST_DISAPPOINTMENTS else None
-        deep = _deepest(survey, bad, focus, ledger) if depth >= 0 and bad.any() else None
         if suspect is not None:
             samples, dismissed = yield from _examined(samples, focus, ledger, suspect)
             disappointments += dismissed
@@ -41,26 +48,23 @@ def refined(
         if not bad.any():
             return samples
         disappointments = 0
+        deep = None if to_the_noise else _deep(survey, bad, focus, ledger)
         if deep is not None:
             samples = yield from _followed_down(samples, focus, ledger, deep)
         elif bad.size < FEWEST_CELLS:
             samples = yield _filled(survey, focus)
         elif survey.width[bad].sum() <= 0.5 * survey.width.sum():
             samples = yield _halves(survey, bad, focus)
-        elif depth == 0 and _worth_doubling(survey, bad, excess):
+        elif depth == 0 and not to_the_noise and _worth_doubling(survey, bad, excess):
             excess = float(np.median(survey.excess[bad]))
             samples = yield _halves(survey, bad, focus, most=bad.size)
+        elif depth >= DEEPEST:
+            return samples
         else:
-            return (yield from _spots(samples, focus, ledger, survey, bad, depth))
+            for ends in _spots(survey, bad, focus, SPOTS if depth == 0 and not to_the_noise else 1):
+                samples = yield from refined(samples, focus, ledger, *ends, depth=depth + 1, to_the_noise=to_the_noise)
+            return samples
     return samples
-
-
-def _worth_doubling(survey: Survey, bad: BoolArray, before: float) -> bool:
-    """Whether halving all bad cells once more is likely to clean them: the grid's first time, or a good trend since."""
-    if survey.cell.size < MOST_CELLS:
-        return True
-    excess = float(np.median(survey.excess[bad]))
-    return survey.cell.size < MANY_CELLS and excess * (excess / before) < NEARLY_CLEAN
 
 
 def looked_at_to_the_noise(
@@ -71,53 +75,38 @@ def looked_at_to_the_noise(
     rough = survey.hidden > survey.tolerance
     if ledger.findings or rough.size < FEWEST_CELLS or rough.mean() < 0.5:
         return samples
-    cell = int(focus.rng.choice(np.flatnonzero(rough)))
-    left = survey.cell[cell]
-    ends = float(survey.view.t[left]), float(survey.view.t[left + 1])
-    return (yield from refined(samples, focus, ledger, *ends, depth=-1))
+    spot = survey.ends(int(focus.rng.choice(np.flatnonzero(rough))))
+    return (yield from refined(samples, focus, ledger, *spot, to_the_noise=True))
 
 
 def _rough(survey: Survey, focus: Focus, ledger: Ledger) -> BoolArray:
     """(c,): cells that are not clean and not too narrow to be looked into."""
-    if survey.cell.size == 0:
-        return np.zeros(0, dtype=bool)
     left = survey.view.t[survey.cell]
     narrowest = np.maximum(2.0 * JUMP_WIDTH, 4.0 * GRAINS_BETWEEN_SAMPLES * focus.line.grain(left))
     rough = (survey.hidden > survey.tolerance) & (survey.width > narrowest)
     return np.asarray(rough & ~ledger.in_a_shadow(left))
 
 
-def _strongest(survey: Survey, bad: BoolArray, ledger: Ledger) -> tuple[float, float] | None:
-    """Ends of the bad cell whose sides part most clearly, among those not yet dismissed."""
-    index = np.flatnonzero(bad)
+def _strongest(survey: Survey, rough: BoolArray, ledger: Ledger) -> tuple[float, float] | None:
+    """Ends of the cell whose sides part most clearly, among the rough ones that were not yet dismissed."""
+    index = np.flatnonzero(rough)
+    if index.size == 0:
+        return None
     strength = suspicion(survey.view, survey.cell[index])
     for place in np.argsort(-strength):
-        if strength[place] == 0.0:
-            return None
-        left = survey.cell[index[place]]
-        ends = float(survey.view.t[left]), float(survey.view.t[left + 1])
-        if ledger.worth_a_zoom(*ends):
+        ends = survey.ends(int(index[place]))
+        if strength[place] > 0.0 and ledger.worth_a_zoom(*ends):
             return ends
     return None
 
 
-def _deepest(survey: Survey, bad: BoolArray, focus: Focus, ledger: Ledger) -> tuple[float, float] | None:
-    """Ends of the cell in which most may hide, if it is small already and no descent began near it."""
+def _deep(survey: Survey, bad: BoolArray, focus: Focus, ledger: Ledger) -> tuple[float, float] | None:
+    """Ends of the roughest cell, if it is small already and no descent began near it."""
     place = survey.roughest(bad)
-    left = survey.cell[place]
-    ends = float(survey.view.t[left]), float(survey.view.t[left + 1])
+    ends = survey.ends(place)
     if survey.width[place] > DEEP * focus.cell or not ledger.worth_a_descent(*ends):
         return None
     return ends
-
-
-def _followed_down(samples: Samples, focus: Focus, ledger: Ledger, cell: tuple[float, float]) -> Quest[Samples]:
-    """Ask whether a small cell that will not come clean hides a break with a fractional power."""
-    ledger.descents.append(cell)
-    samples, found = yield from descended(samples, focus, ledger.piece_around(cell), *cell)
-    if found is not None:
-        ledger.findings.append(found)
-    return samples
 
 
 def _examined(samples: Samples, focus: Focus, ledger: Ledger, cell: tuple[float, float]) -> Quest[tuple[Samples, bool]]:
@@ -131,6 +120,23 @@ def _examined(samples: Samples, focus: Focus, ledger: Ledger, cell: tuple[float,
     if found is not None:
         ledger.findings.append(found)
     return samples, found is None
+
+
+def _followed_down(samples: Samples, focus: Focus, ledger: Ledger, cell: tuple[float, float]) -> Quest[Samples]:
+    """Ask whether a small cell that will not come clean hides a break with a fractional power."""
+    ledger.descents.append(cell)
+    samples, found = yield from descended(samples, focus, ledger.piece_around(cell), *cell)
+    if found is not None:
+        ledger.findings.append(found)
+    return samples
+
+
+def _worth_doubling(survey: Survey, bad: BoolArray, before: float) -> bool:
+    """Whether halving all bad cells is likely to clean them: the first time, or if the last one brought them far."""
+    if survey.cell.size < MOST_CELLS:
+        return True
+    excess = float(np.median(survey.excess[bad]))
+    return survey.cell.size < MANY_CELLS and excess * (excess / before) < NEARLY_CLEAN
 
 
 def _halves(survey: Survey, chosen: BoolArray, focus: Focus, most: int = MOST_HALVED) -> Array:
@@ -149,19 +155,9 @@ def _filled(survey: Survey, focus: Focus) -> Array:
     return np.asarray(left + survey.width[:, None] * steps / parts).ravel()
 
 
-def _spots(
-    samples: Samples, focus: Focus, ledger: Ledger, survey: Survey, bad: BoolArray, depth: int
-) -> Quest[Samples]:
-    """Look closely at the roughest cell, and at the first level also at that which hides most and at random ones."""
-    if abs(depth) >= DEEPEST:
-        return samples
-    chosen = [survey.roughest(bad)]
-    if depth == 0:
-        others = focus.rng.permutation(np.flatnonzero(bad))
-        chosen += [int(np.where(bad, survey.excess, 0.0).argmax()), *map(int, others)]
-    deeper = depth + 1 if depth >= 0 else depth - 1
-    for cell in list(dict.fromkeys(chosen))[:SPOTS]:
-        left = survey.cell[cell]
-        ends = float(survey.view.t[left]), float(survey.view.t[left + 1])
-        samples = yield from refined(samples, focus, ledger, *ends, depth=deeper)
-    return samples
+def _spots(survey: Survey, bad: BoolArray, focus: Focus, count: int) -> list[tuple[float, float]]:
+    """Cells worth a close look: the roughest, that which hides most, and random ones."""
+    most_hidden = int(np.where(bad, survey.excess, 0.0).argmax())
+    others = focus.rng.permutation(np.flatnonzero(bad))
+    chosen = dict.fromkeys([survey.roughest(bad), most_hidden, *map(int, others)])
+    return [survey.ends(cell) for cell in list(chosen)[:count]]

@@ -35,9 +35,12 @@ class Survey:
     @property
     def excess(self) -> Array:
         """(c,): hidden jump over tolerance; a clean cell has at most 1."""
-        with np.errstate(divide="ignore", invalid="ignore"):
-            ratio = self.hidden / self.tolerance
-        return np.where(self.hidden <= self.tolerance, np.minimum(np.nan_to_num(ratio), 1.0), ratio)
+        return np.where(self.hidden > self.tolerance, self.hidden / self.tolerance, 0.0)
+
+    def ends(self, cell: int) -> tuple[float, float]:
+        """Both ends of a cell."""
+        left = int(self.cell[cell])
+        return float(self.view.t[left]), float(self.view.t[left + 1])
 
     def roughest(self, among: BoolArray) -> int:
         """That one of these cells at whose ends the slope changes most."""
@@ -63,7 +66,7 @@ def surveyed(
         hidden.append(hidden_jumps(view.t, view.f, view.noise, tolerance))
         tolerances.append(tolerance)
     joined = _joined(views)
-    cell = np.flatnonzero(joined.first[:-1] == joined.first[1:]) if joined.t.size else np.empty(0, dtype=np.intp)
+    cell = np.flatnonzero(joined.first[:-1] == joined.first[1:])
     return Survey(
         view=joined,
         cell=cell,

@@ -103,7 +103,7 @@ def _best(errors: Array) -> int:
 
 
 def _order(steps: Array, errors: Array, best: int, bound: float) -> float:
-    """Median slope of the errors above the best step, where they grow steadily and exceed what the reference resolves."""
+    """Median slope of the errors above the best step, where they exceed what the reference resolves."""
     known = np.isfinite(errors) & (errors > 0)
     branch = np.flatnonzero(known & (np.arange(errors.size) > best + NEIGHBOURS))
     if np.isfinite(bound):

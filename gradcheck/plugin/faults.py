@@ -13,9 +13,6 @@ from gradcheck.plugin.items import Fault, ModelItem
 from gradcheck.plugin.marks import CLAIMS, MARK, allowed_names, options_of, standing_on
 from gradcheck.plugin.places import place_of
 
-#: Arguments that are one of a few words.
-WORDS = {"on_refuted": ("raise", "return"), "on_undecided": ("warn", "raise", "pass")}
-
 
 def refuse_faulty(report: pytest.CollectReport, marked: Sequence[pytest.Item]) -> None:
     """Turn a collector's report into an error that lists every fault of its marked items; else leave it alone."""
@@ -99,14 +96,12 @@ def _given_twice(source: Any) -> Iterator[str]:
 
 def _wrong_values(function: Any, options: dict[str, Any]) -> Iterator[str]:
     """What `check` would refuse without having called the model."""
-    from gradcheck.checking import Rules
+    from gradcheck.checking import Policy, Rules
     from gradcheck.problem.subject import subjects_of_function
 
-    for name, words in WORDS.items():
-        if options.get(name, words[0]) not in words:
-            yield f"{name} is {options[name]!r}; choose {' or '.join(map(repr, words))}"
     about_model = ("wrt", "output", "bounds", "names", "typical")
     try:
+        Policy.of(**{name: options[name] for name in ("on_refuted", "on_undecided") if name in options})
         Rules.of(options.get("rel_tol"), options.get("abs_tol", 0.0), options.get("witnesses"))
         subjects_of_function(function, options["at"], claims={}, **{name: options.get(name) for name in about_model})
     except UsageError as error:

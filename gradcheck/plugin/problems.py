@@ -1,19 +1,17 @@
 """The claims of a described problem as test items."""
 
-import warnings
 from collections.abc import Iterator
 from functools import cached_property
 from typing import Any
 
 import pytest
 
-from gradcheck.errors import DerivativeMismatch, GradcheckError, UndecidedWarning, UsageError
+from gradcheck.errors import GradcheckError, UsageError
 from gradcheck.plugin.items import Fault, Marked
 from gradcheck.plugin.marks import MARK
 from gradcheck.plugin.running import run_each
 from gradcheck.problem.problem import Problem
 from gradcheck.records.report import CheckReport
-from gradcheck.records.verdict import Verdict
 
 
 class Claims:
@@ -60,12 +58,9 @@ class ClaimItem(Marked):
 
     def _checked(self) -> CheckReport:
         """The report, judged as `check` would."""
-        report = self.claims.report(self.function, self.kind)
-        if report.verdict == Verdict.REFUTED or set(report.entries.verdict) == {Verdict.UNDECIDED}:
-            raise DerivativeMismatch(report)
-        if report.verdict == Verdict.UNDECIDED:
-            warnings.warn(str(report), UndecidedWarning, stacklevel=1)
-        return report
+        from gradcheck.checking import Policy
+
+        return Policy.of().carry_out(self.claims.report(self.function, self.kind))
 
 
 def claim_items(parent: pytest.Collector, name: str, problem: Problem) -> Iterator[pytest.Item]:

@@ -12,8 +12,8 @@ import numpy as np
 def plain(value: Any) -> Any:
     """`value` in dict, list, str, int, float, bool and None only.
 
-    Records become dicts of their fields (the rendered ``text`` of a report is left out), arrays become lists, enums their word.
-    NaN and the infinities become ``"nan"``, ``"inf"`` and ``"-inf"``, because strict JSON has none of them.
+    Records become dicts of their fields (the rendered ``text`` of a report is left out), arrays become lists, enums
+    their word. NaN and the infinities become ``"nan"``, ``"inf"`` and ``"-inf"``, because strict JSON has none of them.
     """
     if is_dataclass(value) and not isinstance(value, type):
         # The text of a report is rendered from the rest of it; the sentence of a finding is data.

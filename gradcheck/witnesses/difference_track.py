@@ -1,7 +1,7 @@
 """The course of one direction through the stages of the difference witness: what comes next, and what is kept.
 
-States: ``probe`` (three pairs) → ``low`` (a line or a parabola: two wider pairs) or ``main`` (seven pairs) → ``fine`` or
-``wide`` (five more pairs) → ``done``; from ``main`` also back to ``main`` on a smaller interval, or to ``ladder``.
+States: ``probe`` (three pairs) → ``low`` (a line or a parabola: two wider pairs) or ``main`` (seven pairs) → ``fine``
+or ``wide`` (five more pairs) → ``done``; from ``main`` also back to ``main`` on a smaller interval, or to ``ladder``.
 """
 
 from dataclasses import dataclass, field, replace
@@ -15,11 +15,13 @@ from gradcheck.witnesses.stencils import LOW, MOST_NODES, WIDE
 
 #: A noise level below this many floors is rounding of the result.
 ROUNDING_MARGIN = 4.0
-#: Below this many it is rounding inside the model, amplified by cancellation, if the coefficients left over do not decay.
+#: Below this many it is rounding inside the model, amplified by cancellation, if the coefficients left over do not
+#: decay.
 AMPLIFIED_MARGIN = 1e3
 #: Coefficients left over are noise if they are not larger than this many times the noise that the ladder heard.
 HEARD_MARGIN = 6.0
-#: Noise that is no rounding (saws, cut-off digits) goes alike at neighbouring nodes: they are fewer samples than they seem.
+#: Noise that is no rounding (saws, cut-off digits) goes alike at neighbouring nodes: they are fewer samples than they
+#: seem.
 CORRELATED = 2.0
 SHRINKS_MOST = 4
 #: From the second half of the six coefficients of `probe` to the end of the fourteen of `main`, in halves of `probe`.
@@ -243,7 +245,8 @@ class Track:
             self.stop(UNSETTLED)
 
     def _hears_the_same(self, fits: Fit, i: int, half: float) -> BoolArray:
-        """Outputs whose left-over coefficients are as large on this interval as on the much wider one before the ladder.
+        """Outputs whose left-over coefficients are as large on this interval as on the much wider one before the
+        ladder.
 
         Those of a smooth function, and of one with a kink, shrink with the interval; noise does not.
         """
@@ -365,7 +368,7 @@ class Track:
         return value, bound, half, noise
 
     def _cover_ripple(self, output: int, value: Array, bound: Array) -> None:
-        """Where a small ripple makes fine and wide slopes differ, the bound covers both: neither is the truth for sure."""
+        """Where a small ripple makes fine and wide slopes differ, the bound covers both: neither is surely the truth."""
         coarse = self.coarse
         if coarse is None or not np.isfinite(coarse.bound[output]):
             return

@@ -1,13 +1,13 @@
 """The difference witness: derivatives from function values alone, each value ± bound.
 
 Per direction: three pairs of values around the point; where they show a line or a parabola, two wider pairs finish the
-work. Otherwise seven pairs; where their coefficients end in rounding, five more pairs (wider, if the function is nearly a
-low polynomial) sharpen the answer. Where the coefficients still decay, the interval shrinks; where they neither decay nor
-end in rounding, a ladder of tiny steps tells noise from structure. Near bounds and edges of the domain the values lie on
-one side. The answer is the fit of smallest bound that no finer fit contradicts.
+work. Otherwise seven pairs; where their coefficients end in rounding, five more pairs (wider, if the function is nearly
+a low polynomial) sharpen the answer. Where the coefficients still decay, the interval shrinks; where they neither decay
+nor end in rounding, a ladder of tiny steps tells noise from structure. Near bounds and edges of the domain the values
+lie on one side. The answer is the fit of smallest bound that no finer fit contradicts.
 
-Sources: polynomial fits at Chebyshev abscissae; Richardson 1911 and Lyness & Moler 1966 for the use of several steps; the
-noise sample from coefficients that are left over follows Hamming's difference tables (see Moré & Wild 2011).
+Sources: polynomial fits at Chebyshev abscissae; Richardson 1911 and Lyness & Moler 1966 for the use of several steps;
+the noise sample from coefficients that are left over follows Hamming's difference tables (see Moré & Wild 2011).
 """
 
 from collections.abc import Generator
@@ -46,8 +46,8 @@ def finite_difference(
     centre : ndarray, shape (m,)
         Finite values of the function at `base`.
     derivative : 1, 2 or 3
-        Order of the derivative along the direction. All orders take the same values at the same points: a cache gives the
-        second one for free.
+        Order of the derivative along the direction. All orders take the same values at the same points: a cache gives
+        the second one for free.
 
     Returns
     -------

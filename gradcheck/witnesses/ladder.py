@@ -1,7 +1,7 @@
 """What pairs of values on a geometric ladder of tiny steps say where a polynomial fit does not settle.
 
-A fit whose coefficients stop decaying far above rounding has met either noise, or structure finer than its width: a fast
-wave, a kink, a jump, a plateau. Differences at steps that shrink by 8 tell them apart.
+A fit whose coefficients stop decaying far above rounding has met either noise, or structure finer than its width: a
+fast wave, a kink, a jump, a plateau. Differences at steps that shrink by 8 tell them apart.
 """
 
 from dataclasses import dataclass
@@ -136,7 +136,7 @@ def read_ladder(
 
 
 def _stays(size: Array, noise: Array, *, rungs: int, within: float) -> BoolArray:
-    """(d, m): sizes (d, r, m) stay the same, but for a share `within`, on the finest `rungs` where they exceed noise."""
+    """(d, m): sizes (d, r, m) stay the same, but for a share `within`, on the finest `rungs` above noise."""
     r = size.shape[1]
     seen = size > noise
     first = np.argmax(seen, axis=1)  # finest rung above noise
@@ -150,7 +150,8 @@ def _stays(size: Array, noise: Array, *, rungs: int, within: float) -> BoolArray
 
 
 def _does_not_shrink(second: Array, floor: Array) -> BoolArray:
-    """(d, m): second differences of the two finest rungs are as large as those of the next two, and well above rounding.
+    """(d, m): second differences of the two finest rungs are as large as those of the next two, and well above
+    rounding.
 
     Those of a smooth function shrink by 64 a rung.
     """

@@ -209,8 +209,8 @@ def _concluded(
         for part in (~kept & (index < half_way), ~kept & (index >= half_way))
     )
     value = np.where(kept, weights * a, 0.0).sum(axis=1) / width
-    # The derivative is fitted with the orders kept; where none of them moves it (a constant), the lowest that does sets the
-    # amplification, so that an exact zero gets a bound that means something.
+    # The derivative is fitted with the orders kept; where none of them moves it (a constant), the lowest that does sets
+    # the amplification, so that an exact zero gets a bound that means something.
     counted = kept | (index <= derivative)
     amplification = np.sqrt(np.where(counted, weights**2, 0.0).sum(axis=1)) / size
     dropped = np.where(index >= order[:, None, :], np.abs(weights), 0.0)

@@ -1,7 +1,7 @@
 """The cheap difference witness: three pairs a direction, enough to confirm most right claims.
 
-Central differences at steps of ratio 2 and Richardson's extrapolation in h² (Richardson 1911). It is never the last word on
-a claim it does not confirm.
+Central differences at steps of ratio 2 and Richardson's extrapolation in h² (Richardson 1911). It is never the last
+word on a claim it does not confirm.
 """
 
 import numpy as np
@@ -21,7 +21,8 @@ SMALLEST_SHARE = 0.1
 DEVIATIONS = 8.0
 #: Weights of the three quotients (steps h, h/2, h/4) in the extrapolated value: exact to order 6.
 _VALUE = np.array([1.0, -20.0, 64.0]) / 45
-#: Their weights in the difference of the two extrapolated values of order 4, over 15: the error of the better of the two.
+#: Their weights in the difference of the two extrapolated values of order 4, over 15: the error of the better of the
+#: two.
 _CHANGE = np.array([1.0, -5.0, 4.0]) / 45
 #: Rounding of the value in units of (rounding of f)/h, each quotient having 1/(√2·step).
 #: Weights of second differences at steps h, h/2, h/4 that leave only a part ∝ h (a kink at the point): k·h.
@@ -40,9 +41,9 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
     Returns
     -------
     Testimony
-        Bound infinite where the bounds leave no room on both sides or the model fails. The bound covers truncation, rounding
-        and a kink at the point (central differences give its mean slope for every step, so this must be asked for), not
-        noise inside the model: use it to confirm, never to refute.
+        Bound infinite where the bounds leave no room on both sides or the model fails. The bound covers truncation,
+        rounding and a kink at the point (central differences give its mean slope for every step, so this must be asked
+        for), not noise inside the model: use it to confirm, never to refute.
     """
     d, m = len(directions), centre.size
     wanted = STEP * np.maximum(room.scale, SMALLEST_SHARE * room.widest)

@@ -65,6 +65,6 @@ def _inside(distance: Array) -> Array:
 
 
 def rounded_half_width(width: Array, grain: Array) -> Array:
-    """`width` (d,) rounded down so that every node of a stencil is a multiple of `grain`; at least one such multiple."""
+    """`width` (d,) rounded down so that every node of a stencil is a multiple of `grain`; at least one of them."""
     unit = grain / NODE_GRID
     return np.maximum(np.floor(width / unit), 1.0) * unit

@@ -1,7 +1,7 @@
-"""The lower layers of the U.S. Standard Atmosphere, 1976 (NOAA, NASA, USAF), as a function of geopotential altitude H in m.
+"""The lower layers of the U.S. Standard Atmosphere, 1976 (NOAA, NASA, USAF), by geopotential altitude H in m.
 
-Constants from its Tables 1 to 4, typed from memory; the values that follow from them agree with the published tables to all
-printed digits (see the tests). ISO 2533:1975 has the same layers with another gas constant.
+Constants from its Tables 1 to 4, typed from memory; the values that follow from them agree with the published tables to
+all printed digits (see the tests). ISO 2533:1975 has the same layers with another gas constant.
 """
 
 import math

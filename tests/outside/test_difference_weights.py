@@ -1,8 +1,9 @@
 """Weights of finite-difference formulas against published tables.
 
-B. Fornberg, "Generation of finite difference formulas on arbitrarily spaced grids", Math. Comp. 51 (1988) 699-706, Tables
-1 (centred) and 3 (one-sided); M. Abramowitz, I. A. Stegun, "Handbook of Mathematical Functions" (1964), Table 25.2. Rows
-typed from memory, then found equal to the exact rational solution of the moment equations; leading error terms likewise.
+B. Fornberg, "Generation of finite difference formulas on arbitrarily spaced grids", Math. Comp. 51 (1988) 699-706,
+Tables 1 (centred) and 3 (one-sided); M. Abramowitz, I. A. Stegun, "Handbook of Mathematical Functions" (1964), Table
+25.2. Rows typed from memory, then found equal to the exact rational solution of the moment equations; leading error
+terms likewise.
 """
 
 from fractions import Fraction

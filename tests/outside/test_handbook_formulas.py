@@ -124,7 +124,9 @@ def test_no_slope_is_confirmed_at_a_jump(k, slope):
     assert verdict_on(erbs, k, slope) != CONFIRMED
 
 
-@pytest.mark.parametrize(("k", "slope"), [(0.219, -0.09), (0.5, -0.1604 + 8.776 * 0.5 - 49.914 * 0.25 + 49.344 * 0.125)])
+@pytest.mark.parametrize(
+    ("k", "slope"), [(0.219, -0.09), (0.5, -0.1604 + 8.776 * 0.5 - 49.914 * 0.25 + 49.344 * 0.125)]
+)
 def test_between_the_jumps_the_slope_is_confirmed(k, slope):
     assert verdict_on(erbs, k, slope) == CONFIRMED
 
@@ -138,7 +140,8 @@ def isotherm(v):
 
 
 @pytest.mark.xfail(
-    strict=True, reason="the bound of the witness is 3.9e-13, 4.4 times what rounding of p allows a claim; no digits to agree to"
+    strict=True,
+    reason="the bound of the witness is 3.9e-13, 4.4 times what rounding of p allows a claim; no digits to agree to",
 )
 def test_the_true_zero_slope_at_the_critical_point_is_confirmed():
     assert verdict_on(isotherm, 1.0, 0.0) == CONFIRMED
@@ -160,8 +163,9 @@ def test_first_and_second_derivative_at_the_critical_point_are_zero_within_bound
 
 
 # --- options ---
-# J. C. Hull, "Options, Futures and Other Derivatives", example of the chapter on Greek letters: S = 49, K = 50, r = 5 %,
-# sigma = 20 %, T = 0.3846 years; printed 2.40, delta 0.522, gamma 0.066, vega 12.1, theta -4.31 a year, rho 8.91.
+# J. C. Hull, "Options, Futures and Other Derivatives", example of the chapter on Greek letters: S = 49, K = 50,
+# r = 5 %, sigma = 20 %, T = 0.3846 years; printed 2.40, delta 0.522, gamma 0.066, vega 12.1,
+# theta -4.31 a year, rho 8.91.
 
 OPTION = np.array([49.0, 0.05, 0.2, 0.3846])  # spot, rate, volatility, time
 GREEKS = np.array([0.521601633971576, 8.90657409880095, 12.1052427542438, 4.3053899645461])
@@ -176,7 +180,12 @@ def call_price(x, strike=50.0):
 
 def test_the_price_and_the_greeks_of_the_textbook_are_those_of_the_formula():
     assert round(call_price(OPTION), 2) == 2.40
-    assert (round(GREEKS[0], 3), round(GREEKS[1], 2), round(GREEKS[2], 1), round(GREEKS[3], 2)) == (0.522, 8.91, 12.1, 4.31)
+    assert (round(GREEKS[0], 3), round(GREEKS[1], 2), round(GREEKS[2], 1), round(GREEKS[3], 2)) == (
+        0.522,
+        8.91,
+        12.1,
+        4.31,
+    )
 
 
 def test_delta_rho_vega_and_theta_are_confirmed():
@@ -202,8 +211,8 @@ def test_vega_per_percent_is_refuted():
 
 
 # --- rate laws and vapour pressure ---
-# Hill equation: A. V. Hill, J. Physiol. 40 (1910) iv-vii. Antoine equation: C. Antoine, C. R. Acad. Sci. 107 (1888) 681;
-# constants for water, 1 to 100 °C and mmHg, as in common collections.
+# Hill equation: A. V. Hill, J. Physiol. 40 (1910) iv-vii. Antoine equation: C. Antoine, C. R. Acad. Sci. 107 (1888)
+# 681; constants for water, 1 to 100 °C and mmHg, as in common collections.
 
 
 def hill(p):

@@ -13,7 +13,7 @@ from tests.problems import HOCK_SCHITTKOWSKI, HOCK_SCHITTKOWSKI_CONSTRAINTS
 
 WIDE_BOUND = pytest.mark.xfail(
     strict=True,
-    reason="HS79: the zero derivative by x4 is found as 2e-20 ± 4e-14, a bound 1.8 times the tolerance that rounding allows",
+    reason="HS79: the zero derivative by x4 is found as 2e-20 ± 4e-14; rounding of f allows a claim 2e-14 only",
 )
 
 

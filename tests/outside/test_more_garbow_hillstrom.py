@@ -1,8 +1,8 @@
 """Jacobians and gradients of the problems of Moré, Garbow & Hillstrom at their starting points.
 
 J. J. Moré, B. S. Garbow, K. E. Hillstrom, "Testing unconstrained optimization software", ACM TOMS 7 (1981) 17-41. The
-problems with hand-written Jacobians stand in ``tests/problem_sets/more_garbow_hillstrom.py``, typed from memory and held
-against 50-digit values there.
+problems with hand-written Jacobians stand in ``tests/problem_sets/more_garbow_hillstrom.py``, typed from memory and
+held against 50-digit values there.
 """
 
 import numpy as np
@@ -13,8 +13,8 @@ from tests.outside.asking import CONFIRMED, REFUTED, UNDECIDED, line_of, places,
 from tests.problems import MORE_GARBOW_HILLSTROM, MORE_GARBOW_HILLSTROM_SUMS
 
 BY_NAME = {problem.name: problem for problem in MORE_GARBOW_HILLSTROM}
-#: Σ r² of the Gaussian is 4e-6, made of terms near 1e-3 that are differences of numbers near 0.4: five digits of the sum
-#: are rounding, and the derivative by the third variable cancels to 4e-21.
+#: Σ r² of the Gaussian is 4e-6, made of terms near 1e-3 that are differences of numbers near 0.4: digits of the sum are
+#: rounding of these, and the derivative by the third variable cancels to 4e-21.
 OPEN = {"Gaussian": ["x[2]"]}
 WITH_ZEROS = [problem for problem in MORE_GARBOW_HILLSTROM if not problem.jacobian(problem.x0).all()]
 

@@ -1,7 +1,7 @@
 """Functions and derivatives that come from the same general library: right ones are confirmed, real faults are named.
 
-Figures are outputs of the libraries (scipy 1.17, scikit-learn 1.9, statsmodels 0.15) that a Richardson tableau of central
-differences agrees with to the digits given.
+Figures are outputs of the libraries (scipy 1.17, scikit-learn 1.9, statsmodels 0.15); a Richardson tableau of central
+differences agrees with those that are right.
 """
 
 import numpy as np
@@ -11,7 +11,7 @@ from scipy import optimize, special
 import gradcheck
 from tests.outside.asking import CONFIRMED, REFUTED, report_on, verdicts
 
-# --- scipy -------------------------------------------------------------------------------------------------------------
+# --- scipy ---
 
 #: Rosenbrock's function, H. H. Rosenbrock, Comput. J. 3 (1960) 175-184, as scipy.optimize chains it.
 ROSENBROCK_POINT = [1.3, 0.7, 0.8, 1.9, 1.2]
@@ -43,7 +43,7 @@ def test_the_hessian_of_rosenbrocks_function_is_estimated_from_values_within_its
 
 
 def test_the_mathieu_functions_take_degrees_but_their_derivative_is_per_radian():
-    """scipy.special.mathieu_cem(2, 5, 45): 0.8585877009150157, -0.8556109366879098; per degree -0.014933227961276772."""
+    """scipy.special.mathieu_cem(2, 5, 45) gives a slope of -0.8556109366879098; per degree -0.014933227961276772."""
     report = report_on(
         lambda x: special.mathieu_cem(2, 5, x)[0], 45.0, gradient=lambda x: special.mathieu_cem(2, 5, x)[1]
     )
@@ -54,7 +54,7 @@ def test_the_mathieu_functions_take_degrees_but_their_derivative_is_per_radian()
     assert report.entries.claim[0] / report.entries.witness[0] == pytest.approx(180 / np.pi, rel=1e-12)
 
 
-# --- scikit-learn ------------------------------------------------------------------------------------------------------
+# --- scikit-learn ---
 
 
 @pytest.fixture(scope="module")
@@ -119,11 +119,11 @@ def test_the_hessian_of_the_absolute_error_is_a_convention_and_no_derivative():
     assert (report.entries.claim[0], report.verdict) == (1.0, REFUTED)
 
 
-# --- statsmodels -------------------------------------------------------------------------------------------------------
+# --- statsmodels ---
 
 SPECTOR_POINT = np.array([0.5, 0.05, 1.0, -3.0])
 SPECTOR_SCORE = [-15.262056811176446, -115.98520688306083, -1.265749818787985, -5.654200114363524]
-#: W. H. Greene, "Econometric Analysis", logit on the data of Spector & Mazzeo: 2.8261 0.0952 2.3787 -13.0213 (from memory).
+#: Rounded: W. H. Greene, "Econometric Analysis", logit on the data of Spector & Mazzeo (from memory).
 SPECTOR_OPTIMUM = np.array([2.826112594889, 0.095157661318, 2.378687655093, -13.021346858116])
 
 
@@ -160,7 +160,7 @@ def test_the_score_at_the_textbook_optimum_is_not_refuted(logit):
 
 
 @pytest.mark.xfail(
-    strict=True, reason="3 of 4 true zeros: the bounds of the witness exceed what rounding allows a claim"
+    strict=True, reason="3 of 4 true zeros: the bound of the witness exceeds what rounding allows a claim"
 )
 def test_the_score_at_the_textbook_optimum_is_confirmed(logit):
     assert report_on(logit.loglike, SPECTOR_OPTIMUM, gradient=logit.score).verdict == CONFIRMED

@@ -27,7 +27,7 @@ def sinc_slope(x):
     return -(np.pi**2) * x / 3
 
 
-# --- sinc near zero ----------------------------------------------------------------------------------------------------
+# --- sinc near zero ---
 
 
 @pytest.mark.parametrize("x", [1e-6, 1e-7, 1e-8])
@@ -74,7 +74,7 @@ def test_the_nan_that_autograd_gives_for_sinc_at_zero_is_refuted():
     assert verdict_on(anp.sinc, 0.0, claim) == REFUTED
 
 
-# --- expit far out -----------------------------------------------------------------------------------------------------
+# --- expit far out ---
 
 
 def product_rule(x):
@@ -98,7 +98,7 @@ def test_far_to_the_left_the_slope_of_expit_is_confirmed_to_eight_digits_and_zer
     assert verdict_on(special.expit, -40.0, 0.0) == REFUTED
 
 
-# --- conventions at kinks ----------------------------------------------------------------------------------------------
+# --- conventions at kinks ---
 
 
 @pytest.mark.parametrize(
@@ -130,7 +130,7 @@ def test_the_nan_of_a_branch_not_taken_is_refuted():
     assert report.verdict == REFUTED
 
 
-# --- single precision --------------------------------------------------------------------------------------------------
+# --- single precision ---
 
 
 def in_single_precision(x):
@@ -145,7 +145,7 @@ def test_the_single_precision_of_jax_is_no_error():
 @pytest.mark.xfail(
     strict=True,
     raises=AssertionError,
-    reason="a float32 claim is held to 1e-8 if the model can be run in double precision",
+    reason="a float32 claim is held to 1e-8 where the model is run in double precision",
 )
 def test_a_slope_computed_beforehand_in_single_precision_is_no_error_either():
     """jax gives 4.053427696228027, which is 5e-8 off: one unit in the last place of a float32."""

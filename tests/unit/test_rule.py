@@ -135,7 +135,9 @@ def test_not_even_the_mean_slope_with_a_generous_tolerance_is_confirmed_at_a_kin
     assert verdict(0.0, 0.0, 1.0, left=-1.0, right=1.0, abs_tol=10.0) == Verdict.UNDECIDED
 
 
-@pytest.mark.parametrize(("claim", "expected"), [(1.25, Verdict.UNDECIDED), (1.5, Verdict.REFUTED), (-1.5, Verdict.REFUTED)])
+@pytest.mark.parametrize(
+    ("claim", "expected"), [(1.25, Verdict.UNDECIDED), (1.5, Verdict.REFUTED), (-1.5, Verdict.REFUTED)]
+)
 def test_outside_the_hull_by_three_errors_of_the_slopes_it_is_refuted(claim, expected):
     assert verdict(claim, 0.0, 1.125, left=-1.0, right=1.0, slope_error=0.125) == expected
 

@@ -34,6 +34,7 @@ def likely_mistakes(case: Case) -> tuple[Diagnosis, ...]:
                     left[i, j] = False
     if left.any():
         names = case.names(left)
-        text = f"{listed(names)}: no simple mistake explains the difference; derive {'it' if len(names) == 1 else 'them'} afresh."
+        them = "it" if len(names) == 1 else "them"
+        text = f"{listed(names)}: no simple mistake explains the difference; derive {them} afresh."
         diagnoses.append(Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names))
     return tuple(diagnoses)
