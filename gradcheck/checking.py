@@ -267,7 +267,8 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
     began, before = time.perf_counter(), session.ledger.evaluations
     subject = session.subject
     claim, failure = claimed_matrix(session, function, kind, centre)
-    precision = session.ledger.output_kinds.get(function, "float64")
+    kinds = session.ledger.output_kinds.get(function, "float64"), session.ledger.claim_kinds.get((function, kind), "")
+    precision = next((word for word in kinds if word in REL_TOL), "float64")
     unit = float(np.finfo(precision).eps / 2) if precision in REL_TOL else float(np.finfo(float).eps / 2)
     rel_tol = REL_TOL.get(precision, DEFAULT_REL_TOL) if rules.rel_tol is None else rules.rel_tol
     columns = _judgeable(subject)

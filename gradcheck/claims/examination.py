@@ -159,6 +159,7 @@ class _Desk:
         self.right = np.full(claim.shape, np.nan)
         self.confirmed = np.zeros(claim.shape, bool)
         self.refuted = np.zeros(claim.shape, bool)
+        self.provisional = np.zeros(claim.shape, bool)
         self.source = np.full(claim.shape, "", dtype=object)
         self.reason = np.full(claim.shape, "", dtype=object)
 
@@ -173,10 +174,14 @@ class _Desk:
     def hear(self, testimony: Testimony, columns: IntArray, *, final: bool = True, replacing: bool = False) -> None:
         """Apply the rule to the entries still open.
 
-        A quick look (not final) may confirm but not refute; what replaces it is believed even where its bound is wider.
+        A quick look (not final) may confirm, by the tolerance that the caller asked for and no share of rounding, but not
+        refute; what replaces it is believed even where its bound is wider.
         """
         if final:
             self.noise = np.fmax(self.noise, testimony.noise)
+        tolerance = self.tolerance(columns)
+        if not final:
+            tolerance = replace(tolerance, rounding=np.zeros_like(tolerance.rounding))
         value, bound = testimony.value.T, testimony.bound.T
         left, right = testimony.left.T, testimony.right.T
         # At a kink the bound covers half the gap between the slopes; the rest is what the slopes may be off.
@@ -185,21 +190,19 @@ class _Desk:
             self.claim[:, columns],
             value,
             bound,
-            self.tolerance(columns),
+            tolerance,
             left=left,
             right=right,
             slope_error=slope_error,
         )
         part = np.ix_(np.arange(self.claim.shape[0]), columns)
         fresh = ~self.confirmed[part] & ~self.refuted[part]
+        by_rounding = self._only_by_rounding(outcome.confirmed, tolerance, columns, value, bound)
+        confirmed = fresh & outcome.confirmed & ~by_rounding
+        sharper = fresh & ((bound < self.bound[part]) | replacing | (self.source[part] == ""))
+        self.provisional[part] = np.where(sharper, by_rounding, self.provisional[part])
         # A later witness replaces an earlier one where it decides, or knows more.
-        better = fresh & (
-            outcome.confirmed
-            | (outcome.refuted & final)
-            | (bound < self.bound[part])
-            | replacing
-            | (self.source[part] == "")
-        )
+        better = confirmed | (fresh & outcome.refuted & final) | sharper
         for mine, theirs in (
             (self.value, value),
             (self.bound, bound),
@@ -208,10 +211,24 @@ class _Desk:
         ):
             mine[part] = np.where(better, theirs, mine[part])
         self.source[part] = np.where(better, testimony.source, self.source[part])
-        self.confirmed[part] |= fresh & outcome.confirmed
+        self.confirmed[part] |= confirmed
         if final:
             self.refuted[part] |= fresh & outcome.refuted
         self._note(testimony, columns, better)
+
+    def _only_by_rounding(
+        self, confirmed: BoolArray, tolerance: Tolerance, columns: IntArray, value: Array, bound: Array
+    ) -> BoolArray:
+        """Entries, claimed not to be zero, that only the allowance for rounding confirms.
+
+        That says little where x is tiny and the function is not. Another witness may see more; until then they are
+        confirmed provisionally.
+        """
+        claim = self.claim[:, columns]
+        with np.errstate(invalid="ignore"):
+            plainly = np.abs(claim - value) + bound <= tolerance.plain(claim, value)
+        only: BoolArray = confirmed & ~plainly & (claim != 0)
+        return only
 
     def _note(self, testimony: Testimony, columns: IntArray, better: BoolArray) -> None:
         for (row, output), reason in testimony.reasons.items():
@@ -245,6 +262,7 @@ class _Desk:
         return np.flatnonzero(self.refuted.any(axis=0))
 
     def result(self) -> Examined:
+        self.confirmed |= self.provisional & ~self.refuted
         columns = np.arange(self.claim.shape[1])
         tolerance = self.tolerance(columns)
         verdict = np.full(self.claim.shape, Verdict.UNDECIDED, dtype=object)

@@ -141,6 +141,7 @@ class Evaluator:
                 claim, mutated = real.call(claim, self.subject.layout, call.point)
             if mutated:
                 self.ledger.mutated.add(f"{kind} of {target.name}")
+        self.ledger.claim_kinds[target.name, kind] = str(getattr(claim, "dtype", "float64"))
         return claim_matrix(kind, claim, self.subject.layout, self.shapes[target.name])
 
     def _automatic(self, call: Call, target: Target) -> NDArray[Any]:

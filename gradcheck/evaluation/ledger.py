@@ -35,6 +35,8 @@ class Ledger:
         Functions that wrote into their input.
     last_words : dict of (function, source) -> str
         What the last failing call of a source said: the message of a claim or an AD library.
+    claim_kinds : dict of (function, kind of claim) -> str
+        The dtype of what a claim returned.
     output_kinds : dict of function -> str
         The dtype of what the model returned: ``"float64"``, ``"float32"``, ``"int64"`` ...
     """
@@ -45,6 +47,7 @@ class Ledger:
     failed: int = 0
     mutated: set[str] = field(default_factory=set)
     output_kinds: dict[str, str] = field(default_factory=dict)
+    claim_kinds: dict[tuple[str, str], str] = field(default_factory=dict)
     notices: list[str] = field(default_factory=list)
     refused: int = 0
     last_words: dict[tuple[str, str], str] = field(default_factory=dict)

@@ -1,6 +1,7 @@
 """What the digits of values betray: single precision, or few decimal digits."""
 
 import math
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -30,17 +31,37 @@ def significant_bits(values: Array) -> Array:
     return np.asarray(53.0 - np.log2(lowest))
 
 
-def decimal_quantum(values: Array) -> float:
-    """The step of the decimal lattice on which all values (k,) lie; 0 if they lie on none.
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class DecimalLattice:
+    """The lattice of few decimal digits on which values lie.
 
-    The coarser of two: the largest power of ten of which all are multiples, and, for at most nine significant digits,
-    the step at the largest magnitude.
+    Attributes
+    ----------
+    quantum : float
+        Its step at the typical magnitude; 0 if there is no such lattice.
+    coarsest : float
+        Its step at the largest magnitude.
+    whole : bool
+        All values are whole numbers, and not all multiples of ten.
     """
-    finite = values[np.isfinite(values)]
-    largest = float(np.abs(finite).max(initial=0.0))
-    if largest == 0.0:
-        return 0.0
-    return max(_fixed_quantum(finite, largest), _floating_quantum(finite, largest))
+
+    quantum: float = 0.0
+    coarsest: float = 0.0
+    whole: bool = False
+
+
+def decimal_lattice(values: Array) -> DecimalLattice:
+    """The decimal lattice of values (k,), if they lie on one.
+
+    Either all are multiples of a power of ten, or all have at most nine significant digits; the coarser counts.
+    """
+    finite = np.abs(values[np.isfinite(values) & (values != 0.0)])
+    if finite.size == 0:
+        return DecimalLattice()
+    largest, typical = float(finite.max()), float(np.median(finite))
+    fixed, digits = _fixed_quantum(finite, largest), _significant_digits(finite)
+    floating = [10.0 ** (math.floor(math.log10(size)) - digits + 1) for size in (typical, largest) if digits]
+    return DecimalLattice(quantum=max([fixed, *floating[:1]]), coarsest=max([fixed, *floating]), whole=fixed == 1.0)
 
 
 def _fixed_quantum(values: Array, largest: float) -> float:
@@ -53,11 +74,12 @@ def _fixed_quantum(values: Array, largest: float) -> float:
     return 0.0
 
 
-def _floating_quantum(values: Array, largest: float) -> float:
+def _significant_digits(values: Array) -> int:
+    """Fewest digits, from 2 to 9, that print all values exactly; 0 if nine do not."""
     for digits in range(2, MOST_DECIMAL_DIGITS + 1):
         if all(float(f"{value:.{digits}g}") == value for value in values.tolist()):
-            return float(10.0 ** (math.floor(math.log10(largest)) - digits + 1))
-    return 0.0
+            return digits
+    return 0
 
 
 def _multiples(values: Array, decimals: int) -> bool:

@@ -247,10 +247,10 @@ def _exponent_within(suspect: Suspect, sides: TwoSides, limits: tuple[float, flo
 def _rounding_at(samples: Samples, focus: Focus, t: float) -> float:
     _, value = samples.at(np.array([t]), focus.output)
     grain = float(focus.line.grain(np.array([t]))[0])
-    return max(0.3 * EPSILON * abs(float(value[0])), 0.15 * grain * focus.slope)
+    return float(max(0.3 * EPSILON * abs(float(value[0])), 0.15 * grain * focus.slope))
 
 
 def _noise_at(focus: Focus, sides: TwoSides) -> float:
     slope = max(abs(sides.left[1]), abs(sides.right[1]))
     grain = float(focus.line.grain(np.array([sides.centre]))[0])
-    return max(focus.sigma, 0.3 * EPSILON * abs(float(sides.left[0])), 0.15 * grain * slope)
+    return float(max(focus.sigma, 0.3 * EPSILON * abs(sides.left[0]), 0.15 * grain * slope))

@@ -8,8 +8,9 @@ import numpy as np
 
 from gradcheck.evaluation.protocol import Inquiry, Reply, Status
 from gradcheck.health.line_samples import Line, Quest, Samples, no_samples
-from gradcheck.records.arrays import Array, BoolArray
+from gradcheck.records.arrays import Array, BoolArray, IntArray
 
+HUGE = 1e100  # products of such values overflow
 MOST_ROUNDS = 2000  # a quest that asks only for what is known already would never end
 
 
@@ -19,6 +20,8 @@ class Gathering:
 
     Attributes
     ----------
+    exponents : ndarray of int, shape (m,)
+        Values are kept times 2**-exponent: 0 unless their squares would overflow or vanish.
     asked : int
         Points asked for, which the budget limits; `evaluations` is what they cost (cached ones cost nothing).
     refused : bool
@@ -31,6 +34,7 @@ class Gathering:
     budget: int
     worth: float
     samples: Samples = field(default_factory=no_samples)
+    exponents: IntArray | None = None
     asked: int = 0
     evaluations: int = 0
     refused: bool = False
@@ -42,13 +46,23 @@ class Gathering:
         if wanted.size == 0:
             return
         reply, answered = yield from self._answers(wanted, fresh=False)
-        if answered.any():
-            self.samples = self.samples.joined(wanted, reply, answered)
+        if not answered.any():
+            return
+        values = np.asarray(reply.values[0], dtype=float)
+        if self.exponents is None:
+            self.exponents = _exponents(values)
+        self.samples = self.samples.joined(
+            wanted[answered], np.ldexp(values, -self.exponents)[answered], reply.status[0][answered]
+        )
 
     def repeated(self, t: Array) -> Inquiry[tuple[Array, BoolArray]]:
         """Values (k, m) at known abscissae, evaluated once more, and which of them were answered."""
         reply, answered = yield from self._answers(t, fresh=True)
-        return np.asarray(reply.values[0], dtype=float), answered
+        return np.ldexp(np.asarray(reply.values[0], dtype=float), -self.known_exponents()), answered
+
+    def known_exponents(self) -> IntArray:
+        """(m,): the exponents, once there are samples."""
+        return np.zeros(0, dtype=np.intp) if self.exponents is None else self.exponents
 
     def affords(self, points: int) -> bool:
         """Whether so many more points may be asked for."""
@@ -95,6 +109,13 @@ class Gathering:
         if not answered.all():
             self.refused, self.complete = True, False
         return reply, answered
+
+
+def _exponents(values: Array) -> IntArray:
+    """(m,): powers of two that bring outputs of extreme size to about 1."""
+    size = np.where(np.isfinite(values), np.abs(values), 0.0).max(axis=0, initial=0.0)
+    extreme = (size > HUGE) | ((size < 1.0 / HUGE) & (size > 0.0))
+    return np.where(extreme, np.frexp(size)[1], 0).astype(np.intp)
 
 
 def _advance(

@@ -23,12 +23,15 @@ class StencilReading:
         Standard deviation of the error of one evaluation; NaN where a value is missing.
     argument : ndarray, shape (m,)
         That part of it which the rounding of the point alone explains (slope × grain).
+    slope : ndarray, shape (m,)
+        Slope of the cubic in the middle.
     flat : ndarray of bool, shape (m,)
         All values equal.
     """
 
     sigma: Array
     argument: Array
+    slope: Array
     flat: BoolArray
 
 
@@ -49,19 +52,28 @@ def read_stencil(t: Array, values: Array, grain: float) -> StencilReading:
     """
     away = t - t[t.size // 2]
     centred = values - values[t.size // 2]
-    basis, _ = np.linalg.qr(np.vander(away / (np.abs(away).max() or 1.0), 6, increasing=True))
+    powers = np.vander(away / (np.abs(away).max() or 1.0), 6, increasing=True)
+    basis, triangle = np.linalg.qr(powers)
     parts = basis.T @ centred
     rest = centred - basis @ parts
     beyond_quintic = np.sqrt((rest**2).sum(axis=0) / (t.size - 6))
     beyond_cubic = np.sqrt(((rest**2).sum(axis=0) + (parts[4:] ** 2).sum(axis=0)) / (t.size - 4))
     wave = beyond_quintic < WAVE_GAIN * beyond_cubic
     sigma = np.where(wave, beyond_quintic, beyond_cubic)
-    slope = np.abs(parts[1]) / (abs(float(basis[:, 1] @ away)) or np.inf)
+    slope = _slope(triangle[:4, :4], parts[:4]) / (np.abs(away).max() or 1.0)
     return StencilReading(
         sigma=np.fmin(sigma, _beside_one_jump(basis[:, :4], centred, sigma)),
-        argument=0.3 * grain * slope,
+        argument=0.3 * grain * np.abs(slope),
+        slope=slope,
         flat=(values == values[0]).all(axis=0),
     )
+
+
+def _slope(triangle: Array, parts: Array) -> Array:
+    """(m,): the linear coefficient of the cubic; NaN where the abscissae coincide."""
+    if not np.abs(np.diag(triangle)).min() > 0.0:
+        return np.full(parts.shape[1], np.nan)
+    return np.asarray(np.linalg.solve(triangle, parts)[1])
 
 
 def _beside_one_jump(cubic: Array, values: Array, sigma: Array) -> Array:

@@ -5,7 +5,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from gradcheck.health.line_edges import edges_located, finite_stretches, stretches
-from gradcheck.health.line_focus import Focus, Ledger
+from gradcheck.health.line_focus import NARROWEST, Focus, Ledger
 from gradcheck.health.line_noise import StencilReading
 from gradcheck.health.line_precision import Precision, measured
 from gradcheck.health.line_refinement import looked_at_to_the_noise, refined
@@ -106,7 +106,8 @@ class OutputExamination:
         for lower, upper in finite_stretches(samples, self.output):
             survey = surveyed(samples, self.focus, self.ledger, lower, upper)
             total += upper - lower
-            rough += float(survey.width[survey.hidden > survey.tolerance].sum())
+            # What is narrower than any cell that is looked into is the place of a break, not an unknown.
+            rough += float(survey.width[(survey.hidden > survey.tolerance) & (survey.width > NARROWEST)].sum())
         return rough / total if total else 0.0
 
 

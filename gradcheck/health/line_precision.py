@@ -6,7 +6,7 @@ import numpy as np
 
 from gradcheck.health import fingerprints
 from gradcheck.health.line_focus import Focus
-from gradcheck.health.line_noise import StencilReading, read_stencil, stencil
+from gradcheck.health.line_noise import STENCIL_POINTS, STENCIL_SPACING, StencilReading, read_stencil, stencil
 from gradcheck.health.line_plateaus import as_staircase, levels, risers, single_step
 from gradcheck.health.line_report import Irregularity
 from gradcheck.health.line_samples import EPSILON, Quest, Samples
@@ -22,6 +22,7 @@ FINE_SPACING = 1e-11  # in t: far below the steps that single precision can tell
 FINE_GAIN = 30.0
 FEWEST_LEVELS = 8  # fewer levels of round values are a staircase
 COUNTED = 1e4  # whole numbers up to here are counts rather than rounded measurements
+WAVE_STEEPNESS = 30.0  # slope of a fast wave over that of the line
 UNIFORM = 0.3  # standard deviation of a uniform error, in units of its width
 
 
@@ -54,25 +55,30 @@ def measured(
     if np.ptp(f) == 0.0:
         return samples, Precision(sigma=sigma, found=())
     single = fingerprints.single_precision(f)
-    quantum = fingerprints.decimal_quantum(f) if levels(f) >= FEWEST_LEVELS else 0.0
-    if single and quantum < SINGLE_STEP * magnitude:
-        quantum = 0.0  # every binary fraction is a decimal one; single precision is the coarser lattice
-    counted = quantum == 1.0 and np.ptp(f) < COUNTED and bool((f == np.rint(f)).all())
+    lattice = fingerprints.decimal_lattice(f) if levels(f) >= FEWEST_LEVELS else fingerprints.DecimalLattice()
+    if single and lattice.quantum < SINGLE_STEP * magnitude:
+        # Every binary fraction is a decimal one; single precision is the coarser lattice.
+        lattice = fingerprints.DecimalLattice()
+    counted = lattice.whole and np.ptp(f) < COUNTED
+    coarsest = 0.0 if counted else lattice.coarsest
     if all(reading.flat[focus.output] for reading in readings) and not single:
-        samples, precision = yield from _plateaus(samples, focus, f, 0.0 if counted else quantum)
+        samples, precision = yield from _plateaus(samples, focus, f, coarsest)
         if precision is not None:
             return samples, precision
-    if quantum and not counted:
-        return samples, _coarse(focus, sigma, quantum)
+    if coarsest:
+        return samples, _coarse(focus, sigma, coarsest)
     if single:
         return samples, _low(focus, max(sigma, SINGLE_ROUNDING * magnitude), magnitude)
     argument = max(float(reading.argument[focus.output]) for reading in readings)
     if sigma <= max(NOISY * EPSILON * magnitude, NOISY_ARGUMENT * argument):
         return samples, Precision(sigma=sigma, found=())
-    if repeatable and SINGLE_NOISE[0] <= sigma / magnitude <= SINGLE_NOISE[1]:
-        samples, fine = yield from _fine_noise(samples, focus)
-        if fine * FINE_GAIN < sigma:
-            return samples, _low(focus, sigma, magnitude)
+    if repeatable:
+        samples, fine = yield from _looked_at_finely(samples, focus)
+        if fine is not None and float(fine.sigma[0]) * FINE_GAIN < sigma:
+            if _is_a_wave(fine, readings, focus):
+                return samples, Precision(sigma=float(fine.sigma[0]), found=())
+            if SINGLE_NOISE[0] <= sigma / magnitude <= SINGLE_NOISE[1]:
+                return samples, _low(focus, sigma, magnitude)
     noise = _whole_line(focus, FindingCode.NOISE, sigma, {"relative_to_values": sigma / magnitude})
     return samples, Precision(sigma=sigma, found=(noise,))
 
@@ -97,14 +103,25 @@ def _at_a_single(riser: Irregularity, focus: Focus) -> bool:
     return fingerprints.crosses_a_single(focus.line.point(riser.lower), focus.line.point(riser.upper))
 
 
-def _fine_noise(samples: Samples, focus: Focus) -> Quest[tuple[Samples, float]]:
+def _looked_at_finely(samples: Samples, focus: Focus) -> Quest[tuple[Samples, StencilReading | None]]:
+    """A reading of this output at a spacing far below that of the stencils, in a random place."""
     spacing = max(FINE_SPACING, focus.closest(1.0) / 4.0)
     t = stencil(float(focus.rng.uniform(0.1, 0.9)), spacing, focus.rng)
     samples = yield t
     at, values = samples.at(t, focus.output)
     if not np.isfinite(values).all() or np.unique(at).size < at.size:
-        return samples, np.inf
-    return samples, float(read_stencil(at, values[:, None], 0.0).sigma[0])
+        return samples, None
+    return samples, read_stencil(at, values[:, None], 0.0)
+
+
+def _is_a_wave(fine: StencilReading, readings: list[StencilReading], focus: Focus) -> bool:
+    """Whether what looks like noise is a wave: smooth from close by, and there far steeper than the line as a whole.
+
+    Values that are constant from step to step are smooth from close by too, but not steep.
+    """
+    sigma = max(float(reading.sigma[focus.output]) for reading in readings)
+    slope = abs(float(fine.slope[0]))
+    return slope > WAVE_STEEPNESS * focus.slope and slope * STENCIL_POINTS * STENCIL_SPACING > sigma
 
 
 def _coarse(focus: Focus, sigma: float, quantum: float) -> Precision:

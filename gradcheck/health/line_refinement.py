@@ -11,6 +11,7 @@ from gradcheck.health.line_zoom import JUMP_WIDTH, suspicion, zoomed
 from gradcheck.records.arrays import Array, BoolArray
 
 DEEP = 1.0 / 64.0  # of a cell of the grid: what is not clean then is steep, or no polynomial
+EXTREME = 20.0  # times the variation on the grid: values that far out lead to a pole
 MOST_DISAPPOINTMENTS = 3  # zooms in a row that found nothing
 FEWEST_CELLS = 8
 MOST_HALVED = 8  # cells a round
@@ -101,8 +102,9 @@ def _strongest(survey: Survey, rough: BoolArray, ledger: Ledger) -> tuple[float,
 
 
 def _deep(survey: Survey, bad: BoolArray, focus: Focus, ledger: Ledger) -> tuple[float, float] | None:
-    """Ends of the roughest cell, if it is small already and no descent began near it."""
-    place = survey.roughest(bad)
+    """Ends of the roughest cell, or of that with an extreme value, if it is small and no descent began near it."""
+    extreme = survey.extreme(EXTREME * focus.scale)
+    place = survey.roughest(bad) if extreme is None else extreme
     ends = survey.ends(place)
     if survey.width[place] > DEEP * focus.cell or not ledger.worth_a_descent(*ends):
         return None

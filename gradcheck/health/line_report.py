@@ -1,12 +1,13 @@
 """What is found on a line: data and evidence, no sentences."""
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
 from gradcheck.records.arrays import Array, frozen
 from gradcheck.records.finding import FindingCode
 
+IN_UNITS = ("noise", "quantum")  # evidence in the units of the output
 DOMAIN_KINDS = (FindingCode.NON_FINITE, FindingCode.CRASH, FindingCode.TIMEOUT)
 
 
@@ -51,6 +52,14 @@ class Irregularity:
         for name in ("lower", "upper", "size", "left", "right", "relative"):
             object.__setattr__(self, name, float(getattr(self, name)))
         object.__setattr__(self, "evidence", {name: float(value) for name, value in self.evidence.items()})
+
+    def in_units(self, exponent: int) -> "Irregularity":
+        """The same, of an output whose values were divided by ``2**exponent``."""
+        if exponent == 0:
+            return self
+        evidence = {k: float(np.ldexp(v, exponent)) if k in IN_UNITS else v for k, v in self.evidence.items()}
+        size, left, right = np.ldexp([self.size, self.left, self.right], exponent).tolist()
+        return replace(self, size=size, left=left, right=right, evidence=evidence)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

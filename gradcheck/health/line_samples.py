@@ -11,7 +11,7 @@ from typing import Any, TypeAlias, TypeVar
 import numpy as np
 from numpy.typing import NDArray
 
-from gradcheck.evaluation.protocol import Directions, Reply, Request
+from gradcheck.evaluation.protocol import Directions, Request
 from gradcheck.records.arrays import Array, frozen
 
 EPSILON = float(np.finfo(float).eps)
@@ -108,15 +108,16 @@ class Samples:
     values: Array
     status: NDArray[np.int8]
 
-    def joined(self, t: Array, reply: Reply, answered: NDArray[np.bool_]) -> "Samples":
-        """With what a reply says at those abscissae that were answered."""
-        abscissae = np.concatenate([self.t, t[answered]])
-        new = np.asarray(reply.values[0], dtype=float)[answered]
-        old = self.values if self.t.size else np.empty((0, new.shape[1]))
-        values = np.concatenate([old, new])
-        status = np.concatenate([self.status, reply.status[0][answered]])
+    def joined(self, t: Array, values: Array, status: NDArray[np.int8]) -> "Samples":
+        """With new samples: abscissae (k,), values (k, m), status (k,). What is known already stays."""
+        abscissae = np.concatenate([self.t, t])
+        old = self.values if self.t.size else np.empty((0, values.shape[1]))
         _, first = np.unique(abscissae, return_index=True)
-        return Samples(t=abscissae[first], values=values[first], status=status[first])
+        return Samples(
+            t=abscissae[first],
+            values=np.concatenate([old, values])[first],
+            status=np.concatenate([self.status, status])[first],
+        )
 
     def missing(self, t: Array) -> Array:
         """Those of t that are not known yet, increasing, each once."""

@@ -48,6 +48,15 @@ class Survey:
         change = np.abs(np.diff(slope, prepend=slope[:1], append=slope[-1:]))
         return int(np.where(among, change[:-1] + change[1:], -1.0).argmax())
 
+    def extreme(self, limit: float) -> int | None:
+        """The narrower cell next to the value farthest from the median, if it is farther than `limit`."""
+        away = np.abs(self.view.f - np.median(self.view.f))
+        farthest = int(away.argmax())
+        if away[farthest] <= limit:
+            return None
+        beside = np.flatnonzero((self.cell == farthest) | (self.cell == farthest - 1))
+        return int(beside[self.width[beside].argmin()]) if beside.size else None
+
 
 def surveyed(
     samples: Samples, focus: Focus, ledger: Ledger, lower: float, upper: float, *, to_the_noise: bool = False

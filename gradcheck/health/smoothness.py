@@ -120,8 +120,12 @@ def _reported(gathering: Gathering, examinations: list[OutputExamination]) -> Li
     with np.errstate(all="ignore"):
         unresolved = max((e.unresolved(samples) for e in examinations), default=1.0)
     return LineReport(
-        irregularities=tuple(found for e in examinations for found in e.irregularities(samples)),
-        noise=np.array([e.noise for e in examinations]),
+        irregularities=tuple(
+            found.in_units(int(exponent))
+            for e, exponent in zip(examinations, gathering.known_exponents(), strict=True)
+            for found in e.irregularities(samples)
+        ),
+        noise=np.ldexp([e.noise for e in examinations], gathering.known_exponents()),
         evaluations=gathering.evaluations,
         unresolved=unresolved,
         repeatable=all(e.repeat_gap == 0.0 for e in examinations),

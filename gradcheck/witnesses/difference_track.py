@@ -31,7 +31,10 @@ GROWTHS_MOST = 4
 ESCAPES_MOST = 6
 #: An interval grows where the bound exceeds this share of the value and the function is nearly a low polynomial.
 COARSE_BOUND = 1e-9
-#: A left-over tail below this share of the variation is a ripple: too fine to be what the function is about.
+#: An interval narrower than this says little about a function that does not change on it: few variables are so small.
+TINY = 1e-4
+#: A left-over tail below this share of the variation, that does not decay (that of a kink does), is a ripple: too fine
+#: to be what the function is about.
 RIPPLE = 1e-2
 
 REASONS = {
@@ -233,7 +236,7 @@ class Track:
         elif not self.laddered:
             self.coarse = _candidate(fits, i, half, fits.resolved[i])
             self.coarse_tail = fits.tail[i]
-            self.ripple = fits.tail[i] < RIPPLE * fits.variation[i]
+            self.ripple = (fits.tail[i] < RIPPLE * fits.variation[i]) & fits.flat[i]
             self.stage = "ladder"
         elif half > 1.5 * self.settled:
             # Probably noise that the ladder missed, its few values falling on one digit; the finest interval will tell.
@@ -318,7 +321,9 @@ class Track:
             self.stop(UNSETTLED)
             return
         last = self.candidates[-1]
-        coarse = (last.bound > COARSE_BOUND * np.abs(last.value)) & (last.value != 0) & np.isfinite(last.bound)
+        # A function that does not change at all need not be looked at wider, unless x is so small that this says little.
+        moves = (last.value != 0) | (last.half < TINY)
+        coarse = (last.bound > COARSE_BOUND * np.abs(last.value)) & moves & np.isfinite(last.bound)
         limit = min(self.reach, max(self.widest, 1.0) / 4)
         if coarse.any() and (fits.order[i] <= 6).all() and self.growths < GROWTHS_MOST and last.half * 4 < limit:
             self.growths += 1

@@ -96,9 +96,14 @@ def read_ladder(
     rounding = np.broadcast_to(floor[:, None, :], second.shape)
     gap = np.abs(up - down - 2 * h * coarse_slope[:, None, :])
     # A jump at the point shows on every rung; one beside it only on the wider ones.
-    jump = _stays(gap, 40 * rounding, rungs=5, within=0.05) & (gap > 40 * rounding)[:, 0] & ~one_sided[:, None]
+    jump = _stays(gap, 40 * rounding, rungs=4, within=0.1) & (gap > 40 * rounding)[:, 0] & ~one_sided[:, None]
+    # Close to a kink the two sides differ by a constant as well, but their mean runs away from the centre.
+    jump &= np.abs(second[:, 3]) <= 2 * gap[:, 3]
     bend = np.abs(second) / h
-    kink = _stays(bend, 40 * rounding / h, rungs=3, within=0.25) & ~one_sided[:, None] & ~jump
+    # A kink at the point shows as soon as it leaves the noise; one beside it starts to show with a leap.
+    starts = np.take_along_axis(second, np.argmax(np.abs(second) > 40 * rounding, axis=1)[:, None, :], axis=1)[:, 0]
+    gradual = (np.abs(second[:, 0]) > 40 * floor) | (np.abs(starts) <= 16 * 40 * floor)
+    kink = _stays(bend, 40 * rounding / h, rungs=3, within=0.25) & gradual & ~one_sided[:, None] & ~jump
     # Steep: quotients grow as the step shrinks, and still the values come together (else it is a jump, or a digit).
     moved = np.abs(np.where(side, up - centre, up - down))
     grows = (np.abs(quotient[:, :-1]) > 1.3 * np.abs(quotient[:, 1:])) & (1.3 * moved[:, :-1] < moved[:, 1:])

@@ -27,6 +27,8 @@ _CHANGE = np.array([1.0, -5.0, 4.0]) / 45
 #: Rounding of the value in units of (rounding of f)/h, each quotient having 1/(√2·step).
 #: Weights of second differences at steps h, h/2, h/4 that leave only a part ∝ h (a kink at the point): k·h.
 _KINK = np.array([1.0, -20.0, 64.0]) / 7
+#: Standard deviation of k·h for independent errors of size 1: three values each time, the middle one counted twice.
+_KINK_NOISE = float(np.sqrt(6 * np.sum(_KINK**2)))
 _AMPLIFICATION = float(np.sqrt(np.sum((_VALUE * np.array([1.0, 2.0, 4.0])) ** 2) / 2))
 
 
@@ -68,7 +70,12 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
         change = np.abs(np.einsum("k,dkm->dm", _CHANGE, quotients))
         bend = np.abs(np.einsum("k,dkm->dm", _KINK, up + down - 2 * centre)) / h[:, None]
         floor = ROUNDING * np.spacing(np.maximum(np.abs(reply.values).max(axis=1), np.abs(centre)))
-    rounding = DEVIATIONS * _AMPLIFICATION * floor / h[:, None]
+    # Where the values of an output cancel, its rounding is larger than their size tells; the parts of second differences
+    # that belong to no smooth function show it, and the median over all directions is not misled by a kink in one.
+    with np.errstate(invalid="ignore"):
+        heard = _median(bend * h[:, None])
+    sigma = np.fmax(floor, heard / _KINK_NOISE / 0.67)
+    rounding = DEVIATIONS * _AMPLIFICATION * sigma / h[:, None]
     works: BoolArray = np.asarray(reply.finite.all(axis=1))
     good = works[:, None] & np.isfinite(value[rows])
     bound[rows] = np.where(good, 1.5 * change + bend / 2 + rounding, np.inf)
@@ -76,3 +83,12 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
     refused = (reply.status == Status.REFUSED).any(axis=1)
     reasons = {(int(rows[i]), j): "the budget was spent" for i in np.flatnonzero(refused) for j in range(m)}
     return Testimony(value=value, bound=bound, step=step, source=SOURCE, spent=reply.spent, reasons=reasons)
+
+
+def _median(values: Array) -> Array:
+    """Median over the directions of the finite values (d, m); 0 where there are none."""
+    finite = np.isfinite(values)
+    ordered = np.sort(np.where(finite, values, np.inf), axis=0)
+    middle = np.maximum(finite.sum(axis=0) - 1, 0) // 2
+    median = np.take_along_axis(ordered, middle[None, :], axis=0)[0]
+    return np.where(np.isfinite(median), median, 0.0)

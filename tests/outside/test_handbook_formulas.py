@@ -139,10 +139,6 @@ def isotherm(v):
     return 8 / (3 * v - 1) - 3 / v**2
 
 
-@pytest.mark.xfail(
-    strict=True,
-    reason="the bound of the witness is 3.9e-13, 4.4 times what rounding of p allows a claim; no digits to agree to",
-)
 def test_the_true_zero_slope_at_the_critical_point_is_confirmed():
     assert verdict_on(isotherm, 1.0, 0.0) == CONFIRMED
 

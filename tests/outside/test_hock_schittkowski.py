@@ -11,18 +11,12 @@ import gradcheck
 from tests.outside.asking import CONFIRMED, REFUTED, interval_of, places, report_on, verdicts
 from tests.problems import HOCK_SCHITTKOWSKI, HOCK_SCHITTKOWSKI_CONSTRAINTS
 
-WIDE_BOUND = pytest.mark.xfail(
-    strict=True,
-    reason="HS79: the zero derivative by x4 is found as 2e-20 ± 4e-14; rounding of f allows a claim 2e-14 only",
-)
-
-
-def each(problems, **marks):
-    cases = [pytest.param(problem, id=problem.name, marks=marks.get(problem.name, ())) for problem in problems]
+def each(problems):
+    cases = [pytest.param(problem, id=problem.name) for problem in problems]
     return pytest.mark.parametrize("problem", cases)
 
 
-@each(HOCK_SCHITTKOWSKI, HS79=WIDE_BOUND)
+@each(HOCK_SCHITTKOWSKI)
 def test_every_entry_of_the_right_gradient_is_confirmed(problem):
     assert report_on(problem.function, problem.x0, gradient=problem.gradient).verdict == CONFIRMED
 

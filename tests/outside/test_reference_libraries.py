@@ -159,9 +159,6 @@ def test_the_score_at_the_textbook_optimum_is_not_refuted(logit):
     assert report_on(logit.loglike, SPECTOR_OPTIMUM, gradient=logit.score).verdict != REFUTED
 
 
-@pytest.mark.xfail(
-    strict=True, reason="3 of 4 true zeros: the bound of the witness exceeds what rounding allows a claim"
-)
 def test_the_score_at_the_textbook_optimum_is_confirmed(logit):
     assert report_on(logit.loglike, SPECTOR_OPTIMUM, gradient=logit.score).verdict == CONFIRMED
 

