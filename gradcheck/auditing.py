@@ -13,7 +13,7 @@ import numpy as np
 
 from gradcheck import __version__
 from gradcheck.checking import Rules, checked_claims
-from gradcheck.counsel.claim_findings import kinks_at_point
+from gradcheck.counsel.claim_findings import kinks_at_point, mutation
 from gradcheck.counsel.claim_verdicts import verdict_findings
 from gradcheck.counsel.families import Evidence, advice
 from gradcheck.counsel.line_findings import Line, line_findings
@@ -27,7 +27,7 @@ from gradcheck.counsel.model_findings import (
     unrepeatable,
 )
 from gradcheck.counsel.scaling import scale_spread, suggested_scaling
-from gradcheck.counsel.silencing import silenced
+from gradcheck.counsel.silencing import refuse_unknown, silenced
 from gradcheck.counsel.solver_steps import solver_steps
 from gradcheck.errors import ModelFailure, UsageError
 from gradcheck.evaluation.conduct import addressed, conduct_one, counted
@@ -120,6 +120,7 @@ def audit(
     began = time.perf_counter()
     if isinstance(samples, bool) or int(samples) != samples or samples < 0:
         raise UsageError(f"samples is {samples!r}; give a whole number >= 0")
+    refuse_unknown(accept)
     options = {
         "at": at,
         "bounds": bounds,
@@ -199,6 +200,7 @@ class _Audit:
         self.findings += dead_variables(self.subject, unchanged, columns)
         for name in centres:
             self._lines(name, columns)
+        self.findings += mutation(self.subject, self.session.ledger)
         told = {(f.function, f.code) for f in self.findings}
         self.findings += failures(self.subject, self.session.ledger, told)
 

@@ -9,7 +9,7 @@ from gradcheck.errors import UsageError
 from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import Session, open_session
 from gradcheck.evaluation.protocol import Directions
-from gradcheck.problem.layout import Points
+from gradcheck.problem.layout import Points, real_numbers
 from gradcheck.problem.subject import Subject, subjects_of_function
 from gradcheck.records.arrays import Array
 from gradcheck.records.estimate import Estimate
@@ -111,7 +111,7 @@ def _directions(subject: Subject, direction: Any) -> Directions:
     if subject.layout.single is None:
         row = subject.layout.flatten(direction, "direction")
     else:
-        row = np.ravel(np.asarray(direction, dtype=float))
+        row = np.ravel(real_numbers(direction, "direction"))
     if row.size != subject.layout.size:
         raise UsageError(f"direction has {row.size} entries but there are {subject.layout.size} variables")
     if not np.isfinite(row).all() or not row.any():

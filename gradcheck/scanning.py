@@ -10,7 +10,7 @@ from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import open_session
 from gradcheck.evaluation.protocol import Directions
 from gradcheck.health.step_curve import step_curve
-from gradcheck.problem.layout import Points
+from gradcheck.problem.layout import Points, real_numbers
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
 from gradcheck.problem.subject import Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.estimate import Scan
@@ -131,7 +131,7 @@ def _direction(subject: Subject, along: Any) -> tuple[Directions, str]:
         if not 0 <= along < n:
             raise UsageError(f"along={along} is no variable; positions run from 0 to {n - 1}")
         return np.array([int(along)]), subject.layout.name(int(along))
-    row = np.ravel(np.asarray(along, dtype=float))
+    row = np.ravel(real_numbers(along, "along"))
     if row.size != n or not np.isfinite(row).all() or not row.any():
         raise UsageError(f"along must be a variable or a finite direction of {n} entries that are not all zero")
     return row[None, :], "direction"

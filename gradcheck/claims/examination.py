@@ -14,6 +14,7 @@ from gradcheck.evaluation.protocol import Inquiry
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.records.verdict import Verdict
 from gradcheck.witnesses.complex_step import complex_step
+from gradcheck.witnesses.difference_track import CUT_OFF, REASONS
 from gradcheck.witnesses.finite_difference import finite_difference
 from gradcheck.witnesses.quick_look import quick_look
 from gradcheck.witnesses.steps import Room
@@ -24,6 +25,10 @@ DIFFERENCES, COMPLEX_STEP = "differences", "complex step"
 WITNESSES = (DIFFERENCES, COMPLEX_STEP)
 #: The second look takes its values on intervals of another size, so that no node is shared.
 OTHER_WIDTH = 0.37
+
+
+#: What the difference witness says of points without a derivative.
+NO_DERIVATIVE = frozenset(REASONS.values())
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -109,7 +114,7 @@ def examine(
     if COMPLEX_STEP in witnesses:
         open_ = desk.open_columns() if DIFFERENCES in witnesses else everything
         if open_.size:
-            desk.hear((yield from _complex(base, columns, open_, room, centre)), open_)
+            desk.hear((yield from _complex(base, columns, open_, room, centre)), open_, contested=True)
     return desk.result()
 
 
@@ -132,6 +137,7 @@ def _complex(base: Array, columns: IntArray, open_: IntArray, room: Room, centre
 def _along(room: Room, columns: IntArray) -> Room:
     return Room(
         scale=room.scale[columns],
+        typical=room.typical[columns],
         widest=room.widest[columns],
         below=room.below[columns],
         above=room.above[columns],
@@ -160,6 +166,7 @@ class _Desk:
         self.confirmed = np.zeros(claim.shape, bool)
         self.refuted = np.zeros(claim.shape, bool)
         self.provisional = np.zeros(claim.shape, bool)
+        self.closed = np.zeros(claim.shape, bool)
         self.source = np.full(claim.shape, "", dtype=object)
         self.reason = np.full(claim.shape, "", dtype=object)
 
@@ -171,11 +178,20 @@ class _Desk:
             rel_tol=self.rel_tol, abs_tol=self.abs_tol, rounding=rounding[:, None] / self.typical[None, columns]
         )
 
-    def hear(self, testimony: Testimony, columns: IntArray, *, final: bool = True, replacing: bool = False) -> None:
+    def hear(
+        self,
+        testimony: Testimony,
+        columns: IntArray,
+        *,
+        final: bool = True,
+        replacing: bool = False,
+        contested: bool = False,
+    ) -> None:
         """Apply the rule to the entries still open.
 
         A quick look (not final) may confirm, by the tolerance that the caller asked for and no share of rounding, but not
-        refute; what replaces it is believed even where its bound is wider.
+        refute; what replaces it is believed even where its bound is wider. What is contested cannot decide against the
+        witness heard before it: where the two part beyond their bounds, the entry stays open.
         """
         if final:
             self.noise = np.fmax(self.noise, testimony.noise)
@@ -196,7 +212,9 @@ class _Desk:
             slope_error=slope_error,
         )
         part = np.ix_(np.arange(self.claim.shape[0]), columns)
-        fresh = ~self.confirmed[part] & ~self.refuted[part]
+        fresh = ~self.confirmed[part] & ~self.refuted[part] & ~self.closed[part]
+        if contested:
+            fresh = fresh & ~self._conflict(part, value, bound)
         by_rounding = self._only_by_rounding(outcome.confirmed, tolerance, columns, value, bound)
         confirmed = fresh & outcome.confirmed & ~by_rounding
         sharper = fresh & ((bound < self.bound[part]) | replacing | (self.source[part] == ""))
@@ -215,6 +233,32 @@ class _Desk:
         if final:
             self.refuted[part] |= fresh & outcome.refuted
         self._note(testimony, columns, better)
+        if replacing:
+            self._close(part)
+
+    def _close(self, part: tuple[IntArray, ...]) -> None:
+        """Close the entries for which no derivative exists, or none that differences of any size agree on.
+
+        On a plateau the derivative is zero and means nothing; another witness would only repeat that zero. Where digits
+        are cut off there is a plateau too, and a claim of zero stays open.
+        """
+        reason = self.reason[part]
+        self.closed[part] |= np.isin(reason, list(NO_DERIVATIVE)) & ~self.confirmed[part] & ~self.refuted[part]
+        zero = (self.claim[part] == 0) & (reason == CUT_OFF)
+        self.refuted[part] &= ~zero
+        self.closed[part] |= zero & ~self.confirmed[part]
+
+    def _conflict(self, part: tuple[IntArray, ...], value: Array, bound: Array) -> BoolArray:
+        """Entries where two witnesses part beyond their bounds; neither is believed then."""
+        with np.errstate(invalid="ignore"):
+            parted: BoolArray = np.abs(value - self.value[part]) > bound + self.bound[part]
+        parted = parted & np.isfinite(bound) & np.isfinite(self.bound[part])
+        reason = self.reason[part]
+        reason[parted & ~self.confirmed[part] & ~self.refuted[part]] = (
+            "two witnesses, differences and the complex step, contradict each other"
+        )
+        self.reason[part] = reason
+        return parted
 
     def _only_by_rounding(
         self, confirmed: BoolArray, tolerance: Tolerance, columns: IntArray, value: Array, bound: Array
@@ -256,7 +300,7 @@ class _Desk:
         self.bound[part] = np.where(fallen, np.fmax(self.bound[part], parted), self.bound[part])
 
     def open_columns(self) -> IntArray:
-        return np.flatnonzero((~self.confirmed & ~self.refuted).any(axis=0))
+        return np.flatnonzero((~self.confirmed & ~self.refuted & ~self.closed).any(axis=0))
 
     def refuted_columns(self) -> IntArray:
         return np.flatnonzero(self.refuted.any(axis=0))

@@ -17,21 +17,9 @@ def silenced(
     accept : mapping of str to str, optional
         ``"code"``, ``"code:function"`` or ``"code:function:variable"`` -> reason.
 
-    Raises
-    ------
-    UsageError
-        If a key names no finding code, a claim's verdict, or the reason is empty.
     """
     if not accept:
         return list(findings), ()
-    for key, reason in accept.items():
-        code = key.partition(":")[0]
-        if code not in set(FindingCode):
-            raise UsageError(f"accept names {code!r}, which is no finding; see the codes of a report, such as 'noise'")
-        if code == FindingCode.CLAIM_REFUTED:
-            raise UsageError("a refuted claim cannot be accepted: mend the derivative, or stop claiming it")
-        if not str(reason).strip():
-            raise UsageError(f"accept[{key!r}] has no reason; say why it does no harm")
     stay, accepted = [], []
     for finding in findings:
         keys = (
@@ -52,3 +40,21 @@ def silenced(
                 }
             )
     return stay, tuple(accepted)
+
+
+def refuse_unknown(accept: Mapping[str, str] | None) -> None:
+    """Refuse what cannot be accepted, before anything is evaluated.
+
+    Raises
+    ------
+    UsageError
+        If a key names no finding code, a refuted claim, or the reason is empty.
+    """
+    for key, reason in (accept or {}).items():
+        code = key.partition(":")[0]
+        if code not in set(FindingCode):
+            raise UsageError(f"accept names {code!r}, which is no finding; see the codes of a report, such as 'noise'")
+        if code == FindingCode.CLAIM_REFUTED:
+            raise UsageError("a refuted claim cannot be accepted: mend the derivative, or stop claiming it")
+        if not str(reason).strip():
+            raise UsageError(f"accept[{key!r}] has no reason; say why it does no harm")

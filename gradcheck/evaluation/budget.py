@@ -47,9 +47,13 @@ def evaluations_of(budget: int | None) -> int | None:
     """
     if budget is None:
         return None
-    if isinstance(budget, bool) or int(budget) != budget or budget < 1:
+    try:
+        whole = int(budget) if float(budget).is_integer() and not isinstance(budget, bool | str) else 0
+    except (TypeError, ValueError):
+        whole = 0
+    if whole < 1:
         raise UsageError(f"budget is {budget!r}; give a whole number of evaluations, at least 1")
-    return int(budget)
+    return whole
 
 
 def budgeted(engine: Engine, ledger: Ledger, limit: int | None, seconds: float | None) -> Engine:

@@ -16,6 +16,7 @@ from gradcheck.health.line_samples import EPSILON
 from gradcheck.records.arrays import Array
 
 ORDERS = range(4, 10)  # of the divided differences
+ROUNDING = 0.3  # standard deviation of one rounding, in units of the last place
 NOISE_SIGMAS = 6.0  # a difference below this many standard deviations says nothing
 WEAKEST_VIEW = 300.0  # a window may amplify noise to this many standard deviations and still bear witness
 
@@ -27,10 +28,10 @@ def local_noise(t: Array, f: Array, sigma: float, grain: Array) -> Array:
     either side: next to a jump the larger one is the jump).
     """
     if t.size < 2:
-        return np.maximum(sigma, 0.3 * EPSILON * np.abs(f))
+        return np.maximum(sigma, ROUNDING * EPSILON * np.abs(f))
     slopes = np.abs(np.diff(f) / np.diff(t))
     slope = np.minimum(np.append(slopes, slopes[-1]), np.append(slopes[0], slopes))
-    return np.asarray(np.maximum(np.maximum(sigma, 0.3 * EPSILON * np.abs(f)), 0.15 * grain * slope))
+    return np.asarray(np.maximum(np.maximum(sigma, ROUNDING * EPSILON * np.abs(f)), 0.15 * grain * slope))
 
 
 def hidden_jumps(t: Array, f: Array, noise: Array, tolerance: Array) -> Array:

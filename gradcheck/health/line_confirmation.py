@@ -11,6 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from gradcheck.health.line_focus import Focus
+from gradcheck.health.line_one_sided import one_sided
 from gradcheck.health.line_report import Irregularity
 from gradcheck.health.line_samples import EPSILON, Quest, Samples
 from gradcheck.health.line_zoom import Suspect
@@ -24,9 +25,11 @@ SLOPE_KEEPS = (0.7, 1.45)
 CURVATURE_KEEPS = (0.6, 1.6)
 KINK_EXPONENTS = (0.6, 1.7)  # of |D| over the distance; a cusp has less
 CURVATURE_EXPONENTS = (1.3, 2.8)  # the third derivative of a C2 spline breaks with 3
+ROUNDING = 1.0  # units in the last place: several roundings, alike within a stencil, differ from place to place
 CLOSER = 30.0
 APART = 4.0  # least ratio of two distances at which the change is compared, where there is room for both
 JUMP_SIGMAS = 30.0
+SURER = 0.01  # doubt over change; the nearest samples know it to a few per cent
 JUMP_SHARE = 0.5  # of the gap between the predictions
 
 
@@ -66,7 +69,7 @@ def _jump(
 ) -> Quest[tuple[Samples, Irregularity | None]]:
     _, (before, after) = samples.at(np.array([suspect.lower, suspect.upper]), focus.output)
     height = float(after - before)
-    noise = max(focus.sigma, 0.3 * EPSILON * max(abs(before), abs(after)))
+    noise = max(focus.sigma, ROUNDING * EPSILON * max(abs(before), abs(after)))
     if abs(height) < max(JUMP_SHARE * float(np.abs(suspect.clear.gap).min()), JUMP_SIGMAS * noise):
         return samples, None
     distance = 4.0 * max(suspect.upper - suspect.lower, focus.closest(suspect.upper))
@@ -105,15 +108,16 @@ def _kink(
     change = float(sides.change[1])
     noise = _noise_at(focus, sides)
     half = max(8.0 * noise / abs(change), 0.02 * sides.distance, 0.5 * focus.closest(sides.centre))
+    left, right = _measured(samples, focus, piece, sides, half, order=1)
     return samples, Irregularity(
         kind=FindingCode.KINK,
         output=focus.output,
         lower=sides.centre - half,
         upper=sides.centre + half,
-        size=change,
-        left=float(sides.left[1]),
-        right=float(sides.right[1]),
-        relative=abs(change) / focus.slope,
+        size=right - left,
+        left=left,
+        right=right,
+        relative=abs(right - left) / focus.slope,
         evidence={"confirmed_at_distance": sides.distance, "noise": noise},
     )
 
@@ -136,20 +140,30 @@ def _curvature_break(
     )
     if sides is None or not _exponent_within(suspect, sides, CURVATURE_EXPONENTS):
         return samples, None
-    change = float(sides.change[2])
-    noise = _noise_at(focus, sides)
     half = max(0.05 * sides.distance, 0.5 * focus.closest(sides.centre))
+    left, right = _measured(samples, focus, piece, sides, half, order=2)
     return samples, Irregularity(
         kind=FindingCode.CURVATURE_BREAK,
         output=focus.output,
         lower=sides.centre - half,
         upper=sides.centre + half,
-        size=change,
-        left=float(sides.left[2]),
-        right=float(sides.right[2]),
-        relative=abs(change) / focus.scale,
-        evidence={"confirmed_at_distance": sides.distance, "noise": noise},
+        size=right - left,
+        left=left,
+        right=right,
+        relative=abs(right - left) / focus.scale,
+        evidence={"confirmed_at_distance": sides.distance, "noise": _noise_at(focus, sides)},
     )
+
+
+def _measured(
+    samples: Samples, focus: Focus, piece: tuple[float, float], sides: TwoSides, half: float, order: int
+) -> tuple[float, float]:
+    """The derivative on either side: from all samples there, if they are surer than the nearest three."""
+    nearby = one_sided(focus.view(samples, *piece), sides.centre - half, sides.centre + half)
+    change, doubt = nearby.change(order)
+    if doubt < SURER * abs(change):
+        return float(nearby.value[0, order - 1]), float(nearby.value[1, order - 1])
+    return float(sides.left[order]), float(sides.right[order])
 
 
 def _kink_distance(noise: float, change: float) -> float:
@@ -247,10 +261,10 @@ def _exponent_within(suspect: Suspect, sides: TwoSides, limits: tuple[float, flo
 def _rounding_at(samples: Samples, focus: Focus, t: float) -> float:
     _, value = samples.at(np.array([t]), focus.output)
     grain = float(focus.line.grain(np.array([t]))[0])
-    return float(max(0.3 * EPSILON * abs(float(value[0])), 0.15 * grain * focus.slope))
+    return float(max(ROUNDING * EPSILON * abs(float(value[0])), 0.15 * grain * focus.slope))
 
 
 def _noise_at(focus: Focus, sides: TwoSides) -> float:
     slope = max(abs(sides.left[1]), abs(sides.right[1]))
     grain = float(focus.line.grain(np.array([sides.centre]))[0])
-    return float(max(focus.sigma, 0.3 * EPSILON * abs(sides.left[0]), 0.15 * grain * slope))
+    return float(max(focus.sigma, ROUNDING * EPSILON * abs(sides.left[0]), 0.15 * grain * slope))

@@ -10,6 +10,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from gradcheck.health.line_cells import ROUNDING
 from gradcheck.health.line_focus import Focus
 from gradcheck.health.line_report import Irregularity
 from gradcheck.health.line_samples import EPSILON, Quest, Samples
@@ -117,7 +118,7 @@ def _followed(
             return samples, None
         second = np.abs(f[2:] - 2.0 * f[1:-1] + f[:-2])
         largest = int(second.argmax())
-        noise = max(focus.sigma, 0.3 * EPSILON * float(np.abs(f).max()))
+        noise = max(focus.sigma, ROUNDING * EPSILON * float(np.abs(f).max()))
         if second[largest] <= AUDIBLE * noise:
             break
         sizes.append(float(second[largest]))

@@ -11,7 +11,8 @@ from gradcheck.health.line_samples import Line, Quest, Samples, no_samples
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 
 HUGE = 1e100  # products of such values overflow
-MOST_ROUNDS = 2000  # a quest that asks only for what is known already would never end
+ABREAST = 4  # quests at a time
+MOST_ROUNDS = 5000  # a quest that asks only for what is known already would never end
 
 
 @dataclass(slots=True, kw_only=True, eq=False)
@@ -75,31 +76,38 @@ class Gathering:
         for key, quest in quests.items():
             _advance(key, quest, None, waiting, done)
         for _ in range(MOST_ROUNDS):
-            together = self._affordable(waiting)
+            served, together = self._served(waiting)
             if not waiting:
                 return done
             yield from self.sampled(together)
-            for key, (quest, _) in list(waiting.items()):
+            for key in served:
                 if self.refused:
                     break
-                _advance(key, quest, self.samples, waiting, done)
+                _advance(key, waiting[key][0], self.samples, waiting, done)
         for quest, _ in waiting.values():
             quest.close()
         self.complete = False
         return done
 
-    def _affordable(self, waiting: dict[int, tuple[Quest[Any], Array]]) -> Array:
-        """The abscissae of as many quests as can be afforded; the others are ended."""
+    def _served(self, waiting: dict[int, tuple[Quest[Any], Array]]) -> tuple[list[int], Array]:
+        """The quests whose turn it is, and their abscissae; those that cannot be afforded are ended.
+
+        Only the first few quests go on at a time: when the budget ends, some have come to a result, rather than none.
+        """
+        served: list[int] = []
         together = np.empty(0)
         for key, (quest, t) in list(waiting.items()):
+            if len(served) == ABREAST:
+                break
             union = np.concatenate([together, t])
             if self.affords(self.samples.missing(self.line.realised(union)).size):
                 together = union
+                served.append(key)
                 continue
             quest.close()
             del waiting[key]
             self.complete = False
-        return together
+        return served, together
 
     def _answers(self, t: Array, *, fresh: bool) -> Inquiry[tuple[Reply, BoolArray]]:
         reply = yield self.line.request(t, worth=self.worth, fresh=fresh)

@@ -45,7 +45,7 @@ class OutputExamination:
         """Edges, precision, then every finite stretch."""
         samples = yield from edges_located(samples, self.output, self.line)
         focus = self.focus = focused(
-            samples, self.line, self.output, self.grid, self.readings, np.random.default_rng([self.seed, self.output])
+            samples, self.line, self.output, self.grid, self.readings, np.random.default_rng(self.seed)
         )
         if focus is None:
             return

@@ -43,13 +43,13 @@ class SideView:
     first: IntArray
     last: IntArray
 
-    def from_left(self, cell: IntArray, x: Array) -> Prediction:
-        """Predictions at x ``(c, q)`` inside cells ``[t[cell], t[cell + 1]]``, from the samples on their left."""
-        return self._predicted(nodes_leftward(self.t, cell, self.t[cell + 1], self.first[cell]), x)
+    def from_left(self, left: IntArray, right: IntArray, x: Array) -> Prediction:
+        """Predictions at x ``(c, q)`` between the samples `left` and `right` ``(c,)``, from `left` and those before."""
+        return self._predicted(nodes_leftward(self.t, left, self.t[right], self.first[left]), x)
 
-    def from_right(self, cell: IntArray, x: Array) -> Prediction:
-        """Predictions at x ``(c, q)`` inside cells ``[t[cell], t[cell + 1]]``, from the samples on their right."""
-        return self._predicted(nodes_rightward(self.t, cell + 1, self.t[cell], self.last[cell + 1]), x)
+    def from_right(self, left: IntArray, right: IntArray, x: Array) -> Prediction:
+        """Predictions at x ``(c, q)`` between the samples `left` and `right` ``(c,)``, from `right` and the next."""
+        return self._predicted(nodes_rightward(self.t, right, self.t[left], self.last[right]), x)
 
     def _predicted(self, nodes: IntArray, x: Array) -> Prediction:
         count = (nodes >= 0).sum(axis=1)

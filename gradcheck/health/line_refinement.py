@@ -5,7 +5,7 @@ import numpy as np
 from gradcheck.health.line_confirmation import confirmed
 from gradcheck.health.line_descent import descended
 from gradcheck.health.line_focus import GRAINS_BETWEEN_SAMPLES, NARROWEST, Focus, Ledger
-from gradcheck.health.line_samples import Quest, Samples
+from gradcheck.health.line_samples import Quest, Samples, jitter
 from gradcheck.health.line_survey import Survey, surveyed
 from gradcheck.health.line_zoom import JUMP_WIDTH, suspicion, zoomed
 from gradcheck.records.arrays import Array, BoolArray
@@ -53,12 +53,12 @@ def refined(
         if deep is not None:
             samples = yield from _followed_down(samples, focus, ledger, deep)
         elif bad.size < FEWEST_CELLS:
-            samples = yield _filled(survey, focus)
+            samples = yield _filled(survey)
         elif survey.width[bad].sum() <= 0.5 * survey.width.sum():
-            samples = yield _halves(survey, bad, focus)
+            samples = yield _halves(survey, bad)
         elif depth == 0 and not to_the_noise and _worth_doubling(survey, bad, excess):
             excess = float(np.median(survey.excess[bad]))
-            samples = yield _halves(survey, bad, focus, most=bad.size)
+            samples = yield _halves(survey, bad, most=bad.size)
         elif depth >= DEEPEST:
             return samples
         else:
@@ -141,20 +141,21 @@ def _worth_doubling(survey: Survey, bad: BoolArray, before: float) -> bool:
     return survey.cell.size < MANY_CELLS and excess * (excess / before) < NEARLY_CLEAN
 
 
-def _halves(survey: Survey, chosen: BoolArray, focus: Focus, most: int = MOST_HALVED) -> Array:
+def _halves(survey: Survey, chosen: BoolArray, most: int = MOST_HALVED) -> Array:
     """A sample near the middle of each chosen cell, worst cells first."""
     index = np.flatnonzero(chosen)
     index = index[np.argsort(-survey.excess[index], kind="stable")][:most]
     left = survey.view.t[survey.cell[index]]
-    return np.asarray(left + survey.width[index] * focus.rng.uniform(0.46, 0.54, index.size))
+    width = survey.width[index]
+    return np.asarray(left + width * (0.5 + 0.04 * jitter(left, left + width)))
 
 
-def _filled(survey: Survey, focus: Focus) -> Array:
+def _filled(survey: Survey) -> Array:
     """Samples that divide a region of few cells into at least eight."""
     parts = int(np.ceil(FEWEST_CELLS / survey.cell.size))
-    left = survey.view.t[survey.cell][:, None]
-    steps = np.arange(1, parts) + focus.rng.uniform(-0.2, 0.2, (survey.cell.size, parts - 1))
-    return np.asarray(left + survey.width[:, None] * steps / parts).ravel()
+    part = survey.width[:, None] / parts
+    middle = survey.view.t[survey.cell][:, None] + part * np.arange(1, parts)
+    return np.asarray(middle + 0.2 * part * jitter(middle, middle + part)).ravel()
 
 
 def _spots(survey: Survey, bad: BoolArray, focus: Focus, count: int) -> list[tuple[float, float]]:

@@ -14,6 +14,8 @@ from numpy.typing import NDArray
 from gradcheck.evaluation.protocol import Directions, Request
 from gradcheck.records.arrays import Array, frozen
 
+#: Multipliers of a 64-bit mix (the finaliser of SplitMix64: Steele, Lea & Flood 2014).
+_ODD = np.array([0xBF58476D1CE4E5B9, 0x94D049BB133111EB], dtype=np.uint64)
 EPSILON = float(np.finfo(float).eps)
 
 Result = TypeVar("Result")
@@ -136,6 +138,18 @@ class Samples:
         nearer_left = t - self.t[right - 1] < self.t[right] - t
         index = np.where(nearer_left, right - 1, right)
         return self.t[index], self.values[index, output]
+
+
+def jitter(lower: Array, upper: Array) -> Array:
+    """(k,): numbers in [-1, 1) without any pattern, one for each cell [lower, upper].
+
+    The same cell gives the same number: outputs that both halve a cell ask for one point, not for two.
+    """
+    bits = np.ascontiguousarray(lower, dtype=float).view(np.uint64)
+    bits = bits ^ (np.ascontiguousarray(upper, dtype=float).view(np.uint64) * _ODD[0])
+    for odd in _ODD:
+        bits = (bits ^ (bits >> np.uint64(30))) * odd
+    return np.asarray((bits >> np.uint64(11)).astype(float) / 2.0**52 - 1.0)
 
 
 def no_samples() -> Samples:

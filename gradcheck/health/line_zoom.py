@@ -11,7 +11,7 @@ import numpy as np
 
 from gradcheck.health.line_focus import Focus
 from gradcheck.health.line_predictions import SideView
-from gradcheck.health.line_samples import Quest, Samples
+from gradcheck.health.line_samples import Quest, Samples, jitter
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 
 ABSCISSAE = 33
@@ -91,7 +91,7 @@ class Parting:
 def suspicion(view: SideView, cell: IntArray) -> Array:
     """(c,): how strongly the two sides part at the ends of each cell; 0 where it is no ground for a suspicion."""
     ends = np.stack([view.t[cell], view.t[cell + 1]], axis=1)
-    left, right = view.from_left(cell, ends), view.from_right(cell, ends)
+    left, right = view.from_left(cell, cell + 1, ends), view.from_right(cell, cell + 1, ends)
     with np.errstate(invalid="ignore"):
         ratio = np.abs(right.value - left.value) / (left.doubt + right.doubt)
     ratio = np.nan_to_num(ratio)
@@ -99,10 +99,10 @@ def suspicion(view: SideView, cell: IntArray) -> Array:
     return np.where(strong, ratio.max(axis=1), 0.0)
 
 
-def parting(view: SideView, lower: float, x: Array) -> Parting:
-    """L and R at x inside the cell that begins at the sample `lower`."""
-    cell = np.searchsorted(view.t, [lower])
-    left, right = view.from_left(cell, x[None, :]), view.from_right(cell, x[None, :])
+def parting(view: SideView, lower: float, upper: float, x: Array) -> Parting:
+    """L and R at x between two samples. Samples between them are on no side yet and do not speak."""
+    ends = np.searchsorted(view.t, [lower]), np.searchsorted(view.t, [upper])
+    left, right = view.from_left(*ends, x[None, :]), view.from_right(*ends, x[None, :])
     return Parting(
         x=x,
         left=left.value[0],
@@ -115,47 +115,55 @@ def parting(view: SideView, lower: float, x: Array) -> Parting:
 def zoomed(
     samples: Samples, focus: Focus, piece: tuple[float, float], lower: float, upper: float
 ) -> Quest[tuple[Samples, Suspect | None]]:
-    """Narrow the cell [lower, upper] of an unbroken piece down to a jump or a meeting of both sides."""
-    first = clear = None
+    """Narrow the cell [lower, upper] of an unbroken piece down to a jump or a meeting of both sides.
+
+    A sample that neither side foretold ends it. If the sides had met before, what was known then remains a suspicion:
+    the noise may be larger here than where it was measured, and the confirmation looks at fresh samples anyway.
+    """
+    first = clear = meeting = None
     clipped, jump_width = 0, max(JUMP_WIDTH, focus.closest(upper))
     for _ in range(MOST_ROUNDS):
         view = focus.view(samples, *piece)
-        seen = parting(view, lower, np.linspace(lower, upper, ABSCISSAE))
+        seen = parting(view, lower, upper, np.linspace(lower, upper, ABSCISSAE))
         if not np.isfinite(seen.gap).all():
-            return samples, None
+            return samples, meeting
         first = first or seen
         clear = seen if clear is None or seen.clarity >= CLEAR else clear
-        zone = _meeting_zone(view, lower, seen)
-        jump = zone is None
+        zone = _meeting_zone(view, lower, upper, seen)
+        suspect = _suspect(lower, upper, zone, first, clear)
+        ends: tuple[float, float] | None = lower, upper
         if zone is not None:
             samples, ends = yield from _trimmed(samples, focus, view, lower, upper, zone)
             clipped += 5.0 * (zone[1] - zone[0]) > 1.7 * (upper - lower)
-        else:
-            zone = ends = lower, upper
-            if upper - lower > jump_width:
-                samples, ends = yield from _halved(samples, focus, view, lower, upper)
+        elif upper - lower > jump_width:
+            samples, ends = yield from _halved(samples, focus, view, lower, upper)
         if ends is None:
-            return samples, None
+            return samples, meeting
         if clipped >= MOST_CLIPPED or ends[1] - ends[0] > STALLED * (upper - lower):
-            return samples, Suspect(
-                jump=jump,
-                lower=lower,
-                upper=upper,
-                centre=0.5 * (zone[0] + zone[1]),
-                half=0.5 * (zone[1] - zone[0]),
-                first=first,
-                clear=clear,
-            )
+            return samples, suspect
+        meeting = meeting if suspect.jump else suspect
         lower, upper = ends
-    return samples, None
+    return samples, meeting
 
 
-def _meeting_zone(view: SideView, lower: float, seen: Parting) -> tuple[float, float] | None:
+def _suspect(lower: float, upper: float, zone: tuple[float, float] | None, first: Parting, clear: Parting) -> Suspect:
+    a, b = (lower, upper) if zone is None else zone
+    return Suspect(
+        jump=zone is None,
+        lower=lower,
+        upper=upper,
+        centre=0.5 * (a + b),
+        half=0.5 * (b - a),
+        first=first,
+        clear=clear,
+    )
+
+
+def _meeting_zone(view: SideView, lower: float, upper: float, seen: Parting) -> tuple[float, float] | None:
     """The part of a cell in which the two sides may meet, as finely as their doubts allow; None if there is none.
 
     Where |D| only dips, the bottom of the dip is looked at more closely: a break of curvature makes D touch zero there.
     """
-    start = lower
     for _ in range(12):
         near = np.flatnonzero(seen.meeting())
         if near.size:
@@ -168,7 +176,7 @@ def _meeting_zone(view: SideView, lower: float, seen: Parting) -> tuple[float, f
         b = float(seen.x[min(last + 1, ABSCISSAE - 1)])
         if b - a > 0.4 * (seen.x[-1] - seen.x[0]) or b - a < 1e-15:
             break
-        seen = parting(view, start, np.linspace(a, b, ABSCISSAE))
+        seen = parting(view, lower, upper, np.linspace(a, b, ABSCISSAE))
     return (float(seen.x[near[0]]), float(seen.x[near[-1]])) if near.size else None
 
 
@@ -185,12 +193,13 @@ def _halved(
     samples: Samples, focus: Focus, view: SideView, lower: float, upper: float
 ) -> Quest[tuple[Samples, tuple[float, float] | None]]:
     """One sample in the middle goes to the side that foretold it."""
-    middle = lower + (0.5 + focus.rng.uniform(-0.04, 0.04)) * (upper - lower)
-    samples = yield np.array([middle])
-    t, value = samples.at(np.array([middle]), focus.output)
+    aside = float(jitter(np.array([lower]), np.array([upper]))[0])
+    middle = np.array([lower + (0.5 + 0.04 * aside) * (upper - lower)])
+    samples = yield middle
+    t, value = samples.at(middle, focus.output)
     if not lower < t[0] < upper or not np.isfinite(value[0]):
         return samples, None
-    on_left, on_right = _foretold(parting(view, lower, t), value, focus)
+    on_left, on_right = _foretold(parting(view, lower, upper, t), value, focus)
     if on_left[0] == on_right[0]:
         return samples, None
     return samples, (float(t[0]), upper) if on_left[0] else (lower, float(t[0]))
@@ -210,7 +219,7 @@ def _trimmed(
     t, value = samples.at(asked[inside], focus.output)
     if not np.isfinite(value).all():
         return samples, None
-    on_left, on_right = _foretold(parting(view, lower, t), value, focus)
+    on_left, on_right = _foretold(parting(view, lower, upper, t), value, focus)
     for place, fits_left, fits_right in zip(t, on_left, on_right, strict=True):
         if not fits_left and not fits_right:
             return samples, None

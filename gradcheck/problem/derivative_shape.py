@@ -4,8 +4,8 @@ from typing import Any
 
 import numpy as np
 
-from gradcheck.errors import DerivativeShapeError, UsageError
-from gradcheck.problem.layout import Layout
+from gradcheck.errors import DerivativeShapeError
+from gradcheck.problem.layout import Layout, real_numbers
 from gradcheck.records.arrays import Array
 
 
@@ -37,7 +37,7 @@ def claim_matrix(kind: str, raw: Any, layout: Layout, output_shape: tuple[int, .
         )
     if kind == "gradient" and layout.single is None:
         return layout.flatten(raw, "the gradient claim")[None, :]
-    array = _numbers(kind, raw)
+    array = real_numbers(raw.toarray() if hasattr(raw, "toarray") else raw, f"the {kind} claim")
     if array.shape in _accepted(kind, layout, output_shape):
         return array.reshape(outputs, layout.size)
     raise _mismatch(kind, array.shape, layout, output_shape)
@@ -54,24 +54,6 @@ def _accepted(kind: str, layout: Layout, output_shape: tuple[int, ...]) -> list[
     if outputs == 1 and layout.size > 1:
         return [(1, layout.size), *shapes]
     return shapes
-
-
-def _numbers(kind: str, raw: Any) -> Array:
-    if raw is None:
-        raise UsageError(f"the {kind} claim returned None; does the function lack a return statement?")
-    if hasattr(raw, "toarray"):  # a scipy sparse matrix or array
-        raw = raw.toarray()
-    try:
-        array = np.asarray(raw)
-        if array.dtype.kind == "c":
-            raise UsageError(f"the {kind} claim is complex ({array.dtype}); derivatives of a real model are real")
-        return array.astype(float)
-    except (TypeError, ValueError) as error:
-        if isinstance(error, UsageError):
-            raise
-        raise UsageError(
-            f"the {kind} claim is {type(raw).__name__} {raw!r:.80}; an array of real numbers is needed"
-        ) from None
 
 
 def _mismatch(kind: str, found: tuple[int, ...], layout: Layout, output_shape: tuple[int, ...]) -> DerivativeShapeError:

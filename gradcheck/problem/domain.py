@@ -19,12 +19,15 @@ class Domain:
         Infinite where there is no bound.
     scale : ndarray
         Size of each variable, > 0: the typical size where it was given, else |x|, else the bounds' width, else 1.
+    known : ndarray of bool
+        Where something tells the size: the caller, or bounds on both sides.
     integer : ndarray of bool
     """
 
     lower: Array
     upper: Array
     scale: Array
+    known: BoolArray
     integer: BoolArray
 
     @property
@@ -66,6 +69,7 @@ def domain_of(x: Array, *, bounds: Any = None, typical: Any = None, integer: Any
         lower=frozen(lower),
         upper=frozen(upper),
         scale=frozen(_scale(x, lower, upper, typical)),
+        known=frozen(_told(typical, x) | np.isfinite(upper - lower), dtype=bool),
         integer=frozen(np.zeros(x.size, bool) if integer is None else integer, dtype=bool),
     )
 
@@ -83,6 +87,13 @@ def _scale(x: Array, lower: Array, upper: Array, typical: Any) -> Array:
     if bad.size:
         raise UsageError(f"typical[{bad[0]}] is {given[bad[0]]:g}; a typical size must be finite and > 0")
     return np.where(np.isnan(given), own, given)
+
+
+def _told(typical: Any, x: Array) -> BoolArray:
+    """Where the caller told the typical size."""
+    if typical is None:
+        return np.zeros(x.size, bool)
+    return ~np.isnan(np.broadcast_to(np.asarray(typical, dtype=float).ravel(), x.shape))
 
 
 def _bounds(bounds: Any, x: Array) -> tuple[Array, Array]:

@@ -167,6 +167,8 @@ def layout_of(at: Any, *, root: str = "x", wrt: Any = None, function: Any = None
     UsageError
         If the input is empty, complex, not numeric, or `wrt` names no argument.
     """
+    if wrt is not None and not isinstance(at, Arguments):
+        raise UsageError(f"wrt={wrt!r} names an argument, but `at` holds one only; give them by at=gradcheck.args(...)")
     builder = _Builder(function=function, wrt=wrt)
     template = builder.build(at, root, top=True)
     if not builder.values or sum(value.size for value in builder.values) == 0:
@@ -193,7 +195,7 @@ class _Builder:
         if isinstance(value, list | tuple):
             array = _rectangle(value)
             if array is None:
-                return type(value)([self.build(part, f"{path}[{i}]") for i, part in enumerate(value)])
+                return _like(value, [self.build(part, f"{path}[{i}]") for i, part in enumerate(value)])
             return self._leaf(array, path, scalar=False, top=True)
         if isinstance(value, bool | str | bytes) or value is None:
             return self._refuse_or_keep(value, path, top)
@@ -257,6 +259,29 @@ class _Builder:
         )
 
 
+def real_numbers(value: Any, what: str) -> Array:
+    """`value` as an array of float64.
+
+    Raises
+    ------
+    UsageError
+        If it is complex, text, or otherwise no array of real numbers.
+    """
+    if value is None:
+        raise UsageError(f"{what} returned None; does the function lack a return statement?")
+    try:
+        array = np.asarray(value)
+        if array.dtype.kind == "c":
+            raise UsageError(f"{what} is complex ({array.dtype}); derivatives of a real model are real")
+        return array.astype(float)
+    except (TypeError, ValueError) as error:
+        if isinstance(error, UsageError):
+            raise
+        raise UsageError(
+            f"{what} is {type(value).__name__} {value!r:.80}; an array of real numbers is needed"
+        ) from None
+
+
 def _rectangle(value: list[Any] | tuple[Any, ...]) -> np.ndarray[Any, Any] | None:
     """Array of a rectangular list of plain numbers; None for anything else."""
 
@@ -298,13 +323,25 @@ def _walk(template: Any, of_leaf: Callable[[Leaf], Any]) -> Any:
         )
     if isinstance(template, dict):
         return {key: _walk(part, of_leaf) for key, part in template.items()}
-    return type(template)([_walk(part, of_leaf) for part in template])
+    return _like(template, [_walk(part, of_leaf) for part in template])
+
+
+def _like(sequence: Any, parts: list[Any]) -> Any:
+    """The parts in a sequence of the same type; a named tuple takes them one by one."""
+    return type(sequence)(*parts) if hasattr(sequence, "_fields") else type(sequence)(parts)
+
+
+def _varies(template: Any) -> bool:
+    """Whether a part of a template holds any variable."""
+    if isinstance(template, dict):
+        return any(map(_varies, template.values()))
+    return isinstance(template, Leaf) or (isinstance(template, list | tuple) and any(map(_varies, template)))
 
 
 def _parts(template: Any, nested: Any, what: str) -> Iterator[Array]:
     """The parts of a claim that stand where the template has leaves, in order."""
     if isinstance(template, Leaf):
-        found = np.asarray(nested, dtype=float)
+        found = real_numbers(nested, f"{what} at {template.path}")
         if found.size != template.stop - template.start:
             raise UsageError(
                 f"{what} has shape {found.shape} at {template.path}, where the input has shape {template.shape}"
@@ -313,12 +350,13 @@ def _parts(template: Any, nested: Any, what: str) -> Iterator[Array]:
     elif isinstance(template, Arguments):
         yield from _argument_parts(template, nested, what)
     elif isinstance(template, dict):
-        if not isinstance(nested, Mapping) or not set(template) <= set(nested):
+        needed = {key: part for key, part in template.items() if _varies(part)}
+        if not isinstance(nested, Mapping) or not set(needed) <= set(nested):
             raise UsageError(
-                f"{what} must have the structure of the input, a dict with {sorted(map(str, template))}; found "
+                f"{what} must have the structure of the input, a dict with {sorted(map(str, needed))}; found "
                 + (f"keys {sorted(map(str, nested))}" if isinstance(nested, Mapping) else type(nested).__name__)
             )
-        for key, part in template.items():
+        for key, part in needed.items():
             yield from _parts(part, nested[key], what)
     elif isinstance(template, list | tuple):
         if not isinstance(nested, list | tuple) or len(nested) != len(template):

@@ -164,6 +164,8 @@ class Problem:
         self._refuse_bad_variables()
         if self.model is not None and not callable(self.model):
             raise UsageError(f"Problem(model=...) needs something that can be called, not {self.model!r}")
+        if "objective" in self.constraints:
+            raise UsageError("a constraint is named 'objective'; that name is taken by the objective: choose another")
         object.__setattr__(self, "objective", self._described("objective", self.objective))
         for name, constraint in self.constraints.items():
             self.constraints[name] = self._described(f"constraint {name!r}", constraint)  # type: ignore[index]

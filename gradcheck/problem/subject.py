@@ -112,8 +112,6 @@ def subject_of_problem(problem: Problem) -> Subject:
     runs: dict[str, Callable[..., Any]] = {}
     targets = {}
     for name, function in {"objective": problem.objective, **problem.constraints}.items():
-        if name in targets:
-            raise UsageError("a constraint is named 'objective'; that name is taken by the objective")
         run = name if problem.model is None else "model"
         callable_of_run = function.function if isinstance(function, Function) else problem.model
         assert callable_of_run is not None  # Problem has seen to it

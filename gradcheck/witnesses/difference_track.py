@@ -27,12 +27,14 @@ SHRINKS_MOST = 4
 #: From the second half of the six coefficients of `probe` to the end of the fourteen of `main`, in halves of `probe`.
 FORESEEN_SPANS = 2.7
 GROWTHS_MOST = 4
+#: No course is longer; in a box of a few units in the last place intervals stop shrinking.
+STAGES_MOST = 40
 #: The interval shrinks by 16 each time the model fails; after that the point itself is at the edge of its domain.
 ESCAPES_MOST = 6
 #: An interval grows where the bound exceeds this share of the value and the function is nearly a low polynomial.
 COARSE_BOUND = 1e-9
-#: An interval narrower than this says little about a function that does not change on it: few variables are so small.
-TINY = 1e-4
+#: An interval this much narrower than the variable says little about a function that does not change on it.
+NARROW = 1e-3
 #: A left-over tail below this share of the variation, that does not decay (that of a kink does), is a ripple: too fine
 #: to be what the function is about.
 RIPPLE = 1e-2
@@ -99,6 +101,7 @@ class Track:
     satisfied: BoolArray
     stage: str = "probe"
     filled: int = 0
+    stages: int = 0
     shrinks: int = 0
     growths: int = 0
     escapes: int = 0
@@ -155,6 +158,10 @@ class Track:
 
     def after_fit(self, fits: Fit, i: int, half: float) -> None:
         """Decide what comes after the fit `i` of the stage just measured."""
+        self.stages += 1
+        if self.stages > STAGES_MOST:
+            self.stop(UNSETTLED)
+            return
         self.latest = _candidate(fits, i, half, fits.resolved[i])
         if self._meets_plateau(fits, i):
             return
@@ -321,10 +328,11 @@ class Track:
             self.stop(UNSETTLED)
             return
         last = self.candidates[-1]
-        # A function that does not change at all need not be looked at wider, unless x is so small that this says little.
-        moves = (last.value != 0) | (last.half < TINY)
+        # A function that does not change at all need not be looked at wider, unless the interval is so narrow that this says little.
+        moves = (last.value != 0) | (last.half < NARROW * self.widest)
         coarse = (last.bound > COARSE_BOUND * np.abs(last.value)) & moves & np.isfinite(last.bound)
-        limit = min(self.reach, max(self.widest, 1.0) / 4)
+        # A variable keeps its sign: a wider interval may leave the domain of the model.
+        limit = min(self.reach, 0.45 * self.widest)
         if coarse.any() and (fits.order[i] <= 6).all() and self.growths < GROWTHS_MOST and last.half * 4 < limit:
             self.growths += 1
             self.half, self.stage, self.filled = min(last.half * 60, limit), "probe", 0

@@ -20,7 +20,7 @@ from gradcheck.witnesses.difference_track import SPENT, Track
 from gradcheck.witnesses.ladder import LADDER, read_ladder
 from gradcheck.witnesses.polynomial_fit import fit, stencil_on
 from gradcheck.witnesses.stencils import stage_of
-from gradcheck.witnesses.steps import Room, rounded_half_width
+from gradcheck.witnesses.steps import Room, least_half_width, rounded_half_width
 from gradcheck.witnesses.testimony import Testimony
 
 SOURCE = "finite difference"
@@ -198,15 +198,17 @@ class _Rounds:
 def _tracks(room: Room, d: int, outputs: int) -> list[Track]:
     """One track a direction, with its first interval: both sides where there is room, else the roomier side."""
     wanted = FIRST_WIDTH * room.scale
-    narrow = np.minimum(room.below, room.above)
-    both = narrow >= NARROW * wanted
-    side = np.where(both, 0, np.where(room.above >= room.below, 1, -1))
-    roomier = np.maximum(room.below, room.above)
+    # Less room than the smallest interval is none.
+    below, above = (np.where(side < least_half_width(room.grain), 0.0, side) for side in (room.below, room.above))
+    narrow = np.minimum(below, above)
+    both = (narrow >= NARROW * wanted) & (narrow > 0)
+    side = np.where(both, 0, np.where(above >= below, 1, -1))
+    roomier = np.maximum(below, above)
     reach = np.where(both, narrow, roomier)
     # One-sided fits lose digits to the end of their interval; a wider one gives some of them back.
     half = np.minimum(np.where(both, wanted, 2 * wanted), reach)
     return [
-        Track.begin(outputs, float(half[i]), int(side[i]), float(reach[i]), float(room.below[i]), float(room.widest[i]))
+        Track.begin(outputs, float(half[i]), int(side[i]), float(reach[i]), float(below[i]), float(room.widest[i]))
         for i in range(d)
     ]
 

@@ -145,8 +145,9 @@ def fit(
     """
     # Squares of tiny or huge values would leave the range of floating-point numbers; powers of two lose nothing.
     unit = 2.0 ** np.clip(np.floor(np.log2(np.where(largest > 0, largest, 1.0))), -1000, 1000)
-    fits = _fitted(stencil, half_width, differences / unit[:, None, :], largest / unit, slips, derivative, wobble)
-    scaled = {name: getattr(fits, name) * unit for name in _IN_UNITS_OF_VALUES}
+    with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
+        fits = _fitted(stencil, half_width, differences / unit[:, None, :], largest / unit, slips, derivative, wobble)
+        scaled = {name: getattr(fits, name) * unit for name in _IN_UNITS_OF_VALUES}
     return replace(fits, **scaled)
 
 

@@ -13,8 +13,9 @@ from gradcheck.witnesses.polynomial_fit import ROUNDING
 from gradcheck.witnesses.steps import Room, rounded_half_width
 from gradcheck.witnesses.testimony import Testimony
 
-#: Largest step in units of the variable's size.
-STEP = 0.01
+#: Largest step in units of the variable's size. Not a round number: on a staircase whose stairs are a round part of x,
+#: round steps go from stair to stair and see a straight line.
+STEP = 0.01 * 0.8637
 #: A variable this much smaller than its typical size is stepped as if it were larger.
 SMALLEST_SHARE = 0.1
 #: Half-width of the bound in standard deviations of rounding.
@@ -48,7 +49,7 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
         for), not noise inside the model: use it to confirm, never to refute.
     """
     d, m = len(directions), centre.size
-    wanted = STEP * np.maximum(room.scale, SMALLEST_SHARE * room.widest)
+    wanted = STEP * np.maximum(room.scale, SMALLEST_SHARE * room.typical)
     narrow = np.minimum(room.below, room.above)
     able = narrow >= 0.1 * wanted
     value, bound = np.full((d, m), np.nan), np.full((d, m), np.inf)

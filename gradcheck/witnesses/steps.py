@@ -11,6 +11,10 @@ from gradcheck.records.arrays import Array
 #: Nodes of all stencils are multiples of this part of the half-width, so that displacements need few bits and ``x + h``
 #: is exact for half-widths down to about 1e-12·|x|.
 NODE_GRID = 2.0**-12
+#: A variable smaller than this, with nothing to tell its size, is taken for a number near zero among ordinary ones ...
+TINY = 1e-4
+#: ... of this size.
+ORDINARY = 0.5
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -21,8 +25,10 @@ class Room:
     ----------
     scale : ndarray
         Displacement that moves some variable by its own size.
+    typical : ndarray
+        Displacement that moves some variable by its own or its typical size, whichever is larger.
     widest : ndarray
-        Displacement beyond which no difference is taken: the largest of the variable's own size, its typical size.
+        Displacement beyond which no difference is taken; `typical`, but for tiny values of unknown size.
     below, above : ndarray
         Largest displacements down and up that stay within the bounds, >= 0.
     grain : ndarray
@@ -31,6 +37,7 @@ class Room:
     """
 
     scale: Array
+    typical: Array
     widest: Array
     below: Array
     above: Array
@@ -41,22 +48,40 @@ def room_along(base: Array, directions: Directions, domain: Domain) -> Room:
     """Room along coordinate indices (d,) or rows (d, n)."""
     own = np.where(base != 0, np.abs(base), domain.scale)
     typical = np.maximum(own, domain.scale)
+    widest = np.where((typical < TINY) & ~domain.known, ORDINARY, typical)
     # Spacing at twice the size: a step may cross into the next binade.
     grain = np.spacing(np.maximum(2 * own, np.abs(base)))
     below, above = base - domain.lower, domain.upper - base
     if directions.ndim == 1:
         i = directions
-        return Room(scale=own[i], widest=typical[i], below=_inside(below[i]), above=_inside(above[i]), grain=grain[i])
-    with np.errstate(divide="ignore", invalid="ignore"):
-        size = np.abs(directions)
-        moves = size > 0
-        reach = np.where(moves, own / size, np.inf).min(axis=1)
-        widest = np.where(moves, typical / size, np.inf).min(axis=1)
-        up = np.where(directions > 0, above / size, np.where(directions < 0, below / size, np.inf)).min(axis=1)
-        down = np.where(directions > 0, below / size, np.where(directions < 0, above / size, np.inf)).min(axis=1)
-    still = ~moves.any(axis=1)
-    reach[still], widest[still] = 1.0, 1.0
-    return Room(scale=reach, widest=widest, below=_inside(down), above=_inside(up), grain=reach * np.finfo(float).eps)
+        return Room(
+            scale=own[i],
+            typical=typical[i],
+            widest=widest[i],
+            below=_inside(below[i]),
+            above=_inside(above[i]),
+            grain=grain[i],
+        )
+    size = np.abs(directions)
+    reach = _soonest(own, size)
+    return Room(
+        scale=reach,
+        typical=_soonest(typical, size),
+        widest=_soonest(widest, size),
+        below=_inside(_soonest(np.where(directions > 0, below, above), size, still=np.inf)),
+        above=_inside(_soonest(np.where(directions > 0, above, below), size, still=np.inf)),
+        grain=np.maximum(reach * np.finfo(float).eps, np.finfo(float).smallest_subnormal),
+    )
+
+
+def _soonest(distance: Array, size: Array, still: float = 1.0) -> Array:
+    """(d,): how far to go along directions of entries `size` (d, n) until the first variable has moved by `distance`.
+
+    `still` for a direction that moves nothing.
+    """
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        until = np.where(size > 0, distance / size, np.inf).min(axis=1)
+    return np.where((size > 0).any(axis=1), until, still)
 
 
 def _inside(distance: Array) -> Array:
@@ -64,7 +89,14 @@ def _inside(distance: Array) -> Array:
     return np.maximum(0.0, distance * (1 - 4 * np.finfo(float).eps))
 
 
+def least_half_width(grain: Array) -> Array:
+    """The smallest half-width whose nodes are multiples of `grain`."""
+    return np.asarray(grain / NODE_GRID)
+
+
 def rounded_half_width(width: Array, grain: Array) -> Array:
     """`width` (d,) rounded down so that every node of a stencil is a multiple of `grain`; at least one of them."""
-    unit = grain / NODE_GRID
-    return np.maximum(np.floor(width / unit), 1.0) * unit
+    unit = least_half_width(grain)
+    with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
+        counted = np.nan_to_num(np.floor(width / unit), nan=1.0, posinf=1.0)
+    return np.asarray(np.maximum(counted, 1.0) * unit)

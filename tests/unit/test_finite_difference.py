@@ -259,7 +259,6 @@ def bound_at(x, distance, sign):
     return float(x + sign * distance)
 
 
-@pytest.mark.xfail(strict=True, reason="the smallest half-width is 8192 units in the last place, whatever the room")
 @given(st.lists(st.tuples(sizes, distances, distances), min_size=1, max_size=3), st.booleans(), st.integers(0, 2**32))
 @example([(1.3, 0.0, -3.0)], False, 0)
 @settings(max_examples=200, deadline=None)
@@ -282,7 +281,6 @@ def test_a_step_never_leaves_the_bounds(variables, along_a_row, seed):
     assert not np.isnan(testimony.bound).any()
 
 
-@pytest.mark.xfail(strict=True, reason="the stages go round for ever: shrunk to the smallest half-width and begun again")
 @pytest.mark.parametrize(
     "function",
     [lambda x: math.sqrt(abs(x - 1.3)), lambda x: 1.0 if x >= 1.3 else 0.0, lambda x: math.floor(10.0 * x)],
@@ -294,7 +292,6 @@ def test_in_a_box_of_a_few_units_in_the_last_place_the_search_ends(function):
     assert testimony.spent < ENOUGH
 
 
-@pytest.mark.xfail(strict=True, reason="divisions by zero and overflows in the arithmetic of the steps")
 @pytest.mark.parametrize("room", [1e-320, 2e-309])
 @pytest.mark.parametrize("rows", [None, [[1.0]]], ids=["coordinate", "row"])
 def test_a_room_at_the_end_of_the_numbers_is_no_trouble(room, rows):
@@ -303,7 +300,6 @@ def test_a_room_at_the_end_of_the_numbers_is_no_trouble(room, rows):
     assert not abs(testimony.value - 1.0) > testimony.bound
 
 
-@pytest.mark.xfail(strict=True, reason="a fit that is nearly linear grows to a quarter of 1, whatever the unit of x")
 @pytest.mark.parametrize("slope", [1.0, 1e-3])
 def test_a_step_is_never_wider_than_the_variable(slope):
     seen = []
@@ -471,14 +467,14 @@ def test_a_factor_of_two_on_the_function_is_a_factor_of_two_on_value_and_bound(f
     assert single(lambda y: factor * function(y), x)[:2] == (factor * value, factor * bound)
 
 
-@pytest.mark.xfail(strict=True, reason="a fit that is nearly linear grows to a quarter of 1, whatever the unit of x")
 @given(functions, places, powers)
 @example(FUNCTIONS[-1], 1.5, 0.5)
 @settings(deadline=None)
 def test_a_factor_of_two_on_the_unit_of_x_divides_value_and_bound(function, x, factor):
-    value, bound, _ = single(function, x)
+    value, bound, _ = single(function, x, typical=abs(x))
 
-    assert single(lambda y: function(y / factor), x * factor)[:2] == (value / factor, bound / factor)
+    scaled = single(lambda y: function(y / factor), x * factor, typical=abs(x) * factor)
+    assert scaled[:2] == (value / factor, bound / factor)
 
 
 @given(functions, functions, places, st.floats(-5.0, 5.0), st.floats(-5.0, 5.0))

@@ -105,7 +105,6 @@ def test_a_tuple_that_holds_an_array_stays_a_tuple():
     assert isinstance(x, tuple)
 
 
-@pytest.mark.xfail(strict=True, reason="a named tuple is rebuilt from one list: TypeError")
 def test_a_named_tuple_of_arrays_reaches_the_model_as_one():
     ((x,), _) = as_received(Pair(np.ones(2), np.zeros(3)))
 
@@ -277,7 +276,6 @@ def test_a_claim_with_the_structure_of_the_input_becomes_one_vector():
     assert layout.flatten({"a": [1.0, 2.0], "b": 3.0}, "the claim").tolist() == [1.0, 2.0, 3.0]
 
 
-@pytest.mark.xfail(strict=True, reason="a claim must name even the parts that are no variables")
 def test_a_claim_need_not_hold_what_is_no_variable():
     layout, _ = layout_of({"a": np.ones(2), "mode": "fast", "b": 0.5})
 

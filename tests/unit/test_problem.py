@@ -115,7 +115,6 @@ def test_a_run_must_be_callable():
         described(model=3.0, objective=Output("cost"))
 
 
-@pytest.mark.xfail(strict=True, reason="the constraint silently takes the place of the objective")
 def test_a_constraint_must_not_take_the_name_of_the_objective():
     with pytest.raises(UsageError, match="'objective'; that name is taken"):
         subject_of_problem(described(constraints={"objective": Function(cost)}))

@@ -75,7 +75,8 @@ def _diagnosis(case: Case, factor: float, where: BoolArray) -> Diagnosis:
             code=DiagnosisCode.UNIT_FACTOR, text=f"{start}; look for a conversion between units.", entries=names
         )
     n = case.claim.shape[1]
-    if n > 2 and any(abs(abs(factor) - f) <= 1e-9 * f for f in (n, 1 / n)):
+    everything = bool((where | (case.value == 0)).all())
+    if n > 2 and everything and any(abs(abs(factor) - f) <= 1e-9 * f for f in (n, 1 / n)):
         return Diagnosis(
             code=DiagnosisCode.MEAN_FOR_SUM,
             text=f"{start}, and there are {n} variables; a mean was differentiated as a sum, or the reverse.",

@@ -23,10 +23,8 @@ def likely_mistakes(case: Case) -> tuple[Diagnosis, ...]:
     diagnoses = []
     left = case.refuted.copy()
     for family in FAMILIES:
-        if not left.any():
-            break
-        diagnosis = family(replace(case, refuted=left))
-        if diagnosis is not None:
+        # A family is asked again as long as it explains something: there may be two exchanges, or two factors.
+        while left.any() and (diagnosis := family(replace(case, refuted=left))) is not None:
             diagnoses.append(diagnosis)
             named = set(diagnosis.entries)
             for i, j in np.argwhere(left):
