@@ -160,7 +160,7 @@ def kinds_of_noise(told: Sequence[Told]) -> dict[str, list[Told]]:
 
 
 def flipped(claims: Sequence[Claim]) -> list[Claim]:
-    """The claims with the sign of their largest entry turned, in place of right ones; not where all entries are zero."""
+    """The claims with the sign of their largest entry turned; those that are zero in all entries are left out."""
     wrong = []
     for claim in claims:
         if not (claim.share >= PLAIN).any():

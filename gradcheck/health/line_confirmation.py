@@ -107,7 +107,7 @@ def _kink(
         return samples, None
     change = float(sides.change[1])
     noise = _noise_at(focus, sides)
-    half = max(8.0 * noise / abs(change), 0.02 * sides.distance, 0.5 * focus.closest(sides.centre))
+    half = max(20.0 * noise / abs(change), 0.05 * sides.distance, focus.closest(sides.centre))
     left, right = _measured(samples, focus, piece, sides, half, order=1)
     return samples, Irregularity(
         kind=FindingCode.KINK,

@@ -121,7 +121,8 @@ def _followed(
         noise = max(focus.sigma, ROUNDING * EPSILON * float(np.abs(f).max()))
         if second[largest] <= AUDIBLE * noise:
             break
-        sizes.append(float(second[largest]))
+        # All five together depend less than the largest on where between two samples the break lies.
+        sizes.append(float(np.sqrt((second**2).sum())))
         if spacing < finest or _smooth(sizes) or _jumps(sizes, f, focus):
             break
         centre, spacing = float(asked[largest + 1]), 0.5 * spacing

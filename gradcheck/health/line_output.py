@@ -12,6 +12,7 @@ from gradcheck.health.line_refinement import looked_at_to_the_noise, refined
 from gradcheck.health.line_report import Irregularity
 from gradcheck.health.line_samples import Line, Quest, Samples
 from gradcheck.health.line_survey import surveyed
+from gradcheck.health.line_zoom import suspicion
 from gradcheck.records.arrays import Array
 from gradcheck.records.finding import FindingCode
 
@@ -41,14 +42,26 @@ class OutputExamination:
     precision: Precision | None = None
     ledger: Ledger = field(default_factory=Ledger)
 
-    def quest(self, samples: Samples) -> Quest[None]:
-        """Edges, precision, then every finite stretch."""
-        samples = yield from edges_located(samples, self.output, self.line)
-        focus = self.focus = focused(
-            samples, self.line, self.output, self.grid, self.readings, np.random.default_rng(self.seed)
-        )
+    def begun(self, samples: Samples) -> float:
+        """Take in the first samples; how strongly they make some cell a suspect."""
+        rng = np.random.default_rng(self.seed)
+        focus = self.focus = focused(samples, self.line, self.output, self.grid, self.readings, rng)
         if focus is None:
+            return 0.0
+        strength = [0.0]
+        for lower, upper in finite_stretches(samples, self.output):
+            survey = surveyed(samples, focus, self.ledger, lower, upper)
+            rough = survey.cell[survey.hidden > survey.tolerance]
+            if rough.size:
+                strength.append(float(suspicion(survey.view, rough).max()))
+        return max(strength)
+
+    def quest(self, samples: Samples) -> Quest[None]:
+        """Edges, precision, then every finite stretch; what has `begun` before."""
+        samples = yield from edges_located(samples, self.output, self.line)
+        if self.focus is None:
             return
+        focus = self.focus
         samples, precision = yield from measured(samples, focus, self.grid, self.readings, self.repeat_gap == 0.0)
         self.precision = precision
         self.focus = focus = focus.with_noise(precision.sigma)

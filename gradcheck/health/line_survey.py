@@ -43,10 +43,12 @@ class Survey:
         return float(self.view.t[left]), float(self.view.t[left + 1])
 
     def roughest(self, among: BoolArray) -> int:
-        """That one of these cells at whose ends the slope changes most."""
+        """That one of these cells at whose ends the second divided differences are largest, beyond their noise."""
         slope = (self.view.f[self.cell + 1] - self.view.f[self.cell]) / self.width
-        change = np.abs(np.diff(slope, prepend=slope[:1], append=slope[-1:]))
-        return int(np.where(among, change[:-1] + change[1:], -1.0).argmax())
+        blur = 4.0 * self.view.noise[self.cell] / self.width
+        change = np.maximum(np.abs(np.diff(slope)) - blur[1:] - blur[:-1], 0.0)
+        second = np.pad(2.0 * change / (self.width[1:] + self.width[:-1]), 1)
+        return int(np.where(among, second[:-1] + second[1:], -1.0).argmax())
 
     def extreme(self, limit: float) -> int | None:
         """The narrower cell next to the value farthest from the median, if it is farther than `limit`."""

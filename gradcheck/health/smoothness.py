@@ -78,7 +78,8 @@ def examine_line(
         OutputExamination(line=line, output=output, grid=grid, readings=readings, repeat_gap=float(gap), seed=seed)
         for output, gap in enumerate(gaps)
     ]
-    yield from gathering.pursued({e.output: e.quest(gathering.samples) for e in examinations})
+    first = _begun(gathering, examinations)
+    yield from gathering.pursued({e.output: e.quest(gathering.samples) for e in first})
     return _reported(gathering, examinations)
 
 
@@ -113,6 +114,13 @@ def _repeat_gaps(gathering: Gathering, grid: Array) -> Inquiry[Array]:
         gap = np.abs(after - before)
     gap[np.isnan(before) & np.isnan(after) | (before == after)] = 0.0
     return np.asarray(np.nan_to_num(gap, nan=np.inf).max(axis=0, initial=0.0))
+
+
+def _begun(gathering: Gathering, examinations: list[OutputExamination]) -> list[OutputExamination]:
+    """All examinations, begun. The budget may end before many outputs had their turn: the most suspicious go first."""
+    with np.errstate(all="ignore"):
+        suspicions = [e.begun(gathering.samples) for e in examinations]
+    return [examinations[i] for i in np.argsort(-np.array(suspicions), kind="stable")]
 
 
 def _reported(gathering: Gathering, examinations: list[OutputExamination]) -> LineReport:

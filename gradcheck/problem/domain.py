@@ -93,7 +93,8 @@ def _told(typical: Any, x: Array) -> BoolArray:
     """Where the caller told the typical size."""
     if typical is None:
         return np.zeros(x.size, bool)
-    return ~np.isnan(np.broadcast_to(np.asarray(typical, dtype=float).ravel(), x.shape))
+    told: BoolArray = ~np.isnan(np.broadcast_to(np.asarray(typical, dtype=float).ravel(), x.shape))
+    return told
 
 
 def _bounds(bounds: Any, x: Array) -> tuple[Array, Array]:

@@ -1,8 +1,8 @@
 """Claims that are right, claims with one planted mistake, and right claims about noisy models.
 
-Written before any of them was checked. A mistake is planted only where it can be seen in values of double precision: in
-an entry that is not smaller than a share (`GROSS`, `SLIGHT`) of what the function and its other variables amount to, each
-entry taken times the size of its variable. What is smaller may be named or not; it is counted in `hidden`.
+Written before any of them was checked. A mistake is planted only where it can be seen in values of double precision:
+in an entry that is not smaller than a share (`GROSS`, `SLIGHT`) of what the function and its other variables amount to,
+each entry taken times the size of its variable. What is smaller may be named or not; it is counted in `hidden`.
 """
 
 import math
@@ -140,7 +140,7 @@ def right_claims(points: int, seed: int = 0, *, most: int = 60) -> list[Claim]:
     return gradients + jacobians
 
 
-# --- mistakes ----------------------------------------------------------------------------------------------------------
+# --- mistakes --------------------------------------------------------------------------------------------------------
 
 
 def _one(share: np.ndarray, least: float, random: np.random.Generator) -> tuple[int, ...] | None:
@@ -251,7 +251,7 @@ def planted(points: int, seed: int = 0, *, most: int = 60) -> list[Claim]:
     return wrong
 
 
-# --- noisy models ------------------------------------------------------------------------------------------------------
+# --- noisy models ----------------------------------------------------------------------------------------------------
 
 
 def six_digits(function: Callable[[Any], Any]) -> Callable[[Any], float]:
@@ -298,7 +298,7 @@ def orbit_distance_gradient(x: Any) -> np.ndarray:
 
 
 def pipe_loss(x: Any, stop: float) -> float:
-    """Pressure loss per length; velocity m/s, diameter m, roughness m. The friction law is solved by simple iteration."""
+    """Pressure loss per length; velocity in m/s, diameter and roughness in m. The friction law by simple iteration."""
     velocity, diameter, roughness = x
     reynolds = velocity * diameter / 1e-6
     root, change = 7.0, math.inf
@@ -365,7 +365,7 @@ def weir_level(x: Any, stop: float) -> float:
 
 
 def weir_level_gradient(x: Any) -> np.ndarray:
-    flow, lower, upper = x
+    _, lower, upper = x
     level = weir_level(x, 1e-15)
     slope = 1.5 * lower * math.sqrt(level) + 2.0 * upper * level
     return np.array([1.0, -(level**1.5), -(level**2)]) / slope
@@ -393,8 +393,8 @@ def noisy_claims(points: int, seed: int = 0, *, most: int = 13) -> list[Claim]:
                 name = f"{problem.name}, {noise}"
                 claims.append(_noisy(name, wrap(problem.function), problem.function, problem.gradient, x))
     for name, program, gradient, x0 in INNER_ITERATIONS:
-        for x in points_of(name, x0, points, seed):
-            claims.append(_noisy(name, _stopped(program, NOISE), _stopped(program, 1e-14), gradient, x))
+        noisy, clean = _stopped(program, NOISE), _stopped(program, 1e-14)
+        claims.extend(_noisy(name, noisy, clean, gradient, x) for x in points_of(name, x0, points, seed))
     return claims
 
 

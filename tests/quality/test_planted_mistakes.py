@@ -1,7 +1,8 @@
 """Planted mistakes are named and honest claims are left alone, at rates that are stated with their counts.
 
-The corpus (`mistake_corpus`) was written before any of its claims was checked. With no failure among N independent claims,
-the true rate of failure lies below 3/N with 95 % confidence; `python -m benchmarks --only verdicts` measures more points.
+The corpus (`mistake_corpus`) was written before any of its claims was checked. With no failure among N independent
+claims, the true rate of failure lies below 3/N with 95 % confidence; `python -m benchmarks --only verdicts` measures
+more points.
 """
 
 import functools
@@ -9,6 +10,7 @@ import functools
 import numpy as np
 import pytest
 
+import gradcheck
 from benchmarks.verdicts import Told, ask, flipped, kinds_of_noise, shortcomings
 from gradcheck import Verdict
 from tests.quality.mistake_corpus import (
@@ -50,7 +52,7 @@ def share(marks: list[bool]) -> float:
     return sum(marks) / len(marks)
 
 
-# --- the corpus itself -------------------------------------------------------------------------------------------------
+# --- the corpus itself -----------------------------------------------------------------------------------------------
 
 
 def test_the_corpus_is_large_enough_to_speak_of_rates():
@@ -84,7 +86,7 @@ def test_gradients_of_inner_iterations_are_those_of_the_converged_model(name):
         assert slope == pytest.approx(right_slope, rel=1e-5)
 
 
-# --- right claims about smooth models ----------------------------------------------------------------------------------
+# --- right claims about smooth models --------------------------------------------------------------------------------
 
 
 def test_no_right_claim_about_a_smooth_model_is_accused():
@@ -110,7 +112,7 @@ def test_a_right_claim_about_a_smooth_model_costs_about_six_evaluations_a_variab
     assert np.median(spent) <= 6.5
 
 
-# --- planted mistakes --------------------------------------------------------------------------------------------------
+# --- planted mistakes ------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("mistake", MISTAKES)
@@ -137,7 +139,7 @@ def test_the_planted_mistake_is_the_story_in_nineteen_of_twenty(mistake):
     assert share([told.told_rightly for told in wrong(mistake)]) >= 0.95, shortcomings(wrong(mistake))
 
 
-# --- noisy models ------------------------------------------------------------------------------------------------------
+# --- noisy models ----------------------------------------------------------------------------------------------------
 
 PLATEAU_FOR_DIGITS = pytest.mark.xfail(
     strict=True, reason="one of 42 entries: cut-off digits are taken for a plateau, and nothing is said"
@@ -204,6 +206,26 @@ def test_no_right_claim_about_a_model_with_an_inner_iteration_is_accused(name):
     accused = [t for t in noisy()[INNER] if t.claim.name == name and t.entries(Verdict.REFUTED).any()]
 
     assert accused == [], shortcomings(accused)
+
+
+def orbit_distance_after(x, sweeps):
+    """The program of `orbit_distance` once its iteration count is fixed; takes complex numbers."""
+    anomaly, eccentricity, axis = x
+    eccentric = anomaly
+    for _ in range(sweeps):
+        eccentric = anomaly + eccentricity * np.sin(eccentric)
+    return axis * (1.0 - eccentricity * np.cos(eccentric))
+
+
+def test_between_two_changes_of_the_iteration_count_the_witness_is_right_about_the_program():
+    """Which is why a right claim about the *model* is refuted there: its slope is another one, 1e-6 away."""
+    _, program, gradient, x = INNER_ITERATIONS[0]
+    sweeps = next(k for k in range(1, 99) if orbit_distance_after(x, k) == program(x, 1e-6))
+    of_program = [orbit_distance_after(x + 1e-30j * row, sweeps).imag / 1e-30 for row in np.eye(3)]
+    answer = gradcheck.estimate(lambda y: program(y, 1e-6), at=x)
+
+    assert np.all(np.abs(answer.value - of_program) <= answer.bound)
+    assert np.abs(of_program - gradient(x)).max() == pytest.approx(1e-6, rel=0.5)
 
 
 def test_a_sign_that_is_wrong_is_refuted_through_an_inner_iteration():

@@ -236,7 +236,9 @@ def test_a_rough_model_that_looks_smooth_is_called_rough(model, expected):
 def test_a_break_is_bracketed_where_it_is(code):
     found = of(report_on(code, "shows"), code)
 
-    assert any(f.where.lower - 1e-5 <= 1.3 <= f.where.upper + 1e-5 and f.where.upper - f.where.lower < 1e-3 for f in found)
+    assert any(
+        f.where.lower - 1e-5 <= 1.3 <= f.where.upper + 1e-5 and f.where.upper - f.where.lower < 1e-3 for f in found
+    )
 
 
 def test_the_slopes_on_both_sides_of_a_kink_are_told():
@@ -287,7 +289,10 @@ def test_a_model_without_claims_that_writes_into_its_input_is_told_too():
 
 def test_a_smooth_model_has_no_finding_and_is_ready():
     report = gradcheck.audit(
-        lambda x: np.exp(x[0]) * x[1], at=[0.3, 1.2], bounds=[(0, 1), (0, 2)], gradient=lambda x: np.exp(x[0]) * np.array([x[1], 1])
+        lambda x: np.exp(x[0]) * x[1],
+        at=[0.3, 1.2],
+        bounds=[(0, 1), (0, 2)],
+        gradient=lambda x: np.exp(x[0]) * np.array([x[1], 1]),
     )
 
     assert report.findings == ()
@@ -321,7 +326,10 @@ def test_a_variable_that_moves_only_a_constraint_is_not_dead():
 def test_a_whole_number_variable_is_told_and_its_entries_are_not_judged():
     def problem(integer):
         return Problem(
-            variables=[Variable("span", 0.7, lower=0, upper=2), Variable("plies", 4, lower=1, upper=9, integer=integer)],
+            variables=[
+                Variable("span", 0.7, lower=0, upper=2),
+                Variable("plies", 4, lower=1, upper=9, integer=integer),
+            ],
             objective=Function(lambda x: SIN(x[0]) * x[1], gradient=lambda x: [COS(x[0]) * x[1], 77.0]),
         )
 
@@ -344,7 +352,7 @@ def test_findings_stand_worst_first():
     assert ranks == sorted(ranks)
 
 
-# --- a start that fails --------------------------------------------------------------------------------------------------
+# --- a start that fails ----------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(
@@ -366,7 +374,7 @@ def test_the_last_words_of_a_failing_model_are_told():
     assert "the mesh collapsed" in str(gradcheck.audit(model, at=[0.7]))
 
 
-# --- budget --------------------------------------------------------------------------------------------------------------
+# --- budget ----------------------------------------------------------------------------------------------------------
 
 
 class Counted:
@@ -430,7 +438,7 @@ def test_the_model_is_never_called_outside_its_bounds():
     assert np.all(high <= [2.0, 3.0])
 
 
-# --- one run that gives all outputs --------------------------------------------------------------------------------------
+# --- one run that gives all outputs ----------------------------------------------------------------------------------
 
 
 def one_run(run, **options):
@@ -512,7 +520,7 @@ def test_a_run_may_give_its_outputs_by_place():
     assert {str(claim.verdict) for claim in gradcheck.audit(problem).claims} == {"confirmed"}
 
 
-# --- more points ---------------------------------------------------------------------------------------------------------
+# --- more points -----------------------------------------------------------------------------------------------------
 
 
 def only_left_of_one(x):
@@ -585,7 +593,7 @@ def test_a_problem_brings_its_own_options():
         gradcheck.audit(one_run(outputs), at=[0.7, 1.2])
 
 
-# --- findings accepted knowingly -----------------------------------------------------------------------------------------
+# --- findings accepted knowingly -------------------------------------------------------------------------------------
 
 
 KINKED = {"at": [0.7], "bounds": [(0.0, 2.0)]}
@@ -640,7 +648,7 @@ def test_a_wrong_key_of_accept_is_told_before_the_model_is_called():
     assert model.calls == 0
 
 
-# --- the report ----------------------------------------------------------------------------------------------------------
+# --- the report ------------------------------------------------------------------------------------------------------
 
 
 @functools.cache

@@ -43,7 +43,7 @@ def verdicts(*positional, **options):
     return [str(verdict) for verdict in look(*positional, **options).entries.verdict]
 
 
-# --- the three outcomes ------------------------------------------------------------------------------------------------
+# --- the three outcomes ----------------------------------------------------------------------------------------------
 
 
 def test_a_right_claim_is_silent(capsys):
@@ -116,7 +116,7 @@ def test_a_refuted_entry_outweighs_the_undecided_ones():
         gradcheck.check(lambda x: x[0] ** 2 + abs(x[1]), at=[1.5, 0.0], gradient=[2.0, 0.5], on_undecided="pass")
 
 
-# --- the report --------------------------------------------------------------------------------------------------------
+# --- the report ------------------------------------------------------------------------------------------------------
 
 
 def test_entries_are_parallel_arrays_with_names_and_places():
@@ -183,7 +183,7 @@ def test_names_of_the_variables_are_used():
     assert look(gradient=wrong_gradient, names=["span", "chord"]).diagnoses[0].entries == ("chord",)
 
 
-# --- forms of the claim ------------------------------------------------------------------------------------------------
+# --- forms of the claim ----------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(
@@ -282,7 +282,7 @@ def test_a_claim_that_is_nan_is_refuted_in_that_entry_only():
     assert verdicts(gradient=[math.nan, drag_gradient(X)[1]]) == ["refuted", "confirmed"]
 
 
-# --- where ---------------------------------------------------------------------------------------------------------------
+# --- where -----------------------------------------------------------------------------------------------------------
 
 
 def test_every_one_of_several_points_is_checked():
@@ -354,7 +354,7 @@ def test_a_claim_on_a_bound_can_be_confirmed():
     assert look(bounds=[(0.3, 2.0), (0.0, 1.2)], gradient=drag_gradient).verdict == Verdict.CONFIRMED
 
 
-# --- the rule, seen from outside -----------------------------------------------------------------------------------------
+# --- the rule, seen from outside -------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("claim", [-1.0, -0.5, 0.0, 1.0])
@@ -496,7 +496,7 @@ def test_a_model_that_writes_into_its_input_is_told():
     assert [f.code for f in report.findings] == ["mutates-input"]
 
 
-# --- what was changed on the way to the model ----------------------------------------------------------------------------
+# --- what was changed on the way to the model ------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("at", [[2, 3], np.array([2, 3]), (2, 3)])
@@ -514,7 +514,7 @@ def test_single_precision_becomes_double_and_the_report_says_so():
     assert any("float32" in notice for notice in report.notices)
 
 
-# --- every mistake of the caller is one clear error ----------------------------------------------------------------------
+# --- every mistake of the caller is one clear error ------------------------------------------------------------------
 
 
 def refused(words, function=drag, at=X, error=UsageError, **options):
@@ -579,7 +579,9 @@ def test_a_jacobian_that_lies_on_its_side():
     assert (error.expected, error.found) == ((3, 2), (2, 3))
 
 
-@pytest.mark.parametrize("claim", [lambda x: None, lambda x: "steep", lambda x: np.ones(2) * 1j, lambda x: [1.0, [2.0]]])
+@pytest.mark.parametrize(
+    "claim", [lambda x: None, lambda x: "steep", lambda x: np.ones(2) * 1j, lambda x: [1.0, [2.0]]]
+)
 def test_a_claim_that_is_no_array_of_real_numbers(claim):
     refused("the gradient claim", gradient=claim)
 
@@ -654,7 +656,7 @@ def test_claims_are_given_by_keyword_only(position):
         gradcheck.check(drag, X, *[drag_gradient] * (position - 1))
 
 
-# --- a model that cannot be evaluated ------------------------------------------------------------------------------------
+# --- a model that cannot be evaluated --------------------------------------------------------------------------------
 
 
 def test_a_model_that_raises_at_the_point():

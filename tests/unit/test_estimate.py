@@ -26,7 +26,7 @@ def holds(answer, right):
     return np.all(np.abs(answer.value - right) <= answer.bound + 4e-16 * np.abs(right))
 
 
-# --- first derivatives -------------------------------------------------------------------------------------------------
+# --- first derivatives -----------------------------------------------------------------------------------------------
 
 
 def test_a_gradient_has_the_shape_of_the_point_and_so_has_its_bound():
@@ -114,7 +114,7 @@ def test_a_model_is_never_called_outside_its_bounds():
     assert holds(answer, math.exp(0.3))
 
 
-# --- second derivatives ------------------------------------------------------------------------------------------------
+# --- second derivatives ----------------------------------------------------------------------------------------------
 
 
 def test_the_second_derivatives_of_a_number_are_a_symmetric_matrix():
@@ -153,7 +153,7 @@ def test_at_a_kink_there_is_no_second_derivative():
     assert gradcheck.estimate(lambda x: abs(x[0]), at=[0.0], order=2).bound == np.inf
 
 
-# --- where nothing can be said -------------------------------------------------------------------------------------------
+# --- where nothing can be said ---------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(
@@ -189,7 +189,7 @@ def test_a_budget_that_is_too_small_leaves_infinite_bounds_and_says_so():
     assert answer.evaluations <= 5
 
 
-# --- the record ----------------------------------------------------------------------------------------------------------
+# --- the record ------------------------------------------------------------------------------------------------------
 
 
 def test_every_call_of_the_model_is_told():
@@ -239,7 +239,7 @@ def test_integers_become_floats_and_the_record_says_so():
     assert any("integers" in notice for notice in gradcheck.estimate(lambda x: x[0] ** 2, at=[3]).notices)
 
 
-# --- mistakes of the caller ----------------------------------------------------------------------------------------------
+# --- mistakes of the caller ------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(

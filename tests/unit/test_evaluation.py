@@ -48,7 +48,7 @@ def statuses(session, *offsets, **options):
     return ask(session, *offsets, **options).status[0].tolist()
 
 
-# --- values ------------------------------------------------------------------------------------------------------------
+# --- values ----------------------------------------------------------------------------------------------------------
 
 
 def test_a_request_gets_the_values_at_base_plus_offset():
@@ -93,7 +93,7 @@ def test_the_precision_of_what_came_back_is_known():
     assert session.ledger.output_kinds == {"model": "float32"}
 
 
-# --- counting ----------------------------------------------------------------------------------------------------------
+# --- counting --------------------------------------------------------------------------------------------------------
 
 
 def test_every_call_is_counted_once():
@@ -137,7 +137,7 @@ def test_a_report_counts_every_call_of_the_model():
     assert report.evaluations == model.calls
 
 
-# --- memory ------------------------------------------------------------------------------------------------------------
+# --- memory ----------------------------------------------------------------------------------------------------------
 
 
 def test_no_point_is_evaluated_twice():
@@ -213,7 +213,7 @@ def test_all_outputs_of_one_run_come_from_one_call_a_point():
     assert model.calls == 2
 
 
-# --- budget and time ---------------------------------------------------------------------------------------------------
+# --- budget and time -------------------------------------------------------------------------------------------------
 
 
 def test_beyond_the_budget_points_are_refused_and_the_model_is_not_called():
@@ -295,7 +295,7 @@ def test_a_budget_that_is_no_number_is_refused(budget):
         evaluations_of(budget)
 
 
-# --- failures ----------------------------------------------------------------------------------------------------------
+# --- failures --------------------------------------------------------------------------------------------------------
 
 
 def test_an_exception_is_a_status_and_its_words_are_kept():
@@ -361,7 +361,7 @@ def test_a_point_where_no_number_comes_back_is_a_crash_among_good_ones(later, wo
     assert words in session.ledger.failures[0].message
 
 
-# --- a model that is wrong from the start ------------------------------------------------------------------------------
+# --- a model that is wrong from the start ----------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(
@@ -419,7 +419,7 @@ def test_a_nan_at_the_start_point_says_which_output():
     assert told.value.reason == "non-finite"
 
 
-# --- the model's surroundings ------------------------------------------------------------------------------------------
+# --- the model's surroundings ----------------------------------------------------------------------------------------
 
 
 def test_a_model_that_writes_into_its_input_harms_nobody_and_is_known():

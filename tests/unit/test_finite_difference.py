@@ -16,7 +16,6 @@ from gradcheck.witnesses.steps import room_along
 from tests.gates import gate_of
 from tests.problems import ONE_VARIABLE, SCALAR, VECTOR
 
-
 #: More evaluations than any direction needs: where a gate refuses here, the search did not end by itself.
 ENOUGH = 1000
 
@@ -42,7 +41,7 @@ def single(function, at, **options):
     return testimony.value.item(), testimony.bound.item(), testimony.reasons.get((0, 0), "")
 
 
-# --- smooth functions --------------------------------------------------------------------------------------------------
+# --- smooth functions ------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("problem", ONE_VARIABLE, ids=lambda p: p.name)
@@ -93,7 +92,7 @@ def test_along_a_row_the_slope_is_that_of_the_direction():
     assert testimony.bound.max() < 1e-10
 
 
-# --- zero --------------------------------------------------------------------------------------------------------------
+# --- zero ------------------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(("function", "right"), [(math.sin, 1.0), (math.exp, 1.0), (lambda x: x, 1.0), (math.cos, 0.0)])
@@ -133,7 +132,7 @@ def test_at_an_optimum_the_bound_covers_the_exact_zero(function):
     assert abs(value) <= bound < 1e-11
 
 
-# --- where there is no derivative --------------------------------------------------------------------------------------
+# --- where there is no derivative ------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(
@@ -211,7 +210,7 @@ def test_where_quotients_grow_without_limit_nothing_is_said(function, at, option
     assert "grow without limit" in reason
 
 
-# --- bounds of the variables -------------------------------------------------------------------------------------------
+# --- bounds of the variables -----------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("bounds", [(0.7, 5.0), (-5.0, 0.7)], ids=["lower", "upper"])
@@ -313,7 +312,7 @@ def test_a_step_is_never_wider_than_the_variable(slope):
     assert max(abs(x - 1e-9) for x in seen) <= 1e-9
 
 
-# --- where the model fails ---------------------------------------------------------------------------------------------
+# --- where the model fails -------------------------------------------------------------------------------------------
 
 
 def with_edge(function, edge, side, failure):
@@ -359,7 +358,7 @@ def test_a_failing_direction_costs_the_others_nothing():
     assert abs(testimony.value[1, 0] - math.exp(0.3)) <= testimony.bound[1, 0] < 1e-11
 
 
-# --- few digits --------------------------------------------------------------------------------------------------------
+# --- few digits ------------------------------------------------------------------------------------------------------
 
 
 def hashed(x):
@@ -391,7 +390,7 @@ def test_the_noise_that_was_heard_is_told():
     assert testimony.noise.item() == pytest.approx(uniform, rel=0.7)
 
 
-# --- the budget --------------------------------------------------------------------------------------------------------
+# --- the budget ------------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("limit", [0, 1, 5])
@@ -416,7 +415,7 @@ def test_a_budget_that_ends_among_the_variables_leaves_the_finished_ones():
     assert testimony.works
 
 
-# --- higher derivatives ------------------------------------------------------------------------------------------------
+# --- higher derivatives ----------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("problem", [p for p in ONE_VARIABLE if math.isfinite(p.second)], ids=lambda p: p.name)
@@ -451,7 +450,7 @@ def test_the_second_derivative_needs_no_values_that_the_first_did_not_take():
     assert seen[2] <= seen[1]
 
 
-# --- properties --------------------------------------------------------------------------------------------------------
+# --- properties ------------------------------------------------------------------------------------------------------
 
 FUNCTIONS = (math.sin, math.exp, lambda x: x**3 - x, lambda x: 1 / (2 + x * x), abs, lambda x: round(math.sin(x), 5))
 functions = st.sampled_from(FUNCTIONS)

@@ -24,7 +24,7 @@ def names_of(at, **options):
     return [layout.name(i) for i in range(layout.size)]
 
 
-# --- what reaches the model --------------------------------------------------------------------------------------------
+# --- what reaches the model ------------------------------------------------------------------------------------------
 
 
 def test_a_list_of_numbers_reaches_the_model_as_a_float_array():
@@ -126,7 +126,7 @@ def test_the_users_own_array_is_never_handed_out():
     assert not np.shares_memory(x, mine)
 
 
-# --- what is passed through, and what is changed with a notice ---------------------------------------------------------
+# --- what is passed through, and what is changed with a notice -------------------------------------------------------
 
 
 @pytest.mark.parametrize("at", [[1, 2], np.array([1, 2]), 3], ids=["list", "array", "number"])
@@ -165,7 +165,7 @@ def test_what_is_no_number_is_passed_through_inside_a_nesting(flag):
     assert x["flag"] is flag
 
 
-# --- what is refused ---------------------------------------------------------------------------------------------------
+# --- what is refused -------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("at", [[], {}, np.empty(0), (), [[]], {"count": 3}, {"mode": "fast"}])
@@ -182,7 +182,7 @@ def test_what_is_no_number_at_all_is_refused_with_its_type(at):
 
 @pytest.mark.parametrize("at", [1 + 2j, [1 + 2j], np.array([1j]), {"x": np.array([1j])}])
 def test_complex_parameters_are_refused_with_the_mend(at):
-    with pytest.raises(UsageError, match="complex.*real and imaginary parts as two"):
+    with pytest.raises(UsageError, match=r"complex.*real and imaginary parts as two"):
         layout_of(at)
 
 
@@ -205,7 +205,7 @@ def test_points_without_a_point_are_refused():
         points()
 
 
-# --- names -------------------------------------------------------------------------------------------------------------
+# --- names -----------------------------------------------------------------------------------------------------------
 
 
 def test_entries_are_named_by_their_place():
@@ -229,7 +229,7 @@ def test_there_is_no_name_beyond_the_last_entry():
         layout_of([0.3])[0].name(1)
 
 
-# --- several arguments -------------------------------------------------------------------------------------------------
+# --- several arguments -----------------------------------------------------------------------------------------------
 
 
 def beam(load, length, *, mode="fast"):
@@ -267,7 +267,7 @@ def test_a_wrt_that_names_no_argument_is_refused_with_the_arguments():
         layout_of(args(2.0, 3.0), function=beam, wrt="width")
 
 
-# --- claims with the structure of the input ----------------------------------------------------------------------------
+# --- claims with the structure of the input --------------------------------------------------------------------------
 
 
 def test_a_claim_with_the_structure_of_the_input_becomes_one_vector():

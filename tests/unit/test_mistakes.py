@@ -212,6 +212,8 @@ def test_every_refuted_entry_is_explained_exactly_once(pairs):
 @given(st.lists(entries, min_size=2, max_size=6), st.sampled_from([-1.0, 2.0, 0.5, math.pi / 180, 1e3]))
 def test_the_unit_of_the_function_changes_no_story(value, factor):
     right = np.array([value])
-    codes = [[d.code for d in told(factor * scale * right, scale * right, bound=1e-12 * scale)] for scale in (1.0, 2.0**20)]
+    codes = [
+        [d.code for d in told(factor * scale * right, scale * right, bound=1e-12 * scale)] for scale in (1.0, 2.0**20)
+    ]
 
     assert codes[0] == codes[1]

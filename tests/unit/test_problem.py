@@ -22,7 +22,7 @@ def described(**changes):
     return Problem(**parts)
 
 
-# --- variables ---------------------------------------------------------------------------------------------------------
+# --- variables -------------------------------------------------------------------------------------------------------
 
 
 def test_a_variable_without_bounds_is_unbounded():
@@ -64,11 +64,11 @@ def test_a_bound_of_nan_is_refused():
 
 @pytest.mark.parametrize("typical", [0.0, -1.0, math.nan, math.inf])
 def test_a_typical_size_must_be_finite_and_positive(typical):
-    with pytest.raises(UsageError, match="'span': typical is .*; give a finite size > 0"):
+    with pytest.raises(UsageError, match=r"'span': typical is .*; give a finite size > 0"):
         Variable("span", 1.2, typical=typical)
 
 
-# --- problems ----------------------------------------------------------------------------------------------------------
+# --- problems --------------------------------------------------------------------------------------------------------
 
 
 def test_a_problem_needs_a_variable():
@@ -91,12 +91,12 @@ def test_a_plain_callable_is_an_objective_without_claims():
 
 
 def test_what_cannot_be_called_is_no_function():
-    with pytest.raises(UsageError, match="something that can be called, not 3.0"):
+    with pytest.raises(UsageError, match=r"something that can be called, not 3.0"):
         Function(3.0)
 
 
 def test_what_cannot_be_called_is_no_constraint():
-    with pytest.raises(UsageError, match="constraint 'stress' is 3.0; it must be a callable"):
+    with pytest.raises(UsageError, match=r"constraint 'stress' is 3.0; it must be a callable"):
         described(constraints={"stress": 3.0})
 
 
@@ -106,12 +106,12 @@ def test_with_one_run_every_function_is_an_output():
 
 
 def test_without_a_run_an_output_leads_nowhere():
-    with pytest.raises(UsageError, match="objective is .*; it must be a callable"):
+    with pytest.raises(UsageError, match=r"objective is .*; it must be a callable"):
         described(objective=Output("cost"))
 
 
 def test_a_run_must_be_callable():
-    with pytest.raises(UsageError, match="something that can be called, not 3.0"):
+    with pytest.raises(UsageError, match=r"something that can be called, not 3.0"):
         described(model=3.0, objective=Output("cost"))
 
 
@@ -120,7 +120,7 @@ def test_a_constraint_must_not_take_the_name_of_the_objective():
         subject_of_problem(described(constraints={"objective": Function(cost)}))
 
 
-# --- what the verbs see ------------------------------------------------------------------------------------------------
+# --- what the verbs see ----------------------------------------------------------------------------------------------
 
 
 def test_the_subject_of_a_problem_carries_names_units_bounds_sizes_and_integers():
@@ -169,7 +169,7 @@ def test_the_start_point_of_a_subject_cannot_be_changed():
         session_of(cost, [1.0, 2.0]).subject.start[0] = 5.0
 
 
-# --- the decorator -----------------------------------------------------------------------------------------------------
+# --- the decorator ---------------------------------------------------------------------------------------------------
 
 
 def test_a_described_model_is_still_the_same_function():
@@ -178,5 +178,5 @@ def test_a_described_model_is_still_the_same_function():
 
 
 def test_only_functions_can_be_described():
-    with pytest.raises(UsageError, match="decorates a function, not 3.0"):
+    with pytest.raises(UsageError, match=r"decorates a function, not 3.0"):
         model(at=[1.0])(3.0)

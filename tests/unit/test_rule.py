@@ -32,7 +32,7 @@ def verdict(claim, value, bound, *, left=NAN, right=NAN, slope_error=0.0, **allo
     return Verdict.REFUTED if outcome.refuted[0] else Verdict.UNDECIDED
 
 
-# --- T -----------------------------------------------------------------------------------------------------------------
+# --- T ---------------------------------------------------------------------------------------------------------------
 
 
 def test_the_tolerance_is_absolute_plus_relative_plus_rounding():
@@ -57,7 +57,7 @@ def test_where_the_rounding_decides_is_known():
     assert T.floor_decides(np.array([0.0, 5.0]), np.array([0.0, 5.0])).tolist() == [True, False]
 
 
-# --- confirmed, refuted, undecided -------------------------------------------------------------------------------------
+# --- confirmed, refuted, undecided -----------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(
@@ -106,7 +106,7 @@ def test_it_is_refuted_even_if_the_bound_is_wide(claim):
     assert verdict(claim, 5.0, 1e9, abs_tol=1.0) == Verdict.REFUTED
 
 
-# --- zero --------------------------------------------------------------------------------------------------------------
+# --- zero ------------------------------------------------------------------------------------------------------------
 
 
 def test_an_exact_zero_is_confirmed_within_the_rounding_of_the_function():
@@ -122,7 +122,7 @@ def test_a_zero_claimed_for_something_visible_is_refuted():
     assert verdict(0.0, 1e-3, 1e-12, rel_tol=1e-8, rounding=1e-15) == Verdict.REFUTED
 
 
-# --- kinks -------------------------------------------------------------------------------------------------------------
+# --- kinks -----------------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("claim", [-1.0, -0.999, 0.0, 0.5, 1.0])
@@ -147,7 +147,7 @@ def test_at_a_kink_a_claim_that_is_not_finite_is_refuted(claim):
     assert verdict(claim, 0.0, 1.0, left=-1.0, right=1.0) == Verdict.REFUTED
 
 
-# --- overall -----------------------------------------------------------------------------------------------------------
+# --- overall ---------------------------------------------------------------------------------------------------------
 
 C, R, U = Verdict.CONFIRMED, Verdict.REFUTED, Verdict.UNDECIDED
 
@@ -168,7 +168,7 @@ def test_verdicts_are_words():
     assert [str(each) for each in Verdict] == ["confirmed", "refuted", "undecided"]
 
 
-# --- digits ------------------------------------------------------------------------------------------------------------
+# --- digits ----------------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(

@@ -20,7 +20,7 @@ def model(x):
 X = [0.3, 1.2]
 
 
-# --- the curve -----------------------------------------------------------------------------------------------------------
+# --- the curve -------------------------------------------------------------------------------------------------------
 
 
 def test_steps_increase_and_every_step_has_a_quotient_and_an_error():
@@ -61,7 +61,9 @@ def test_a_line_has_no_truncation_and_so_no_order():
     assert math.isnan(gradcheck.scan(lambda x: 3.0 * x, at=1.0).order)
 
 
-@pytest.mark.parametrize(("function", "third"), [(math.exp, math.e), (lambda x: math.sin(30 * x), 27000 * math.cos(30))])
+@pytest.mark.parametrize(
+    ("function", "third"), [(math.exp, math.e), (lambda x: math.sin(30 * x), 27000 * math.cos(30))]
+)
 def test_the_best_step_balances_truncation_and_rounding(function, third):
     """Gill, Murray, Saunders & Wright 1983: h = (3 ε/|f'''|)^(1/3); the minimum is flat, hence the factor 8."""
     curve = gradcheck.scan(function, at=1.0)
@@ -95,7 +97,7 @@ def test_at_a_kink_the_bound_covers_both_slopes():
     assert curve.bound >= 1.0
 
 
-# --- along what ----------------------------------------------------------------------------------------------------------
+# --- along what ------------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("along", ["chord", 1, np.int64(1), [0.0, 1.0]])
@@ -139,7 +141,7 @@ def test_of_a_problem_the_objective_is_scanned():
     assert (curve.along, curve.function) == ("chord", "objective")
 
 
-# --- bounds, budget, count -----------------------------------------------------------------------------------------------
+# --- bounds, budget, count -------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("bounds", [(1.0, 1.05), (0.9, 1.0), (0.999, 1.3)])
@@ -189,7 +191,7 @@ def test_the_record_is_made_of_plain_things_on_request():
     assert json.loads(json.dumps(told, allow_nan=False))["order"] == "nan"
 
 
-# --- mistakes of the caller ----------------------------------------------------------------------------------------------
+# --- mistakes of the caller ------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(

@@ -10,10 +10,13 @@ from gradcheck.claims.mistakes.sign import sign_flipped
 from gradcheck.claims.mistakes.swapped import swapped_entries
 from gradcheck.claims.mistakes.transpose import transposed
 from gradcheck.claims.mistakes.zero import zero_entry
+from gradcheck.records.arrays import BoolArray
 from gradcheck.records.report import Diagnosis
 from gradcheck.records.verdict import DiagnosisCode
 from gradcheck.wording import listed
 
+#: A claim this close to the derivative has all its main terms right.
+CLOSE = 1e-3
 #: A story about the whole claim comes before stories about single entries.
 FAMILIES: tuple[Family, ...] = (transposed, zero_entry, sign_flipped, swapped_entries, constant_factor)
 
@@ -31,8 +34,21 @@ def likely_mistakes(case: Case) -> tuple[Diagnosis, ...]:
                 if case.name(int(i), int(j)) in named:
                     left[i, j] = False
     if left.any():
-        names = case.names(left)
+        diagnoses.append(_unexplained(case, left))
+    return tuple(diagnoses)
+
+
+def _unexplained(case: Case, left: BoolArray) -> Diagnosis:
+    names = case.names(left)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        gap = np.abs(case.claim / case.value - 1)[left].max()
+    if gap < CLOSE:
+        text = (
+            f"{listed(names)}: claim and derivative agree to {int(-np.log10(gap))} digits, so no term of any weight is "
+            "wrong. If the model iterates to a tolerance, the derivative of the program differs from the exact one by "
+            "about as much; tighten it and check again. Otherwise look for a small term, or constants with few digits."
+        )
+    else:
         them = "it" if len(names) == 1 else "them"
         text = f"{listed(names)}: no simple mistake explains the difference; derive {them} afresh."
-        diagnoses.append(Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names))
-    return tuple(diagnoses)
+    return Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names)
