@@ -21,8 +21,8 @@ from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
 from gradcheck.problem.subject import CLAIM_KINDS, Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.arrays import Array, IntArray
 from gradcheck.records.finding import Finding
-from gradcheck.records.report import CheckReport, Entries
-from gradcheck.records.verdict import Verdict
+from gradcheck.records.report import CheckReport, Diagnosis, Entries
+from gradcheck.records.verdict import DiagnosisCode, Verdict
 from gradcheck.report.check_text import check_text
 from gradcheck.witnesses.steps import room_along
 from gradcheck.wording import listed
@@ -100,7 +100,7 @@ class Policy:
 
 def check(
     function: Any,
-    at: Any,
+    at: Any = None,
     *,
     gradient: Any = None,
     jacobian: Any = None,
@@ -125,7 +125,7 @@ def check(
     function : callable
         The model: takes what `at` holds, returns a number or an array.
     at : float, list, array, nesting, `gradcheck.args(...)` or `gradcheck.points(...)`
-        Where to check.
+        Where to check. A model decorated with `gradcheck.model` brings its own point and options.
     gradient, jacobian : callable, array or str
         The claim; exactly one. A callable with the model's own signature, its value at `at`, or the name of an AD
         source (``"jax"``, ``"autograd"``). Shapes: gradient ``(n,)`` for a model that returns a number, Jacobian
@@ -182,6 +182,20 @@ def check(
     'confirmed'
     """
     policy = Policy.of(on_refuted, on_undecided)
+    if isinstance(function, Problem):
+        raise UsageError(
+            "check takes a function; a Problem is looked at as a whole: gradcheck.audit(problem).claims holds a report on "
+            "each claim, and pytest collects them with the ini option gradcheck_modules"
+        )
+    if at is None:
+        options = _described_options(function)
+        described = {"gradient": gradient, "jacobian": jacobian, "wrt": wrt, "output": output, "bounds": bounds}
+        described |= {"names": names, "typical": typical, "witnesses": witnesses, "rel_tol": rel_tol}
+        if any(gradient is not None for gradient in (gradient, jacobian)):
+            options = {name: value for name, value in options.items() if name not in CLAIM_KINDS}
+        options |= {name: value for name, value in described.items() if value is not None}
+        rest = {"budget": budget, "time_limit": time_limit, "seed": seed, "on_refuted": on_refuted}
+        return check(function, **(rest | {"on_undecided": on_undecided} | options))
     claims = {"gradient": gradient, "jacobian": jacobian}
     if sum(claim is not None for claim in claims.values()) != 1:
         given = [kind for kind, claim in claims.items() if claim is not None]
@@ -199,6 +213,20 @@ def check(
         reports.extend(checked_claims(session, rules))
     report = reports[0] if len(reports) == 1 else _merged(reports)
     return policy.carry_out(report)
+
+
+def _described_options(function: Any) -> dict[str, Any]:
+    """Point and options of a decorated model.
+
+    Raises
+    ------
+    UsageError
+        If it is not decorated.
+    """
+    spec = getattr(function, SPEC_ATTRIBUTE, None)
+    if not isinstance(spec, ModelSpec):
+        raise UsageError("the point is missing: give at=..., or describe the model with @gradcheck.model(at=...)")
+    return {"at": spec.at, **spec.options}
 
 
 def check_described(
@@ -229,13 +257,8 @@ def check_described(
             raise UsageError(f"{', '.join(sorted(overrides))} cannot be set for a Problem; its description says it")
         session = open_session(subject_of_problem(thing), budget=budget, time_limit=time_limit)
         return checked_claims(session, rules)
-    spec = getattr(thing, SPEC_ATTRIBUTE, None)
-    options: dict[str, Any] = {}
-    if isinstance(spec, ModelSpec):
-        options = {"at": spec.at, **spec.options}
-    options |= {name: value for name, value in overrides.items() if value is not None}
-    if "at" not in options:
-        raise UsageError("the point is missing: give at=..., or describe the model with @gradcheck.model(at=...)")
+    given = {name: value for name, value in overrides.items() if value is not None}
+    options = given if "at" in given and not hasattr(thing, SPEC_ATTRIBUTE) else _described_options(thing) | given
     options |= {
         "on_refuted": "return",
         "on_undecided": "pass",
@@ -298,9 +321,11 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
         function=function,
         point=subject.start,
         entries=entries,
-        diagnoses=() if failure else _diagnoses(subject, function, kind, examined, columns, rel_tol, rules.abs_tol),
+        diagnoses=_raised(failure, entries)
+        if failure
+        else _diagnoses(subject, function, kind, examined, columns, rel_tol, rules.abs_tol),
         findings=tuple(findings),
-        notices=(*session.ledger.notices, *_left_out(subject)),
+        notices=(*session.ledger.notices, *_left_out(subject), *_few_digits(precision, rules.rel_tol)),
         evaluations=session.ledger.evaluations - before,
         seconds=time.perf_counter() - began,
     )
@@ -377,6 +402,20 @@ def _judgeable(subject: Subject) -> IntArray:
     if columns.size == 0:
         raise UsageError("every variable takes whole numbers only, so there is no derivative to check")
     return columns
+
+
+def _few_digits(precision: str, rel_tol: float | None) -> tuple[str, ...]:
+    if precision not in REL_TOL or rel_tol is not None:
+        return ()
+    return (
+        f"values or claim come in single precision ({precision}), so the claim was judged to a relative "
+        f"{REL_TOL[precision]:g} only; rel_tol=... asks for more",
+    )
+
+
+def _raised(failure: Finding, entries: Entries) -> tuple[Diagnosis, ...]:
+    """The story of a claim that raised: it is no wrong derivative, it is none."""
+    return (Diagnosis(code=DiagnosisCode.UNKNOWN, text=failure.text, entries=entries.name),)
 
 
 def _left_out(subject: Subject) -> tuple[str, ...]:

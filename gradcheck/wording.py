@@ -77,7 +77,7 @@ DIAGNOSIS_WORDS: dict[DiagnosisCode, str] = {
     DiagnosisCode.STALE_POINT: "the derivative of an earlier point",
     DiagnosisCode.SINGLE_PRECISION: "computed in single precision",
     DiagnosisCode.REGION_ONLY: "right in one region only",
-    DiagnosisCode.UNKNOWN: "no known mistake fits",
+    DiagnosisCode.UNKNOWN: "none of the usual ones",
 }
 
 

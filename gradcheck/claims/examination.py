@@ -14,7 +14,7 @@ from gradcheck.evaluation.protocol import Inquiry
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.records.verdict import Verdict
 from gradcheck.witnesses.complex_step import complex_step
-from gradcheck.witnesses.difference_track import CUT_OFF, REASONS
+from gradcheck.witnesses.difference_track import CUT_OFF, REASONS, SPENT
 from gradcheck.witnesses.finite_difference import finite_difference
 from gradcheck.witnesses.quick_look import quick_look
 from gradcheck.witnesses.steps import Room
@@ -29,6 +29,8 @@ OTHER_WIDTH = 0.37
 
 #: What the difference witness says of points without a derivative.
 NO_DERIVATIVE = frozenset(REASONS.values())
+#: What is said of an entry that would be refuted if there had been evaluations left for the second look.
+SUSPECT = "suspect: the first look refutes it, but the budget or the time ended before a second look could agree"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -294,6 +296,10 @@ class _Desk:
         self.refuted[part] &= outcome.refuted
         reason = self.reason[part]
         reason[fallen] = "a second look with other steps did not agree with the first"
+        cut_short = np.zeros(self.claim.shape, bool)[part]
+        for (row, output), why in testimony.reasons.items():
+            cut_short[output, row] = why == SPENT
+        reason[fallen & cut_short] = SUSPECT
         self.reason[part] = reason
         # Two looks that part show how much the first bound is worth.
         parted = np.abs(testimony.value.T - self.value[part])

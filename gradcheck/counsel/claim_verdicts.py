@@ -1,9 +1,11 @@
 """Findings from the verdicts on claims."""
 
+from gradcheck.claims.examination import SUSPECT
 from gradcheck.problem.subject import Subject
 from gradcheck.records.finding import Finding, FindingCode, Location, Severity
 from gradcheck.records.report import CheckReport
 from gradcheck.records.verdict import Verdict
+from gradcheck.witnesses.difference_track import SPENT
 from gradcheck.wording import count, listed
 
 
@@ -29,13 +31,12 @@ def _finding(subject: Subject, report: CheckReport, code: FindingCode, places: l
     if code == FindingCode.CLAIM_REFUTED:
         likely = report.diagnoses[0].text if report.diagnoses else ""
         text = f"{what} is wrong in {share}: {listed(names)}."
-        remedy = f"Mend the derivative before any run. {likely[:1].upper()}{likely[1:]}".strip()
+        remedy = f"Mend the derivative before any run: {likely}" if likely else "Mend the derivative before any run."
         severity = Severity.BLOCKER
     else:
         reasons = list(dict.fromkeys(r for k in places if (r := report.entries.reason[k])))
         text = f"{what} could not be judged in {share} ({listed(names)}): {'; '.join(reasons[:2])}."
-        remedy = "Give the model more digits there (a tighter inner tolerance, more printed digits) and check again."
-        severity = Severity.HAZARD
+        remedy, severity = _mend(reasons)
     return Finding(
         code=code,
         severity=severity,
@@ -46,6 +47,19 @@ def _finding(subject: Subject, report: CheckReport, code: FindingCode, places: l
         text=text,
         remedy=remedy,
     )
+
+
+def _mend(reasons: list[str]) -> tuple[str, Severity]:
+    """What to do about entries left open for these reasons, and how bad it is."""
+    if SUSPECT in reasons:
+        return (
+            "Raise the budget or the time limit: a claim that is probably wrong waits for its second look.",
+            Severity.BLOCKER,
+        )
+    if any(SPENT in reason for reason in reasons):
+        return "Raise the budget or the time limit.", Severity.HAZARD
+    remedy = "Give the model more digits there (a tighter inner tolerance, more printed digits) and check again."
+    return remedy, Severity.HAZARD
 
 
 def _only_variable(subject: Subject, report: CheckReport, places: list[int]) -> str | None:

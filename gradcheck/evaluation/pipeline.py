@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from gradcheck.errors import ModelFailure
+from gradcheck.errors import ModelFailure, UsageError
 from gradcheck.evaluation.budget import budgeted, evaluations_of, seconds_of
 from gradcheck.evaluation.cache import cached
 from gradcheck.evaluation.calls import Call, Engine, Outcome
@@ -60,6 +60,13 @@ class Session:
                 worth=np.inf,
             )
             reply = self.gate([request])[0]
+            if reply.status[0, 0] == Status.REFUSED:
+                runs = len(set(target.run for target in self.subject.targets.values()))
+                raise UsageError(
+                    f"the budget or the time ended before every function had its value at the start point; at least "
+                    f"{runs} {'evaluation is' if runs == 1 else 'evaluations are'} needed for that, and about "
+                    f"{7 * self.subject.layout.size} more for each claim"
+                )
             if not reply.finite.all():
                 raise self._failure(name, Status(reply.status[0, 0]), reply.values[0, 0])
             values[name] = reply.values[0, 0]

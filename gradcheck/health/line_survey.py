@@ -10,6 +10,7 @@ from gradcheck.health.line_predictions import SideView
 from gradcheck.health.line_samples import Samples
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 
+NARROW = 0.6  # power of the width; between the powers of x^1.5 and of x
 NOISE_TOLERANCE = 10.0  # standard deviations of the noise
 
 
@@ -43,12 +44,16 @@ class Survey:
         return float(self.view.t[left]), float(self.view.t[left + 1])
 
     def roughest(self, among: BoolArray) -> int:
-        """That one of these cells at whose ends the second divided differences are largest, beyond their noise."""
+        """That one of these cells at whose ends the slope changes most for so narrow a cell, beyond its noise.
+
+        The change of slope falls with the width where a function is smooth, and with a power of the width below one at
+        its breaks: weighed with `NARROW`, the cell of a break stands out among wider ones.
+        """
         slope = (self.view.f[self.cell + 1] - self.view.f[self.cell]) / self.width
         blur = 4.0 * self.view.noise[self.cell] / self.width
         change = np.maximum(np.abs(np.diff(slope)) - blur[1:] - blur[:-1], 0.0)
-        second = np.pad(2.0 * change / (self.width[1:] + self.width[:-1]), 1)
-        return int(np.where(among, second[:-1] + second[1:], -1.0).argmax())
+        rough = np.pad(change * (self.width[1:] + self.width[:-1]) ** -NARROW, 1)
+        return int(np.where(among, rough[:-1] + rough[1:], -1.0).argmax())
 
     def extreme(self, limit: float) -> int | None:
         """The narrower cell next to the value farthest from the median, if it is farther than `limit`."""

@@ -202,6 +202,8 @@ class _Builder:
         if isinstance(value, int | float | complex | np.generic):
             return self._leaf(np.asarray(value), path, scalar=True, top=top)
         if hasattr(value, "__array__"):
+            if not isinstance(value, np.ndarray):
+                self.notices.append(f"{path} was given as {type(value).__name__}; the model received a numpy array")
             return self._leaf(np.asarray(value), path, scalar=False, top=top)
         return self._refuse_or_keep(value, path, top)
 

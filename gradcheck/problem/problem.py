@@ -64,6 +64,10 @@ class Variable:
             object.__setattr__(self, name, number)
         if not math.isfinite(self.value):
             raise UsageError(f"variable {self.name!r}: the start value is {self.value}; give a finite number")
+        if self.lower > self.upper:
+            raise UsageError(
+                f"variable {self.name!r}: the bounds are the wrong way round: lower {self.lower:g} > upper {self.upper:g}"
+            )
         if not self.lower <= self.value <= self.upper:
             raise UsageError(
                 f"variable {self.name!r}: the start value {self.value:g} lies outside its bounds "
@@ -71,6 +75,14 @@ class Variable:
             )
         if self.typical is not None and not (math.isfinite(self.typical) and self.typical > 0):
             raise UsageError(f"variable {self.name!r}: typical is {self.typical!r}; give a finite size > 0")
+
+
+def _refuse_crossed_limits(lower: Any, upper: Any, equal: Any) -> None:
+    if equal is not None and (lower is not None or upper is not None):
+        raise UsageError("a constraint has equal=... together with lower or upper; give either")
+    both = isinstance(lower, int | float) and isinstance(upper, int | float)
+    if both and lower > upper:
+        raise UsageError(f"the limits of a constraint are the wrong way round: lower {lower:g} > upper {upper:g}")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -101,6 +113,7 @@ class Function:
                 f"Function needs something that can be called, not {self.function!r} "
                 f"({type(self.function).__name__}); pass the function itself, not its value"
             )
+        _refuse_crossed_limits(self.lower, self.upper, self.equal)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -121,6 +134,9 @@ class Output:
     lower: Any = field(default=None, kw_only=True)
     upper: Any = field(default=None, kw_only=True)
     equal: Any = field(default=None, kw_only=True)
+
+    def __post_init__(self) -> None:
+        _refuse_crossed_limits(self.lower, self.upper, self.equal)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -160,6 +176,11 @@ class Problem:
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "variables", tuple(self.variables))
+        if not isinstance(self.constraints, Mapping):
+            raise UsageError(
+                f"constraints is a {type(self.constraints).__name__}; give a dict of name -> gradcheck.Function(...), so "
+                "that the report can name them"
+            )
         object.__setattr__(self, "constraints", dict(self.constraints))
         self._refuse_bad_variables()
         if self.model is not None and not callable(self.model):

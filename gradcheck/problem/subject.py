@@ -181,6 +181,11 @@ def _root(function: Any) -> str:
 
 def _refuse_other_arguments(function: Any, layout: Layout, start: Array) -> None:
     """A model that cannot take these arguments is told here, with its signature, instead of by a traceback."""
+    if inspect.isclass(function):
+        raise UsageError(
+            f"the model is the class {function.__name__}; pass an instance that can be called, or one of its methods: "
+            f"{function.__name__}(...).method"
+        )
     try:
         signature = inspect.signature(function)
     except (TypeError, ValueError):
@@ -190,6 +195,10 @@ def _refuse_other_arguments(function: Any, layout: Layout, start: Array) -> None
         signature.bind(*positional, **keywords)
     except TypeError as error:
         name = getattr(function, "__name__", "the model")
+        if next(iter(signature.parameters), "") == "self":
+            raise UsageError(
+                f"{name}{signature} is a method without its instance; pass the method of an instance: instance.{name}"
+            ) from None
         raise UsageError(
             f"{name}{signature} cannot be called with `at`: {error}. Give every argument with "
             f"at=gradcheck.args(...), or wrap the model: lambda x: {name}(x[0], x[1])"

@@ -75,8 +75,8 @@ class Track:
         0 for both sides, +1 or −1 for one.
     reach, widest : float
         Largest half-width that the bounds allow, and that is sensible.
-    ripple : ndarray of bool, shape (m,)
-        Whether the structure that sent the track to the ladder was small beside the function's variation.
+    small, ripple : ndarray of bool, shape (m,)
+        Whether what sent the track to the ladder was small beside the function's variation; and did not decay either.
     settled : float
         Half-width below which the ladder saw the quotients settle.
     varied : ndarray, shape (m,)
@@ -108,6 +108,7 @@ class Track:
     laddered: bool = False
     tail: Array = field(default_factory=lambda: np.empty(0))
     ripple: BoolArray = field(default_factory=lambda: np.empty(0, bool))
+    small: BoolArray = field(default_factory=lambda: np.empty(0, bool))
     settled: float = 0.0
     coarse_tail: Array = field(default_factory=lambda: np.empty(0))
     varied: Array = field(default_factory=lambda: np.zeros(0))
@@ -149,7 +150,9 @@ class Track:
         """End here; outputs without an answer get the reason."""
         if reason == SPENT and self.latest is not None:
             # Better than nothing: what is left over counts as noise, so the bound is wide.
-            self.candidates.append(replace(self.latest, bound=np.where(self.satisfied, np.inf, self.latest.bound)))
+            unheard = np.full(self.satisfied.size, np.nan)
+            wide = np.where(self.satisfied, np.inf, self.latest.bound)
+            self.candidates.append(replace(self.latest, bound=wide, noise=unheard))
         for output in np.flatnonzero(~self.satisfied):
             self.reasons.setdefault(int(output), reason)
         self.stage = "done"
@@ -191,7 +194,7 @@ class Track:
         still = (fits.variation[i] == 0) & (self.varied > AMPLIFIED_MARGIN * fits.floor[i]) & ~self.satisfied
         self.varied = np.maximum(self.varied, fits.variation[i])
         for output in np.flatnonzero(still):
-            if self.coarse is not None and self.ripple[output]:
+            if self.coarse is not None and self.small[output]:
                 self._accept_noise(int(output))
             else:
                 self.reasons[int(output)] = REASONS[Nature.PLATEAU]
@@ -243,7 +246,8 @@ class Track:
         elif not self.laddered:
             self.coarse = _candidate(fits, i, half, fits.resolved[i])
             self.coarse_tail = fits.tail[i]
-            self.ripple = (fits.tail[i] < RIPPLE * fits.variation[i]) & fits.flat[i]
+            self.small = fits.tail[i] < RIPPLE * fits.variation[i]
+            self.ripple = self.small & fits.flat[i]
             self.stage = "ladder"
         elif half > 1.5 * self.settled:
             # Probably noise that the ladder missed, its few values falling on one digit; the finest interval will tell.
@@ -274,7 +278,7 @@ class Track:
         smaller = []
         for output in np.flatnonzero(~self.satisfied):
             nature = Nature(rungs.nature[i, output])
-            if nature == Nature.PLATEAU and self.ripple[output]:
+            if nature == Nature.PLATEAU and self.small[output]:
                 # Digits that are cut off: steps much larger than they see through it.
                 nature = Nature.NOISE
                 self.reasons[int(output)] = CUT_OFF

@@ -11,6 +11,7 @@ import gradcheck
 from tests.outside.asking import CONFIRMED, REFUTED, interval_of, places, report_on, verdicts
 from tests.problems import HOCK_SCHITTKOWSKI, HOCK_SCHITTKOWSKI_CONSTRAINTS
 
+
 def each(problems):
     cases = [pytest.param(problem, id=problem.name) for problem in problems]
     return pytest.mark.parametrize("problem", cases)

@@ -1,6 +1,6 @@
 """How often the examination of a line is right: found, named, located, and no smooth line accused.
 
-Lines of three seeds that no threshold was chosen on. The figures asserted leave room for what a few unlucky lines cost;
+Lines of two seeds that no threshold was chosen on. The figures asserted leave room for what a few unlucky lines cost;
 none depends on the machine's speed.
 """
 
@@ -17,9 +17,12 @@ from gradcheck.health.smoothness import examine_line
 from tests.gates import gate_of
 from tests.quality.line_corpus import Judgement, LineCase, corpus, judge
 
-SEEDS = (3001, 3002, 3003)
+SEEDS = (3001, 3002)
 #: Families of which at least this share must be right; all others 0.9. Cusps, contacts and dense tables are hard.
 HARD = {"cusp": 0.75, "contact": 0.75, "table": 0.7, "curvature break": 0.75, "kink": 0.85}
+
+
+SINGULAR = ("cusp", "contact")
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -58,7 +61,7 @@ def test_no_smooth_line_is_accused() -> None:
     smooth = [outcome for outcome in outcomes() if not outcome.case.kinds]
     accused = [(o.case.family, o.judgement.false_alarms) for o in smooth if o.judgement.false_alarms]
 
-    assert len(smooth) == 144
+    assert len(smooth) == 96
     assert accused == []
 
 
@@ -79,7 +82,8 @@ def test_every_family_is_judged_right_at_its_rate(family: str) -> None:
 
 
 def errors(kind: str) -> np.ndarray:
-    found = [o.judgement.error for o in outcomes() if o.case.kinds == (kind,)]
+    """Location errors of breaks between two smooth sides; those with an infinite slope or curvature are apart."""
+    found = [o.judgement.error for o in outcomes() if o.case.kinds == (kind,) and o.case.family not in SINGULAR]
     return np.array([error for error in found if np.isfinite(error)])
 
 
@@ -93,6 +97,13 @@ def test_breaks_are_located_to_a_small_part_of_the_line(kind: str, median: float
     assert np.quantile(found, 0.9) <= high
 
 
+@pytest.mark.parametrize("family", SINGULAR)
+def test_infinite_slopes_and_curvatures_are_located_too(family: str) -> None:
+    found = [o.judgement.error for o in by_family()[family] if o.judgement.right]
+
+    assert max(found) <= 1e-7
+
+
 def test_the_brackets_hold_the_breaks() -> None:
     inside = [
         any(lower <= place <= upper for place in outcome.case.places)
@@ -101,7 +112,7 @@ def test_the_brackets_hold_the_breaks() -> None:
         if kind in ("kink", "jump", "curvature-break") and kind in outcome.case.kinds and not outcome.case.anywhere
     ]
 
-    assert len(inside) > 150
+    assert len(inside) > 100
     assert np.mean(inside) >= 0.97
 
 

@@ -593,7 +593,7 @@ def test_a_claim_that_is_no_array_of_real_numbers(claim):
         ([0.3, math.nan], r"nan at x\[1\]"),
         ([0.3, math.inf], r"inf at x\[1\]"),
         ("0.3", "numbers are needed"),
-        (None, "numbers are needed"),
+        (None, "the point is missing"),
         ([0.3, 1j], "complex"),
         (gradcheck.points([0.3, 1.2], [0.3, math.nan]), "nan"),
     ],

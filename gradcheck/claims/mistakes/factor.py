@@ -19,6 +19,10 @@ KNOWN = {
     0.25: "1/4",
     3.0: "3",
     1 / 3: "1/3",
+    2 / 3: "2/3",
+    3 / 2: "3/2",
+    3 / 4: "3/4",
+    4 / 3: "4/3",
     math.log(10): "ln 10",
     1 / math.log(10): "1/ln 10",
     math.pi: "π",
@@ -75,7 +79,7 @@ def _diagnosis(case: Case, factor: float, where: BoolArray) -> Diagnosis:
             code=DiagnosisCode.UNIT_FACTOR, text=f"{start}; look for a conversion between units.", entries=names
         )
     n = case.claim.shape[1]
-    everything = bool((where | (case.value == 0)).all())
+    everything = bool((where == case.refuted).all()) and where.sum() > max(1, n // 2)
     if n > 2 and everything and any(abs(abs(factor) - f) <= 1e-9 * f for f in (n, 1 / n)):
         return Diagnosis(
             code=DiagnosisCode.MEAN_FOR_SUM,

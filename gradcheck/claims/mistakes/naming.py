@@ -13,7 +13,7 @@ from gradcheck.claims.mistakes.zero import zero_entry
 from gradcheck.records.arrays import BoolArray
 from gradcheck.records.report import Diagnosis
 from gradcheck.records.verdict import DiagnosisCode
-from gradcheck.wording import listed
+from gradcheck.wording import listed, number
 
 #: A claim this close to the derivative has all its main terms right.
 CLOSE = 1e-3
@@ -38,6 +38,11 @@ def likely_mistakes(case: Case) -> tuple[Diagnosis, ...]:
     return tuple(diagnoses)
 
 
+def _only_ratio(case: Case, left: BoolArray) -> float:
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return float((case.claim / case.value)[left][0])
+
+
 def _unexplained(case: Case, left: BoolArray) -> Diagnosis:
     names = case.names(left)
     with np.errstate(divide="ignore", invalid="ignore"):
@@ -48,7 +53,14 @@ def _unexplained(case: Case, left: BoolArray) -> Diagnosis:
             "wrong. If the model iterates to a tolerance, the derivative of the program differs from the exact one by "
             "about as much; tighten it and check again. Otherwise look for a small term, or constants with few digits."
         )
+    elif not np.isfinite(case.claim[left]).any():
+        text = f"{listed(names)}: the claim is not a finite number; look for 0/0, log(0) or an overflow in it."
     else:
+        ratio = (
+            f" (the claim is {number(_only_ratio(case, left), digits=4)} times the derivative)"
+            if left.sum() == 1
+            else ""
+        )
         them = "it" if len(names) == 1 else "them"
-        text = f"{listed(names)}: no simple mistake explains the difference; derive {them} afresh."
+        text = f"{listed(names)}: no simple mistake explains the difference{ratio}; derive {them} afresh."
     return Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names)
