@@ -184,8 +184,8 @@ def check(
     policy = Policy.of(on_refuted, on_undecided)
     if isinstance(function, Problem):
         raise UsageError(
-            "check takes a function; a Problem is looked at as a whole: gradcheck.audit(problem).claims holds a report on "
-            "each claim, and pytest collects them with the ini option gradcheck_modules"
+            "check takes a function; a Problem is looked at as a whole: gradcheck.audit(problem).claims holds a report "
+            "on each claim, and pytest collects them with the ini option gradcheck_modules"
         )
     if at is None:
         options = _described_options(function)

@@ -69,3 +69,36 @@ def scan_output() -> str:
 
 
 OUTPUTS = {"demo": demo_output, "mismatch": mismatch_output, "scan": scan_output}
+
+
+def excerpt(name: str, said: str) -> str:
+    """What README.md shows of an output: all of it, or the telling parts of the long demo."""
+    if name != "demo":
+        return said
+    lines = said.splitlines()
+
+    def part(start: str, after: int = 0) -> list[str]:
+        first = next(k for k in range(after, len(lines)) if start in lines[k])
+        last = next(k for k in range(first, len(lines)) if lines[k] == "")
+        return lines[first:last]
+
+    second_claim = next(k for k, line in enumerate(lines) if line.startswith("  gradient of temperature"))
+    kink, jump = part("HAZARD kink"), part("HAZARD jump")
+    return "\n".join(
+        [*lines[:second_claim], "...", "", *kink, "", *jump, "", "...", "", *part("Best steps for objective"), "", "..."]
+    )
+
+
+def refresh() -> None:
+    """Write today's outputs into README.md."""
+    text = README.read_text(encoding="utf-8")
+    for name, output in OUTPUTS.items():
+        before, _, rest = text.partition(f"<!-- output: {name} -->\n")
+        after = rest.partition("<!-- end -->")[2]
+        shown = excerpt(name, output())
+        text = f"{before}<!-- output: {name} -->\n```text\n{shown}\n```\n<!-- end -->{after}"
+    README.write_text(text, encoding="utf-8")
+
+
+if __name__ == "__main__":
+    refresh()

@@ -191,9 +191,9 @@ class _Desk:
     ) -> None:
         """Apply the rule to the entries still open.
 
-        A quick look (not final) may confirm, by the tolerance that the caller asked for and no share of rounding, but not
-        refute; what replaces it is believed even where its bound is wider. What is contested cannot decide against the
-        witness heard before it: where the two part beyond their bounds, the entry stays open.
+        A quick look (not final) may confirm, by the tolerance that the caller asked for and no share of rounding, but
+        not refute; what replaces it is believed even where its bound is wider. What is contested cannot decide against
+        the witness heard before it: where the two part beyond their bounds, the entry stays open.
         """
         if final:
             self.noise = np.fmax(self.noise, testimony.noise)

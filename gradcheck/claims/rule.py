@@ -2,7 +2,8 @@
 
 For a claim c, a witness w ± b and the tolerance T = abs_tol + rel_tol·max(|c|, |w|) + allowance·ε/τ:
 
-* confirmed: |c − w| + b <= T, and the witness sees no difference beyond what rel_tol and abs_tol allow: rounding may hide a
+* confirmed: |c − w| + b <= T, and the witness sees no difference beyond what rel_tol and abs_tol allow: rounding may
+hide a
   difference, it does not excuse one that is seen (|c − w| <= abs_tol + rel_tol·max(|c|, |w|) + 3b);
 * refuted: |c − w| > T + 3b (a second look has to agree; see `examination`);
 * else undecided.
@@ -17,9 +18,10 @@ import numpy as np
 
 from gradcheck.records.arrays import Array, BoolArray
 
-#: Share of the rounding floor ε over the typical size τ of the variable that a claim may be off. A true zero at a smooth
-#: point (an optimum) must be confirmable: the bound of the difference witness is about 200·ε/τ on its first interval, and
-#: up to 3000·ε/τ where it has to shrink or terms cancel (measured at published optima and critical points).
+#: Share of the rounding floor ε over the typical size τ of the variable that a claim may be off. A true zero at a
+#: smooth point (an optimum) must be confirmable: the bound of the difference witness is about 200·ε/τ on its first
+#: interval, and up to 3000·ε/τ where it has to shrink or terms cancel (measured at published optima and critical
+#: points).
 ALLOWANCE = 3000.0
 #: How many bounds beyond the tolerance a claim must be off to be refuted.
 REFUTING_BOUNDS = 3.0

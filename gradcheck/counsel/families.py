@@ -34,6 +34,7 @@ class Evidence:
     steps: Sequence[Steps]
     scaling: Scaling | None
     largest: float
+    lines_examined: int
     seconds_per_evaluation: float
 
     def of(self, *codes: FindingCode, objective_only: bool = False) -> list[Finding]:
@@ -81,7 +82,18 @@ def _family(evidence: Evidence) -> tuple[Family, list[str]]:
         against.append(f"noise: {number(loud[0].noise, digits=2)} in {loud[0].function} drowns small changes.")
     if against:
         return Family.GRADIENT_FREE, against
-    reasons = ["the objective is smooth enough where it was looked at, and a derivative source works."]
+    looked = evidence.lines_examined > 0
+    works = any(w.works for w in evidence.witnesses) or any(c.verdict == Verdict.CONFIRMED for c in evidence.claims)
+    reasons = [
+        (
+            "the objective is smooth enough where it was looked at"
+            if looked
+            else "nothing speaks against gradients so far"
+        )
+        + (", and a derivative source works." if works else ", but no derivative source was seen to work.")
+    ]
+    if not looked:
+        reasons.append("no line was looked at for kinks and jumps: the budget or the time ended before.")
     for finding in evidence.of(FindingCode.KINK, FindingCode.JUMP)[:3]:
         place = f" along {finding.variable}" if finding.variable else ""
         reasons.append(
@@ -106,7 +118,9 @@ def _sources(evidence: Evidence) -> list[str]:
             continue
         wrong = any(c.verdict == Verdict.REFUTED for c in claims)
         best = min(works, key=lambda w: (_rank(w), w.evaluations), default=None)
-        instead = f"{best.source}" if best else "none works; a gradient-free method is left"
+        unheard = any(w.reason == "not looked at" for w in evidence.witnesses if w.function == name)
+        none = "not looked at within the budget" if unheard else "none works; a gradient-free method is left"
+        instead = best.source if best else none
         lines.append(
             f"{name}: your own {claims[0].kind} once it is mended; until then {instead}"
             if wrong

@@ -165,7 +165,7 @@ def _whole(subject: Subject, function: str, kind: FindingCode, worst: Irregulari
         ),
         FindingCode.UNREPEATABLE: (
             f"{function} gave values that differ by {size} at one and the same point.",
-            "Seed random numbers, reset hidden state between calls, and audit again: every other figure waits for this.",
+            "Seed random numbers, reset hidden state between calls, and audit again: all other figures wait for this.",
             Severity.BLOCKER,
         ),
     }[kind]

@@ -8,8 +8,9 @@ from gradcheck.errors import ModelFailure
 from gradcheck.evaluation.ledger import Ledger
 from gradcheck.evaluation.protocol import Status
 from gradcheck.health.repeatability import Repeatability
+from gradcheck.health.sensitivity import FarMoves
 from gradcheck.problem.subject import Subject
-from gradcheck.records.arrays import BoolArray, IntArray
+from gradcheck.records.arrays import IntArray
 from gradcheck.records.finding import Finding, FindingCode, Location, Severity
 from gradcheck.witnesses.testimony import Testimony
 from gradcheck.wording import count, listed, number
@@ -65,21 +66,32 @@ def unrepeatable(subject: Subject, function: str, seen: Repeatability) -> list[F
     ]
 
 
-def dead_variables(subject: Subject, unchanged: Mapping[str, BoolArray], coordinates: IntArray) -> list[Finding]:
-    """Variables that change no function at all, at the point and far from it."""
-    still = np.all([marks.all(axis=1) for marks in unchanged.values()], axis=0)
+def dead_variables(subject: Subject, moves: Mapping[str, FarMoves], coordinates: IntArray) -> list[Finding]:
+    """Variables that change no function: anywhere that was looked at, or at the start point only."""
+    here = np.all([seen.here.all(axis=1) for seen in moves.values()], axis=0)
+    elsewhere = np.all([seen.elsewhere.all(axis=1) for seen in moves.values()], axis=0)
     return [
-        Finding(
-            code=FindingCode.DEAD_VARIABLE,
-            severity=Severity.HAZARD,
-            function="",
-            variable=subject.layout.name(int(i)),
-            where=Location(point=subject.start),
-            text=f"{subject.layout.name(int(i))} changes nothing: no output moves when it goes across its whole range.",
-            remedy="Take it out of the problem, or find out why the model ignores it (an unused or overwritten input).",
-        )
-        for i in coordinates[still]
+        _dead(subject, subject.layout.name(int(coordinates[place])), bool(elsewhere[place]))
+        for place in np.flatnonzero(here)
     ]
+
+
+def _dead(subject: Subject, name: str, everywhere: bool) -> Finding:
+    if everywhere:
+        text = f"{name} changes nothing: no output moves when it goes across its whole range."
+        remedy = "Take it out of the problem, or find out why the model ignores it (an unused or overwritten input)."
+    else:
+        text = f"{name} changes nothing at the start point, though it does elsewhere: its derivative is zero there."
+        remedy = "Start from a point where it matters; a gradient method cannot tell which way to move it there."
+    return Finding(
+        code=FindingCode.DEAD_VARIABLE,
+        severity=Severity.HAZARD if everywhere else Severity.REMARK,
+        function="",
+        variable=name,
+        where=Location(point=subject.start),
+        text=text,
+        remedy=remedy,
+    )
 
 
 def integer_variables(subject: Subject) -> list[Finding]:

@@ -61,7 +61,7 @@ class Session:
             )
             reply = self.gate([request])[0]
             if reply.status[0, 0] == Status.REFUSED:
-                runs = len(set(target.run for target in self.subject.targets.values()))
+                runs = len({target.run for target in self.subject.targets.values()})
                 raise UsageError(
                     f"the budget or the time ended before every function had its value at the start point; at least "
                     f"{runs} {'evaluation is' if runs == 1 else 'evaluations are'} needed for that, and about "

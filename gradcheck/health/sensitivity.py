@@ -6,7 +6,7 @@ import numpy as np
 
 from gradcheck.evaluation.protocol import Inquiry, Request
 from gradcheck.problem.domain import Domain
-from gradcheck.records.arrays import Array, BoolArray, frozen
+from gradcheck.records.arrays import Array, BoolArray, IntArray, frozen
 
 #: Half-width of the window of a variable without bounds, in units of its size.
 WINDOW = 0.5
@@ -18,14 +18,18 @@ class FarMoves:
 
     Attributes
     ----------
-    unchanged : ndarray of bool, shape (n, m)
-        Every value far away is exactly the value at the point.
+    here : ndarray of bool, shape (d, m)
+        From the start point, every value far away is exactly the value at the start.
+    elsewhere : ndarray of bool, shape (d, m)
+        The same from another point, where all other variables have moved; True only where it was looked at.
     """
 
-    unchanged: BoolArray
+    here: BoolArray
+    elsewhere: BoolArray
 
     def __post_init__(self) -> None:
-        object.__setattr__(self, "unchanged", frozen(self.unchanged, dtype=bool))
+        for name in ("here", "elsewhere"):
+            object.__setattr__(self, name, frozen(getattr(self, name), dtype=bool))
 
 
 def windows(base: Array, domain: Domain) -> tuple[Array, Array]:
@@ -38,10 +42,11 @@ def windows(base: Array, domain: Domain) -> tuple[Array, Array]:
     return np.minimum(lower, base), np.maximum(upper, base)
 
 
-def far_moves(
-    base: Array, coordinates: np.ndarray[tuple[int, ...], np.dtype[np.intp]], domain: Domain, centre: Array
-) -> Inquiry[FarMoves]:
-    """Move each coordinate to three far places of its window and compare with `centre`.
+def far_moves(base: Array, coordinates: IntArray, domain: Domain, centre: Array, *, seed: int = 0) -> Inquiry[FarMoves]:
+    """Move each coordinate to three far places of its window and compare the values.
+
+    A variable that changes nothing at the start point (a spring that is not loaded there) is looked at again from
+    another point before it is called dead.
 
     Parameters
     ----------
@@ -49,6 +54,9 @@ def far_moves(
     coordinates : ndarray of int, shape (d,)
     domain : Domain
     centre : ndarray, shape (m,)
+        Values at `base`.
+    seed : int
+        Of the other point.
 
     Returns
     -------
@@ -56,11 +64,24 @@ def far_moves(
         One row per coordinate asked for. A value that is not finite counts as a change.
     """
     lower, upper = windows(base, domain)
+    here = yield from _unchanged(base, coordinates, lower, upper, centre)
+    elsewhere = np.zeros_like(here)
+    still = np.flatnonzero(here.all(axis=1))
+    if still.size:
+        other = lower + np.random.default_rng(seed).uniform(0.2, 0.8, base.size) * (upper - lower)
+        other = np.where(domain.integer, base, other)
+        reply = yield Request(base=other, directions=coordinates[:1], offsets=np.zeros((1, 1)))
+        elsewhere[still] = yield from _unchanged(other, coordinates[still], lower, upper, reply.values[0, 0])
+    return FarMoves(here=here, elsewhere=elsewhere)
+
+
+def _unchanged(base: Array, coordinates: IntArray, lower: Array, upper: Array, centre: Array) -> Inquiry[BoolArray]:
     x = base[coordinates]
     # 0.7 is not the middle: a function that is even about it would look dead.
     ends = np.stack([lower[coordinates], upper[coordinates], x + 0.7 * (upper[coordinates] - x)], axis=1)
     reply = yield Request(base=base, directions=coordinates, offsets=ends - x[:, None])
-    return FarMoves(unchanged=(reply.values == centre).all(axis=1))
+    same: BoolArray = (reply.values == centre).all(axis=1)
+    return same
 
 
 def spread(gradient: Array, sizes: Array) -> float:

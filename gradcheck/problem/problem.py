@@ -66,7 +66,8 @@ class Variable:
             raise UsageError(f"variable {self.name!r}: the start value is {self.value}; give a finite number")
         if self.lower > self.upper:
             raise UsageError(
-                f"variable {self.name!r}: the bounds are the wrong way round: lower {self.lower:g} > upper {self.upper:g}"
+                f"variable {self.name!r}: the bounds are the wrong way round: "
+                f"lower {self.lower:g} > upper {self.upper:g}"
             )
         if not self.lower <= self.value <= self.upper:
             raise UsageError(
@@ -178,8 +179,8 @@ class Problem:
         object.__setattr__(self, "variables", tuple(self.variables))
         if not isinstance(self.constraints, Mapping):
             raise UsageError(
-                f"constraints is a {type(self.constraints).__name__}; give a dict of name -> gradcheck.Function(...), so "
-                "that the report can name them"
+                f"constraints is a {type(self.constraints).__name__}; give a dict of name -> gradcheck.Function(...), "
+                "so that the report can name them"
             )
         object.__setattr__(self, "constraints", dict(self.constraints))
         self._refuse_bad_variables()

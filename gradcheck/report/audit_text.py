@@ -65,6 +65,8 @@ def verdict_line(report: AuditReport) -> str:
     if not report.evaluable:
         return f"NOT EVALUATED: {name} gives no value at its start point"
     against = _counts(report)
+    if not report.ready and not against:
+        return f"NO VERDICT: the audit of {name} was interrupted"
     if not report.ready:
         return wording.shortened(f"NOT READY: {name} has {wording.listed(against) if against else 'faults'}", WIDTH)
     doubts = [text for text in against if "undecided" in text] + ([] if report.complete else ["parts not looked at"])
@@ -103,9 +105,9 @@ def _section(title: str, body: Sequence[str]) -> list[str]:
 
 def _actions(report: AuditReport) -> list[str]:
     if report.evaluable:
-        texts = _mends(report) or [*_doubts(report), *_start(report.advice)]
+        texts = _mends(report) or [*_doubts(report), *_cautions(report), *_start(report.advice)]
     else:
-        texts = [wording.capitalised(finding.text) for finding in report.findings]
+        texts = [finding.text for finding in report.findings]
     told = list(dict.fromkeys(texts))
     lines = [
         line for number, text in enumerate(told[:_ACTIONS], start=1) for line in paragraph(text, 2, first=f"{number}. ")
@@ -143,6 +145,14 @@ def _doubts(report: AuditReport) -> list[str]:
     if not report.complete:
         doubts.append("Let the audit finish: raise the budget or the time limit.")
     return doubts
+
+
+def _cautions(report: AuditReport) -> list[str]:
+    """What to mind before the run: where the model fails, and the worst other hazards."""
+    domain = (FindingCode.CRASH, FindingCode.NON_FINITE, FindingCode.TIMEOUT)
+    hazards = [f for f in report.findings if f.severity == Severity.HAZARD and f.code != FindingCode.CLAIM_UNDECIDED]
+    hazards.sort(key=lambda finding: finding.code not in domain)
+    return [f"Mind before the run: {finding.text} [{finding.code}]" for finding in hazards[:2]]
 
 
 def _start(advice: Advice) -> list[str]:

@@ -332,7 +332,8 @@ class Track:
             self.stop(UNSETTLED)
             return
         last = self.candidates[-1]
-        # A function that does not change at all need not be looked at wider, unless the interval is so narrow that this says little.
+        # A function that does not change at all need not be looked at wider, unless the interval is so narrow that this
+        # says little.
         moves = (last.value != 0) | (last.half < NARROW * self.widest)
         coarse = (last.bound > COARSE_BOUND * np.abs(last.value)) & moves & np.isfinite(last.bound)
         # A variable keeps its sign: a wider interval may leave the domain of the model.
@@ -385,7 +386,7 @@ class Track:
         return value, bound, half, noise
 
     def _cover_ripple(self, output: int, value: Array, bound: Array) -> None:
-        """Where a small ripple makes fine and wide slopes differ, the bound covers both: neither is surely the truth."""
+        """Where a small ripple makes fine and wide slopes differ, the bound covers both; neither is surely true."""
         coarse = self.coarse
         if coarse is None or not np.isfinite(coarse.bound[output]):
             return

@@ -71,8 +71,9 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
         change = np.abs(np.einsum("k,dkm->dm", _CHANGE, quotients))
         bend = np.abs(np.einsum("k,dkm->dm", _KINK, up + down - 2 * centre)) / h[:, None]
         floor = ROUNDING * np.spacing(np.maximum(np.abs(reply.values).max(axis=1), np.abs(centre)))
-    # Where the values of an output cancel, its rounding is larger than their size tells; the parts of second differences
-    # that belong to no smooth function show it, and the median over all directions is not misled by a kink in one.
+    # Where the values of an output cancel, its rounding is larger than their size tells; the parts of second
+    # differences that belong to no smooth function show it, and the median over all directions is not misled by a kink
+    # in one.
     with np.errstate(invalid="ignore"):
         heard = _median(bend * h[:, None])
     sigma = np.fmax(floor, heard / _KINK_NOISE / 0.67)

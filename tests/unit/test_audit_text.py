@@ -134,7 +134,7 @@ def test_a_model_that_gives_no_value_gets_neither_advice_nor_a_start():
     text = audit_text(audit_report(ready=False, evaluable=False, complete=False, findings=(crash,)))
 
     assert text.startswith("NOT EVALUATED: wing gives no value at its start point")
-    assert "What to do now\n  1. Stress raised ValueError at (0.3, 1.2)\n" in text
+    assert "What to do now\n  1. stress raised ValueError at (0.3, 1.2)\n" in text
     assert "Advice" not in text
     assert "solver" not in text
 

@@ -30,7 +30,7 @@ def call(function: Callable[..., Any], layout: Layout, vector: Array) -> tuple[A
 
 
 def is_single_precision_jax(result: Any) -> bool:
-    """Whether a model returned jax arrays (or a nesting of them) in single precision, which is what jax does by itself."""
+    """Whether a model returned jax arrays (or a nesting of them) in single precision, as jax does by itself."""
     if isinstance(result, list | tuple):
         return any(is_single_precision_jax(part) for part in result)
     if isinstance(result, dict):
