@@ -85,7 +85,20 @@ def excerpt(name: str, said: str) -> str:
     second_claim = next(k for k, line in enumerate(lines) if line.startswith("  gradient of temperature"))
     kink, jump = part("HAZARD kink"), part("HAZARD jump")
     return "\n".join(
-        [*lines[:second_claim], "...", "", *kink, "", *jump, "", "...", "", *part("Best steps for objective"), "", "..."]
+        [
+            *lines[:second_claim],
+            "...",
+            "",
+            *kink,
+            "",
+            *jump,
+            "",
+            "...",
+            "",
+            *part("Best steps for objective"),
+            "",
+            "...",
+        ]
     )
 
 
