@@ -182,18 +182,14 @@ def test_a_sign_that_is_wrong_is_refuted_through_the_noise(noise):
 
 
 INNER = "inner iteration"
-PROGRAM_NOT_MODEL = pytest.mark.xfail(
-    strict=True,
-    reason="between two changes of the iteration count the program is smooth, and its slope 1e-6 off the model's",
-)
 
 
 @pytest.mark.parametrize(
     "name",
     [
-        pytest.param("orbit by simple iteration", marks=PROGRAM_NOT_MODEL),
+        "orbit by simple iteration",
         "pipe by simple iteration",
-        pytest.param("frame by Jacobi sweeps", marks=PROGRAM_NOT_MODEL),
+        "frame by Jacobi sweeps",
         "weir by halving",
     ],
 )
