@@ -1,18 +1,15 @@
 """The verb `audit`: can this problem be handed to an optimizer, and with which derivatives?"""
 
 import importlib.util
-import os
-import platform
 import time
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
-from importlib import metadata
 from typing import Any
 
 import numpy as np
 
-from gradcheck import __version__
-from gradcheck.checking import Rules, checked_claims
+from gradcheck.checking import checked_claims
+from gradcheck.claims.policy import Rules
 from gradcheck.counsel.claim_findings import kinks_at_point, mutation
 from gradcheck.counsel.claim_verdicts import verdict_findings
 from gradcheck.counsel.families import Evidence, advice
@@ -32,13 +29,16 @@ from gradcheck.counsel.silencing import refuse_unknown, silenced
 from gradcheck.counsel.solver_steps import solver_steps
 from gradcheck.errors import ModelFailure, UsageError
 from gradcheck.evaluation.conduct import addressed, conduct_one, counted
+from gradcheck.evaluation.environment import environment_of
 from gradcheck.evaluation.pipeline import Session, open_session
 from gradcheck.evaluation.protocol import Inquiry
 from gradcheck.health.repeatability import repeatability
-from gradcheck.health.sensitivity import FarMoves, far_moves, windows
+from gradcheck.health.sensitivity import FarMoves, far_moves
 from gradcheck.health.smoothness import examine_line
+from gradcheck.problem.domain import windows
 from gradcheck.problem.layout import Points
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
+from gradcheck.problem.sample_points import given_points, random_points
 from gradcheck.problem.subject import Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.advice import Advice, Family
 from gradcheck.records.arrays import Array, IntArray, frozen
@@ -135,7 +135,7 @@ def audit(
         "output": output,
     }
     subject, more = _subject_and_points(problem_or_function, options)
-    more += _given_points(points, subject) + _random_points(subject, int(samples), seed)
+    more += given_points(points, subject) + random_points(subject, int(samples), seed)
     session = open_session(subject, budget=budget, time_limit=time_limit)
     tell = progress or (lambda line: None)
     audit_ = _Audit(session=session, seed=seed, tell=tell)
@@ -403,35 +403,6 @@ def _subject_and_points(thing: Any, options: dict[str, Any]) -> tuple[Subject, l
     return subjects[0], [np.array(subject.start) for subject in subjects[1:]]
 
 
-def _given_points(points: Any, subject: Subject) -> list[Array]:
-    if points is None:
-        return []
-    listed = list(points.each) if isinstance(points, Points) else list(points)
-    rows = []
-    for place, point in enumerate(listed):
-        row = np.ravel(np.asarray(point, dtype=float))
-        if row.size != subject.layout.size or not np.isfinite(row).all():
-            raise UsageError(
-                f"point {place} of points has {row.size} entries, {int(np.isfinite(row).sum())} of them finite; "
-                f"{subject.layout.size} finite numbers are needed"
-            )
-        if ((row < subject.domain.lower) | (row > subject.domain.upper)).any():
-            raise UsageError(
-                f"point {place} of points lies outside the bounds; give points inside, or widen the bounds"
-            )
-        rows.append(row)
-    return rows
-
-
-def _random_points(subject: Subject, samples: int, seed: int) -> list[Array]:
-    """Points within the bounds; along a variable without bounds, within half its size."""
-    lower, upper = windows(subject.start, subject.domain)
-    draws = np.random.default_rng(seed).random((samples, subject.layout.size))
-    rows = lower + draws * (upper - lower)
-    rows[:, subject.domain.integer] = np.round(rows[:, subject.domain.integer])
-    return list(np.clip(rows, subject.domain.lower, subject.domain.upper))
-
-
 # --- the report -----------------------------------------------------------------------------------------------------
 
 
@@ -470,7 +441,7 @@ def _concluded(audit_: _Audit, began: float, accept: Mapping[str, str] | None, *
         else advice(evidence)
         if evaluable
         else _no_advice(_NO_VALUE),
-        environment=_environment(audit_.seed),
+        environment=environment_of(audit_.seed),
         evaluations=ledger.evaluations,
         seconds=time.perf_counter() - began,
         complete=complete,
@@ -522,24 +493,3 @@ def _variables(subject: Subject) -> list[dict[str, Any]]:
         }
         for i in range(shown)
     ]
-
-
-def _environment(seed: int) -> dict[str, Any]:
-    def version(package: str) -> str:
-        try:
-            return metadata.version(package)
-        except metadata.PackageNotFoundError:
-            return "not installed"
-
-    threads = {name: os.environ[name] for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS") if name in os.environ}
-    return {
-        "gradcheck": __version__,
-        "python": platform.python_version(),
-        "platform": platform.platform(terse=True),
-        "numpy": np.__version__,
-        "scipy": version("scipy"),
-        "jax": version("jax"),
-        "autograd": version("autograd"),
-        "seed": seed,
-        "threads": threads,
-    }

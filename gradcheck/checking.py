@@ -1,19 +1,17 @@
 """The verb `check`: is a claimed derivative right?"""
 
 import time
-import warnings
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
-from gradcheck.claims.examination import WITNESSES, Examined, examine
-from gradcheck.claims.mistakes.case import Case
-from gradcheck.claims.mistakes.naming import likely_mistakes
-from gradcheck.claims.rule import ALLOWANCE
+from gradcheck.claims.entries import diagnoses_of, entries_of, merged
+from gradcheck.claims.examination import examine
+from gradcheck.claims.policy import DEFAULT_REL_TOL, REL_TOL, Policy, Rules
 from gradcheck.counsel.claim_findings import failing_claim, kinks_at_point, mutation
-from gradcheck.errors import DerivativeMismatch, UndecidedWarning, UsageError
+from gradcheck.errors import UsageError
 from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import Session, open_session
 from gradcheck.evaluation.protocol import Request, Status
@@ -28,74 +26,6 @@ from gradcheck.witnesses.steps import room_along
 from gradcheck.wording import listed
 
 AD_SOURCES = ("jax", "autograd")
-#: Relative tolerance by the precision of the model's values.
-REL_TOL = {"float32": 1e-3, "float16": 1e-1}
-DEFAULT_REL_TOL = 1e-8
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Rules:
-    """How a claim is judged: tolerances and witnesses, validated."""
-
-    rel_tol: float | None = None
-    abs_tol: float = 0.0
-    witnesses: tuple[str, ...] = WITNESSES
-
-    @staticmethod
-    def of(rel_tol: float | None, abs_tol: float, witnesses: Any) -> "Rules":
-        """Rules from what the caller gave.
-
-        Raises
-        ------
-        UsageError
-            If a tolerance is negative or NaN, or a witness is unknown.
-        """
-        for name, value in (("rel_tol", rel_tol), ("abs_tol", abs_tol)):
-            if value is not None and not _is_tolerance(value):
-                raise UsageError(f"{name} is {value!r}; give a finite number >= 0")
-        if witnesses is None:
-            return Rules(rel_tol=rel_tol, abs_tol=abs_tol)
-        chosen = (witnesses,) if isinstance(witnesses, str) else tuple(witnesses)
-        unknown = [name for name in chosen if name not in WITNESSES]
-        if unknown or not chosen:
-            raise UsageError(f"witnesses is {witnesses!r}; choose among {', '.join(map(repr, WITNESSES))}")
-        return Rules(rel_tol=rel_tol, abs_tol=abs_tol, witnesses=chosen)
-
-
-def _is_tolerance(value: Any) -> bool:
-    return isinstance(value, int | float | np.number) and bool(0 <= value < np.inf)
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Policy:
-    """What a verdict does: raise, warn, or only be returned; validated."""
-
-    on_refuted: str = "raise"
-    on_undecided: str = "warn"
-
-    @staticmethod
-    def of(on_refuted: str = "raise", on_undecided: str = "warn") -> "Policy":
-        """The policy in these words.
-
-        Raises
-        ------
-        UsageError
-            If a word is unknown.
-        """
-        _one_of("on_refuted", on_refuted, ("raise", "return"))
-        _one_of("on_undecided", on_undecided, ("warn", "raise", "pass"))
-        return Policy(on_refuted=on_refuted, on_undecided=on_undecided)
-
-    def carry_out(self, report: CheckReport, *, stacklevel: int = 2) -> CheckReport:
-        """The report, unless its verdict raises; where every entry is undecided that raises too, unless it may pass."""
-        if report.verdict == Verdict.REFUTED and self.on_refuted == "raise":
-            raise DerivativeMismatch(report)
-        if report.verdict == Verdict.UNDECIDED and self.on_undecided != "pass":
-            everything = all(verdict == Verdict.UNDECIDED for verdict in report.entries.verdict)
-            if self.on_undecided == "raise" or everything:
-                raise DerivativeMismatch(report)
-            warnings.warn(str(report), UndecidedWarning, stacklevel=stacklevel + 1)
-        return report
 
 
 def check(
@@ -211,7 +141,7 @@ def check(
     for subject in subjects:
         session = open_session(subject, budget=budget, time_limit=time_limit)
         reports.extend(checked_claims(session, rules))
-    report = reports[0] if len(reports) == 1 else _merged(reports)
+    report = reports[0] if len(reports) == 1 else _several_points(reports)
     return policy.carry_out(report)
 
 
@@ -314,7 +244,7 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
     findings: list[Finding] = [failure] if failure else []
     findings += kinks_at_point(subject, function, examined.left, examined.right, columns)
     findings += mutation(subject, session.ledger)
-    entries = _entries(subject, function, kind, examined, columns)
+    entries = entries_of(subject, function, kind, examined, columns)
     report = CheckReport(
         verdict=Verdict.overall(list(entries.verdict)),
         kind=kind,
@@ -323,7 +253,7 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
         entries=entries,
         diagnoses=_raised(failure, entries)
         if failure
-        else _diagnoses(subject, function, kind, examined, columns, rel_tol, rules.abs_tol),
+        else diagnoses_of(subject, function, kind, examined, columns, rel_tol, rules.abs_tol),
         findings=tuple(findings),
         notices=(*session.ledger.notices, *_left_out(subject), *_few_digits(precision, rules.rel_tol)),
         evaluations=session.ledger.evaluations - before,
@@ -423,84 +353,6 @@ def _left_out(subject: Subject) -> tuple[str, ...]:
     return (f"entries for {listed(whole)} were not judged: whole numbers have no derivative",) if whole else ()
 
 
-def _entries(subject: Subject, function: str, kind: str, examined: Examined, looked_at: IntArray) -> Entries:
-    m, d = examined.claim.shape
-    rows = np.repeat(np.arange(m), d)
-    columns = np.tile(looked_at, m)
-    index = columns if kind == "gradient" else np.stack([rows, columns], axis=1)
-
-    def flat(array: Any) -> Any:
-        return np.ravel(array)
-
-    return Entries(
-        index=index,
-        name=tuple(entry_name(subject, function, m, int(i), int(j)) for i, j in zip(rows, columns, strict=True)),
-        claim=flat(examined.claim),
-        witness=flat(examined.value),
-        bound=flat(examined.bound),
-        digits=flat(examined.digits),
-        verdict=tuple(flat(examined.verdict)),
-        source=tuple(flat(examined.source)),
-        reason=tuple(flat(examined.reason)),
-    )
-
-
-def entry_name(subject: Subject, function: str, outputs: int, row: int, column: int) -> str:
-    """Name of an entry: the variable, and for several outputs which one: ``stress[2] by span``."""
-    variable = subject.layout.name(column)
-    return variable if outputs == 1 else f"{function}[{row}] by {variable}"
-
-
-def _diagnoses(
-    subject: Subject, function: str, kind: str, examined: Examined, columns: IntArray, rel_tol: float, abs_tol: float
-) -> tuple[Any, ...]:
-    refuted = examined.verdict == Verdict.REFUTED
-    if not refuted.any():
-        return ()
-    size = np.fmax(np.abs(examined.claim), np.abs(examined.value))
-    noise = np.nan_to_num(examined.noise)[:, None] / subject.domain.scale[None, columns]
-    m = examined.claim.shape[0]
-    return likely_mistakes(
-        Case(
-            kind=kind,
-            claim=examined.claim,
-            value=examined.value,
-            bound=examined.bound,
-            tolerance=abs_tol + rel_tol * size + ALLOWANCE * noise,
-            refuted=refuted,
-            name=lambda i, j: entry_name(subject, function, m, i, int(columns[j])),
-        )
-    )
-
-
-def _merged(reports: Sequence[CheckReport]) -> CheckReport:
-    """One report on the same claim at several points; each entry's name says at which."""
-    parts = [report.entries for report in reports]
-    entries = Entries(
-        index=np.concatenate([part.index for part in parts]),
-        name=tuple(f"{name} @ point {k}" for k, part in enumerate(parts) for name in part.name),
-        verdict=tuple(v for part in parts for v in part.verdict),
-        source=tuple(s for part in parts for s in part.source),
-        reason=tuple(r for part in parts for r in part.reason),
-        **{
-            field: np.concatenate([getattr(part, field) for part in parts])
-            for field in ("claim", "witness", "bound", "digits")
-        },
-    )
-    worst = next((r for v in (Verdict.REFUTED, Verdict.UNDECIDED) for r in reports if r.verdict == v), reports[0])
-    merged = replace(
-        worst,
-        verdict=Verdict.overall([report.verdict for report in reports]),
-        entries=entries,
-        diagnoses=tuple(d for report in reports for d in report.diagnoses),
-        findings=tuple(f for report in reports for f in report.findings),
-        notices=tuple(dict.fromkeys(n for report in reports for n in report.notices)),
-        evaluations=sum(report.evaluations for report in reports),
-        seconds=sum(report.seconds for report in reports),
-    )
-    return replace(merged, text=check_text(merged))
-
-
-def _one_of(name: str, value: str, choices: tuple[str, ...]) -> None:
-    if value not in choices:
-        raise UsageError(f"{name} is {value!r}; choose {' or '.join(map(repr, choices))}")
+def _several_points(reports: Sequence[CheckReport]) -> CheckReport:
+    report = merged(reports)
+    return replace(report, text=check_text(report))

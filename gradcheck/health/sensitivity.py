@@ -5,11 +5,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from gradcheck.evaluation.protocol import Inquiry, Request
-from gradcheck.problem.domain import Domain
+from gradcheck.problem.domain import Domain, windows
 from gradcheck.records.arrays import Array, BoolArray, IntArray, frozen
-
-#: Half-width of the window of a variable without bounds, in units of its size.
-WINDOW = 0.5
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -30,16 +27,6 @@ class FarMoves:
     def __post_init__(self) -> None:
         for name in ("here", "elsewhere"):
             object.__setattr__(self, name, frozen(getattr(self, name), dtype=bool))
-
-
-def windows(base: Array, domain: Domain) -> tuple[Array, Array]:
-    """Lower and upper ends, each (n,), of the stretch of each variable that is looked at.
-
-    The bounds where there are any; else half the variable's size to each side.
-    """
-    lower = np.where(np.isfinite(domain.lower), domain.lower, base - WINDOW * domain.scale)
-    upper = np.where(np.isfinite(domain.upper), domain.upper, base + WINDOW * domain.scale)
-    return np.minimum(lower, base), np.maximum(upper, base)
 
 
 def far_moves(base: Array, coordinates: IntArray, domain: Domain, centre: Array, *, seed: int = 0) -> Inquiry[FarMoves]:

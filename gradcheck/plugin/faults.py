@@ -96,7 +96,7 @@ def _given_twice(source: Any) -> Iterator[str]:
 
 def _wrong_values(function: Any, options: dict[str, Any]) -> Iterator[str]:
     """What `check` would refuse without having called the model."""
-    from gradcheck.checking import Policy, Rules
+    from gradcheck.claims.policy import Policy, Rules
     from gradcheck.problem.subject import subjects_of_function
 
     about_model = ("wrt", "output", "bounds", "names", "typical")

@@ -58,7 +58,7 @@ class ClaimItem(Marked):
 
     def _checked(self) -> CheckReport:
         """The report, judged as `check` would."""
-        from gradcheck.checking import Policy
+        from gradcheck.claims.policy import Policy
 
         return Policy.of().carry_out(self.claims.report(self.function, self.kind))
 

@@ -8,6 +8,9 @@ import numpy as np
 from gradcheck.errors import UsageError
 from gradcheck.records.arrays import Array, BoolArray, frozen
 
+#: Half-width of the window of a variable without bounds, in units of its size.
+WINDOW = 0.5
+
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Domain:
@@ -72,6 +75,16 @@ def domain_of(x: Array, *, bounds: Any = None, typical: Any = None, integer: Any
         known=frozen(_told(typical, x) | np.isfinite(upper - lower), dtype=bool),
         integer=frozen(np.zeros(x.size, bool) if integer is None else integer, dtype=bool),
     )
+
+
+def windows(base: Array, domain: Domain) -> tuple[Array, Array]:
+    """Lower and upper ends, each (n,), of the stretch of each variable that is looked at.
+
+    The bounds where there are any; else half the variable's size to each side.
+    """
+    lower = np.where(np.isfinite(domain.lower), domain.lower, base - WINDOW * domain.scale)
+    upper = np.where(np.isfinite(domain.upper), domain.upper, base + WINDOW * domain.scale)
+    return np.minimum(lower, base), np.maximum(upper, base)
 
 
 def _scale(x: Array, lower: Array, upper: Array, typical: Any) -> Array:

@@ -1,6 +1,6 @@
 """Objectives and constraints of Hock & Schittkowski at their starting points, most of them infeasible.
 
-W. Hock, K. Schittkowski, "Test Examples for Nonlinear Programming Codes", Lecture Notes in Economics and Mathematical
+W. Hock, K. Schittkowski, "Test Examples for Nonlinear Programming Codes", LNEMS 187 (Springer
 Systems 187 (1981); formulas typed from memory, see ``tests/problem_sets/hock_schittkowski.py``.
 """
 

@@ -1,0 +1,93 @@
+"""The examined entries of a claim as users receive them: named, with likely mistakes, several points in one report."""
+
+from collections.abc import Sequence
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+
+from gradcheck.claims.examination import Examined
+from gradcheck.claims.mistakes.case import Case
+from gradcheck.claims.mistakes.naming import likely_mistakes
+from gradcheck.claims.rule import ALLOWANCE
+from gradcheck.problem.subject import Subject
+from gradcheck.records.arrays import IntArray
+from gradcheck.records.report import CheckReport, Entries
+from gradcheck.records.verdict import Verdict
+
+
+def entries_of(subject: Subject, function: str, kind: str, examined: Examined, looked_at: IntArray) -> Entries:
+    m, d = examined.claim.shape
+    rows = np.repeat(np.arange(m), d)
+    columns = np.tile(looked_at, m)
+    index = columns if kind == "gradient" else np.stack([rows, columns], axis=1)
+
+    def flat(array: Any) -> Any:
+        return np.ravel(array)
+
+    return Entries(
+        index=index,
+        name=tuple(entry_name(subject, function, m, int(i), int(j)) for i, j in zip(rows, columns, strict=True)),
+        claim=flat(examined.claim),
+        witness=flat(examined.value),
+        bound=flat(examined.bound),
+        digits=flat(examined.digits),
+        verdict=tuple(flat(examined.verdict)),
+        source=tuple(flat(examined.source)),
+        reason=tuple(flat(examined.reason)),
+    )
+
+
+def entry_name(subject: Subject, function: str, outputs: int, row: int, column: int) -> str:
+    """Name of an entry: the variable, and for several outputs which one: ``stress[2] by span``."""
+    variable = subject.layout.name(column)
+    return variable if outputs == 1 else f"{function}[{row}] by {variable}"
+
+
+def diagnoses_of(
+    subject: Subject, function: str, kind: str, examined: Examined, columns: IntArray, rel_tol: float, abs_tol: float
+) -> tuple[Any, ...]:
+    refuted = examined.verdict == Verdict.REFUTED
+    if not refuted.any():
+        return ()
+    size = np.fmax(np.abs(examined.claim), np.abs(examined.value))
+    noise = np.nan_to_num(examined.noise)[:, None] / subject.domain.scale[None, columns]
+    m = examined.claim.shape[0]
+    return likely_mistakes(
+        Case(
+            kind=kind,
+            claim=examined.claim,
+            value=examined.value,
+            bound=examined.bound,
+            tolerance=abs_tol + rel_tol * size + ALLOWANCE * noise,
+            refuted=refuted,
+            name=lambda i, j: entry_name(subject, function, m, i, int(columns[j])),
+        )
+    )
+
+
+def merged(reports: Sequence[CheckReport]) -> CheckReport:
+    """One report on the same claim at several points; each entry's name says at which."""
+    parts = [report.entries for report in reports]
+    entries = Entries(
+        index=np.concatenate([part.index for part in parts]),
+        name=tuple(f"{name} @ point {k}" for k, part in enumerate(parts) for name in part.name),
+        verdict=tuple(v for part in parts for v in part.verdict),
+        source=tuple(s for part in parts for s in part.source),
+        reason=tuple(r for part in parts for r in part.reason),
+        **{
+            field: np.concatenate([getattr(part, field) for part in parts])
+            for field in ("claim", "witness", "bound", "digits")
+        },
+    )
+    worst = next((r for v in (Verdict.REFUTED, Verdict.UNDECIDED) for r in reports if r.verdict == v), reports[0])
+    return replace(
+        worst,
+        verdict=Verdict.overall([report.verdict for report in reports]),
+        entries=entries,
+        diagnoses=tuple(d for report in reports for d in report.diagnoses),
+        findings=tuple(f for report in reports for f in report.findings),
+        notices=tuple(dict.fromkeys(n for report in reports for n in report.notices)),
+        evaluations=sum(report.evaluations for report in reports),
+        seconds=sum(report.seconds for report in reports),
+    )
