@@ -7,7 +7,7 @@ from gradcheck.records.arrays import Array, frozen
 from gradcheck.records.plain import plain
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False, repr=False)
 class Estimate:
     """A derivative from one witness, entry by entry value ± bound.
 
@@ -46,6 +46,9 @@ class Estimate:
         for field in ("value", "bound", "step", "noise"):
             object.__setattr__(self, field, frozen(getattr(self, field)))
 
+    def __repr__(self) -> str:
+        return f"<Estimate: {self.text.partition(chr(10))[0] or 'not rendered'}>"
+
     def __str__(self) -> str:
         return self.text
 
@@ -54,7 +57,7 @@ class Estimate:
         return plain(self)  # type: ignore[no-any-return]
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False, repr=False)
 class Scan:
     """The error of a difference quotient as a function of its step.
 
@@ -95,6 +98,9 @@ class Scan:
     def __post_init__(self) -> None:
         for field in ("steps", "values", "errors"):
             object.__setattr__(self, field, frozen(getattr(self, field)))
+
+    def __repr__(self) -> str:
+        return f"<Scan: {self.text.partition(chr(10))[0] or 'not rendered'}>"
 
     def __str__(self) -> str:
         return self.text

@@ -81,7 +81,7 @@ class Diagnosis:
     entries: tuple[str, ...]
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False, repr=False)
 class CheckReport:
     """What `check` found out about one claim.
 
@@ -119,6 +119,9 @@ class CheckReport:
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "point", frozen(self.point))
+
+    def __repr__(self) -> str:
+        return f"<CheckReport: {self.text.partition(chr(10))[0] or 'not rendered'}>"
 
     def __str__(self) -> str:
         return self.text
@@ -186,7 +189,7 @@ class Scaling:
         object.__setattr__(self, "variables", frozen(self.variables))
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False, repr=False)
 class AuditReport:
     """What `audit` found out about a problem.
 
@@ -230,6 +233,9 @@ class AuditReport:
     notices: tuple[str, ...] = ()
     variables: tuple[dict[str, Any], ...] = ()
     text: str = field(default="")
+
+    def __repr__(self) -> str:
+        return f"<AuditReport: {self.text.partition(chr(10))[0] or 'not rendered'}>"
 
     def __str__(self) -> str:
         return self.text
