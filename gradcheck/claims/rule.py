@@ -2,9 +2,9 @@
 
 For a claim c, a witness w ± b and the tolerance T = abs_tol + rel_tol·max(|c|, |w|) + allowance·ε/τ:
 
-* confirmed: |c − w| + b <= T, and the witness sees no difference beyond what rel_tol and abs_tol allow: rounding may
-hide a
-  difference, it does not excuse one that is seen (|c − w| <= abs_tol + rel_tol·max(|c|, |w|) + 3b);
+* confirmed: |c − w| + b <= T, and the witness sees no difference beyond what was asked for, that is |c − w| <= abs_tol
++
+  rel_tol·max(|c|, |w|) + 3b: rounding may hide a difference, it does not excuse one that is seen;
 * refuted: |c − w| > T + 3b (a second look has to agree; see `examination`);
 * else undecided.
 
@@ -18,11 +18,14 @@ import numpy as np
 
 from gradcheck.records.arrays import Array, BoolArray
 
-#: Share of the rounding floor ε over the typical size τ of the variable that a claim may be off. A true zero at a
-#: smooth point (an optimum) must be confirmable: the bound of the difference witness is about 200·ε/τ on its first
-#: interval, and up to 3000·ε/τ where it has to shrink or terms cancel (measured at published optima and critical
-#: points).
-ALLOWANCE = 3000.0
+#: Share of the rounding floor ε over the typical size τ of the variable that a claim may be off.
+ALLOWANCE = 64.0
+#: The same for a claim that is as good as zero. A zero at a smooth point (an optimum) must be confirmable: the bound of
+#: the difference witness is about 200·ε/τ on its first interval, and up to 3000·ε/τ where it has to shrink or terms
+#: cancel (measured at published optima and critical points).
+ZERO_ALLOWANCE = 3000.0
+#: A claim is as good as zero if its variable, moved by its own size, changes the value by less than so many ε.
+ZERO_CLAIM = 1e4
 #: How many bounds beyond the tolerance a claim must be off to be refuted.
 REFUTING_BOUNDS = 3.0
 
@@ -44,7 +47,12 @@ class Tolerance:
 
     def of(self, claim: Array, value: Array) -> Array:
         """T for each entry; an entry without finite size has no relative part."""
-        return self.plain(claim, value) + ALLOWANCE * self.rounding
+        return self.plain(claim, value) + self.allowance(claim)
+
+    def allowance(self, claim: Array) -> Array:
+        """The part of T that rounding takes."""
+        zero = np.abs(claim) <= ZERO_CLAIM * self.rounding
+        return np.where(zero, ZERO_ALLOWANCE, ALLOWANCE) * self.rounding
 
     def plain(self, claim: Array, value: Array) -> Array:
         """The part of T that the caller asked for."""
@@ -52,7 +60,7 @@ class Tolerance:
 
     def floor_decides(self, claim: Array, value: Array) -> BoolArray:
         """Where the rounding floor is the larger part of T."""
-        decides: BoolArray = ALLOWANCE * self.rounding > self.plain(claim, value)
+        decides: BoolArray = self.allowance(claim) > self.plain(claim, value)
         return decides
 
 
