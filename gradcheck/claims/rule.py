@@ -25,7 +25,7 @@ ALLOWANCE = 64.0
 #: cancel (measured at published optima and critical points).
 ZERO_ALLOWANCE = 3000.0
 #: A claim is as good as zero if its variable, moved by its own size, changes the value by less than so many ε.
-ZERO_CLAIM = 1e4
+ZERO_CLAIM = 1e5
 #: How many bounds beyond the tolerance a claim must be off to be refuted.
 REFUTING_BOUNDS = 3.0
 

@@ -8,7 +8,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from gradcheck import Verdict
-from gradcheck.claims.rule import ALLOWANCE, REFUTING_BOUNDS, Tolerance, digits_agreed, judge
+from gradcheck.claims.rule import ALLOWANCE, REFUTING_BOUNDS, ZERO_ALLOWANCE, Tolerance, digits_agreed, judge
 
 NAN, INF = math.nan, math.inf
 
@@ -36,9 +36,21 @@ def verdict(claim, value, bound, *, left=NAN, right=NAN, slope_error=0.0, **allo
 
 
 def test_the_tolerance_is_absolute_plus_relative_plus_rounding():
-    T = tolerance(abs_tol=0.1, rel_tol=0.01, rounding=1e-3).of(np.array([2.0]), np.array([-3.0]))
+    T = tolerance(abs_tol=0.1, rel_tol=0.01, rounding=1e-6).of(np.array([2.0]), np.array([-3.0]))
 
-    assert T[0] == pytest.approx(0.1 + 0.01 * 3.0 + ALLOWANCE * 1e-3)
+    assert T[0] == pytest.approx(0.1 + 0.01 * 3.0 + ALLOWANCE * 1e-6, rel=1e-12)
+
+
+@pytest.mark.parametrize("claim", [0.0, 1e-12, -1e-12])
+def test_a_claim_as_good_as_zero_is_allowed_more_rounding(claim):
+    T = tolerance(rel_tol=1e-8, rounding=1e-16).of(np.array([claim]), np.array([0.0]))
+
+    assert T[0] == pytest.approx(1e-8 * abs(claim) + ZERO_ALLOWANCE * 1e-16)
+
+
+def test_rounding_excuses_no_difference_that_is_seen():
+    assert verdict(1e-12, 2e-12, 1e-14, rounding=1e-15) == Verdict.UNDECIDED
+    assert verdict(1e-12, 1.01e-12, 1e-14, rounding=1e-15) == Verdict.CONFIRMED
 
 
 def test_the_relative_part_is_of_the_larger_of_claim_and_witness():
