@@ -23,6 +23,7 @@ from gradcheck.counsel.model_findings import (
     integer_variables,
     start_failure,
     unrepeatable,
+    witness_conflict,
 )
 from gradcheck.counsel.scaling import scale_spread, suggested_scaling
 from gradcheck.counsel.silencing import refuse_unknown, silenced
@@ -171,6 +172,7 @@ class _Audit:
     interrupted: bool = False
     lines_examined: int = 0
     not_looked_at: list[str] = field(default_factory=list)
+    differences: dict[str, Testimony] = field(default_factory=dict)
     start_notes: tuple[str, ...] = ()
 
     @property
@@ -266,6 +268,7 @@ class _Audit:
             self.not_looked_at.append(f"derivatives of {name} by differences, and with them steps and scaling")
             return
         self._record(name, first, asked, "model")
+        self.differences[name] = first
         self.findings += kinks_at_point(subject, name, first.left.T, first.right.T, columns)
         smooth = ~subject.domain.integer[columns]
         noise = float(np.nanmax(first.noise)) if np.isfinite(first.noise).any() else float("nan")
@@ -296,6 +299,7 @@ class _Audit:
         if self.session.ledger.refused == refused:
             self._record(name, testimony, asked, "complex")
             self.findings += complex_unsafe(subject, name, testimony)
+            self._compare(name, testimony, columns)
         else:
             self._unheard(name, testimony.source)
         for source in AD_SOURCES:
@@ -316,6 +320,15 @@ class _Audit:
                     reason=found.reason,
                 )
             )
+            self._compare(name, found, columns)
+
+    def _compare(self, name: str, testimony: Testimony, columns: IntArray) -> None:
+        """Where a source and the differences part beyond their bounds, the source is not to be used unseen."""
+        heard = self.differences.get(name)
+        conflict = witness_conflict(self.subject, name, testimony, heard, columns) if heard is not None else []
+        if conflict:
+            self.findings += conflict
+            self.witnesses[-1] = replace(self.witnesses[-1], works=False, reason="contradicts the differences")
 
     def _unheard(self, name: str, source: str) -> None:
         """A source that the budget did not let speak."""

@@ -17,7 +17,7 @@ from gradcheck.records.verdict import Verdict
 from gradcheck.witnesses.complex_step import complex_step
 from gradcheck.witnesses.difference_track import CUT_OFF, REASONS, SPENT
 from gradcheck.witnesses.finite_difference import finite_difference
-from gradcheck.witnesses.quick_look import quick_look
+from gradcheck.witnesses.quick_look import close_look, quick_look
 from gradcheck.witnesses.steps import Room
 from gradcheck.witnesses.testimony import Testimony
 from gradcheck.wording import number
@@ -25,7 +25,7 @@ from gradcheck.wording import number
 DIFFERENCES, COMPLEX_STEP = "differences", "complex step"
 WITNESSES = (DIFFERENCES, COMPLEX_STEP)
 #: The second look takes its values on intervals of another size, so that no node is shared.
-OTHER_WIDTH = 0.37
+OTHER_WIDTH = 0.3719
 
 
 #: What the difference witness says of points without a derivative.
@@ -118,6 +118,8 @@ def examine(
     everything = np.arange(columns.size)
     if DIFFERENCES in witnesses:
         desk.hear((yield from quick_look(base, columns, room, centre)), everything, final=False)
+        if desk.confirmed.any():
+            desk.doubt((yield from close_look(base, columns, room, claim, centre)))
         open_ = desk.open_columns()
         if open_.size:
             whole = yield from finite_difference(base, columns[open_], _along(room, open_), centre)
@@ -342,6 +344,10 @@ class _Desk:
         reason = self.reason[part]
         reason[explained] = INNER_JUMPS
         self.reason[part] = reason
+
+    def doubt(self, outputs: BoolArray) -> None:
+        """Take back what a quick look confirmed of these outputs: the whole witness has to look."""
+        self.confirmed[outputs] = False
 
     def open_columns(self) -> IntArray:
         return np.flatnonzero((~self.confirmed & ~self.refuted & ~self.closed).any(axis=0))

@@ -172,3 +172,42 @@ def complex_unsafe(subject: Subject, function: str, testimony: Testimony) -> lis
             remedy="Do not use it as a derivative source here; another witness was used.",
         )
     ]
+
+
+def witness_conflict(
+    subject: Subject, function: str, testimony: Testimony, differences: Testimony, columns: IntArray
+) -> list[Finding]:
+    """A derivative source that parts from the differences by more than the bounds of both allow.
+
+    Three bounds of the differences are granted: a miss of theirs is believed never to be larger.
+    """
+    gap = np.abs(testimony.value - differences.value)
+    allowed = testimony.bound + 3 * differences.bound
+    with np.errstate(invalid="ignore"):
+        parted = np.isfinite(allowed) & (gap > allowed) & np.isnan(differences.left)
+    if not parted.any():
+        return []
+    rows, outputs = np.nonzero(parted)
+    worst = int(np.argmax(gap[parted] / np.maximum(np.abs(differences.value[parted]), np.finfo(float).tiny)))
+    row, output = int(rows[worst]), int(outputs[worst])
+    names = [subject.layout.name(int(columns[r])) for r in np.unique(rows)]
+    says, seen = float(testimony.value[row, output]), float(differences.value[row, output])
+    return [
+        Finding(
+            code=FindingCode.WITNESS_CONFLICT,
+            severity=Severity.BLOCKER if testimony.source in ("jax", "autograd") else Severity.HAZARD,
+            function=function,
+            variable=names[0] if len(names) == 1 else None,
+            where=Location(point=subject.start),
+            evidence={"source": testimony.source, "says": says, "differences": seen, "entries": len(rows)},
+            text=(
+                f"{testimony.source} and differences of the values contradict each other on {function} for "
+                f"{listed(names)}: {number(says, digits=6)} against {number(seen, digits=6)} for "
+                f"{subject.layout.name(int(columns[row]))}, and neither bound covers that."
+            ),
+            remedy=(
+                f"Do not hand {testimony.source} derivatives of this function to a solver before this is settled: look "
+                "for a custom rule, a stopped gradient or a cast; differences only know values."
+            ),
+        )
+    ]

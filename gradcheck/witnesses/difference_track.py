@@ -20,6 +20,12 @@ ROUNDING_MARGIN = 4.0
 AMPLIFIED_MARGIN = 1e3
 #: Coefficients left over are noise if they are not larger than this many times the noise that the ladder heard.
 HEARD_MARGIN = 6.0
+#: The pair close to the point is at odds with the rest if it differs by more than so many times what noise leaves over.
+NARROW_FEATURE = 20.0
+#: A left-over tail below this many floors, that is below a thousandth of the value, may be digits of a cancelled sum.
+CANCELLED = 1e13
+#: What a wide fit left over is the noise of the ladder if it is not larger than this many times that.
+HEARD_WIDE = 30.0
 #: Noise that is no rounding (saws, cut-off digits) goes alike at neighbouring nodes: they are fewer samples than they
 #: seem.
 CORRELATED = 2.0
@@ -184,6 +190,10 @@ class Track:
                 self.stage = "main"
         elif self.stage == "main":
             self._after_main(fits, i, half, at_floor)
+        elif self._meets_narrow_feature(fits, i):
+            self.stage = "ladder" if not self.laddered else self.stage
+            if self.laddered:
+                self.stop(UNSETTLED)
         else:
             # The wider interval may hold more structure than fits; then the main fit stands alone.
             self._keep(fits, i, half, at_floor | (fits.resolved[i] & self.noisy))
@@ -202,6 +212,20 @@ class Track:
         if still.any() and self.satisfied.all():
             self.stage = "done"
         return bool(self.stage == "done")
+
+    def _meets_narrow_feature(self, fits: Fit, i: int) -> bool:
+        """Whether the pair close to the point parts from all other nodes: what they agreed on is not the slope there."""
+        narrow = (fits.apart[i] > NARROW_FEATURE) & self.satisfied & ~self.noisy & (self.side == 0)
+        if not narrow.any():
+            return False
+        for k, candidate in enumerate(self.candidates):
+            self.candidates[k] = replace(candidate, bound=np.where(narrow, np.inf, candidate.bound))
+        self.satisfied &= ~narrow
+        self.tail = np.where(narrow, fits.variation[i], self.tail)
+        self.coarse = self.coarse or _candidate(fits, i, self.half, np.zeros_like(narrow))
+        self.coarse_tail = np.where(narrow, fits.variation[i], 0.0)
+        self.small, self.ripple = np.zeros_like(narrow), np.zeros_like(narrow)
+        return True
 
     def _after_probe(self, fits: Fit, i: int, half: float, at_floor: BoolArray) -> None:
         low = at_floor & (fits.order[i] <= 3)
@@ -247,7 +271,8 @@ class Track:
             self.coarse = _candidate(fits, i, half, fits.resolved[i])
             self.coarse_tail = fits.tail[i]
             self.small = fits.tail[i] < RIPPLE * fits.variation[i]
-            self.ripple = self.small & fits.flat[i]
+            # Beside a large value even a small ripple may be all the variation that is left: digits of a cancelled sum.
+            self.ripple = (self.small | (fits.tail[i] < CANCELLED * fits.floor[i])) & fits.flat[i]
             self.stage = "ladder"
         elif half > 1.5 * self.settled:
             # Probably noise that the ladder missed, its few values falling on one digit; the finest interval will tell.
@@ -271,14 +296,21 @@ class Track:
 
     # --- after the ladder ------------------------------------------------------------------------------------------
 
-    def after_ladder(self, rungs: Rungs, i: int) -> None:
-        """Accept noise, restart on a smaller interval, or end with a reason."""
+    def after_ladder(self, rungs: Rungs, i: int, zero: BoolArray) -> None:
+        """Accept noise, restart on a smaller interval, or end with a reason.
+
+        `zero` (m,) marks outputs that are exactly zero at the point: zeros have no digits to be cut off.
+        """
         self.laddered = True
         self.heard = rungs.noise[i]
         smaller = []
         for output in np.flatnonzero(~self.satisfied):
             nature = Nature(rungs.nature[i, output])
-            if nature == Nature.PLATEAU and self.small[output]:
+            if nature == Nature.NOISE and self.coarse_tail[output] > HEARD_WIDE * rungs.noise[i, output]:
+                # Second differences that do not shrink, but much smaller than what the wide fit left over: rounding at
+                # an inflection of something fast, not the noise that the wide fit met.
+                nature = Nature.SMOOTH
+            if nature == Nature.PLATEAU and self.small[output] and not zero[output]:
                 # Digits that are cut off: steps much larger than they see through it.
                 nature = Nature.NOISE
                 self.reasons[int(output)] = CUT_OFF

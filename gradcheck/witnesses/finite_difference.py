@@ -16,7 +16,7 @@ import numpy as np
 
 from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request, Status
 from gradcheck.records.arrays import Array, BoolArray, IntArray
-from gradcheck.witnesses.difference_track import SPENT, Track
+from gradcheck.witnesses.difference_track import SPENT, UNSETTLED, Track
 from gradcheck.witnesses.ladder import LADDER, read_ladder
 from gradcheck.witnesses.polynomial_fit import fit, stencil_on
 from gradcheck.witnesses.stencils import stage_of
@@ -25,8 +25,8 @@ from gradcheck.witnesses.testimony import Testimony
 
 SOURCE = "finite difference"
 
-#: Half-width of the first interval, in units of the variable's size.
-FIRST_WIDTH = 0.1
+#: Half-width of the first interval, in units of the variable's size; no round number, for the reason given at `LADDER`.
+FIRST_WIDTH = 0.1 * 0.9643
 #: Where the bounds leave less than this share of it on one side, values are taken on the other side only.
 NARROW = 0.01
 
@@ -65,7 +65,7 @@ class _Rounds:
         self.base, self.directions, self.room, self.centre = base, directions, room, centre
         self.derivative = derivative
         self.spent = 0
-        self.largest = np.abs(centre)
+        self.unit = float(np.abs(centre).max()) or 1.0
         # Three quarters of a spacing of x: one rounding of a product inside the model, and a little.
         self.wobble = 0.75 * np.finfo(float).eps * room.scale
         self.tracks = _tracks(room, len(directions), centre.size)
@@ -124,9 +124,8 @@ class _Rounds:
         slips[:, :k] = np.stack([track.slips[:k] for track in tracks]) / width[:, None]
         differences = np.concatenate([values - self.centre, np.zeros((len(tracks), 1, self.centre.size))], axis=1)
         largest = np.maximum(np.abs(values).max(axis=1), np.abs(self.centre))
-        self.largest = np.maximum(self.largest, largest.max(axis=0))
-        # A function that is zero on the whole interval shows no size of its own: that of other directions, or 1.
-        largest = np.where(largest > 0, largest, np.where(self.largest > 0, self.largest, 1.0))
+        # A function that is zero on the whole interval shows no size of its own: that of the other outputs, or 1.
+        largest = np.where(largest > 0, largest, self.unit)
         # On the lower side the stencil runs downwards, and so does its derivative.
         signed = width if side >= 0 else -width
         stencil = stencil_on(stage.nodes, side != 0)
@@ -135,9 +134,16 @@ class _Rounds:
             track.after_fit(fits, i, float(width[i]))
 
     def _climb(self, rows: IntArray, side: int) -> Generator[Request, Reply, None]:
-        tracks = [self.tracks[row] for row in rows]
-        reach = np.array([track.reach for track in tracks]) / 2
+        reach = np.array([self.tracks[row].reach for row in rows]) / 2
         size = np.minimum(self.room.scale[rows], reach / LADDER[-1])
+        # In a box of a few units in the last place there is no room for a ladder.
+        able = size * LADDER[0] >= 4 * self.room.grain[rows]
+        for row in rows[~able]:
+            self.tracks[row].stop(UNSETTLED)
+        rows, size = rows[able], size[able]
+        if rows.size == 0:
+            return
+        tracks = [self.tracks[row] for row in rows]
         steps = rounded_half_width(size, self.room.grain[rows])[:, None] * LADDER
         sign = 1.0 if side == 0 else float(side)
         offsets = sign * np.concatenate([steps, -steps if side == 0 else 2 * steps], axis=1)
@@ -155,7 +161,7 @@ class _Rounds:
             elif not reply.finite[i].all():
                 track.after_failure(*_failed_sides(reply.finite[i], offsets[i]))
             else:
-                track.after_ladder(rungs, i)
+                track.after_ladder(rungs, i, self.centre == 0)
 
     def _realised(self, rows: IntArray, offsets: Array) -> Array:
         """Displacements as rounding will leave them: coordinates move to the number that x + h really is."""

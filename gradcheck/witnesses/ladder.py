@@ -12,8 +12,9 @@ import numpy as np
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.witnesses.polynomial_fit import ROUNDING
 
-#: Steps in units of the variable's size, finest first.
-LADDER = 8.0 ** -np.arange(8, 1, -1)
+#: Steps in units of the variable's size, finest first. No round numbers: at a round x, round steps meet round waves and
+#: stairs always in the same phase.
+LADDER = 0.8637 * 8.0 ** -np.arange(13, 1, -1)
 #: Quotients that differ by less than this share still belong to one smooth piece.
 SIMILAR = 0.03
 #: A second difference of independent errors of size 1 has this standard deviation.
@@ -78,6 +79,10 @@ def read_ladder(
     coarse_slope : ndarray, shape (d, m)
         The slope that a wide fit saw: how much should change over a tiny step.
     """
+    # Squares of huge values would overflow; powers of two lose nothing.
+    largest = np.maximum(np.abs(centre), np.maximum(np.abs(up), np.abs(down)).max(axis=(0, 1)))
+    unit = 2.0 ** np.clip(np.ceil(np.log2(np.maximum(largest, np.finfo(float).tiny))), -900, 900)
+    up, down, centre, coarse_slope = up / unit, down / unit, centre / unit, coarse_slope / unit
     h = steps[:, :, None]
     side = one_sided[:, None, None]
     centred = (up - down) / (2 * h)
@@ -130,13 +135,13 @@ def read_ladder(
     at_kink = nature == Nature.KINK
     return Rungs(
         nature=nature,
-        quotient=pick(quotient, agreed[:, None, :], axis=1)[:, 0],
+        quotient=pick(quotient, agreed[:, None, :], axis=1)[:, 0] * unit,
         step=step,
         wide_step=np.maximum(step, wide_step),
-        noise=noise,
-        left=np.where(at_kink, left, np.nan),
-        right=np.where(at_kink, right, np.nan),
-        slope_error=np.where(at_kink, error, np.nan),
+        noise=noise * unit,
+        left=np.where(at_kink, left * unit, np.nan),
+        right=np.where(at_kink, right * unit, np.nan),
+        slope_error=np.where(at_kink, error * unit, np.nan),
     )
 
 

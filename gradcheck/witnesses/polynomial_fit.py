@@ -97,6 +97,9 @@ class Fit:
         The coefficients end in a sample of noise.
     flat : ndarray of bool
         The coefficients left over do not decay any more.
+    apart : ndarray
+        The two last coefficients in units of the four before. On a stencil with a pair close to the centre they are
+        what this pair does not share with the rest: a narrow feature at the point.
     """
 
     value: Array
@@ -109,6 +112,7 @@ class Fit:
     variation: Array
     resolved: BoolArray
     flat: BoolArray
+    apart: Array
 
 
 def fit(
@@ -233,5 +237,7 @@ def _concluded(
         floor=floor,
         variation=variation,
         resolved=(left_over >= SAMPLE_LEAST) & np.isfinite(value),
+        apart=np.abs(a[:, -2:]).max(axis=1)
+        / np.maximum(np.sqrt(np.mean(a[:, -6:-2] ** 2, axis=1)), np.maximum(floor, np.finfo(float).tiny)),
         flat=(left_over >= SAMPLE_LEAST + 1) & (sooner <= 3 * np.maximum(later, floor)),
     )

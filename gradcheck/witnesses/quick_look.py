@@ -7,7 +7,7 @@ word on a claim it does not confirm.
 import numpy as np
 
 from gradcheck.evaluation.protocol import Directions, Inquiry, Request, Status
-from gradcheck.records.arrays import Array, BoolArray
+from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.witnesses.finite_difference import SOURCE
 from gradcheck.witnesses.polynomial_fit import ROUNDING
 from gradcheck.witnesses.steps import Room, rounded_half_width
@@ -18,6 +18,9 @@ from gradcheck.witnesses.testimony import Testimony
 STEP = 0.01 * 0.8637
 #: A variable this much smaller than its typical size is stepped as if it were larger.
 SMALLEST_SHARE = 0.1
+#: Step of the close look in units of the variables' sizes; what it may be off by rounding, in units in the last place,
+#: and as a share of its terms.
+CLOSE, CLOSE_DEVIATIONS, CLOSE_SHARE = 2.0**-20, 30.0, 1e-6
 #: Half-width of the bound in standard deviations of rounding.
 DEVIATIONS = 8.0
 #: Weights of the three quotients (steps h, h/2, h/4) in the extrapolated value: exact to order 6.
@@ -70,7 +73,8 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
         value[rows] = np.einsum("k,dkm->dm", _VALUE, quotients)
         change = np.abs(np.einsum("k,dkm->dm", _CHANGE, quotients))
         bend = np.abs(np.einsum("k,dkm->dm", _KINK, up + down - 2 * centre)) / h[:, None]
-        floor = ROUNDING * np.spacing(np.maximum(np.abs(reply.values).max(axis=1), np.abs(centre)))
+        largest = np.maximum(np.abs(reply.values).max(axis=1), np.abs(centre))
+        floor = ROUNDING * np.spacing(np.where(largest > 0, largest, float(np.abs(centre).max()) or 1.0))
     # Where the values of an output cancel, its rounding is larger than their size tells; the parts of second
     # differences that belong to no smooth function show it, and the median over all directions is not misled by a kink
     # in one.
@@ -85,6 +89,43 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
     refused = (reply.status == Status.REFUSED).any(axis=1)
     reasons = {(int(rows[i]), j): "the budget was spent" for i in np.flatnonzero(refused) for j in range(m)}
     return Testimony(value=value, bound=bound, step=step, source=SOURCE, spent=reply.spent, reasons=reasons)
+
+
+def close_look(base: Array, columns: IntArray, room: Room, claim: Array, centre: Array) -> Inquiry[BoolArray]:
+    """Outputs whose slope close to the point is not what a claim says along one direction that moves all variables.
+
+    All steps of a quick look are wide beside a narrow feature at the point (a resonance, a saturation): it sees the
+    slope around the feature. Two evaluations for all variables together find that out.
+
+    Parameters
+    ----------
+    base : ndarray, shape (n,)
+    columns : ndarray of int, shape (d,)
+    room : Room
+        Along these coordinates.
+    claim : ndarray, shape (m, d)
+    centre : ndarray, shape (m,)
+
+    Returns
+    -------
+    ndarray of bool, shape (m,)
+        False where nothing speaks against the claim, or the bounds or the model leave no room for a pair of values.
+    """
+    reach = np.minimum(room.below, room.above) / CLOSE
+    signs = np.where(np.arange(columns.size) % 2 == 0, 1.0, -1.0)
+    row = np.zeros(base.size)
+    row[columns] = signs * np.minimum(room.scale, reach)
+    reply = yield Request(base=base, directions=row[None, :], offsets=np.array([[CLOSE, -CLOSE]]))
+    if not reply.finite.all():
+        return np.zeros(centre.size, bool)
+    slope = (reply.values[0, 0] - reply.values[0, 1]) / (2 * CLOSE)
+    with np.errstate(invalid="ignore", over="ignore"):
+        terms = np.where(np.isfinite(claim), claim, 0.0) * row[columns]
+        # Rounding of f, and of every variable, over the small step; the moves are the variables' own sizes.
+        rounding = CLOSE_DEVIATIONS * np.finfo(float).eps * (np.abs(centre) + np.abs(terms).sum(axis=1)) / CLOSE
+        apart = np.abs(slope - terms.sum(axis=1)) > rounding + CLOSE_SHARE * np.abs(terms).sum(axis=1)
+    result: BoolArray = apart
+    return result
 
 
 def _median(values: Array) -> Array:

@@ -106,10 +106,10 @@ def test_ninety_nine_of_a_hundred_right_entries_are_confirmed():
     assert marks.mean() >= 0.99
 
 
-def test_a_right_claim_about_a_smooth_model_costs_about_six_evaluations_a_variable():
-    spent = [told.report.evaluations / told.claim.x.size for told in right()]
+def test_a_right_claim_about_a_smooth_model_costs_six_evaluations_a_variable_and_three_for_all():
+    spent = [(told.report.evaluations - 3) / told.claim.x.size for told in right()]
 
-    assert np.median(spent) <= 6.5
+    assert np.median(spent) <= 6
 
 
 # --- planted mistakes ------------------------------------------------------------------------------------------------
