@@ -182,7 +182,7 @@ class Track:
         if self.stage == "probe":
             self._after_probe(fits, i, half, at_floor)
         elif self.stage == "low":
-            low = at_floor & (fits.order[i] <= 3)
+            low = at_floor & (fits.order[i] <= 3) & (fits.apart[i] <= NARROW_FEATURE)
             self._keep(fits, i, half, low)
             if low.all():
                 self._finish(fits, i)
@@ -214,7 +214,7 @@ class Track:
         return bool(self.stage == "done")
 
     def _meets_narrow_feature(self, fits: Fit, i: int) -> bool:
-        """Whether the pair close to the point parts from all other nodes: what they agreed on is not the slope there."""
+        """Whether the pair close to the point parts from all other nodes: their common slope is not that there."""
         narrow = (fits.apart[i] > NARROW_FEATURE) & self.satisfied & ~self.noisy & (self.side == 0)
         if not narrow.any():
             return False

@@ -21,12 +21,14 @@ from gradcheck.witnesses.steps import NODE_GRID
 SIGNIFICANT = 3.0
 #: Half-width of a bound in standard deviations of the fitted derivative, for a noise level that is known. Independent
 #: Gaussian errors would need 3; rounding errors differ in size from node to node and go together.
-DEVIATIONS = 6.0
+DEVIATIONS = 7.5
 #: How much of the first dropped order goes into the bound.
 DROPPED_SHARE = 0.4
 #: Smallest noise of one value, in units of the spacing of floating-point numbers at its size: a correctly rounded value
 #: has a standard deviation of 0.29.
 ROUNDING = 0.3
+#: Nodes nearer to the centre than this are no part of the net that the polynomial is fitted to.
+CLOSE = 1e-3
 #: Coefficients that must be left over as a noise sample.
 SAMPLE_LEAST = 3
 
@@ -45,12 +47,15 @@ class Stencil:
         First, second and third derivative of each polynomial at 0, per half-width to that power.
     node_slopes : ndarray, shape (k, k)
         Derivative of polynomial i (column) at each node (row).
+    close_pair : bool
+        Whether two nodes lie so close to the centre that the last two polynomials belong to them.
     """
 
     nodes: Array
     basis: Array
     at_centre: Array
     node_slopes: Array
+    close_pair: bool
 
 
 @lru_cache(maxsize=64)
@@ -66,7 +71,8 @@ def stencil_on(nodes: tuple[float, ...], one_sided: bool) -> Stencil:
     centre = [chebyshev.chebval(z[-1], chebyshev.chebder(identity, p, axis=0)) * stretch**p for p in (1, 2, 3)]
     # basis = values @ inverse(triangle): the same combination gives the derivatives of the orthonormal polynomials.
     node_slopes = np.linalg.solve(triangle.T, slopes_at.T).T
-    return Stencil(t, basis, np.linalg.solve(triangle.T, np.array(centre).T).T, node_slopes)
+    close = bool(((np.abs(t) > 0) & (np.abs(t) < CLOSE)).any())
+    return Stencil(t, basis, np.linalg.solve(triangle.T, np.array(centre).T).T, node_slopes, close)
 
 
 def chebyshev_pairs(pairs: int) -> Array:
@@ -176,9 +182,15 @@ def _fitted(
         kept[:, min(8, a.shape[1] - 1) :] = 0.0
         slopes = np.einsum("ki,dim->dkm", stencil.node_slopes, kept)
         a = np.einsum("ki,dkm->dim", stencil.basis, differences - slips[:, :, None] * slopes)
+    floor = ROUNDING * np.spacing(largest)
+    apart = np.zeros_like(largest)
+    if stencil.close_pair:
+        # What the pair close to the centre does not share with the rest. It is no noise sample: values so close to each
+        # other are rounded alike.
+        own, a = np.abs(a[:, -2:]).max(axis=1), a[:, :-2]
+        apart = own / np.maximum(np.sqrt(np.mean(a[:, -4:] ** 2, axis=1)), np.maximum(floor, np.finfo(float).tiny))
     k = a.shape[1]
     size = np.abs(a)
-    floor = ROUNDING * np.spacing(largest)
     last = min(4, k - 2)
     tail = np.sqrt(np.mean(a[:, k - last :] ** 2, axis=1))
     before = np.sqrt(np.mean(a[:, max(1, k - 2 * last) : k - last] ** 2, axis=1)) if k > last + 1 else tail
@@ -186,7 +198,8 @@ def _fitted(
     significant = size > SIGNIFICANT * level[:, None, :]
     significant[:, 0] = True  # the constant is always fitted
     order = k - np.argmax(significant[:, ::-1], axis=1)
-    return _concluded(stencil, half_width, a, order, floor, tail, before, derivative, wobble)
+    fits = _concluded(stencil, half_width, a, order, floor, tail, before, derivative, wobble)
+    return replace(fits, apart=apart)
 
 
 def _concluded(
@@ -206,7 +219,7 @@ def _concluded(
     left_over = k - order
     noise = np.sqrt(np.where(kept, 0.0, a**2).sum(axis=1) / np.maximum(left_over, 1))
     noise = np.maximum(noise, floor)
-    weights = stencil.at_centre[derivative - 1][None, :, None]
+    weights = stencil.at_centre[derivative - 1, :k][None, :, None]
     width = half_width[:, None] ** derivative
     size = np.abs(width)
     half_way = (order + left_over // 2)[:, None, :]
@@ -224,7 +237,7 @@ def _concluded(
     deviations = DEVIATIONS * (1 + 2 / np.maximum(left_over, 1))
     bound = noise * (deviations * amplification + DROPPED_SHARE * next_weight) + 2 * np.finfo(float).eps * np.abs(value)
     if wobble is not None and derivative < 3:
-        next_one = np.where(kept, stencil.at_centre[derivative][None, :, None] * a, 0.0).sum(axis=1)
+        next_one = np.where(kept, stencil.at_centre[derivative, :k][None, :, None] * a, 0.0).sum(axis=1)
         bound = bound + wobble[:, None] * np.abs(next_one) / size / np.abs(half_width[:, None])
     variation = np.abs(a[:, 1:]).max(axis=1)
     return Fit(
@@ -237,7 +250,6 @@ def _concluded(
         floor=floor,
         variation=variation,
         resolved=(left_over >= SAMPLE_LEAST) & np.isfinite(value),
-        apart=np.abs(a[:, -2:]).max(axis=1)
-        / np.maximum(np.sqrt(np.mean(a[:, -6:-2] ** 2, axis=1)), np.maximum(floor, np.finfo(float).tiny)),
+        apart=np.zeros_like(noise),
         flat=(left_over >= SAMPLE_LEAST + 1) & (sooner <= 3 * np.maximum(later, floor)),
     )
