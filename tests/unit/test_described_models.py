@@ -13,9 +13,14 @@ def area(x):
     return x[0] * x[1]
 
 
-@gradcheck.model(at=gradcheck.points([2.0, 3.0], [1.0, 5.0]), gradient=lambda x: [x[1], -x[0]])
-def wrong(x):
-    return x[0] * x[1]
+def wrong_model():
+    """Made when asked for: at the top of a test module it would be collected as a test itself, and fail."""
+
+    @gradcheck.model(at=gradcheck.points([2.0, 3.0], [1.0, 5.0]), gradient=lambda x: [x[1], -x[0]])
+    def wrong(x):
+        return x[0] * x[1]
+
+    return wrong
 
 
 def spring(x):
@@ -74,7 +79,7 @@ def test_options_that_a_problem_describes_itself_are_refused():
 
 
 def test_all_points_of_a_decorated_model_are_in_one_report_that_does_not_raise():
-    (report,) = check_described(wrong)
+    (report,) = check_described(wrong_model())
 
     assert report.verdict == Verdict.REFUTED
     assert "x[1] @ point 1" in report.entries.name
