@@ -260,6 +260,11 @@ class TestWitness:
         assert 1e-9 < abs(testimony.value[0, 0] - 0.6) <= testimony.bound[0, 0] < 1e-5
 
     # Known for both libraries: the derivative of the normalised sinc loses its digits near 0, where it is -π²x/3.
+    @pytest.mark.xfail(
+        tuple(map(int, jax.__version__.split(".")[:2])) >= (0, 11),
+        strict=False,
+        reason="newer jax takes a series for sinc near 0, smooth and 1e-12 off: no scatter of its values shows that",
+    )
     @pytest.mark.parametrize("x", [1e-5, 1e-6, 1e-7, 1e-8, 1e-9])
     def test_the_derivative_of_sinc_near_zero_is_not_believed_beyond_its_digits(self, x):
         testimony = hear(jnp.sinc, x)
