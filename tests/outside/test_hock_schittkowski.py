@@ -1,7 +1,7 @@
 """Objectives and constraints of Hock & Schittkowski at their starting points, most of them infeasible.
 
-W. Hock, K. Schittkowski, "Test Examples for Nonlinear Programming Codes", LNEMS 187 (Springer
-Systems 187 (1981); formulas typed from memory, see ``tests/problem_sets/hock_schittkowski.py``.
+W. Hock, K. Schittkowski, "Test Examples for Nonlinear Programming Codes", LNEMS 187,
+Springer (1981); formulas typed from memory, see ``tests/problem_sets/hock_schittkowski.py``.
 """
 
 import numpy as np

@@ -1,5 +1,5 @@
-"""Constrained problems of W. Hock, K. Schittkowski, "Test Examples for Nonlinear Programming Codes", Lecture Notes in
-Economics and Mathematical Systems 187 (1981).
+"""Constrained problems of W. Hock, K. Schittkowski, "Test Examples for Nonlinear Programming Codes", LNEMS 187,
+Springer (1981).
 
 Typed from memory of the book; the values at x0 and the optima were then recomputed with 40 digits and agree with what
 it prints. Constraints read c = 0 (those first) or c >= 0, bounds left out. The derivatives are written by hand.
