@@ -202,6 +202,8 @@ def _check(given: Options, progress: Progress) -> Answer:
     if given["points"]:
         keywords["at"] = points(*points_from_file(given["points"]))
     limits = {name: given[name] for name in ("budget", "time_limit", "seed")}
+    if not _is_described(model) and not any(kind in keywords for kind in ("gradient", "jacobian")):
+        raise UsageError("nothing is claimed, so there is nothing to check; give --gradient or --jacobian")
     if _is_described(model):
         reports = check_described(model, **keywords, **limits)
     else:

@@ -633,3 +633,17 @@ def test_the_document_of_a_real_check_holds_to_its_schema(folder):
     done = gradcheck("check", "wing.py:drag", "--at", "0.3,1.2", "--gradient", "wrong_gradient", "--json", "-")
 
     assert complaints("check", json.loads(done.stdout)) == []
+
+
+def test_a_check_without_a_claim_names_the_options_that_give_one(tmp_path):
+    (tmp_path / "spring.py").write_text("def work(x):\n    return x[0] ** 2\n", encoding="utf-8")
+
+    done = subprocess.run(
+        [sys.executable, "-m", "gradcheck", "check", f"{tmp_path / 'spring.py'}:work", "--at", "1.0"],
+        capture_output=True,
+        text=True,
+        check=False,
+    )
+
+    assert done.returncode == 2
+    assert "give --gradient or --jacobian" in done.stderr
