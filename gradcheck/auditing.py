@@ -193,18 +193,18 @@ class _Audit:
         self.findings += integer_variables(self.subject)
         self.findings += integer_arithmetic(self.subject, self.session.ledger)
         for name, centre in centres.items():
-            self.tell(f"repeatability of {name}")
+            self.say(f"repeatability of {name}")
             seen = self.ask(name, repeatability(self.subject.start, self.subject.domain, centre))
             self.findings += unrepeatable(self.subject, name, seen)
-        self.tell("claims at the start point")
+        self.say("claims at the start point")
         self._take(checked_claims(self.session, Rules()), self.subject)
         for place, point in enumerate(more):
-            self.tell(f"claims at point {place + 1} of {len(more)}")
+            self.say(f"claims at point {place + 1} of {len(more)}")
             self._claims_elsewhere(point)
         columns = self._columns()
         unchanged: dict[str, FarMoves] = {}
         for name, centre in centres.items():
-            self.tell(f"derivative sources of {name}")
+            self.say(f"derivative sources of {name}")
             self._differences(name, centre, columns)
             self._other_sources(name, centre, columns)
             moves = far_moves(self.subject.start, columns, self.subject.domain, centre, seed=self.seed)
@@ -362,7 +362,7 @@ class _Audit:
         for i in columns:
             if subject.domain.integer[i] or not upper[i] > lower[i]:
                 continue
-            self.tell(f"{name} along {subject.layout.name(int(i))}")
+            self.say(f"{name} along {subject.layout.name(int(i))}")
             start = np.array(subject.start)
             start[i] = lower[i]
             report = self.ask(name, examine_line(start, (int(i), float(upper[i] - lower[i])), seed=self.seed))

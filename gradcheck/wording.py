@@ -143,12 +143,6 @@ def agreed_digits(digits: float) -> str:
     return "all" if math.isinf(digits) else str(math.floor(digits))
 
 
-def quantity(value: float, unit: str = "", digits: int = 4) -> str:
-    """A number with its unit, which is a label only."""
-    text = number(value, digits)
-    return f"{text} {clean(unit)}" if unit else text
-
-
 def count(amount: int, noun: str, plural: str = "") -> str:
     """``1 entry``, ``1,200,000 entries``.
 

@@ -108,17 +108,25 @@ def _kink(
     change = float(sides.change[1])
     noise = _noise_at(focus, sides)
     half = max(20.0 * noise / abs(change), 0.05 * sides.distance, focus.closest(sides.centre))
-    left, right = _measured(samples, focus, piece, sides, half, order=1)
-    return samples, Irregularity(
-        kind=FindingCode.KINK,
+    measured = _measured(samples, focus, piece, sides, half, order=1)
+    return samples, _confirmed(FindingCode.KINK, focus, sides, half, measured, typical=focus.slope)
+
+
+def _confirmed(
+    kind: FindingCode, focus: Focus, sides: TwoSides, half: float, measured: tuple[float, float], *, typical: float
+) -> Irregularity:
+    """The irregularity at the centre of two sides whose slopes, or curvatures, were measured."""
+    left, right = measured
+    return Irregularity(
+        kind=kind,
         output=focus.output,
         lower=sides.centre - half,
         upper=sides.centre + half,
         size=right - left,
         left=left,
         right=right,
-        relative=abs(right - left) / focus.slope,
-        evidence={"confirmed_at_distance": sides.distance, "noise": noise},
+        relative=abs(right - left) / typical,
+        evidence={"confirmed_at_distance": sides.distance, "noise": _noise_at(focus, sides)},
     )
 
 
@@ -141,18 +149,8 @@ def _curvature_break(
     if sides is None or not _exponent_within(suspect, sides, CURVATURE_EXPONENTS):
         return samples, None
     half = max(0.05 * sides.distance, 0.5 * focus.closest(sides.centre))
-    left, right = _measured(samples, focus, piece, sides, half, order=2)
-    return samples, Irregularity(
-        kind=FindingCode.CURVATURE_BREAK,
-        output=focus.output,
-        lower=sides.centre - half,
-        upper=sides.centre + half,
-        size=right - left,
-        left=left,
-        right=right,
-        relative=abs(right - left) / focus.scale,
-        evidence={"confirmed_at_distance": sides.distance, "noise": _noise_at(focus, sides)},
-    )
+    measured = _measured(samples, focus, piece, sides, half, order=2)
+    return samples, _confirmed(FindingCode.CURVATURE_BREAK, focus, sides, half, measured, typical=focus.scale)
 
 
 def _measured(

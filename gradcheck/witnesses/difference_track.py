@@ -191,9 +191,10 @@ class Track:
         elif self.stage == "main":
             self._after_main(fits, i, half, at_floor)
         elif self._meets_narrow_feature(fits, i):
-            self.stage = "ladder" if not self.laddered else self.stage
             if self.laddered:
                 self.stop(UNSETTLED)
+            else:
+                self.stage = "ladder"
         else:
             # The wider interval may hold more structure than fits; then the main fit stands alone.
             self._keep(fits, i, half, at_floor | (fits.resolved[i] & self.noisy))

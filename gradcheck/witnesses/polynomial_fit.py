@@ -15,7 +15,6 @@ import numpy as np
 from numpy.polynomial import chebyshev
 
 from gradcheck.records.arrays import Array, BoolArray, IntArray
-from gradcheck.witnesses.steps import NODE_GRID
 
 #: Multiples of the noise estimate that count as "surely no noise" when the order of a fit is chosen.
 SIGNIFICANT = 3.0
@@ -73,12 +72,6 @@ def stencil_on(nodes: tuple[float, ...], one_sided: bool) -> Stencil:
     node_slopes = np.linalg.solve(triangle.T, slopes_at.T).T
     close = bool(((np.abs(t) > 0) & (np.abs(t) < CLOSE)).any())
     return Stencil(t, basis, np.linalg.solve(triangle.T, np.array(centre).T).T, node_slopes, close)
-
-
-def chebyshev_pairs(pairs: int) -> Array:
-    """(pairs,) positive Chebyshev abscissae of 2·pairs points, largest first, rounded to the node grid."""
-    j = np.arange(1, pairs + 1)
-    return np.round(np.cos((2 * j - 1) * np.pi / (4 * pairs)) / NODE_GRID) * NODE_GRID
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

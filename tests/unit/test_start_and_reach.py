@@ -41,3 +41,15 @@ def test_a_start_that_breaks_a_constraint_is_told():
 
 def test_a_constraint_that_limits_nothing_is_told():
     assert any("has no limit" in notice for notice in gradcheck.audit(problem()).notices)
+
+
+def test_progress_begins_with_a_forecast_and_counts_what_was_spent():
+    told = []
+
+    report = gradcheck.audit(problem(upper=1.0), progress=told.append)
+
+    assert told[0].startswith("about ")
+    assert "a budget makes it shorter" in told[0]
+    assert all("(so far " in line for line in told[1:])
+    assert len(told) > 5
+    assert report.complete
