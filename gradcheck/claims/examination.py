@@ -188,6 +188,7 @@ class _Desk:
         largest = np.where(largest > 0, largest, largest.max() if largest.max() > 0 else 1.0)
         self.floor = unit_roundoff * largest
         self.noise = np.full(centre.size, np.nan)
+        self.noise_along = np.full(claim.shape, np.nan)
         self.value = np.full(claim.shape, np.nan)
         self.bound = np.full(claim.shape, np.inf)
         self.left = np.full(claim.shape, np.nan)
@@ -201,11 +202,11 @@ class _Desk:
 
     def tolerance(self, columns: IntArray) -> Tolerance:
         # The measured noise of an output, but never more than rounding can be: algorithmic noise buys no confirmation.
-        heard = np.where(np.isfinite(self.noise), self.noise, self.floor)
-        rounding = np.minimum(np.maximum(heard, self.floor), 1e3 * self.floor)
-        return Tolerance(
-            rel_tol=self.rel_tol, abs_tol=self.abs_tol, rounding=rounding[:, None] / self.typical[None, columns]
-        )
+        # Along some variables the values may be rounded more coarsely than along others.
+        floor = self.floor[:, None]
+        heard = np.fmax(self.noise[:, None], self.noise_along[:, columns])
+        rounding = np.minimum(np.fmax(heard, floor), 1e3 * floor)
+        return Tolerance(rel_tol=self.rel_tol, abs_tol=self.abs_tol, rounding=rounding / self.typical[None, columns])
 
     def hear(
         self,
@@ -224,6 +225,8 @@ class _Desk:
         """
         if final:
             self.noise = np.fmax(self.noise, testimony.noise)
+            heard = self.noise_along[:, columns]
+            self.noise_along[:, columns] = np.fmax(heard, testimony.noise_along.T)
         tolerance = self.tolerance(columns)
         if not final:
             tolerance = replace(tolerance, rounding=np.zeros_like(tolerance.rounding))
