@@ -228,8 +228,11 @@ def test_theta_with_the_sign_of_the_trade_is_diagnosed_as_a_flipped_sign():
     assert [diagnosis.code for diagnosis in report.diagnoses] == ["sign-flipped"]
 
 
-def test_vega_per_percent_is_refuted():
-    assert report_on(call_price, OPTION, gradient=GREEKS * [1, 1, 0.01, 1]).verdict == REFUTED
+def test_vega_per_percent_is_diagnosed_as_a_matter_of_units():
+    report = report_on(call_price, OPTION, gradient=GREEKS * [1, 1, 0.01, 1])
+
+    assert [str(verdict) for verdict in report.entries.verdict] == ["confirmed"] * 2 + ["refuted", "confirmed"]
+    assert [diagnosis.code for diagnosis in report.diagnoses] == ["unit-factor"]
 
 
 # --- rate laws and vapour pressure ---
