@@ -50,7 +50,7 @@ BESSEL = {
 }
 
 
-@pytest.mark.parametrize("x", [0.1, 0.7, 3.0, 12.0])
+@pytest.mark.parametrize("x", [0.1, 0.7, 3.0, 12.0, 100.0])
 @pytest.mark.parametrize("order", [0, 1, 2.5])
 @pytest.mark.parametrize("kind", BESSEL)
 def test_derivatives_of_bessel_functions_are_confirmed(kind, order, x):
