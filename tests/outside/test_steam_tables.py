@@ -244,3 +244,38 @@ def test_heat_capacity_and_speed_of_sound_jump_too():
 
     assert float(dense["cp"]) / float(liquid["cp"]) - 1 == pytest.approx(-7.2e-4, rel=0.01)
     assert float(dense["w"]) / float(liquid["w"]) - 1 == pytest.approx(2.8e-3, rel=0.02)
+
+
+def between_vapour_and_dense(p):
+    """Enthalpy at 700 K; the regions meet at 30.47719662 MPa."""
+    p = float(p)
+    return float((VAPOUR(700.0, p) if p <= regions._P23_T(700.0) else dense_state(700.0, p))["h"])
+
+
+def between_vapour_and_hot(t):
+    """Enthalpy at 10 MPa; the regions meet at 1073.15 K."""
+    t = float(t)
+    return float((VAPOUR(t, 10.0) if t <= 1073.15 else regions._Region5(t, 10.0))["h"])
+
+
+def between_liquid_and_dense(t):
+    """Enthalpy at 50 MPa."""
+    t = float(t)
+    return float((LIQUID(t, 50.0) if t <= SEAM else dense_state(t, 50.0))["h"])
+
+
+@pytest.mark.parametrize(
+    ("enthalpy", "lower", "upper", "place", "height"),
+    [
+        (between_vapour_and_dense, 28.0, 33.0, 30.47719662, -0.125),
+        (between_vapour_and_hot, 1000.0, 1150.0, 1073.15, -9.4e-2),
+        (between_liquid_and_dense, 600.0, 640.0, SEAM, 1.19e-2),
+    ],
+    ids=["2/3 at 700 K", "2/5 at 10 MPa", "1/3 at 50 MPa"],
+)
+def test_the_other_seams_are_found_and_measured(enthalpy, lower, upper, place, height):
+    (jump,) = interval_of(enthalpy, lower, upper).irregularities
+
+    assert str(jump.kind) == "jump"
+    assert places((jump,), lower, upper).mean() == pytest.approx(place, abs=1e-8 * place)
+    assert jump.size == pytest.approx(height, rel=5e-3)
