@@ -272,6 +272,10 @@ def _testimony(
         heard = _median(bend / spread[:, None]) / 0.67
         sigma = np.fmax(ROUNDING * np.spacing(largest), heard)
         whole = truncation + bend / 2 + DEVIATIONS * amplification[:, None] * sigma
+        # Values that are all the same leave no more slope than one unit in the last place across the widest pair, and
+        # another for rounding inside the model.
+        flat = (pairs.odd == 0).all(axis=1) & (pairs.even == 0).all(axis=1)
+        whole = np.where(flat, np.fmin(whole, np.spacing(largest) / pairs.steps[:, :1]), whole)
     good = pairs.fine[:, None] & np.isfinite(value[rows])
     bound[rows] = np.where(good, whole, np.inf)
     step[rows] = pairs.steps[:, :1]
