@@ -9,6 +9,8 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from gradcheck.records.arrays import Array, BoolArray
+from gradcheck.witnesses.candidates import Candidate, best_of, candidate_of, only_output
+from gradcheck.witnesses.difference_reasons import CUT_OFF, FAILS, NO_ROOM, REASONS, RIPPLED, SPENT, UNSETTLED
 from gradcheck.witnesses.ladder import Nature, Rungs
 from gradcheck.witnesses.polynomial_fit import Fit
 from gradcheck.witnesses.stencils import LOW, MOST_NODES, WIDE
@@ -26,9 +28,6 @@ NARROW_FEATURE = 20.0
 CANCELLED = 1e13
 #: What a wide fit left over is the noise of the ladder if it is not larger than this many times that.
 HEARD_WIDE = 30.0
-#: Noise that is no rounding (saws, cut-off digits) goes alike at neighbouring nodes: they are fewer samples than they
-#: seem.
-CORRELATED = 2.0
 SHRINKS_MOST = 4
 #: From the second half of the six coefficients of `probe` to the end of the fourteen of `main`, in halves of `probe`.
 FORESEEN_SPANS = 2.7
@@ -44,29 +43,6 @@ NARROW = 1e-3
 #: A left-over tail below this share of the variation, that does not decay (that of a kink does), is a ripple: too fine
 #: to be what the function is about.
 RIPPLE = 1e-2
-
-REASONS = {
-    Nature.KINK: "kink at the point: the slopes on both sides differ",
-    Nature.JUMP: "jump at the point: the values on both sides differ",
-    Nature.PLATEAU: "plateau: the values do not change at all at small steps",
-    Nature.STEEP: "the difference quotients grow without limit as the step shrinks",
-}
-UNSETTLED = "the values settle at no step size"
-SPENT = "the budget was spent"
-NO_ROOM = "the bounds leave no room for a step"
-FAILS = "the model fails close to the point"
-CUT_OFF = "digits are cut off: the values do not change at small steps"
-RIPPLED = "small steps and wide steps see different slopes: a ripple, an inner tolerance, or digits that were cut off"
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Candidate:
-    """A fit that may become the answer: arrays (m,), and the half-width of its interval."""
-
-    value: Array
-    bound: Array
-    noise: Array
-    half: float
 
 
 @dataclass(slots=True, eq=False)
@@ -171,7 +147,7 @@ class Track:
         if self.stages > STAGES_MOST:
             self.stop(UNSETTLED)
             return
-        self.latest = _candidate(fits, i, half, fits.resolved[i])
+        self.latest = candidate_of(fits, i, half, fits.resolved[i])
         if self._meets_plateau(fits, i):
             return
         at_floor = fits.resolved[i] & (
@@ -223,7 +199,7 @@ class Track:
             self.candidates[k] = replace(candidate, bound=np.where(narrow, np.inf, candidate.bound))
         self.satisfied &= ~narrow
         self.tail = np.where(narrow, fits.variation[i], self.tail)
-        self.coarse = self.coarse or _candidate(fits, i, self.half, np.zeros_like(narrow))
+        self.coarse = self.coarse or candidate_of(fits, i, self.half, np.zeros_like(narrow))
         self.coarse_tail = np.where(narrow, fits.variation[i], 0.0)
         self.small, self.ripple = np.zeros_like(narrow), np.zeros_like(narrow)
         return True
@@ -269,7 +245,7 @@ class Track:
             ratio = float((fits.floor[i] / np.maximum(fits.tail[i], fits.floor[i]))[waiting & (fits.tail[i] > 0)].min())
             self._restart(half * float(np.clip(ratio ** (1 / 13), 0.02, 0.7)))
         elif not self.laddered:
-            self.coarse = _candidate(fits, i, half, fits.resolved[i])
+            self.coarse = candidate_of(fits, i, half, fits.resolved[i])
             self.coarse_tail = fits.tail[i]
             self.small = fits.tail[i] < RIPPLE * fits.variation[i]
             # Beside a large value even a small ripple may be all the variation that is left: digits of a cancelled sum.
@@ -333,20 +309,11 @@ class Track:
             self.stage = "fine" if self.filled == 14 else "done"
 
     def _accept_noise(self, output: int) -> None:
-        coarse = self.coarse
         self.noisy[output] = True
-        if coarse is None or not np.isfinite(coarse.bound[output]):
+        if self.coarse is None or not np.isfinite(self.coarse.bound[output]):
             self.reasons[output] = UNSETTLED
         else:
-            only = np.arange(coarse.value.size) == output
-            self.candidates.append(
-                Candidate(
-                    np.where(only, coarse.value, np.nan),
-                    np.where(only, coarse.bound, np.inf),
-                    np.where(only, coarse.noise, np.nan),
-                    coarse.half,
-                )
-            )
+            self.candidates.append(only_output(self.coarse, output))
         self.satisfied[output] = True
 
     # --- moves -----------------------------------------------------------------------------------------------------
@@ -356,7 +323,7 @@ class Track:
 
     def _keep(self, fits: Fit, i: int, half: float, accepted: BoolArray) -> None:
         if accepted.any():
-            self.candidates.append(_candidate(fits, i, half, accepted))
+            self.candidates.append(candidate_of(fits, i, half, accepted))
             self.satisfied |= accepted
 
     def _finish(self, fits: Fit, i: int) -> None:
@@ -398,16 +365,9 @@ class Track:
         m = self.satisfied.size
         value, bound = np.full(m, np.nan), np.full(m, np.inf)
         half, noise = np.full(m, np.nan), np.full(m, np.nan)
-        ordered = sorted(self.candidates, key=lambda candidate: candidate.half)
         for output in range(m):
-            kept: list[Candidate] = []
-            for one in ordered:
-                v, b = one.value[output], one.bound[output]
-                b = b * CORRELATED if self.noisy[output] else b
-                if np.isfinite(b) and all(abs(v - k.value[output]) <= b + k.bound[output] for k in kept):
-                    kept.append(replace(one, bound=np.where(np.arange(m) == output, b, one.bound)))
-            if kept:
-                best = min(kept, key=lambda candidate: float(candidate.bound[output]))
+            best = best_of(self.candidates, output, bool(self.noisy[output]))
+            if best is not None:
                 value[output], bound[output] = best.value[output], best.bound[output]
                 half[output], noise[output] = best.half, best.noise[output]
                 self._cover_ripple(output, value, bound)
@@ -427,12 +387,3 @@ class Track:
         if self.ripple[output] and apart > bound[output] + coarse.bound[output]:
             bound[output] = max(bound[output], coarse.bound[output]) + apart
             self.reasons.setdefault(output, RIPPLED)
-
-
-def _candidate(fits: Fit, i: int, half: float, accepted: BoolArray) -> Candidate:
-    return Candidate(
-        np.where(accepted, fits.value[i], np.nan),
-        np.where(accepted, fits.bound[i], np.inf),
-        np.where(accepted, fits.noise[i], np.nan),
-        half,
-    )

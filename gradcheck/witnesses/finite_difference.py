@@ -16,7 +16,8 @@ import numpy as np
 
 from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request, Status
 from gradcheck.records.arrays import Array, BoolArray, IntArray
-from gradcheck.witnesses.difference_track import SPENT, UNSETTLED, Track
+from gradcheck.witnesses.difference_reasons import SPENT, UNSETTLED
+from gradcheck.witnesses.difference_track import Track
 from gradcheck.witnesses.ladder import LADDER, read_ladder
 from gradcheck.witnesses.polynomial_fit import fit, stencil_on
 from gradcheck.witnesses.stencils import stage_of
