@@ -8,6 +8,8 @@ REASONS = {
     Nature.PLATEAU: "plateau: the values do not change at all at small steps",
     Nature.STEEP: "the difference quotients grow without limit as the step shrinks",
 }
+BREAK = "curvature break at the point: the second derivatives on both sides differ"
+TOO_NARROW = "steps that fit here are too small: their squares leave the range of floating-point numbers"
 UNSETTLED = "the values settle at no step size"
 SPENT = "the budget was spent"
 NO_ROOM = "the bounds leave no room for a step"
