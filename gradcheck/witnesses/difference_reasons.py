@@ -9,6 +9,7 @@ REASONS = {
     Nature.STEEP: "the difference quotients grow without limit as the step shrinks",
 }
 BREAK = "curvature break at the point: the second derivatives on both sides differ"
+DISAGREE = "break at the point: the second derivatives along different directions do not fit together"
 TOO_NARROW = "steps that fit here are too small: their squares leave the range of floating-point numbers"
 UNSETTLED = "the values settle at no step size"
 SPENT = "the budget was spent"

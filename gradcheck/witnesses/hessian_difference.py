@@ -41,7 +41,7 @@ def hessian_difference(base: Array, domain: Domain, centre: Array) -> Inquiry[Te
     first, second = np.triu_indices(n, 1)
     smooth = ~(rough[first] | rough[second])
     pairs = np.stack([first[smooth], second[smooth]], axis=1)
-    mixed = yield from mixed_differences(base, pairs, room, own.step[:, 0], own.noise, centre)
+    mixed = yield from mixed_differences(base, pairs, room, own, centre)
     value, bound, step = (np.diag(part[:, 0]) for part in (own.value, own.bound, own.step))
     for matrix, missing, part in (
         (value, np.nan, mixed.value),

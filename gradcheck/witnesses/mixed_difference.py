@@ -16,7 +16,7 @@ import numpy as np
 
 from gradcheck.evaluation.protocol import Inquiry, Reply, Request, Status
 from gradcheck.records.arrays import Array, BoolArray, IntArray
-from gradcheck.witnesses.difference_reasons import FAILS, NO_ROOM, SPENT, TOO_NARROW, UNSETTLED
+from gradcheck.witnesses.difference_reasons import DISAGREE, FAILS, NO_ROOM, SPENT, TOO_NARROW, UNSETTLED
 from gradcheck.witnesses.finite_difference import FIRST_WIDTH, NARROW, SOURCE, WOBBLE
 from gradcheck.witnesses.polynomial_fit import Fit, fit, stencil_on
 from gradcheck.witnesses.steps import NODE_GRID, Room
@@ -36,6 +36,8 @@ ESCAPES_MOST = 4
 ESCAPE = 1 / 16
 #: Pairs looked at together: a budget that runs out leaves the pairs before with their answer.
 TOGETHER = 128
+#: Second derivatives along axes and diagonals do not fit together if they are apart by so many times their bounds.
+DISAGREEMENT = 5.0
 #: Independent errors of four values.
 _FOUR = 2.0
 
@@ -72,9 +74,7 @@ class _Pair:
     corners_left: list[tuple[int, int]] = field(default_factory=lambda: list(_QUADRANTS))
 
 
-def mixed_differences(
-    base: Array, pairs: IntArray, room: Room, steps: Array, noise: Array, centre: Array
-) -> Inquiry[Testimony]:
+def mixed_differences(base: Array, pairs: IntArray, room: Room, own: Testimony, centre: Array) -> Inquiry[Testimony]:
     """Mixed second derivatives of several pairs of variables from function values.
 
     Parameters
@@ -84,11 +84,9 @@ def mixed_differences(
         Indices of two different variables each.
     room : Room
         Along all n coordinates.
-    steps : ndarray, shape (n,)
-        Half-width of the interval that decided the second derivative along each axis: so far the function is a
-        polynomial, up to rounding. NaN where there is none.
-    noise : ndarray, shape (m,)
-        Noise of one value as the axes showed it; NaN where they showed none.
+    own : Testimony
+        Second derivatives along all n coordinates. The interval that decided one tells how far the function is a
+        polynomial there, up to rounding; and what four values around the point say of both variables must fit to them.
     centre : ndarray, shape (m,)
         Finite values at `base`.
 
@@ -98,13 +96,14 @@ def mixed_differences(
         Values and bounds (p, m); ``step`` is the larger step. The bound is infinite, with a reason, where the values
         settle at no step, the model fails, or the bounds of a variable leave no room.
     """
-    return (yield from _Mixed(base, pairs, room, steps, noise, centre).run())
+    return (yield from _Mixed(base, pairs, room, own, centre).run())
 
 
 class _Mixed:
-    def __init__(self, base: Array, pairs: IntArray, room: Room, steps: Array, noise: Array, centre: Array) -> None:
-        self.base, self.pairs, self.room, self.centre = base, pairs, room, centre
-        self.noise = np.nan_to_num(noise)
+    def __init__(self, base: Array, pairs: IntArray, room: Room, own: Testimony, centre: Array) -> None:
+        self.base, self.pairs, self.room, self.own, self.centre = base, pairs, room, own, centre
+        self.noise = np.nan_to_num(own.noise)
+        steps = own.step.min(axis=1)
         self.unit = float(np.abs(centre).max()) or 1.0
         # Steps that are multiples of this keep x + t·step exact for every node t.
         self.grain = room.grain / NODE_GRID
@@ -182,6 +181,7 @@ class _Mixed:
         for i, pair in enumerate(kept):
             if self._at_floor(few, i).all():
                 self._keep(pair, few, i, 4.0)
+                self._compare(pair, values[i], _EIGHT[:_FEW])
             else:
                 open_.append(i)
         if not open_:
@@ -189,11 +189,13 @@ class _Mixed:
         rest, more = yield from self._quadrants([kept[i] for i in open_], _EIGHT[_FEW:])
         if not rest:
             return
-        known = np.stack([values[i] for i in open_ if kept[i] in rest])
-        fits = self._fitted(rest, np.concatenate([known, more], axis=2), _EIGHT)
+        known = np.stack([values[i] for i in open_ if any(kept[i] is pair for pair in rest)])
+        values = np.concatenate([known, more], axis=2)
+        fits = self._fitted(rest, values, _EIGHT)
         for i, pair in enumerate(rest):
             if self._at_floor(fits, i).all():
                 self._keep(pair, fits, i, 4.0)
+                self._compare(pair, values[i], _EIGHT)
             else:
                 self._shrink(pair, fits, i, 16)
 
@@ -221,6 +223,25 @@ class _Mixed:
             other = 1 - side
             wobble += 2 * third * np.array([self._blur(pair, other) for pair in pairs])[:, None]
         return replace(fits, bound=fits.bound + wobble)
+
+    def _compare(self, pair: _Pair, values: Array, nodes: Array) -> None:
+        """Where a second derivative breaks between the axes, those along the diagonals do not fit those along them.
+
+        Of a smooth function the two along the diagonals add up to twice the sum of the two along the axes (in units of
+        the steps); of |x·y| and its like they do not.
+        """
+        total = np.pad(values.sum(axis=0) - 4 * self.centre, ((0, 1), (0, 0)))[None]
+        stencil = stencil_on(tuple((nodes**2).tolist()), True)
+        fits = fit(stencil, np.ones(1), total, _FOUR * self._largest(values[None]))
+        with np.errstate(over="ignore", invalid="ignore"):
+            weights = 2 * pair.steps[:, None] ** 2
+            expected = (weights * self.own.value[pair.place]).sum(axis=0)
+            error = fits.bound[0] + (weights * self.own.bound[pair.place]).sum(axis=0)
+            # Another Taylor term may hide in few nodes: what was left over counts as noise, and the bound is wide.
+            broken = fits.resolved[0] & (np.abs(fits.value[0] - expected) > DISAGREEMENT * error)
+        for output in np.flatnonzero(broken):
+            self.value[pair.row, output], self.bound[pair.row, output] = np.nan, np.inf
+            self.reasons[pair.row, int(output)] = DISAGREE
 
     def _blur(self, pair: _Pair, side: int) -> float:
         """The rounding of one of the two variables, in units of its step."""

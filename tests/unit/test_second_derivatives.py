@@ -120,6 +120,18 @@ def test_a_curvature_break_across_two_variables_is_told_for_their_mixed_entry():
     assert "curvature break" in answer.reasons["x[0], x[1]"]
 
 
+@pytest.mark.parametrize(
+    "function",
+    [lambda x: abs(x[0] * x[1]), lambda x: max(x[0] * x[1], 0.0), lambda x: max(x[0], 0.0) * x[1] if x[1] > 0 else 0.0],
+    ids=["abs of a product", "positive part of a product", "one quadrant"],
+)
+def test_a_break_that_no_axis_shows_is_no_zero(function):
+    answer = estimate(lambda x: function(x) + x[0] ** 2 - math.cos(x[1]), at=[0.0, 0.0], order=2)
+
+    assert answer.bound[0, 1] == math.inf
+    assert "do not fit together" in answer.reasons["x[0], x[1]"]
+
+
 # --- points and sizes ------------------------------------------------------------------------------------------------
 
 
