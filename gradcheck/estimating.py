@@ -45,7 +45,8 @@ def estimate(
     direction : array, optional
         Derivative along this direction (same number of entries as the point) instead of all variables.
     order : 1 or 2
-        First derivatives, or second derivatives of a model that returns one number.
+        First derivatives, or second derivatives: the Hessian of a model that returns one number (about 16 evaluations
+        an entry, fewer where it is zero or the model quadratic), or along a direction those of every output.
     output : callable, optional
         Picks what is differentiated from what the model returns.
     wrt : str or list of str, optional
@@ -64,8 +65,9 @@ def estimate(
     -------
     Estimate
         ``value`` has the shape of the input for a model that returns a number, ``(m, n)`` for a vector model, ``(n,
-        n)`` for order 2, ``()`` or ``(m,)`` along a direction. The bound is infinite where nothing can be said (kink,
-        jump, plateau, budget spent), with a reason.
+        n)`` for order 2, ``()`` or ``(m,)`` along a direction. The bound is infinite where nothing can be said (jump,
+        plateau, budget spent; for order 2 also a kink), with a reason. At a kink it covers the slopes of both sides,
+        and for order 2 at a curvature break the second derivatives of both.
 
     Raises
     ------
