@@ -320,7 +320,7 @@ class _Mixed:
         with np.errstate(over="ignore", invalid="ignore"):
             for mine, fitted in ((self.value, fits.value[i]), (self.bound, fits.bound[i])):
                 mine[pair.row] = fitted / factor / pair.steps[0] / pair.steps[1]
-        self.bound[pair.row] = np.abs(self.bound[pair.row])
+        self.bound[pair.row] = np.nan_to_num(np.abs(self.bound[pair.row]), nan=np.inf, posinf=np.inf)
         self.step[pair.row] = pair.steps.max()
         if not np.isfinite(self.bound[pair.row]).all():
             self._end(pair, TOO_NARROW)
