@@ -14,6 +14,7 @@ from gradcheck.problem.layout import Points, real_numbers
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
 from gradcheck.problem.subject import Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.estimate import Scan
+from gradcheck.report.plots import scan_svg
 from gradcheck.report.scan_text import scan_text
 from gradcheck.witnesses.steps import room_along
 
@@ -89,15 +90,22 @@ def scan(
         steps=curve.steps,
         values=curve.values,
         errors=curve.errors,
-        best_step=float(curve.steps[curve.best]),
+        best_step=float(curve.steps[curve.best]) if curve.best >= 0 else float("nan"),
+        best_error=curve.best_error,
+        floor=curve.floor,
+        truncation=curve.truncation,
+        roundoff=curve.roundoff,
         noise=float(curve.reference.noise[0]),
-        order=curve.order,
+        order=curve.truncation.slope if curve.truncation else float("nan"),
         value=float(curve.reference.value[0, 0]),
         bound=float(curve.reference.bound[0, 0]),
         along=label,
+        unit=subject.units[directions[0]] if directions.ndim == 1 and subject.units else "",
+        formula="one-sided difference" if curve.one_sided else "central difference",
         function=name,
         evaluations=session.ledger.evaluations,
-        notices=tuple(session.ledger.notices),
+        notices=(*session.ledger.notices, *curve.reference.reasons.values()),
+        renderer=scan_svg,
     )
     return replace(record, text=scan_text(record))
 
