@@ -5,7 +5,6 @@ from dataclasses import dataclass
 from typing import Any
 
 from gradcheck.errors import UsageError
-
 from gradcheck.records.arrays import Array, frozen
 from gradcheck.records.plain import plain
 

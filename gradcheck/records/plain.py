@@ -12,7 +12,7 @@ import numpy as np
 def plain(value: Any) -> Any:
     """`value` in dict, list, str, int, float, bool and None only.
 
-    Records become dicts of their fields (what is rendered from a report, and what renders it, is left out), arrays become lists, enums
+    Records become dicts of their fields (but for the rendered text of a report, and its renderer), arrays lists, enums
     their word. NaN and the infinities become ``"nan"``, ``"inf"`` and ``"-inf"``, because strict JSON has none of them.
     """
     if is_dataclass(value) and not isinstance(value, type):

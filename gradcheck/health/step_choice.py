@@ -1,0 +1,276 @@
+"""Steps for the user's own solver: chosen by the published formulas, then tried.
+
+The formulas know the derivatives at the point only. Where these change over the step, vanish, or are drowned by noise,
+the formulas promise too much; so each difference is taken, held against the witness, and its step shortened until what
+is seen is what was promised. The error told is never less than the one seen.
+"""
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from gradcheck.evaluation.protocol import Inquiry, Request
+from gradcheck.health import step_formulas as formulas
+from gradcheck.records.arrays import Array, BoolArray, IntArray
+from gradcheck.witnesses.polynomial_fit import ROUNDING
+from gradcheck.witnesses.steps import Room
+from gradcheck.witnesses.testimony import Testimony
+
+#: A step is never larger than this share of the variable's size: derivatives are only known near the point.
+LARGEST = 0.1
+#: An error seen beyond so many times the expected one sends a step back ...
+EXCESS = 3.0
+#: ... to this share of it ...
+SHORTER = 0.25
+#: ... at most so many times.
+TRIALS_MOST = 8
+#: Share of a derivative's bound that its error is not likely to exceed: a bound holds 999 times in 1,000, and a step that
+#: is right in the worst case only would be short nearly always. What is seen in the trial covers the rest.
+LIKELY = 1 / 15
+#: The second step at which a difference is tried, in units of the first: rounding may favour one of them.
+BESIDE = 0.729
+#: Steps among which several outputs settle on one.
+COMPROMISES = 48
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class StepChoice:
+    """Steps along d variables, each (d,); NaN where differences approximate no derivative.
+
+    Attributes
+    ----------
+    forward, central : ndarray
+        Steps of the two difference formulas, in units of the variable.
+    forward_error, central_error : ndarray
+        Error that each leaves; of several outputs the largest.
+    forward_side : ndarray
+        1 for a forward difference; -1 where the bounds leave room for a backward one only.
+    central_side : ndarray
+        0 for a central difference; 1 or -1 for three values above or below the point, where there is no room for it.
+    noise : float
+        Noise level; of several outputs the largest.
+    """
+
+    forward: Array
+    forward_error: Array
+    forward_side: Array
+    central: Array
+    central_error: Array
+    central_side: Array
+    noise: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Known:
+    """What the witness knows: arrays (d, m) but for `noise`, `centre` (m,) and `largest` (d,)."""
+
+    slope: Array
+    bound: Array
+    second: Array
+    third: Array
+    noise: Array
+    centre: Array
+    weight: Array
+    largest: Array
+
+
+def step_choice(
+    base: Array,
+    columns: IntArray,
+    room: Room,
+    centre: Array,
+    first: Testimony,
+    second: Testimony,
+    third: Testimony,
+) -> Inquiry[StepChoice]:
+    """Steps along coordinates, tried on the model.
+
+    Parameters
+    ----------
+    base : ndarray, shape (n,)
+    columns : ndarray of int, shape (d,)
+    room : Room
+        Along the same coordinates.
+    centre : ndarray, shape (m,)
+        Values at `base`.
+    first, second, third : Testimony
+        Derivatives along the coordinates.
+
+    Returns
+    -------
+    StepChoice
+    """
+    known = _known(room, centre, first, second, third)
+    above, below = (np.minimum(side, known.largest) for side in (room.above, room.below))
+    roomier = np.where(above >= below, 1.0, -1.0)
+
+    h = _settled(known, _forward_steps(known), _forward_error)
+    side = np.where(above >= h, 1.0, np.where(below >= h, -1.0, roomier))
+    h = np.minimum(h, np.where(side > 0, above, below))
+    forward, forward_error = yield from _tried(base, columns, known, h, side, _forward_error, _two_values)
+
+    h = np.minimum(_settled(known, formulas.central_step(known.noise, known.third), _central_error), known.largest)
+    one = np.minimum(
+        _settled(known, formulas.one_sided_step(known.noise, known.third), _one_sided_error),
+        np.maximum(above, below) / 2,
+    )
+    capped = np.minimum(h, np.minimum(above, below))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        central_worth, one_worth = _worst(known, capped, _central_error), _worst(known, one, _one_sided_error)
+    alone = (capped < h) & ~(central_worth <= one_worth)
+    central = yield from _tried(base, columns, known, capped, np.zeros_like(h), _central_error, _pair, ~alone)
+    one_sided = yield from _tried(base, columns, known, one, roomier, _one_sided_error, _three_values, alone)
+    return StepChoice(
+        forward=forward,
+        forward_error=forward_error,
+        forward_side=side,
+        central=np.where(alone, one_sided[0], central[0]),
+        central_error=np.where(alone, one_sided[1], central[1]),
+        central_side=np.where(alone, roomier, 0.0),
+        noise=float(known.noise.max()),
+    )
+
+
+def _known(room: Room, centre: Array, first: Testimony, second: Testimony, third: Testimony) -> _Known:
+    floor = ROUNDING * np.spacing(np.maximum(np.abs(centre), np.finfo(float).tiny))
+    noise = np.where(np.isfinite(first.noise), first.noise, floor)
+    size = room.typical[:, None]
+    value = np.where(np.isfinite(first.bound), first.value, np.nan)
+    weight = np.fmax(np.abs(value), np.maximum(np.abs(centre), noise) / size)
+    return _Known(
+        slope=value,
+        bound=first.bound,
+        second=_at_most(second, np.abs(centre) / size**2),
+        third=_at_most(third, np.abs(centre) / size**3),
+        noise=noise,
+        centre=centre,
+        weight=np.where(weight > 0, weight, 1.0),
+        largest=LARGEST * room.typical,
+    )
+
+
+def _at_most(testimony: Testimony, guess: Array) -> Array:
+    """(d, m): how large the derivative may be; where nothing is known, a guess that the trial will mend."""
+    limit = np.abs(testimony.value) + LIKELY * testimony.bound
+    return np.asarray(np.where(np.isfinite(limit), limit, guess))
+
+
+# --- one step for all outputs ---------------------------------------------------------------------------------------
+
+_Error = Callable[[_Known, Array], Array]
+
+
+def _forward_error(known: _Known, h: Array) -> Array:
+    return formulas.forward_error(h, known.noise, known.second, known.third)
+
+
+def _central_error(known: _Known, h: Array) -> Array:
+    return formulas.central_error(h, known.noise, known.third)
+
+
+def _one_sided_error(known: _Known, h: Array) -> Array:
+    return formulas.one_sided_error(h, known.noise, known.third)
+
+
+def _forward_steps(known: _Known) -> Array:
+    inflection = formulas.forward_step_at_inflection(known.noise, known.third)
+    return np.minimum(formulas.forward_step(known.noise, known.second), inflection)
+
+
+def _settled(known: _Known, steps: Array, error: _Error) -> Array:
+    """(d,): of the best steps (d, m) of several outputs one: that whose largest error, relative to the size of each
+    output's derivative, is smallest."""
+    steps = np.minimum(steps, known.largest[:, None])
+    if steps.shape[1] == 1:
+        return np.asarray(steps[:, 0])
+    low, high = np.log(steps.min(axis=1)), np.log(steps.max(axis=1))
+    tried = np.exp(low[:, None] + (high - low)[:, None] * np.linspace(0, 1, COMPROMISES))
+    worst = np.stack([_worst(known, h, error) for h in tried.T], axis=1)
+    return np.asarray(tried[np.arange(len(tried)), np.argmin(worst, axis=1)])
+
+
+def _worst(known: _Known, h: Array, error: _Error) -> Array:
+    """(d,): largest relative error of all outputs."""
+    return np.asarray((error(known, h[:, None]) / known.weight).max(axis=1))
+
+
+# --- trial ----------------------------------------------------------------------------------------------------------
+
+
+def _two_values(near: Array, values: Array, centre: Array) -> Array:
+    return np.asarray((values[:, 0] - centre) / near[:, 0, None])
+
+
+def _pair(near: Array, values: Array, centre: Array) -> Array:
+    return np.asarray((values[:, 0] - values[:, 1]) / (near[:, 0] - near[:, 1])[:, None])
+
+
+def _three_values(near: Array, values: Array, centre: Array) -> Array:
+    a, b = near[:, 0, None], near[:, 1, None]
+    return np.asarray((values[:, 0] - centre) / a * b / (b - a) - (values[:, 1] - centre) / b * a / (b - a))
+
+
+#: Displacements of each formula, in units of the step.
+_NODES = {_two_values: (1.0,), _pair: (1.0, -1.0), _three_values: (1.0, 2.0)}
+
+
+def _tried(
+    base: Array,
+    columns: IntArray,
+    known: _Known,
+    h: Array,
+    side: Array,
+    error: _Error,
+    quotient: Callable[[Array, Array, Array], Array],
+    wanted: BoolArray | None = None,
+) -> Inquiry[tuple[Array, Array]]:
+    """Steps (d,) shortened until the error seen is the one expected, and that error (d,); NaN where not wanted."""
+    judgeable = np.isfinite(known.slope).any(axis=1) & (h > 0)
+    waiting = judgeable if wanted is None else judgeable & wanted
+    step, told = np.full(h.size, np.nan), np.full(h.size, np.nan)
+    before = np.full(h.size, np.inf)
+    h = np.array(h)
+    for _ in range(TRIALS_MOST):
+        rows = np.flatnonzero(waiting)
+        if rows.size == 0:
+            break
+        seen = yield from _seen(base, columns, known, h, side, quotient, rows)
+        expected = error(known, h[:, None])[rows]
+        excess = seen > EXCESS * (expected + np.nan_to_num(known.bound[rows], posinf=0.0))
+        worst = np.nan_to_num(np.nanmax(seen / known.weight[rows], axis=1, initial=0.0), nan=np.inf)
+        # What does not get better with a shorter step is no truncation: noise that was not heard before.
+        better = worst < before[rows]
+        at = rows[better]
+        step[at] = h[at]
+        told[at] = np.nanmax(np.maximum(expected, seen)[better], axis=1, initial=0.0)
+        before[rows] = np.minimum(before[rows], worst)
+        failed = ~np.isfinite(worst)
+        waiting[rows] = failed | (excess.any(axis=1) & better)
+        h[waiting] *= SHORTER
+    return step, told
+
+
+def _seen(
+    base: Array,
+    columns: IntArray,
+    known: _Known,
+    h: Array,
+    side: Array,
+    quotient: Callable[[Array, Array, Array], Array],
+    rows: IntArray,
+) -> Inquiry[Array]:
+    """(rows, m): the larger error of two differences; infinite where the model failed, NaN without a witness."""
+    direction = np.where(side == 0, 1.0, side)[rows, None]
+    nodes = np.array(_NODES[quotient])
+    displacements = direction * h[rows, None] * np.concatenate([nodes, BESIDE * nodes])
+    x = base[columns[rows]][:, None]
+    offsets = (x + displacements) - x
+    reply = yield Request(base=base, directions=columns[rows], offsets=offsets)
+    k = nodes.size
+    errors = []
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        for part in (slice(0, k), slice(k, 2 * k)):
+            slopes = quotient(offsets[:, part], reply.values[:, part], known.centre)
+            errors.append(np.where(np.isfinite(slopes), np.abs(slopes - known.slope[rows]), np.inf))
+    return np.maximum(*errors)
