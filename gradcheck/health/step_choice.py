@@ -25,7 +25,7 @@ EXCESS = 3.0
 SHORTER = 0.25
 #: ... at most so many times.
 TRIALS_MOST = 8
-#: Share of a derivative's bound that its error is not likely to exceed: a bound holds 999 times in 1,000, and a step that
+#: Share of a bound that the error is not likely to exceed: a bound holds 999 times in 1,000, and a step that
 #: is right in the worst case only would be short nearly always. What is seen in the trial covers the rest.
 LIKELY = 1 / 15
 #: The second step at which a difference is tried, in units of the first: rounding may favour one of them.
@@ -137,7 +137,7 @@ def _known(room: Room, centre: Array, first: Testimony, second: Testimony, third
     noise = np.where(np.isfinite(first.noise), first.noise, floor)
     size = room.typical[:, None]
     value = np.where(np.isfinite(first.bound), first.value, np.nan)
-    weight = np.fmax(np.abs(value), np.maximum(np.abs(centre), noise) / size)
+    weight = np.fmax(np.abs(value), np.abs(centre) / size)
     return _Known(
         slope=value,
         bound=first.bound,
@@ -145,7 +145,8 @@ def _known(room: Room, centre: Array, first: Testimony, second: Testimony, third
         third=_at_most(third, np.abs(centre) / size**3),
         noise=noise,
         centre=centre,
-        weight=np.where(weight > 0, weight, 1.0),
+        # An output that is zero and does not move shows no size; whatever it suffers does not count beside others.
+        weight=np.where(weight > 0, weight, 1.0 if centre.size == 1 else np.inf),
         largest=LARGEST * room.typical,
     )
 
@@ -236,7 +237,8 @@ def _tried(
         if rows.size == 0:
             break
         seen = yield from _seen(base, columns, known, h, side, quotient, rows)
-        expected = error(known, h[:, None])[rows]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            expected = error(known, h[:, None])[rows]
         excess = seen > EXCESS * (expected + np.nan_to_num(known.bound[rows], posinf=0.0))
         worst = np.nan_to_num(np.nanmax(seen / known.weight[rows], axis=1, initial=0.0), nan=np.inf)
         # What does not get better with a shorter step is no truncation: noise that was not heard before.
