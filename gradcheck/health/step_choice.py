@@ -108,7 +108,7 @@ def step_choice(
     h = _settled(known, _forward_steps(known), _forward_error)
     side = np.where(above >= h, 1.0, np.where(below >= h, -1.0, roomier))
     h = np.minimum(h, np.where(side > 0, above, below))
-    forward, forward_error = yield from _tried(base, columns, known, h, side, _forward_error, _two_values)
+    forward, forward_error = yield from _tried(base, columns, known, h, side, _FORWARD)
 
     h = np.minimum(_settled(known, formulas.central_step(known.noise, known.third), _central_error), known.largest)
     one = np.minimum(
@@ -119,8 +119,8 @@ def step_choice(
     with np.errstate(divide="ignore", invalid="ignore"):
         central_worth, one_worth = _worst(known, capped, _central_error), _worst(known, one, _one_sided_error)
     alone = (capped < h) & ~(central_worth <= one_worth)
-    central = yield from _tried(base, columns, known, capped, np.zeros_like(h), _central_error, _pair, ~alone)
-    one_sided = yield from _tried(base, columns, known, one, roomier, _one_sided_error, _three_values, alone)
+    central = yield from _tried(base, columns, known, capped, np.zeros_like(h), _CENTRAL, ~alone)
+    one_sided = yield from _tried(base, columns, known, one, roomier, _ONE_SIDED, alone)
     return StepChoice(
         forward=forward,
         forward_error=forward_error,
@@ -199,6 +199,15 @@ def _worst(known: _Known, h: Array, error: _Error) -> Array:
 # --- trial ----------------------------------------------------------------------------------------------------------
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class _Formula:
+    """A difference: its displacements in units of the step, the slope it gives, and the error expected of it."""
+
+    nodes: tuple[float, ...]
+    slope: Callable[[Array, Array, Array], Array]
+    error: _Error
+
+
 def _two_values(near: Array, values: Array, centre: Array) -> Array:
     return np.asarray((values[:, 0] - centre) / near[:, 0, None])
 
@@ -212,8 +221,9 @@ def _three_values(near: Array, values: Array, centre: Array) -> Array:
     return np.asarray((values[:, 0] - centre) / a * b / (b - a) - (values[:, 1] - centre) / b * a / (b - a))
 
 
-#: Displacements of each formula, in units of the step.
-_NODES = {_two_values: (1.0,), _pair: (1.0, -1.0), _three_values: (1.0, 2.0)}
+_FORWARD = _Formula((1.0,), _two_values, _forward_error)
+_CENTRAL = _Formula((1.0, -1.0), _pair, _central_error)
+_ONE_SIDED = _Formula((1.0, 2.0), _three_values, _one_sided_error)
 
 
 def _tried(
@@ -222,8 +232,7 @@ def _tried(
     known: _Known,
     h: Array,
     side: Array,
-    error: _Error,
-    quotient: Callable[[Array, Array, Array], Array],
+    formula: _Formula,
     wanted: BoolArray | None = None,
 ) -> Inquiry[tuple[Array, Array]]:
     """Steps (d,) shortened until the error seen is the one expected, and that error (d,); NaN where not wanted."""
@@ -236,9 +245,9 @@ def _tried(
         rows = np.flatnonzero(waiting)
         if rows.size == 0:
             break
-        seen = yield from _seen(base, columns, known, h, side, quotient, rows)
+        seen = yield from _seen(base, columns, known, h, side, formula, rows)
         with np.errstate(divide="ignore", invalid="ignore"):
-            expected = error(known, h[:, None])[rows]
+            expected = formula.error(known, h[:, None])[rows]
         excess = seen > EXCESS * (expected + np.nan_to_num(known.bound[rows], posinf=0.0))
         worst = np.nan_to_num(np.nanmax(seen / known.weight[rows], axis=1, initial=0.0), nan=np.inf)
         # What does not get better with a shorter step is no truncation: noise that was not heard before.
@@ -259,12 +268,12 @@ def _seen(
     known: _Known,
     h: Array,
     side: Array,
-    quotient: Callable[[Array, Array, Array], Array],
+    formula: _Formula,
     rows: IntArray,
 ) -> Inquiry[Array]:
     """(rows, m): the larger error of two differences; infinite where the model failed, NaN without a witness."""
     direction = np.where(side == 0, 1.0, side)[rows, None]
-    nodes = np.array(_NODES[quotient])
+    nodes = np.array(formula.nodes)
     displacements = direction * h[rows, None] * np.concatenate([nodes, BESIDE * nodes])
     x = base[columns[rows]][:, None]
     offsets = (x + displacements) - x
@@ -273,6 +282,6 @@ def _seen(
     errors = []
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         for part in (slice(0, k), slice(k, 2 * k)):
-            slopes = quotient(offsets[:, part], reply.values[:, part], known.centre)
+            slopes = formula.slope(offsets[:, part], reply.values[:, part], known.centre)
             errors.append(np.where(np.isfinite(slopes), np.abs(slopes - known.slope[rows]), np.inf))
     return np.maximum(*errors)

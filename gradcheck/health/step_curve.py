@@ -26,7 +26,7 @@ BLURRED = 30.0
 #: Steps whose errors differ by no more than this factor are equally good.
 ALIKE = 1.05
 #: Where one of these holds, quotients of no step approximate a derivative.
-NO_DERIVATIVE = tuple(REASONS[nature] for nature in (Nature.JUMP, Nature.PLATEAU, Nature.STEEP))
+NO_DERIVATIVE = tuple(REASONS[nature] for nature in (Nature.KINK, Nature.JUMP, Nature.PLATEAU, Nature.STEEP))
 #: Euclidean norm of the weights at a step of 1: what independent errors of the values are multiplied by.
 CENTRAL_NORM, ONE_SIDED_NORM = np.sqrt(0.5), np.sqrt(6.5)
 
@@ -44,7 +44,7 @@ class StepCurve:
     best_error : float
         Largest error of the best step and its neighbours.
     floor : float
-        What noise (or a kink at the point) leaves at the best step.
+        What noise leaves at the best step; at a kink, half the difference of the slopes; NaN where there is neither.
     truncation, roundoff : Branch or None
     one_sided : bool
         Three values on one side instead of two around the point.
@@ -114,18 +114,18 @@ def _read(steps: Array, values: Array, reference: Testimony, largest: float, *, 
     errors, resolved = _errors(values, reference, left_by_noise)
     # A first best step, from what was seen alone, parts the branches; the branches then tell luck from exactness.
     seen = _with_neighbours(errors)
-    roundoff = roundoff_branch(steps, errors, int(np.argmin(seen)), resolved)
+    roundoff = roundoff_branch(steps, errors, int(np.argmin(np.fmax(seen, left_by_noise))), resolved)
     expected = left_by_noise if roundoff is None else roundoff.errors
     judged = np.fmax(seen, expected)
     best = _best(np.where(np.isfinite(values), judged, np.inf), reference)
-    half_gap = float(np.nan_to_num(abs(reference.right[0, 0] - reference.left[0, 0]) / 2))
+    half_gap = float(abs(reference.right[0, 0] - reference.left[0, 0]) / 2)
     return StepCurve(
         steps=steps,
         values=values,
         errors=errors,
         best=best,
         best_error=float(seen[best]) if best >= 0 else float("nan"),
-        floor=max(float(left_by_noise[best]), half_gap) if best >= 0 else float("nan"),
+        floor=float(left_by_noise[best]) if best >= 0 else half_gap,
         # Beside a jump quotients grow as 1/step as well, but that is no noise.
         truncation=truncation_branch(steps, errors, best, np.maximum(expected, resolved)) if best >= 0 else None,
         roundoff=roundoff if best >= 0 else None,
@@ -135,7 +135,7 @@ def _read(steps: Array, values: Array, reference: Testimony, largest: float, *, 
 
 
 def _best(judged: Array, reference: Testimony) -> int:
-    """Index of the best step: of several equally good ones (at a kink) the middle; -1 if no step is any good."""
+    """Index of the best step: of several equally good ones the middle; -1 if no step is any good."""
     least = float(judged.min(initial=np.inf))
     if not np.isfinite(least) or any(reason in NO_DERIVATIVE for reason in reference.reasons.values()):
         return -1

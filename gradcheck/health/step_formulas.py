@@ -40,14 +40,14 @@ def one_sided_step(noise: Array, third: Array) -> Array:
 
 def forward_error(step: Array, noise: Array, second: Array, third: Array) -> Array:
     """Two terms of the truncation, and the standard deviation that two noisy values leave."""
-    return np.abs(second) * step / 2 + np.abs(third) * step**2 / 6 + FORWARD_NORM * noise / step
+    return np.asarray(np.abs(second) * step / 2 + np.abs(third) * step**2 / 6 + FORWARD_NORM * noise / step)
 
 
 def central_error(step: Array, noise: Array, third: Array) -> Array:
     """Truncation, and the standard deviation that two noisy values leave."""
-    return np.abs(third) * step**2 / 6 + CENTRAL_NORM * noise / step
+    return np.asarray(np.abs(third) * step**2 / 6 + CENTRAL_NORM * noise / step)
 
 
 def one_sided_error(step: Array, noise: Array, third: Array) -> Array:
     """Truncation, and the standard deviation that three noisy values on one side leave."""
-    return np.abs(third) * step**2 / 3 + ONE_SIDED_NORM * noise / step
+    return np.asarray(np.abs(third) * step**2 / 3 + ONE_SIDED_NORM * noise / step)

@@ -99,13 +99,13 @@ class Scan:
         Estimated absolute error of each quotient.
     best_step : float
         The step of the smallest estimated error, each step judged with its neighbours and with what noise leaves; NaN
-        if no step gives a finite quotient, or none approximates a derivative (at a jump, on a plateau).
+        if no step gives a finite quotient, or none approximates a derivative (at a kink or jump, on a plateau).
     best_error : float
         The error that was seen at the best step: the largest of it and its two neighbours, for one alone may be right
         by luck.
     floor : float
         The error at the best step that the noise of the values leaves (its standard deviation); at a kink, half the
-        difference of the two slopes, which no step gets below.
+        difference of the two slopes, which the mean slope that every step gives is off by.
     noise : float
         Noise level of the model, in units of f.
     order : float

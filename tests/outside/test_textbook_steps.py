@@ -209,7 +209,7 @@ OBSERVED_CENTRAL = {8: 1.352e-4, 12: 5.280e-7, 16: 2.064e-9, 18: 9.927e-11, 20: 
 def observed(k, central):
     """Errors with h = 2^-k and its double on this machine."""
     h = 2.0 ** -np.array([k - 1.0, k])
-    lower = EXAMPLE.x - h if central else np.full(3, EXAMPLE.x)
+    lower = EXAMPLE.x - h if central else np.full(h.size, EXAMPLE.x)
     at = [np.array([EXAMPLE.function(float(x)) for x in points]) for points in (EXAMPLE.x + h, lower)]
     return np.abs((at[0] - at[1]) / (EXAMPLE.x + h - lower) - EXAMPLE.derivative)
 
