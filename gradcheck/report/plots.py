@@ -267,11 +267,8 @@ def _frame(axes: Any, scan: Scan, across: tuple[float, float], up: tuple[float, 
     unit = wording.shortened(scan.unit, 12) if scan.unit else "units of the variable"
     name = wording.shortened(scan.along, 24)
     axes.set_xlabel(drawable_text(f"step of {name}, in {unit}"), fontsize=10, color=INK)
-    axes.set_ylabel(
-        drawable_text("error of the derivative, absolute" if _referred(scan) else "change of the quotient"),
-        fontsize=10,
-        color=INK,
-    )
+    what = "error of the derivative, absolute" if _referred(scan) else "change of the quotient"
+    axes.set_ylabel(what, fontsize=10, color=INK)
     for axis, (low, high), most in ((axes.xaxis, across, 9), (axes.yaxis, up, 9)):
         powers = _powers(low, high, most)
         axis.set_ticks([10.0**power for power in powers], labels=[f"1e{power}" for power in powers])
@@ -324,7 +321,10 @@ def _plainly_styled(figure: Any) -> None:
     """Take back what a user's global settings may have put on single artists."""
     from matplotlib.text import Text
 
-    for artist in figure.findobj():
+    artists = figure.findobj()
+    # The box behind a text is no child of it.
+    boxes = [box for text in artists if isinstance(text, Text) and (box := text.get_bbox_patch()) is not None]
+    for artist in [*artists, *boxes]:
         artist.set_path_effects([])
         artist.set_sketch_params(None)
         if isinstance(artist, Text):
@@ -348,12 +348,15 @@ def standalone(drawing: str, title: str, description: str) -> str:
     }
     body = re.sub(r' id="([^"]+)"', lambda found: f' id="{ids[found[1]]}"', body)
     body = re.sub(r'href="#([^"]+)"', lambda found: f'href="#{ids[found[1]]}"', body)
+    # A style sheet would reach beyond the picture on a page that holds it.
+    body = re.sub(r"\s*<defs>\s*<style[^>]*>[^<]*</style>\s*</defs>", "", body)
     body = re.sub(r"url\(#([^)]+)\)", lambda found: f"url(#{ids[found[1]]})", body)
     start, end = body.split(">", 1)
     names = f"curve-{mark}-title", f"curve-{mark}-text"
     return (
         '<?xml version="1.0" encoding="utf-8"?>\n'
-        f'{start} role="img" aria-labelledby={quoteattr(" ".join(names))}>\n'
+        f'{start} style="stroke-linejoin: round; stroke-linecap: butt" role="img" '
+        f"aria-labelledby={quoteattr(' '.join(names))}>\n"
         f' <title id="{names[0]}">{escape(wording.clean(title))}</title>\n'
         f' <desc id="{names[1]}">{escape(wording.clean(description))}</desc>{end}'
     )
