@@ -7,6 +7,7 @@ Measured on `benchmarks.corpus` against `benchmarks.reference`, at random points
   The best step is compared with the best of all steps of the curve, judged alike.
 - A quotient may come out exact by symmetry, or because values have few digits; nobody can count on it. No step counts
   as better than the rounding of two values leaves (0.29 units in the last place each), or than 1e-13 of the slope.
+- Where the scan says that no step is any good, it has no ratio; how often it says so is told.
 - A central difference has order 2 wherever truncation shows; curves whose third derivative is lost in rounding at every
   step have no order, and how many have one is told.
 - The error told for the best step, at least the bound of the reference that it is measured against, is held against
@@ -80,6 +81,8 @@ def _sample(scan: Scanner, case: Case, x: float) -> Sample:
     least = np.maximum(0.29 * np.spacing(abs(case.f(x))) / (math.sqrt(2) * curve.steps), 1e-13 * abs(float(exact)))
     counted = np.maximum(worth, least)
     place = int(np.argmin(np.abs(curve.steps - curve.best_step)))
+    if not math.isfinite(curve.best_step):
+        return Sample(case=case, x=x, order=float(curve.order), calls=function.calls)
     told = max(curve.best_error, curve.floor, curve.bound)
     return Sample(
         case=case,
@@ -105,7 +108,7 @@ def _worth(case: Case, x: float, step: float, exact: Any) -> float:
 def figures(samples: Sequence[Sample]) -> list[Figure]:
     """What the samples come to, each figure with its goal."""
     answered = [sample for sample in samples if not sample.failure]
-    ratios = np.array([sample.ratio for sample in answered])
+    ratios = np.array([sample.ratio for sample in answered if not math.isnan(sample.ratio)])
     curved = [sample for sample in answered if sample.case.group != LOW_DEGREE]
     orders = np.array([sample.order for sample in curved if not math.isnan(sample.order)])
     told = np.array([sample.told for sample in answered if not math.isnan(sample.told)])
@@ -114,6 +117,9 @@ def figures(samples: Sequence[Sample]) -> list[Figure]:
         Figure(name="median error at best step / smallest", value=_quantile(ratios, 0.5), goal=1.5),
         Figure(name="  of 90 %", value=_quantile(ratios, 0.9), goal=3.0),
         Figure(name="  of 99 %", value=_quantile(ratios, 0.99), goal=10.0),
+        Figure(
+            name="without a best step, %", value=100.0 * (1 - ratios.size / max(len(answered), 1)), goal=1.0, form=".2f"
+        ),
         Figure(name="observed orders within 0.3 of 2, %", value=right, goal=98.0, at_least=True, form=".1f"),
         Figure(name="curves with an order, %", value=100.0 * orders.size / max(len(curved), 1), form=".1f"),
         Figure(
@@ -139,7 +145,7 @@ def _quantile(values: NDArray[np.float64], share: float) -> float:
 def worst(samples: Sequence[Sample]) -> str:
     """The steps farthest from the best one, and the orders farthest from 2."""
     answered = [sample for sample in samples if not sample.failure]
-    far = sorted(answered, key=lambda sample: -sample.ratio)[:WORST_SHOWN]
+    far = sorted((s for s in answered if not math.isnan(s.ratio)), key=lambda sample: -sample.ratio)[:WORST_SHOWN]
     odd = sorted(
         (s for s in answered if abs(s.order - 2) > NEAR and s.case.group != LOW_DEGREE), key=lambda s: -abs(s.order - 2)
     )[:WORST_SHOWN]

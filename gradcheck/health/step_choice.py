@@ -28,6 +28,12 @@ TRIALS_MOST = 8
 #: Share of a bound that the error is not likely to exceed: a bound holds 999 times in 1,000, and a step that
 #: is right in the worst case only would be short nearly always. What is seen in the trial covers the rest.
 LIKELY = 1 / 15
+#: Where noise hides the derivative, longer steps are tried, by this factor, ...
+LONGER = 3.0
+#: ... as long as the error seen falls by this one ...
+CLEARLY = 1.5
+#: ... and at most so many times.
+LONGER_MOST = 3
 #: The second step at which a difference is tried, in units of the first: rounding may favour one of them.
 BESIDE = 0.729
 #: Steps among which several outputs settle on one.
@@ -63,7 +69,10 @@ class StepChoice:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class _Known:
-    """What the witness knows: arrays (d, m) but for `noise`, `centre` (m,) and `largest` (d,)."""
+    """What the witness knows: arrays (d, m) but for `noise`, `centre` (m,) and `largest` (d,).
+
+    `hidden` (d,) tells by order where the second and third derivative are likely to be smaller than they are taken for.
+    """
 
     slope: Array
     bound: Array
@@ -73,6 +82,7 @@ class _Known:
     centre: Array
     weight: Array
     largest: Array
+    hidden: dict[int, BoolArray]
 
 
 def step_choice(
@@ -103,33 +113,37 @@ def step_choice(
     """
     known = _known(room, centre, first, second, third)
     above, below = (np.minimum(side, known.largest) for side in (room.above, room.below))
-    roomier = np.where(above >= below, 1.0, -1.0)
-
     h = _settled(known, _forward_steps(known), _forward_error)
+    roomier = np.where(above >= below, 1.0, -1.0)
     side = np.where(above >= h, 1.0, np.where(below >= h, -1.0, roomier))
-    h = np.minimum(h, np.where(side > 0, above, below))
-    forward, forward_error = yield from _tried(base, columns, known, h, side, _FORWARD)
-
-    h = np.minimum(_settled(known, formulas.central_step(known.noise, known.third), _central_error), known.largest)
-    one = np.minimum(
-        _settled(known, formulas.one_sided_step(known.noise, known.third), _one_sided_error),
-        np.maximum(above, below) / 2,
-    )
-    capped = np.minimum(h, np.minimum(above, below))
-    with np.errstate(divide="ignore", invalid="ignore"):
-        central_worth, one_worth = _worst(known, capped, _central_error), _worst(known, one, _one_sided_error)
-    alone = (capped < h) & ~(central_worth <= one_worth)
-    central = yield from _tried(base, columns, known, capped, np.zeros_like(h), _CENTRAL, ~alone)
-    one_sided = yield from _tried(base, columns, known, one, roomier, _ONE_SIDED, alone)
+    limit = np.where(side > 0, above, below)
+    trial = _Trial(base, columns, known)
+    forward, forward_error = yield from trial.run(_FORWARD, np.minimum(h, limit), side, limit)
+    central, central_error, central_side = yield from _central(trial, above, below, roomier)
     return StepChoice(
         forward=forward,
         forward_error=forward_error,
         forward_side=side,
-        central=np.where(alone, one_sided[0], central[0]),
-        central_error=np.where(alone, one_sided[1], central[1]),
-        central_side=np.where(alone, roomier, 0.0),
+        central=central,
+        central_error=central_error,
+        central_side=central_side,
         noise=float(known.noise.max()),
     )
+
+
+def _central(trial: "_Trial", above: Array, below: Array, roomier: Array) -> Inquiry[tuple[Array, Array, Array]]:
+    """Step, error and side of a difference of second order: central, or on one side where that has the better room."""
+    known = trial.known
+    narrow, wide = np.minimum(above, below), np.maximum(above, below) / 2
+    h = _settled(known, formulas.central_step(known.noise, known.third), _central_error)
+    one = np.minimum(_settled(known, formulas.one_sided_step(known.noise, known.third), _one_sided_error), wide)
+    capped = np.minimum(h, narrow)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        alone = (capped < h) & ~(_worst(known, capped, _central_error) <= _worst(known, one, _one_sided_error))
+    central = yield from trial.run(_CENTRAL, capped, np.zeros_like(h), narrow, ~alone)
+    one_sided = yield from trial.run(_ONE_SIDED, one, roomier, wide, alone)
+    step, error = (np.where(alone, *pair) for pair in zip(one_sided, central, strict=True))
+    return step, error, np.where(alone, roomier, 0.0)
 
 
 def _known(room: Room, centre: Array, first: Testimony, second: Testimony, third: Testimony) -> _Known:
@@ -148,6 +162,7 @@ def _known(room: Room, centre: Array, first: Testimony, second: Testimony, third
         # An output that is zero and does not move shows no size; whatever it suffers does not count beside others.
         weight=np.where(weight > 0, weight, 1.0 if centre.size == 1 else np.inf),
         largest=LARGEST * room.typical,
+        hidden={2: _hidden(second), 3: _hidden(third)},
     )
 
 
@@ -155,6 +170,11 @@ def _at_most(testimony: Testimony, guess: Array) -> Array:
     """(d, m): how large the derivative may be; where nothing is known, a guess that the trial will mend."""
     limit = np.abs(testimony.value) + LIKELY * testimony.bound
     return np.asarray(np.where(np.isfinite(limit), limit, guess))
+
+
+def _hidden(testimony: Testimony) -> BoolArray:
+    """(d,): where noise hides the derivative of some output."""
+    return np.asarray((LIKELY * testimony.bound > np.abs(testimony.value)).any(axis=1))
 
 
 # --- one step for all outputs ---------------------------------------------------------------------------------------
@@ -201,11 +221,13 @@ def _worst(known: _Known, h: Array, error: _Error) -> Array:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Formula:
-    """A difference: its displacements in units of the step, the slope it gives, and the error expected of it."""
+    """A difference: its displacements in units of the step, the slope it gives, the error expected of it, and the order
+    of the derivative that rules its truncation."""
 
     nodes: tuple[float, ...]
     slope: Callable[[Array, Array, Array], Array]
     error: _Error
+    order: int
 
 
 def _two_values(near: Array, values: Array, centre: Array) -> Array:
@@ -221,67 +243,101 @@ def _three_values(near: Array, values: Array, centre: Array) -> Array:
     return np.asarray((values[:, 0] - centre) / a * b / (b - a) - (values[:, 1] - centre) / b * a / (b - a))
 
 
-_FORWARD = _Formula((1.0,), _two_values, _forward_error)
-_CENTRAL = _Formula((1.0, -1.0), _pair, _central_error)
-_ONE_SIDED = _Formula((1.0, 2.0), _three_values, _one_sided_error)
+_FORWARD = _Formula((1.0,), _two_values, _forward_error, 2)
+_CENTRAL = _Formula((1.0, -1.0), _pair, _central_error, 3)
+_ONE_SIDED = _Formula((1.0, 2.0), _three_values, _one_sided_error, 3)
 
 
-def _tried(
-    base: Array,
-    columns: IntArray,
-    known: _Known,
-    h: Array,
-    side: Array,
-    formula: _Formula,
-    wanted: BoolArray | None = None,
-) -> Inquiry[tuple[Array, Array]]:
-    """Steps (d,) shortened until the error seen is the one expected, and that error (d,); NaN where not wanted."""
-    judgeable = np.isfinite(known.slope).any(axis=1) & (h > 0)
-    waiting = judgeable if wanted is None else judgeable & wanted
-    step, told = np.full(h.size, np.nan), np.full(h.size, np.nan)
-    before = np.full(h.size, np.inf)
-    h = np.array(h)
-    for _ in range(TRIALS_MOST):
-        rows = np.flatnonzero(waiting)
-        if rows.size == 0:
-            break
-        seen = yield from _seen(base, columns, known, h, side, formula, rows)
+@dataclass(frozen=True, slots=True, eq=False)
+class _Trial:
+    """Takes differences on the model and holds them against the witness."""
+
+    base: Array
+    columns: IntArray
+    known: _Known
+
+    def run(
+        self, formula: _Formula, h: Array, side: Array, limit: Array, wanted: BoolArray | None = None
+    ) -> Inquiry[tuple[Array, Array]]:
+        """Steps (d,) whose error was seen to be the one expected, and that error (d,).
+
+        `h` is where to begin, `limit` what no step exceeds. NaN where nothing is `wanted`, or where no witness speaks.
+        """
+        judgeable = np.isfinite(self.known.slope).any(axis=1) & (h > 0)
+        found = _Found(*(np.full(h.size, start) for start in (np.nan, np.nan, np.inf)))
+        waiting = judgeable if wanted is None else judgeable & wanted
+        yield from self._shorten(formula, np.array(h), side, waiting, found)
+        yield from self._lengthen(formula, side, limit, found)
+        return found.step, found.told
+
+    def _shorten(self, formula: _Formula, h: Array, side: Array, waiting: BoolArray, found: "_Found") -> Inquiry[None]:
+        """Truncation beyond what the formula expects, and failures of the model, send a step back."""
+        for _ in range(TRIALS_MOST):
+            rows = np.flatnonzero(waiting)
+            if rows.size == 0:
+                return
+            seen = yield from self._seen(formula, h, side, rows)
+            expected = self._expected(formula, h, rows)
+            excess = seen > EXCESS * (expected + np.nan_to_num(self.known.bound[rows], posinf=0.0))
+            worst = self._worst(seen, rows)
+            # What does not get better with a shorter step is no truncation: noise that was not heard before.
+            better = worst < found.worst[rows]
+            found.take(rows, h, seen, expected, worst, better)
+            waiting[rows] = ~np.isfinite(worst) | (excess.any(axis=1) & better)
+            h[waiting] *= SHORTER
+
+    def _lengthen(self, formula: _Formula, side: Array, limit: Array, found: "_Found") -> Inquiry[None]:
+        """Where noise hides the derivative in the formula, its step is rather too short: try longer ones."""
+        waiting = np.isfinite(found.step) & self.known.hidden[formula.order]
+        for _ in range(LONGER_MOST):
+            with np.errstate(invalid="ignore"):
+                waiting &= found.step * LONGER <= limit
+            rows = np.flatnonzero(waiting)
+            if rows.size == 0:
+                return
+            h = found.step * LONGER
+            seen = yield from self._seen(formula, h, side, rows)
+            worst = self._worst(seen, rows)
+            better = worst * CLEARLY < found.worst[rows]
+            found.take(rows, h, seen, self._expected(formula, h, rows), worst, better)
+            waiting[rows[~better]] = False
+
+    def _expected(self, formula: _Formula, h: Array, rows: IntArray) -> Array:
         with np.errstate(divide="ignore", invalid="ignore"):
-            expected = formula.error(known, h[:, None])[rows]
-        excess = seen > EXCESS * (expected + np.nan_to_num(known.bound[rows], posinf=0.0))
-        worst = np.nan_to_num(np.nanmax(seen / known.weight[rows], axis=1, initial=0.0), nan=np.inf)
-        # What does not get better with a shorter step is no truncation: noise that was not heard before.
-        better = worst < before[rows]
+            return np.asarray(formula.error(self.known, h[:, None])[rows])
+
+    def _worst(self, seen: Array, rows: IntArray) -> Array:
+        """(rows,): largest error seen, relative to the size of each output's derivative; infinite for a failure."""
+        relative = np.nanmax(seen / self.known.weight[rows], axis=1, initial=0.0)
+        return np.asarray(np.nan_to_num(relative, nan=np.inf, posinf=np.inf))
+
+    def _seen(self, formula: _Formula, h: Array, side: Array, rows: IntArray) -> Inquiry[Array]:
+        """(rows, m): the larger error of two differences; infinite where the model failed, NaN without a witness."""
+        direction = np.where(side == 0, 1.0, side)[rows, None]
+        nodes = np.array(formula.nodes)
+        displacements = direction * h[rows, None] * np.concatenate([nodes, BESIDE * nodes])
+        x = self.base[self.columns[rows]][:, None]
+        offsets = (x + displacements) - x
+        reply = yield Request(base=self.base, directions=self.columns[rows], offsets=offsets)
+        errors = []
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+            for part in (slice(0, nodes.size), slice(nodes.size, 2 * nodes.size)):
+                slopes = formula.slope(offsets[:, part], reply.values[:, part], self.known.centre)
+                errors.append(np.where(np.isfinite(slopes), np.abs(slopes - self.known.slope[rows]), np.inf))
+        return np.maximum(*errors)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Found:
+    """The best steps so far, the errors to tell, and the largest relative error seen: arrays (d,), written in place."""
+
+    step: Array
+    told: Array
+    worst: Array
+
+    def take(self, rows: IntArray, h: Array, seen: Array, expected: Array, worst: Array, better: BoolArray) -> None:
+        """Keep the steps `h` of those `rows` where they are better."""
         at = rows[better]
-        step[at] = h[at]
-        told[at] = np.nanmax(np.maximum(expected, seen)[better], axis=1, initial=0.0)
-        before[rows] = np.minimum(before[rows], worst)
-        failed = ~np.isfinite(worst)
-        waiting[rows] = failed | (excess.any(axis=1) & better)
-        h[waiting] *= SHORTER
-    return step, told
-
-
-def _seen(
-    base: Array,
-    columns: IntArray,
-    known: _Known,
-    h: Array,
-    side: Array,
-    formula: _Formula,
-    rows: IntArray,
-) -> Inquiry[Array]:
-    """(rows, m): the larger error of two differences; infinite where the model failed, NaN without a witness."""
-    direction = np.where(side == 0, 1.0, side)[rows, None]
-    nodes = np.array(formula.nodes)
-    displacements = direction * h[rows, None] * np.concatenate([nodes, BESIDE * nodes])
-    x = base[columns[rows]][:, None]
-    offsets = (x + displacements) - x
-    reply = yield Request(base=base, directions=columns[rows], offsets=offsets)
-    k = nodes.size
-    errors = []
-    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for part in (slice(0, k), slice(k, 2 * k)):
-            slopes = formula.slope(offsets[:, part], reply.values[:, part], known.centre)
-            errors.append(np.where(np.isfinite(slopes), np.abs(slopes - known.slope[rows]), np.inf))
-    return np.maximum(*errors)
+        self.step[at] = h[at]
+        self.told[at] = np.nanmax(np.maximum(expected, seen)[better], axis=1, initial=0.0)
+        self.worst[at] = worst[better]
