@@ -49,7 +49,7 @@ def scan(
     wrt, output, bounds, names, typical
         As in `gradcheck.check`.
     budget : int, optional
-        Largest number of evaluations; about 110 are usual.
+        Largest number of evaluations; about 140 are usual.
     time_limit : float or str, optional
     seed : int
         Reserved; a scan is deterministic.
@@ -57,6 +57,8 @@ def scan(
     Returns
     -------
     Scan
+        Where no step approximates a derivative (at a kink or jump, on a plateau) its best step is NaN, and a notice says
+        why. ``to_svg()`` draws it.
 
     Raises
     ------
@@ -71,6 +73,8 @@ def scan(
     >>> curve = gradcheck.scan(math.exp, at=1.0)
     >>> bool(1e-7 < curve.best_step < 1e-3), round(curve.order)
     (True, 2)
+    >>> round(curve.truncation.slope), round(curve.roundoff.slope)
+    (2, -1)
     """
     given = {"wrt": wrt, "output": output, "bounds": bounds, "names": names, "typical": typical}
     subject = _subject(function, at, given)

@@ -352,6 +352,8 @@ def standalone(drawing: str, title: str, description: str) -> str:
     body = re.sub(r"\s*<defs>\s*<style[^>]*>[^<]*</style>\s*</defs>", "", body)
     body = re.sub(r"url\(#([^)]+)\)", lambda found: f"url(#{ids[found[1]]})", body)
     start, end = body.split(">", 1)
+    # Pixels are what every reader of SVG knows; some refuse points.
+    start = re.sub(r'(width|height)="([\d.]+)pt"', lambda found: f'{found[1]}="{float(found[2]) * 4 / 3:.6g}"', start)
     names = f"curve-{mark}-title", f"curve-{mark}-text"
     return (
         '<?xml version="1.0" encoding="utf-8"?>\n'
