@@ -57,7 +57,7 @@ def scan(
     Returns
     -------
     Scan
-        Where no step approximates a derivative (at a kink or jump, on a plateau) its best step is NaN, and a notice says
+        Its best step is NaN where no step approximates a derivative (at a kink or jump, on a plateau), and a notice says
         why. ``to_svg()`` draws it.
 
     Raises
