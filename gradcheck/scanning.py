@@ -57,8 +57,8 @@ def scan(
     Returns
     -------
     Scan
-        Its best step is NaN where no step approximates a derivative (at a kink or jump, on a plateau), and a notice says
-        why. ``to_svg()`` draws it.
+        Its best step is NaN where no step approximates a derivative (at a kink or jump, on a plateau), and a notice
+        says why. ``to_svg()`` draws it.
 
     Raises
     ------
