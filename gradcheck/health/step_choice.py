@@ -28,6 +28,8 @@ TRIALS_MOST = 8
 #: Share of a bound that the error is not likely to exceed: a bound holds 999 times in 1,000, and a step that
 #: is right in the worst case only would be short nearly always. What is seen in the trial covers the rest.
 LIKELY = 1 / 15
+#: A witness is blurred where it says this much less than a forward difference with a step of common practice would.
+BLURRED = 10.0
 #: Where noise hides the derivative, longer steps are tried, by this factor, ...
 LONGER = 3.0
 #: ... as long as the error seen falls by this one ...
@@ -152,11 +154,15 @@ def _known(room: Room, centre: Array, first: Testimony, second: Testimony, third
     size = room.typical[:, None]
     value = np.where(np.isfinite(first.bound), first.value, np.nan)
     weight = np.fmax(np.abs(value), np.abs(centre) / size)
+    guess = np.abs(centre) / size**2
+    # A bound that covers slopes of several scales (ripples, cut-off digits) comes with derivatives of the finest of
+    # them; the guess gives steps of the variable's own scale.
+    blurred = first.bound > np.maximum(np.abs(first.value), BLURRED * np.sqrt(noise * guess))
     return _Known(
         slope=value,
         bound=first.bound,
-        second=_at_most(second, np.abs(centre) / size**2),
-        third=_at_most(third, np.abs(centre) / size**3),
+        second=np.where(blurred, guess, _at_most(second, guess)),
+        third=np.where(blurred, guess / size, _at_most(third, guess / size)),
         noise=noise,
         centre=centre,
         # An output that is zero and does not move shows no size; whatever it suffers does not count beside others.

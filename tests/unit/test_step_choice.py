@@ -106,6 +106,16 @@ def test_a_step_that_leaves_the_domain_is_shortened():
     assert np.isfinite([found.forward_error[0], found.central_error[0]]).all()
 
 
+def test_where_the_witness_is_blurred_the_step_is_of_the_variables_own_scale():
+    """(e^x - 1)/x close to 0: its digits cancel, and the witness sees slopes of many scales."""
+    x = 2.9167429449001744e-06
+    found = choose(lambda v: (np.exp(v[0]) - 1) / v[0], x)
+
+    errors = forward_errors(lambda x: (np.exp(x) - 1) / x, x, found.forward[0], 0.5)
+    assert found.forward[0] > 1e-9 * x
+    assert errors.max() <= found.forward_error[0]
+
+
 # --- what cannot be chosen ------------------------------------------------------------------------------------------
 
 
