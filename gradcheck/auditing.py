@@ -36,6 +36,7 @@ from gradcheck.evaluation.protocol import Inquiry
 from gradcheck.health.repeatability import repeatability
 from gradcheck.health.sensitivity import FarMoves, far_moves
 from gradcheck.health.smoothness import examine_line
+from gradcheck.health.step_choice import StepChoice, step_choice
 from gradcheck.problem.domain import windows
 from gradcheck.problem.layout import Points
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
@@ -262,6 +263,7 @@ class _Audit:
 
         refused = self.session.ledger.refused
         (first, asked), (second, _), (third, _) = order(1), order(2), order(3)
+        choice: StepChoice = self.ask(name, step_choice(subject.start, columns, room, centre, first, second, third))
         if self.session.ledger.refused > refused:
             # Half a measurement would give steps and scalings that look like any other.
             self._unheard(name, first.source)
@@ -271,19 +273,9 @@ class _Audit:
         self.differences[name] = first
         self.findings += kinks_at_point(subject, name, first.left.T, first.right.T, columns)
         smooth = ~subject.domain.integer[columns]
-        noise = float(np.nanmax(first.noise)) if np.isfinite(first.noise).any() else float("nan")
         names = tuple(subject.layout.name(int(i)) for i in columns[smooth])
-        if np.isfinite(noise) and smooth.any():
-            self.steps.append(
-                solver_steps(
-                    name,
-                    names,
-                    noise,
-                    _steepest(second)[smooth],
-                    _steepest(third)[smooth],
-                    subject.domain.scale[columns][smooth],
-                )
-            )
+        if np.isfinite(first.noise).any() and smooth.any():
+            self.steps.append(solver_steps(name, names, choice, smooth))
         if self.scaling is None and centre.size == 1 and columns.size == subject.layout.size:
             gradient = np.where(subject.domain.integer, np.nan, first.value[:, 0])
             self.scaling = suggested_scaling(subject, gradient)
@@ -379,13 +371,6 @@ class _Audit:
 
 
 _AVOID = "Keep the run away from this point, or mend the model there."
-
-
-def _steepest(testimony: Testimony) -> Array:
-    """(d,): of several outputs, the derivative of largest size, where its bound says that it is one."""
-    sure = np.abs(testimony.value) > testimony.bound
-    values = np.where(sure, testimony.value, 0.0)
-    return np.asarray(values[np.arange(len(values)), np.argmax(np.abs(values), axis=1)])
 
 
 def _relative_bound(testimony: Testimony) -> float:

@@ -9,13 +9,14 @@ import traceback
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from enum import IntEnum
+from importlib.util import find_spec
 from typing import Any, NoReturn, TypeAlias
 
 import click
 
 from gradcheck import __version__
 from gradcheck.command_options import HOW, STATUSES, WHERE, options
-from gradcheck.errors import ModelFailure, UsageError
+from gradcheck.errors import MissingExtra, ModelFailure, UsageError
 from gradcheck.evaluation.prints import abandon_stdout, prints_kept_apart
 from gradcheck.problem.loading import importable, load, split_address
 from gradcheck.problem.reading import bounds_from_text, point_from_text, points_from_file
@@ -138,7 +139,7 @@ def _check_command(**given: Any) -> int:
 
 
 @commands.command("scan", epilog=STATUSES)
-@options(*WHERE, "along", *HOW)
+@options(*WHERE, "along", *HOW, "svg")
 def _scan_command(**given: Any) -> int:
     """How does the error of a difference depend on its step?
 
@@ -146,6 +147,7 @@ def _scan_command(**given: Any) -> int:
     Examples:
       gradcheck scan wing.py:problem --along span
       gradcheck scan wing.py:drag --at 0.3,1.2 --along 1
+      gradcheck scan wing.py:problem --along span --svg span.svg
     """
     return _carry_out(_scan, given)
 
@@ -288,6 +290,7 @@ def _carry_out(work: Callable[[Options, Progress], Answer], given: Options) -> i
     target = given["json"]
     try:
         refuse_unwritable(target)
+        _refuse_undrawable(given.get("svg"), target)
     except UsageError as error:
         return _fail(Exit.USAGE, str(error), None)
     try:
@@ -303,6 +306,23 @@ def _carry_out(work: Callable[[Options, Progress], Answer], given: Options) -> i
         hint = "set GRADCHECK_TRACEBACK=1 to see where, and please report it"
         return _fail(Exit.OWN_ERROR, f"an error of gradcheck itself: {type(error).__name__}: {error} ({hint})", target)
     return int(answer.status)
+
+
+def _refuse_undrawable(picture: str | None, document: str | None) -> None:
+    """Complain about a picture that cannot be made before the model runs, not after.
+
+    Raises
+    ------
+    UsageError
+        If it cannot be written or drawn, or if it and the JSON document would both go to standard output.
+    """
+    if picture is None:
+        return
+    refuse_unwritable(picture)
+    if picture == document == "-":
+        raise UsageError("--svg - and --json - would mix on standard output; give one of them a file")
+    if find_spec("matplotlib") is None:
+        raise MissingExtra("--svg", "matplotlib", "report")
 
 
 def _watched(work: Callable[[Options, Progress], Answer], given: Options) -> Answer:
@@ -323,7 +343,10 @@ def _tell(answer: Answer, given: Options) -> None:
 
         more = {"status": int(answer.status), "error": answer.error} if answer.error else {}
         write_document(document(answer.record, **more), target)
-    if target != "-":
+    picture = given.get("svg")
+    if picture is not None:
+        write_document(answer.record.to_svg(), picture)
+    if "-" not in (target, picture):
         print_report(answer.brief if given["quiet"] and answer.status == Exit.READY else answer.text)
     if answer.error:
         complain(answer.error)

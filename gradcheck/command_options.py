@@ -39,6 +39,7 @@ _OPTION = {
     "time_limit": click.option("--time-limit", metavar="TIME", help="At most this long: seconds, or 90s, 10min, 2h."),
     "seed": click.option("--seed", type=int, default=0, show_default=True, help="Of everything that is random."),
     "json": click.option("--json", metavar="FILE", help="Write the report as JSON; - is standard output."),
+    "svg": click.option("--svg", metavar="FILE", help="Draw the curve as SVG; - is standard output."),
     "quiet": click.option("--quiet", is_flag=True, help="No progress; one line if there is nothing to complain of."),
     "allow_undecided": click.option("--allow-undecided", is_flag=True, help="Exit with 0 instead of 4."),
 }

@@ -3,7 +3,8 @@
 GradcheckError (Exception)
 ├── UsageError (ValueError)              the caller's mistake, told once, at the front door
 │   ├── DerivativeShapeError             a claim whose shape does not fit the model's
-│   └── ModelNotFound                    ``package.module:attribute`` leads nowhere
+│   ├── ModelNotFound                    ``package.module:attribute`` leads nowhere
+│   └── MissingExtra                     an optional package is needed and not installed
 ├── ModelFailure (RuntimeError)          the model could not be evaluated at its start point
 └── DerivativeMismatch (AssertionError)  a claimed derivative was refuted; its text is the report
 UndecidedWarning (UserWarning)           a check that could not decide
@@ -50,6 +51,27 @@ class DerivativeShapeError(UsageError):
 
 class ModelNotFound(UsageError):
     """The address of a model does not lead to one."""
+
+
+class MissingExtra(UsageError):
+    """Something asked for needs an optional package that is not installed.
+
+    Attributes
+    ----------
+    package, extra : str
+        What is missing, and the extra of this package that brings it.
+    """
+
+    def __init__(self, purpose: str, package: str, extra: str) -> None:
+        super().__init__(
+            f"{purpose} needs {package}, which is not installed; install it, or gradcheck with its extra {extra!r}"
+        )
+        self.purpose = purpose
+        self.package = package
+        self.extra = extra
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        return type(self), (self.purpose, self.package, self.extra)
 
 
 class ModelFailure(GradcheckError, RuntimeError):

@@ -14,6 +14,7 @@ from gradcheck.problem.layout import Points, real_numbers
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
 from gradcheck.problem.subject import Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.estimate import Scan
+from gradcheck.report.plots import scan_svg
 from gradcheck.report.scan_text import scan_text
 from gradcheck.witnesses.steps import room_along
 
@@ -48,7 +49,7 @@ def scan(
     wrt, output, bounds, names, typical
         As in `gradcheck.check`.
     budget : int, optional
-        Largest number of evaluations; about 110 are usual.
+        Largest number of evaluations; about 140 are usual.
     time_limit : float or str, optional
     seed : int
         Reserved; a scan is deterministic.
@@ -56,6 +57,8 @@ def scan(
     Returns
     -------
     Scan
+        Its best step is NaN where no step approximates a derivative (at a kink or jump, on a plateau), and a notice
+        says why. ``to_svg()`` draws it.
 
     Raises
     ------
@@ -70,6 +73,8 @@ def scan(
     >>> curve = gradcheck.scan(math.exp, at=1.0)
     >>> bool(1e-7 < curve.best_step < 1e-3), round(curve.order)
     (True, 2)
+    >>> round(curve.truncation.slope), round(curve.roundoff.slope)
+    (2, -1)
     """
     given = {"wrt": wrt, "output": output, "bounds": bounds, "names": names, "typical": typical}
     subject = _subject(function, at, given)
@@ -89,15 +94,22 @@ def scan(
         steps=curve.steps,
         values=curve.values,
         errors=curve.errors,
-        best_step=float(curve.steps[curve.best]),
+        best_step=float(curve.steps[curve.best]) if curve.best >= 0 else float("nan"),
+        best_error=curve.best_error,
+        floor=curve.floor,
+        truncation=curve.truncation,
+        roundoff=curve.roundoff,
         noise=float(curve.reference.noise[0]),
-        order=curve.order,
+        order=curve.truncation.slope if curve.truncation else float("nan"),
         value=float(curve.reference.value[0, 0]),
         bound=float(curve.reference.bound[0, 0]),
         along=label,
+        unit=subject.units[directions[0]] if directions.ndim == 1 and subject.units else "",
+        formula="one-sided difference" if curve.one_sided else "central difference",
         function=name,
         evaluations=session.ledger.evaluations,
-        notices=tuple(session.ledger.notices),
+        notices=(*session.ledger.notices, *curve.reference.reasons.values()),
+        renderer=scan_svg,
     )
     return replace(record, text=scan_text(record))
 

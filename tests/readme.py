@@ -3,10 +3,13 @@
 import re
 import warnings
 from pathlib import Path
+from typing import Any
 
 from click.testing import CliRunner
 
 README = Path(__file__).parent.parent / "README.md"
+#: The picture that README.md shows.
+PICTURE = Path(__file__).parent / "pictures" / "scan.svg"
 
 NUMBER = re.compile(r"[-+]?\d[\d,]*\.?\d*(e[-+]?\d+)?")
 
@@ -62,11 +65,21 @@ def mismatch_output() -> str:
     return str(gradcheck.check(drag, at=[3.0, 0.5], gradient=tired_gradient, on_refuted="return"))
 
 
-def scan_output() -> str:
-    """The printed scan."""
+def scanned() -> Any:
+    """The scan of README.md."""
     import gradcheck
 
-    return str(gradcheck.scan(drag, at=[3.0, 0.5], along=0))
+    return gradcheck.scan(drag, at=[3.0, 0.5], along="speed", names=["speed", "width"])
+
+
+def scan_output() -> str:
+    """The printed scan."""
+    return str(scanned())
+
+
+def told_by(picture: str) -> str:
+    """Title and description of a picture, which say what it shows."""
+    return "\n".join(re.findall(r"<(?:title|desc)[^>]*>([^<]*)</", picture))
 
 
 OUTPUTS = {"demo": demo_output, "mismatch": mismatch_output, "scan": scan_output}
@@ -104,7 +117,7 @@ def excerpt(name: str, said: str) -> str:
 
 
 def refresh() -> None:
-    """Write today's outputs into README.md."""
+    """Write today's outputs into README.md, and its picture."""
     text = README.read_text(encoding="utf-8")
     for name, output in OUTPUTS.items():
         before, _, rest = text.partition(f"<!-- output: {name} -->\n")
@@ -112,6 +125,8 @@ def refresh() -> None:
         shown = excerpt(name, output())
         text = f"{before}<!-- output: {name} -->\n```text\n{shown}\n```\n<!-- end -->{after}"
     README.write_text(text, encoding="utf-8")
+    PICTURE.parent.mkdir(exist_ok=True)
+    PICTURE.write_text(scanned().to_svg(), encoding="utf-8")
 
 
 if __name__ == "__main__":

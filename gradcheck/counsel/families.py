@@ -5,6 +5,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from gradcheck.counsel.solver_steps import steps_to_paste, table_to_paste
 from gradcheck.problem.subject import Subject
 from gradcheck.records.advice import Advice, Family
 from gradcheck.records.arrays import Array
@@ -171,34 +172,32 @@ def _price(evidence: Evidence) -> list[str]:
 
 
 def _tolerances(evidence: Evidence) -> dict[str, float]:
+    """What the noise leaves: differences of values and gradients below these say nothing."""
     main = next((s for s in evidence.steps if s.function == next(iter(evidence.subject.targets))), None)
     if main is None:
         return {}
     subject = evidence.subject
     # Steps leave out the whole-number variables, and some of very many.
     sizes = {subject.layout.name(i): subject.domain.scale[i] for i in range(subject.layout.size)}
-    left = main.central_error * np.array([sizes[name] for name in main.names])
+    size = np.array([sizes[name] for name in main.names])
+
+    def norm(left: Array) -> float:
+        return float(10 * np.sqrt(np.nansum((left * size) ** 2)))
+
     return {
         "change_of_objective": float(10 * main.noise),
-        "norm_of_scaled_gradient": float(10 * np.sqrt(np.nansum(left**2))),
+        "norm_of_scaled_gradient": norm(main.central_error),
+        "norm_of_scaled_gradient_by_forward_differences": norm(main.forward_error),
     }
 
 
 def _snippet(evidence: Evidence) -> str:
     """Steps, scaling and tolerances as Python to paste."""
-    lines = []
+    subject, lines = evidence.subject, []
     if evidence.scaling is not None:
-        lines += _table("scale", "divide each variable by", evidence.scaling.names, evidence.scaling.variables)
-    for steps in evidence.steps[:1]:
-        what = f"differences of {steps.function}"
-        lines += _table("forward_steps", f"steps for forward {what}", steps.names, steps.forward)
-        lines += _table("central_steps", f"steps for central {what}", steps.names, steps.central)
+        lines += table_to_paste("scale", "divide each variable by", evidence.scaling.names, evidence.scaling.variables)
+    names = [subject.layout.name(i) for i in range(subject.layout.size)] if evidence.steps else []
+    lines += steps_to_paste(evidence.steps, names, subject.start)
     for name, value in _tolerances(evidence).items():
         lines.append(f"{name} = {value:.1e}  # stop no finer")
     return "\n".join(lines)
-
-
-def _table(name: str, comment: str, names: Sequence[str], values: Array) -> list[str]:
-    """A dict of one line a variable, so that nobody has to count positions."""
-    rows = [f"    {variable!r}: {value:.3g}," for variable, value in zip(names, values, strict=True)]
-    return [f"{name} = {{  # {comment}", *rows, "}"]

@@ -1,52 +1,115 @@
-"""Steps for the user's own solver: forward and central differences, and the error each leaves.
+"""Steps for the user's own solver, as a record and as Python to paste."""
 
-Forward: h = 8^(1/4)·sqrt(ε/|f''|) (Moré & Wild 2012, for noise of standard deviation ε). Central: h = (3ε/|f'''|)^(1/3)
-(Gill, Murray, Saunders & Wright 1983).
-"""
+from collections.abc import Sequence
 
 import numpy as np
 
-from gradcheck.records.arrays import Array
+from gradcheck.health.step_choice import StepChoice
+from gradcheck.records.arrays import Array, BoolArray
 from gradcheck.records.report import Steps
 
-#: A step is never larger than this share of the variable's size: the curvature is only known near the point.
-LARGEST = 0.1
 
-
-def solver_steps(
-    function: str, names: tuple[str, ...], noise: float, second: Array, third: Array, sizes: Array
-) -> Steps:
-    """Best steps per variable.
+def solver_steps(function: str, names: tuple[str, ...], choice: StepChoice, smooth: BoolArray) -> Steps:
+    """The record of the steps of one function.
 
     Parameters
     ----------
     function : str
     names : tuple of str
-    noise : float
-        Standard deviation ε of one value.
-    second, third : ndarray, shape (n,)
-        Second and third derivative along each variable; NaN where unknown.
-    sizes : ndarray, shape (n,)
-        Sizes of the variables.
-
-    Returns
-    -------
-    Steps
-        Where a derivative is zero or unknown the formula gives no step; the largest sensible one is returned then, and
-        the error is what noise leaves.
+        Names of the variables that `smooth` picks.
+    choice : StepChoice
+    smooth : ndarray of bool, shape (d,)
+        Variables that are no whole numbers.
     """
-    largest = LARGEST * sizes
-    bend, twist = np.abs(np.nan_to_num(second)), np.abs(np.nan_to_num(third))
-    with np.errstate(divide="ignore"):
-        forward = np.minimum(8**0.25 * np.sqrt(noise / bend), largest)
-        central = np.minimum(np.cbrt(3 * noise / twist), largest)
     return Steps(
         function=function,
         names=names,
-        forward=forward,
-        # Truncation and two noisy values; at the best step both parts are of one size.
-        forward_error=bend * forward / 2 + np.sqrt(2) * noise / forward,
-        central=central,
-        central_error=twist * central**2 / 6 + noise / (np.sqrt(2) * central),
-        noise=noise,
+        noise=choice.noise,
+        **{
+            name: np.array(getattr(choice, name)[smooth])
+            for name in ("forward", "forward_error", "forward_side", "central", "central_error", "central_side")
+        },
     )
+
+
+def steps_to_paste(all_steps: Sequence[Steps], names: Sequence[str], start: Array) -> list[str]:
+    """Lines of Python: absolute steps by variable, and the same in the form that scipy takes.
+
+    Parameters
+    ----------
+    all_steps : sequence of Steps
+        The first ones are those of the objective; the others follow in one table.
+    names : sequence of str
+        All variables of the problem, in their order.
+    start : ndarray, shape (n,)
+        The start point, which the steps belong to.
+
+    Returns
+    -------
+    list of str
+        Empty without steps. scipy's form is left out where some variable has no step.
+
+    Notes
+    -----
+    scipy (1.17, `scipy.optimize.minimize`) multiplies ``finite_diff_rel_step`` by x itself for ``jac="2-point"``, hence
+    its sign, and by ``|x|`` for ``"3-point"``; where x is 0 it takes a step of its own. Without `jac` it takes absolute
+    steps, ``eps``.
+    """
+    if not all_steps:
+        return []
+    main = all_steps[0]
+    what = f"differences of {main.function}"
+    lines = table_to_paste("forward_steps", f"steps for forward {what}", main.names, _signed(main))
+    lines += table_to_paste("central_steps", f"steps for central {what}", main.names, main.central)
+    for name, side in zip(main.names, main.central_side, strict=True):
+        if side:
+            lines.append(f"# {name!r} is at a bound: its central step is for x, x {_sign(side)} h, x {_sign(side)} 2 h")
+    if tuple(names) == main.names and np.isfinite([main.forward, main.central]).all():
+        lines += _for_scipy(main, start)
+    if len(all_steps) > 1:
+        lines += _of_other_functions(all_steps[1:])
+    return lines
+
+
+def table_to_paste(name: str, comment: str, names: Sequence[str], values: Array) -> list[str]:
+    """A dict of one line a variable, so that nobody has to count positions; variables without a value are named."""
+    rows = [
+        f"    {variable!r}: {value:.3g},"
+        if np.isfinite(value)
+        else f"    # {variable!r}: no step gives a derivative at the start point"
+        for variable, value in zip(names, values, strict=True)
+    ]
+    return [f"{name} = {{  # {comment}", *rows, "}"]
+
+
+def _signed(steps: Steps) -> Array:
+    return np.asarray(steps.forward * steps.forward_side)
+
+
+def _sign(side: float) -> str:
+    return "+" if side > 0 else "-"
+
+
+def _for_scipy(steps: Steps, start: Array) -> list[str]:
+    with np.errstate(divide="ignore", invalid="ignore"):
+        forward = np.where(start == 0, 0.0, _signed(steps) / start)
+        central = np.where(start == 0, 0.0, steps.central / np.abs(start))
+    zero = [name for name, x in zip(steps.names, start, strict=True) if x == 0]
+    return [
+        "# the same in units of x, as scipy.optimize.minimize takes them; for other methods: step = value * x",
+        f"forward_relative = [{', '.join(f'{value:.6g}' for value in forward)}]",
+        f"central_relative = [{', '.join(f'{value:.6g}' for value in central)}]",
+        '# forward: jac="2-point", options={"finite_diff_rel_step": forward_relative}',
+        '# central: jac="3-point", options={"finite_diff_rel_step": central_relative}',
+        '# forward, absolute: no jac, options={"eps": list(forward_steps.values())}',
+        *[f"# x is 0 for {name!r}: there scipy takes relative steps of its own; give absolute ones" for name in zero],
+    ]
+
+
+def _of_other_functions(others: Sequence[Steps]) -> list[str]:
+    lines = ["other_steps = {  # function: variable: (forward, central)"]
+    for steps in others:
+        pairs = zip(steps.names, _signed(steps), steps.central, strict=True)
+        rows = [f"        {name!r}: ({f:.3g}, {c:.3g})," for name, f, c in pairs if np.isfinite([f, c]).all()]
+        lines += [f"    {steps.function!r}: {{", *rows, "    },"]
+    return [*lines, "}"]

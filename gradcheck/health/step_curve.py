@@ -5,15 +5,30 @@ from dataclasses import dataclass
 import numpy as np
 
 from gradcheck.evaluation.protocol import Directions, Inquiry, Request
+from gradcheck.health.curve_branches import roundoff_branch, truncation_branch
 from gradcheck.records.arrays import Array
+from gradcheck.records.estimate import Branch
+from gradcheck.witnesses.difference_track import REASONS
 from gradcheck.witnesses.finite_difference import finite_difference
-from gradcheck.witnesses.steps import Room, rounded_half_width
+from gradcheck.witnesses.ladder import Nature
+from gradcheck.witnesses.polynomial_fit import ROUNDING
+from gradcheck.witnesses.steps import Room
 from gradcheck.witnesses.testimony import Testimony
 
 #: Steps in units of the variable's size: four a decade, from a third of the size down to its rounding.
 LADDER = 10.0 ** np.arange(-13.5, -0.4, 0.25)
 #: Steps on each side whose errors are looked at together: one quotient may be right by luck.
 NEIGHBOURS = 1
+#: A side with less room than this share of the variable's size is none.
+LEAST_ROOM = 1e-3
+#: A bound so many times wider than the smallest change from quotient to quotient says less than the quotients.
+BLURRED = 30.0
+#: Steps whose errors differ by no more than this factor are equally good.
+ALIKE = 1.05
+#: Where one of these holds, quotients of no step approximate a derivative.
+NO_DERIVATIVE = tuple(REASONS[nature] for nature in (Nature.KINK, Nature.JUMP, Nature.PLATEAU, Nature.STEEP))
+#: Euclidean norm of the weights at a step of 1: what independent errors of the values are multiplied by.
+CENTRAL_NORM, ONE_SIDED_NORM = np.sqrt(0.5), np.sqrt(6.5)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -25,9 +40,14 @@ class StepCurve:
     steps, values, errors : ndarray
         Step taken, difference quotient, estimated absolute error.
     best : int
-        Index of the best step.
-    order : float
-        Slope of log(error) over log(step) on the truncation branch; NaN if no branch shows.
+        Index of the best step; -1 if no quotient is finite.
+    best_error : float
+        Largest error of the best step and its neighbours.
+    floor : float
+        What noise leaves at the best step; at a kink, half the difference of the slopes; NaN where there is neither.
+    truncation, roundoff : Branch or None
+    one_sided : bool
+        Three values on one side instead of two around the point.
     reference : Testimony
         The answer that errors are measured against, one direction and one output.
     """
@@ -36,7 +56,11 @@ class StepCurve:
     values: Array
     errors: Array
     best: int
-    order: float
+    best_error: float
+    floor: float
+    truncation: Branch | None
+    roundoff: Branch | None
+    one_sided: bool
     reference: Testimony
 
 
@@ -56,60 +80,89 @@ def step_curve(base: Array, directions: Directions, room: Room, centre: Array) -
         Where one side has no room the quotients are one-sided (three points, second order).
     """
     reference = yield from finite_difference(base, directions, room, centre)
-    both = min(room.below[0], room.above[0]) >= 1e-3 * room.scale[0]
+    both = min(room.below[0], room.above[0]) >= LEAST_ROOM * room.scale[0]
     reach = min(room.below[0], room.above[0]) if both else max(room.below[0], room.above[0]) / 2
     sign = 1.0 if both or room.above[0] >= room.below[0] else -1.0
-    wanted = LADDER[LADDER * room.scale[0] <= reach] * room.scale[0]
-    steps = np.unique(rounded_half_width(wanted, np.full(wanted.size, room.grain[0] * 2.0**-12)))
+    # No rounding to a convenient grid: on one, rounding inside the model may cancel that meets a solver in full.
+    steps = LADDER[LADDER * room.scale[0] <= reach] * room.scale[0]
     offsets = np.concatenate([steps, -steps if both else 2 * steps]) * sign
     if directions.ndim == 1:
         x = base[directions[0]]
         offsets = (x + offsets) - x
     reply = yield Request(base=base, directions=directions, offsets=offsets[None, :])
     k = steps.size
-    first, second = reply.values[0, :k, 0], reply.values[0, k:, 0]
     near, far = offsets[:k], offsets[k:]
-    with np.errstate(divide="ignore", invalid="ignore"):
-        if both:
-            values = (first - second) / (near - far)
-        else:
-            values = (first - centre[0]) / near * far / (far - near) - (second - centre[0]) / far * near / (far - near)
-    errors = _errors(values, reference)
-    best = _best(errors)
+    values = quotients(near, far, reply.values[0, :k, 0], reply.values[0, k:, 0], None if both else float(centre[0]))
+    taken = np.abs(near - far) / 2 if both else np.abs(near)
+    return _read(taken, values, reference, float(abs(centre[0])), one_sided=not both)
+
+
+def quotients(near: Array, far: Array, first: Array, second: Array, centre: float | None) -> Array:
+    """(k,): slopes from values at two displacements each, and at the point itself if `centre` is given."""
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        if centre is None:
+            return np.asarray((first - second) / (near - far))
+        spread = far - near
+        return np.asarray((first - centre) / near * far / spread - (second - centre) / far * near / spread)
+
+
+def _read(steps: Array, values: Array, reference: Testimony, largest: float, *, one_sided: bool) -> StepCurve:
+    """Errors, best step and branches of measured quotients."""
+    noise = float(reference.noise[0])
+    noise = noise if np.isfinite(noise) else ROUNDING * float(np.spacing(largest))
+    left_by_noise = (ONE_SIDED_NORM if one_sided else CENTRAL_NORM) * noise / steps
+    errors, resolved = _errors(values, reference, left_by_noise)
+    # A first best step, from what was seen alone, parts the branches; the branches then tell luck from exactness.
+    seen = _with_neighbours(errors)
+    roundoff = roundoff_branch(steps, errors, int(np.argmin(np.fmax(seen, left_by_noise))), resolved)
+    expected = left_by_noise if roundoff is None else roundoff.errors
+    judged = np.fmax(seen, expected)
+    best = _best(np.where(np.isfinite(values), judged, np.inf), reference)
+    half_gap = float(abs(reference.right[0, 0] - reference.left[0, 0]) / 2)
     return StepCurve(
-        steps=np.abs(near),
+        steps=steps,
         values=values,
         errors=errors,
         best=best,
-        order=_order(np.abs(near), errors, best, float(reference.bound[0, 0])),
+        best_error=float(seen[best]) if best >= 0 else float("nan"),
+        floor=float(left_by_noise[best]) if best >= 0 else half_gap,
+        # Beside a jump quotients grow as 1/step as well, but that is no noise.
+        truncation=truncation_branch(steps, errors, best, np.maximum(expected, resolved)) if best >= 0 else None,
+        roundoff=roundoff if best >= 0 else None,
+        one_sided=one_sided,
         reference=reference,
     )
 
 
-def _errors(values: Array, reference: Testimony) -> Array:
-    """Distance to the reference; where it has no finite value, the distance to the neighbouring quotients."""
-    if np.isfinite(reference.value[0, 0]):
-        distance: Array = np.abs(values - reference.value[0, 0])
-        return distance
+def _best(judged: Array, reference: Testimony) -> int:
+    """Index of the best step: of several equally good ones the middle; -1 if no step is any good."""
+    least = float(judged.min(initial=np.inf))
+    if not np.isfinite(least) or any(reason in NO_DERIVATIVE for reason in reference.reasons.values()):
+        return -1
+    alike = np.flatnonzero(judged <= ALIKE * least)
+    return int(alike[alike.size // 2])
+
+
+def _errors(values: Array, reference: Testimony, expected: Array) -> tuple[Array, float]:
+    """(k,) errors, and the size below which the reference does not resolve them.
+
+    The distance to the reference; at a kink to the farther of its two slopes. Where the reference knows less than the
+    quotients do among themselves, the distance to the neighbouring quotients.
+    """
+    left, right = reference.left[0, 0], reference.right[0, 0]
+    if np.isfinite(left) and np.isfinite(right):
+        return np.asarray(np.maximum(np.abs(values - left), np.abs(values - right))), 0.0
+    value, bound = float(reference.value[0, 0]), float(reference.bound[0, 0])
     change = np.abs(np.diff(values, prepend=values[:1], append=values[-1:]))
-    return np.maximum(change[:-1], change[1:])
+    changes = np.maximum(change[:-1], change[1:])
+    settled = np.fmax(_with_neighbours(changes), expected)
+    least = float(np.nanmin(settled, initial=np.inf))
+    if not (np.isfinite(value) and np.isfinite(bound)) or bound > max(abs(value), BLURRED * least):
+        return np.asarray(changes), 0.0
+    return np.asarray(np.abs(values - value)), 2 * bound
 
 
-def _best(errors: Array) -> int:
-    """Index of the smallest error, each step judged by the worst of itself and its neighbours."""
+def _with_neighbours(errors: Array) -> Array:
+    """(k,): the largest error of each step and its neighbours; infinite where one of them is unknown."""
     padded = np.pad(np.nan_to_num(errors, nan=np.inf), NEIGHBOURS, constant_values=0.0)
-    windows = np.lib.stride_tricks.sliding_window_view(padded, 2 * NEIGHBOURS + 1)
-    return int(np.argmin(windows.max(axis=1)))
-
-
-def _order(steps: Array, errors: Array, best: int, bound: float) -> float:
-    """Median slope of the errors above the best step, where they exceed what the reference resolves."""
-    known = np.isfinite(errors) & (errors > 0)
-    branch = np.flatnonzero(known & (np.arange(errors.size) > best + NEIGHBOURS))
-    if np.isfinite(bound):
-        branch = branch[errors[branch] > 10 * bound]
-    if branch.size < 4:
-        return float("nan")
-    slopes = np.diff(np.log(errors[branch])) / np.diff(np.log(steps[branch]))
-    # The lower half of the branch is nearest to the limit where one term rules.
-    return float(np.median(slopes[: max(3, slopes.size // 2)]))
+    return np.asarray(np.lib.stride_tricks.sliding_window_view(padded, 2 * NEIGHBOURS + 1).max(axis=1))

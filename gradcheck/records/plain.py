@@ -12,12 +12,12 @@ import numpy as np
 def plain(value: Any) -> Any:
     """`value` in dict, list, str, int, float, bool and None only.
 
-    Records become dicts of their fields (the rendered ``text`` of a report is left out), arrays become lists, enums
+    Records become dicts of their fields (but for the rendered text of a report, and its renderer), arrays lists, enums
     their word. NaN and the infinities become ``"nan"``, ``"inf"`` and ``"-inf"``, because strict JSON has none of them.
     """
     if is_dataclass(value) and not isinstance(value, type):
         # The text of a report is rendered from the rest of it; the sentence of a finding is data.
-        rendered = {"text"} if hasattr(value, "to_dict") else set()
+        rendered = {"text", "renderer"} if hasattr(value, "to_dict") else set()
         return {field.name: plain(getattr(value, field.name)) for field in fields(value) if field.name not in rendered}
     if isinstance(value, Enum):
         return value.value

@@ -161,7 +161,24 @@ class Steps:
     """Best steps for the user's own solver, per variable, and the derivative error that each leaves.
 
     All arrays have shape (n,); steps in units of the variable, errors in units of the function per unit of the
-    variable; `noise` is the noise level of the function.
+    variable. NaN where differences approximate no derivative (a jump, a plateau).
+
+    Attributes
+    ----------
+    function : str
+    names : tuple of str
+        The variables; those of whole numbers are left out.
+    forward, central : ndarray
+        Steps of a difference of two values at x and x + h, and at x - h and x + h.
+    forward_error, central_error : ndarray
+        The error that each step leaves: truncation and noise, and never less than what was seen when it was tried. For
+        several outputs the largest; their steps are a compromise.
+    forward_side : ndarray
+        1; or -1 where the bounds leave room for a step down only.
+    central_side : ndarray
+        0; or 1 or -1 where a bound is so near that the step is meant for three values above or below: x, x ± h, x ± 2h.
+    noise : float
+        Noise level of the function; of several outputs the largest.
     """
 
     function: str
@@ -171,9 +188,14 @@ class Steps:
     central: Array
     central_error: Array
     noise: float
+    forward_side: Array = field(default_factory=lambda: np.empty(0))
+    central_side: Array = field(default_factory=lambda: np.empty(0))
 
     def __post_init__(self) -> None:
-        for name in ("forward", "forward_error", "central", "central_error"):
+        for name, usual in (("forward_side", 1.0), ("central_side", 0.0)):
+            if np.size(getattr(self, name)) == 0:
+                object.__setattr__(self, name, np.full(len(self.names), usual))
+        for name in ("forward", "forward_error", "forward_side", "central", "central_error", "central_side"):
             object.__setattr__(self, name, frozen(getattr(self, name)))
 
 

@@ -3,6 +3,8 @@
 from collections.abc import Mapping, Sequence
 from typing import Any
 
+import numpy as np
+
 from gradcheck import wording
 from gradcheck.records.advice import Advice
 from gradcheck.records.finding import Finding, FindingCode, Severity
@@ -239,14 +241,37 @@ def _steps(steps: Steps) -> list[str]:
             name,
             *(
                 wording.number(float(column[i]), 2)
-                for column in (steps.forward, steps.forward_error, steps.central, steps.central_error)
+                for column in (
+                    steps.forward * steps.forward_side,
+                    steps.forward_error,
+                    steps.central,
+                    steps.central_error,
+                )
             ),
         )
         for i, name in enumerate(steps.names[:_ROWS])
     ]
     header = ("variable", "forward", "error left", "central", "error left")
     noise = f"noise of the value: {wording.number(steps.noise, 2)}"
-    return [*table(header, rows, right="-rrrr"), *_more(len(steps.names)), *paragraph(noise, 2)]
+    return [
+        *table(header, rows, right="-rrrr"),
+        *_more(len(steps.names)),
+        *paragraph(noise, 2),
+        *[line for text in _restricted(steps) for line in paragraph(text, 2)],
+    ]
+
+
+def _restricted(steps: Steps) -> list[str]:
+    """Where a bound or the model leaves no plain step."""
+    named = np.array(steps.names, dtype=object)
+    up, down = named[steps.central_side > 0], named[steps.central_side < 0]
+    none = named[np.isnan(steps.forward) & np.isnan(steps.central)]
+    told = [
+        f"at a bound, the central step is for x, x {sign} h and x {sign} 2h: {wording.listed(list(names))}"
+        for sign, names in (("+", up), ("-", down))
+        if names.size
+    ]
+    return told + ([f"no step gives a derivative: {wording.listed(list(none))}"] if none.size else [])
 
 
 def _scaling(scaling: Scaling | None) -> list[str]:

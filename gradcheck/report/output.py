@@ -1,4 +1,4 @@
-"""Where a report goes: standard output, a JSON file, and one line on the error output if something failed."""
+"""Where a report goes: standard output, a file (JSON, SVG), and one line on the error output if something failed."""
 
 import os
 import sys
@@ -23,7 +23,7 @@ def print_report(text: str) -> None:
 
 
 def write_document(document: str, target: str) -> None:
-    """A JSON document as UTF-8 to a file, or to standard output if `target` is ``-``.
+    """A document (JSON, SVG) as UTF-8 to a file, or to standard output if `target` is ``-``.
 
     Raises
     ------

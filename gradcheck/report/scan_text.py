@@ -39,22 +39,37 @@ def scan_text(scan: Scan) -> str:
 
 
 def _best(scan: Scan) -> str:
-    if not (math.isfinite(scan.best_step) and scan.steps.size):
+    if not np.isfinite(scan.errors).any():
         return "No step gives a finite difference quotient."
-    nearest = int(np.argmin(np.abs(scan.steps - scan.best_step)))
-    # One quotient may be right by luck: its neighbours say what the step is worth.
-    beside = scan.errors[max(0, nearest - 1) : nearest + 2]
-    left = float(np.nanmax(beside)) if np.isfinite(beside).any() else math.nan
+    if not math.isfinite(scan.best_step):
+        return "No step gives a derivative here."
+    # What the reference does not resolve is not known to be smaller.
+    resolved = scan.bound if math.isfinite(scan.bound) and scan.bound <= abs(scan.value) else 0.0
+    left = max(scan.best_error, scan.floor, resolved)
     return (
-        f"Best step for a central difference: {wording.number(scan.best_step, 2)}, "
+        f"Best step for a {scan.formula}: {wording.number(scan.best_step, 2)}{_unit(scan)}, "
         f"which leaves an error of about {wording.number(left, 2)}."
     )
+
+
+def _unit(scan: Scan) -> str:
+    return f" {wording.shortened(scan.unit, 20)}" if scan.unit else ""
+
+
+def _branches(scan: Scan) -> str:
+    """Where truncation begins to rule, and where noise does."""
+    told = []
+    if scan.truncation is not None:
+        told.append(f"truncation from {wording.number(scan.truncation.lower, 2)} up")
+    if scan.roundoff is not None:
+        told.append(f"noise or rounding below {wording.number(scan.roundoff.upper, 2)}")
+    return f"What rules the error: {' and '.join(told)}. " if told else ""
 
 
 def _closing(scan: Scan) -> str:
     order = f"Observed truncation order: {wording.number(scan.order, 2)}. " if math.isfinite(scan.order) else ""
     noise = f"Noise of the value: {wording.number(scan.noise, 2)}. " if math.isfinite(scan.noise) else ""
-    return f"{order}{noise}{wording.count(scan.evaluations, 'evaluation').capitalize()}."
+    return f"{_branches(scan)}{order}{noise}{wording.count(scan.evaluations, 'evaluation').capitalize()}."
 
 
 def plot(steps: Array, errors: Array, best_step: float) -> list[str]:
@@ -80,13 +95,14 @@ def plot(steps: Array, errors: Array, best_step: float) -> list[str]:
     # An error of zero has no logarithm; the bottom of the field is as low as it goes.
     bottom = 10.0 ** math.floor(math.log10(positive.min()))
     up = np.log10(np.where(errors[drawn] > 0, errors[drawn], bottom))
-    lines = _field(across, up, int(np.argmin(np.abs(steps[drawn] - best_step))))
+    best = int(np.argmin(np.abs(steps[drawn] - best_step))) if math.isfinite(best_step) else None
+    lines = _field(across, up, best)
     if missing:
         lines += paragraph(f"not drawn: {wording.count(missing, 'step')} without a finite error", 2)
     return lines
 
 
-def _field(across: Array, up: Array, best: int) -> list[str]:
+def _field(across: Array, up: Array, best: int | None) -> list[str]:
     left, right = math.floor(across.min()), max(math.ceil(across.max()), math.floor(across.min()) + 1)
     low, high = math.floor(up.min()), max(math.ceil(up.max()), math.floor(up.min()) + 1)
     columns = np.rint((across - left) / (right - left) * (_COLUMNS - 1)).astype(int)
@@ -94,7 +110,8 @@ def _field(across: Array, up: Array, best: int) -> list[str]:
     field = [[" "] * _COLUMNS for _ in range(_LINES)]
     for row, column in zip(rows, columns, strict=True):
         field[row][column] = _POINT
-    field[rows[best]][columns[best]] = _BEST
+    if best is not None:
+        field[rows[best]][columns[best]] = _BEST
     labels = {round((high - power) / (high - low) * (_LINES - 1)): f"1e{power}" for power in _ticks(low, high, 5)}
     lines = ["  error"]
     lines += [f"{labels.get(i, ''):>7} |{''.join(cells)}".rstrip() for i, cells in enumerate(field)]

@@ -58,11 +58,12 @@ FIVE_POINTS = [
     (2, "3 -16 36 -48 25"),
 ]
 
-#: nodes, derivative at 0, weights, order of accuracy: from the moment equations, solved by hand.
+#: nodes, derivative at 0, weights, order of accuracy, factor of the leading error term: from the moment equations,
+#: solved by hand.
 UNEVEN = [
-    ((0, 1, 3), 1, "-4/3 3/2 -1/6", 2),
-    ((-1, 0, 2), 1, "-2/3 1/2 1/6", 2),
-    ((-1, 0, 2), 2, "2/3 -1 1/3", 1),
+    ((0, 1, 3), 1, "-4/3 3/2 -1/6", 2, "-1/2"),
+    ((-1, 0, 2), 1, "-2/3 1/2 1/6", 2, "1/3"),
+    ((-1, 0, 2), 2, "2/3 -1 1/3", 1, "1/3"),
 ]
 
 #: derivative, one-sided or not, orders of accuracy with Σ|w|: sums of the rows above.
@@ -123,10 +124,10 @@ def test_five_point_errors_are_those_of_abramowitz_and_stegun(place, factor):
     assert (power, -found) == (4, pytest.approx(float(Fraction(factor)), rel=1e-14))
 
 
-@pytest.mark.parametrize(("nodes", "derivative", "weights", "order"), UNEVEN)
-def test_weights_on_uneven_nodes_solve_the_moment_equations(nodes, derivative, weights, order):
+@pytest.mark.parametrize(("nodes", "derivative", "weights", "order", "error"), UNEVEN)
+def test_weights_on_uneven_nodes_solve_the_moment_equations(nodes, derivative, weights, order, error):
     assert_weights(derivative_weights(nodes, order=derivative), numbers(weights))
-    assert leading_error(nodes, order=derivative)[0] == order
+    assert leading_error(nodes, order=derivative) == (order, pytest.approx(float(Fraction(error)), rel=1e-14))
 
 
 @pytest.mark.parametrize(("derivative", "kind", "sums"), AMPLIFICATION, ids=lambda value: str(value)[:7])

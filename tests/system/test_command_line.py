@@ -629,6 +629,45 @@ def test_a_scan_from_the_shell_draws_its_curve(folder):
     assert "step   (O: best)" in done.stdout
 
 
+def test_a_scan_writes_its_picture_beside_the_report_and_the_document(folder):
+    done = gradcheck("scan", "wing.py:problem", "--along", "chord", "--svg", "chord.svg", "--json", "chord.json")
+
+    assert done.returncode == 0, done.stderr
+    assert done.stdout.startswith("objective along chord: 0.09 ± ")
+    assert "<title" in (folder / "chord.svg").read_text(encoding="utf-8")
+    assert json.loads((folder / "chord.json").read_text(encoding="utf-8"))["format"] == "gradcheck-scan"
+
+
+def test_a_picture_on_standard_output_stands_alone(folder):
+    done = gradcheck("scan", "wing.py:problem", "--svg", "-", PYTHONIOENCODING="ascii")
+
+    assert done.returncode == 0, done.stderr
+    assert done.stdout.startswith("<?xml")
+    assert done.stdout.endswith("</svg>\n")
+
+
+@pytest.mark.parametrize(
+    ("options", "words"),
+    [
+        (["--svg", "-", "--json", "-"], "would mix on standard output"),
+        (["--svg", "nowhere/curve.svg"], "there is no folder"),
+        (["--svg", "."], "is a folder"),
+    ],
+)
+def test_a_picture_that_cannot_be_written_is_told_before_the_model_runs(verbs, capfd, options, words):
+    assert run(["scan", "wing.py:problem", *options]) == 2
+    assert words in capfd.readouterr().err
+    assert verbs.called == []
+
+
+def test_a_picture_without_matplotlib_is_told_before_the_model_runs(verbs, capfd, monkeypatch):
+    monkeypatch.setattr("gradcheck.command_line.find_spec", lambda name: None)
+
+    assert run(["scan", "wing.py:problem", "--svg", "curve.svg"]) == 2
+    assert "--svg needs matplotlib, which is not installed" in capfd.readouterr().err
+    assert verbs.called == []
+
+
 def test_the_document_of_a_real_check_holds_to_its_schema(folder):
     done = gradcheck("check", "wing.py:drag", "--at", "0.3,1.2", "--gradient", "wrong_gradient", "--json", "-")
 

@@ -33,3 +33,11 @@ def test_both_set_up_commands_are_marked_and_stand_on_one_line():
     for name in ("demo command", "test command"):
         assert readme.block(name).startswith("python3 -m venv .venv && ")
         assert len(readme.block(name).splitlines()) == 1
+
+
+def test_the_picture_shown_is_the_one_that_the_program_draws_but_for_figures_that_vary():
+    name = f"tests/pictures/{readme.PICTURE.name}"
+    shown = readme.told_by(readme.PICTURE.read_text(encoding="utf-8"))
+
+    assert f"]({name})" in readme.README.read_text(encoding="utf-8")
+    assert readme.without_figures(shown) == readme.without_figures(readme.told_by(readme.scanned().to_svg()))

@@ -12,7 +12,7 @@ from click.testing import CliRunner
 from scipy import optimize
 
 import gradcheck
-from benchmarks import estimator, second_derivatives
+from benchmarks import estimator, scan, second_derivatives, solver_steps
 from benchmarks.__main__ import BENCHMARKS, main
 from benchmarks.corpus import CASES, Case, exactly
 from benchmarks.figures import Figure, side_by_side
@@ -239,3 +239,49 @@ def test_the_command_prints_the_figures_beside_their_goals(monkeypatch: pytest.M
     assert result.exit_code == 0
     assert "median relative error" in result.output
     assert "≥ 99.80" in result.output
+
+
+def test_a_step_that_is_only_luckily_right_is_not_counted_as_good() -> None:
+    """Fresh differences around the step judge it, not the scan's own quotients."""
+
+    def lucky(function: Any, at: float) -> Any:
+        steps = 10.0 ** np.arange(-12, 0)
+        return SimpleNamespace(steps=steps, best_step=1e-12, order=2.0, best_error=0.0, floor=0.0, bound=1e-30)
+
+    (sample,) = scan.measure(lucky, [case(lambda m, x: m.exp(x), 1.375)], points=1)
+
+    assert sample.ratio > 1e4
+    assert sample.told > 1e4
+
+
+def test_a_scan_is_measured_against_the_best_of_its_own_steps() -> None:
+    (sample,) = scan.measure(gradcheck.scan, [case(lambda m, x: m.exp(x), 1.375)], points=1)
+
+    assert 1 <= sample.ratio < 3
+    assert sample.order == pytest.approx(2, abs=0.1)
+
+
+def test_noise_is_independent_and_repeatable_with_a_standard_deviation_of_one() -> None:
+    drawn = solver_steps.uniform(np.linspace(1.0, 2.0, 20_000))
+
+    assert np.std(drawn) == pytest.approx(1, abs=0.02)
+    assert abs(np.mean(drawn)) < 0.02
+    assert abs(np.corrcoef(drawn[1:], drawn[:-1])[0, 1]) < 0.03
+    assert np.array_equal(drawn, solver_steps.uniform(np.linspace(1.0, 2.0, 20_000)))
+
+
+def test_an_error_told_too_small_and_a_step_too_short_are_seen() -> None:
+    advice = SimpleNamespace(
+        **{name: np.array([1e-12]) for name in ("forward", "forward_error", "central", "central_error")}
+    )
+
+    samples = solver_steps.measure(lambda function, x: advice, [case(lambda m, x: m.exp(x), 1.375)], points=1)
+
+    assert all(sample.over.max() > 3 for sample in samples)
+    assert all(sample.ratio > 10 for sample in samples if not sample.noise)
+
+
+def test_steps_without_advice_are_counted() -> None:
+    samples = solver_steps.measure(lambda function, x: None, FEW[:1], points=1)
+
+    assert next(f.value for f in solver_steps.figures(samples) if f.name == "without advice, %") == 100

@@ -34,6 +34,7 @@ EXAMPLES = [
     errors.UsageError("`at` is empty; give a point"),
     errors.DerivativeShapeError("shape (1, 3), expected (3,)", name="gradient", expected=(3,), found=(1, 3)),
     errors.ModelNotFound("wing:drga leads nowhere"),
+    errors.MissingExtra("a picture of the scan", "matplotlib", "report"),
     errors.ModelFailure("drag crashed at its start point", reason="timeout", last_words="no convergence"),
     errors.DerivativeMismatch(REPORT),
     errors.UndecidedWarning("gradient of drag undecided"),
