@@ -353,6 +353,9 @@ class Track:
     def _after_broad(self, fits: Fit, i: int, half: float, at_floor: BoolArray) -> None:
         answered = self.satisfied.copy()
         level = np.maximum(fits.floor[i], self.heard)
+        if self.noisy.any():
+            # Digits that are cut off show no noise on the ladder; what the fit before it left over does.
+            level = np.where(self.noisy, np.maximum(level, self.coarse_tail), level)
         accepted = at_floor | (fits.resolved[i] & self.noisy & (fits.tail[i] <= HEARD_MARGIN * level))
         self._keep(fits, i, half, accepted)
         if self._meets_narrow_feature(fits, i):
