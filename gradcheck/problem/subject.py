@@ -42,7 +42,10 @@ class Target:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Subject:
-    """What a verb works on: the callables, the functions by name, the layout of x, the start point and the domain."""
+    """What a verb works on: the callables, the functions by name, the layout of x, the start point and the domain.
+
+    Where `batched`, the callables take many points at once: ``(k, n)``, or ``(k,)`` where x is one number.
+    """
 
     name: str
     runs: Mapping[str, Callable[..., Any]]
@@ -51,6 +54,7 @@ class Subject:
     start: Array
     domain: Domain
     units: tuple[str, ...] = ()
+    batched: bool = False
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -69,6 +73,7 @@ def subjects_of_function(
     names: Any = None,
     typical: Any = None,
     integer: Any = None,
+    batched: bool = False,
 ) -> list[Subject]:
     """One subject per point of `at`.
 
@@ -90,6 +95,8 @@ def subjects_of_function(
         layout, start = layout_of(point, root=_root(function), wrt=wrt, function=function)
         layout = _named(layout, names)
         _refuse_other_arguments(function, layout, start)
+        if batched is not False:
+            _refuse_no_batch(batched, layout)
         subjects.append(
             Subject(
                 name=name,
@@ -98,6 +105,7 @@ def subjects_of_function(
                 layout=layout,
                 start=frozen(start),
                 domain=domain_of(start, bounds=bounds, typical=typical, integer=integer),
+                batched=batched,
             )
         )
     return subjects
@@ -169,6 +177,17 @@ def _named(layout: Layout, names: Any) -> Layout:
     if len(names) != layout.size:
         raise UsageError(f"names has {len(names)} entries but there are {layout.size} variables")
     return Layout(layout.template, layout.leaves, layout.notices, names)
+
+
+def _refuse_no_batch(batched: Any, layout: Layout) -> None:
+    if batched is not True:
+        raise UsageError(f"batched is {batched!r}; give True for a model that takes many points at once, or False")
+    if layout.single is None or len(layout.single.shape) > 1:
+        held = "several parts" if layout.single is None else f"an array of shape {layout.single.shape}"
+        raise UsageError(
+            f"batched=True needs a model of one array (n,), which it then takes as (k, n), or of one number; `at` holds "
+            f"{held}: wrap the model so that it takes one flat array, or leave batched out"
+        )
 
 
 def _root(function: Any) -> str:
