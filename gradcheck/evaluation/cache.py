@@ -89,11 +89,13 @@ class _Asked:
         """Keep what came, if there is room; bytes taken. A refusal is no answer to be remembered."""
         if self.call.fresh:
             return 0
-        refused = _refused(self.found.outcome, len(self.new))
-        if not keep or refused.any():
-            self.forget(refused | (not keep))
-        kept = int((~refused).sum()) if keep else 0
-        return kept * _OVERHEAD + (sum(values.nbytes for values in self.found.outcome.values.values()) if kept else 0)
+        if not keep:
+            self.forget(np.ones(len(self.new), bool))
+            return 0
+        if self.found.outcome.spent < len(self.new):
+            self.forget(_refused(self.found.outcome, len(self.new)))
+        held = sum(values.nbytes for values in self.found.outcome.values.values())
+        return self.found.outcome.spent * _OVERHEAD + held
 
     def forget(self, which: BoolArray) -> None:
         for position in np.flatnonzero(which):

@@ -242,9 +242,7 @@ def _late(call: Call) -> bool:
     return call.until is not None and time.monotonic() >= call.until
 
 
-def _of_one_point(
-    function: Callable[..., Any], pick: Callable[[Any], Any] | None, batched: bool
-) -> Callable[..., Any]:
+def _of_one_point(function: Callable[..., Any], pick: Callable[[Any], Any] | None, batched: bool) -> Callable[..., Any]:
     """The model as a function of one point that returns the output alone."""
     if batched:
         of_batch = _of_one_point(function, pick, False)

@@ -1,5 +1,6 @@
 """What one function of a run returned at the points of a call, taken down as it comes."""
 
+import math
 from functools import partial
 from typing import Any
 
@@ -45,6 +46,8 @@ class Output:
         #: Where results of the usual form go without a closer look.
         self.column: NDArray[Any] | None = None
         self.usual: tuple[int, ...] | None = None
+        if target.name in shapes and (self.complex or target.name in ledger.output_kinds):
+            self._room()
 
     def take(self, i: int, result: Any) -> None:
         """Take down what the run returned at point `i`.
@@ -92,7 +95,10 @@ class Output:
         """After the last point: find values that are not finite; points that were not begun were refused."""
         self.status[begun:] = Status.REFUSED
         if self.values is not None:
-            bad = ~np.isfinite(self.values[:begun]).all(axis=1) & (self.status[:begun] == Status.OK)
+            finite = np.isfinite(self.values[:begun])
+            if finite.all():
+                return
+            bad = ~finite.all(axis=1) & (self.status[:begun] == Status.OK)
             self.status[:begun][bad] = Status.NONFINITE
             self.words |= dict.fromkeys(np.flatnonzero(bad).tolist(), "returned a value that is not finite")
 
@@ -132,7 +138,7 @@ class Output:
     def _room(self) -> NDArray[Any]:
         if self.values is None:
             shape = self.shapes[self.target.name]
-            self.values = np.full((len(self.call), int(np.prod(shape, dtype=int))), np.nan, dtype=self.dtype)
+            self.values = np.full((len(self.call), math.prod(shape)), np.nan, dtype=self.dtype)
             if self.target.pick is None:
                 self.column = self.values[:, 0] if shape == () else None
                 self.usual = shape

@@ -1,5 +1,6 @@
 """The layers between a gate and the user's functions, and their order."""
 
+import math
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any
@@ -118,7 +119,7 @@ def gate_over(engine: Engine, subject: Subject, evaluator: Evaluator) -> Gate:
             for (place, _), outcome in zip(batch, engine([call for _, call in batch]), strict=True):
                 outcomes[place].append(outcome)
         return [
-            _reply(request, own, int(np.prod(evaluator.shapes.get(request.function, (1,)), dtype=int)), subject)
+            _reply(request, own, math.prod(evaluator.shapes.get(request.function, (1,))), subject)
             for request, own in zip(requests, outcomes, strict=True)
         ]
 

@@ -73,7 +73,7 @@ def subjects_of_function(
     names: Any = None,
     typical: Any = None,
     integer: Any = None,
-    batched: bool = False,
+    batched: Any = False,
 ) -> list[Subject]:
     """One subject per point of `at`.
 
@@ -185,7 +185,7 @@ def _refuse_no_batch(batched: Any, layout: Layout) -> None:
     if layout.single is None or len(layout.single.shape) > 1:
         held = "several parts" if layout.single is None else f"an array of shape {layout.single.shape}"
         raise UsageError(
-            f"batched=True needs a model of one array (n,), which it then takes as (k, n), or of one number; `at` holds "
+            f"batched=True needs a model of one array (n,), which it then takes as (k, n), or of one number; `at` is "
             f"{held}: wrap the model so that it takes one flat array, or leave batched out"
         )
 

@@ -41,12 +41,17 @@ def sender(
         with _nothing_discarded():
             return function(points[:, 0].copy() if single is not None and single.scalar else points)
 
-    def send(i: int) -> Any:
-        positional, keywords = layout.restore(moves.point(i))
-        with _nothing_discarded():
-            return function(*positional, **keywords)
+    def one_by_one(i: int) -> Any:
+        return call(function, layout, moves.point(i))
 
-    return at_once if batched else send
+    return at_once if batched else one_by_one
+
+
+def call(function: Callable[..., Any], layout: Layout, vector: NDArray[np.complex128]) -> Any:
+    """What the function returns at a complex point; it receives its own copy, and may discard no imaginary part."""
+    positional, keywords = layout.restore(vector)  # type: ignore[arg-type]
+    with _nothing_discarded():
+        return function(*positional, **keywords)
 
 
 def picked(result: Any, pick: Callable[[Any], Any] | None, shape: tuple[int, ...] | None) -> NDArray[np.complex128]:

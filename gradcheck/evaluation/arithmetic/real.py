@@ -10,7 +10,6 @@ from gradcheck.evaluation.moves import Moves, same_content
 from gradcheck.problem.layout import Layout, Leaf
 from gradcheck.records.arrays import Array
 
-
 #: Calls the model at the point of this number, or at all points at once.
 Sender: TypeAlias = Callable[[Any], Any]
 
@@ -53,7 +52,9 @@ def _with_number(function: Callable[..., Any], moves: Moves) -> Sender:
     return lambda i: function(numbers[i])
 
 
-def _with_one_entry_moved(function: Callable[..., Any], leaf: Leaf, moves: Moves, mutated: Callable[[], None]) -> Sender:
+def _with_one_entry_moved(
+    function: Callable[..., Any], leaf: Leaf, moves: Moves, mutated: Callable[[], None]
+) -> Sender:
     entries, values = moves.entries()
     numbers = values.tolist()
     places: list[Any] = entries.tolist()
