@@ -78,7 +78,7 @@ def check(
     batched : bool
         Whether the model takes many points at once: x as ``(k, n)`` (``(k,)`` where `at` is one number), and returns
         ``(k,)`` or ``(k, m)``; `output` then picks from the whole batch. A claim still takes one point ``(n,)``. Every
-        point counts as one evaluation; a batch in which the model raises is repeated point by point.
+        point counts as one evaluation; a batch in which the model raises is repeated point by point, and counted once.
     budget : int, optional
         Largest number of evaluations.
     time_limit : float or str, optional

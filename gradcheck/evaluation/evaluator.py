@@ -121,15 +121,17 @@ class Evaluator:
 
     def _batch(self, call: Call, outputs: Sequence[Output], part: slice) -> bool:
         """Evaluate some points at once; False if that failed. A single point that fails is recorded."""
-        moves = call.moves[part]
+        some = call.at(part)
+        single = self.subject.layout.single
+        given = (len(some),) if single is not None and single.scalar else (len(some), some.moves.base.size)
         try:
-            result = self._sender(call.at(part))(slice(None))
+            result = self._sender(some)(slice(None))
             for output in outputs:
-                output.take_batch(part.start, len(moves), result)
+                output.take_batch(part.start, given, result)
         except UsageError:
             raise
         except (Exception, SystemExit) as error:
-            if len(moves) == 1:
+            if len(some) == 1:
                 self._failed(call, outputs, part.start, last_words(error))
             return False
         return True

@@ -65,23 +65,23 @@ class Output:
         else:
             self._take_closely(i, result)
 
-    def take_batch(self, first: int, size: int, result: Any) -> None:
-        """Take down what the run returned at `size` points at once.
+    def take_batch(self, first: int, given: tuple[int, ...], result: Any) -> None:
+        """Take down what the run returned for an array of shape `given`, whose points begin with point `first`.
 
         Raises
         ------
         UsageError
-            As `take`; and if the first dimension is not `size`.
+            As `take`; and if the first dimension is not that of what was given.
         Exception
             Whatever speaks against the whole batch: it has to be evaluated point by point then.
         """
+        size = given[0]
         array = self._array(result, (size,))
         if array.ndim == 0 or array.shape[0] != size:
-            n = self.call.moves.base.size
             raise UsageError(
-                f"batched=True: {self.target.name} received {count(size, 'point')} in an array of shape ({size}, {n}) "
-                f"and returned shape {array.shape}; the first dimension must be {size} again: one number ({size},) or "
-                f"one row ({size}, m) a point"
+                f"batched=True: {self.target.name} received x of shape {given}, {count(size, 'point')}, and returned "
+                f"shape {array.shape}; it must return one number a point, shape ({size},), or one row a point, shape "
+                f"({size}, m)"
             )
         self._known(array.shape[1:], first)
         self._room()[first : first + size] = array.reshape(size, -1)

@@ -95,7 +95,7 @@ def subjects_of_function(
         layout, start = layout_of(point, root=_root(function), wrt=wrt, function=function)
         layout = _named(layout, names)
         _refuse_other_arguments(function, layout, start)
-        if batched is not False:
+        if batched:
             _refuse_no_batch(batched, layout)
         subjects.append(
             Subject(
@@ -105,7 +105,7 @@ def subjects_of_function(
                 layout=layout,
                 start=frozen(start),
                 domain=domain_of(start, bounds=bounds, typical=typical, integer=integer),
-                batched=batched,
+                batched=bool(batched),
             )
         )
     return subjects
@@ -180,7 +180,7 @@ def _named(layout: Layout, names: Any) -> Layout:
 
 
 def _refuse_no_batch(batched: Any, layout: Layout) -> None:
-    if batched is not True:
+    if not isinstance(batched, bool | np.bool_):
         raise UsageError(f"batched is {batched!r}; give True for a model that takes many points at once, or False")
     if layout.single is None or len(layout.single.shape) > 1:
         held = "several parts" if layout.single is None else f"an array of shape {layout.single.shape}"
