@@ -19,8 +19,9 @@ def block(name: str) -> str:
 
 
 def without_figures(line: str) -> str:
-    """The line with every number, and the units of time that vary with it, taken out."""
-    return re.sub(r"# (ms|s|min)\b|under # ms", "# s", NUMBER.sub("#", line)).strip()
+    """The line with every number taken out, and with it the unit of time and the width of the column, which vary."""
+    named = re.sub(r"# (ms|s|min)\b|under # ms", "# s", NUMBER.sub("#", line))
+    return re.sub(r"\s+", " ", named).strip()
 
 
 def python_examples() -> str:

@@ -17,7 +17,7 @@ from gradcheck.records.verdict import Verdict
 from gradcheck.witnesses.complex_step import complex_step
 from gradcheck.witnesses.difference_track import CUT_OFF, REASONS, SPENT
 from gradcheck.witnesses.finite_difference import finite_difference
-from gradcheck.witnesses.quick_look import close_look, quick_look
+from gradcheck.witnesses.quick_look import close_look, quick_look, wider_look
 from gradcheck.witnesses.steps import Room
 from gradcheck.witnesses.testimony import Testimony
 from gradcheck.wording import number
@@ -117,7 +117,11 @@ def examine(
     desk = _Desk(claim, centre, typical, rel_tol, abs_tol, unit_roundoff)
     everything = np.arange(columns.size)
     if DIFFERENCES in witnesses:
-        desk.hear((yield from quick_look(base, columns, room, centre)), everything, final=False)
+        seen = yield from quick_look(base, columns, room, centre)
+        desk.hear(seen.testimony, everything, final=False)
+        doubted = desk.open_columns()
+        if doubted.size:
+            desk.hear((yield from wider_look(base, columns, room, centre, seen, doubted)), doubted, final=False)
         if desk.confirmed.any():
             desk.doubt((yield from close_look(base, columns, room, claim, centre)))
         open_ = desk.open_columns()
@@ -305,18 +309,19 @@ class _Desk:
                 self.reason[output, columns[row]] = reason
 
     def second(self, testimony: Testimony, columns: IntArray) -> None:
-        """Keep a refutation only where the second look refutes as well."""
-        outcome = judge(
-            self.claim[:, columns],
-            testimony.value.T,
-            testimony.bound.T,
-            self.tolerance(columns),
-            left=testimony.left.T,
-            right=testimony.right.T,
-        )
+        """Keep a refutation only where the second look agrees: with the first one, and that the claim is off."""
+        claim, value, bound = self.claim[:, columns], testimony.value.T, testimony.bound.T
+        left, right = testimony.left.T, testimony.right.T
+        tolerance = self.tolerance(columns)
         part = np.ix_(np.arange(self.claim.shape[0]), columns)
-        fallen = self.refuted[part] & ~outcome.refuted
-        self.refuted[part] &= outcome.refuted
+        alone = judge(claim, value, bound, tolerance, left=left, right=right).refuted
+        with np.errstate(invalid="ignore"):
+            parted = np.abs(value - self.value[part])
+            # The first look is beyond three bounds already; a look on other nodes that sees the same value needs one.
+            joined = (parted <= bound + self.bound[part]) & (np.abs(claim - value) > tolerance.of(claim, value) + bound)
+        agrees = alone | (joined & ~np.isfinite(left) & ~np.isfinite(self.left[part]))
+        fallen = self.refuted[part] & ~agrees
+        self.refuted[part] &= agrees
         reason = self.reason[part]
         reason[fallen] = "a second look with other steps did not agree with the first"
         cut_short = np.zeros(self.claim.shape, bool)[part]
@@ -324,9 +329,9 @@ class _Desk:
             cut_short[output, row] = why == SPENT
         reason[fallen & cut_short] = SUSPECT
         self.reason[part] = reason
-        # Two looks that part show how much the first bound is worth.
-        parted = np.abs(testimony.value.T - self.value[part])
-        self.bound[part] = np.where(fallen, np.fmax(self.bound[part], parted), self.bound[part])
+        # Two looks that part show how much the first bound is worth; one that sees less shows how little is sure.
+        doubt = np.fmax(parted, np.where(np.isfinite(bound), bound, 0.0))
+        self.bound[part] = np.where(fallen & ~cut_short, np.fmax(self.bound[part], doubt), self.bound[part])
 
     def refuted_by_little(self) -> tuple[IntArray, Array]:
         """Columns with entries that are refuted although they are nearly right, and how much these are off: (m, d)."""

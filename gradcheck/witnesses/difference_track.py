@@ -18,6 +18,8 @@ ROUNDING_MARGIN = 4.0
 #: Below this many it is rounding inside the model, amplified by cancellation, if the coefficients left over do not
 #: decay.
 AMPLIFIED_MARGIN = 1e3
+#: Coefficients left over are noise if the rounding of x inside the model explains them, but for this factor.
+ARGUMENT_MARGIN = 4.0
 #: Coefficients left over are noise if they are not larger than this many times the noise that the ladder heard.
 HEARD_MARGIN = 6.0
 #: The pair close to the point is at odds with the rest if it differs by more than so many times what noise leaves over.
@@ -178,6 +180,7 @@ class Track:
             (fits.noise[i] <= ROUNDING_MARGIN * fits.floor[i])
             | (fits.flat[i] & (fits.noise[i] <= AMPLIFIED_MARGIN * fits.floor[i]))
             | (fits.flat[i] & (fits.noise[i] <= HEARD_MARGIN * self.heard))
+            | (fits.flat[i] & (fits.noise[i] <= ARGUMENT_MARGIN * fits.argument[i]))
         )
         if self.stage == "probe":
             self._after_probe(fits, i, half, at_floor)

@@ -28,6 +28,7 @@ DROPPED_SHARE = 0.4
 ROUNDING = 0.3
 #: Nodes nearer to the centre than this are no part of the net that the polynomial is fitted to.
 CLOSE = 1e-3
+_TINY = float(np.finfo(float).tiny)
 #: Coefficients that must be left over as a noise sample.
 SAMPLE_LEAST = 3
 
@@ -97,8 +98,11 @@ class Fit:
     flat : ndarray of bool
         The coefficients left over do not decay any more.
     apart : ndarray
-        The two last coefficients in units of the four before. On a stencil with a pair close to the centre they are
-        what this pair does not share with the rest: a narrow feature at the point.
+        The two last coefficients in units of the noise: the four before, or what the rounding of x leaves. On a stencil
+        with a pair close to the centre they are what this pair does not share with the rest: a narrow feature at the
+        point.
+    argument : ndarray
+        Error of one value that the rounding of x inside the model explains: slope times wobble; 0 without one.
     """
 
     value: Array
@@ -112,6 +116,7 @@ class Fit:
     resolved: BoolArray
     flat: BoolArray
     apart: Array
+    argument: Array
 
 
 def fit(
@@ -156,7 +161,7 @@ def fit(
 
 
 #: Fields of a fit that scale with the values.
-_IN_UNITS_OF_VALUES = ("value", "bound", "noise", "tail", "before", "floor", "variation")
+_IN_UNITS_OF_VALUES = ("value", "bound", "noise", "tail", "before", "floor", "variation", "argument")
 
 
 def _fitted(
@@ -176,12 +181,11 @@ def _fitted(
         slopes = np.einsum("ki,dim->dkm", stencil.node_slopes, kept)
         a = np.einsum("ki,dkm->dim", stencil.basis, differences - slips[:, :, None] * slopes)
     floor = ROUNDING * np.spacing(largest)
-    apart = np.zeros_like(largest)
+    own: Array | None = None
     if stencil.close_pair:
         # What the pair close to the centre does not share with the rest. It is no noise sample: values so close to each
         # other are rounded alike.
         own, a = np.abs(a[:, -2:]).max(axis=1), a[:, :-2]
-        apart = own / np.maximum(np.sqrt(np.mean(a[:, -4:] ** 2, axis=1)), np.maximum(floor, np.finfo(float).tiny))
     k = a.shape[1]
     size = np.abs(a)
     last = min(4, k - 2)
@@ -192,7 +196,10 @@ def _fitted(
     significant[:, 0] = True  # the constant is always fitted
     order = k - np.argmax(significant[:, ::-1], axis=1)
     fits = _concluded(stencil, half_width, a, order, floor, tail, before, derivative, wobble)
-    return replace(fits, apart=apart)
+    if own is None:
+        return fits
+    # Where x itself is rounded inside the model, the few digits of the other nodes may be spared what this pair meets.
+    return replace(fits, apart=own / np.maximum.reduce([tail, floor, fits.argument, np.full_like(tail, _TINY)]))
 
 
 def _concluded(
@@ -233,6 +240,7 @@ def _concluded(
         next_one = np.where(kept, stencil.at_centre[derivative, :k][None, :, None] * a, 0.0).sum(axis=1)
         bound = bound + wobble[:, None] * np.abs(next_one) / size / np.abs(half_width[:, None])
     variation = np.abs(a[:, 1:]).max(axis=1)
+    slope = np.where(kept, stencil.at_centre[0, :k][None, :, None] * a, 0.0).sum(axis=1) / half_width[:, None]
     return Fit(
         value=value,
         bound=bound,
@@ -244,5 +252,6 @@ def _concluded(
         variation=variation,
         resolved=(left_over >= SAMPLE_LEAST) & np.isfinite(value),
         apart=np.zeros_like(noise),
+        argument=np.zeros_like(noise) if wobble is None else np.abs(slope) * wobble[:, None],
         flat=(left_over >= SAMPLE_LEAST + 1) & (sooner <= 3 * np.maximum(later, floor)),
     )
