@@ -94,8 +94,8 @@ class Moves:
 
         Most points differ from the start point in one entry, and that is a short key; others are read whole.
         """
-        start = start.astype(self.base.dtype)
-        if self.along_axes and _same_bits(self.base, start):
+        start = start.astype(self.base.dtype, copy=False)
+        if self.along_axes and (self.base is start or self.base.tobytes() == start.tobytes()):
             return self._short_keys(start)
         most = self.most_at_once
         return [key for at in range(0, len(self), most) for key in _long_keys(self[at : at + most].points(), start)]
@@ -104,8 +104,9 @@ class Moves:
         entries, values = self.entries()
         moved = _differ(values, start[entries])
         keys: list[Hashable] = list(zip(entries.tolist(), _contents(values), strict=True))
-        for i in np.flatnonzero(~moved):
-            keys[i] = _AT_START
+        if not moved.all():
+            for i in np.flatnonzero(~moved):
+                keys[i] = _AT_START
         return keys
 
 
@@ -144,7 +145,3 @@ def _differ(left: NDArray[Any], right: NDArray[Any]) -> NDArray[np.bool_]:
     if left.dtype.kind != "c":
         return np.asarray(left.view(np.int64) != right.view(np.int64))
     return np.asarray(_differ(left.real.copy(), right.real.copy()) | _differ(left.imag.copy(), right.imag.copy()))
-
-
-def _same_bits(left: NDArray[Any], right: NDArray[Any]) -> bool:
-    return left.tobytes() == right.tobytes()

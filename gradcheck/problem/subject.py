@@ -91,10 +91,11 @@ def subjects_of_function(
     name = "model" if name == "<lambda>" else name
     target = Target(name=name, run=name, pick=output, claims=_given_claims(claims))
     subjects = []
+    signature = _signature(function)
     for point in each:
-        layout, start = layout_of(point, root=_root(function), wrt=wrt, function=function)
+        layout, start = layout_of(point, root=_root(signature), wrt=wrt, function=function)
         layout = _named(layout, names)
-        _refuse_other_arguments(function, layout, start)
+        _refuse_other_arguments(function, signature, layout, start)
         if batched:
             _refuse_no_batch(batched, layout)
         subjects.append(
@@ -126,7 +127,7 @@ def subject_of_problem(problem: Problem) -> Subject:
         runs[run] = callable_of_run
         targets[name] = _target(name, run, function)
     for each in runs.values():
-        _refuse_other_arguments(each, layout, start)
+        _refuse_other_arguments(each, _signature(each), layout, start)
     domain = domain_of(
         start,
         bounds=[(variable.lower, variable.upper) for variable in variables],
@@ -190,24 +191,27 @@ def _refuse_no_batch(batched: Any, layout: Layout) -> None:
         )
 
 
-def _root(function: Any) -> str:
-    """What to call the vector in names of entries: the model's own first parameter."""
+def _signature(function: Any) -> inspect.Signature | None:
+    """What the model takes, where Python knows."""
     try:
-        return next(iter(inspect.signature(function).parameters))
-    except (TypeError, ValueError, StopIteration):
-        return "x"
+        return inspect.signature(function)
+    except (TypeError, ValueError):
+        return None
 
 
-def _refuse_other_arguments(function: Any, layout: Layout, start: Array) -> None:
+def _root(signature: inspect.Signature | None) -> str:
+    """What to call the vector in names of entries: the model's own first parameter."""
+    return "x" if signature is None else next(iter(signature.parameters), "x")
+
+
+def _refuse_other_arguments(function: Any, signature: inspect.Signature | None, layout: Layout, start: Array) -> None:
     """A model that cannot take these arguments is told here, with its signature, instead of by a traceback."""
     if inspect.isclass(function):
         raise UsageError(
             f"the model is the class {function.__name__}; pass an instance that can be called, or one of its methods: "
             f"{function.__name__}(...).method"
         )
-    try:
-        signature = inspect.signature(function)
-    except (TypeError, ValueError):
+    if signature is None:
         return
     positional, keywords = layout.restore(start)
     try:
