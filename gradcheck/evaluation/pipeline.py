@@ -14,7 +14,7 @@ from gradcheck.evaluation.cache import cached
 from gradcheck.evaluation.calls import Call, Engine, Outcome
 from gradcheck.evaluation.evaluator import Evaluator
 from gradcheck.evaluation.ledger import Ledger
-from gradcheck.evaluation.moves import Moves
+from gradcheck.evaluation.moves import BATCH_BYTES, Moves
 from gradcheck.evaluation.protocol import Gate, Reply, Request, Status
 from gradcheck.problem.subject import Subject
 from gradcheck.records.arrays import Array
@@ -112,18 +112,27 @@ def open_session(subject: Subject, *, budget: int | None = None, time_limit: flo
 def gate_over(engine: Engine, subject: Subject, evaluator: Evaluator) -> Gate:
     """The gate: requests in, calls of many points each (of one per sweep for AD), replies out."""
 
+    def width(request: Request) -> int:
+        return math.prod(evaluator.shapes.get(request.function, (1,)))
+
     def gate(requests: Sequence[Request]) -> list[Reply]:
-        calls = ((place, call) for place, request in enumerate(requests) for call in _calls_of(request, subject))
-        outcomes: list[list[Outcome]] = [[] for _ in requests]
+        calls = (
+            (place, call)
+            for place, request in enumerate(requests)
+            for call in _calls_of(request, subject, most=_most_points(width(request)))
+        )
+        outcomes: list[list[tuple[int, Outcome]]] = [[] for _ in requests]
         for batch in _batches(calls):
-            for (place, _), outcome in zip(batch, engine([call for _, call in batch]), strict=True):
-                outcomes[place].append(outcome)
-        return [
-            _reply(request, own, math.prod(evaluator.shapes.get(request.function, (1,))), subject)
-            for request, own in zip(requests, outcomes, strict=True)
-        ]
+            for (place, call), outcome in zip(batch, engine([call for _, call in batch]), strict=True):
+                outcomes[place].append((len(call), outcome))
+        return [_reply(request, own, width(request), subject) for request, own in zip(requests, outcomes, strict=True)]
 
     return gate
+
+
+def _most_points(width: int) -> int:
+    """Points of one call: few where each gives many numbers."""
+    return max(1, min(POINTS_AT_ONCE, BATCH_BYTES // (8 * width)))
 
 
 def _batches(calls: Iterator[tuple[int, Call]]) -> Iterator[list[tuple[int, Call]]]:
@@ -140,12 +149,12 @@ def _batches(calls: Iterator[tuple[int, Call]]) -> Iterator[list[tuple[int, Call
         yield batch
 
 
-def _calls_of(request: Request, subject: Subject) -> Iterator[Call]:
+def _calls_of(request: Request, subject: Subject, most: int) -> Iterator[Call]:
     run = subject.targets[request.function].run
     moves = Moves.of(request)
     if request.source == "model":
-        for first in range(0, len(moves), POINTS_AT_ONCE):
-            part = moves[first : first + POINTS_AT_ONCE]
+        for first in range(0, len(moves), most):
+            part = moves[first : first + most]
             yield Call(run=run, moves=part, arithmetic=request.arithmetic, level=request.level, fresh=request.fresh)
         return
     claim = request.source.startswith("claim:")
@@ -168,22 +177,22 @@ def _rows_of(request: Request, size: int) -> NDArray[Any]:
     return rows
 
 
-def _reply(request: Request, outcomes: Sequence[Outcome], width: int, subject: Subject) -> Reply:
+def _reply(request: Request, outcomes: Sequence[tuple[int, Outcome]], width: int, subject: Subject) -> Reply:
     name = request.function
-    spent = sum(outcome.spent for outcome in outcomes)
     if request.source != "model":
-        return _derivative_reply(request, outcomes[0], width, subject.layout.size)
+        return _derivative_reply(request, outcomes[0][1], width, subject.layout.size)
     d, k = request.offsets.shape
     values = np.full((d * k, width), np.nan, dtype=complex if request.arithmetic == "complex" else float)
     status = np.full(d * k, Status.REFUSED, dtype=np.int8)
     first = 0
-    for outcome in outcomes:
-        part = slice(first, first + POINTS_AT_ONCE)
+    for size, outcome in outcomes:
+        part = slice(first, first + size)
         if name in outcome.status:
             status[part] = outcome.status[name]
         if name in outcome.values:
             values[part] = outcome.values[name]
-        first += POINTS_AT_ONCE
+        first += size
+    spent = sum(outcome.spent for _, outcome in outcomes)
     return Reply(values=values.reshape(d, k, width), status=status.reshape(d, k), spent=spent)
 
 
