@@ -83,6 +83,9 @@ class Evaluator:
             tally.begun = i + 1
             try:
                 result = send(i)
+                if type(result) not in NUMBERS and self._too_short(call, result):
+                    send = self._sender(call)
+                    result = send(i)
             except UsageError:
                 raise  # the caller's mistake: told, not recorded
             except (Exception, SystemExit) as error:
@@ -126,6 +129,8 @@ class Evaluator:
         given = (len(some),) if single is not None and single.scalar else (len(some), some.moves.base.size)
         try:
             result = self._sender(some)(slice(None))
+            if self._too_short(call, result):
+                result = self._sender(some)(slice(None))
             for output in outputs:
                 output.take_batch(part.start, given, result)
         except UsageError:
@@ -146,24 +151,28 @@ class Evaluator:
             self.ledger.mutated.add(call.run)
 
         send = real.sender(function, layout, moves, mutated, batched=self.subject.batched)
+        if call.run not in self.double:
+            return send
 
-        def watched(i: Any) -> Any:
-            if call.run in self.double:
-                with self._scope(call.run):
-                    return send(i)
-            result = send(i)
-            if type(result) in NUMBERS or not real.is_single_precision_jax(result):
-                return result
-            # Seven digits show little of a derivative; jax models are called in double precision, in a scope of their
-            # own.
-            self.double.add(call.run)
-            self.ledger.notices.append(
-                f"{call.run} is a jax model in single precision; it was evaluated in double precision"
-            )
-            self.ledger.calls["model"] += 1
-            return watched(i)
+        def in_double_precision(i: Any) -> Any:
+            with self._scope(call.run):
+                return send(i)
 
-        return watched
+        return in_double_precision
+
+    def _too_short(self, call: Call, result: Any) -> bool:
+        """Whether this is jax in single precision, to be called in double precision from now on.
+
+        Seven digits show little of a derivative; there is a scope for that, and no setting of the user's changes.
+        """
+        if call.arithmetic != "real" or call.run in self.double or not real.is_single_precision_jax(result):
+            return False
+        self.double.add(call.run)
+        self.ledger.notices.append(
+            f"{call.run} is a jax model in single precision; it was evaluated in double precision"
+        )
+        self.ledger.calls["model"] += 1
+        return True
 
     def _scope(self, run: str) -> AbstractContextManager[Any]:
         if run not in self.double:

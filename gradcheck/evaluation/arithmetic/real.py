@@ -66,11 +66,11 @@ def _with_one_entry_moved(
     picture = np.frombuffer(content).reshape(leaf.shape)
 
     def send(i: int) -> Any:
-        place = places[i]
+        place, number = places[i], numbers[i]
         x = base.copy()
-        x[place] = numbers[i]
+        x[place] = number
         result = function(x)
-        picture[place] = numbers[i]
+        picture[place] = number
         if not same_content(content, x):
             mutated()
         picture[place] = base[place]
