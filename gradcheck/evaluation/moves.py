@@ -1,7 +1,6 @@
 """The points of a request, made one at a time or a batch at a time: never all of them."""
 
 import hashlib
-from collections.abc import Hashable
 from dataclasses import dataclass
 from typing import Any
 
@@ -9,15 +8,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gradcheck.evaluation.protocol import Directions, Request
-from gradcheck.records.arrays import Array, IntArray
+from gradcheck.records.arrays import Array, BoolArray, IntArray
 
 #: Points longer than this many bytes are known by their digest only.
 _LONG = 256
 #: Points of a batch take about so much memory.
 BATCH_BYTES = 32_000_000
-#: The key of the start point itself; the key of a point that differs from it in one entry is that entry and its bytes.
-_AT_START: tuple[int, bytes] = (-1, b"")
-_ELSEWHERE = -2
+#: The key of the start point itself; the key of a point that differs from it in one entry is that entry and its bytes,
+#: which together are never as long as this mark and all bytes, or their digest, for a point that differs in more.
+_AT_START = b""
+_ELSEWHERE = b"all"
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -89,25 +89,17 @@ class Moves:
         """How many points fit into the memory of a batch."""
         return int(max(1, BATCH_BYTES // max(self.base.nbytes, 1)))
 
-    def keys(self, start: Array) -> list[Hashable]:
+    def keys(self, start: Array) -> list[bytes]:
         """What tells each point from every other, bit by bit; equal for equal points, however they were reached.
 
         Most points differ from the start point in one entry, and that is a short key; others are read whole.
         """
         start = start.astype(self.base.dtype, copy=False)
         if self.along_axes and (self.base is start or self.base.tobytes() == start.tobytes()):
-            return self._short_keys(start)
+            entries, values = self.entries()
+            return _short_keys(entries, values, _differ(values, start[entries]))
         most = self.most_at_once
         return [key for at in range(0, len(self), most) for key in _long_keys(self[at : at + most].points(), start)]
-
-    def _short_keys(self, start: NDArray[Any]) -> list[Hashable]:
-        entries, values = self.entries()
-        moved = _differ(values, start[entries])
-        keys: list[Hashable] = list(zip(entries.tolist(), _contents(values), strict=True))
-        if not moved.all():
-            for i in np.flatnonzero(~moved):
-                keys[i] = _AT_START
-        return keys
 
 
 def same_content(content: bytearray, array: NDArray[Any]) -> bool:
@@ -118,15 +110,23 @@ def same_content(content: bytearray, array: NDArray[Any]) -> bool:
         return False
 
 
-def _long_keys(points: NDArray[Any], start: NDArray[Any]) -> list[Hashable]:
+def _short_keys(entries: IntArray, values: NDArray[Any], moved: BoolArray) -> list[bytes]:
+    """Entry and value; the empty key where nothing has moved."""
+    pairs = np.empty(entries.size, dtype=[("entry", np.intp), ("value", values.dtype)])
+    pairs["entry"], pairs["value"] = entries, values
+    keys: list[bytes] = pairs.view(f"V{pairs.itemsize}").tolist()
+    if not moved.all():
+        for i in np.flatnonzero(~moved):
+            keys[i] = _AT_START
+    return keys
+
+
+def _long_keys(points: NDArray[Any], start: NDArray[Any]) -> list[bytes]:
     changed = _differ(points, start)
-    count, first = changed.sum(axis=1), changed.argmax(axis=1)
-    keys: list[Hashable] = []
-    for point, many, entry in zip(points, count.tolist(), first.tolist(), strict=True):
-        if many > 1:
-            keys.append((_ELSEWHERE, fingerprint(point.tobytes())))
-        else:
-            keys.append((entry, point[entry].tobytes()) if many else _AT_START)
+    first = changed.argmax(axis=1)
+    keys = _short_keys(first, points[np.arange(len(points)), first], np.asarray(changed.any(axis=1)))
+    for i in np.flatnonzero(changed.sum(axis=1) > 1):
+        keys[i] = _ELSEWHERE + fingerprint(points[i].tobytes())
     return keys
 
 
@@ -135,12 +135,7 @@ def fingerprint(content: bytes) -> bytes:
     return content if len(content) <= _LONG else hashlib.blake2b(content, digest_size=20).digest()
 
 
-def _contents(values: NDArray[Any]) -> list[bytes]:
-    contents: list[bytes] = values.view(f"V{values.itemsize}").tolist()
-    return contents
-
-
-def _differ(left: NDArray[Any], right: NDArray[Any]) -> NDArray[np.bool_]:
+def _differ(left: NDArray[Any], right: NDArray[Any]) -> BoolArray:
     """Entries that differ in any bit: a zero has two signs, and a model may see which."""
     if left.dtype.kind != "c":
         return np.asarray(left.view(np.int64) != right.view(np.int64))
