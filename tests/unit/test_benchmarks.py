@@ -6,11 +6,12 @@ from types import SimpleNamespace
 from typing import Any
 
 import mpmath
+import numpy as np
 import pytest
 from click.testing import CliRunner
 
 import gradcheck
-from benchmarks import estimator
+from benchmarks import cost, estimator
 from benchmarks.__main__ import BENCHMARKS, main
 from benchmarks.corpus import CASES, Case, exactly
 from benchmarks.figures import Figure, side_by_side
@@ -175,3 +176,31 @@ def test_the_command_prints_the_figures_beside_their_goals(monkeypatch: pytest.M
     assert result.exit_code == 0
     assert "median relative error" in result.output
     assert "≥ 99.80" in result.output
+
+
+def test_the_cost_of_our_own_stands_beside_that_of_ten_lines(monkeypatch: pytest.MonkeyPatch) -> None:
+    scenes = (cost.Scene(model="1 µs", n=3, verb="check"), cost.Scene(model="vectorised", n=3, verb="estimate"))
+    monkeypatch.setattr(cost, "SCENES", scenes)
+
+    table = cost.run(1, 0)
+
+    assert [line.split("  ")[0] for line in table.splitlines()[2:]] == [
+        "check, n = 3, 1 µs",
+        "estimate, n = 3, vectorised",
+    ]
+
+
+def test_a_watched_model_counts_points_and_not_calls() -> None:
+    model = cost.Watched(cost.chain)
+    model(np.ones((5, 3)))
+    model(np.ones(3))
+
+    assert model.evaluations == 6
+
+
+@pytest.mark.parametrize("lines", [cost.by_hand, cost.by_hand_at_once])
+def test_the_ten_lines_tell_right_from_wrong(lines: Any) -> None:
+    x = np.array([0.3, 1.2, 0.7])
+
+    assert lines(cost.Watched(cost.chain), x, cost.chain_gradient)
+    assert not lines(cost.Watched(cost.chain), x, cost.double)
