@@ -13,7 +13,7 @@ from gradcheck.records.arrays import Array, BoolArray, IntArray
 #: Points longer than this many bytes are known by their digest only.
 _LONG = 256
 #: Points of a batch take about so much memory.
-BATCH_BYTES = 32_000_000
+BATCH_BYTES = 8_000_000
 #: The key of the start point itself; the key of a point that differs from it in one entry is that entry and its bytes,
 #: which together are never as long as this mark and all bytes, or their digest, for a point that differs in more.
 _AT_START = b""
