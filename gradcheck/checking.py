@@ -10,7 +10,7 @@ import numpy as np
 from gradcheck.claims.entries import diagnoses_of, entries_of, merged
 from gradcheck.claims.examination import examine
 from gradcheck.claims.policy import DEFAULT_REL_TOL, REL_TOL, Policy, Rules
-from gradcheck.counsel.claim_findings import failing_claim, kinks_at_point, mutation
+from gradcheck.counsel.claim_findings import failing_claim, kinks_at_point, levels_at_point, mutation
 from gradcheck.errors import UsageError
 from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import Session, open_session
@@ -257,6 +257,7 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
     examined = conduct_one(addressed(inquiry, function=function), session.gate)
     findings: list[Finding] = [failure] if failure else []
     findings += kinks_at_point(subject, function, examined.left, examined.right, columns)
+    findings += levels_at_point(subject, function, examined.jumps, examined.stairs, columns)
     findings += mutation(subject, session.ledger)
     entries = entries_of(subject, function, kind, examined, columns)
     report = CheckReport(

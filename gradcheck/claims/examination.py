@@ -10,13 +10,15 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from gradcheck.claims.inner_jumps import explained_by_jumps
-from gradcheck.claims.rule import Tolerance, digits_agreed, judge
+from gradcheck.claims.rule import REFUTING_BOUNDS, Tolerance, digits_agreed, judge
+from gradcheck.claims.wide_plateaus import staircases
 from gradcheck.evaluation.protocol import Inquiry
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.records.verdict import Verdict
 from gradcheck.witnesses.complex_step import complex_step
 from gradcheck.witnesses.difference_track import CUT_OFF, REASONS, SPENT
 from gradcheck.witnesses.finite_difference import finite_difference
+from gradcheck.witnesses.ladder import Nature
 from gradcheck.witnesses.quick_look import close_look, quick_look, wider_look
 from gradcheck.witnesses.steps import Room
 from gradcheck.witnesses.testimony import Testimony
@@ -39,6 +41,14 @@ INNER_JUMPS = (
 LITTLE = 1e-2
 #: Half-length of the lines that are then looked at, in units of the variable's size, and how many of them.
 WIDE, WIDE_LOOKS_MOST = 0.5, 10
+#: What is said of an entry that is seen to be off, but by no more than rounding may do to honest code.
+ROUNDS_ALIKE = (
+    "claim and derivative differ, but by no more than the rounding of a value of this size may leave in honest code; "
+    "values or a claim with more digits decide"
+)
+#: What is said of a zero that is the flat of a staircase, and how many variables without influence are looked at.
+STAIRCASE = "flat at the point, but on other levels farther away: a staircase, whose derivative of zero means nothing"
+STAIRCASES_MOST = 10
 #: What is said of an entry that would be refuted if there had been evaluations left for the second look.
 SUSPECT = "suspect: the first look refutes it, but the budget or the time ended before a second look could agree"
 
@@ -69,6 +79,16 @@ class Examined:
     source: np.ndarray[tuple[int, ...], np.dtype[np.object_]]
     reason: np.ndarray[tuple[int, ...], np.dtype[np.object_]]
     noise: Array
+
+    @property
+    def jumps(self) -> BoolArray:
+        """Entries whose values jump at the point."""
+        return np.asarray(self.reason == REASONS[Nature.JUMP])
+
+    @property
+    def stairs(self) -> BoolArray:
+        """Entries that are flat at the point and on other levels farther away."""
+        return np.asarray(self.reason == STAIRCASE)
 
     @property
     def digits(self) -> Array:
@@ -124,6 +144,7 @@ def examine(
             desk.hear((yield from wider_look(base, columns, room, centre, seen, doubted)), doubted, final=False)
         if desk.confirmed.any():
             desk.doubt((yield from close_look(base, columns, room, claim, centre)))
+        yield from _plateau_look(desk, base, columns, room, centre)
         open_ = desk.open_columns()
         if open_.size:
             whole = yield from finite_difference(base, columns[open_], _along(room, open_), centre)
@@ -135,6 +156,13 @@ def examine(
         if open_.size:
             desk.hear((yield from _complex(base, columns, open_, room, centre)), open_, contested=True)
     return desk.result()
+
+
+def _plateau_look(desk: "_Desk", base: Array, columns: IntArray, room: Room, centre: Array) -> Inquiry[None]:
+    """Variables along which nothing changes, as claimed: without influence, or on the flat of a staircase?"""
+    flat = desk.flat_columns()[:STAIRCASES_MOST]
+    if flat.size:
+        desk.leave_open(flat, (yield from staircases(base, columns[flat], _along(room, flat), centre)), STAIRCASE)
 
 
 def _second_look(desk: "_Desk", base: Array, columns: IntArray, room: Room, centre: Array) -> Inquiry[None]:
@@ -188,6 +216,7 @@ class _Desk:
         largest = np.where(largest > 0, largest, largest.max() if largest.max() > 0 else 1.0)
         self.floor = unit_roundoff * largest
         self.noise = np.full(centre.size, np.nan)
+        self.noise_along = np.full(claim.shape, np.nan)
         self.value = np.full(claim.shape, np.nan)
         self.bound = np.full(claim.shape, np.inf)
         self.left = np.full(claim.shape, np.nan)
@@ -201,11 +230,11 @@ class _Desk:
 
     def tolerance(self, columns: IntArray) -> Tolerance:
         # The measured noise of an output, but never more than rounding can be: algorithmic noise buys no confirmation.
-        heard = np.where(np.isfinite(self.noise), self.noise, self.floor)
-        rounding = np.minimum(np.maximum(heard, self.floor), 1e3 * self.floor)
-        return Tolerance(
-            rel_tol=self.rel_tol, abs_tol=self.abs_tol, rounding=rounding[:, None] / self.typical[None, columns]
-        )
+        # Along some variables the values may be rounded more coarsely than along others.
+        floor = self.floor[:, None]
+        heard = np.fmax(self.noise[:, None], self.noise_along[:, columns])
+        rounding = np.minimum(np.fmax(heard, floor), 1e3 * floor)
+        return Tolerance(rel_tol=self.rel_tol, abs_tol=self.abs_tol, rounding=rounding / self.typical[None, columns])
 
     def hear(
         self,
@@ -218,16 +247,20 @@ class _Desk:
     ) -> None:
         """Apply the rule to the entries still open.
 
-        A quick look (not final) may confirm, by the tolerance that the caller asked for and no share of rounding, but
-        not refute; what replaces it is believed even where its bound is wider. What is contested cannot decide against
-        the witness heard before it: where the two part beyond their bounds, the entry stays open.
+        A quick look (not final) may confirm, by the tolerance that the caller asked for and no share of rounding unless
+        both are exactly zero, but not refute; what replaces it is believed even where its bound is wider. What is
+        contested cannot decide against the witness heard before it: where the two part beyond their bounds, the entry
+        stays open.
         """
         if final:
             self.noise = np.fmax(self.noise, testimony.noise)
+            heard = self.noise_along[:, columns]
+            self.noise_along[:, columns] = np.fmax(heard, testimony.noise_along.T)
         tolerance = self.tolerance(columns)
-        if not final:
-            tolerance = replace(tolerance, rounding=np.zeros_like(tolerance.rounding))
         value, bound = testimony.value.T, testimony.bound.T
+        if not final:
+            zero = (self.claim[:, columns] == 0) & (value == 0)
+            tolerance = replace(tolerance, rounding=np.where(zero, tolerance.rounding, 0.0))
         left, right = testimony.left.T, testimony.right.T
         # At a kink the bound covers half the gap between the slopes; the rest is what the slopes may be off.
         slope_error = np.nan_to_num(bound - np.abs(right - left) / 2)
@@ -350,6 +383,18 @@ class _Desk:
         reason[explained] = INNER_JUMPS
         self.reason[part] = reason
 
+    def flat_columns(self) -> IntArray:
+        """Columns in which every witness value and every claim is exactly zero."""
+        return np.flatnonzero(((self.value == 0) & (self.claim == 0)).all(axis=0))
+
+    def leave_open(self, columns: IntArray, entries: BoolArray, why: str) -> None:
+        """Entries (m, d) of some columns that nobody can decide."""
+        part = np.ix_(np.arange(self.claim.shape[0]), columns)
+        for mine, mark in ((self.confirmed, False), (self.provisional, False), (self.closed, True)):
+            mine[part] = np.where(entries, mark, mine[part])
+        self.reason[part] = np.where(entries, why, self.reason[part])
+        self.bound[part] = np.where(entries, np.inf, self.bound[part])
+
     def doubt(self, outputs: BoolArray) -> None:
         """Take back what a quick look confirmed of these outputs: the whole witness has to look."""
         self.confirmed[outputs] = False
@@ -385,13 +430,19 @@ class _Desk:
         )
 
     def _explain_doubt(self, undecided: BoolArray) -> None:
-        for output in np.flatnonzero(undecided.any(axis=1)):
-            row = undecided[output]
+        """Give every undecided entry without a reason its reason."""
+        columns = np.arange(self.claim.shape[1])
+        tolerance = self.tolerance(columns)
+        with np.errstate(invalid="ignore"):
+            gap = np.abs(self.claim - self.value)
+            seen = gap > tolerance.plain(self.claim, self.value) + REFUTING_BOUNDS * self.bound
+        known = np.isfinite(self.bound)
+        self.reason[undecided & ~known] = "no witness could give a finite bound"
+        self.reason[undecided & known & seen] = ROUNDS_ALIKE
+        rest = undecided & known & ~seen
+        for output in np.flatnonzero(rest.any(axis=1)):
             noise = self.noise[output]
             noisy = np.isfinite(noise) and noise > 100 * self.floor[output]
             doubt = f"noise of {number(noise, digits=2)} in the values" if noisy else "rounding and truncation"
             leaves = "makes the bound wider than the tolerance" if noisy else "leave a bound wider than the tolerance"
-            self.reason[output, row & np.isfinite(self.bound[output])] = (
-                f"{doubt} {leaves}; values with more digits decide"
-            )
-            self.reason[output, row & ~np.isfinite(self.bound[output])] = "no witness could give a finite bound"
+            self.reason[output, rest[output]] = f"{doubt} {leaves}; values with more digits decide"

@@ -4,7 +4,7 @@ import numpy as np
 
 from gradcheck.evaluation.ledger import Ledger
 from gradcheck.problem.subject import Subject
-from gradcheck.records.arrays import Array, IntArray
+from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.records.finding import Finding, FindingCode, Location, Severity
 from gradcheck.wording import number
 
@@ -36,6 +36,39 @@ def kinks_at_point(subject: Subject, function: str, left: Array, right: Array, c
                     f"{number(above)} above."
                 ),
                 remedy="Move the point off the kink, or smooth the model there; no derivative exists at a kink.",
+            )
+        )
+    return findings
+
+
+def levels_at_point(
+    subject: Subject, function: str, jumps: BoolArray, stairs: BoolArray, columns: IntArray
+) -> list[Finding]:
+    """Entries, each mask (m, d) for d columns, whose values jump at the point itself, or are flat on one of several
+    levels.
+    """
+    several = jumps.shape[0] > 1
+    findings = []
+    for output, place in np.argwhere(jumps | stairs)[:KINKS_SHOWN]:
+        variable = subject.layout.name(int(columns[place]))
+        part = f"output {output} of {function}" if several else function
+        jump = bool(jumps[output, place])
+        what = "jumps at the point itself" if jump else "is flat at the point and on other levels farther away"
+        findings.append(
+            Finding(
+                code=FindingCode.JUMP if jump else FindingCode.STAIRCASE,
+                severity=Severity.HAZARD,
+                function=function,
+                variable=variable,
+                where=Location(point=subject.start),
+                evidence={"output": int(output)} if several else {},
+                text=f"{part} {what} along {variable}.",
+                remedy=(
+                    "Move the point off the jump, or join the values there; no derivative exists at a jump."
+                    if jump
+                    else "Look for rounding, counts or integer casts inside the model; its derivative of zero leads "
+                    "an optimizer nowhere."
+                ),
             )
         )
     return findings

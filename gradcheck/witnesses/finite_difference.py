@@ -194,6 +194,7 @@ class _Rounds:
             left=left,
             right=right,
             noise=quietest,
+            noise_along=noise,
             spent=self.spent,
             works=bool(np.isfinite(bound).any()),
             reasons={

@@ -64,7 +64,9 @@ class Pairs:
 
     @staticmethod
     def of(steps: Array, reply: Reply, centre: Array) -> "Pairs":
-        """From values at (+step, −step) of each pair in turn."""
+        """From values at (+step, −step) of each pair in turn; steps that rounding made equal show nothing."""
+        apart = (steps[:, -1] > 0) & (steps[:, :-1] >= LEAST_WIDENING * steps[:, 1:]).all(axis=1)
+        steps = np.where(apart[:, None], steps, RATIO ** -np.arange(steps.shape[1]))
         up, down = reply.values[:, 0::2], reply.values[:, 1::2]
         width = 2 * steps[:, :, None]
         with np.errstate(invalid="ignore", over="ignore"):
@@ -73,7 +75,7 @@ class Pairs:
                 odd=(up - down) / width,
                 even=(up + down - 2 * centre) / width,
                 largest=np.maximum(np.abs(reply.values).max(axis=1), np.abs(centre)),
-                fine=np.asarray(reply.finite.all(axis=1)),
+                fine=np.asarray(reply.finite.all(axis=1)) & apart,
                 refused=np.asarray((reply.status == Status.REFUSED).any(axis=1)),
                 spent=reply.spent,
             )
@@ -99,17 +101,18 @@ class Pairs:
 
         As many as there are pairs; of the last ones only the size is meant.
         """
-        h = self.steps[:, :1]
-        ratio = self.steps / h
-        powers = ratio[:, :, None] ** (2 * np.arange(self.steps.shape[1]))
-        odd = np.linalg.solve(powers, self.odd * h[:, :, None])
-        even = np.linalg.solve(powers * ratio[:, :, None], self.even * h[:, :, None])
-        return odd, even
+        ratio = self._ratios
+        powers = ratio[:, :, None] ** (2 * np.arange(ratio.shape[1]))
+        widest = self.steps[:, :1, None]
+        odd, even = np.linalg.solve(powers, self.odd), np.linalg.solve(powers * ratio[:, :, None], self.even)
+        return np.asarray(odd * widest), np.asarray(even * widest)
 
     def extrapolated(self) -> tuple[Array, Array]:
         """The quotients at step 0, (d, m), and the standard deviation of one for values of error 1, (d,)."""
-        weights = _weights_at_zero(self.steps**2, np.zeros(self.steps.shape[1]))
-        return np.einsum("dk,dkm->dm", weights, self.odd), np.sqrt(np.sum((weights / self.steps) ** 2, axis=1) / 2)
+        ratio = self._ratios
+        weights = _weights_at_zero(ratio**2, np.arange(ratio.shape[1]))
+        spread = np.sqrt(np.sum((weights / ratio) ** 2, axis=1) / 2)
+        return np.einsum("dk,dkm->dm", weights, self.odd), spread / self.steps[:, 0]
 
     def bend(self) -> tuple[Array, Array]:
         """The gap between the slopes on both sides, (d, m), and its standard deviation for values of error 1, (d,).
@@ -117,24 +120,24 @@ class Pairs:
         Of a smooth function the even parts over the step vanish with the step; what is left at step 0 is a kink, or
         noise. Central differences give the mean slope at a kink for every step, so this must be asked for.
         """
-        powers = np.array([0, *(2 * np.arange(self.steps.shape[1] - 1) + 1)])
-        weights = _weights_at_zero(self.steps, powers)
-        spread = np.sqrt(np.sum((weights / self.steps) ** 2, axis=1) / 2 + np.sum(weights / self.steps, axis=1) ** 2)
-        return 2 * np.abs(np.einsum("dk,dkm->dm", weights, self.even)), 2 * spread
+        ratio = self._ratios
+        weights = _weights_at_zero(ratio, np.array([0, *(2 * np.arange(ratio.shape[1] - 1) + 1)]))
+        shares = weights / ratio
+        spread = np.sqrt(np.sum(shares**2, axis=1) / 2 + np.sum(shares, axis=1) ** 2)
+        return 2 * np.abs(np.einsum("dk,dkm->dm", weights, self.even)), 2 * spread / self.steps[:, 0]
+
+    @property
+    def _ratios(self) -> Array:
+        """(d, k): the steps beside the widest one."""
+        return self.steps / self.steps[:, :1]
 
 
-def _weights_at_zero(at: Array, powers: Array) -> Array:
-    """(d, k): weights of values at the abscissae `at` (d, k) that give the constant of a sum of these powers.
-
-    Without powers (all zero) a polynomial of degree k − 1 is meant.
-    """
-    k = at.shape[1]
-    powers = powers if powers.any() else np.arange(k)
-    largest = at.max(axis=1, keepdims=True)
-    basis = (at / largest)[:, :, None] ** powers
-    unit = np.zeros((at.shape[0], k, 1))
+def _weights_at_zero(at: Array, powers: IntArray) -> Array:
+    """(d, k): weights of values at the abscissae `at` (d, k) that give the constant of a sum of k powers."""
+    basis = np.swapaxes(at[:, :, None] ** powers, 1, 2)
+    unit = np.zeros((*at.shape, 1))
     unit[:, 0] = 1.0
-    return np.asarray(np.linalg.solve(np.swapaxes(basis, 1, 2), unit)[:, :, 0])
+    return np.asarray(np.linalg.solve(basis, unit)[:, :, 0])
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -242,7 +245,7 @@ def _foretold(odd: Array, even: Array) -> Array:
         decay = np.fmax(np.fmax(a2 / a1, np.sqrt(a3 / a1)), np.cbrt(a4 / a1))
         # Near a critical point the first term is no measure: odd terms decay like odd ones, even ones like even ones.
         apart = np.fmax(np.where(a3 > 0, a3 * np.fmin(a3 / a1, 1.0), 0.0), a4 * np.fmin(np.sqrt(a4 / a2), 1.0))
-        return np.where(a2 <= a1, a1 * np.nan_to_num(decay) ** 4, np.nan_to_num(apart))
+        return np.asarray(np.where(a2 <= a1, a1 * np.nan_to_num(decay) ** 4, np.nan_to_num(apart)))
 
 
 def _testimony(
@@ -269,6 +272,10 @@ def _testimony(
         heard = _median(bend / spread[:, None]) / 0.67
         sigma = np.fmax(ROUNDING * np.spacing(largest), heard)
         whole = truncation + bend / 2 + DEVIATIONS * amplification[:, None] * sigma
+        # Values that are all the same leave no more slope than one unit in the last place across the widest pair, and
+        # another for rounding inside the model.
+        flat = (pairs.odd == 0).all(axis=1) & (pairs.even == 0).all(axis=1)
+        whole = np.where(flat, np.fmin(whole, np.spacing(largest) / pairs.steps[:, :1]), whole)
     good = pairs.fine[:, None] & np.isfinite(value[rows])
     bound[rows] = np.where(good, whole, np.inf)
     step[rows] = pairs.steps[:, :1]

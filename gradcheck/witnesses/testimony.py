@@ -23,6 +23,8 @@ class Testimony:
         One-sided slopes where they part beyond noise (a kink at the point); NaN elsewhere.
     noise : ndarray, shape (m,)
         Noise level of each output that the bounds rest on; NaN where the witness needs none.
+    noise_along : ndarray, shape (d, m)
+        The same for each direction on its own, where it was measured; NaN elsewhere.
     spent : int
         Evaluations (or AD passes).
     source : str
@@ -44,6 +46,7 @@ class Testimony:
     left: Array = field(default_factory=lambda: np.empty(0))
     right: Array = field(default_factory=lambda: np.empty(0))
     noise: Array = field(default_factory=lambda: np.empty(0))
+    noise_along: Array = field(default_factory=lambda: np.empty(0))
     spent: int = 0
     works: bool = True
     reason: str = ""
@@ -51,9 +54,9 @@ class Testimony:
 
     def __post_init__(self) -> None:
         shape = np.shape(self.value)
-        for name in ("value", "bound", "step", "left", "right"):
+        for name in ("value", "bound", "step", "left", "right", "noise_along"):
             given = np.asarray(getattr(self, name), dtype=float)
-            if name in ("step", "left", "right") and given.size == 0:
+            if name not in ("value", "bound") and given.size == 0:
                 given = np.full(shape, np.nan)
             object.__setattr__(self, name, frozen(given))
         noise = np.asarray(self.noise, dtype=float)

@@ -194,6 +194,32 @@ def test_gamma_is_estimated_within_its_bound():
     assert abs(answer.value - 0.0655453772524787) <= answer.bound <= 1e-9
 
 
+def test_greeks_of_the_same_option_with_twenty_weeks_left_are_confirmed():
+    """T = 20/52, of which 0.3846 is the rounded value; 40 digits."""
+    point = np.array([49.0, 0.05, 0.2, 20 / 52])
+    greeks = np.array([0.521604661066396, 8.90696194960835, 12.1054798826288])
+
+    report = report_on(lambda x: call_price(np.append(x, 20 / 52)), point[:3], gradient=greeks)
+
+    assert report.verdict == CONFIRMED
+
+
+def test_call_and_put_of_the_textbook_obey_their_parity_and_so_do_their_slopes():
+    """S = 42, K = 40, r = 10 %, sigma = 20 %, T = 0.5: printed 4.76 and 0.81; the put is C - S + K·e^(-rT)."""
+    point = np.array([42.0, 0.1, 0.2, 0.5])
+
+    def put_price(x):
+        return call_price(x, 40.0) - x[0] + 40.0 * np.exp(-x[1] * x[3])
+
+    call, put = (gradcheck.estimate(price, at=point) for price in (lambda x: call_price(x, 40.0), put_price))
+
+    assert call_price(point, 40.0) == pytest.approx(4.75942239287, rel=1e-12)
+    assert put_price(point) == pytest.approx(0.8085993729, rel=1e-10)
+    discounted = 40.0 * np.exp(-0.05)
+    parity = np.array([1.0, 0.5 * discounted, 0.0, 0.1 * discounted])
+    assert np.all(np.abs(call.value - put.value - parity) <= call.bound + put.bound)
+
+
 def test_theta_with_the_sign_of_the_trade_is_diagnosed_as_a_flipped_sign():
     """Traders quote the change as time passes, which is minus the derivative by the time left."""
     report = report_on(call_price, OPTION, gradient=GREEKS * [1, 1, 1, -1])
@@ -202,8 +228,11 @@ def test_theta_with_the_sign_of_the_trade_is_diagnosed_as_a_flipped_sign():
     assert [diagnosis.code for diagnosis in report.diagnoses] == ["sign-flipped"]
 
 
-def test_vega_per_percent_is_refuted():
-    assert report_on(call_price, OPTION, gradient=GREEKS * [1, 1, 0.01, 1]).verdict == REFUTED
+def test_vega_per_percent_is_diagnosed_as_a_matter_of_units():
+    report = report_on(call_price, OPTION, gradient=GREEKS * [1, 1, 0.01, 1])
+
+    assert [str(verdict) for verdict in report.entries.verdict] == ["confirmed"] * 2 + ["refuted", "confirmed"]
+    assert [diagnosis.code for diagnosis in report.diagnoses] == ["unit-factor"]
 
 
 # --- rate laws and vapour pressure ---
@@ -219,6 +248,7 @@ def hill(p):
 def test_all_derivatives_of_the_hill_equation_are_confirmed():
     slopes = [0.11473087818696884, -1.6250832604386521, -0.10376677127315554, 2.7084721007310868]
 
+    assert hill([2.0, 0.5, 4.0, 0.3]) == pytest.approx(0.22946175637393768, rel=1e-15)
     assert report_on(hill, [2.0, 0.5, 4.0, 0.3], gradient=np.array(slopes)).verdict == CONFIRMED
 
 
@@ -254,6 +284,22 @@ def test_the_slope_at_the_bottom_of_the_well_is_zero_within_its_bound_and_the_cu
     # the nearest double lies up to 1.1e-16 off the bottom
     assert abs(slope.value) <= slope.bound + 1.2e-16 * 57.2
     assert abs(curvature.value - 57.146437870855181091) <= curvature.bound
+
+
+def test_the_attraction_is_strongest_where_the_curvature_vanishes():
+    """-2.3964292612442332399 at r = 1.244455060259807886."""
+    strongest = 1.244455060259807886
+
+    slope, curvature = (gradcheck.estimate(lennard_jones, at=strongest, order=order) for order in (1, 2))
+
+    assert abs(slope.value - 2.3964292612442332399) <= slope.bound
+    assert abs(curvature.value) <= curvature.bound + 1.2e-16 * 150
+
+
+def test_value_and_slope_at_the_cut_are_those_of_the_formula_and_no_slope_is_confirmed_there():
+    assert lennard_jones(CUT) == pytest.approx(-0.016316891136, rel=1e-11)
+    assert verdict_on(lennard_jones, CUT, 0.0389994774528) == CONFIRMED
+    assert verdict_on(lambda r: lennard_jones(r) if r < CUT else 0.0, CUT, 0.0389994774528) == UNDECIDED
 
 
 def test_a_potential_cut_off_jumps_and_one_that_is_shifted_first_has_a_kink():
@@ -332,6 +378,30 @@ def test_on_an_edge_of_the_tresca_surface_only_slopes_between_the_two_are_possib
     assert verdict_on(tresca, 1.0, slope) == verdict
 
 
+def mohr_coulomb(stresses):
+    """(s1 - s3)/2 + (s1 + s3)/2·sin phi for an angle of friction of 30 degrees; principal stresses on the diagonal."""
+    lowest, _, highest = np.linalg.eigvalsh(np.diag(stresses))
+    return float((highest - lowest) / 2 + (highest + lowest) / 2 * 0.5)
+
+
+@pytest.mark.parametrize(("second", "below", "above"), [(1.0, -0.25, 0.0), (3.0, 0.0, 0.75)])
+def test_on_an_edge_of_the_mohr_coulomb_surface_both_slopes_are_measured_and_those_outside_refuted(
+    second, below, above
+):
+    """C. A. Coulomb (1776), O. Mohr (1900); at diag(3, 1, 1) and diag(3, 3, 1)."""
+
+    def surface(s):
+        return mohr_coulomb([3.0, float(s), 1.0])
+
+    inside = report_on(surface, second, gradient=np.array((below + above) / 2))
+
+    evidence = inside.findings[0].evidence
+    assert (inside.findings[0].code, inside.verdict) == ("kink", UNDECIDED)
+    assert (evidence["left_slope"], evidence["right_slope"]) == pytest.approx((below, above), abs=1e-9)
+    assert verdict_on(surface, second, below) == verdict_on(surface, second, above) == UNDECIDED
+    assert verdict_on(surface, second, below - 0.05) == verdict_on(surface, second, above + 0.05) == REFUTED
+
+
 # --- interpolation ---
 # Monotone: F. N. Fritsch, R. E. Carlson, SIAM J. Numer. Anal. 17 (1980) 238-246; H. Akima, J. ACM 17 (1970) 589-602.
 
@@ -341,6 +411,12 @@ INTERPOLATORS = {
     "cubic spline": (CubicSpline(*KNOTS), 0.9256666666666666, None),
     "monotone cubic": (PchipInterpolator(*KNOTS), 1.026, (-0.1, 4.145455, 3.981818, 0.445455)),
     "Akima": (Akima1DInterpolator(*KNOTS), 1.0286923076923074, (-1.546154, 2.215385, 3.327692, 0.456923)),
+    # the variant that weighs flat pieces in; jumps from its own second derivative
+    "modified Akima": (
+        Akima1DInterpolator(*KNOTS, method="makima"),
+        1.0301125,
+        (-1.038063, 2.960244, 3.659167, 0.361667),
+    ),
 }
 
 
@@ -360,7 +436,7 @@ def test_an_interpolator_with_a_continuous_slope_has_no_kink(name):
     assert kinds <= ({"curvature-break"} if jumps else set())
 
 
-@pytest.mark.parametrize("name", ["monotone cubic", "Akima"])
+@pytest.mark.parametrize("name", ["monotone cubic", "Akima", "modified Akima"])
 def test_the_breaks_of_curvature_of_an_interpolator_are_found_at_its_knots_with_their_sizes(name):
     curve, _, jumps = INTERPOLATORS[name]
 
@@ -373,7 +449,7 @@ def test_the_breaks_of_curvature_of_an_interpolator_are_found_at_its_knots_with_
         assert one.size / 25 == pytest.approx(jumps[knot - 1], rel=0.15)
 
 
-@pytest.mark.parametrize("name", ["monotone cubic", "Akima"])
+@pytest.mark.parametrize("name", ["monotone cubic", "Akima", "modified Akima"])
 def test_at_a_knot_the_slope_of_an_interpolator_is_not_refuted(name):
     curve = INTERPOLATORS[name][0]
 

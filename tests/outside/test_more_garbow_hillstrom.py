@@ -9,11 +9,12 @@ import numpy as np
 import pytest
 
 import gradcheck
-from tests.outside.asking import CONFIRMED, REFUTED, line_of, places, report_on, verdicts
+from tests.outside.asking import CONFIRMED, REFUTED, UNDECIDED, line_of, places, report_on, verdicts
 from tests.problems import MORE_GARBOW_HILLSTROM, MORE_GARBOW_HILLSTROM_SUMS
 
 BY_NAME = {problem.name: problem for problem in MORE_GARBOW_HILLSTROM}
 WITH_ZEROS = [problem for problem in MORE_GARBOW_HILLSTROM if not problem.jacobian(problem.x0).all()]
+SUMS_WITH_ZEROS = [problem for problem in MORE_GARBOW_HILLSTROM_SUMS if not problem.gradient0.all()]
 
 
 def each(problems):
@@ -76,6 +77,49 @@ def test_every_entry_of_the_gradient_of_the_sum_of_squares_is_confirmed(problem)
     assert set(report.entries.verdict) == {CONFIRMED}
 
 
+@each(MORE_GARBOW_HILLSTROM_SUMS)
+def test_the_gradient_computed_with_fifty_digits_is_confirmed_as_numbers(problem):
+    assert report_on(problem.function, problem.x0, gradient=problem.gradient0).verdict == CONFIRMED
+
+
+@each([problem for problem in MORE_GARBOW_HILLSTROM if problem.jacobian0.size])
+def test_the_jacobian_computed_with_fifty_digits_is_confirmed_as_numbers(problem):
+    assert report_on(problem.function, problem.x0, jacobian=problem.jacobian0).verdict == CONFIRMED
+
+
+def test_estimates_of_all_gradients_hold_their_bounds():
+    """Entries from 1e-4 to 1e11, and eight that are exactly zero."""
+    answers = [gradcheck.estimate(problem.function, at=problem.x0) for problem in MORE_GARBOW_HILLSTROM_SUMS]
+    truth = np.concatenate([problem.gradient0 for problem in MORE_GARBOW_HILLSTROM_SUMS])
+    value, bound = (np.concatenate([getattr(answer, name) for answer in answers]) for name in ("value", "bound"))
+
+    assert (truth.size, np.count_nonzero(truth == 0)) == (181, 8)
+    assert np.all(np.abs(value - truth) <= bound)
+    assert np.median(bound[truth != 0] / np.abs(truth[truth != 0])) <= 1e-12
+
+
+@each(MORE_GARBOW_HILLSTROM_SUMS)
+def test_a_gradient_with_its_smallest_entry_flipped_or_its_largest_off_by_a_millionth_is_refuted_there_only(problem):
+    sizes = np.abs(problem.gradient0)
+    for place, factor in ((np.where(sizes == 0, np.inf, sizes).argmin(), -1), (sizes.argmax(), 1 + 1e-6)):
+        wrong = problem.gradient0.copy()
+        wrong[place] *= factor
+
+        words = verdicts(report_on(problem.function, problem.x0, gradient=wrong))
+
+        assert np.flatnonzero(words == REFUTED).tolist() == [place]
+        assert np.count_nonzero(words == CONFIRMED) == words.size - 1
+
+
+@each(SUMS_WITH_ZEROS)
+def test_a_hundred_millionth_of_the_sum_in_place_of_a_zero_of_its_gradient_is_refuted(problem):
+    wrong = problem.gradient0.copy()
+    place = int(np.argmin(np.abs(wrong)))
+    wrong[place] = 1e-8 * problem.value0
+
+    assert verdicts(report_on(problem.function, problem.x0, gradient=wrong))[place] == REFUTED
+
+
 def valley(x):
     with np.errstate(divide="ignore", invalid="ignore"):  # x1 = 0 is a division by zero
         return BY_NAME["Helical valley"].function(x)
@@ -99,3 +143,27 @@ def test_the_sum_of_squares_of_the_helical_valley_jumps_from_5625_to_625():
 
 def test_the_helical_valley_is_smooth_on_the_other_side_of_its_axis():
     assert line_of(valley, [-1.0, 1.0, 0.0], 0, 1.3).irregularities == ()
+
+
+@pytest.mark.parametrize("side", [-1.0, 1.0])
+@pytest.mark.parametrize("distance", [0.1, 1e-3, 1e-6, 1e-12])
+def test_beside_the_jump_of_the_helical_valley_estimates_hold_their_bounds_and_right_claims_are_not_refuted(
+    distance, side
+):
+    x, right = np.array([side * distance, -1.0, 0.0]), BY_NAME["Helical valley"].jacobian
+
+    answer = gradcheck.estimate(valley, at=x)
+
+    assert np.all(np.abs(answer.value - right(x)) <= answer.bound)
+    assert report_on(valley, x, jacobian=right).verdict != REFUTED
+
+
+def test_on_the_jump_of_the_helical_valley_its_first_residual_has_no_slope():
+    x = np.array([0.0, -1.0, 0.0])
+
+    answer = gradcheck.estimate(valley, at=x)
+    report = report_on(valley, x, jacobian=np.array([[100 / (2 * np.pi), 0, 10], [0, -10, 0], [0, 0, 1]]))
+
+    assert np.isinf(answer.bound[0, 0])
+    assert verdicts(report)[0].tolist() == [UNDECIDED, CONFIRMED, CONFIRMED]
+    assert "jump" in report.entries.reason[0]

@@ -9,7 +9,7 @@ import pytest
 from scipy import optimize, special
 
 import gradcheck
-from tests.outside.asking import CONFIRMED, REFUTED, report_on, verdicts
+from tests.outside.asking import CONFIRMED, REFUTED, UNDECIDED, report_on, verdicts
 
 # --- scipy ---
 
@@ -119,6 +119,20 @@ def test_the_hessian_of_the_absolute_error_is_a_convention_and_no_derivative():
     assert (report.entries.claim[0], report.verdict) == (1.0, REFUTED)
 
 
+def test_the_gradients_at_the_ties_of_piecewise_linear_losses_are_conventions():
+    """-1 for the absolute error and -0.3 for the pinball loss of 0.3, with slopes ±1 and -0.3, 0.7 on the two sides."""
+    losses = pytest.importorskip("sklearn._loss.loss")
+
+    for loss, convention in ((losses.AbsoluteError(), -1.0), (losses.PinballLoss(quantile=0.3), -0.3)):
+        slope = float(loss.gradient(np.array([1.0]), np.array([1.0]))[0])
+        report = report_on(
+            lambda x, loss=loss: loss.loss(np.array([1.0]), np.array([x]))[0], 1.0, gradient=np.array(slope)
+        )
+
+        assert (slope, report.verdict) == (pytest.approx(convention), UNDECIDED)
+        assert [finding.code for finding in report.findings] == ["kink"]
+
+
 # --- statsmodels ---
 
 SPECTOR_POINT = np.array([0.5, 0.05, 1.0, -3.0])
@@ -172,7 +186,9 @@ def test_score_and_hessian_of_a_poisson_model_are_confirmed(models, visits):
     assert score.entries.witness.tolist() == pytest.approx(
         [1084.1032644057486, 10430.911108760372, 728.4541820152335], rel=1e-10
     )
-    assert report_on(model.score, point, jacobian=model.hessian).verdict == CONFIRMED
+    hessian = report_on(model.score, point, jacobian=model.hessian)
+    assert hessian.verdict == CONFIRMED
+    assert hessian.entries.witness[0] == pytest.approx(-7008.908585985478, rel=1e-10)
 
 
 NEGATIVE_BINOMIAL_POINT = np.array([-0.05, 0.02, 0.5, 0.7])

@@ -50,7 +50,7 @@ BESSEL = {
 }
 
 
-@pytest.mark.parametrize("x", [0.1, 0.7, 3.0, 12.0])
+@pytest.mark.parametrize("x", [0.1, 0.7, 3.0, 12.0, 100.0])
 @pytest.mark.parametrize("order", [0, 1, 2.5])
 @pytest.mark.parametrize("kind", BESSEL)
 def test_derivatives_of_bessel_functions_are_confirmed(kind, order, x):
@@ -105,3 +105,74 @@ def test_the_elliptic_integral_taken_for_one_of_the_modulus_is_refuted():
     by_modulus = 0.84721308479397908661 * 2 * np.sqrt(0.5)
 
     assert verdict_on(special.ellipk, 0.5, by_modulus) == REFUTED
+
+
+def test_the_closed_form_of_an_elliptic_integral_has_a_gap_at_zero_where_values_show_the_slope():
+    """K'(m) = (E - (1 - m)K)/(2m(1 - m)) is 0/0 at m = 0; its limit is pi/8 (DLMF 19.4.1)."""
+
+    def closed_form(m):
+        m = np.float64(m)
+        with np.errstate(invalid="ignore"):
+            return (special.ellipe(m) - (1 - m) * special.ellipk(m)) / (2 * m * (1 - m))
+
+    assert report_on(special.ellipk, 0.0, gradient=closed_form).verdict == REFUTED
+    assert verdict_on(special.ellipk, 0.0, np.pi / 8) == CONFIRMED
+    assert report_on(special.ellipk, 0.3, gradient=closed_form).verdict == CONFIRMED
+
+
+@pytest.mark.parametrize(
+    ("function", "x", "second"),
+    [
+        (lambda x: special.airy(x)[0], 1.0, 0.13529241631288141552),
+        (special.gammaln, 0.5, 4.9348022005446793094),
+        (special.j0, 1.0, -0.32514710081303303549),
+    ],
+    ids=["Ai''(1) = Ai(1)", "(log gamma)''(1/2) = pi^2/2", "J0''(1) = -J1'(1)"],
+)
+def test_second_derivatives_follow_from_the_rows_of_the_table(function, x, second):
+    answer = gradcheck.estimate(function, at=x, order=2)
+
+    assert abs(answer.value - second) <= answer.bound <= 1e-8 * abs(second)
+
+
+#: The identities of the table as functions (DLMF 5.2, 5.15, 6.2, 7.2, 8.8, 9.2, 19.4, 4.13, 10.6, 10.29).
+IDENTITIES = {
+    "J0": (special.j0, lambda x: -special.j1(x), (0.3, 10.0)),
+    "J1": (special.j1, lambda x: special.j0(x) - special.j1(x) / x, (0.3, 10.0)),
+    "I0": (special.i0, special.i1, (0.3, 10.0)),
+    "K0": (special.k0, lambda x: -special.k1(x), (0.3, 10.0)),
+    "gamma": (special.gamma, lambda x: special.gamma(x) * special.digamma(x), (0.3, 1.0, 7.5)),
+    "log gamma": (special.gammaln, special.digamma, (0.3, 7.5)),
+    "psi": (special.digamma, lambda x: special.polygamma(1, x), (0.3, 7.5)),
+    "erf": (special.erf, lambda x: 2 / np.sqrt(np.pi) * np.exp(-(x**2)), (-2.0, 0.0, 1.0)),
+    "normal distribution": (special.ndtr, lambda x: np.exp(-(x**2) / 2) / np.sqrt(2 * np.pi), (-3.0, 0.0, 1.0)),
+    "Ai": (lambda x: special.airy(x)[0], lambda x: special.airy(x)[1], (-2.0, 0.0, 3.0)),
+    "Bi": (lambda x: special.airy(x)[2], lambda x: special.airy(x)[3], (-2.0, 0.0, 3.0)),
+    "elliptic E": (special.ellipe, lambda m: (special.ellipe(m) - special.ellipk(m)) / (2 * m), (0.1, 0.9)),
+    "Lambert W": (
+        lambda x: special.lambertw(x).real,
+        lambda x: special.lambertw(x).real / (x * (1 + special.lambertw(x).real)),
+        (0.1, 10.0),
+    ),
+    "sine integral": (lambda x: special.sici(x)[0], lambda x: np.sin(x) / x, (0.3, 10.0)),
+    "exponential integral": (special.expi, lambda x: np.exp(x) / x, (0.3, 5.0)),
+    "Legendre P5": (
+        lambda x: special.eval_legendre(5, x),
+        lambda x: 5 * (special.eval_legendre(4, x) - x * special.eval_legendre(5, x)) / (1 - x**2),
+        (-0.7, 0.2),
+    ),
+    "Chebyshev T5": (lambda x: special.eval_chebyt(5, x), lambda x: 5 * special.eval_chebyu(4, x), (-0.7, 0.3)),
+    "P(2.5, x)": (
+        lambda x: special.gammainc(2.5, x),
+        lambda x: x**1.5 * np.exp(-x) / special.gamma(2.5),
+        (0.3, 3.0, 9.0),
+    ),
+}
+
+
+@pytest.mark.parametrize("name", IDENTITIES)
+def test_the_identities_are_confirmed_as_functions_away_from_the_points_of_the_table_too(name):
+    function, derivative, points = IDENTITIES[name]
+
+    for x in points:
+        assert report_on(function, x, gradient=derivative).verdict == CONFIRMED

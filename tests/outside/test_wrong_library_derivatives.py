@@ -3,6 +3,8 @@
 Figures are outputs of jax 0.10 and autograd 1.9 against closed forms: sinc'(x) = -pi²x/3 near 0, expit' = s(x)·s(-x).
 """
 
+import warnings
+
 import numpy as np
 import pytest
 from scipy import special
@@ -103,9 +105,12 @@ def test_far_to_the_left_the_slope_of_expit_is_confirmed_to_eight_digits_and_zer
         (lambda x: jnp.maximum(x, 0.0), 0.0, 0.5),
         (jax.nn.relu, 0.0, 0.0),
         (lambda x: jnp.clip(x, 0.0, 1.0), 1.0, 0.5),
+        (lambda x: jnp.clip(x, 0.0, 1.0), 0.0, 0.5),
+        (lambda x: jnp.max(jnp.array([x, 1.0, 1.0])), 1.0, 1 / 3),
+        (lambda x: jnp.linalg.eigvalsh(jnp.array([[1.0, x], [x, 1.0]]))[0], 0.0, 0.0),
         (lambda x: jnp.interp(x, jnp.array([0.0, 1.0, 2.0]), jnp.array([0.0, 1.0, 5.0])), 1.0, 4.0),
     ],
-    ids=["abs", "max", "relu", "clip", "interp"],
+    ids=["abs", "max", "relu", "clip above", "clip below", "max of equals", "crossing eigenvalues", "interp"],
 )
 @pytest.mark.usefixtures("double_precision")
 def test_what_jax_chooses_at_a_kink_is_neither_confirmed_nor_refuted(function, x, convention):
@@ -114,6 +119,63 @@ def test_what_jax_chooses_at_a_kink_is_neither_confirmed_nor_refuted(function, x
     assert report.entries.claim[0] == pytest.approx(convention)
     assert report.verdict == UNDECIDED
     assert [finding.code for finding in report.findings] == ["kink"]
+
+
+@pytest.mark.parametrize(
+    ("function", "x", "convention"),
+    [
+        (anp.abs, 0.0, 0.0),
+        (lambda x: anp.maximum(x, 0.0), 0.0, 0.5),
+        (lambda x: anp.clip(x, 0.0, 1.0), 0.0, 0.0),
+        (lambda x: anp.clip(x, 0.0, 1.0), 1.0, 0.0),
+        (lambda x: anp.max(anp.array([x, 1.0, 1.0])), 1.0, 1 / 3),
+    ],
+    ids=["abs", "max", "clip below", "clip above", "max of equals"],
+)
+def test_what_autograd_chooses_at_a_kink_is_neither_confirmed_nor_refuted(function, x, convention):
+    report = report_on(function, x, gradient="autograd")
+
+    assert report.entries.claim[0] == pytest.approx(convention)
+    assert report.verdict == UNDECIDED
+    assert [finding.code for finding in report.findings] == ["kink"]
+
+
+@pytest.mark.parametrize("source", ["jax", "autograd"])
+@pytest.mark.parametrize("name", ["norm", "root of a square"])
+@pytest.mark.usefixtures("double_precision")
+def test_the_nan_that_automatic_differentiation_gives_for_a_length_at_zero_is_refuted(name, source):
+    module = {"jax": jnp, "autograd": anp}[source]
+    length = {
+        "norm": lambda x: module.linalg.norm(module.array([x, 0.0])),
+        "root of a square": lambda x: (x * x) ** 0.5,
+    }
+
+    with np.errstate(divide="ignore", invalid="ignore"), warnings.catch_warnings():
+        warnings.simplefilter("ignore", RuntimeWarning)  # autograd divides by zero
+        report = report_on(length[name], 0.0, gradient=source)
+
+    assert np.isnan(report.entries.claim[0])
+    assert report.verdict == REFUTED
+
+
+@pytest.mark.parametrize(
+    ("step", "x"), [(jnp.floor, 0.0), (jnp.round, 0.5), (jnp.sign, 0.0)], ids=["floor", "round", "sign"]
+)
+@pytest.mark.usefixtures("double_precision")
+def test_the_zero_that_jax_gives_for_a_step_is_undecided_at_the_step(step, x):
+    report = report_on(step, x, gradient="jax")
+
+    assert (report.entries.claim[0], report.verdict) == (0.0, UNDECIDED)
+    assert "jump" in report.entries.reason[0]
+
+
+@pytest.mark.usefixtures("double_precision")
+def test_at_the_vertical_end_of_a_root_nothing_is_decided():
+    """where(x > 0, sqrt x, 0): jax gives NaN, and the true slope is 0 on one side and infinite on the other."""
+    report = report_on(lambda x: jnp.where(x > 0, jnp.sqrt(x), 0.0), 0.0, gradient="jax")
+
+    assert np.isnan(report.entries.claim[0])
+    assert report.verdict == UNDECIDED
 
 
 @pytest.mark.usefixtures("double_precision")

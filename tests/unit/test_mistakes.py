@@ -133,7 +133,7 @@ def test_degrees_for_radians(factor):
     assert (diagnosis.code, diagnosis.entries) == ("degrees-for-radians", ("x[3]",))
 
 
-@pytest.mark.parametrize("factor", [1e3, 1e-3, 1e6, 1e-6, 60.0, 1 / 3600])
+@pytest.mark.parametrize("factor", [1e3, 1e-3, 1e6, 1e-6, 60.0, 1 / 3600, 10.0, 0.01, 1e-4, 1e5])
 def test_a_conversion_between_units(factor):
     assert only(told(with_entry(0, factor * 1.3), RIGHT)).code == "unit-factor"
 
@@ -144,6 +144,12 @@ def test_a_mean_for_a_sum_over_all_variables(factor):
 
     assert diagnosis.code == "mean-for-sum"
     assert "4 variables" in diagnosis.text
+
+
+def test_a_mean_for_a_sum_over_ten_variables_is_no_unit():
+    right = np.arange(1.0, 11.0)
+
+    assert only(told(right / 10, right)).code == "mean-for-sum"
 
 
 def test_a_transposed_jacobian():

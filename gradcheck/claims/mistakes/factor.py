@@ -28,7 +28,12 @@ KNOWN = {
     math.pi: "π",
     2 * math.pi: "2π",
 }
-UNITS = {10.0**k: f"1e{k}" for k in (-9, -6, -3, 3, 6, 9)} | {
+#: Powers of ten: prefixes, per cent (2), centimetres (2), bar (5) and decibar (4) for pascal, and the like.
+UNITS = {10.0**k: f"1e{k}" for k in range(-9, 10) if abs(k) > 2} | {
+    10.0: "10",
+    0.1: "1/10",
+    100.0: "100",
+    0.01: "1/100",
     60.0: "60",
     1 / 60: "1/60",
     3600.0: "3600",
@@ -74,10 +79,6 @@ def _diagnosis(case: Case, factor: float, where: BoolArray) -> Diagnosis:
             text=f"{start}; an angle in degrees where radians are due, or the reverse.",
             entries=names,
         )
-    if abs(factor) in UNITS:
-        return Diagnosis(
-            code=DiagnosisCode.UNIT_FACTOR, text=f"{start}; look for a conversion between units.", entries=names
-        )
     n = case.claim.shape[1]
     everything = bool((where == case.refuted).all()) and where.sum() > max(1, n // 2)
     if n > 2 and everything and any(abs(abs(factor) - f) <= 1e-9 * f for f in (n, 1 / n)):
@@ -85,6 +86,10 @@ def _diagnosis(case: Case, factor: float, where: BoolArray) -> Diagnosis:
             code=DiagnosisCode.MEAN_FOR_SUM,
             text=f"{start}, and there are {n} variables; a mean was differentiated as a sum, or the reverse.",
             entries=names,
+        )
+    if abs(factor) in UNITS:
+        return Diagnosis(
+            code=DiagnosisCode.UNIT_FACTOR, text=f"{start}; look for a conversion between units.", entries=names
         )
     mend = "look for a factor lost or doubled in these terms, such as an inner derivative."
     return Diagnosis(code=DiagnosisCode.CONSTANT_FACTOR, text=f"{start}; {mend}", entries=names)
