@@ -112,9 +112,10 @@ def same_content(content: bytearray, array: NDArray[Any]) -> bool:
 
 def _short_keys(entries: IntArray, values: NDArray[Any], moved: BoolArray) -> list[bytes]:
     """Entry and value; the empty key where nothing has moved."""
-    pairs = np.empty(entries.size, dtype=[("entry", np.intp), ("value", values.dtype)])
-    pairs["entry"], pairs["value"] = entries, values
-    keys: list[bytes] = pairs.view(f"V{pairs.itemsize}").tolist()
+    bits = values.view(np.int64).reshape(entries.size, -1)
+    pairs = np.empty((entries.size, 1 + bits.shape[1]), np.int64)
+    pairs[:, 0], pairs[:, 1:] = entries, bits
+    keys: list[bytes] = pairs.view(f"V{8 * pairs.shape[1]}")[:, 0].tolist()
     if not moved.all():
         for i in np.flatnonzero(~moved):
             keys[i] = _AT_START
