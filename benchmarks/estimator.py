@@ -22,7 +22,7 @@ import numpy as np
 import gradcheck
 from benchmarks.corpus import CASES, Case
 from benchmarks.figures import Figure, aligned, side_by_side
-from benchmarks.reference import AGREEMENT, slope
+from benchmarks.reference import AGREEMENT, derivative
 
 QUESTION = "How exact is a derivative from function values, and does its bound hold?"
 LOW_DEGREE = "linear and quadratic"
@@ -32,6 +32,19 @@ LONGEST_SHOWN = 60
 RESOLVED = 10 * AGREEMENT
 
 Estimator = Callable[..., Any]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Goals:
+    """What derivatives of one order are to reach; None for what is told without a goal."""
+
+    order: int
+    error: float
+    evaluations: float | None
+    of_low_degree: float | None
+
+
+FIRST = Goals(order=1, error=1e-14, evaluations=32.0, of_low_degree=12.0)
 
 
 class Counted:
@@ -68,11 +81,14 @@ class Sample:
         Evaluations, counted here and as told by the estimator.
     failure : str
         The estimator's exception; empty if there was none.
+    order : int
+        Of the derivative.
     """
 
     case: Case
     x: float
     truth: float
+    order: int = 1
     value: float = math.nan
     bound: float = math.nan
     error: float = math.nan
@@ -91,7 +107,7 @@ class Sample:
         """The error relative to the derivative, or to the function's scale where the derivative is 0."""
         if self.error == 0:
             return 0.0
-        scale = abs(self.truth) or self.magnitude / max(abs(self.x), 1.0)
+        scale = abs(self.truth) or self.magnitude / max(abs(self.x), 1.0) ** self.order
         error = math.inf if math.isnan(self.error) else self.error
         return error / scale if scale else math.inf
 
@@ -110,14 +126,14 @@ class Sample:
         return self.error / self.bound
 
 
-def measure(estimate: Estimator, cases: Sequence[Case], *, points: int, seed: int = 0) -> list[Sample]:
-    """`estimate` on every case at `points` random points each."""
-    return [_sample(estimate, case, x) for case in cases for x in case.points(points, seed)]
+def measure(estimate: Estimator, cases: Sequence[Case], *, points: int, seed: int = 0, order: int = 1) -> list[Sample]:
+    """`estimate`, which gives the derivative of this order, on every case at `points` random points each."""
+    return [_sample(estimate, case, x, order) for case in cases for x in case.points(points, seed)]
 
 
-def _sample(estimate: Estimator, case: Case, x: float) -> Sample:
+def _sample(estimate: Estimator, case: Case, x: float, order: int) -> Sample:
     function = Counted(case.f)
-    exact = slope(case, x)
+    exact = derivative(case, x, order)
     truth = float(exact)
     try:
         answer = estimate(function, at=x)
@@ -125,11 +141,12 @@ def _sample(estimate: Estimator, case: Case, x: float) -> Sample:
         reported = int(answer.evaluations)
     except Exception as fault:  # whatever it is, it counts against the estimator and must not end the measurement
         failure = f"{type(fault).__name__}: {fault}"
-        return Sample(case=case, x=x, truth=truth, calls=function.calls, failure=failure)
+        return Sample(case=case, x=x, truth=truth, order=order, calls=function.calls, failure=failure)
     return Sample(
         case=case,
         x=x,
         truth=truth,
+        order=order,
         value=value,
         bound=bound,
         error=_error(value, exact),
@@ -155,19 +172,19 @@ def _number(value: Any) -> float:
     return float(array)
 
 
-def figures(samples: Sequence[Sample]) -> list[Figure]:
+def figures(samples: Sequence[Sample], goals: Goals = FIRST) -> list[Figure]:
     """What the samples come to, each figure with its goal."""
     answered = [sample for sample in samples if not sample.failure]
     low_degree = [sample for sample in answered if sample.case.group == LOW_DEGREE]
     held = sum(sample.held for sample in samples)
     share = 100.0 * held / len(samples) if samples else math.nan
     return [
-        Figure(name="median relative error", value=_median(s.relative for s in answered), goal=1e-14, form=".1e"),
+        Figure(name="median relative error", value=median(s.relative for s in answered), goal=goals.error, form=".1e"),
         Figure(name="bounds held, %", value=share, goal=99.8, at_least=True, form=".2f"),
         Figure(name="worst miss / bound", value=max((s.miss for s in samples), default=math.nan), goal=3.0),
-        Figure(name="median bound / error", value=_median(s.tightness for s in answered), goal=15.0),
-        Figure(name="median evaluations", value=_median(s.calls for s in answered), goal=32.0),
-        Figure(name=f"  of {LOW_DEGREE}", value=_median(s.calls for s in low_degree), goal=12.0),
+        Figure(name="median bound / error", value=median(s.tightness for s in answered), goal=15.0),
+        Figure(name="median evaluations", value=median(s.calls for s in answered), goal=goals.evaluations),
+        Figure(name=f"  of {LOW_DEGREE}", value=median(s.calls for s in low_degree), goal=goals.of_low_degree),
         Figure(name="most evaluations", value=max((s.calls for s in answered), default=math.nan)),
         Figure(name="exceptions", value=len(samples) - len(answered), goal=0.0),
         Figure(name="infinite bounds", value=sum(s.bound == math.inf for s in answered)),
@@ -176,7 +193,7 @@ def figures(samples: Sequence[Sample]) -> list[Figure]:
     ]
 
 
-def _median(numbers: Any) -> float:
+def median(numbers: Any) -> float:
     """The median of what is not NaN; NaN if nothing is."""
     kept = [number for number in numbers if not math.isnan(number)]
     # not numpy's, which warns where two infinities meet
@@ -187,15 +204,14 @@ def _median(numbers: Any) -> float:
     return float(kept[middle] if len(kept) % 2 else kept[middle - 1] / 2 + kept[middle] / 2)
 
 
-def summary(samples: Sequence[Sample]) -> str:
+def summary(samples: Sequence[Sample], goals: Goals = FIRST) -> str:
     """All figures: of everything, of the part that methods are tuned on, and of the part kept aside."""
-    return side_by_side(
-        {
-            "all": figures(samples),
-            "tuned": figures([sample for sample in samples if not sample.case.kept_aside]),
-            "kept aside": figures([sample for sample in samples if sample.case.kept_aside]),
-        }
-    )
+    parts = {
+        "all": samples,
+        "tuned": [sample for sample in samples if not sample.case.kept_aside],
+        "kept aside": [sample for sample in samples if sample.case.kept_aside],
+    }
+    return side_by_side({name: figures(part, goals) for name, part in parts.items()})
 
 
 def by_function(samples: Sequence[Sample]) -> str:
@@ -257,7 +273,7 @@ def _listing(samples: Sequence[Sample]) -> str:
     return aligned(heading, rows)
 
 
-def report(samples: Sequence[Sample]) -> str:
+def report(samples: Sequence[Sample], goals: Goals = FIRST) -> str:
     """Everything worth reading about a measurement."""
     miscounts = [sample.reported - sample.calls for sample in samples if not sample.failure]
     farthest = max(miscounts, key=abs, default=0)
@@ -268,7 +284,7 @@ def report(samples: Sequence[Sample]) -> str:
             f"The {WORST_SHOWN} largest errors in units of their bound:\n{closest(samples)}",
             f"The {WORST_SHOWN} widest bounds:\n{widest(samples)}",
             f"Evaluations told by the estimator minus evaluations counted here, farthest from 0: {farthest}",
-            summary(samples),
+            summary(samples, goals),
         )
     )
 

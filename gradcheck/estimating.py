@@ -15,6 +15,7 @@ from gradcheck.records.arrays import Array
 from gradcheck.records.estimate import Estimate
 from gradcheck.report.estimate_text import estimate_text
 from gradcheck.witnesses.finite_difference import finite_difference
+from gradcheck.witnesses.hessian_difference import hessian_difference
 from gradcheck.witnesses.steps import room_along
 from gradcheck.witnesses.testimony import Testimony
 
@@ -45,7 +46,8 @@ def estimate(
     direction : array, optional
         Derivative along this direction (same number of entries as the point) instead of all variables.
     order : 1 or 2
-        First derivatives, or second derivatives of a model that returns one number.
+        First derivatives, or second derivatives: the Hessian of a model that returns one number (about 16 evaluations
+        an entry, fewer where it is zero or the model quadratic), or along a direction those of every output.
     output : callable, optional
         Picks what is differentiated from what the model returns.
     wrt : str or list of str, optional
@@ -66,8 +68,9 @@ def estimate(
     -------
     Estimate
         ``value`` has the shape of the input for a model that returns a number, ``(m, n)`` for a vector model, ``(n,
-        n)`` for order 2, ``()`` or ``(m,)`` along a direction. The bound is infinite where nothing can be said (kink,
-        jump, plateau, budget spent), with a reason.
+        n)`` for order 2, ``()`` or ``(m,)`` along a direction. The bound is infinite where nothing can be said (jump,
+        plateau, budget spent; for order 2 also a kink), with a reason. At a kink it covers the slopes of both sides,
+        and for order 2 at a curvature break the second derivatives of both.
 
     Raises
     ------
@@ -102,17 +105,18 @@ def estimate(
     session = open_session(subject, budget=budget, time_limit=time_limit)
     centre = next(iter(session.start_values().values()))
     if order == 2 and direction is None:
-        return _finished(_second_derivatives(session, centre), session, began)
+        return _finished(_hessian(session, centre), session, began)
     directions = _directions(subject, direction)
     testimony = differences_along(session, directions, centre, derivative=order)
-    return _finished(_shaped(testimony, subject, session, direction is not None), session, began)
+    fields = _shaped(testimony, subject, session, direction is not None)
+    return _finished({**fields, "order": order}, session, began)
 
 
 def differences_along(session: Session, directions: Directions, centre: Array, *, derivative: int = 1) -> Testimony:
     """Testimony of the difference witness about the only function of the session's subject."""
     subject = session.subject
     room = room_along(subject.start, directions, subject.domain)
-    inquiry = finite_difference(subject.start, directions, room, centre, derivative=derivative)
+    inquiry = finite_difference(subject.start, directions, room, centre, derivative=derivative, wider=derivative == 2)
     return conduct_one(addressed(inquiry, function=subject.name), session.gate)
 
 
@@ -149,48 +153,29 @@ def _shaped(testimony: Testimony, subject: Subject, session: Session, along: boo
     }
 
 
-def _second_derivatives(session: Session, centre: Array) -> dict[str, Any]:
-    """The Hessian (n, n) by second differences: along the axes, and along sums of two axes (polarisation).
-
-    With q(v) the second derivative along v, H_ij = (q(e_i s_i + e_j s_j) − s_i² H_ii − s_j² H_jj) / (2 s_i s_j); the
-    sizes s_i make all variables move alike.
-    """
+def _hessian(session: Session, centre: Array) -> dict[str, Any]:
+    """Fields of the record of full second derivatives: input shape + input shape."""
     subject = session.subject
-    n = subject.layout.size
     if centre.size != 1:
         raise UsageError(
             f"second derivatives need a model that returns one number; this one returns {centre.size}: "
             "pick one with output=..., or give a direction"
         )
-    axes = differences_along(session, np.arange(n), centre, derivative=2)
-    value = np.diag(axes.value[:, 0])
-    bound = np.diag(axes.bound[:, 0])
-    step = np.diag(axes.step[:, 0])
-    pairs = [(i, j) for i in range(n) for j in range(i + 1, n)]
-    if pairs:
-        size = np.where(subject.start != 0, np.abs(subject.start), subject.domain.scale)
-        # Powers of two: scaling loses no digit.
-        size = 2.0 ** np.round(np.log2(size))
-        rows = np.zeros((len(pairs), n))
-        for row, (i, j) in zip(rows, pairs, strict=True):
-            row[i], row[j] = size[i], size[j]
-        mixed = differences_along(session, rows, centre, derivative=2)
-        for k, (i, j) in enumerate(pairs):
-            own = size[i] ** 2 * value[i, i] + size[j] ** 2 * value[j, j]
-            scale = 2 * size[i] * size[j]
-            value[i, j] = value[j, i] = (mixed.value[k, 0] - own) / scale
-            error = mixed.bound[k, 0] + size[i] ** 2 * bound[i, i] + size[j] ** 2 * bound[j, j]
-            bound[i, j] = bound[j, i] = error / scale
-            step[i, j] = step[j, i] = mixed.step[k, 0]
+    inquiry = hessian_difference(subject.start, subject.domain, centre)
+    testimony = conduct_one(addressed(inquiry, function=subject.name), session.gate)
     shape = (*subject.layout.shape, *subject.layout.shape)
+
+    def name(i: int, j: int) -> str:
+        single = subject.layout.size == 1
+        return subject.layout.name(0) if single else f"{subject.layout.name(i)}, {subject.layout.name(j)}"
+
     return {
-        "value": value.reshape(shape),
-        "bound": bound.reshape(shape),
-        "step": step.reshape(shape),
-        "noise": axes.noise,
-        "source": axes.source,
-        "reasons": {subject.layout.name(row): reason for (row, _), reason in axes.reasons.items()},
-        "names": subject.names if n <= 1000 else (),
+        **{field: getattr(testimony, field).reshape(shape) for field in ("value", "bound", "step")},
+        "noise": testimony.noise,
+        "source": testimony.source,
+        "reasons": {name(*place): reason for place, reason in testimony.reasons.items()},
+        "names": subject.names if subject.layout.size <= 1000 else (),
+        "order": 2,
     }
 
 

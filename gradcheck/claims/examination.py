@@ -16,7 +16,7 @@ from gradcheck.evaluation.protocol import Inquiry
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.records.verdict import Verdict
 from gradcheck.witnesses.complex_step import complex_step
-from gradcheck.witnesses.difference_track import CUT_OFF, REASONS, SPENT
+from gradcheck.witnesses.difference_reasons import CUT_OFF, REASONS, SPENT
 from gradcheck.witnesses.finite_difference import finite_difference
 from gradcheck.witnesses.ladder import Nature
 from gradcheck.witnesses.quick_look import close_look, quick_look, wider_look

@@ -5,7 +5,7 @@ from gradcheck.problem.subject import Subject
 from gradcheck.records.finding import Finding, FindingCode, Location, Severity
 from gradcheck.records.report import CheckReport
 from gradcheck.records.verdict import Verdict
-from gradcheck.witnesses.difference_track import SPENT
+from gradcheck.witnesses.difference_reasons import SPENT
 from gradcheck.wording import count, listed
 
 

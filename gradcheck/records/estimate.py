@@ -27,7 +27,10 @@ class Estimate:
     source : str
         The witness: ``"finite difference"``, ``"complex step"``, ``"jax"``, ``"autograd"``.
     reasons : dict
-        Why an entry's bound is infinite or wide: name of the entry -> reason.
+        Why an entry's bound is infinite or wide: name of the entry -> reason. An entry of a Hessian has the names of
+        two variables: ``"x[0], x[3]"``, the first one not after the second.
+    order : int
+        1 for first derivatives, 2 for second ones.
     """
 
     value: Array
@@ -38,6 +41,7 @@ class Estimate:
     source: str
     names: tuple[str, ...] = ()
     reasons: dict[str, str]
+    order: int = 1
     notices: tuple[str, ...] = ()
     seconds: float = 0.0
     text: str = ""

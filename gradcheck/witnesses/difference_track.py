@@ -2,6 +2,8 @@
 
 States: ``probe`` (three pairs) → ``low`` (a line or a parabola: two wider pairs) or ``main`` (seven pairs) → ``fine``
 or ``wide`` (five more pairs) → ``done``; from ``main`` also back to ``main`` on a smaller interval, or to ``ladder``.
+For second derivatives ``probe`` and ``main`` lead to ``broad`` (twelve pairs on the widest interval that promises
+well).
 """
 
 from dataclasses import dataclass, field, replace
@@ -9,9 +11,23 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from gradcheck.records.arrays import Array, BoolArray
+from gradcheck.witnesses.candidates import Candidate, best_of, candidate_of, only_output
+from gradcheck.witnesses.difference_reasons import (
+    BREAK,
+    CUT_OFF,
+    FAILS,
+    NO_ROOM,
+    REASONS,
+    RIPPLED,
+    SPENT,
+    TOO_NARROW,
+    UNSETTLED,
+)
 from gradcheck.witnesses.ladder import Nature, Rungs
 from gradcheck.witnesses.polynomial_fit import Fit
 from gradcheck.witnesses.stencils import LOW, MOST_NODES, WIDE
+from gradcheck.witnesses.two_sides import Sides, meeting
+from gradcheck.witnesses.widening import narrower_share, promised_ratio
 
 #: A noise level below this many floors is rounding of the result.
 ROUNDING_MARGIN = 4.0
@@ -28,9 +44,6 @@ NARROW_FEATURE = 20.0
 CANCELLED = 1e13
 #: What a wide fit left over is the noise of the ladder if it is not larger than this many times that.
 HEARD_WIDE = 30.0
-#: Noise that is no rounding (saws, cut-off digits) goes alike at neighbouring nodes: they are fewer samples than they
-#: seem.
-CORRELATED = 2.0
 SHRINKS_MOST = 4
 #: From the second half of the six coefficients of `probe` to the end of the fourteen of `main`, in halves of `probe`.
 FORESEEN_SPANS = 2.7
@@ -47,28 +60,14 @@ NARROW = 1e-3
 #: to be what the function is about.
 RIPPLE = 1e-2
 
-REASONS = {
-    Nature.KINK: "kink at the point: the slopes on both sides differ",
-    Nature.JUMP: "jump at the point: the values on both sides differ",
-    Nature.PLATEAU: "plateau: the values do not change at all at small steps",
-    Nature.STEEP: "the difference quotients grow without limit as the step shrinks",
-}
-UNSETTLED = "the values settle at no step size"
-SPENT = "the budget was spent"
-NO_ROOM = "the bounds leave no room for a step"
-FAILS = "the model fails close to the point"
-CUT_OFF = "digits are cut off: the values do not change at small steps"
-RIPPLED = "small steps and wide steps see different slopes: a ripple, an inner tolerance, or digits that were cut off"
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Candidate:
-    """A fit that may become the answer: arrays (m,), and the half-width of its interval."""
-
-    value: Array
-    bound: Array
-    noise: Array
-    half: float
+#: An interval of its own for `broad` is at least so much wider than that of `main` ...
+BROAD_LEAST = 1.3
+#: ... or, straight from `probe`, not narrower than this share of it; at most so many times are tried.
+BROAD_STEEP = 0.2
+BROADENED_MOST = 2
+#: No interval is wider than this share of the size of the variable, which keeps its sign: wider ones may leave the
+#: domain of the model.
+LIMIT = 0.45
 
 
 @dataclass(slots=True, eq=False)
@@ -83,6 +82,10 @@ class Track:
         0 for both sides, +1 or −1 for one.
     reach, widest : float
         Largest half-width that the bounds allow, and that is sensible.
+    wider, broadened, narrow : bool, int, float
+        Whether intervals of its own, wider ones, suit what is sought; how often one was tried; the half-width before.
+    met : dict of output -> (value, bound, half-width)
+        Where each side is smooth on its own and both together are not: what they say together.
     small, ripple : ndarray of bool, shape (m,)
         Whether what sent the track to the ladder was small beside the function's variation; and did not decay either.
     settled : float
@@ -114,6 +117,9 @@ class Track:
     growths: int = 0
     escapes: int = 0
     laddered: bool = False
+    wider: bool = False
+    broadened: int = 0
+    narrow: float = 0.0
     tail: Array = field(default_factory=lambda: np.empty(0))
     ripple: BoolArray = field(default_factory=lambda: np.empty(0, bool))
     small: BoolArray = field(default_factory=lambda: np.empty(0, bool))
@@ -129,9 +135,12 @@ class Track:
     slope_error: Array = field(default_factory=lambda: np.empty(0))
     candidates: list[Candidate] = field(default_factory=list)
     reasons: dict[int, str] = field(default_factory=dict)
+    met: dict[int, tuple[float, float, float]] = field(default_factory=dict)
 
     @staticmethod
-    def begin(outputs: int, half: float, side: int, reach: float, other_reach: float, widest: float) -> "Track":
+    def begin(
+        outputs: int, half: float, side: int, reach: float, other_reach: float, widest: float, wider: bool
+    ) -> "Track":
         """A track before its first value; without room it is done at once."""
         track = Track(
             half=half,
@@ -139,6 +148,7 @@ class Track:
             reach=reach,
             other_reach=other_reach,
             widest=widest,
+            wider=wider,
             values=np.zeros((MOST_NODES, outputs)),
             slips=np.zeros(MOST_NODES),
             satisfied=np.zeros(outputs, bool),
@@ -156,7 +166,7 @@ class Track:
 
     def stop(self, reason: str) -> None:
         """End here; outputs without an answer get the reason."""
-        if reason == SPENT and self.latest is not None:
+        if reason == SPENT and self.latest is not None and not self.wider:
             # Better than nothing: what is left over counts as noise, so the bound is wide.
             unheard = np.full(self.satisfied.size, np.nan)
             wide = np.where(self.satisfied, np.inf, self.latest.bound)
@@ -167,21 +177,18 @@ class Track:
 
     # --- after a fit -----------------------------------------------------------------------------------------------
 
-    def after_fit(self, fits: Fit, i: int, half: float) -> None:
+    def after_fit(self, fits: Fit, i: int, half: float, sides: Sides | None = None) -> None:
         """Decide what comes after the fit `i` of the stage just measured."""
         self.stages += 1
         if self.stages > STAGES_MOST:
             self.stop(UNSETTLED)
             return
-        self.latest = _candidate(fits, i, half, fits.resolved[i])
+        self.latest = candidate_of(fits, i, half, fits.resolved[i])
         if self._meets_plateau(fits, i):
             return
-        at_floor = fits.resolved[i] & (
-            (fits.noise[i] <= ROUNDING_MARGIN * fits.floor[i])
-            | (fits.flat[i] & (fits.noise[i] <= AMPLIFIED_MARGIN * fits.floor[i]))
-            | (fits.flat[i] & (fits.noise[i] <= HEARD_MARGIN * self.heard))
-            | (fits.flat[i] & (fits.noise[i] <= ARGUMENT_MARGIN * fits.argument[i]))
-        )
+        at_floor = self._at_floor(fits, i)
+        if sides is not None and self._meets_break(sides, i, half, at_floor):
+            return
         if self.stage == "probe":
             self._after_probe(fits, i, half, at_floor)
         elif self.stage == "low":
@@ -193,15 +200,42 @@ class Track:
                 self.stage = "main"
         elif self.stage == "main":
             self._after_main(fits, i, half, at_floor)
+        elif self.stage == "broad":
+            self._after_broad(fits, i, half, at_floor)
         elif self._meets_narrow_feature(fits, i):
-            if self.laddered:
-                self.stop(UNSETTLED)
-            else:
-                self.stage = "ladder"
+            self._look_closer()
         else:
             # The wider interval may hold more structure than fits; then the main fit stands alone.
             self._keep(fits, i, half, at_floor | (fits.resolved[i] & self.noisy))
             self._finish(fits, i)
+
+    def _at_floor(self, fits: Fit, i: int) -> BoolArray:
+        """(m,): where the coefficients of a fit end in rounding, or in noise that the ladder heard."""
+        result: BoolArray = fits.resolved[i] & (
+            (fits.noise[i] <= ROUNDING_MARGIN * fits.floor[i])
+            | (fits.flat[i] & (fits.noise[i] <= AMPLIFIED_MARGIN * fits.floor[i]))
+            | (fits.flat[i] & (fits.noise[i] <= HEARD_MARGIN * self.heard))
+            | (fits.flat[i] & (fits.noise[i] <= ARGUMENT_MARGIN * fits.argument[i]))
+        )
+        return result
+
+    def _meets_break(self, sides: Sides, i: int, half: float, at_floor: BoolArray) -> bool:
+        """Whether all is said because each side on its own is a polynomial although both together are not.
+
+        Then the second derivative breaks at the point, or a higher one does and the second is that of both sides. Where
+        the slopes differ it is a kink, for the ladder to tell.
+        """
+        both = meeting(sides, i)
+        clear = self._at_floor(sides.left, i) & self._at_floor(sides.right, i) & both.one_slope
+        clear &= ~at_floor & ~self.satisfied
+        for output in np.flatnonzero(clear):
+            self.met[int(output)] = float(both.value[output]), float(both.bound[output]), half
+            if both.apart[output]:
+                self.reasons[int(output)] = BREAK
+        self.satisfied |= clear
+        if clear.any() and self.satisfied.all():
+            self.stage = "done"
+        return bool(self.stage == "done")
 
     def _meets_plateau(self, fits: Fit, i: int) -> bool:
         """Whether the values do not change at all here although they did on a wider interval: digits were cut off."""
@@ -226,23 +260,32 @@ class Track:
             self.candidates[k] = replace(candidate, bound=np.where(narrow, np.inf, candidate.bound))
         self.satisfied &= ~narrow
         self.tail = np.where(narrow, fits.variation[i], self.tail)
-        self.coarse = self.coarse or _candidate(fits, i, self.half, np.zeros_like(narrow))
+        self.coarse = self.coarse or candidate_of(fits, i, self.half, np.zeros_like(narrow))
         self.coarse_tail = np.where(narrow, fits.variation[i], 0.0)
         self.small, self.ripple = np.zeros_like(narrow), np.zeros_like(narrow)
         return True
 
+    def _look_closer(self) -> None:
+        if self.laddered:
+            self.stop(UNSETTLED)
+        else:
+            self.stage = "ladder"
+
     def _after_probe(self, fits: Fit, i: int, half: float, at_floor: BoolArray) -> None:
         low = at_floor & (fits.order[i] <= 3)
         if not low.all():
-            self._foresee(fits, i, half)
+            foreseen = self._foreseen(fits, i, half)
+            if not self._broadens(fits, i, half, foreseen):
+                # on the same interval, the values of `probe` serve `main` as well
+                self.half, self.stage, self.filled = foreseen, "main", self.filled if foreseen == half else 0
         elif LOW * half <= self.reach:
             self.stage = "low"
         else:
             self._keep(fits, i, half, low)
             self._finish(fits, i)
 
-    def _foresee(self, fits: Fit, i: int, half: float) -> None:
-        """Seven pairs come next: on this interval, or at once on a smaller one if the decay so far promises too little.
+    def _foreseen(self, fits: Fit, i: int, half: float) -> float:
+        """The interval for seven pairs: this one, or a smaller one if the decay so far promises too little.
 
         Geometric decay from the first half of the coefficients to the second is carried on to the last of `main`.
         """
@@ -251,15 +294,15 @@ class Track:
             decay = np.where(first > 0, second / first, 0.0)
             foreseen = second * decay ** (FORESEEN_SPANS)
             ratio = float(np.nanmin(np.where(foreseen > fits.floor[i], fits.floor[i] / foreseen, 1.0)))
-        if decay.max() < 0.3 and ratio < 0.1:
-            self._restart(half * max(ratio ** (1 / 13), 0.2))
-        else:
-            self.stage = "main"
+        too_little = decay.max() < 0.3 and ratio < 0.1
+        return half * max(ratio ** (1 / 13), 0.2) if too_little else half
 
     def _after_main(self, fits: Fit, i: int, half: float, at_floor: BoolArray) -> None:
         self._keep(fits, i, half, at_floor)
         waiting = ~self.satisfied
         if not waiting.any():
+            if self._broadens(fits, i, half, half):
+                return
             nearly_low = bool((fits.order[i] <= 8).all())
             wide = self.side == 0 and nearly_low and half * WIDE <= self.reach
             self.stage = "wide" if wide else "fine"
@@ -269,10 +312,12 @@ class Track:
         self.tail = fits.tail[i]
         if (waiting & decays & helped).any() and self.shrinks < SHRINKS_MOST:
             self.shrinks += 1
-            ratio = float((fits.floor[i] / np.maximum(fits.tail[i], fits.floor[i]))[waiting & (fits.tail[i] > 0)].min())
+            ratio = float(
+                (fits.floor[i] / np.maximum(fits.tail[i], fits.floor[i]))[waiting & (fits.tail[i] > 0)].min(initial=1.0)
+            )
             self._restart(half * float(np.clip(ratio ** (1 / 13), 0.02, 0.7)))
         elif not self.laddered:
-            self.coarse = _candidate(fits, i, half, fits.resolved[i])
+            self.coarse = candidate_of(fits, i, half, fits.resolved[i])
             self.coarse_tail = fits.tail[i]
             self.small = fits.tail[i] < RIPPLE * fits.variation[i]
             # Beside a large value even a small ripple may be all the variation that is left: digits of a cancelled sum.
@@ -285,6 +330,43 @@ class Track:
         else:
             for output in np.flatnonzero(self._hears_the_same(fits, i, half)):
                 self._accept_noise(int(output))
+            self.stop(UNSETTLED)
+
+    def _broadens(self, fits: Fit, i: int, half: float, narrow: float) -> bool:
+        """Go on to the widest interval on which the stencil of `broad` promises to end in rounding as well.
+
+        If it does not, `main` follows on the half-width `narrow`.
+        """
+        settled = self.satisfied | (fits.tail[i] <= ROUNDING_MARGIN * fits.floor[i])
+        level = np.where(self.satisfied, fits.noise[i], np.maximum(fits.floor[i], self.heard))
+        least = BROAD_LEAST if self.stage == "main" else BROAD_STEEP
+        return self._broadened_to(half * promised_ratio(fits, i, settled, level), least * half, narrow)
+
+    def _broadened_to(self, wanted: float, least: float, narrow: float) -> bool:
+        half = min(wanted, self.reach, LIMIT * self.widest)
+        if not self.wider or self.broadened >= BROADENED_MOST or half < least:
+            return False
+        self.narrow, self.half, self.stage, self.filled = narrow, half, "broad", 0
+        self.broadened += 1
+        return True
+
+    def _after_broad(self, fits: Fit, i: int, half: float, at_floor: BoolArray) -> None:
+        answered = self.satisfied.copy()
+        level = np.maximum(fits.floor[i], self.heard)
+        accepted = at_floor | (fits.resolved[i] & self.noisy & (fits.tail[i] <= HEARD_MARGIN * level))
+        self._keep(fits, i, half, accepted)
+        if self._meets_narrow_feature(fits, i):
+            self._look_closer()
+            return
+        missed = ~accepted
+        decays = bool((fits.before[i] > 3 * fits.tail[i])[missed].all())
+        narrower = half * narrower_share(fits, i, missed, level)
+        worth = narrower > BROAD_LEAST * self.narrow or not self.candidates
+        if missed.any() and decays and worth and self.broadened < BROADENED_MOST:
+            self.broadened, self.half, self.filled = self.broadened + 1, narrower, 0
+        elif not (answered | self.satisfied).all():
+            self._restart(self.narrow)
+        else:
             self.stop(UNSETTLED)
 
     def _hears_the_same(self, fits: Fit, i: int, half: float) -> BoolArray:
@@ -332,24 +414,16 @@ class Track:
             self._restart(min(wide for wide, _ in smaller))
         elif not self.candidates:
             self.stop(UNSETTLED)
-        else:
+        # Noise drowns a second derivative on a narrow interval: go on to the widest.
+        elif not self._broadened_to(np.inf, BROAD_LEAST * self.half, self.half):
             self.stage = "fine" if self.filled == 14 else "done"
 
     def _accept_noise(self, output: int) -> None:
-        coarse = self.coarse
         self.noisy[output] = True
-        if coarse is None or not np.isfinite(coarse.bound[output]):
+        if self.coarse is None or not np.isfinite(self.coarse.bound[output]):
             self.reasons[output] = UNSETTLED
         else:
-            only = np.arange(coarse.value.size) == output
-            self.candidates.append(
-                Candidate(
-                    np.where(only, coarse.value, np.nan),
-                    np.where(only, coarse.bound, np.inf),
-                    np.where(only, coarse.noise, np.nan),
-                    coarse.half,
-                )
-            )
+            self.candidates.append(only_output(self.coarse, output))
         self.satisfied[output] = True
 
     # --- moves -----------------------------------------------------------------------------------------------------
@@ -359,7 +433,7 @@ class Track:
 
     def _keep(self, fits: Fit, i: int, half: float, accepted: BoolArray) -> None:
         if accepted.any():
-            self.candidates.append(_candidate(fits, i, half, accepted))
+            self.candidates.append(candidate_of(fits, i, half, accepted))
             self.satisfied |= accepted
 
     def _finish(self, fits: Fit, i: int) -> None:
@@ -371,12 +445,12 @@ class Track:
         # A function that does not change at all need not be looked at wider, unless the interval is so narrow that this
         # says little.
         moves = (last.value != 0) | (last.half < NARROW * self.widest)
-        coarse = (last.bound > COARSE_BOUND * np.abs(last.value)) & moves & np.isfinite(last.bound)
-        # A variable keeps its sign: a wider interval may leave the domain of the model.
-        limit = min(self.reach, 0.45 * self.widest)
+        coarse = (last.bound > COARSE_BOUND * np.abs(last.value)) & moves & (np.isfinite(last.bound) | self.wider)
+        limit = min(self.reach, LIMIT * self.widest)
         if coarse.any() and (fits.order[i] <= 6).all() and self.growths < GROWTHS_MOST and last.half * 4 < limit:
             self.growths += 1
-            self.half, self.stage, self.filled = min(last.half * 60, limit), "probe", 0
+            unmoved = self.wider and (fits.order[i] == 1).all()
+            self.half, self.stage, self.filled = limit if unmoved else min(last.half * 60, limit), "probe", 0
         else:
             self.stop(UNSETTLED)
 
@@ -401,20 +475,17 @@ class Track:
         m = self.satisfied.size
         value, bound = np.full(m, np.nan), np.full(m, np.inf)
         half, noise = np.full(m, np.nan), np.full(m, np.nan)
-        ordered = sorted(self.candidates, key=lambda candidate: candidate.half)
         for output in range(m):
-            kept: list[Candidate] = []
-            for one in ordered:
-                v, b = one.value[output], one.bound[output]
-                b = b * CORRELATED if self.noisy[output] else b
-                if np.isfinite(b) and all(abs(v - k.value[output]) <= b + k.bound[output] for k in kept):
-                    kept.append(replace(one, bound=np.where(np.arange(m) == output, b, one.bound)))
-            if kept:
-                best = min(kept, key=lambda candidate: float(candidate.bound[output]))
+            best = best_of(self.candidates, output, bool(self.noisy[output]))
+            if best is not None:
                 value[output], bound[output] = best.value[output], best.bound[output]
                 half[output], noise[output] = best.half, best.noise[output]
                 self._cover_ripple(output, value, bound)
-            if np.isfinite(self.left[output]):
+            elif self.candidates:
+                self.reasons.setdefault(output, TOO_NARROW)
+            if output in self.met:
+                value[output], bound[output], half[output] = self.met[output]
+            elif np.isfinite(self.left[output]):
                 value[output] = (self.left[output] + self.right[output]) / 2
                 bound[output] = abs(self.right[output] - self.left[output]) / 2 + self.slope_error[output]
             elif output in self.reasons and self.reasons[output] in REASONS.values():
@@ -430,12 +501,3 @@ class Track:
         if self.ripple[output] and apart > bound[output] + coarse.bound[output]:
             bound[output] = max(bound[output], coarse.bound[output]) + apart
             self.reasons.setdefault(output, RIPPLED)
-
-
-def _candidate(fits: Fit, i: int, half: float, accepted: BoolArray) -> Candidate:
-    return Candidate(
-        np.where(accepted, fits.value[i], np.nan),
-        np.where(accepted, fits.bound[i], np.inf),
-        np.where(accepted, fits.noise[i], np.nan),
-        half,
-    )

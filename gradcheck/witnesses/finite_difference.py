@@ -11,17 +11,20 @@ the noise sample from coefficients that are left over follows Hamming's differen
 """
 
 from collections.abc import Generator
+from dataclasses import dataclass
 
 import numpy as np
 
 from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request, Status
 from gradcheck.records.arrays import Array, BoolArray, IntArray
-from gradcheck.witnesses.difference_track import SPENT, UNSETTLED, Track
+from gradcheck.witnesses.difference_reasons import SPENT, UNSETTLED
+from gradcheck.witnesses.difference_track import Track
 from gradcheck.witnesses.ladder import LADDER, read_ladder
-from gradcheck.witnesses.polynomial_fit import fit, stencil_on
+from gradcheck.witnesses.polynomial_fit import CLOSE, Fit, fit, stencil_on
 from gradcheck.witnesses.stencils import stage_of
 from gradcheck.witnesses.steps import Room, least_half_width, rounded_half_width
 from gradcheck.witnesses.testimony import Testimony
+from gradcheck.witnesses.two_sides import Sides
 
 SOURCE = "finite difference"
 
@@ -29,10 +32,14 @@ SOURCE = "finite difference"
 FIRST_WIDTH = 0.1 * 0.9643
 #: Where the bounds leave less than this share of it on one side, values are taken on the other side only.
 NARROW = 0.01
+#: Three quarters of a spacing of x: one rounding of a product inside the model, and a little.
+WOBBLE = 0.75 * np.finfo(float).eps
+#: Nodes of a stencil on both sides that are enough to look at each side alone.
+ENOUGH_FOR_SIDES = 14
 
 
 def finite_difference(
-    base: Array, directions: Directions, room: Room, centre: Array, *, derivative: int = 1
+    base: Array, directions: Directions, room: Room, centre: Array, *, derivative: int = 1, wider: bool = False
 ) -> Inquiry[Testimony]:
     """Derivatives along several directions from function values.
 
@@ -46,29 +53,66 @@ def finite_difference(
     centre : ndarray, shape (m,)
         Finite values of the function at `base`.
     derivative : 1, 2 or 3
-        Order of the derivative along the direction. All orders take the same values at the same points: a cache gives
-        the second one for free.
+        Order of the derivative along the direction. All orders take the same values at the same points, or fewer: a
+        cache gives the second one for free.
+    wider : bool
+        Go on to wider intervals, which suit second derivatives (their rounding goes with 1/h²), for more values.
 
     Returns
     -------
     Testimony
         Values and bounds (d, m). The bound is infinite, with a reason, at jumps, plateaus, steep points, and where the
-        model fails on all sides; at a kink it covers the slopes of both sides.
+        model fails on all sides. At a kink it covers the slopes of both sides, at a curvature break the second
+        derivatives of both; it is infinite for what is of higher order than what breaks.
     """
-    return (yield from _Rounds(base, directions, room, centre, derivative).run())
+    return (yield from _Rounds(base, directions, room, centre, derivative, wider).run())
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Measured:
+    """What one stage measured: nodes (k,), half-widths (d,), differences (d, k, m), sizes (d, m), slips (d, k)."""
+
+    nodes: Array
+    width: Array
+    differences: Array
+    largest: Array
+    slips: Array
+    wobble: Array
+
+    def fitted(self, derivative: int, side: int) -> Fit:
+        """The fit to all nodes; where they lie on the lower side the stencil runs downwards."""
+        width = -self.width if side < 0 else self.width
+        return self._fitted(derivative, np.ones(self.nodes.size, bool), width, self.slips, one_sided=side != 0)
+
+    def sides(self) -> Sides:
+        """The fits to each side of a stencil on both; the pair close to the point belongs to neither."""
+        clear = np.abs(self.nodes) > CLOSE
+        lower, upper = clear & (self.nodes < 0), clear & (self.nodes > 0)
+        left, left_slope = (self._fitted(p, lower, -self.width, -self.slips, one_sided=True) for p in (2, 1))
+        right, right_slope = (self._fitted(p, upper, self.width, self.slips, one_sided=True) for p in (2, 1))
+        return Sides(left=left, right=right, left_slope=left_slope, right_slope=right_slope)
+
+    def _fitted(self, derivative: int, chosen: BoolArray, width: Array, slips: Array, *, one_sided: bool) -> Fit:
+        nodes = np.abs(self.nodes[chosen]) if one_sided else self.nodes[chosen]
+        # The centre is the last node of every stencil: no difference, and no slip.
+        differences = np.pad(self.differences[:, chosen], ((0, 0), (0, 1), (0, 0)))
+        slips = np.pad(slips[:, chosen], ((0, 0), (0, 1)))
+        stencil = stencil_on(tuple(nodes.tolist()), one_sided)
+        return fit(stencil, width, differences, self.largest, slips, derivative, self.wobble)
 
 
 class _Rounds:
     """The rounds of one inquiry: directions in the same stage are evaluated and fitted together."""
 
-    def __init__(self, base: Array, directions: Directions, room: Room, centre: Array, derivative: int) -> None:
+    def __init__(
+        self, base: Array, directions: Directions, room: Room, centre: Array, derivative: int, wider: bool
+    ) -> None:
         self.base, self.directions, self.room, self.centre = base, directions, room, centre
         self.derivative = derivative
         self.spent = 0
         self.unit = float(np.abs(centre).max()) or 1.0
-        # Three quarters of a spacing of x: one rounding of a product inside the model, and a little.
-        self.wobble = 0.75 * np.finfo(float).eps * room.scale
-        self.tracks = _tracks(room, len(directions), centre.size)
+        self.wobble = WOBBLE * room.scale
+        self.tracks = _tracks(room, len(directions), centre.size, wider)
 
     def run(self) -> Generator[Request, Reply, Testimony]:
         while True:
@@ -122,18 +166,15 @@ class _Rounds:
         tracks = [self.tracks[row] for row in rows]
         k = len(stage.nodes)
         values = np.stack([track.values[:k] for track in tracks])
-        slips = np.zeros((len(tracks), k + 1))
-        slips[:, :k] = np.stack([track.slips[:k] for track in tracks]) / width[:, None]
-        differences = np.concatenate([values - self.centre, np.zeros((len(tracks), 1, self.centre.size))], axis=1)
-        largest = np.maximum(np.abs(values).max(axis=1), np.abs(self.centre))
+        slips = np.stack([track.slips[:k] for track in tracks]) / width[:, None]
         # A function that is zero on the whole interval shows no size of its own: that of the other outputs, or 1.
+        largest = np.maximum(np.abs(values).max(axis=1), np.abs(self.centre))
         largest = np.where(largest > 0, largest, self.unit)
-        # On the lower side the stencil runs downwards, and so does its derivative.
-        signed = width if side >= 0 else -width
-        stencil = stencil_on(stage.nodes, side != 0)
-        fits = fit(stencil, signed, differences, largest, slips, self.derivative, self.wobble[rows])
+        measured = _Measured(np.array(stage.nodes), width, values - self.centre, largest, slips, self.wobble[rows])
+        fits = measured.fitted(self.derivative, side)
+        sides = measured.sides() if self.derivative == 2 and side == 0 and k >= ENOUGH_FOR_SIDES else None
         for i, track in enumerate(tracks):
-            track.after_fit(fits, i, float(width[i]))
+            track.after_fit(fits, i, float(width[i]), sides)
 
     def _climb(self, rows: IntArray, side: int) -> Generator[Request, Reply, None]:
         reach = np.array([self.tracks[row].reach for row in rows]) / 2
@@ -185,7 +226,7 @@ class _Rounds:
         left, right = (np.stack([getattr(track, side) for track in self.tracks]) for side in ("left", "right"))
         if self.derivative > 1:
             # Slopes on both sides of a kink say nothing about higher derivatives.
-            bound = np.where(np.isfinite(left), np.inf, bound)
+            value, bound = np.where(np.isfinite(left), np.nan, value), np.where(np.isfinite(left), np.inf, bound)
         return Testimony(
             value=value,
             bound=bound,
@@ -206,9 +247,9 @@ class _Rounds:
         )
 
 
-def _tracks(room: Room, d: int, outputs: int) -> list[Track]:
+def _tracks(room: Room, d: int, outputs: int, wider: bool) -> list[Track]:
     """One track a direction, with its first interval: both sides where there is room, else the roomier side."""
-    wanted = FIRST_WIDTH * room.scale
+    wanted = np.maximum(FIRST_WIDTH * room.scale, least_half_width(room.grain))
     # Less room than the smallest interval is none.
     below, above = (np.where(side < least_half_width(room.grain), 0.0, side) for side in (room.below, room.above))
     narrow = np.minimum(below, above)
@@ -219,7 +260,9 @@ def _tracks(room: Room, d: int, outputs: int) -> list[Track]:
     # One-sided fits lose digits to the end of their interval; a wider one gives some of them back.
     half = np.minimum(np.where(both, wanted, 2 * wanted), reach)
     return [
-        Track.begin(outputs, float(half[i]), int(side[i]), float(reach[i]), float(below[i]), float(room.widest[i]))
+        Track.begin(
+            outputs, float(half[i]), int(side[i]), float(reach[i]), float(below[i]), float(room.widest[i]), wider
+        )
         for i in range(d)
     ]
 

@@ -8,6 +8,7 @@ Sources: discrete orthogonal polynomials, Forsythe 1957 (J. SIAM 5, 74-88); node
 derivative's weights small.
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache
 
@@ -220,25 +221,25 @@ def _concluded(
     noise = np.sqrt(np.where(kept, 0.0, a**2).sum(axis=1) / np.maximum(left_over, 1))
     noise = np.maximum(noise, floor)
     weights = stencil.at_centre[derivative - 1, :k][None, :, None]
-    width = half_width[:, None] ** derivative
-    size = np.abs(width)
+    # one division after the other: powers of a tiny or a huge width would leave the range of floating-point numbers
+    size = [np.abs(half_width[:, None])] * derivative
     half_way = (order + left_over // 2)[:, None, :]
     sooner, later = (
         np.sqrt(np.where(part, a**2, 0.0).sum(axis=1) / np.maximum(part.sum(axis=1), 1))
         for part in (~kept & (index < half_way), ~kept & (index >= half_way))
     )
-    value = np.where(kept, weights * a, 0.0).sum(axis=1) / width
+    value = _over(np.where(kept, weights * a, 0.0).sum(axis=1), size) * np.sign(half_width[:, None]) ** derivative
     # The derivative is fitted with the orders kept; where none of them moves it (a constant), the lowest that does sets
     # the amplification, so that an exact zero gets a bound that means something.
     counted = kept | (index <= derivative)
-    amplification = np.sqrt(np.where(counted, weights**2, 0.0).sum(axis=1)) / size
+    amplification = _over(np.sqrt(np.where(counted, weights**2, 0.0).sum(axis=1)), size)
     dropped = np.where(index >= order[:, None, :], np.abs(weights), 0.0)
-    next_weight = np.where(index <= order[:, None, :] + 1, dropped, 0.0).max(axis=1) / size
+    next_weight = _over(np.where(index <= order[:, None, :] + 1, dropped, 0.0).max(axis=1), size)
     deviations = DEVIATIONS * (1 + 2 / np.maximum(left_over, 1))
     bound = noise * (deviations * amplification + DROPPED_SHARE * next_weight) + 2 * np.finfo(float).eps * np.abs(value)
     if wobble is not None and derivative < 3:
         next_one = np.where(kept, stencil.at_centre[derivative, :k][None, :, None] * a, 0.0).sum(axis=1)
-        bound = bound + wobble[:, None] * np.abs(next_one) / size / np.abs(half_width[:, None])
+        bound = bound + _over(wobble[:, None] * np.abs(next_one), [*size, size[0]])
     variation = np.abs(a[:, 1:]).max(axis=1)
     slope = np.where(kept, stencil.at_centre[0, :k][None, :, None] * a, 0.0).sum(axis=1) / half_width[:, None]
     return Fit(
@@ -255,3 +256,9 @@ def _concluded(
         argument=np.zeros_like(noise) if wobble is None else np.abs(slope) * wobble[:, None],
         flat=(left_over >= SAMPLE_LEAST + 1) & (sooner <= 3 * np.maximum(later, floor)),
     )
+
+
+def _over(numbers: Array, widths: Sequence[Array]) -> Array:
+    for width in widths:
+        numbers = numbers / width
+    return numbers

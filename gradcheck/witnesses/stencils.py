@@ -46,12 +46,17 @@ LOW, WIDE = 3.0, 2.5
 #: orthonormal polynomials belong to it, so that what it does not share with the others shows as left over.
 _NEAR = np.array([2.0**-17])
 
+#: Pairs of `broad`, an interval of its own that may be much wider; and the pair close to the point.
+_BROAD_PAIRS = 11
+_BROAD = _on_grid(np.cos((2 * np.arange(1, _BROAD_PAIRS + 1) - 1) * np.pi / (4 * _BROAD_PAIRS)))
+
 TWO_SIDED = {
     "probe": Stage(_pairs(_SEVEN[:3]), 1.0, 0),
     "low": Stage(_pairs(np.concatenate([_SEVEN[:3] / LOW, _on_grid(np.array([1.0])), _NEAR])), LOW, 6),
     "main": Stage(_pairs(_SEVEN), 1.0, 6),
     "fine": Stage(_pairs(np.concatenate([_SEVEN, _BETWEEN, _NEAR])), 1.0, 14),
     "wide": Stage(_pairs(np.concatenate([_SEVEN / WIDE, _OUTER, _NEAR])), WIDE, 14),
+    "broad": Stage(_pairs(np.concatenate([_BROAD, _NEAR])), 1.0, 0),
 }
 
 #: Chebyshev-Lobatto abscissae on [0, 1], closest to each other at both ends; a spanning subset first.
@@ -59,11 +64,14 @@ _SIDE_SEVEN = _on_grid((1 - np.cos(np.arange(1, 8) * np.pi / 7)) / 2)[[6, 1, 3, 
 _SIDE_BETWEEN = _on_grid((1 - np.cos((np.arange(1, 8) - 0.5) * np.pi / 7)) / 2)
 _SIDE_QUARTERS = _on_grid((1 - np.cos((np.arange(1, 13) - 0.5) * np.pi / 14)) / 2)
 
+_SIDE_BROAD = _on_grid((1 - np.cos(np.arange(1, 2 * _BROAD_PAIRS + 1) * np.pi / (2 * _BROAD_PAIRS))) / 2)
+
 ONE_SIDED = {
     "probe": Stage(_tuple(_SIDE_SEVEN[:6]), 1.0, 0),
     "low": Stage(_tuple(np.concatenate([_SIDE_SEVEN[:6] / LOW, _on_grid(np.array([1.0, 0.85, 0.7, 0.5]))])), LOW, 6),
     "main": Stage(_tuple(np.concatenate([_SIDE_SEVEN, _SIDE_BETWEEN])), 1.0, 6),
     "fine": Stage(_tuple(np.concatenate([_SIDE_SEVEN, _SIDE_BETWEEN, _SIDE_QUARTERS])), 1.0, 14),
+    "broad": Stage(_tuple(_SIDE_BROAD), 1.0, 0),
 }
 
 #: Values of one direction that are kept at most.

@@ -98,5 +98,7 @@ def rounded_half_width(width: Array, grain: Array) -> Array:
     """`width` (d,) rounded down so that every node of a stencil is a multiple of `grain`; at least one of them."""
     unit = least_half_width(grain)
     with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
-        counted = np.nan_to_num(np.floor(width / unit), nan=1.0, posinf=1.0)
-    return np.asarray(np.maximum(counted, 1.0) * unit)
+        counted = np.floor(width / unit)
+        rounded = np.nan_to_num(np.maximum(counted, 1.0), nan=1.0, posinf=1.0) * unit
+    # A width of so many units is a multiple of them as it is (their number may be beyond the largest double).
+    return np.asarray(np.where(counted >= 2.0**53, width, rounded))

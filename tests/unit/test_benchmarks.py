@@ -9,13 +9,15 @@ import mpmath
 import numpy as np
 import pytest
 from click.testing import CliRunner
+from scipy import optimize
 
 import gradcheck
-from benchmarks import cost, estimator
+from benchmarks import cost, estimator, second_derivatives
 from benchmarks.__main__ import BENCHMARKS, main
 from benchmarks.corpus import CASES, Case, exactly
 from benchmarks.figures import Figure, side_by_side
-from benchmarks.reference import slope
+from benchmarks.hessian_corpus import HESSIAN_CASES, exact_hessian
+from benchmarks.reference import derivative, slope
 
 FEW = CASES[:6]
 
@@ -87,6 +89,67 @@ def test_the_reference_equals_closed_forms(name: str, closed_form: Any) -> None:
 
 def test_an_exact_zero_is_a_reference_of_zero() -> None:
     assert slope(case(lambda m, x: m.cos(x), 0.0), 0.0) == 0
+    assert derivative(case(lambda m, x: m.sin(x) + x, 0.0), 0.0, 2) == 0
+
+
+@pytest.mark.parametrize(
+    ("name", "closed_form"),
+    [
+        ("sin 1e5x", lambda x: -1e10 * mpmath.sin(1e5 * x)),
+        ("expanded (x-1)^7", lambda x: 42 * (x - 1) ** 5),
+        ("saturation", lambda x: -mpmath.exp(-x)),
+        ("rounded kink", lambda x: mpmath.mpf(1e-8) / mpmath.sqrt(x * x + 1e-8) ** 3),
+        ("gamma", lambda x: mpmath.gamma(x) * (mpmath.digamma(x) ** 2 + mpmath.polygamma(1, x))),
+        ("line", lambda x: mpmath.mpf(0)),
+    ],
+)
+def test_the_second_reference_equals_closed_forms(name: str, closed_form: Any) -> None:
+    known = next(case for case in CASES if case.name == name)
+
+    for x in known.points(5):
+        with mpmath.workdps(60):
+            found = derivative(known, x, 2)
+            assert abs(found - closed_form(mpmath.mpf(x))) <= 1e-24 * abs(found)
+
+
+@pytest.mark.parametrize(
+    ("name", "closed_form"),
+    [
+        ("saddle", lambda x: [[0, 1], [1, 0]]),
+        ("Rosenbrock, 5", optimize.rosen_hess),
+        ("strong diagonal", lambda x: [[2e6, 1], [1, 2e6]]),
+        ("product of eight", lambda x: np.prod(x) / np.outer(x, x) * (1 - np.eye(8))),
+        ("bell in six dimensions", lambda x: (4 * np.outer(x, x) - 2 * np.eye(6)) * np.exp(-x @ x)),
+        ("norm", lambda x: (np.eye(4) - np.outer(x, x) / (x @ x)) / np.sqrt(x @ x)),
+        ("all zero", lambda x: [[1, -1, 0], [-1, 1, 1], [0, 1, 0]]),
+    ],
+)
+def test_exact_hessians_equal_closed_forms(name: str, closed_form: Any) -> None:
+    known = next(case for case in HESSIAN_CASES if case.name == name)
+
+    for x in known.points(3):
+        exact = exact_hessian(known, x)
+        right = np.asarray(closed_form(x), dtype=float)
+        found = np.array([[float(exact[min(i, j), max(i, j)]) for j in range(x.size)] for i in range(x.size)])
+        np.testing.assert_allclose(found, right, rtol=1e-12, atol=1e-14 * np.abs(right).max())
+
+
+def test_the_hessians_were_chosen_by_a_rule_and_their_names_differ() -> None:
+    assert len({case.name for case in HESSIAN_CASES}) == len(HESSIAN_CASES) >= 25
+    assert sum(case.kept_aside for case in HESSIAN_CASES) == len(HESSIAN_CASES) // 3
+    assert {case.size for case in HESSIAN_CASES} >= {2, 3, 10}
+
+
+def test_an_entry_of_a_hessian_outside_its_bound_is_listed() -> None:
+    def close(function: Any, at: Any) -> Any:
+        function(at)
+        return SimpleNamespace(value=np.ones((2, 2)), bound=np.full((2, 2), 0.5), evaluations=1)
+
+    saddle = next(case for case in HESSIAN_CASES if case.name == "saddle")
+    told = second_derivatives.hessian_report(second_derivatives.measure_hessians(close, [saddle], points=1))
+
+    assert "33.33 !" in told
+    assert "0, 0" in told
 
 
 def test_evaluations_are_counted_in_the_function() -> None:

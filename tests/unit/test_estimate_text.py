@@ -49,6 +49,39 @@ def test_a_jacobian_of_two_outputs_names_output_and_variable():
     assert names_shown(text) == ["[0] a", "[0] b", "[1] a", "[1] b", "[2] a", "[2] b"]
 
 
+def test_an_entry_of_a_hessian_has_the_names_of_two_variables_and_is_shown_once():
+    text = estimate_text(estimate([[1.0, 2.0], [2.0, 4.0]], names=("chord", "span"), order=2))
+
+    assert text.startswith("second derivative by finite difference: 4 entries, 3 of them different")
+    assert names_shown(text) == ["chord, chord", "chord, span", "span, span"]
+
+
+def test_entries_of_a_matrix_of_parameters_twice_have_two_names():
+    names = ("w[0, 0]", "w[0, 1]")
+    text = estimate_text(estimate(np.ones((1, 2, 1, 2)), names=names, order=2))
+
+    assert names_shown(text) == ["w[0, 0], w[0, 0]", "w[0, 0], w[0, 1]", "w[0, 1], w[0, 1]"]
+
+
+def test_a_zero_among_large_entries_is_not_taken_for_uncertain():
+    value = np.full(100, 3.0)
+    value[7] = 0.0
+    bound = np.full(100, 1e-12)
+    bound[60:] = 1e-6
+    text = estimate_text(estimate(value, bound=bound))
+
+    assert "[7]" not in names_shown(text)
+
+
+def test_entries_that_share_a_reason_are_told_together():
+    reasons = {f"x[0], x[{i}]": "a kink at the point" for i in range(9)}
+    text = estimate_text(estimate(np.ones((3, 3)), names=("a", "b", "c"), reasons=reasons, order=2))
+
+    assert text.count("a kink at the point") == 1
+    assert "x[0], x[0]; x[0], x[1]" in text
+    assert "and 3 more" in " ".join(text.split())
+
+
 def test_a_derivative_along_a_direction_is_a_single_number():
     assert "2.5 ± 1e-12" in estimate_text(estimate(2.5))
 
