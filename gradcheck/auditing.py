@@ -135,6 +135,7 @@ def audit(
         "typical": typical,
         "wrt": wrt,
         "output": output,
+        "batched": None,  # a description may say it
     }
     subject, more = _subject_and_points(problem_or_function, options)
     more += given_points(points, subject) + random_points(subject, int(samples), seed)

@@ -42,6 +42,7 @@ def check(
     witnesses: Any = None,
     rel_tol: float | None = None,
     abs_tol: float = 0.0,
+    batched: bool = False,
     budget: int | None = None,
     time_limit: float | str | None = None,
     seed: int = 0,
@@ -74,6 +75,10 @@ def check(
         Among ``"differences"`` and ``"complex step"``; default both, as needed.
     rel_tol, abs_tol : float, optional
         Default 1e-8 (1e-3 for a model that returns single precision) and 0.
+    batched : bool
+        Whether the model takes many points at once: x as ``(k, n)`` (``(k,)`` where `at` is one number), and returns
+        ``(k,)`` or ``(k, m)``; `output` then picks from the whole batch. A claim still takes one point ``(n,)``. Every
+        point counts as one evaluation; a batch in which the model raises is repeated point by point, and counted once.
     budget : int, optional
         Largest number of evaluations.
     time_limit : float or str, optional
@@ -124,6 +129,7 @@ def check(
         if any(gradient is not None for gradient in (gradient, jacobian)):
             options = {name: value for name, value in options.items() if name not in CLAIM_KINDS}
         options |= {name: value for name, value in described.items() if value is not None}
+        options |= {"batched": batched} if batched else {}
         rest = {"budget": budget, "time_limit": time_limit, "seed": seed, "on_refuted": on_refuted}
         return check(function, **(rest | {"on_undecided": on_undecided} | options))
     claims = {"gradient": gradient, "jacobian": jacobian}
@@ -135,7 +141,15 @@ def check(
         )
     rules = Rules.of(rel_tol, abs_tol, witnesses)
     subjects = subjects_of_function(
-        function, at, claims=claims, wrt=wrt, output=output, bounds=bounds, names=names, typical=typical
+        function,
+        at,
+        claims=claims,
+        wrt=wrt,
+        output=output,
+        bounds=bounds,
+        names=names,
+        typical=typical,
+        batched=batched,
     )
     reports = []
     for subject in subjects:

@@ -31,6 +31,7 @@ def estimate(
     bounds: Any = None,
     names: Any = None,
     typical: Any = None,
+    batched: bool = False,
     budget: int | None = None,
     time_limit: float | str | None = None,
 ) -> Estimate:
@@ -56,6 +57,8 @@ def estimate(
     names : list of str, optional
     typical : float or array, optional
         Typical size of the variables; used where a value is zero or much smaller than what matters.
+    batched : bool
+        Whether the model takes many points at once; as in `gradcheck.check`.
     budget : int, optional
         Largest number of evaluations.
     time_limit : float or str, optional
@@ -89,7 +92,15 @@ def estimate(
     if order not in (1, 2):
         raise UsageError(f"order is {order!r}; first (1) and second (2) derivatives are available")
     subject = subjects_of_function(
-        function, at, claims={}, wrt=wrt, output=output, bounds=bounds, names=names, typical=typical
+        function,
+        at,
+        claims={},
+        wrt=wrt,
+        output=output,
+        bounds=bounds,
+        names=names,
+        typical=typical,
+        batched=batched,
     )[0]
     session = open_session(subject, budget=budget, time_limit=time_limit)
     centre = next(iter(session.start_values().values()))

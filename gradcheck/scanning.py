@@ -19,7 +19,7 @@ from gradcheck.report.scan_text import scan_text
 from gradcheck.witnesses.steps import room_along
 
 #: Options of a described model that a scan understands.
-_OPTIONS = ("wrt", "output", "bounds", "names", "typical")
+_OPTIONS = ("wrt", "output", "bounds", "names", "typical", "batched")
 
 
 def scan(
@@ -32,6 +32,7 @@ def scan(
     bounds: Any = None,
     names: Any = None,
     typical: Any = None,
+    batched: bool = False,
     budget: int | None = None,
     time_limit: float | str | None = None,
     seed: int = 0,
@@ -46,7 +47,7 @@ def scan(
         The point; a decorated model and a Problem bring their own.
     along : str, int or array
         A variable by name or position, or a direction with one entry a variable.
-    wrt, output, bounds, names, typical
+    wrt, output, bounds, names, typical, batched
         As in `gradcheck.check`.
     budget : int, optional
         Largest number of evaluations; about 140 are usual.
@@ -77,6 +78,7 @@ def scan(
     (2, -1)
     """
     given = {"wrt": wrt, "output": output, "bounds": bounds, "names": names, "typical": typical}
+    given |= {"batched": batched} if batched else {}
     subject = _subject(function, at, given)
     session = open_session(subject, budget=budget, time_limit=time_limit)
     name = next(iter(subject.targets))

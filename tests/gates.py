@@ -5,7 +5,8 @@ from typing import Any
 
 import numpy as np
 
-from gradcheck.evaluation.protocol import Reply, Request, Status, points_of
+from gradcheck.evaluation.moves import Moves
+from gradcheck.evaluation.protocol import Reply, Request, Status
 
 
 class CountingGate:
@@ -34,7 +35,8 @@ class CountingGate:
 
     def _answer(self, request: Request) -> Reply:
         before = self.evaluations
-        rows = [[self._evaluate(x) for x in points_of(request, row)] for row in range(len(request.offsets))]
+        moves, (d, k) = Moves.of(request), request.offsets.shape
+        rows = [[self._evaluate(moves.point(row * k + i)) for i in range(k)] for row in range(d)]
         wide = [value.size for row in rows for value, status in row if status <= Status.NONFINITE]
         self.outputs = max([self.outputs, *wide])
         values = np.full((*request.offsets.shape, self.outputs), np.nan)

@@ -3,9 +3,12 @@
 import re
 import time
 from collections.abc import Sequence
+from dataclasses import replace
+
+import numpy as np
 
 from gradcheck.errors import UsageError
-from gradcheck.evaluation.calls import REFUSED, Call, Engine, Outcome
+from gradcheck.evaluation.calls import Call, Engine, Outcome, assembled
 from gradcheck.evaluation.ledger import Ledger
 
 _UNITS = {"": 1.0, "s": 1.0, "sec": 1.0, "min": 60.0, "h": 3600.0}
@@ -59,25 +62,35 @@ def evaluations_of(budget: int | None) -> int | None:
 def budgeted(engine: Engine, ledger: Ledger, limit: int | None, seconds: float | None) -> Engine:
     """`engine`, which refuses what goes beyond `limit` evaluations or `seconds`.
 
-    Calls are admitted one by one in their order, so the outcome does not depend on how they are spread over workers.
-    A refused call is a status, never an exception: algorithms return what they have.
+    Points are admitted one by one in their order, so the outcome does not depend on how they are spread over workers.
+    A refusal is a status, never an exception: algorithms return what they have.
     """
     if limit is None and seconds is None:
         return engine
     deadline = None if seconds is None else time.monotonic() + seconds
 
     def admit(calls: Sequence[Call]) -> list[Outcome]:
-        outcomes: list[Outcome] = []
+        spent = ledger.evaluations + ledger.calls["jax"] + ledger.calls["autograd"]
+        admitted: list[Call] = []
         for call in calls:
             # Claims are the user's own derivative code: looking at them is what the budget is for.
-            spent = ledger.evaluations + ledger.calls["jax"] + ledger.calls["autograd"]
-            over = limit is not None and call.kind != "claim" and spent >= limit
-            late = deadline is not None and time.monotonic() >= deadline
-            if over or late:
-                ledger.refused += 1
-                outcomes.append(REFUSED)
-            else:
-                outcomes.extend(engine([call]))
-        return outcomes
+            free = limit is None or call.kind == "claim"
+            many = len(call) if free else min(len(call), max(0, (limit or 0) - spent))
+            spent += 0 if free else many
+            admitted.append(replace(call if many == len(call) else call.at(slice(many)), until=deadline))
+        outcomes = iter(engine([call for call in admitted if len(call)]))
+        return [
+            _completed(next(outcomes) if len(part) else Outcome(), len(part), len(call), ledger)
+            for part, call in zip(admitted, calls, strict=True)
+        ]
 
     return admit
+
+
+def _completed(outcome: Outcome, admitted: int, asked: int, ledger: Ledger) -> Outcome:
+    """The outcome of all points asked for; what was not evaluated is counted as refused."""
+    ledger.refused += asked - outcome.spent
+    if not admitted or admitted == asked:
+        return outcome
+    places = np.arange(admitted)
+    return assembled([(outcome, places, places)], asked, spent=outcome.spent)

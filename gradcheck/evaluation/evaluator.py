@@ -1,10 +1,10 @@
 """The innermost layer: the only code that calls the user's functions."""
 
 import time
-import traceback
 import warnings
 from collections.abc import Callable, Sequence
 from contextlib import AbstractContextManager, nullcontext
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -14,7 +14,9 @@ from gradcheck.errors import UsageError
 from gradcheck.evaluation.arithmetic import complex as complex_numbers
 from gradcheck.evaluation.arithmetic import real
 from gradcheck.evaluation.calls import Call, Outcome
-from gradcheck.evaluation.ledger import Failure, Ledger
+from gradcheck.evaluation.failing import last_words
+from gradcheck.evaluation.ledger import Ledger
+from gradcheck.evaluation.outputs import NUMBERS, Output
 from gradcheck.evaluation.protocol import Status
 from gradcheck.problem.derivative_shape import claim_matrix
 from gradcheck.problem.subject import Subject, Target
@@ -32,8 +34,8 @@ class Evaluator:
 
     Notes
     -----
-    Warnings and floating-point errors of the model are silenced for the time of a batch (a model may be called where
-    its logarithm is undefined; the NaN that follows is recorded), and both settings are restored afterwards.
+    Warnings and floating-point errors of the model are silenced for the time of a batch of calls (a model may be called
+    where its logarithm is undefined; the NaN that follows is recorded), and both settings are restored afterwards.
     """
 
     def __init__(self, subject: Subject, ledger: Ledger) -> None:
@@ -45,56 +47,132 @@ class Evaluator:
     def __call__(self, calls: Sequence[Call]) -> list[Outcome]:
         with warnings.catch_warnings(), np.errstate(all="ignore"):
             warnings.simplefilter("ignore")
-            return [self._one(call) for call in calls]
+            return [self._values(call) if call.source == "model" else self._derivative(call) for call in calls]
 
-    def _one(self, call: Call) -> Outcome:
-        began = time.perf_counter()
-        self.ledger.calls[call.kind] += 1
-        try:
-            if call.source == "model":
-                return self._values(call)
-            return self._derivative(call)
-        except UsageError:
-            raise  # the caller's mistake: told, not recorded
-        except (Exception, SystemExit) as error:
-            return self._failed(call, _last_words(error))
-        finally:
-            self.ledger.seconds[call.kind] += time.perf_counter() - began
+    # --- values ------------------------------------------------------------------------------------------------------
 
     def _values(self, call: Call) -> Outcome:
-        function = self.subject.runs[call.run]
-        if call.arithmetic == "complex":
-            result = complex_numbers.call(function, self.subject.layout, call.point)
-        else:
-            result, mutated = self._real_call(call.run, function, call.point)
-            if mutated:
-                self.ledger.mutated.add(call.run)
-        values: dict[str, NDArray[Any]] = {}
-        status: dict[str, Status] = {}
-        message = ""
-        for target in self._targets(call.run):
-            try:
-                values[target.name], status[target.name] = self._output(call, target, result)
-            except (_ChangedShape, _UnusableStart) as error:
-                raise UsageError(str(error)) from None
-            except Exception as error:
-                message = _last_words(error)
-                status[target.name] = Status.CRASH
-            if status[target.name] != Status.OK:
-                message = message or "returned a value that is not finite"
-                self._record(target.name, call, status[target.name], message)
-        return Outcome(values=values, status=status, message=message)
+        targets = [target for target in self.subject.targets.values() if target.run == call.run]
+        outputs = [Output(target, call, self.shapes, self.ledger) for target in targets]
+        tally = _Tally()
+        began = time.perf_counter()
+        try:
+            if self.subject.batched:
+                self._in_batches(call, outputs, tally)
+            else:
+                self._one_by_one(call, outputs, tally)
+        finally:
+            self.ledger.seconds[call.kind] += time.perf_counter() - began
+            self.ledger.calls[call.kind] += tally.begun
+            for output in outputs:
+                output.settle(tally.finished)
+            self._record(call, outputs)
+        return Outcome(
+            values={output.target.name: output.values for output in outputs if output.values is not None},
+            status={output.target.name: output.status for output in outputs},
+            spent=tally.begun,
+        )
 
-    def _real_call(self, run: str, function: Callable[..., Any], point: Array) -> tuple[Any, bool]:
-        with self._scope(run):
-            result, mutated = real.call(function, self.subject.layout, point)
-        if run in self.double or not real.is_single_precision_jax(result):
-            return result, mutated
-        # Seven digits show little of a derivative; jax models are called in double precision, in a scope of their own.
-        self.double.add(run)
-        self.ledger.notices.append(f"{run} is a jax model in single precision; it was evaluated in double precision")
+    def _one_by_one(self, call: Call, outputs: Sequence[Output], tally: "_Tally") -> None:
+        send = self._sender(call)
+        takes = [output.take for output in outputs]
+        for i in range(len(call)):
+            tally.finished = i
+            if call.until is not None and _late(call):
+                return
+            tally.begun = i + 1
+            try:
+                result = send(i)
+                if type(result) not in NUMBERS and self._too_short(call, result):
+                    send = self._sender(call)
+                    result = send(i)
+            except UsageError:
+                raise  # the caller's mistake: told, not recorded
+            except (Exception, SystemExit) as error:
+                self._failed(call, outputs, i, last_words(error))
+                continue
+            for take in takes:
+                take(i, result)
+        tally.finished = tally.begun
+
+    def _in_batches(self, call: Call, outputs: Sequence[Output], tally: "_Tally") -> None:
+        most = call.moves.most_at_once
+        for first in range(0, len(call), most):
+            if _late(call):
+                return
+            part = slice(first, min(first + most, len(call)))
+            tally.begun = part.stop
+            if not self._batch(call, outputs, part):
+                self._repeat(call, outputs, part, tally)
+            if tally.begun < part.stop:
+                return
+            tally.finished = part.stop
+
+    def _repeat(self, call: Call, outputs: Sequence[Output], part: slice, tally: "_Tally") -> None:
+        """Point by point, so that one bad point spoils no others. The attempt itself gave nothing and is not counted.
+
+        A batch of one has said already what is to be said.
+        """
+        if part.stop - part.start == 1:
+            return
+        for i in range(part.start, part.stop):
+            tally.begun = tally.finished = i
+            if _late(call):
+                return
+            tally.begun = i + 1
+            self._batch(call, outputs, slice(i, i + 1))
+
+    def _batch(self, call: Call, outputs: Sequence[Output], part: slice) -> bool:
+        """Evaluate some points at once; False if that failed. A single point that fails is recorded."""
+        some = call.at(part)
+        single = self.subject.layout.single
+        given = (len(some),) if single is not None and single.scalar else (len(some), some.moves.base.size)
+        try:
+            result = self._sender(some)(slice(None))
+            if self._too_short(call, result):
+                result = self._sender(some)(slice(None))
+            for output in outputs:
+                output.take_batch(part.start, given, result)
+        except UsageError:
+            raise
+        except (Exception, SystemExit) as error:
+            if len(some) == 1:
+                self._failed(call, outputs, part.start, last_words(error))
+            return False
+        return True
+
+    def _sender(self, call: Call) -> real.Sender:
+        """What calls the run at the point of a number, or at those of a slice."""
+        function, layout, moves = self.subject.runs[call.run], self.subject.layout, call.moves
+        if call.arithmetic == "complex":
+            return complex_numbers.sender(function, layout, moves, batched=self.subject.batched)
+
+        def mutated() -> None:
+            self.ledger.mutated.add(call.run)
+
+        send = real.sender(function, layout, moves, mutated, batched=self.subject.batched)
+        if call.run not in self.double:
+            return send
+
+        def in_double_precision(i: Any) -> Any:
+            with self._scope(call.run):
+                return send(i)
+
+        return in_double_precision
+
+    def _too_short(self, call: Call, result: Any) -> bool:
+        """Whether this is jax in single precision, to be called in double precision from now on.
+
+        Seven digits show little of a derivative; there is a scope for that, and no setting of the user's changes.
+        """
+        if call.arithmetic != "real" or call.run in self.double or not real.is_single_precision_jax(result):
+            return False
+        self.double.add(call.run)
+        self.ledger.notices.append(
+            f"{call.run} is a jax model in single precision; it was evaluated in double precision"
+        )
         self.ledger.calls["model"] += 1
-        return self._real_call(run, function, point)
+        return True
 
     def _scope(self, run: str) -> AbstractContextManager[Any]:
         if run not in self.double:
@@ -103,42 +181,48 @@ class Evaluator:
 
         return double_precision()
 
-    def _output(self, call: Call, target: Target, result: Any) -> tuple[NDArray[Any], Status]:
-        array: NDArray[Any]
-        if call.arithmetic == "complex":
-            array = complex_numbers.picked(result, target.pick, self.shapes.get(target.name))
-        else:
-            array = self._real_output(target, result if target.pick is None else target.pick(result))
-        known = self.shapes.setdefault(target.name, array.shape)
-        if array.shape != known:
-            raise _ChangedShape(
-                f"{target.name} returned shape {known} at first and shape {array.shape} at x = {call.point!r:.120}; "
-                "a model must return the same shape everywhere"
-            )
-        flat = np.ravel(array)
-        return flat, Status.OK if np.isfinite(flat).all() else Status.NONFINITE
+    def _failed(self, call: Call, outputs: Sequence[Output], i: int, words: str) -> None:
+        for output in outputs:
+            self.ledger.last_words[output.target.name, call.source] = words
+            output.fail(i, words)
 
-    def _real_output(self, target: Target, picked: Any) -> Array:
-        try:
-            array = real.as_array(picked, target.name)
-        except UsageError as error:
-            # At the first evaluation this is a wrong model; later on, one bad point among good ones.
-            raise (_UnusableStart if target.name not in self.shapes else RuntimeError)(str(error)) from None
-        self.ledger.output_kinds.setdefault(target.name, array.dtype.name)
-        return array.astype(float)
+    def _record(self, call: Call, outputs: Sequence[Output]) -> None:
+        """Failures in the order of the points; those in complex numbers say nothing about the model itself."""
+        if call.arithmetic != "real":
+            return
+        found = [(i, order) for order, output in enumerate(outputs) for i in output.words]
+        for i, order in sorted(found):
+            output = outputs[order]
+            point = partial(call.moves.point, i)
+            self.ledger.fail(output.target.name, point, Status(output.status[i]), output.words[i])
+
+    # --- derivatives -------------------------------------------------------------------------------------------------
 
     def _derivative(self, call: Call) -> Outcome:
-        target = self.subject.targets[call.function]
-        value = self._claim(call, target) if call.source.startswith("claim:") else self._automatic(call, target)
-        finite = Status.OK if np.isfinite(value).all() else Status.NONFINITE
-        return Outcome(values={call.function: value}, status={call.function: finite})
+        name = call.function
+        if _late(call):
+            return Outcome()
+        target = self.subject.targets[name]
+        self.ledger.calls[call.kind] += 1
+        began = time.perf_counter()
+        try:
+            value = self._claim(call, target) if call.source.startswith("claim:") else self._automatic(call, target)
+        except UsageError:
+            raise
+        except (Exception, SystemExit) as error:
+            self.ledger.last_words[name, call.source] = last_words(error)
+            return Outcome(status={name: np.array([Status.CRASH], dtype=np.int8)}, spent=1)
+        finally:
+            self.ledger.seconds[call.kind] += time.perf_counter() - began
+        state = Status.OK if np.isfinite(value).all() else Status.NONFINITE
+        return Outcome(values={name: value[None]}, status={name: np.array([state], dtype=np.int8)}, spent=1)
 
     def _claim(self, call: Call, target: Target) -> Array:
         kind = call.source.partition(":")[2]
         claim = target.claims[kind]
         if callable(claim):
             with self._scope(target.run):
-                claim, mutated = real.call(claim, self.subject.layout, call.point)
+                claim, mutated = real.call(claim, self.subject.layout, call.moves.base)
             if mutated:
                 self.ledger.mutated.add(f"{kind} of {target.name}")
         self.ledger.claim_kinds[target.name, kind] = str(getattr(claim, "dtype", "float64"))
@@ -152,47 +236,28 @@ class Evaluator:
             from gradcheck.evaluation.arithmetic import with_autograd as automatic  # type: ignore[no-redef]
         assert call.rows is not None
         sweep = automatic.jvp if call.arithmetic == "jvp" else automatic.vjp
-        function = _picked(self.subject.runs[target.run], target.pick)
-        return np.asarray(sweep(function, self.subject.layout, call.point, call.rows), dtype=float)
-
-    def _targets(self, run: str) -> list[Target]:
-        return [target for target in self.subject.targets.values() if target.run == run]
-
-    def _failed(self, call: Call, message: str) -> Outcome:
-        names = [call.function] if call.function else [target.name for target in self._targets(call.run)]
-        for name in names:
-            self.ledger.last_words[name, call.source] = message
-            self._record(name, call, Status.CRASH, message)
-        return Outcome(status=dict.fromkeys(names, Status.CRASH), message=message)
-
-    def _record(self, function: str, call: Call, status: Status, message: str) -> None:
-        if call.source == "model" and call.arithmetic == "real":
-            self.ledger.fail(Failure(function=function, point=call.point, status=status, message=message))
+        function = _of_one_point(self.subject.runs[target.run], target.pick, self.subject.batched)
+        return np.asarray(sweep(function, self.subject.layout, call.moves.base, call.rows), dtype=float)
 
 
-class _ChangedShape(Exception):
-    """Raised inside the evaluator only."""
+class _Tally:
+    """How many points of a call were begun, and finished: known also where an interruption ends it."""
+
+    __slots__ = ("begun", "finished")
+
+    def __init__(self) -> None:
+        self.begun = self.finished = 0
 
 
-class _UnusableStart(Exception):
-    """Raised inside the evaluator only."""
+def _late(call: Call) -> bool:
+    return call.until is not None and time.monotonic() >= call.until
 
 
-def _picked(function: Callable[..., Any], pick: Callable[[Any], Any] | None) -> Callable[..., Any]:
+def _of_one_point(function: Callable[..., Any], pick: Callable[[Any], Any] | None, batched: bool) -> Callable[..., Any]:
+    """The model as a function of one point that returns the output alone."""
+    if batched:
+        of_batch = _of_one_point(function, pick, False)
+        return lambda x: of_batch(x[None])[0]
     if pick is None:
         return function
     return lambda *positional, **keywords: pick(function(*positional, **keywords))
-
-
-def _last_words(error: BaseException) -> str:
-    """Type, message and the user's own line of an exception, in one line."""
-    frames = traceback.extract_tb(error.__traceback__)
-    # The last frame may lie deep inside a library; the user's line is what helps.
-    own = [
-        frame
-        for frame in frames
-        if "site-packages" not in frame.filename and "gradcheck/evaluation" not in frame.filename
-    ]
-    where = f" ({own[-1].filename}:{own[-1].lineno})" if own else ""
-    text = " ".join(str(error).split())
-    return f"{type(error).__name__}: {text[:300]}{where}" if text else f"{type(error).__name__}{where}"

@@ -1,6 +1,7 @@
 """What happened while the model was evaluated: counts, seconds, failures and other facts."""
 
 from collections import Counter, defaultdict
+from collections.abc import Callable
 from dataclasses import dataclass, field
 
 from gradcheck.evaluation.protocol import Status
@@ -57,8 +58,8 @@ class Ledger:
         """Calls of the user's model, in real and complex numbers."""
         return self.calls["model"] + self.calls["complex"]
 
-    def fail(self, failure: Failure) -> None:
-        """Record a failed evaluation."""
+    def fail(self, function: str, point: Callable[[], Array], status: Status, message: str) -> None:
+        """Record a failed evaluation; `point` makes the point where it is kept."""
         self.failed += 1
         if len(self.failures) < FAILURES_KEPT:
-            self.failures.append(failure)
+            self.failures.append(Failure(function=function, point=point(), status=status, message=message))

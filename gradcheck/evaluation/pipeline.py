@@ -1,8 +1,8 @@
 """The layers between a gate and the user's functions, and their order."""
 
+import math
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
-from itertools import islice
 from typing import Any
 
 import numpy as np
@@ -14,12 +14,13 @@ from gradcheck.evaluation.cache import cached
 from gradcheck.evaluation.calls import Call, Engine, Outcome
 from gradcheck.evaluation.evaluator import Evaluator
 from gradcheck.evaluation.ledger import Ledger
-from gradcheck.evaluation.protocol import Gate, Reply, Request, Status, points_of
+from gradcheck.evaluation.moves import BATCH_BYTES, Moves
+from gradcheck.evaluation.protocol import Gate, Reply, Request, Status
 from gradcheck.problem.subject import Subject
 from gradcheck.records.arrays import Array
 
-#: Points handed to the layers at once take about so much memory.
-BATCH_BYTES = 32_000_000
+#: Points of one call, and about as many handed to the layers at once.
+POINTS_AT_ONCE = 16_384
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -104,57 +105,67 @@ def open_session(subject: Subject, *, budget: int | None = None, time_limit: flo
     """
     ledger = Ledger(notices=list(subject.layout.notices))
     evaluator = Evaluator(subject, ledger)
-    engine = cached(budgeted(evaluator, ledger, evaluations_of(budget), seconds_of(time_limit)))
+    engine = cached(budgeted(evaluator, ledger, evaluations_of(budget), seconds_of(time_limit)), subject.start)
     return Session(subject, gate_over(engine, subject, evaluator), ledger, evaluator)
 
 
 def gate_over(engine: Engine, subject: Subject, evaluator: Evaluator) -> Gate:
-    """The gate: requests in, one call per point (one per sweep for AD), replies out."""
+    """The gate: requests in, calls of many points each (of one per sweep for AD), replies out."""
+
+    def width(request: Request) -> int:
+        return math.prod(evaluator.shapes.get(request.function, (1,)))
 
     def gate(requests: Sequence[Request]) -> list[Reply]:
-        calls = (call for request in requests for call in _calls_of(request, subject))
-        outcomes = _in_batches(engine, calls, subject.layout.size)
-        replies = []
-        for request in requests:
-            own = list(islice(outcomes, _count_of(request)))
-            width = int(np.prod(evaluator.shapes.get(request.function, (1,)), dtype=int))
-            replies.append(_reply(request, own, width, subject.layout.size))
-        return replies
+        calls = (
+            (place, call)
+            for place, request in enumerate(requests)
+            for call in _calls_of(request, subject, most=_most_points(width(request)))
+        )
+        outcomes: list[list[tuple[int, Outcome]]] = [[] for _ in requests]
+        for batch in _batches(calls):
+            for (place, call), outcome in zip(batch, engine([call for _, call in batch]), strict=True):
+                outcomes[place].append((len(call), outcome))
+        return [_reply(request, own, width(request), subject) for request, own in zip(requests, outcomes, strict=True)]
 
     return gate
 
 
-def _in_batches(engine: Engine, calls: Iterator[Call], size: int) -> Iterator[Outcome]:
-    """Outcomes of all calls, made in batches: a request may stand for more points than fit into the memory."""
-    most = max(64, BATCH_BYTES // (8 * size))
-    while batch := list(islice(calls, most)):
-        yield from engine(batch)
+def _most_points(width: int) -> int:
+    """Points of one call: few where each gives many numbers."""
+    return max(1, min(POINTS_AT_ONCE, BATCH_BYTES // (8 * width)))
 
 
-def _count_of(request: Request) -> int:
-    return request.offsets.size if request.source == "model" else 1
+def _batches(calls: Iterator[tuple[int, Call]]) -> Iterator[list[tuple[int, Call]]]:
+    """Calls that are handed to the layers together: what one request asks for may be more than fits into the memory."""
+    batch: list[tuple[int, Call]] = []
+    points = 0
+    for place, call in calls:
+        batch.append((place, call))
+        points += len(call)
+        if points >= POINTS_AT_ONCE:
+            yield batch
+            batch, points = [], 0
+    if batch:
+        yield batch
 
 
-def _calls_of(request: Request, subject: Subject) -> Iterator[Call]:
+def _calls_of(request: Request, subject: Subject, most: int) -> Iterator[Call]:
     run = subject.targets[request.function].run
+    moves = Moves.of(request)
     if request.source == "model":
-        for row in range(len(request.directions)):
-            for point in points_of(request, row):
-                yield Call(
-                    run=run, point=point, arithmetic=request.arithmetic, level=request.level, fresh=request.fresh
-                )
+        for first in range(0, len(moves), most):
+            part = moves[first : first + most]
+            yield Call(run=run, moves=part, arithmetic=request.arithmetic, level=request.level, fresh=request.fresh)
         return
-    rows = None
-    if not request.source.startswith("claim:"):
-        rows = _rows_of(request, subject.layout.size)
+    claim = request.source.startswith("claim:")
     yield Call(
         run=run,
         function=request.function,
-        point=np.array(request.base, dtype=float),
+        moves=Moves(np.array(request.base, dtype=float), np.zeros(1, np.intp), np.zeros(1, np.intp), np.zeros(1)),
         arithmetic=request.arithmetic,
         source=request.source,
         fresh=request.fresh,
-        rows=rows,
+        rows=None if claim else _rows_of(request, subject.layout.size),
     )
 
 
@@ -166,26 +177,32 @@ def _rows_of(request: Request, size: int) -> NDArray[Any]:
     return rows
 
 
-def _reply(request: Request, outcomes: Sequence[Outcome], width: int, size: int) -> Reply:
+def _reply(request: Request, outcomes: Sequence[tuple[int, Outcome]], width: int, subject: Subject) -> Reply:
     name = request.function
-    spent = sum(outcome.spent for outcome in outcomes)
     if request.source != "model":
-        outcome = outcomes[0]
-        status = int(outcome.status.get(name, Status.REFUSED))
-        rows = len(request.directions)
-        if name in outcome.values:
-            values = outcome.values[name]
-            # A claim is one matrix (m, n), not one row per direction.
-            values = values[None] if request.source.startswith("claim:") else values[:, None, :]
-        else:
-            values = np.full((rows, 1, size if request.arithmetic == "vjp" else width), np.nan)
-        return Reply(values=values, status=np.full(values.shape[:2], status, dtype=np.int8), spent=spent)
+        return _derivative_reply(request, outcomes[0][1], width, subject.layout.size)
     d, k = request.offsets.shape
-    kind = complex if request.arithmetic == "complex" else float
-    flat = np.full((d * k, width), np.nan, dtype=kind)
-    status_flat = np.empty(d * k, dtype=np.int8)
-    for i, outcome in enumerate(outcomes):
-        status_flat[i] = outcome.status.get(name, Status.REFUSED)
+    values = np.full((d * k, width), np.nan, dtype=complex if request.arithmetic == "complex" else float)
+    status = np.full(d * k, Status.REFUSED, dtype=np.int8)
+    first = 0
+    for size, outcome in outcomes:
+        part = slice(first, first + size)
+        if name in outcome.status:
+            status[part] = outcome.status[name]
         if name in outcome.values:
-            flat[i] = outcome.values[name]
-    return Reply(values=flat.reshape(d, k, width), status=status_flat.reshape(d, k), spent=spent)
+            values[part] = outcome.values[name]
+        first += size
+    spent = sum(outcome.spent for _, outcome in outcomes)
+    return Reply(values=values.reshape(d, k, width), status=status.reshape(d, k), spent=spent)
+
+
+def _derivative_reply(request: Request, outcome: Outcome, width: int, size: int) -> Reply:
+    name = request.function
+    status = int(outcome.status[name][0]) if name in outcome.status else int(Status.REFUSED)
+    if name in outcome.values:
+        values = outcome.values[name][0].copy()
+        # A claim is one matrix (m, n), not one row per direction.
+        values = values[None] if request.source.startswith("claim:") else values[:, None, :]
+    else:
+        values = np.full((len(request.directions), 1, size if request.arithmetic == "vjp" else width), np.nan)
+    return Reply(values=values, status=np.full(values.shape[:2], status, dtype=np.int8), spent=outcome.spent)

@@ -93,18 +93,3 @@ class Reply:
 
 Inquiry: TypeAlias = Generator[Request, Reply, Result]
 Gate: TypeAlias = Callable[[Sequence[Request]], Sequence[Reply]]
-
-
-def points_of(request: Request, row: int) -> NDArray[Any]:
-    """(k, n): the points of one direction of a request, made one direction at a time.
-
-    Coordinate directions change one entry only; the sum is rounded once, so ``base + offset`` is the point where the
-    model is called. Algorithms choose offsets such that nothing is rounded, or compute the displacement realised.
-    """
-    offsets = request.offsets[row]
-    points = np.repeat(request.base[None, :].astype(offsets.dtype), offsets.size, axis=0)
-    if request.directions.ndim == 1:
-        points[:, int(request.directions[row])] += offsets
-    else:
-        points += offsets[:, None] * request.directions[row][None, :]
-    return points

@@ -8,7 +8,7 @@ from gradcheck.evaluation.protocol import Directions, Inquiry, Request
 from gradcheck.health.curve_branches import roundoff_branch, truncation_branch
 from gradcheck.records.arrays import Array
 from gradcheck.records.estimate import Branch
-from gradcheck.witnesses.difference_track import REASONS
+from gradcheck.witnesses.difference_reasons import REASONS
 from gradcheck.witnesses.finite_difference import finite_difference
 from gradcheck.witnesses.ladder import Nature
 from gradcheck.witnesses.polynomial_fit import ROUNDING

@@ -99,7 +99,7 @@ def _wrong_values(function: Any, options: dict[str, Any]) -> Iterator[str]:
     from gradcheck.claims.policy import Policy, Rules
     from gradcheck.problem.subject import subjects_of_function
 
-    about_model = ("wrt", "output", "bounds", "names", "typical")
+    about_model = ("wrt", "output", "bounds", "names", "typical", "batched")
     try:
         Policy.of(**{name: options[name] for name in ("on_refuted", "on_undecided") if name in options})
         Rules.of(options.get("rel_tol"), options.get("abs_tol", 0.0), options.get("witnesses"))

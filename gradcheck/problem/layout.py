@@ -81,6 +81,8 @@ class Leaf:
         """Name of the entry at `index` of the whole vector."""
         if not self.shape:
             return self.path
+        if len(self.shape) == 1:
+            return f"{self.path}[{index - self.start}]"
         inner = np.unravel_index(index - self.start, self.shape)
         return f"{self.path}[{', '.join(str(int(i)) for i in inner)}]"
 

@@ -42,7 +42,10 @@ class Target:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Subject:
-    """What a verb works on: the callables, the functions by name, the layout of x, the start point and the domain."""
+    """What a verb works on: the callables, the functions by name, the layout of x, the start point and the domain.
+
+    Where `batched`, the callables take many points at once: ``(k, n)``, or ``(k,)`` where x is one number.
+    """
 
     name: str
     runs: Mapping[str, Callable[..., Any]]
@@ -51,6 +54,7 @@ class Subject:
     start: Array
     domain: Domain
     units: tuple[str, ...] = ()
+    batched: bool = False
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -69,6 +73,7 @@ def subjects_of_function(
     names: Any = None,
     typical: Any = None,
     integer: Any = None,
+    batched: Any = False,
 ) -> list[Subject]:
     """One subject per point of `at`.
 
@@ -86,10 +91,13 @@ def subjects_of_function(
     name = "model" if name == "<lambda>" else name
     target = Target(name=name, run=name, pick=output, claims=_given_claims(claims))
     subjects = []
+    signature = _signature(function)
     for point in each:
-        layout, start = layout_of(point, root=_root(function), wrt=wrt, function=function)
+        layout, start = layout_of(point, root=_root(signature), wrt=wrt, function=function)
         layout = _named(layout, names)
-        _refuse_other_arguments(function, layout, start)
+        _refuse_other_arguments(function, signature, layout, start)
+        if batched:
+            _refuse_no_batch(batched, layout)
         subjects.append(
             Subject(
                 name=name,
@@ -98,6 +106,7 @@ def subjects_of_function(
                 layout=layout,
                 start=frozen(start),
                 domain=domain_of(start, bounds=bounds, typical=typical, integer=integer),
+                batched=bool(batched),
             )
         )
     return subjects
@@ -118,7 +127,7 @@ def subject_of_problem(problem: Problem) -> Subject:
         runs[run] = callable_of_run
         targets[name] = _target(name, run, function)
     for each in runs.values():
-        _refuse_other_arguments(each, layout, start)
+        _refuse_other_arguments(each, _signature(each), layout, start)
     domain = domain_of(
         start,
         bounds=[(variable.lower, variable.upper) for variable in variables],
@@ -171,24 +180,38 @@ def _named(layout: Layout, names: Any) -> Layout:
     return Layout(layout.template, layout.leaves, layout.notices, names)
 
 
-def _root(function: Any) -> str:
-    """What to call the vector in names of entries: the model's own first parameter."""
+def _refuse_no_batch(batched: Any, layout: Layout) -> None:
+    if not isinstance(batched, bool | np.bool_):
+        raise UsageError(f"batched is {batched!r}; give True for a model that takes many points at once, or False")
+    if layout.single is None or len(layout.single.shape) > 1:
+        held = "several parts" if layout.single is None else f"an array of shape {layout.single.shape}"
+        raise UsageError(
+            f"batched=True needs a model of one array (n,), which it then takes as (k, n), or of one number; `at` is "
+            f"{held}: wrap the model so that it takes one flat array, or leave batched out"
+        )
+
+
+def _signature(function: Any) -> inspect.Signature | None:
+    """What the model takes, where Python knows."""
     try:
-        return next(iter(inspect.signature(function).parameters))
-    except (TypeError, ValueError, StopIteration):
-        return "x"
+        return inspect.signature(function)
+    except (TypeError, ValueError):
+        return None
 
 
-def _refuse_other_arguments(function: Any, layout: Layout, start: Array) -> None:
+def _root(signature: inspect.Signature | None) -> str:
+    """What to call the vector in names of entries: the model's own first parameter."""
+    return "x" if signature is None else next(iter(signature.parameters), "x")
+
+
+def _refuse_other_arguments(function: Any, signature: inspect.Signature | None, layout: Layout, start: Array) -> None:
     """A model that cannot take these arguments is told here, with its signature, instead of by a traceback."""
     if inspect.isclass(function):
         raise UsageError(
             f"the model is the class {function.__name__}; pass an instance that can be called, or one of its methods: "
             f"{function.__name__}(...).method"
         )
-    try:
-        signature = inspect.signature(function)
-    except (TypeError, ValueError):
+    if signature is None:
         return
     positional, keywords = layout.restore(start)
     try:

@@ -139,13 +139,15 @@ class _Rounds:
         offsets = self._realised(rows, meant)
         reply = yield Request(base=self.base, directions=self.directions[rows], offsets=offsets)
         self.spent += reply.spent
+        finite, refused = reply.finite, np.any(reply.status == Status.REFUSED, axis=1)
+        works = np.all(finite, axis=1)
         fitted = []
         for i, track in enumerate(tracks):
             track.half = float(half[i])
-            if (reply.status[i] == Status.REFUSED).any():
+            if refused[i]:
                 track.stop(SPENT)
-            elif not reply.finite[i].all():
-                track.after_failure(*_failed_sides(reply.finite[i], meant[i]))
+            elif not works[i]:
+                track.after_failure(*_failed_sides(finite[i], meant[i]))
             else:
                 self._store(track, name, known, reply.values[i], sign * (offsets[i] - meant[i]))
                 fitted.append(i)
@@ -196,11 +198,13 @@ class _Rounds:
         up, down = reply.values[:, :r], reply.values[:, r:]
         realised = sign * offsets[:, :r] if side else (offsets[:, :r] - offsets[:, r:]) / 2
         rungs = read_ladder(realised, up, down, self.centre, np.full(rows.size, side != 0), slope)
+        finite, refused = reply.finite, np.any(reply.status == Status.REFUSED, axis=1)
+        works = np.all(finite, axis=1)
         for i, track in enumerate(tracks):
-            if (reply.status[i] == Status.REFUSED).any():
+            if refused[i]:
                 track.stop(SPENT)
-            elif not reply.finite[i].all():
-                track.after_failure(*_failed_sides(reply.finite[i], offsets[i]))
+            elif not works[i]:
+                track.after_failure(*_failed_sides(finite[i], offsets[i]))
             else:
                 track.after_ladder(rungs, i, self.centre == 0)
 

@@ -12,7 +12,7 @@ from click.testing import CliRunner
 from scipy import optimize
 
 import gradcheck
-from benchmarks import estimator, scan, second_derivatives, solver_steps
+from benchmarks import cost, estimator, scan, second_derivatives, solver_steps
 from benchmarks.__main__ import BENCHMARKS, main
 from benchmarks.corpus import CASES, Case, exactly
 from benchmarks.figures import Figure, side_by_side
@@ -285,3 +285,31 @@ def test_steps_without_advice_are_counted() -> None:
     samples = solver_steps.measure(lambda function, x: None, FEW[:1], points=1)
 
     assert next(f.value for f in solver_steps.figures(samples) if f.name == "without advice, %") == 100
+
+
+def test_the_cost_of_our_own_stands_beside_that_of_ten_lines(monkeypatch: pytest.MonkeyPatch) -> None:
+    scenes = (cost.Scene(model="1 µs", n=3, verb="check"), cost.Scene(model="vectorised", n=3, verb="estimate"))
+    monkeypatch.setattr(cost, "SCENES", scenes)
+
+    table = cost.run(1, 0)
+
+    assert [line.split("  ")[0] for line in table.splitlines()[2:]] == [
+        "check, n = 3, 1 µs",
+        "estimate, n = 3, vectorised",
+    ]
+
+
+def test_a_watched_model_counts_points_and_not_calls() -> None:
+    model = cost.Watched(cost.chain)
+    model(np.ones((5, 3)))
+    model(np.ones(3))
+
+    assert model.evaluations == 6
+
+
+@pytest.mark.parametrize("lines", [cost.by_hand, cost.by_hand_at_once])
+def test_the_ten_lines_tell_right_from_wrong(lines: Any) -> None:
+    x = np.array([0.3, 1.2, 0.7])
+
+    assert lines(cost.Watched(cost.chain), x, cost.chain_gradient)
+    assert not lines(cost.Watched(cost.chain), x, cost.double)

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.exceptions import ComplexWarning
 from numpy.typing import NDArray
 
+from gradcheck.evaluation.moves import Moves
 from gradcheck.problem.layout import Layout
 
 #: What cannot hold an imaginary part of 1e-20 beside a real part of 1.
@@ -17,6 +18,33 @@ _SHORT = (np.complex64, np.float32, np.float16)
 
 class LostImaginaryPart(ArithmeticError):
     """The model does not carry an imaginary part through: it returned single precision or no array of numbers."""
+
+
+def sender(
+    function: Callable[..., Any], layout: Layout, moves: Moves, *, batched: bool = False
+) -> Callable[[Any], Any]:
+    """What calls `function` at the complex points of `moves`; it receives its own copy, and may discard no imaginary
+    part.
+
+    Parameters
+    ----------
+    function : callable
+    layout : Layout
+    moves : Moves
+    batched : bool
+        Whether the function takes all points at once, ``(k, n)``, or ``(k,)`` where x is one number.
+    """
+
+    def at_once(part: slice) -> Any:
+        points = moves[part].points()
+        single = layout.single
+        with _nothing_discarded():
+            return function(points[:, 0].copy() if single is not None and single.scalar else points)
+
+    def one_by_one(i: int) -> Any:
+        return call(function, layout, moves.point(i))
+
+    return at_once if batched else one_by_one
 
 
 def call(function: Callable[..., Any], layout: Layout, vector: NDArray[np.complex128]) -> Any:

@@ -1,13 +1,95 @@
 """How x and f travel in ordinary floating-point numbers."""
 
 from collections.abc import Callable
-from typing import Any
+from typing import Any, TypeAlias
 
 import numpy as np
 
 from gradcheck.errors import UsageError
+from gradcheck.evaluation.moves import Moves, same_content
 from gradcheck.problem.layout import Layout, Leaf
 from gradcheck.records.arrays import Array
+
+#: Calls the model at the point of this number, or at all points at once.
+Sender: TypeAlias = Callable[[Any], Any]
+
+
+def sender(
+    function: Callable[..., Any], layout: Layout, moves: Moves, mutated: Callable[[], None], *, batched: bool = False
+) -> Sender:
+    """What calls `function` at the points of `moves`, and calls `mutated` where it wrote into its input.
+
+    The function always receives arrays of its own, so nothing it does to x reaches anybody else.
+
+    Parameters
+    ----------
+    function : callable
+    layout : Layout
+    moves : Moves
+    mutated : callable
+    batched : bool
+        Whether the function takes all points at once, ``(k, n)``, or ``(k,)`` where x is one number.
+    """
+    single = layout.single
+    if single is not None and batched:
+        return _at_once(function, single, moves, mutated)
+    if single is not None and single.scalar:
+        return _with_number(function, moves)
+    if single is not None and moves.along_axes and single.shape:
+        return _with_one_entry_moved(function, single, moves, mutated)
+
+    def send(i: int) -> Any:
+        result, written = call(function, layout, moves.point(i))
+        if written:
+            mutated()
+        return result
+
+    return send
+
+
+def _with_number(function: Callable[..., Any], moves: Moves) -> Sender:
+    numbers = moves.entries()[1].tolist() if moves.along_axes else moves.points()[:, 0].tolist()
+    return lambda i: function(numbers[i])
+
+
+def _with_one_entry_moved(
+    function: Callable[..., Any], leaf: Leaf, moves: Moves, mutated: Callable[[], None]
+) -> Sender:
+    entries, values = moves.entries()
+    numbers = values.tolist()
+    places: list[Any] = entries.tolist()
+    if len(leaf.shape) != 1:
+        places = list(zip(*(index.tolist() for index in np.unravel_index(entries, leaf.shape)), strict=True))
+    base = moves.base.reshape(leaf.shape)
+    # A second picture of what the model receives, for the comparison afterwards: one entry is set, and set back.
+    content = bytearray(base.tobytes())
+    picture = np.frombuffer(content).reshape(leaf.shape)
+
+    def send(i: int) -> Any:
+        place, number = places[i], numbers[i]
+        x = base.copy()
+        x[place] = number
+        result = function(x)
+        picture[place] = number
+        if not same_content(content, x):
+            mutated()
+        picture[place] = base[place]
+        return result
+
+    return send
+
+
+def _at_once(function: Callable[..., Any], leaf: Leaf, moves: Moves, mutated: Callable[[], None]) -> Sender:
+    def send(part: slice) -> Any:
+        points = moves[part].points()
+        points = points[:, 0].copy() if leaf.scalar else points
+        content = bytearray(points.data)
+        result = function(points)
+        if not same_content(content, points):
+            mutated()
+        return result
+
+    return send
 
 
 def call(function: Callable[..., Any], layout: Layout, vector: Array) -> tuple[Any, bool]:
@@ -25,7 +107,7 @@ def call(function: Callable[..., Any], layout: Layout, vector: Array) -> tuple[A
 
     positional, keywords = layout.arguments(copy)
     result = function(*positional, **keywords)
-    mutated = any(not (part.ravel() == vector[leaf.start : leaf.stop]).all() for leaf, part in passed)
+    mutated = any(not same_content(bytearray(vector[leaf.start : leaf.stop].data), part) for leaf, part in passed)
     return result, mutated
 
 
