@@ -4,7 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from gradcheck.health import fingerprints
+from gradcheck.witnesses import fingerprints
 from gradcheck.health.line_focus import Focus
 from gradcheck.health.line_noise import STENCIL_POINTS, STENCIL_SPACING, StencilReading, read_stencil, stencil
 from gradcheck.health.line_plateaus import as_staircase, levels, risers, single_step

@@ -5,7 +5,7 @@ import math
 import numpy as np
 import pytest
 
-from gradcheck.health.fingerprints import crosses_a_single, decimal_lattice, single_precision
+from gradcheck.witnesses.fingerprints import crosses_a_single, decimal_lattice, single_precision
 from gradcheck.health.line_cells import difference_weights, hidden_jumps
 from gradcheck.health.line_noise import read_stencil, stencil
 from gradcheck.health.line_one_sided import one_sided

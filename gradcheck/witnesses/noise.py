@@ -1,0 +1,370 @@
+"""The noise of a model's values along directions: how large it is, and of which kind.
+
+Sixteen values around the point are fitted by polynomials; the interval shrinks until the coefficients end in a sample
+that does not decay. A difference table of equally spaced values, much closer together, says whether the same noise is
+there on a smaller scale, and adds to the sample. Where the noise is above rounding, seven values closer than the steps
+of single precision tell what is noise at every scale from what is smooth from close by: steps, the teeth of a truncated
+iteration, or no noise at all but a wave too fast for the first look. The point itself is evaluated again, at once and
+after other points. The digits of all values are read.
+
+Sources: Hamming's difference tables and the rule of Moré & Wild 2011 (`difference_table`); discrete orthogonal
+polynomials, Forsythe 1957 (`noise_clusters`).
+"""
+
+from collections.abc import Generator
+
+import numpy as np
+
+from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request, Status
+from gradcheck.records.arrays import Array, BoolArray, IntArray
+from gradcheck.records.noise import NoiseKind
+from gradcheck.witnesses.difference_table import difference_table
+from gradcheck.witnesses.noise_clusters import ClusterReading, beyond_cubic, read_cluster
+from gradcheck.witnesses.noise_kind import digits_of, explained_by_digits, kind_from_close_by, rounding_limit
+from gradcheck.witnesses.noise_reading import NoiseReading
+from gradcheck.witnesses.steps import Room
+
+#: Points of a cluster, spread like Chebyshev's but off any lattice, so that rounding errors are independent.
+NODES = np.cos((np.arange(16) + 0.5) * np.pi / 16) * (1.0 - 0.02 * np.abs(np.sin(1.0 + 37.0 * np.arange(16) ** 2)))
+#: Half-width of the first cluster, in units of the variable's size.
+FIRST_WIDTH = 0.0917
+#: An interval so much narrower than the variable may be hides coarse steps; then a wider one is looked at as well.
+NARROW = 0.01
+SHRINKS_MOST = 5
+WIDER_MOST = 3
+#: Spacing of the difference table, in units of the cluster's half-width, and its points besides the centre.
+TABLE_SPACING, TABLE_POINTS = 0.00377, 8
+#: Independent samples that a settled table is worth.
+TABLE_SAMPLE = 4
+#: Levels of two scales that agree within this factor are one noise.
+AGREE = 4.0
+#: Places of the finest look, and their distance in units of the variable's size.
+FINE_PLACES, FINE = np.arange(7) - 3.0 + np.array([0.11, -0.17, 0.05, 0.0, 0.13, -0.08, 0.19]), 1.37e-11
+#: The finest values are quiet if they show so much less noise.
+QUIET = 30.0
+#: A slope so much larger from close by than across the cluster belongs to a wave, not to noise.
+WAVE_STEEPNESS = 30.0
+#: The interval shrinks by this each time the model fails; after that the side where it works is tried.
+ESCAPE, ESCAPES_MOST = 1.0 / 16.0, 3
+#: Nodes of the cluster that are evaluated again, last ones first; among them the point itself.
+AGAIN = [11, NODES.size, 2]
+#: The least half-width of a cluster, in units of the grain of x: its points must not coincide.
+LEAST_GRAINS = 256.0
+#: Factors by which an interval shrinks.
+SHRINK = 0.12, 0.6
+#: Noise is a small part of how much a function varies; what is more is a wave that was not resolved.
+PART = 0.1
+#: Half-width on which a wave of that slope and of the size of the noise is surely resolved, in units of noise / slope.
+WAVE_REACH = 6.0
+#: Between its steps a rounded quantity stands still: the slope from close by misses that of the cluster by more than
+#: this share of the slope across it, and than this many times what noise does to it.
+SLOPE_MISSED, SLOPE_BLUR = 0.02, 10.0
+#: Where the finest look is, in units of the cluster's half-width.
+FINE_PLACE = 0.0041
+
+
+def noise(
+    base: Array, directions: Directions, room: Room, centre: Array, *, half: Array | None = None
+) -> Inquiry[NoiseReading]:
+    """Measure the noise of the values around a point; about 30 evaluations for one direction are usual.
+
+    Parameters
+    ----------
+    base : ndarray, shape (n,)
+    directions : ndarray
+        Coordinate indices (d,) or rows (d, n).
+    room : Room
+        How far one may step along each direction.
+    centre : ndarray, shape (m,)
+        Finite values at `base`.
+    half : ndarray, shape (d,), optional
+        Half-widths on which the values are known to follow a polynomial; NaN where nothing is known.
+
+    Returns
+    -------
+    NoiseReading
+        A kind ``not examined`` and a level NaN where the budget ended, the bounds leave no room, or the model fails
+        all around. Values that do not change at all have the level of a correct rounding.
+
+    Notes
+    -----
+    A ripple that is smooth from close by, and there much steeper than the function, is no noise but a wave. What no
+    value on the interval shows (a jump beside it, the smooth bias of a loose tolerance) is not heard.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> from gradcheck.problem.domain import domain_of
+    >>> from gradcheck.witnesses.steps import room_along
+    >>> x, along = np.array([0.7]), np.array([0])
+    >>> inquiry = noise(x, along, room_along(x, along, domain_of(x)), np.sin(x))
+    >>> next(inquiry).offsets.tolist()  # the point itself, twice
+    [[0.0, 0.0]]
+    """
+    return (yield from _Listening(base, directions, room, centre, half).run())
+
+
+class _Listening:
+    """The rounds of one inquiry; all directions go through them together. Arrays are (d,) or (d, m)."""
+
+    def __init__(self, base: Array, directions: Directions, room: Room, centre: Array, half: Array | None) -> None:
+        self.base, self.directions, self.room, self.centre = base, directions, room, centre
+        shape = len(directions), centre.size
+        narrow, roomier = np.minimum(room.below, room.above), np.maximum(room.below, room.above)
+        wanted = FIRST_WIDTH * room.scale
+        if half is not None:
+            wanted = np.where(np.isfinite(half) & (half > 0), half, wanted)
+        both = narrow >= 0.1 * np.minimum(wanted, roomier)
+        self.side = np.where(both, 0, np.where(room.above >= room.below, 1, -1))
+        self.sign = np.where(room.above >= room.below, 1.0, -1.0)
+        self.reach = np.where(both, narrow, roomier)
+        self.half = np.minimum(wanted, self.reach)
+        self.alive = self.half > LEAST_GRAINS * room.grain
+        self.escapes = np.zeros(shape[0], dtype=np.intp)
+        self.offsets = np.zeros((shape[0], NODES.size + 1))
+        self.values = np.tile(centre, (shape[0], NODES.size + 1, 1))
+        self.level, self.width = np.full(shape, np.nan), np.full(shape, np.nan)
+        self.slope, self.variation, self.sample = np.zeros(shape), np.zeros(shape), np.zeros(shape)
+        self.largest = np.tile(np.abs(centre), (shape[0], 1))
+        self.fine_slope, self.quiet = np.zeros(shape), np.zeros(shape, bool)
+        self.apart = np.full(shape[1], np.nan)
+        self.heard: list[list[Array]] = [[centre[None, :]] for _ in range(shape[0])]
+        self.spent = 0
+
+    def run(self) -> Generator[Request, Reply, NoiseReading]:
+        yield from self._repeated(0, np.zeros(2), np.tile(self.centre, (2, 1)))
+        yield from self._clusters(np.tile(self.alive[:, None], (1, self.centre.size)), SHRINKS_MOST)
+        yield from self._wider()
+        yield from self._tables()
+        yield from self._close_by()
+        yield from self._waves()
+        if self.alive.any():
+            row = int(np.argmax(self.alive))
+            yield from self._repeated(row, self.offsets[row, AGAIN], self.values[row, AGAIN])
+        return self._reading()
+
+    # --- asking ----------------------------------------------------------------------------------------------------
+
+    def _ask(self, rows: IntArray, offsets: Array, *, fresh: bool = False) -> Generator[Request, Reply, Reply]:
+        """Values at offsets (d, k); a direction that is refused is not asked about again."""
+        reply = yield Request(base=self.base, directions=self.directions[rows], offsets=offsets, fresh=fresh)
+        self.spent += reply.spent
+        self.alive[rows[(reply.status == Status.REFUSED).any(axis=1)]] = False
+        return reply
+
+    def _realised(self, rows: IntArray, offsets: Array) -> Array:
+        """Displacements as rounding leaves them, for coordinates."""
+        if self.directions.ndim == 2:
+            return offsets
+        x = self.base[self.directions[rows]][:, None]
+        return np.asarray((x + offsets) - x)
+
+    def _repeated(self, row: int, offsets: Array, before: Array) -> Generator[Request, Reply, None]:
+        """Evaluate again, without any cache, what gave the values `before`."""
+        reply = yield from self._ask(np.array([row]), offsets[None, :], fresh=True)
+        answered = reply.status[0] != Status.REFUSED
+        if answered.any():
+            with np.errstate(invalid="ignore"):
+                gaps = np.where(reply.values[0] == before, 0.0, np.abs(reply.values[0] - before))
+            self.apart = np.fmax(self.apart, np.nan_to_num(gaps[answered], nan=0.0).max(axis=0))
+
+    # --- clusters --------------------------------------------------------------------------------------------------
+
+    def _clusters(self, waiting: BoolArray, shrinks: int) -> Generator[Request, Reply, None]:
+        """Clusters on shrinking intervals until the outputs that wait (d, m) have their sample."""
+        waiting = waiting.copy()
+        for _ in range(shrinks + ESCAPES_MOST):
+            rows = np.flatnonzero(waiting.any(axis=1) & self.alive)
+            if rows.size == 0:
+                return
+            rows = yield from self._cluster(rows, self.half[rows])
+            if rows.size == 0:
+                continue
+            reading = self._read(rows)
+            taken = waiting[rows] & reading.settled
+            self._take(rows, reading, taken)
+            waiting[rows] &= ~taken
+            self._shrink(rows, reading, waiting[rows])
+
+    def _cluster(self, rows: IntArray, half: Array, *, escape: bool = True) -> Generator[Request, Reply, IntArray]:
+        """Values on clusters of these half-widths; the directions that have all of them."""
+        side = self.side[rows, None]
+        nodes = np.where(side == 0, NODES, side * (1.0 + NODES) / 2.0)
+        offsets = self._realised(rows, half[:, None] * nodes)
+        reply = yield from self._ask(rows, offsets)
+        whole = np.asarray(reply.finite.all(axis=1))
+        for place, row in enumerate(rows):
+            if whole[place]:
+                self.offsets[row, :-1], self.values[row, :-1] = offsets[place], reply.values[place]
+                self.heard[row].append(reply.values[place])
+            elif escape:
+                self._escape(int(row), reply.finite[place], offsets[place])
+        self.largest[rows[whole]] = np.abs(self.values[rows[whole]]).max(axis=1)
+        return rows[whole]
+
+    def _escape(self, row: int, finite: BoolArray, offsets: Array) -> None:
+        """The model failed at some node: a smaller interval, then the side where it works."""
+        self.escapes[row] += 1
+        self.half[row] *= ESCAPE
+        failed = [bool((~finite & (offsets * sign > 0)).any()) for sign in (-1, 1)]
+        if self.escapes[row] == ESCAPES_MOST - 1 and self.side[row] == 0 and failed[0] != failed[1]:
+            self.side[row] = 1 if failed[0] else -1
+            self.sign[row] = self.side[row]
+            self.half[row] = min(FIRST_WIDTH * self.room.scale[row], self.reach[row])
+        elif self.escapes[row] > ESCAPES_MOST:
+            self.alive[row] = False
+
+    def _take(self, rows: IntArray, reading: ClusterReading, taken: BoolArray) -> None:
+        width = np.broadcast_to(self.half[rows, None], taken.shape)
+        found = reading.level, reading.sample, reading.variation, width, reading.slope / width
+        for mine, new in zip((self.level, self.sample, self.variation, self.width, self.slope), found, strict=True):
+            mine[rows] = np.where(taken, new, mine[rows])
+
+    def _shrink(self, rows: IntArray, reading: ClusterReading, waiting: BoolArray) -> None:
+        """Smaller intervals where a sample is missing, as if what is left over decayed with the degree of the fit."""
+        floor = np.spacing(reading.largest)
+        ratio = np.clip((floor / np.maximum(reading.tail, floor)) ** (1 / 13), *SHRINK)
+        ratio = np.where(waiting, ratio, 1.0).min(axis=1)
+        self.half[rows] *= ratio
+        self.alive[rows] &= self.half[rows] > LEAST_GRAINS * self.room.grain[rows]
+
+    def _wider(self) -> Generator[Request, Reply, None]:
+        """Where the variable is tiny and its size unknown, an interval as wide as it may be shows coarse steps."""
+        wide = np.minimum(FIRST_WIDTH * self.room.widest, self.reach)
+        rounded = (self.level <= self._limit()).any(axis=1)
+        rows = np.flatnonzero(self.alive & rounded & (self.half < NARROW * wide))
+        if rows.size == 0:
+            return
+        narrow, waiting = self.half.copy(), np.zeros_like(self.quiet)
+        waiting[rows] = True
+        self.half[rows] = wide[rows]
+        for _ in range(WIDER_MOST):
+            rows = yield from self._cluster(rows, self.half[rows], escape=False)
+            if rows.size == 0:
+                break
+            reading = self._read(rows)
+            # A wave that is far too fast for so wide a look leaves nothing but noise.
+            louder = (reading.level > AGREE * self.level[rows]) & (reading.level < PART * reading.variation)
+            self._take(rows, reading, waiting[rows] & reading.settled & louder)
+            waiting[rows] &= ~reading.settled
+            self._shrink(rows, reading, waiting[rows])
+            rows = rows[waiting[rows].any(axis=1)]
+        heard_wide = self.width > AGREE * narrow[:, None]
+        self.half = np.where(heard_wide.any(axis=1), np.where(heard_wide, self.width, 0.0).max(axis=1), narrow)
+
+    def _read(self, rows: IntArray) -> ClusterReading:
+        half = self.half[rows]
+        return read_cluster(self.offsets[rows] / half[:, None], self.values[rows], self.sign[rows] * FINE_PLACE)
+
+    # --- closer looks ----------------------------------------------------------------------------------------------
+
+    def _tables(self) -> Generator[Request, Reply, None]:
+        """A difference table on a smaller scale: one more sample where it hears the same."""
+        rows = np.flatnonzero(self.alive)
+        if rows.size == 0:
+            return
+        spacing = TABLE_SPACING * self.half[rows]
+        offsets = self._realised(rows, self.sign[rows, None] * spacing[:, None] * np.arange(1, TABLE_POINTS + 1))
+        reply = yield from self._ask(rows, offsets)
+        for row, values, whole in zip(rows, reply.values, reply.finite.all(axis=1), strict=True):
+            if whole:
+                self.heard[row].append(values)
+                found = difference_table(np.concatenate([self.centre[None, :], values])).level
+                self._pool(int(row), found, float(spacing[0]) * TABLE_POINTS)
+
+    def _pool(self, row: int, found: Array, width: float) -> None:
+        mine, sample = self.level[row], self.sample[row]
+        with np.errstate(invalid="ignore"):
+            same = (found < AGREE * mine) & (mine < AGREE * found)
+            both = np.sqrt((sample * mine**2 + TABLE_SAMPLE * found**2) / (sample + TABLE_SAMPLE))
+        alone = np.isnan(mine) & np.isfinite(found)
+        self.width[row] = np.where(alone, width, self.width[row])
+        self.variation[row] = np.where(alone, np.ptp(self.values[row], axis=0), self.variation[row])
+        self.level[row] = np.where(alone, found, np.where(same, both, mine))
+
+    def _close_by(self) -> Generator[Request, Reply, None]:
+        """Values closer than the steps of single precision, where the noise is above rounding."""
+        with np.errstate(invalid="ignore"):
+            loud = self.level > self._limit()
+        rows = np.flatnonzero(self.alive & loud.any(axis=1))
+        if rows.size == 0:
+            return
+        spacing = np.maximum(FINE * self.room.scale[rows], 16.0 * self.room.grain[rows])
+        middle = np.maximum(FINE_PLACE * self.half[rows], 8.0 * spacing)
+        offsets = self.sign[rows, None] * (middle[:, None] + spacing[:, None] * FINE_PLACES)
+        offsets = self._realised(rows, offsets)
+        reply = yield from self._ask(rows, offsets)
+        for row, t, values, whole in zip(rows, offsets, reply.values, reply.finite.all(axis=1), strict=True):
+            if whole and np.unique(t).size == t.size:
+                level, self.fine_slope[row] = beyond_cubic(t, values)
+                self.quiet[row] = level * QUIET < self.level[row]
+
+    def _waves(self) -> Generator[Request, Reply, None]:
+        """Where the values are smooth from close by and steep there, one look at the scale of that slope decides.
+
+        Waves are smooth on it, and what the wider look took for noise was the wave; teeth of a saw are not.
+        """
+        with np.errstate(invalid="ignore", divide="ignore"):
+            steep = self.quiet & (np.abs(self.fine_slope) > WAVE_STEEPNESS * self._typical_slope())
+            reach = WAVE_REACH * self.level / np.abs(self.fine_slope)
+            waves = steep & (reach < self.width) & self.alive[:, None]
+        if not waves.any():
+            return
+        before = self.level.copy(), self.width.copy(), self.slope.copy(), self.variation.copy(), self.sample.copy()
+        rows = waves.any(axis=1)
+        half = np.where(waves, reach, np.inf).min(axis=1)
+        self.half[rows] = np.maximum(half, LEAST_GRAINS * 2 * self.room.grain)[rows]
+        self.level[waves] = np.nan
+        # Noise as large as the function itself is not to be believed before all scales have been seen.
+        whole = (before[0] > PART * before[3])[waves].all()
+        yield from self._clusters(waves, SHRINKS_MOST if whole else 1)
+        with np.errstate(invalid="ignore"):
+            still = waves & ~(self.level < before[0] / AGREE)
+        mine = self.level, self.width, self.slope, self.variation, self.sample
+        for now, then in zip(mine, before, strict=True):
+            now[still] = then[still]
+        self.quiet &= ~waves | still
+        yield from self._tables()
+
+    # --- the answer ------------------------------------------------------------------------------------------------
+
+    def _typical_slope(self) -> Array:
+        """(d, m): slope across the interval on which the noise was heard."""
+        return np.asarray(self.variation / (2 * self.width))
+
+    def _limit(self) -> Array:
+        """(d, m): noise up to here is rounding."""
+        argument = 0.3 * self.room.grain[:, None] * np.nan_to_num(self._typical_slope())
+        return rounding_limit(self.largest, argument)
+
+    def _reading(self) -> NoiseReading:
+        level, quantum = self.level.copy(), np.zeros_like(self.level)
+        kinds = []
+        for row, heard in enumerate(self.heard):
+            values = np.concatenate(heard)
+            kinds.append(tuple(self._concluded(row, output, values[:, output], level, quantum) for output in range(self.centre.size)))
+        return NoiseReading(
+            level=level, kind=tuple(kinds), width=self.width, apart=self.apart, quantum=quantum, spent=self.spent
+        )
+
+    def _concluded(self, row: int, output: int, values: Array, level: Array, quantum: Array) -> NoiseKind:
+        """The kind of one entry; its level and quantum are filled in where the digits tell them."""
+        at = row, output
+        if self.apart[output] > 0.0:
+            level[at] = np.fmax(level[at], self.apart[output] / 2.0) if np.isnan(level[at]) else level[at]
+            return NoiseKind.UNREPEATABLE
+        digits = digits_of(values)
+        quantum[at] = digits.decimal
+        explained = explained_by_digits(digits, float(level[at]), float(self.largest[at]))
+        if explained is not None:
+            kind, level[at] = explained
+            return kind
+        if np.isnan(level[at]):
+            return NoiseKind.NOT_EXAMINED
+        if level[at] <= self._limit()[at]:
+            return NoiseKind.ROUNDING
+        missed = abs(self.fine_slope[at] - self.slope[at])
+        blur = SLOPE_BLUR * level[at] / self.width[at] + SLOPE_MISSED * self._typical_slope()[at]
+        return kind_from_close_by(
+            float(level[at]), float(self.largest[at]), stands_still=bool(self.quiet[at] and missed > blur)
+        )
