@@ -7,7 +7,7 @@ import time
 import click
 
 # each has a QUESTION and a function run(points, seed) that returns its report as text
-BENCHMARKS = ("estimator", "verdicts")
+BENCHMARKS = ("estimator", "verdicts", "noise")
 
 
 @click.command()

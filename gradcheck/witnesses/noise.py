@@ -40,6 +40,8 @@ TABLE_SAMPLE = 4
 AGREE = 4.0
 #: Places of the finest look, and their distance in units of the variable's size.
 FINE_PLACES, FINE = np.arange(7) - 3.0 + np.array([0.11, -0.17, 0.05, 0.0, 0.13, -0.08, 0.19]), 1.37e-11
+#: What rounding does to the finest slope, in spacings of floating-point numbers over the width of that look.
+FINE_BLUR = 10.0
 #: The finest values are quiet if they show so much less noise.
 QUIET = 30.0
 #: A slope so much larger from close by than across the cluster belongs to a wave, not to noise.
@@ -126,7 +128,7 @@ class _Listening:
         self.level, self.width = np.full(shape, np.nan), np.full(shape, np.nan)
         self.slope, self.variation, self.sample = np.zeros(shape), np.zeros(shape), np.zeros(shape)
         self.largest = np.tile(np.abs(centre), (shape[0], 1))
-        self.fine_slope, self.quiet = np.zeros(shape), np.zeros(shape, bool)
+        self.fine_slope, self.fine_blur, self.quiet = np.zeros(shape), np.zeros(shape), np.zeros(shape, bool)
         self.apart = np.full(shape[1], np.nan)
         self.heard: list[list[Array]] = [[centre[None, :]] for _ in range(shape[0])]
         self.spent = 0
@@ -289,7 +291,8 @@ class _Listening:
         rows = np.flatnonzero(self.alive & loud.any(axis=1))
         if rows.size == 0:
             return
-        spacing = np.maximum(FINE * self.room.scale[rows], 16.0 * self.room.grain[rows])
+        size = np.maximum(self.room.scale[rows], self.half[rows] / FIRST_WIDTH)
+        spacing = np.maximum(FINE * size, 16.0 * self.room.grain[rows])
         middle = np.maximum(FINE_PLACE * self.half[rows], 8.0 * spacing)
         offsets = self.sign[rows, None] * (middle[:, None] + spacing[:, None] * FINE_PLACES)
         offsets = self._realised(rows, offsets)
@@ -297,6 +300,7 @@ class _Listening:
         for row, t, values, whole in zip(rows, offsets, reply.values, reply.finite.all(axis=1), strict=True):
             if whole and np.unique(t).size == t.size:
                 level, self.fine_slope[row] = beyond_cubic(t, values)
+                self.fine_blur[row] = FINE_BLUR * np.spacing(np.abs(values).max(axis=0)) / np.ptp(t)
                 self.quiet[row] = level * QUIET < self.level[row]
 
     def _waves(self) -> Generator[Request, Reply, None]:
@@ -305,7 +309,7 @@ class _Listening:
         Waves are smooth on it, and what the wider look took for noise was the wave; teeth of a saw are not.
         """
         with np.errstate(invalid="ignore", divide="ignore"):
-            steep = self.quiet & (np.abs(self.fine_slope) > WAVE_STEEPNESS * self._typical_slope())
+            steep = self.quiet & (np.abs(self.fine_slope) > WAVE_STEEPNESS * self._typical_slope() + self.fine_blur)
             reach = WAVE_REACH * self.level / np.abs(self.fine_slope)
             waves = steep & (reach < self.width) & self.alive[:, None]
         if not waves.any():
@@ -364,7 +368,7 @@ class _Listening:
         if level[at] <= self._limit()[at]:
             return NoiseKind.ROUNDING
         missed = abs(self.fine_slope[at] - self.slope[at])
-        blur = SLOPE_BLUR * level[at] / self.width[at] + SLOPE_MISSED * self._typical_slope()[at]
+        blur = SLOPE_BLUR * level[at] / self.width[at] + SLOPE_MISSED * self._typical_slope()[at] + self.fine_blur[at]
         return kind_from_close_by(
             float(level[at]), float(self.largest[at]), stands_still=bool(self.quiet[at] and missed > blur)
         )
