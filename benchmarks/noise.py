@@ -72,9 +72,7 @@ def by_inquiry(function: Callable[[Any], float], x: float) -> tuple[float, str]:
     """The inquiry by itself."""
     point, along = np.array([x]), np.array([0])
     room = room_along(point, along, domain_of(point))
-    reading = conduct_one(
-        noise(point, along, room, np.array([function(x)])), gate_of(lambda v: function(float(v[0])))
-    )
+    reading = conduct_one(noise(point, along, room, np.array([function(x)])), gate_of(lambda v: function(float(v[0]))))
     return float(reading.level[0, 0]), str(reading.kind[0][0])
 
 

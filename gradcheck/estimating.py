@@ -15,6 +15,7 @@ from gradcheck.records.arrays import Array
 from gradcheck.records.estimate import Estimate
 from gradcheck.report.estimate_text import estimate_text
 from gradcheck.witnesses.finite_difference import finite_difference
+from gradcheck.witnesses.noise_of_outputs import noise_beside
 from gradcheck.witnesses.steps import room_along
 from gradcheck.witnesses.testimony import Testimony
 
@@ -94,7 +95,8 @@ def estimate(
         return _finished(_second_derivatives(session, centre), session, began)
     directions = _directions(subject, direction)
     testimony = differences_along(session, directions, centre, derivative=order)
-    return _finished(_shaped(testimony, subject, session, direction is not None), session, began)
+    heard = _noise(session, directions, centre, testimony)
+    return _finished(_shaped(testimony, subject, session, direction is not None) | heard, session, began)
 
 
 def differences_along(session: Session, directions: Directions, centre: Array, *, derivative: int = 1) -> Testimony:
@@ -103,6 +105,15 @@ def differences_along(session: Session, directions: Directions, centre: Array, *
     room = room_along(subject.start, directions, subject.domain)
     inquiry = finite_difference(subject.start, directions, room, centre, derivative=derivative)
     return conduct_one(addressed(inquiry, function=subject.name), session.gate)
+
+
+def _noise(session: Session, directions: Directions, centre: Array, testimony: Testimony) -> dict[str, Any]:
+    """Level and kind of the noise; costs evaluations only where the differences met more than rounding."""
+    subject = session.subject
+    room = room_along(subject.start, directions, subject.domain)
+    inquiry = noise_beside(subject.start, directions, room, centre, testimony)
+    heard = conduct_one(addressed(inquiry, function=subject.name), session.gate)
+    return {"noise": heard.level, "noise_kind": heard.kind}
 
 
 def _directions(subject: Subject, direction: Any) -> Directions:
@@ -131,7 +142,6 @@ def _shaped(testimony: Testimony, subject: Subject, session: Session, along: boo
 
     return {
         **{field: getattr(testimony, field).T.reshape(shape) for field in ("value", "bound", "step")},
-        "noise": testimony.noise,
         "source": testimony.source,
         "reasons": {name(row, output): reason for (row, output), reason in testimony.reasons.items()},
         "names": ("direction",) if along else subject.names if subject.layout.size <= 1000 else (),
@@ -176,7 +186,7 @@ def _second_derivatives(session: Session, centre: Array) -> dict[str, Any]:
         "value": value.reshape(shape),
         "bound": bound.reshape(shape),
         "step": step.reshape(shape),
-        "noise": axes.noise,
+        **_noise(session, np.arange(n), centre, axes),
         "source": axes.source,
         "reasons": {subject.layout.name(row): reason for (row, _), reason in axes.reasons.items()},
         "names": subject.names if n <= 1000 else (),

@@ -15,6 +15,7 @@ from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
 from gradcheck.problem.subject import Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.estimate import Scan
 from gradcheck.report.scan_text import scan_text
+from gradcheck.witnesses.noise import noise
 from gradcheck.witnesses.steps import room_along
 
 #: Options of a described model that a scan understands.
@@ -48,7 +49,7 @@ def scan(
     wrt, output, bounds, names, typical
         As in `gradcheck.check`.
     budget : int, optional
-        Largest number of evaluations; about 110 are usual.
+        Largest number of evaluations; about 150 are usual.
     time_limit : float or str, optional
     seed : int
         Reserved; a scan is deterministic.
@@ -85,12 +86,15 @@ def scan(
     if max(room.below[0], room.above[0]) <= 0:
         raise UsageError(f"the bounds leave no room for a step along {label}")
     curve = conduct_one(addressed(step_curve(subject.start, directions, room, centre), function=name), session.gate)
+    heard = conduct_one(addressed(noise(subject.start, directions, room, centre), function=name), session.gate)
+    level = float(heard.level[0, 0])
     record = Scan(
         steps=curve.steps,
         values=curve.values,
         errors=curve.errors,
         best_step=float(curve.steps[curve.best]),
-        noise=float(curve.reference.noise[0]),
+        noise=level if np.isfinite(level) else float(curve.reference.noise[0]),
+        noise_kind=heard.kind[0][0],
         order=curve.order,
         value=float(curve.reference.value[0, 0]),
         bound=float(curve.reference.bound[0, 0]),

@@ -7,6 +7,7 @@ Forward: h = 8^(1/4)·sqrt(ε/|f''|) (Moré & Wild 2012, for noise of standard d
 import numpy as np
 
 from gradcheck.records.arrays import Array
+from gradcheck.records.noise import NoiseKind
 from gradcheck.records.report import Steps
 
 #: A step is never larger than this share of the variable's size: the curvature is only known near the point.
@@ -14,7 +15,13 @@ LARGEST = 0.1
 
 
 def solver_steps(
-    function: str, names: tuple[str, ...], noise: float, second: Array, third: Array, sizes: Array
+    function: str,
+    names: tuple[str, ...],
+    noise: float,
+    second: Array,
+    third: Array,
+    sizes: Array,
+    noise_kind: NoiseKind = NoiseKind.NOT_EXAMINED,
 ) -> Steps:
     """Best steps per variable.
 
@@ -28,6 +35,8 @@ def solver_steps(
         Second and third derivative along each variable; NaN where unknown.
     sizes : ndarray, shape (n,)
         Sizes of the variables.
+    noise_kind : NoiseKind
+        Passed on.
 
     Returns
     -------
@@ -49,4 +58,5 @@ def solver_steps(
         central=central,
         central_error=twist * central**2 / 6 + noise / (np.sqrt(2) * central),
         noise=noise,
+        noise_kind=noise_kind,
     )

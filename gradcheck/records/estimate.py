@@ -4,6 +4,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from gradcheck.records.arrays import Array, frozen
+from gradcheck.records.noise import NoiseKind
 from gradcheck.records.plain import plain
 
 
@@ -22,6 +23,8 @@ class Estimate:
         Half-width, in units of x, of the interval that decided each entry.
     noise : ndarray, shape (m,)
         Noise level of each output: standard deviation of an output's error, in units of f.
+    noise_kind : tuple of NoiseKind
+        Kind of noise of each output; ``not examined`` where the values taken say nothing of it.
     evaluations : int
         Calls of the model that were spent.
     source : str
@@ -36,6 +39,7 @@ class Estimate:
     noise: Array
     evaluations: int
     source: str
+    noise_kind: tuple[NoiseKind, ...] = ()
     names: tuple[str, ...] = ()
     reasons: dict[str, str]
     notices: tuple[str, ...] = ()
@@ -72,7 +76,9 @@ class Scan:
     best_step : float
         The step of the smallest estimated error.
     noise : float
-        Noise level of the model, in units of f.
+        Noise level of the model: standard deviation of a value's error, in units of f.
+    noise_kind : NoiseKind
+        Where that noise comes from.
     order : float
         Observed truncation order: slope of log(error) over log(step) on the truncation branch; NaN if there is none.
     value, bound : float
@@ -91,6 +97,7 @@ class Scan:
     bound: float
     along: str
     function: str = ""
+    noise_kind: NoiseKind = NoiseKind.NOT_EXAMINED
     evaluations: int = 0
     notices: tuple[str, ...] = ()
     text: str = ""

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from gradcheck.records.advice import Advice
 from gradcheck.records.arrays import Array, frozen
 from gradcheck.records.finding import Finding
+from gradcheck.records.noise import NoiseKind
 from gradcheck.records.plain import plain
 from gradcheck.records.verdict import DiagnosisCode, Verdict
 
@@ -161,7 +162,8 @@ class Steps:
     """Best steps for the user's own solver, per variable, and the derivative error that each leaves.
 
     All arrays have shape (n,); steps in units of the variable, errors in units of the function per unit of the
-    variable; `noise` is the noise level of the function.
+    variable; `noise` is the noise level of the function, `noise_kind` where it comes from (of several outputs, the
+    noisiest).
     """
 
     function: str
@@ -171,6 +173,7 @@ class Steps:
     central: Array
     central_error: Array
     noise: float
+    noise_kind: NoiseKind = NoiseKind.NOT_EXAMINED
 
     def __post_init__(self) -> None:
         for name in ("forward", "forward_error", "central", "central_error"):

@@ -58,6 +58,9 @@ FAILS = "the model fails close to the point"
 CUT_OFF = "digits are cut off: the values do not change at small steps"
 RIPPLED = "small steps and wide steps see different slopes: a ripple, an inner tolerance, or digits that were cut off"
 
+#: Reasons that noise can bring about.
+DOUBTS = (REASONS[Nature.JUMP], REASONS[Nature.PLATEAU], UNSETTLED, CUT_OFF, RIPPLED)
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Candidate:
@@ -417,6 +420,13 @@ class Track:
             elif output in self.reasons and self.reasons[output] in REASONS.values():
                 bound[output] = np.inf
         return value, bound, half, noise
+
+    def doubtful(self) -> BoolArray:
+        """(m,): outputs whose values carry, or may carry, noise that the answer's own interval does not show."""
+        doubts = self.noisy | (self.ripple if self.ripple.size else False)
+        for output, reason in self.reasons.items():
+            doubts[output] |= reason in DOUBTS
+        return doubts
 
     def _cover_ripple(self, output: int, value: Array, bound: Array) -> None:
         """Where a small ripple makes fine and wide slopes differ, the bound covers both; neither is surely true."""

@@ -190,6 +190,7 @@ class _Rounds:
             left=left,
             right=right,
             noise=quietest,
+            doubtful=np.stack([track.doubtful() for track in self.tracks]),
             spent=self.spent,
             works=bool(np.isfinite(bound).any()),
             reasons={

@@ -28,8 +28,9 @@ from gradcheck.witnesses.steps import Room
 NODES = np.cos((np.arange(16) + 0.5) * np.pi / 16) * (1.0 - 0.02 * np.abs(np.sin(1.0 + 37.0 * np.arange(16) ** 2)))
 #: Half-width of the first cluster, in units of the variable's size.
 FIRST_WIDTH = 0.0917
-#: An interval so much narrower than the variable may be hides coarse steps; then a wider one is looked at as well.
-NARROW = 0.01
+#: A variable is tiny, its size unknown, if it may be this much larger; an interval so much narrower than that hides
+#: coarse steps, and a wider one is looked at as well.
+TINY, NARROW = 10.0, 0.01
 SHRINKS_MOST = 5
 WIDER_MOST = 3
 #: Spacing of the difference table, in units of the cluster's half-width, and its points besides the centre.
@@ -57,7 +58,7 @@ SHRINK = 0.12, 0.6
 #: Noise is a small part of how much a function varies; what is more is a wave that was not resolved.
 PART = 0.1
 #: Half-width on which a wave of that slope and of the size of the noise is surely resolved, in units of noise / slope.
-WAVE_REACH = 6.0
+WAVE_REACH, WAVE_PART = 6.0, 0.3
 #: Between its steps a rounded quantity stands still: the slope from close by misses that of the cluster by more than
 #: this share of the slope across it, and than this many times what noise does to it.
 SLOPE_MISSED, SLOPE_BLUR = 0.02, 10.0
@@ -66,7 +67,7 @@ FINE_PLACE = 0.0041
 
 
 def noise(
-    base: Array, directions: Directions, room: Room, centre: Array, *, half: Array | None = None
+    base: Array, directions: Directions, room: Room, centre: Array, *, apart: Array | None = None
 ) -> Inquiry[NoiseReading]:
     """Measure the noise of the values around a point; about 30 evaluations for one direction are usual.
 
@@ -79,8 +80,9 @@ def noise(
         How far one may step along each direction.
     centre : ndarray, shape (m,)
         Finite values at `base`.
-    half : ndarray, shape (d,), optional
-        Half-widths on which the values are known to follow a polynomial; NaN where nothing is known.
+    apart : ndarray, shape (m,), optional
+        Largest difference between values at `base`, where that has been asked already; else the point and two others
+        are evaluated again.
 
     Returns
     -------
@@ -103,19 +105,17 @@ def noise(
     >>> next(inquiry).offsets.tolist()  # the point itself, twice
     [[0.0, 0.0]]
     """
-    return (yield from _Listening(base, directions, room, centre, half).run())
+    return (yield from _Listening(base, directions, room, centre, apart).run())
 
 
 class _Listening:
     """The rounds of one inquiry; all directions go through them together. Arrays are (d,) or (d, m)."""
 
-    def __init__(self, base: Array, directions: Directions, room: Room, centre: Array, half: Array | None) -> None:
+    def __init__(self, base: Array, directions: Directions, room: Room, centre: Array, apart: Array | None) -> None:
         self.base, self.directions, self.room, self.centre = base, directions, room, centre
         shape = len(directions), centre.size
         narrow, roomier = np.minimum(room.below, room.above), np.maximum(room.below, room.above)
         wanted = FIRST_WIDTH * room.scale
-        if half is not None:
-            wanted = np.where(np.isfinite(half) & (half > 0), half, wanted)
         both = narrow >= 0.1 * np.minimum(wanted, roomier)
         self.side = np.where(both, 0, np.where(room.above >= room.below, 1, -1))
         self.sign = np.where(room.above >= room.below, 1.0, -1.0)
@@ -129,18 +129,20 @@ class _Listening:
         self.slope, self.variation, self.sample = np.zeros(shape), np.zeros(shape), np.zeros(shape)
         self.largest = np.tile(np.abs(centre), (shape[0], 1))
         self.fine_slope, self.fine_blur, self.quiet = np.zeros(shape), np.zeros(shape), np.zeros(shape, bool)
-        self.apart = np.full(shape[1], np.nan)
+        self.repeats = apart is None
+        self.apart = np.full(shape[1], np.nan) if apart is None else apart
         self.heard: list[list[Array]] = [[centre[None, :]] for _ in range(shape[0])]
         self.spent = 0
 
     def run(self) -> Generator[Request, Reply, NoiseReading]:
-        yield from self._repeated(0, np.zeros(2), np.tile(self.centre, (2, 1)))
+        if self.repeats:
+            yield from self._repeated(0, np.zeros(2), np.tile(self.centre, (2, 1)))
         yield from self._clusters(np.tile(self.alive[:, None], (1, self.centre.size)), SHRINKS_MOST)
         yield from self._wider()
         yield from self._tables()
         yield from self._close_by()
         yield from self._waves()
-        if self.alive.any():
+        if self.repeats and self.alive.any():
             row = int(np.argmax(self.alive))
             yield from self._repeated(row, self.offsets[row, AGAIN], self.values[row, AGAIN])
         return self._reading()
@@ -233,8 +235,9 @@ class _Listening:
     def _wider(self) -> Generator[Request, Reply, None]:
         """Where the variable is tiny and its size unknown, an interval as wide as it may be shows coarse steps."""
         wide = np.minimum(FIRST_WIDTH * self.room.widest, self.reach)
+        tiny = self.room.widest > TINY * self.room.scale
         rounded = (self.level <= self._limit()).any(axis=1)
-        rows = np.flatnonzero(self.alive & rounded & (self.half < NARROW * wide))
+        rows = np.flatnonzero(self.alive & rounded & tiny & (self.half < NARROW * wide))
         if rows.size == 0:
             return
         narrow, waiting = self.half.copy(), np.zeros_like(self.quiet)
@@ -268,11 +271,11 @@ class _Listening:
         spacing = TABLE_SPACING * self.half[rows]
         offsets = self._realised(rows, self.sign[rows, None] * spacing[:, None] * np.arange(1, TABLE_POINTS + 1))
         reply = yield from self._ask(rows, offsets)
-        for row, values, whole in zip(rows, reply.values, reply.finite.all(axis=1), strict=True):
-            if whole:
-                self.heard[row].append(values)
-                found = difference_table(np.concatenate([self.centre[None, :], values])).level
-                self._pool(int(row), found, float(spacing[0]) * TABLE_POINTS)
+        for place in np.flatnonzero(reply.finite.all(axis=1)):
+            row, values = int(rows[place]), reply.values[place]
+            self.heard[row].append(values)
+            found = difference_table(np.concatenate([self.centre[None, :], values])).level
+            self._pool(row, found, float(spacing[place]) * TABLE_POINTS)
 
     def _pool(self, row: int, found: Array, width: float) -> None:
         mine, sample = self.level[row], self.sample[row]
@@ -297,8 +300,9 @@ class _Listening:
         offsets = self.sign[rows, None] * (middle[:, None] + spacing[:, None] * FINE_PLACES)
         offsets = self._realised(rows, offsets)
         reply = yield from self._ask(rows, offsets)
-        for row, t, values, whole in zip(rows, offsets, reply.values, reply.finite.all(axis=1), strict=True):
-            if whole and np.unique(t).size == t.size:
+        for place in np.flatnonzero(reply.finite.all(axis=1)):
+            row, t, values = int(rows[place]), offsets[place], reply.values[place]
+            if np.unique(t).size == t.size:
                 level, self.fine_slope[row] = beyond_cubic(t, values)
                 self.fine_blur[row] = FINE_BLUR * np.spacing(np.abs(values).max(axis=0)) / np.ptp(t)
                 self.quiet[row] = level * QUIET < self.level[row]
@@ -309,9 +313,13 @@ class _Listening:
         Waves are smooth on it, and what the wider look took for noise was the wave; teeth of a saw are not.
         """
         with np.errstate(invalid="ignore", divide="ignore"):
-            steep = self.quiet & (np.abs(self.fine_slope) > WAVE_STEEPNESS * self._typical_slope() + self.fine_blur)
-            reach = WAVE_REACH * self.level / np.abs(self.fine_slope)
-            waves = steep & (reach < self.width) & self.alive[:, None]
+            slope = np.abs(self.fine_slope)
+            steep = slope > WAVE_STEEPNESS * self._typical_slope() + self.fine_blur
+            # Noise as large as the function itself is not to be believed before all scales have been seen.
+            whole = (self.level > PART * self.variation) & (slope * self.width > self.level)
+            reach = WAVE_REACH * self.level / slope
+            reach = np.where(whole, np.minimum(reach, WAVE_PART * self.width), reach)
+            waves = self.quiet & (steep | whole) & (reach < self.width) & self.alive[:, None]
         if not waves.any():
             return
         before = self.level.copy(), self.width.copy(), self.slope.copy(), self.variation.copy(), self.sample.copy()
@@ -319,9 +327,7 @@ class _Listening:
         half = np.where(waves, reach, np.inf).min(axis=1)
         self.half[rows] = np.maximum(half, LEAST_GRAINS * 2 * self.room.grain)[rows]
         self.level[waves] = np.nan
-        # Noise as large as the function itself is not to be believed before all scales have been seen.
-        whole = (before[0] > PART * before[3])[waves].all()
-        yield from self._clusters(waves, SHRINKS_MOST if whole else 1)
+        yield from self._clusters(waves, SHRINKS_MOST if whole[waves].all() else 1)
         with np.errstate(invalid="ignore"):
             still = waves & ~(self.level < before[0] / AGREE)
         mine = self.level, self.width, self.slope, self.variation, self.sample
@@ -346,16 +352,24 @@ class _Listening:
         kinds = []
         for row, heard in enumerate(self.heard):
             values = np.concatenate(heard)
-            kinds.append(tuple(self._concluded(row, output, values[:, output], level, quantum) for output in range(self.centre.size)))
+            kinds.append(
+                tuple(self._concluded((row, i), values[:, i], level, quantum) for i in range(self.centre.size))
+            )
         return NoiseReading(
-            level=level, kind=tuple(kinds), width=self.width, apart=self.apart, quantum=quantum, spent=self.spent
+            level=level,
+            kind=tuple(kinds),
+            width=self.width,
+            largest=self.largest,
+            apart=self.apart,
+            quantum=quantum,
+            spent=self.spent,
         )
 
-    def _concluded(self, row: int, output: int, values: Array, level: Array, quantum: Array) -> NoiseKind:
+    def _concluded(self, at: tuple[int, int], values: Array, level: Array, quantum: Array) -> NoiseKind:
         """The kind of one entry; its level and quantum are filled in where the digits tell them."""
-        at = row, output
-        if self.apart[output] > 0.0:
-            level[at] = np.fmax(level[at], self.apart[output] / 2.0) if np.isnan(level[at]) else level[at]
+        apart = self.apart[at[1]]
+        if apart > 0.0:
+            level[at] = apart / 2.0 if np.isnan(level[at]) else level[at]
             return NoiseKind.UNREPEATABLE
         digits = digits_of(values)
         quantum[at] = digits.decimal

@@ -80,7 +80,7 @@ def rounding_limit(largest: Array, argument: Array) -> Array:
     argument : ndarray, same shape
         Error of the value that the rounding of the point alone explains.
     """
-    return np.maximum(NOISY * EPSILON * largest, NOISY_ARGUMENT * argument)
+    return np.fmax(NOISY * EPSILON * largest, NOISY_ARGUMENT * argument)
 
 
 def explained_by_digits(digits: Digits, level: float, magnitude: float) -> tuple[NoiseKind, float] | None:
