@@ -55,15 +55,25 @@ AGAIN = [11, NODES.size, 2]
 LEAST_GRAINS = 256.0
 #: Factors by which an interval shrinks.
 SHRINK = 0.12, 0.6
-#: Noise is a small part of how much a function varies; what is more is a wave that was not resolved.
-PART = 0.1
+#: What is left of the noise where it was a wave: at most its size over this.
+WAVE_LEFT = 30.0
 #: Half-width on which a wave of that slope and of the size of the noise is surely resolved, in units of noise / slope.
-WAVE_REACH, WAVE_PART = 6.0, 0.3
+WAVE_REACH = 6.0
+#: Noise that is more than this part of how much the function varies is looked at in two places ...
+FAIR_PART = 1e-3
+LARGE_PART = 0.1
+#: A wave fainter than this, in units of the values, is taken for noise if it shows at two places.
+FAINT = 1e-4
+#: ... with clusters so much narrower, the second one so far away, in units of the first half-width; and so many times.
+PLACE_WIDTH, ELSEWHERE, LOOKS_MOST = 0.05, 0.55, 4
 #: Between its steps a rounded quantity stands still: the slope from close by misses that of the cluster by more than
 #: this share of the slope across it, and than this many times what noise does to it.
 SLOPE_MISSED, SLOPE_BLUR = 0.02, 10.0
 #: Where the finest look is, in units of the cluster's half-width.
 FINE_PLACE = 0.0041
+
+#: What is known of each output along each direction once it has its sample.
+_HEARD = ("level", "width", "slope", "variation", "sample")
 
 
 def noise(
@@ -141,7 +151,7 @@ class _Listening:
         yield from self._wider()
         yield from self._tables()
         yield from self._close_by()
-        yield from self._waves()
+        yield from self._doubts()
         if self.repeats and self.alive.any():
             row = int(np.argmax(self.alive))
             yield from self._repeated(row, self.offsets[row, AGAIN], self.values[row, AGAIN])
@@ -220,8 +230,9 @@ class _Listening:
 
     def _take(self, rows: IntArray, reading: ClusterReading, taken: BoolArray) -> None:
         width = np.broadcast_to(self.half[rows, None], taken.shape)
-        found = reading.level, reading.sample, reading.variation, width, reading.slope / width
-        for mine, new in zip((self.level, self.sample, self.variation, self.width, self.slope), found, strict=True):
+        found = reading.level, width, reading.slope / width, reading.variation, reading.sample
+        for name, new in zip(_HEARD, found, strict=True):
+            mine = getattr(self, name)
             mine[rows] = np.where(taken, new, mine[rows])
 
     def _shrink(self, rows: IntArray, reading: ClusterReading, waiting: BoolArray) -> None:
@@ -236,11 +247,10 @@ class _Listening:
         """Where the variable is tiny and its size unknown, an interval as wide as it may be shows coarse steps."""
         wide = np.minimum(FIRST_WIDTH * self.room.widest, self.reach)
         tiny = self.room.widest > TINY * self.room.scale
-        rounded = (self.level <= self._limit()).any(axis=1)
-        rows = np.flatnonzero(self.alive & rounded & tiny & (self.half < NARROW * wide))
+        rows = np.flatnonzero(self.alive & tiny & (self.half < NARROW * wide))
         if rows.size == 0:
             return
-        narrow, waiting = self.half.copy(), np.zeros_like(self.quiet)
+        narrow, largest, waiting = self.half.copy(), self.largest.copy(), np.zeros_like(self.quiet)
         waiting[rows] = True
         self.half[rows] = wide[rows]
         for _ in range(WIDER_MOST):
@@ -249,12 +259,17 @@ class _Listening:
                 break
             reading = self._read(rows)
             # A wave that is far too fast for so wide a look leaves nothing but noise.
-            louder = (reading.level > AGREE * self.level[rows]) & (reading.level < PART * reading.variation)
-            self._take(rows, reading, waiting[rows] & reading.settled & louder)
+            fair = (reading.level < FAIR_PART * reading.variation) & (reading.largest < TINY * largest[rows])
+            with np.errstate(invalid="ignore"):
+                louder = (reading.level > AGREE * self.level[rows]) | ~(
+                    self.level[rows] < FAIR_PART * self.variation[rows]
+                )
+            self._take(rows, reading, waiting[rows] & reading.settled & fair & louder)
             waiting[rows] &= ~reading.settled
             self._shrink(rows, reading, waiting[rows])
             rows = rows[waiting[rows].any(axis=1)]
         heard_wide = self.width > AGREE * narrow[:, None]
+        self.largest = np.where(heard_wide, self.largest, largest)
         self.half = np.where(heard_wide.any(axis=1), np.where(heard_wide, self.width, 0.0).max(axis=1), narrow)
 
     def _read(self, rows: IntArray) -> ClusterReading:
@@ -307,34 +322,69 @@ class _Listening:
                 self.fine_blur[row] = FINE_BLUR * np.spacing(np.abs(values).max(axis=0)) / np.ptp(t)
                 self.quiet[row] = level * QUIET < self.level[row]
 
-    def _waves(self) -> Generator[Request, Reply, None]:
-        """Where the values are smooth from close by and steep there, one look at the scale of that slope decides.
+    def _doubts(self) -> Generator[Request, Reply, None]:
+        """Second looks at what is smooth from close by: noise, or structure finer than the first cluster?
 
-        Waves are smooth on it, and what the wider look took for noise was the wave; teeth of a saw are not.
+        Noise is there at all places. Structure is a wave, which is smooth on the scale of its slope, or sits somewhere
+        (a pole, a layer, a kink), and elsewhere the function is smooth. Small noise is believed unless it is far too
+        steep from close by; noise that is a fair part of how much the function varies has to show at two places.
         """
         with np.errstate(invalid="ignore", divide="ignore"):
             slope = np.abs(self.fine_slope)
-            steep = slope > WAVE_STEEPNESS * self._typical_slope() + self.fine_blur
-            # Noise as large as the function itself is not to be believed before all scales have been seen.
-            whole = (self.level > PART * self.variation) & (slope * self.width > self.level)
-            reach = WAVE_REACH * self.level / slope
-            reach = np.where(whole, np.minimum(reach, WAVE_PART * self.width), reach)
-            waves = self.quiet & (steep | whole) & (reach < self.width) & self.alive[:, None]
-        if not waves.any():
+            reach = WAVE_REACH * self.level / np.where(slope > self.fine_blur, slope, 0.0)
+            whole = self.quiet & (self.level > FAIR_PART * self.variation) & self.alive[:, None]
+            steep = self.quiet & (slope > WAVE_STEEPNESS * self._typical_slope() + self.fine_blur)
+            steep &= (reach < self.width) & self.alive[:, None] & ~whole
+        if not (whole | steep).any():
             return
-        before = self.level.copy(), self.width.copy(), self.slope.copy(), self.variation.copy(), self.sample.copy()
-        rows = waves.any(axis=1)
-        half = np.where(waves, reach, np.inf).min(axis=1)
-        self.half[rows] = np.maximum(half, LEAST_GRAINS * 2 * self.room.grain)[rows]
-        self.level[waves] = np.nan
-        yield from self._clusters(waves, SHRINKS_MOST if whole[waves].all() else 1)
-        with np.errstate(invalid="ignore"):
-            still = waves & ~(self.level < before[0] / AGREE)
-        mine = self.level, self.width, self.slope, self.variation, self.sample
-        for now, then in zip(mine, before, strict=True):
-            now[still] = then[still]
-        self.quiet &= ~waves | still
+        heard = {name: getattr(self, name).copy() for name in _HEARD}
+        half = self.half.copy()
+        aim = np.where(whole, np.minimum(reach, PLACE_WIDTH * self.width), np.where(steep, reach, np.inf)).min(axis=1)
+        rows = np.isfinite(aim)
+        self.half[rows] = np.maximum(aim, 2 * LEAST_GRAINS * self.room.grain)[rows]
+        open_, noise, seen = whole | steep, np.zeros_like(whole), np.zeros(whole.shape, dtype=np.intp)
+        # A wave may look shallow where it was met: what is all there is of a function has to show on two scales.
+        large = (self.level > LARGE_PART * self.variation) & (self.level > FAINT * self.largest)
+        wanted = np.where(large, 2, 1)
+        self.level[open_] = np.nan
+        for _ in range(LOOKS_MOST):
+            yield from self._clusters(open_, 1)
+            with np.errstate(invalid="ignore"):
+                open_ &= ~(self.level < heard["level"] / WAVE_LEFT)
+            noise |= steep & open_
+            open_ &= ~steep
+            if open_.any():
+                found = yield from self._elsewhere(np.flatnonzero(open_.any(axis=1)), heard["width"])
+                seen += found > heard["level"] / AGREE
+                noise |= open_ & (seen >= wanted)
+                open_ &= ~noise
+            if not open_.any():
+                break
+            rows = open_.any(axis=1)
+            self.level[open_] = np.nan
+            self.half[rows] *= SHRINK[0]
+            self.alive &= self.half > LEAST_GRAINS * self.room.grain
+        for name, before in heard.items():
+            getattr(self, name)[noise] = before[noise]
+        self.level[open_] = np.nan
+        self.quiet &= noise | ~(whole | steep)
+        self.half = np.where(noise.any(axis=1), half, self.half)
         yield from self._tables()
+
+    def _elsewhere(self, rows: IntArray, width: Array) -> Generator[Request, Reply, Array]:
+        """(d, m): level of a cluster of the present half-widths in another place; NaN where nothing settles."""
+        found = np.full(self.level.shape, np.nan)
+        half = self.half[rows]
+        place = self.sign[rows] * np.maximum(ELSEWHERE * width[rows].min(axis=1), 4.0 * half)
+        place = np.clip(place, -0.9 * self.reach[rows], 0.9 * self.reach[rows])
+        offsets = self._realised(rows, place[:, None] + np.minimum(half, 0.05 * self.reach[rows])[:, None] * NODES)
+        reply = yield from self._ask(rows, offsets)
+        whole = np.flatnonzero(reply.finite.all(axis=1))
+        if whole.size:
+            t = (offsets[whole] - place[whole, None]) / half[whole, None]
+            reading = read_cluster(t, reply.values[whole], np.zeros(whole.size))
+            found[rows[whole]] = np.where(reading.settled, reading.level, np.nan)
+        return found
 
     # --- the answer ------------------------------------------------------------------------------------------------
 
