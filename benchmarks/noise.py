@@ -16,6 +16,7 @@ from typing import Any
 import numpy as np
 
 import gradcheck
+from benchmarks.corpus import CASES
 from benchmarks.figures import Figure, aligned, side_by_side
 from benchmarks.noise_corpus import NoiseCase, corpus
 from gradcheck.evaluation.conduct import conduct_one
@@ -161,6 +162,20 @@ def misses(heard: Sequence[Heard]) -> str:
     return aligned(heading, rows) if rows else "none"
 
 
+def smooth_functions(points: int, seed: int) -> str:
+    """What the inquiry calls the noise of the smooth functions of `benchmarks.corpus`: it should be rounding."""
+    each = max(1, points // POINTS_A_SEED)
+    told = [(case.name, by_inquiry(case.f, x)[1]) for case in CASES for x in case.points(each, seed)]
+    accused = sorted({(name, kind) for name, kind in told if kind != "rounding"})
+    right = share(kind == "rounding" for _, kind in told)
+    figure = Figure(name="rounding, %", value=right, goal=97, at_least=True)
+    names = "; ".join(f"{name} ({kind})" for name, kind in accused)
+    return (
+        f"Smooth functions whose noise is called rounding: {figure.shown} % of {len(told)} (goal {figure.goal_shown})\n"
+        f"Others, some of which cancel or carry a faint fast wave: {names or 'none'}"
+    )
+
+
 def run(points: int, seed: int = 0) -> str:
     """The report on the inquiry, and on the verbs that tell a noise."""
     count = max(1, points // POINTS_A_SEED)
@@ -168,6 +183,7 @@ def run(points: int, seed: int = 0) -> str:
     heard = measure(by_inquiry, cases)
     parts = [
         by_family(heard),
+        smooth_functions(points, seed),
         f"Levels off by more than 2 and wrong kinds of the inquiry:\n{misses(heard)}",
         side_by_side(
             {

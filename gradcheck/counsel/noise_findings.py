@@ -80,7 +80,8 @@ def _finding(subject: Subject, function: str, code: FindingCode, size: float, ev
         FindingCode.NOISE: (
             f"{function} carries noise of about {shown} (standard deviation of one value), far above rounding.",
             "Tighten the tolerance of the inner iteration, adaptive solver or mesh behind it, or fix its number of "
-            "steps; else take steps made for this noise (see Best steps) and stop no finer.",
+            "steps; if there is none, look for a difference of nearly equal numbers. Else take steps made for this "
+            "noise (see Best steps) and stop no finer.",
             Severity.HAZARD,
         ),
         FindingCode.LOW_PRECISION: (

@@ -69,7 +69,12 @@ def difference_table(values: Array) -> DifferenceTable:
     True
     """
     levels, alternates = [], []
-    difference = np.asarray(values, dtype=float)
+    values = np.asarray(values, dtype=float)
+    # Squares of tiny or huge values would leave the range of floating-point numbers; powers of two lose nothing.
+    largest = np.abs(values).max(axis=0)
+    usual = np.isfinite(largest) & (largest > 0)
+    unit = 2.0 ** np.clip(np.floor(np.log2(np.where(usual, largest, 1.0))), -1000, 1000)
+    difference = values / unit
     for order in range(1, difference.shape[0]):
         difference = np.diff(difference, axis=0)
         levels.append(np.sqrt(gamma(order) * np.mean(difference**2, axis=0)))
@@ -82,4 +87,4 @@ def difference_table(values: Array) -> DifferenceTable:
     first = np.argmax(agree, axis=0)
     chosen = np.take_along_axis(windows, first[None, ..., None], axis=0)[0]
     level = np.where(settled, np.sqrt(np.mean(chosen**2, axis=-1)), np.nan)
-    return DifferenceTable(levels=sigma, alternates=turning, level=level, settled=settled)
+    return DifferenceTable(levels=sigma * unit, alternates=turning, level=level * unit, settled=settled)

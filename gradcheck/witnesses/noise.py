@@ -65,7 +65,7 @@ LARGE_PART = 0.1
 #: A wave fainter than this, in units of the values, is taken for noise if it shows at two places.
 FAINT = 1e-4
 #: ... with clusters so much narrower, the second one so far away, in units of the first half-width; and so many times.
-PLACE_WIDTH, ELSEWHERE, LOOKS_MOST = 0.05, 0.55, 4
+PLACE_WIDTH, ELSEWHERE, LOOKS_MOST = 0.05, 0.55, 6
 #: Between its steps a rounded quantity stands still: the slope from close by misses that of the cluster by more than
 #: this share of the slope across it, and than this many times what noise does to it.
 SLOPE_MISSED, SLOPE_BLUR = 0.02, 10.0
@@ -147,7 +147,7 @@ class _Listening:
     def run(self) -> Generator[Request, Reply, NoiseReading]:
         if self.repeats:
             yield from self._repeated(0, np.zeros(2), np.tile(self.centre, (2, 1)))
-        yield from self._clusters(np.tile(self.alive[:, None], (1, self.centre.size)), SHRINKS_MOST)
+        yield from self._clusters(np.tile(self.alive[:, None], (1, self.centre.size)), SHRINKS_MOST + ESCAPES_MOST)
         yield from self._wider()
         yield from self._tables()
         yield from self._close_by()
@@ -184,10 +184,10 @@ class _Listening:
 
     # --- clusters --------------------------------------------------------------------------------------------------
 
-    def _clusters(self, waiting: BoolArray, shrinks: int) -> Generator[Request, Reply, None]:
+    def _clusters(self, waiting: BoolArray, most: int) -> Generator[Request, Reply, None]:
         """Clusters on shrinking intervals until the outputs that wait (d, m) have their sample."""
         waiting = waiting.copy()
-        for _ in range(shrinks + ESCAPES_MOST):
+        for _ in range(most):
             rows = np.flatnonzero(waiting.any(axis=1) & self.alive)
             if rows.size == 0:
                 return
@@ -348,9 +348,12 @@ class _Listening:
         wanted = np.where(large, 2, 1)
         self.level[open_] = np.nan
         for _ in range(LOOKS_MOST):
+            aimed = self.half.copy()
             yield from self._clusters(open_, 1)
+            self.half = np.where(self.half > SHRINK[0] * aimed / 2, aimed, self.half)
             with np.errstate(invalid="ignore"):
-                open_ &= ~(self.level < heard["level"] / WAVE_LEFT)
+                resolved = steep | (self.level <= np.fmax(self._limit(), FAIR_PART * self.variation))
+                open_ &= ~(resolved & (self.level < heard["level"] / WAVE_LEFT))
             noise |= steep & open_
             open_ &= ~steep
             if open_.any():
@@ -372,7 +375,7 @@ class _Listening:
         yield from self._tables()
 
     def _elsewhere(self, rows: IntArray, width: Array) -> Generator[Request, Reply, Array]:
-        """(d, m): level of a cluster of the present half-widths in another place; NaN where nothing settles."""
+        """(d, m): what a cluster of the present half-widths leaves over in another place; NaN where the model fails."""
         found = np.full(self.level.shape, np.nan)
         half = self.half[rows]
         place = self.sign[rows] * np.maximum(ELSEWHERE * width[rows].min(axis=1), 4.0 * half)
@@ -383,7 +386,7 @@ class _Listening:
         if whole.size:
             t = (offsets[whole] - place[whole, None]) / half[whole, None]
             reading = read_cluster(t, reply.values[whole], np.zeros(whole.size))
-            found[rows[whole]] = np.where(reading.settled, reading.level, np.nan)
+            found[rows[whole]] = np.where(reading.settled, reading.level, reading.tail)
         return found
 
     # --- the answer ------------------------------------------------------------------------------------------------

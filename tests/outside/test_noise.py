@@ -270,7 +270,7 @@ def test_a_loose_tolerance_shifts_value_and_slope_smoothly():
 
 
 def prey(p: float, method: str, tolerance: float) -> float:
-    """y_0(15) of a predator-prey model with growth rate p; the absolute tolerance is a thousandth of the relative one."""
+    """y_0(15) of a predator-prey model with growth rate p; the absolute tolerance is 1e-3 of the relative one."""
 
     def rates(t: float, y: np.ndarray) -> list[float]:
         return [p * y[0] - 0.1 * y[0] * y[1], 0.075 * y[0] * y[1] - 1.5 * y[1]]
