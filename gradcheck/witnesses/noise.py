@@ -45,8 +45,6 @@ FINE_PLACES, FINE = np.arange(7) - 3.0 + np.array([0.11, -0.17, 0.05, 0.0, 0.13,
 FINE_BLUR = 10.0
 #: The finest values are quiet if they show so much less noise.
 QUIET = 30.0
-#: A slope so much larger from close by than across the cluster belongs to a wave, not to noise.
-WAVE_STEEPNESS = 30.0
 #: The interval shrinks by this each time the model fails; after that the side where it works is tried.
 ESCAPE, ESCAPES_MOST = 1.0 / 16.0, 3
 #: Nodes of the cluster that are evaluated again, last ones first; among them the point itself.
@@ -55,17 +53,17 @@ AGAIN = [11, NODES.size, 2]
 LEAST_GRAINS = 256.0
 #: Factors by which an interval shrinks.
 SHRINK = 0.12, 0.6
-#: What is left of the noise where it was a wave: at most its size over this.
-WAVE_LEFT = 30.0
+#: A slope so much larger from close by than across the cluster may belong to a wave.
+WAVE_STEEPNESS = 30.0
 #: Half-width on which a wave of that slope and of the size of the noise is surely resolved, in units of noise / slope.
 WAVE_REACH = 6.0
-#: Noise that is more than this part of how much the function varies is looked at in two places ...
+#: Second looks: clusters so much narrower each time, the one beside so far away in units of the first half-width, at
+#: most so many times; noise is the same there within a factor.
+PLACE_WIDTH, ELSEWHERE, LOOKS_MOST, SAME = 0.2, 0.55, 6, 3.0
+#: Noise that is more than this part of how much the function varies, and of its values, has to show twice.
+LARGE_PART, FAINT = 0.1, 1e-4
+#: What a wide look may hear, as a part of how much the function varies: more may be a wave that is far too fast for it.
 FAIR_PART = 1e-3
-LARGE_PART = 0.1
-#: A wave fainter than this, in units of the values, is taken for noise if it shows at two places.
-FAINT = 1e-4
-#: ... with clusters so much narrower, the second one so far away, in units of the first half-width; and so many times.
-PLACE_WIDTH, ELSEWHERE, LOOKS_MOST = 0.05, 0.55, 6
 #: Between its steps a rounded quantity stands still: the slope from close by misses that of the cluster by more than
 #: this share of the slope across it, and than this many times what noise does to it.
 SLOPE_MISSED, SLOPE_BLUR = 0.02, 10.0
@@ -296,7 +294,8 @@ class _Listening:
         mine, sample = self.level[row], self.sample[row]
         with np.errstate(invalid="ignore"):
             same = (found < AGREE * mine) & (mine < AGREE * found)
-            both = np.sqrt((sample * mine**2 + TABLE_SAMPLE * found**2) / (sample + TABLE_SAMPLE))
+            share = sample / (sample + TABLE_SAMPLE)
+            both = np.hypot(np.sqrt(share) * mine, np.sqrt(1.0 - share) * found)
         alone = np.isnan(mine) & np.isfinite(found)
         self.width[row] = np.where(alone, width, self.width[row])
         self.variation[row] = np.where(alone, np.ptp(self.values[row], axis=0), self.variation[row])
@@ -325,54 +324,60 @@ class _Listening:
     def _doubts(self) -> Generator[Request, Reply, None]:
         """Second looks at what is smooth from close by: noise, or structure finer than the first cluster?
 
-        Noise is there at all places. Structure is a wave, which is smooth on the scale of its slope, or sits somewhere
-        (a pole, a layer, a kink), and elsewhere the function is smooth. Small noise is believed unless it is far too
-        steep from close by; noise that is a fair part of how much the function varies has to show at two places.
+        Noise is the same on a smaller scale, and at all places. A wave is smooth on the scale of its slope; a pole, a
+        layer, a kink sits somewhere, and elsewhere the function is smooth; kinks of a table shrink with the scale.
         """
         with np.errstate(invalid="ignore", divide="ignore"):
+            open_ = self.quiet & self.alive[:, None] & (self.level > self._limit())
+            large = (self.level > LARGE_PART * self.variation) & (self.level > FAINT * self.largest)
             slope = np.abs(self.fine_slope)
-            reach = WAVE_REACH * self.level / np.where(slope > self.fine_blur, slope, 0.0)
-            whole = self.quiet & (self.level > FAIR_PART * self.variation) & self.alive[:, None]
-            steep = self.quiet & (slope > WAVE_STEEPNESS * self._typical_slope() + self.fine_blur)
-            steep &= (reach < self.width) & self.alive[:, None] & ~whole
-        if not (whole | steep).any():
+            steep = slope > np.where(large, 0.0, WAVE_STEEPNESS * self._typical_slope()) + self.fine_blur
+            reach = np.where(steep, WAVE_REACH * self.level / slope, np.inf)
+            aim = np.where(open_, np.minimum(reach, PLACE_WIDTH * self.width), np.inf)
+        open_ &= ~self._told_by_digits(open_)
+        if not open_.any():
             return
+        doubted, half, far = open_.copy(), self.half.copy(), self.width.copy()
         heard = {name: getattr(self, name).copy() for name in _HEARD}
-        half = self.half.copy()
-        aim = np.where(whole, np.minimum(reach, PLACE_WIDTH * self.width), np.where(steep, reach, np.inf)).min(axis=1)
-        rows = np.isfinite(aim)
-        self.half[rows] = np.maximum(aim, 2 * LEAST_GRAINS * self.room.grain)[rows]
-        open_, noise, seen = whole | steep, np.zeros_like(whole), np.zeros(whole.shape, dtype=np.intp)
-        # A wave may look shallow where it was met: what is all there is of a function has to show on two scales.
-        large = (self.level > LARGE_PART * self.variation) & (self.level > FAINT * self.largest)
-        wanted = np.where(large, 2, 1)
-        self.level[open_] = np.nan
+        noise, seen = np.zeros_like(open_), np.zeros(open_.shape, dtype=np.intp)
+        rows = open_.any(axis=1)
+        self.half[rows] = np.maximum(aim.min(axis=1), 2 * LEAST_GRAINS * self.room.grain)[rows]
         for _ in range(LOOKS_MOST):
-            aimed = self.half.copy()
+            self.level[open_], aimed = np.nan, self.half.copy()
             yield from self._clusters(open_, 1)
-            self.half = np.where(self.half > SHRINK[0] * aimed / 2, aimed, self.half)
+            self.half = aimed
             with np.errstate(invalid="ignore"):
-                resolved = steep | (self.level <= np.fmax(self._limit(), FAIR_PART * self.variation))
-                open_ &= ~(resolved & (self.level < heard["level"] / WAVE_LEFT))
-            noise |= steep & open_
-            open_ &= ~steep
-            if open_.any():
-                found = yield from self._elsewhere(np.flatnonzero(open_.any(axis=1)), heard["width"])
-                seen += found > heard["level"] / AGREE
-                noise |= open_ & (seen >= wanted)
+                open_ &= ~(self.level <= self._limit())
+                lower = open_ & (self.level < heard["level"] / SAME)
+            for name, known in heard.items():
+                known[lower] = getattr(self, name)[lower]
+            seen[lower] = 0
+            same = open_ & ~lower
+            if same.any():
+                found = yield from self._elsewhere(np.flatnonzero(same.any(axis=1)), far)
+                seen += same & (found > heard["level"] / SAME)
+                # A wave may look shallow where it was met: what is all there is of a function has to show twice.
+                noise |= same & (seen >= np.where(large, 2, 1))
                 open_ &= ~noise
             if not open_.any():
                 break
-            rows = open_.any(axis=1)
-            self.level[open_] = np.nan
-            self.half[rows] *= SHRINK[0]
+            self.half[open_.any(axis=1)] *= PLACE_WIDTH
             self.alive &= self.half > LEAST_GRAINS * self.room.grain
-        for name, before in heard.items():
-            getattr(self, name)[noise] = before[noise]
         self.level[open_] = np.nan
-        self.quiet &= noise | ~(whole | steep)
+        for name, known in heard.items():
+            getattr(self, name)[noise] = known[noise]
+        self.quiet &= noise | ~doubted
         self.half = np.where(noise.any(axis=1), half, self.half)
         yield from self._tables()
+
+    def _told_by_digits(self, asked: BoolArray) -> BoolArray:
+        """(d, m): of the entries asked about, those whose digits explain the noise."""
+        told = np.zeros_like(asked)
+        for row, output in np.argwhere(asked):
+            digits = digits_of(np.concatenate(self.heard[row])[:, output])
+            level, largest = float(self.level[row, output]), float(self.largest[row, output])
+            told[row, output] = explained_by_digits(digits, level, largest) is not None
+        return told
 
     def _elsewhere(self, rows: IntArray, width: Array) -> Generator[Request, Reply, Array]:
         """(d, m): what a cluster of the present half-widths leaves over in another place; NaN where the model fails."""
