@@ -7,7 +7,16 @@ import time
 import click
 
 # each has a QUESTION and a function run(points, seed) that returns its report as text
-BENCHMARKS = ("estimator", "second_derivatives", "scan", "solver_steps", "verdicts", "slight_errors", "cost")
+BENCHMARKS = (
+    "estimator",
+    "second_derivatives",
+    "noise",
+    "scan",
+    "solver_steps",
+    "verdicts",
+    "slight_errors",
+    "cost",
+)
 
 
 @click.command()

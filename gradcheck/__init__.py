@@ -30,6 +30,7 @@ if TYPE_CHECKING:
     from gradcheck.records.advice import Advice, Family
     from gradcheck.records.estimate import Estimate, Scan
     from gradcheck.records.finding import Finding, FindingCode, Severity
+    from gradcheck.records.noise import NoiseKind
     from gradcheck.records.report import AuditReport, CheckReport
     from gradcheck.records.verdict import DiagnosisCode, Verdict
     from gradcheck.scanning import scan
@@ -51,6 +52,7 @@ _HOME = {
     "GradcheckError": "gradcheck.errors",
     "ModelFailure": "gradcheck.errors",
     "ModelNotFound": "gradcheck.errors",
+    "NoiseKind": "gradcheck.records.noise",
     "Output": "gradcheck.problem.problem",
     "Problem": "gradcheck.problem.problem",
     "Scan": "gradcheck.records.estimate",
@@ -83,6 +85,7 @@ __all__ = [
     "GradcheckError",
     "ModelFailure",
     "ModelNotFound",
+    "NoiseKind",
     "Output",
     "Problem",
     "Scan",

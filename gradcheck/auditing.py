@@ -25,6 +25,7 @@ from gradcheck.counsel.model_findings import (
     unrepeatable,
     witness_conflict,
 )
+from gradcheck.counsel.noise_findings import noise_findings
 from gradcheck.counsel.scaling import scale_spread, suggested_scaling
 from gradcheck.counsel.silencing import refuse_unknown, silenced
 from gradcheck.counsel.solver_steps import solver_steps
@@ -51,6 +52,8 @@ from gradcheck.report.audit_text import audit_text
 from gradcheck.witnesses.automatic import Source, automatic
 from gradcheck.witnesses.complex_step import complex_step
 from gradcheck.witnesses.finite_difference import finite_difference
+from gradcheck.witnesses.noise_of_outputs import noise_of_all
+from gradcheck.witnesses.noise_reading import OutputNoise
 from gradcheck.witnesses.steps import room_along
 from gradcheck.witnesses.testimony import Testimony
 from gradcheck.wording import count, seconds
@@ -175,6 +178,8 @@ class _Audit:
     lines_examined: int = 0
     not_looked_at: list[str] = field(default_factory=list)
     differences: dict[str, Testimony] = field(default_factory=dict)
+    apart: dict[str, Array] = field(default_factory=dict)
+    noise: dict[str, OutputNoise] = field(default_factory=dict)
     start_notes: tuple[str, ...] = ()
 
     @property
@@ -197,6 +202,7 @@ class _Audit:
         for name, centre in centres.items():
             self.say(f"repeatability of {name}")
             seen = self.ask(name, repeatability(self.subject.start, self.subject.domain, centre))
+            self.apart[name] = np.fmax(seen.at_once, seen.after_others)
             self.findings += unrepeatable(self.subject, name, seen)
         self.say("claims at the start point")
         self._take(checked_claims(self.session, Rules()), self.subject)
@@ -264,7 +270,11 @@ class _Audit:
 
         refused = self.session.ledger.refused
         (first, asked), (second, _), (third, _) = order(1), order(2), order(3)
-        choice: StepChoice = self.ask(name, step_choice(subject.start, columns, room, centre, first, second, third))
+        smooth = ~subject.domain.integer[columns]
+        inquiry = noise_of_all(subject.start, columns[smooth], subject.domain, centre, apart=self.apart[name])
+        heard = self.noise[name] = self.ask(name, inquiry)
+        known = replace(first, noise=np.where(np.isfinite(heard.level), heard.level, first.noise))
+        choice: StepChoice = self.ask(name, step_choice(subject.start, columns, room, centre, known, second, third))
         if self.session.ledger.refused > refused:
             # Half a measurement would give steps and scalings that look like any other.
             self._unheard(name, first.source)
@@ -273,10 +283,10 @@ class _Audit:
         self._record(name, first, asked, "model")
         self.differences[name] = first
         self.findings += kinks_at_point(subject, name, first.left.T, first.right.T, columns)
-        smooth = ~subject.domain.integer[columns]
         names = tuple(subject.layout.name(int(i)) for i in columns[smooth])
         if np.isfinite(first.noise).any() and smooth.any():
-            self.steps.append(solver_steps(name, names, choice, smooth))
+            kind = heard.kind[heard.loudest()]
+            self.steps.append(solver_steps(name, names, choice, smooth, kind))
         if self.scaling is None and centre.size == 1 and columns.size == subject.layout.size:
             gradient = np.where(subject.domain.integer, np.nan, first.value[:, 0])
             self.scaling = suggested_scaling(subject, gradient)
@@ -368,7 +378,9 @@ class _Audit:
                 )
                 self.not_looked_at.append(f"{name} along {subject.layout.name(int(i))}: {share}")
         known = {(f.function, f.code) for f in self.findings if f.code == FindingCode.UNREPEATABLE}
-        self.findings += [f for f in line_findings(subject, name, lines) if (f.function, f.code) not in known]
+        found = line_findings(subject, name, lines)
+        found += noise_findings(subject, name, [line.report for line in lines], self.noise.get(name))
+        self.findings += [f for f in found if (f.function, f.code) not in known]
 
 
 _AVOID = "Keep the run away from this point, or mend the model there."

@@ -16,6 +16,7 @@ from gradcheck.records.estimate import Estimate
 from gradcheck.report.estimate_text import estimate_text
 from gradcheck.witnesses.finite_difference import finite_difference
 from gradcheck.witnesses.hessian_difference import hessian_difference
+from gradcheck.witnesses.noise_of_outputs import noise_beside
 from gradcheck.witnesses.steps import room_along
 from gradcheck.witnesses.testimony import Testimony
 
@@ -108,7 +109,8 @@ def estimate(
         return _finished(_hessian(session, centre), session, began)
     directions = _directions(subject, direction)
     testimony = differences_along(session, directions, centre, derivative=order)
-    fields = _shaped(testimony, subject, session, direction is not None)
+    heard = _noise(session, directions, centre, testimony)
+    fields = _shaped(testimony, subject, session, direction is not None) | heard
     return _finished({**fields, "order": order}, session, began)
 
 
@@ -118,6 +120,15 @@ def differences_along(session: Session, directions: Directions, centre: Array, *
     room = room_along(subject.start, directions, subject.domain)
     inquiry = finite_difference(subject.start, directions, room, centre, derivative=derivative, wider=derivative == 2)
     return conduct_one(addressed(inquiry, function=subject.name), session.gate)
+
+
+def _noise(session: Session, directions: Directions, centre: Array, testimony: Testimony) -> dict[str, Any]:
+    """Level and kind of the noise; costs evaluations only where the differences met more than rounding."""
+    subject = session.subject
+    room = room_along(subject.start, directions, subject.domain)
+    inquiry = noise_beside(subject.start, directions, room, centre, testimony)
+    heard = conduct_one(addressed(inquiry, function=subject.name), session.gate)
+    return {"noise": heard.level, "noise_kind": heard.kind}
 
 
 def _directions(subject: Subject, direction: Any) -> Directions:
@@ -146,7 +157,6 @@ def _shaped(testimony: Testimony, subject: Subject, session: Session, along: boo
 
     return {
         **{field: getattr(testimony, field).T.reshape(shape) for field in ("value", "bound", "step")},
-        "noise": testimony.noise,
         "source": testimony.source,
         "reasons": {name(row, output): reason for (row, output), reason in testimony.reasons.items()},
         "names": ("direction",) if along else subject.names if subject.layout.size <= 1000 else (),

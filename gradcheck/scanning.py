@@ -16,6 +16,7 @@ from gradcheck.problem.subject import Subject, subject_of_problem, subjects_of_f
 from gradcheck.records.estimate import Scan
 from gradcheck.report.plots import scan_svg
 from gradcheck.report.scan_text import scan_text
+from gradcheck.witnesses.noise import noise
 from gradcheck.witnesses.steps import room_along
 
 #: Options of a described model that a scan understands.
@@ -50,7 +51,7 @@ def scan(
     wrt, output, bounds, names, typical, batched
         As in `gradcheck.check`.
     budget : int, optional
-        Largest number of evaluations; about 140 are usual.
+        Largest number of evaluations; about 170 are usual.
     time_limit : float or str, optional
     seed : int
         Reserved; a scan is deterministic.
@@ -92,6 +93,8 @@ def scan(
     if max(room.below[0], room.above[0]) <= 0:
         raise UsageError(f"the bounds leave no room for a step along {label}")
     curve = conduct_one(addressed(step_curve(subject.start, directions, room, centre), function=name), session.gate)
+    heard = conduct_one(addressed(noise(subject.start, directions, room, centre), function=name), session.gate)
+    level = float(heard.level[0, 0])
     record = Scan(
         steps=curve.steps,
         values=curve.values,
@@ -101,7 +104,8 @@ def scan(
         floor=curve.floor,
         truncation=curve.truncation,
         roundoff=curve.roundoff,
-        noise=float(curve.reference.noise[0]),
+        noise=level if np.isfinite(level) else float(curve.reference.noise[0]),
+        noise_kind=heard.kind[0][0],
         order=curve.truncation.slope if curve.truncation else float("nan"),
         value=float(curve.reference.value[0, 0]),
         bound=float(curve.reference.bound[0, 0]),

@@ -9,6 +9,7 @@ from collections.abc import Collection, Iterable, Iterator, Sequence
 
 from gradcheck.records.advice import Family
 from gradcheck.records.finding import FindingCode, Severity
+from gradcheck.records.noise import NoiseKind
 from gradcheck.records.verdict import DiagnosisCode
 
 #: More digits than this say nothing in double precision.
@@ -58,6 +59,15 @@ FINDING_WORDS: dict[FindingCode, str] = {
     FindingCode.COMPLEX_UNSAFE: "the complex step is not safe here",
     FindingCode.INTEGER_ARITHMETIC: "integer arithmetic inside",
     FindingCode.SLOW_DERIVATIVE: "the derivative is slow",
+}
+
+NOISE_WORDS: dict[NoiseKind, str] = {
+    NoiseKind.ROUNDING: "rounding",
+    NoiseKind.SINGLE_PRECISION: "single precision inside",
+    NoiseKind.INNER_TOLERANCE: "an inner tolerance",
+    NoiseKind.FEW_DIGITS: "few digits",
+    NoiseKind.UNREPEATABLE: "differs from call to call",
+    NoiseKind.NOT_EXAMINED: "",
 }
 
 DIAGNOSIS_WORDS: dict[DiagnosisCode, str] = {
@@ -180,6 +190,22 @@ def seconds(duration: float) -> str:
 def cost(evaluations: int, duration: float) -> str:
     """``18 evaluations in 2.0 s``."""
     return f"{count(evaluations, 'evaluation')} in {seconds(duration)}"
+
+
+def noise(levels: Sequence[float], kinds: Iterable[NoiseKind] = ()) -> str:
+    """The noise of one or several outputs, and where it comes from; empty if no level is known.
+
+    Examples
+    --------
+    >>> noise([2.2e-16], [NoiseKind.ROUNDING]), noise([1e-7, 1e-3])
+    ('noise of the value: 2.2e-16 (rounding)', 'noise of the value: 1e-7 to 1e-3')
+    """
+    known = [level for level in levels if math.isfinite(level)]
+    if not known:
+        return ""
+    low, high = number(min(known), 2), number(max(known), 2)
+    words = [word for word in dict.fromkeys(NOISE_WORDS[kind] for kind in kinds) if word]
+    return f"noise of the value: {low if low == high else f'{low} to {high}'}{f' ({listed(words)})' if words else ''}"
 
 
 def listed(names: Sequence[str], limit: int = 6, width: int = 40) -> str:

@@ -18,8 +18,6 @@ TOLD_EACH = 3
 
 _BREAKS = (FindingCode.KINK, FindingCode.JUMP, FindingCode.STAIRCASE, FindingCode.CURVATURE_BREAK)
 _DOMAIN = (FindingCode.NON_FINITE, FindingCode.CRASH, FindingCode.TIMEOUT)
-#: Kinds that belong to the function rather than to a place on a line.
-_WHOLE = (FindingCode.NOISE, FindingCode.LOW_PRECISION, FindingCode.COARSE_OUTPUT, FindingCode.UNREPEATABLE)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -37,9 +35,8 @@ class Line:
 
 
 def line_findings(subject: Subject, function: str, lines: Sequence[Line]) -> list[Finding]:
-    """Findings of all lines of one function; what concerns the whole function is told once."""
-    findings = [finding for line in lines for finding in _on_line(subject, function, line)]
-    return findings + _on_function(subject, function, lines)
+    """What was found in places: what concerns the whole function is told by `noise_findings`."""
+    return [finding for line in lines for finding in _on_line(subject, function, line)]
 
 
 def _on_line(subject: Subject, function: str, line: Line) -> Iterable[Finding]:
@@ -133,49 +130,3 @@ def _moved(subject: Subject, line: Line, value: float) -> Array:
     point = np.array(subject.start)
     point[line.coordinate] = value
     return point
-
-
-def _on_function(subject: Subject, function: str, lines: Sequence[Line]) -> list[Finding]:
-    findings = []
-    for kind in _WHOLE:
-        seen = [found for line in lines for found in line.report.of_kind(kind)]
-        if seen:
-            worst = max(seen, key=lambda found: abs(np.nan_to_num(found.size)))
-            findings.append(_whole(subject, function, FindingCode(kind), worst))
-    return findings
-
-
-def _whole(subject: Subject, function: str, kind: FindingCode, worst: Irregularity) -> Finding:
-    size = number(abs(worst.size), digits=2)
-    text, remedy, severity = {
-        FindingCode.NOISE: (
-            f"{function} carries noise of about {size} (standard deviation of one value), far above rounding.",
-            "Tighten the inner tolerance behind it, or take steps made for this noise (see Best steps); stop no finer.",
-            Severity.HAZARD,
-        ),
-        FindingCode.LOW_PRECISION: (
-            f"{function} is computed in single precision somewhere: its values are good to about {size}.",
-            "Compute in double precision while optimizing, or take the larger steps given below.",
-            Severity.HAZARD,
-        ),
-        FindingCode.COARSE_OUTPUT: (
-            f"{function} comes in steps of {size}: it is printed or rounded to few digits.",
-            "Let the model pass on all its digits; differences with small steps see nothing else than these steps.",
-            Severity.HAZARD,
-        ),
-        FindingCode.UNREPEATABLE: (
-            f"{function} gave values that differ by {size} at one and the same point.",
-            "Seed random numbers, reset hidden state between calls, and audit again: all other figures wait for this.",
-            Severity.BLOCKER,
-        ),
-    }[kind]
-    return Finding(
-        code=kind,
-        severity=severity,
-        function=function,
-        variable=None,
-        where=Location(point=subject.start),
-        evidence={"size": abs(worst.size), "relative_size": worst.relative},
-        text=text,
-        remedy=remedy,
-    )

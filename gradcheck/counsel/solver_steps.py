@@ -6,10 +6,17 @@ import numpy as np
 
 from gradcheck.health.step_choice import StepChoice
 from gradcheck.records.arrays import Array, BoolArray
+from gradcheck.records.noise import NoiseKind
 from gradcheck.records.report import Steps
 
 
-def solver_steps(function: str, names: tuple[str, ...], choice: StepChoice, smooth: BoolArray) -> Steps:
+def solver_steps(
+    function: str,
+    names: tuple[str, ...],
+    choice: StepChoice,
+    smooth: BoolArray,
+    noise_kind: NoiseKind = NoiseKind.NOT_EXAMINED,
+) -> Steps:
     """The record of the steps of one function.
 
     Parameters
@@ -20,11 +27,14 @@ def solver_steps(function: str, names: tuple[str, ...], choice: StepChoice, smoo
     choice : StepChoice
     smooth : ndarray of bool, shape (d,)
         Variables that are no whole numbers.
+    noise_kind : NoiseKind
+        Passed on.
     """
     return Steps(
         function=function,
         names=names,
         noise=choice.noise,
+        noise_kind=noise_kind,
         **{
             name: np.array(getattr(choice, name)[smooth])
             for name in ("forward", "forward_error", "forward_side", "central", "central_error", "central_side")

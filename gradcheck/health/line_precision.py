@@ -4,26 +4,27 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from gradcheck.health import fingerprints
 from gradcheck.health.line_focus import Focus
 from gradcheck.health.line_noise import STENCIL_POINTS, STENCIL_SPACING, StencilReading, read_stencil, stencil
 from gradcheck.health.line_plateaus import as_staircase, levels, risers, single_step
 from gradcheck.health.line_report import Irregularity
-from gradcheck.health.line_samples import EPSILON, Quest, Samples
+from gradcheck.health.line_samples import Quest, Samples
 from gradcheck.records.arrays import Array
 from gradcheck.records.finding import FindingCode
+from gradcheck.witnesses import fingerprints
+from gradcheck.witnesses.noise_kind import (
+    SINGLE_NOISE,
+    SINGLE_ROUNDING,
+    SINGLE_STEP,
+    UNIFORM,
+    rounding_limit,
+)
 
-NOISY = 100.0  # units in the last place of f: what is above is noise, what is below is rounding
-NOISY_ARGUMENT = 10.0  # times what the rounding of the point alone explains
-SINGLE_NOISE = (3e-10, 3e-6)  # noise over values that single precision somewhere inside leaves
-SINGLE_ROUNDING = 3.5e-8  # standard deviation of one rounding to single precision, relative
-SINGLE_STEP = 6e-8  # relative spacing of single precision
 FINE_SPACING = 1e-11  # in t: far below the steps that single precision can tell apart
 FINE_GAIN = 30.0
 FEWEST_LEVELS = 8  # fewer levels of round values are a staircase
 COUNTED = 1e4  # whole numbers up to here are counts rather than rounded measurements
 WAVE_STEEPNESS = 30.0  # slope of a fast wave over that of the line
-UNIFORM = 0.3  # standard deviation of a uniform error, in units of its width
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -70,7 +71,7 @@ def measured(
     if single:
         return samples, _low(focus, max(sigma, SINGLE_ROUNDING * magnitude), magnitude)
     argument = max(float(reading.argument[focus.output]) for reading in readings)
-    if sigma <= max(NOISY * EPSILON * magnitude, NOISY_ARGUMENT * argument):
+    if sigma <= float(rounding_limit(np.array(magnitude), np.array(argument))):
         return samples, Precision(sigma=sigma, found=())
     if repeatable:
         samples, fine = yield from _looked_at_finely(samples, focus)

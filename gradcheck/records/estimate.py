@@ -6,6 +6,7 @@ from typing import Any
 
 from gradcheck.errors import UsageError
 from gradcheck.records.arrays import Array, frozen
+from gradcheck.records.noise import NoiseKind
 from gradcheck.records.plain import plain
 
 
@@ -24,6 +25,8 @@ class Estimate:
         Half-width, in units of x, of the interval that decided each entry.
     noise : ndarray, shape (m,)
         Noise level of each output: standard deviation of an output's error, in units of f.
+    noise_kind : tuple of NoiseKind
+        Kind of noise of each output; ``not examined`` where the values taken say nothing of it.
     evaluations : int
         Calls of the model that were spent.
     source : str
@@ -41,6 +44,7 @@ class Estimate:
     noise: Array
     evaluations: int
     source: str
+    noise_kind: tuple[NoiseKind, ...] = ()
     names: tuple[str, ...] = ()
     reasons: dict[str, str]
     order: int = 1
@@ -111,7 +115,9 @@ class Scan:
         The error at the best step that the noise of the values leaves (its standard deviation); at a kink, half the
         difference of the two slopes, which the mean slope that every step gives is off by.
     noise : float
-        Noise level of the model, in units of f.
+        Noise level of the model: standard deviation of a value's error, in units of f.
+    noise_kind : NoiseKind
+        Where that noise comes from.
     order : float
         Observed truncation order: slope of log(error) over log(step) on the truncation branch; NaN if there is none.
     truncation, roundoff : Branch or None
@@ -146,6 +152,7 @@ class Scan:
     unit: str = ""
     formula: str = "central difference"
     function: str = ""
+    noise_kind: NoiseKind = NoiseKind.NOT_EXAMINED
     evaluations: int = 0
     notices: tuple[str, ...] = ()
     renderer: Callable[["Scan"], str] | None = None

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from gradcheck.records.advice import Advice
 from gradcheck.records.arrays import Array, frozen
 from gradcheck.records.finding import Finding
+from gradcheck.records.noise import NoiseKind
 from gradcheck.records.plain import plain
 from gradcheck.records.verdict import DiagnosisCode, Verdict
 
@@ -179,6 +180,8 @@ class Steps:
         0; or 1 or -1 where a bound is so near that the step is meant for three values above or below: x, x ± h, x ± 2h.
     noise : float
         Noise level of the function; of several outputs the largest.
+    noise_kind : NoiseKind
+        Where that noise comes from.
     """
 
     function: str
@@ -190,6 +193,7 @@ class Steps:
     noise: float
     forward_side: Array = field(default_factory=lambda: np.empty(0))
     central_side: Array = field(default_factory=lambda: np.empty(0))
+    noise_kind: NoiseKind = NoiseKind.NOT_EXAMINED
 
     def __post_init__(self) -> None:
         for name, usual in (("forward_side", 1.0), ("central_side", 0.0)):

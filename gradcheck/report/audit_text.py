@@ -252,7 +252,7 @@ def _steps(steps: Steps) -> list[str]:
         for i, name in enumerate(steps.names[:_ROWS])
     ]
     header = ("variable", "forward", "error left", "central", "error left")
-    noise = f"noise of the value: {wording.number(steps.noise, 2)}"
+    noise = wording.noise([steps.noise], [steps.noise_kind])
     return [
         *table(header, rows, right="-rrrr"),
         *_more(len(steps.names)),

@@ -5,7 +5,7 @@ from collections.abc import Mapping
 import numpy as np
 
 from gradcheck import wording
-from gradcheck.records.arrays import Array, IntArray
+from gradcheck.records.arrays import IntArray
 from gradcheck.records.estimate import Estimate
 from gradcheck.report.paragraphs import paragraph, table
 
@@ -117,14 +117,6 @@ def _name(estimate: Estimate, position: int) -> str:
 
 
 def _closing(estimate: Estimate) -> str:
-    noise = _range(estimate.noise)
-    told = f"Noise of the value: {noise}. " if noise else ""
+    noise = wording.capitalised(wording.noise(np.ravel(estimate.noise).tolist(), estimate.noise_kind))
+    told = f"{noise}. " if noise else ""
     return f"{told}{wording.capitalised(wording.cost(estimate.evaluations, estimate.seconds))}."
-
-
-def _range(values: Array) -> str:
-    finite = values[np.isfinite(values)]
-    if not finite.size:
-        return ""
-    low, high = (wording.number(float(end), 2) for end in (finite.min(), finite.max()))
-    return low if low == high else f"{low} to {high}"

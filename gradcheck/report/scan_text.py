@@ -68,7 +68,8 @@ def _branches(scan: Scan) -> str:
 
 def _closing(scan: Scan) -> str:
     order = f"Observed truncation order: {wording.number(scan.order, 2)}. " if math.isfinite(scan.order) else ""
-    noise = f"Noise of the value: {wording.number(scan.noise, 2)}. " if math.isfinite(scan.noise) else ""
+    known = wording.capitalised(wording.noise([scan.noise], [scan.noise_kind]))
+    noise = f"{known}. " if known else ""
     return f"{_branches(scan)}{order}{noise}{wording.count(scan.evaluations, 'evaluation').capitalize()}."
 
 

@@ -17,3 +17,6 @@ NO_ROOM = "the bounds leave no room for a step"
 FAILS = "the model fails close to the point"
 CUT_OFF = "digits are cut off: the values do not change at small steps"
 RIPPLED = "small steps and wide steps see different slopes: a ripple, an inner tolerance, or digits that were cut off"
+
+#: Reasons that noise can bring about.
+DOUBTS = (REASONS[Nature.JUMP], REASONS[Nature.PLATEAU], UNSETTLED, CUT_OFF, RIPPLED)

@@ -15,6 +15,7 @@ from gradcheck.witnesses.candidates import Candidate, best_of, candidate_of, onl
 from gradcheck.witnesses.difference_reasons import (
     BREAK,
     CUT_OFF,
+    DOUBTS,
     FAILS,
     NO_ROOM,
     REASONS,
@@ -494,6 +495,13 @@ class Track:
             elif output in self.reasons and self.reasons[output] in REASONS.values():
                 bound[output] = np.inf
         return value, bound, half, noise
+
+    def doubtful(self) -> BoolArray:
+        """(m,): outputs whose values carry, or may carry, noise that the answer's own interval does not show."""
+        doubts = self.noisy | (self.ripple if self.ripple.size else False)
+        for output, reason in self.reasons.items():
+            doubts[output] |= reason in DOUBTS
+        return doubts
 
     def _cover_ripple(self, output: int, value: Array, bound: Array) -> None:
         """Where a small ripple makes fine and wide slopes differ, the bound covers both; neither is surely true."""

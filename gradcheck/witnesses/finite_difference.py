@@ -236,6 +236,7 @@ class _Rounds:
             right=right,
             noise=quietest,
             noise_along=noise,
+            doubtful=np.stack([track.doubtful() for track in self.tracks]),
             spent=self.spent,
             works=bool(np.isfinite(bound).any()),
             reasons={

@@ -5,7 +5,7 @@ from typing import ClassVar
 
 import numpy as np
 
-from gradcheck.records.arrays import Array, frozen
+from gradcheck.records.arrays import Array, BoolArray, frozen
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -25,6 +25,8 @@ class Testimony:
         Noise level of each output that the bounds rest on; NaN where the witness needs none.
     noise_along : ndarray, shape (d, m)
         The same for each direction on its own, where it was measured; NaN elsewhere.
+    doubtful : ndarray of bool, shape (d, m)
+        Where the values carry, or may carry, more noise than `noise` tells: on a wider scale, or of another nature.
     spent : int
         Evaluations (or AD passes).
     source : str
@@ -47,6 +49,7 @@ class Testimony:
     right: Array = field(default_factory=lambda: np.empty(0))
     noise: Array = field(default_factory=lambda: np.empty(0))
     noise_along: Array = field(default_factory=lambda: np.empty(0))
+    doubtful: BoolArray = field(default_factory=lambda: np.zeros(0, bool))
     spent: int = 0
     works: bool = True
     reason: str = ""
@@ -59,6 +62,8 @@ class Testimony:
             if name not in ("value", "bound") and given.size == 0:
                 given = np.full(shape, np.nan)
             object.__setattr__(self, name, frozen(given))
+        doubtful = np.asarray(self.doubtful, dtype=bool)
+        object.__setattr__(self, "doubtful", frozen(doubtful if doubtful.size else np.zeros(shape, bool), dtype=bool))
         noise = np.asarray(self.noise, dtype=float)
         object.__setattr__(self, "noise", frozen(noise if noise.size else np.full(shape[-1:], np.nan)))
 

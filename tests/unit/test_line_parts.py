@@ -5,12 +5,12 @@ import math
 import numpy as np
 import pytest
 
-from gradcheck.health.fingerprints import crosses_a_single, decimal_lattice, single_precision
 from gradcheck.health.line_cells import difference_weights, hidden_jumps
 from gradcheck.health.line_noise import read_stencil, stencil
 from gradcheck.health.line_one_sided import one_sided
 from gradcheck.health.line_predictions import whole
 from gradcheck.health.line_samples import jitter, line_through
+from gradcheck.witnesses.fingerprints import crosses_a_single, decimal_lattice, single_precision
 
 RNG = np.random.default_rng(11)
 GRID = np.sort(RNG.uniform(0.0, 1.0, 40))

@@ -21,6 +21,7 @@ PUBLIC = [
     "GradcheckError",
     "ModelFailure",
     "ModelNotFound",
+    "NoiseKind",
     "Output",
     "Problem",
     "Scan",

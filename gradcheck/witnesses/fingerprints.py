@@ -26,9 +26,21 @@ def single_precision(values: Array) -> bool:
 
 def significant_bits(values: Array) -> Array:
     """(k,): length of the mantissa of each number without its trailing zeros."""
-    mantissa = (np.frexp(np.abs(values))[0] * 2.0**53).astype(np.int64)
-    lowest = (mantissa & -mantissa).astype(float)
-    return np.asarray(53.0 - np.log2(lowest))
+    mantissa, _ = np.frexp(np.abs(values))
+    return np.asarray(53.0 - np.log2(_lowest_bit(mantissa)))
+
+
+def lowest_bits(values: Array) -> Array:
+    """(k,): the largest power of two that divides each number; infinite where that is 0."""
+    mantissa, exponent = np.frexp(np.abs(values))
+    with np.errstate(divide="ignore", under="ignore"):
+        return np.where(mantissa > 0, np.ldexp(_lowest_bit(mantissa), exponent - 53), np.inf)
+
+
+def _lowest_bit(mantissa: Array) -> Array:
+    """(k,): value of the last bit set of mantissas in [0.5, 1), in units of the last bit that there is."""
+    whole = (mantissa * 2.0**53).astype(np.int64)
+    return np.asarray((whole & -whole).astype(float))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
