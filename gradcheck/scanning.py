@@ -92,9 +92,10 @@ def scan(
     room = room_along(subject.start, directions, subject.domain)
     if max(room.below[0], room.above[0]) <= 0:
         raise UsageError(f"the bounds leave no room for a step along {label}")
-    curve = conduct_one(addressed(step_curve(subject.start, directions, room, centre), function=name), session.gate)
     heard = conduct_one(addressed(noise(subject.start, directions, room, centre), function=name), session.gate)
     level = float(heard.level[0, 0])
+    inquiry = step_curve(subject.start, directions, room, centre, level)
+    curve = conduct_one(addressed(inquiry, function=name), session.gate)
     record = Scan(
         steps=curve.steps,
         values=curve.values,

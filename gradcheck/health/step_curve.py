@@ -64,7 +64,9 @@ class StepCurve:
     reference: Testimony
 
 
-def step_curve(base: Array, directions: Directions, room: Room, centre: Array) -> Inquiry[StepCurve]:
+def step_curve(
+    base: Array, directions: Directions, room: Room, centre: Array, noise: float = np.nan
+) -> Inquiry[StepCurve]:
     """Quotients at all steps of the ladder that the bounds allow, with their errors.
 
     Parameters
@@ -73,6 +75,8 @@ def step_curve(base: Array, directions: Directions, room: Room, centre: Array) -
         As in `finite_difference`; one output.
     directions : ndarray
         One coordinate index (1,) or one row (1, n).
+    noise : float
+        Standard deviation of one value, if it was measured; else that of the reference.
 
     Returns
     -------
@@ -94,7 +98,9 @@ def step_curve(base: Array, directions: Directions, room: Room, centre: Array) -
     near, far = offsets[:k], offsets[k:]
     values = quotients(near, far, reply.values[0, :k, 0], reply.values[0, k:, 0], None if both else float(centre[0]))
     taken = np.abs(near - far) / 2 if both else np.abs(near)
-    return _read(taken, values, reference, float(abs(centre[0])), one_sided=not both)
+    for level in (float(reference.noise[0]), ROUNDING * float(np.spacing(abs(centre[0])))):
+        noise = noise if np.isfinite(noise) else level
+    return _read(taken, values, reference, noise, one_sided=not both)
 
 
 def quotients(near: Array, far: Array, first: Array, second: Array, centre: float | None) -> Array:
@@ -106,10 +112,8 @@ def quotients(near: Array, far: Array, first: Array, second: Array, centre: floa
         return np.asarray((first - centre) / near * far / spread - (second - centre) / far * near / spread)
 
 
-def _read(steps: Array, values: Array, reference: Testimony, largest: float, *, one_sided: bool) -> StepCurve:
+def _read(steps: Array, values: Array, reference: Testimony, noise: float, *, one_sided: bool) -> StepCurve:
     """Errors, best step and branches of measured quotients."""
-    noise = float(reference.noise[0])
-    noise = noise if np.isfinite(noise) else ROUNDING * float(np.spacing(largest))
     left_by_noise = (ONE_SIDED_NORM if one_sided else CENTRAL_NORM) * noise / steps
     errors, resolved = _errors(values, reference, left_by_noise)
     # A first best step, from what was seen alone, parts the branches; the branches then tell luck from exactness.

@@ -16,8 +16,8 @@ import pytest
 from scipy.integrate import solve_ivp
 
 import gradcheck
-from gradcheck.counsel.solver_steps import solver_steps
 from gradcheck.evaluation.conduct import conduct_one
+from gradcheck.health.step_formulas import forward_step
 from gradcheck.problem.domain import domain_of
 from gradcheck.witnesses.difference_table import difference_table, gamma
 from gradcheck.witnesses.noise import noise
@@ -136,10 +136,10 @@ def test_a_single_table_is_good_to_a_factor_of_two_or_three(order, limits):
 
 def test_the_forward_step_has_the_published_constants():
     """Moré & Wild (2012): h = 8^(1/4)·sqrt(ε/|f''|); μ²h²/4 + 2ε²/h² is then sqrt(2)·μ·ε, its least value."""
-    steps = solver_steps("f", ("t",), 1e-6, np.array([4.0]), np.array([1.0]), np.array([1.0]))
-    error = math.sqrt((4.0 * steps.forward[0]) ** 2 / 4 + 2e-12 / steps.forward[0] ** 2)
+    step = float(forward_step(np.array(1e-6), np.array(4.0)))
+    error = math.sqrt((4.0 * step) ** 2 / 4 + 2e-12 / step**2)
 
-    assert steps.forward[0] == pytest.approx(STEP_FACTOR * math.sqrt(1e-6 / 4.0), rel=1e-12)
+    assert step == pytest.approx(STEP_FACTOR * math.sqrt(1e-6 / 4.0), rel=1e-12)
     assert error == pytest.approx(ERROR_FACTOR * math.sqrt(1e-6 * 4.0), rel=1e-12)
     assert pytest.approx(STEP_FACTOR, rel=1e-15) == 8**0.25
     assert pytest.approx(ERROR_FACTOR, rel=1e-15) == 2**0.25
