@@ -97,8 +97,8 @@ class Track:
         The course from the interval that the ladder found to wider ones; None before it.
     inner_noise, inner_order : ndarray, shape (m,)
         Noise and order of the last fit of `main` that was kept.
-    settled : float
-        Half-width below which the ladder saw the quotients settle.
+    settled, narrowest : float
+        Half-width below which the ladder saw the quotients settle; the least that `main` was measured on.
     varied : ndarray, shape (m,)
         Largest variation seen on an interval so far.
     heard : ndarray, shape (m,)
@@ -133,6 +133,7 @@ class Track:
     ripple: BoolArray = field(default_factory=lambda: np.empty(0, bool))
     small: BoolArray = field(default_factory=lambda: np.empty(0, bool))
     settled: float = 0.0
+    narrowest: float = np.inf
     coarse_tail: Array = field(default_factory=lambda: np.empty(0))
     coarse_flat: BoolArray = field(default_factory=lambda: np.zeros(0, bool))
     same: BoolArray = field(default_factory=lambda: np.zeros(0, bool))
@@ -320,6 +321,8 @@ class Track:
     def _after_main(self, fits: Fit, i: int, half: float, at_floor: BoolArray) -> None:
         self._keep(fits, i, half, at_floor)
         self.inner_noise, self.inner_order = fits.noise[i], fits.order[i].astype(float)
+        # An interval of a few units in the last place does not get narrower any more.
+        before, self.narrowest = self.narrowest, min(half, self.narrowest)
         waiting = ~self.satisfied
         if not waiting.any():
             if self._goes_outward(half) or self._broadens(fits, i, half, half):
@@ -344,7 +347,10 @@ class Track:
             # Beside a large value even a small ripple may be all the variation that is left: digits of a cancelled sum.
             self.ripple = (self.small | (fits.tail[i] < CANCELLED * fits.floor[i])) & fits.flat[i]
             self.stage = "ladder"
-        elif half > 1.5 * self.settled:
+        elif half <= 1.5 * self.settled and 3 * half > self._failed_half:
+            # Nearly the interval that failed: too little narrower to tell noise from structure.
+            self._restart(half / 8)
+        elif 1.5 * self.settled < half < before:
             # Probably noise that the ladder missed, its few values falling on one digit; the finest interval will tell.
             same = self._hears_the_same(fits, i, half)
             self.same |= same
@@ -425,14 +431,18 @@ class Track:
         else:
             self.stop(UNSETTLED)
 
+    @property
+    def _failed_half(self) -> float:
+        """Half-width of the interval that sent the track to the ladder; 0 before."""
+        return 0.0 if self.coarse is None else self.coarse.half
+
     def _hears_the_same(self, fits: Fit, i: int, half: float) -> BoolArray:
         """Outputs whose left-over coefficients are as large on this interval as on the much wider one before the
         ladder.
 
         Those of a smooth function, and of one with a kink, shrink with the interval; noise does not.
         """
-        assert self.coarse is not None
-        narrower = 4 * half <= self.coarse.half
+        narrower = 3 * half <= self._failed_half
         same: BoolArray = ~self.satisfied & narrower & fits.flat[i] & (fits.tail[i] >= 0.5 * self.coarse_tail)
         return same
 

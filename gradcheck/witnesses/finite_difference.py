@@ -201,7 +201,7 @@ class _Rounds:
         finite, refused = reply.finite, np.any(reply.status == Status.REFUSED, axis=1)
         works = np.all(finite, axis=1)
         if side == 0:
-            rungs = yield from self._below(rows, works, steps, rungs, slope)
+            rungs = yield from self._below(rows, works, steps, rungs)
         for i, track in enumerate(tracks):
             if refused[i]:
                 track.stop(SPENT)
@@ -210,9 +210,7 @@ class _Rounds:
             else:
                 track.after_ladder(rungs, i, self.centre == 0)
 
-    def _below(
-        self, rows: IntArray, works: BoolArray, steps: Array, rungs: Rungs, slope: Array
-    ) -> Generator[Request, Reply, Rungs]:
+    def _below(self, rows: IntArray, works: BoolArray, steps: Array, rungs: Rungs) -> Generator[Request, Reply, Rungs]:
         """The ladder's rungs again, after a look at still finer steps where it heard noise."""
         finest = rounded_half_width(steps[:, 0] / LADDER[0], self.room.grain[rows])[:, None] * FINEST
         fine = works & (rungs.nature == Nature.NOISE).any(axis=1) & (finest[:, 0] >= 4 * self.room.grain[rows])
@@ -226,7 +224,7 @@ class _Rounds:
         # Where the budget or the model ends, nothing is seen: values as at the point.
         seen = reply.finite.all(axis=1)
         values[asked[seen]] = reply.values[seen]
-        return without_waves(rungs, steps[:, 1], finest, values[:, :2], values[:, 2:], self.centre, slope)
+        return without_waves(rungs, steps[:, 1], finest, values[:, :2], values[:, 2:], self.centre)
 
     def _realised(self, rows: IntArray, offsets: Array) -> Array:
         """Displacements as rounding will leave them: coordinates move to the number that x + h really is."""

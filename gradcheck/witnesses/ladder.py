@@ -18,7 +18,7 @@ LADDER = 0.8637 * 8.0 ** -np.arange(13, 1, -1)
 #: Two more steps below these, where the ladder heard noise: a wave too fast for it is smooth there.
 FINEST = 0.8637 * 8.0 ** -np.arange(16, 14, -1)
 #: What second differences keep of their size on the finest steps if they are noise; what share of the noise a wave's
-#: slope and bend explain, carried on to the ladder's second step; how many units of rounding they must exceed.
+#: bend explains, carried on to the ladder's second step; how many units of rounding it must exceed.
 KEPT, EXPLAINED, SEEN = 0.1, 0.2, 6.0
 #: Quotients that differ by less than this share still belong to one smooth piece.
 SIMILAR = 0.03
@@ -129,9 +129,11 @@ def read_ladder(
     ):
         nature[where] = mark
 
-    # Where second differences shrink, those of the second rung still belong to the function.
-    smooth = nature == Nature.SMOOTH
-    noise = np.where(smooth, np.minimum(noise, np.maximum(np.abs(second[:, 0]) / _SECOND_DIFFERENCE, floor)), noise)
+    # Where second differences shrink as those of a smooth function do, those of the second rung still belong to it; on
+    # the last digit of a sum they may vanish at once.
+    fine, coarser = np.abs(second[:, 0]), np.abs(second[:, 1])
+    shrinks = (nature == Nature.SMOOTH) & (8 * fine <= coarser) & (coarser <= 600 * fine)
+    noise = np.where(shrinks, np.minimum(noise, np.maximum(fine / _SECOND_DIFFERENCE, floor)), noise)
     error = 4 * noise[:, None, :] / h
     agreed = _largest_agreed(quotient, error)
     similar = _largest_agreed(quotient, error + SIMILAR * np.abs(quotient).max(axis=1, keepdims=True))
@@ -153,9 +155,7 @@ def read_ladder(
     )
 
 
-def without_waves(
-    rungs: Rungs, step: Array, finest: Array, up: Array, down: Array, centre: Array, coarse_slope: Array
-) -> Rungs:
+def without_waves(rungs: Rungs, step: Array, finest: Array, up: Array, down: Array, centre: Array) -> Rungs:
     """Rungs on which a wave that was too fast for the ladder no longer counts as noise.
 
     Parameters
@@ -168,25 +168,21 @@ def without_waves(
     up, down : ndarray, shape (d, 2, m)
         Values at + and − these.
     centre : ndarray, shape (m,)
-    coarse_slope : ndarray, shape (d, m)
-        The slope that a wide fit saw.
 
     Returns
     -------
     Rungs
-        Where the values on the finest steps are smooth, and steep or bent enough to make the noise of the ladder, they
-        are smooth with the larger of these steps. Values that are smooth there and go as the wide fit does belong to a
-        model that jumps: that is noise.
+        Where the values on the finest steps are smooth, and bent enough to make the noise of the ladder, they are
+        smooth with the larger of these steps. Values that are smooth and straight there, however steep, belong to a
+        model that jumps, as the last digits of a cancelled sum do: that is noise.
     """
     floor = ROUNDING * np.spacing(np.maximum(np.abs(up).max(axis=1), np.abs(centre)))
     heard = np.fmax(rungs.noise, floor)
     second = up + down - 2 * centre
     level = np.sqrt(np.mean(second**2, axis=1)) / _SECOND_DIFFERENCE
     h = finest[:, 1:]
-    slope, bend = np.abs((up[:, 1] - down[:, 1]) / 2 - coarse_slope * h), np.abs(second[:, 1]) / 2
-    slope, bend = (np.where(size > SEEN * floor, size, 0.0) for size in (slope, bend))
-    ratio = step[:, None] / h
-    explained = slope * ratio + bend * ratio**2 > EXPLAINED * heard
+    bend = np.abs(second[:, 1]) / 2
+    explained = (bend > SEEN * floor) & (bend * (step[:, None] / h) ** 2 > EXPLAINED * heard)
     wave = (rungs.nature == Nature.NOISE) & (level < KEPT * heard) & explained
     return replace(
         rungs,
