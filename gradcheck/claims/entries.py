@@ -90,4 +90,5 @@ def merged(reports: Sequence[CheckReport]) -> CheckReport:
         notices=tuple(dict.fromkeys(n for report in reports for n in report.notices)),
         evaluations=sum(report.evaluations for report in reports),
         seconds=sum(report.seconds for report in reports),
+        text="",
     )
