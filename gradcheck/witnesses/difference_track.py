@@ -3,7 +3,7 @@
 States: ``probe`` (three pairs) → ``low`` (a line or a parabola: two wider pairs) or ``main`` (seven pairs) → ``fine``
 or ``wide`` (five more pairs) → ``done``; from ``main`` also back to ``main`` on a smaller interval, or to ``ladder``.
 For second derivatives ``probe`` and ``main`` lead to ``broad`` (twelve pairs on the widest interval that promises
-well).
+well). From an interval that the ladder found, ``outward`` looks at wider ones before it is believed.
 """
 
 from dataclasses import dataclass, field, replace
@@ -25,6 +25,7 @@ from gradcheck.witnesses.difference_reasons import (
     UNSETTLED,
 )
 from gradcheck.witnesses.ladder import Nature, Rungs
+from gradcheck.witnesses.outward import Outward
 from gradcheck.witnesses.polynomial_fit import Fit
 from gradcheck.witnesses.stencils import LOW, MOST_NODES, WIDE
 from gradcheck.witnesses.two_sides import Sides, meeting
@@ -89,6 +90,13 @@ class Track:
         Where each side is smooth on its own and both together are not: what they say together.
     small, ripple : ndarray of bool, shape (m,)
         Whether what sent the track to the ladder was small beside the function's variation; and did not decay either.
+    coarse_flat, same : ndarray of bool, shape (m,)
+        Where the coefficients that sent the track to the ladder did not decay; where they were as large on a narrower
+        interval.
+    outward : Outward or None
+        The course from the interval that the ladder found to wider ones; None before it.
+    inner_noise, inner_order : ndarray, shape (m,)
+        Noise and order of the last fit of `main` that was kept.
     settled : float
         Half-width below which the ladder saw the quotients settle.
     varied : ndarray, shape (m,)
@@ -126,6 +134,11 @@ class Track:
     small: BoolArray = field(default_factory=lambda: np.empty(0, bool))
     settled: float = 0.0
     coarse_tail: Array = field(default_factory=lambda: np.empty(0))
+    coarse_flat: BoolArray = field(default_factory=lambda: np.zeros(0, bool))
+    same: BoolArray = field(default_factory=lambda: np.zeros(0, bool))
+    outward: Outward | None = None
+    inner_noise: Array = field(default_factory=lambda: np.zeros(0))
+    inner_order: Array = field(default_factory=lambda: np.zeros(0))
     varied: Array = field(default_factory=lambda: np.zeros(0))
     heard: Array = field(default_factory=lambda: np.zeros(0))
     noisy: BoolArray = field(default_factory=lambda: np.zeros(0, bool))
@@ -157,6 +170,10 @@ class Track:
             heard=np.zeros(outputs),
             varied=np.zeros(outputs),
             noisy=np.zeros(outputs, bool),
+            coarse_flat=np.zeros(outputs, bool),
+            same=np.zeros(outputs, bool),
+            inner_noise=np.zeros(outputs),
+            inner_order=np.full(outputs, np.inf),
             left=np.full(outputs, np.nan),
             right=np.full(outputs, np.nan),
             slope_error=np.full(outputs, np.nan),
@@ -203,11 +220,13 @@ class Track:
             self._after_main(fits, i, half, at_floor)
         elif self.stage == "broad":
             self._after_broad(fits, i, half, at_floor)
+        elif self.stage == "outward":
+            self._after_outward(fits, i, half, at_floor)
         elif self._meets_narrow_feature(fits, i):
             self._look_closer()
         else:
             # The wider interval may hold more structure than fits; then the main fit stands alone.
-            self._keep(fits, i, half, at_floor | (fits.resolved[i] & self.noisy))
+            self._keep(fits, i, half, at_floor | (fits.resolved[i] & self.noisy), self._pooled(fits, i))
             self._finish(fits, i)
 
     def _at_floor(self, fits: Fit, i: int) -> BoolArray:
@@ -300,9 +319,10 @@ class Track:
 
     def _after_main(self, fits: Fit, i: int, half: float, at_floor: BoolArray) -> None:
         self._keep(fits, i, half, at_floor)
+        self.inner_noise, self.inner_order = fits.noise[i], fits.order[i].astype(float)
         waiting = ~self.satisfied
         if not waiting.any():
-            if self._broadens(fits, i, half, half):
+            if self._goes_outward(half) or self._broadens(fits, i, half, half):
                 return
             nearly_low = bool((fits.order[i] <= 8).all())
             wide = self.side == 0 and nearly_low and half * WIDE <= self.reach
@@ -319,19 +339,51 @@ class Track:
             self._restart(half * float(np.clip(ratio ** (1 / 13), 0.02, 0.7)))
         elif not self.laddered:
             self.coarse = candidate_of(fits, i, half, fits.resolved[i])
-            self.coarse_tail = fits.tail[i]
+            self.coarse_tail, self.coarse_flat = fits.tail[i], fits.flat[i] & waiting
             self.small = fits.tail[i] < RIPPLE * fits.variation[i]
             # Beside a large value even a small ripple may be all the variation that is left: digits of a cancelled sum.
             self.ripple = (self.small | (fits.tail[i] < CANCELLED * fits.floor[i])) & fits.flat[i]
             self.stage = "ladder"
         elif half > 1.5 * self.settled:
             # Probably noise that the ladder missed, its few values falling on one digit; the finest interval will tell.
-            same = self._hears_the_same(fits, i, half)[waiting].all()
-            self._restart(self.settled if same else max(half / 8, self.settled))
+            same = self._hears_the_same(fits, i, half)
+            self.same |= same
+            self._restart(self.settled if same[waiting].all() else max(half / 8, self.settled))
         else:
-            for output in np.flatnonzero(self._hears_the_same(fits, i, half)):
+            # On the finest interval the few values may all fall on one digit; what was heard before counts as well.
+            for output in np.flatnonzero(waiting & (self.same | self._hears_the_same(fits, i, half))):
                 self._accept_noise(int(output))
             self.stop(UNSETTLED)
+
+    def _pooled(self, fits: Fit, i: int) -> Array:
+        """(m,): how much noisier the fit of `main` was than this one, where this one has taken that noise for
+        structure.
+        """
+        with np.errstate(invalid="ignore", divide="ignore"):
+            louder = np.where(fits.noise[i] > 0, self.inner_noise / fits.noise[i], 1.0)
+        return np.where(fits.order[i] > self.inner_order + 1, np.fmax(louder, 1.0), 1.0)
+
+    def _goes_outward(self, half: float) -> bool:
+        """Whether the interval that the ladder found is to be looked at from outside before it is believed."""
+        if self.outward is not None or self.coarse is None or not self.coarse_flat.any():
+            return False
+        self.outward = Outward.begin(half, self.coarse.half, self.coarse_tail, self.coarse_flat & ~self.noisy)
+        return self._wider_outward(half)
+
+    def _wider_outward(self, half: float) -> bool:
+        assert self.outward is not None
+        wider = self.outward.next_half(half)
+        if wider:
+            self.half, self.stage, self.filled = wider, "outward", 0
+        return bool(wider)
+
+    def _after_outward(self, fits: Fit, i: int, half: float, at_floor: BoolArray) -> None:
+        outward = self.outward
+        assert outward is not None
+        outward.hear(fits, i, half, at_floor)
+        self.ripple = (self.ripple | outward.jumps) & ~outward.smooth
+        if not self._wider_outward(half):
+            self._restart(outward.inner)
 
     def _broadens(self, fits: Fit, i: int, half: float, narrow: float) -> bool:
         """Go on to the widest interval on which the stencil of `broad` promises to end in rounding as well.
@@ -435,9 +487,10 @@ class Track:
     def _restart(self, half: float) -> None:
         self.half, self.stage, self.filled = half, "main", 0
 
-    def _keep(self, fits: Fit, i: int, half: float, accepted: BoolArray) -> None:
+    def _keep(self, fits: Fit, i: int, half: float, accepted: BoolArray, widening: Array | float = 1.0) -> None:
         if accepted.any():
-            self.candidates.append(candidate_of(fits, i, half, accepted))
+            kept = candidate_of(fits, i, half, accepted)
+            self.candidates.append(replace(kept, bound=kept.bound * widening))
             self.satisfied |= accepted
 
     def _finish(self, fits: Fit, i: int) -> None:

@@ -54,6 +54,7 @@ TWO_SIDED = {
     "probe": Stage(_pairs(_SEVEN[:3]), 1.0, 0),
     "low": Stage(_pairs(np.concatenate([_SEVEN[:3] / LOW, _on_grid(np.array([1.0])), _NEAR])), LOW, 6),
     "main": Stage(_pairs(_SEVEN), 1.0, 6),
+    "outward": Stage(_pairs(_SEVEN), 1.0, 0),
     "fine": Stage(_pairs(np.concatenate([_SEVEN, _BETWEEN, _NEAR])), 1.0, 14),
     "wide": Stage(_pairs(np.concatenate([_SEVEN / WIDE, _OUTER, _NEAR])), WIDE, 14),
     "broad": Stage(_pairs(np.concatenate([_BROAD, _NEAR])), 1.0, 0),
@@ -70,6 +71,7 @@ ONE_SIDED = {
     "probe": Stage(_tuple(_SIDE_SEVEN[:6]), 1.0, 0),
     "low": Stage(_tuple(np.concatenate([_SIDE_SEVEN[:6] / LOW, _on_grid(np.array([1.0, 0.85, 0.7, 0.5]))])), LOW, 6),
     "main": Stage(_tuple(np.concatenate([_SIDE_SEVEN, _SIDE_BETWEEN])), 1.0, 6),
+    "outward": Stage(_tuple(np.concatenate([_SIDE_SEVEN, _SIDE_BETWEEN])), 1.0, 0),
     "fine": Stage(_tuple(np.concatenate([_SIDE_SEVEN, _SIDE_BETWEEN, _SIDE_QUARTERS])), 1.0, 14),
     "broad": Stage(_tuple(_SIDE_BROAD), 1.0, 0),
 }
