@@ -5,6 +5,7 @@ word on a claim it does not confirm.
 """
 
 from dataclasses import dataclass, replace
+from functools import lru_cache
 
 import numpy as np
 
@@ -32,6 +33,7 @@ CLOSE, CLOSE_DEVIATIONS, CLOSE_SHARE = 2.0**-20, 30.0, 1e-6
 DEVIATIONS = 8.0
 #: Multiple of the next Taylor term, as the decay of the terms before foretells it, that counts as truncation.
 FORETOLD = 10.0
+_LARGEST = float(np.finfo(float).max)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -134,6 +136,17 @@ class Pairs:
 
 def _weights_at_zero(at: Array, powers: IntArray) -> Array:
     """(d, k): weights of values at the abscissae `at` (d, k) that give the constant of a sum of k powers."""
+    if (at == at[:1]).all():  # nearly always: the steps of all directions have the same ratios
+        return np.tile(_weights_of_one(tuple(at[0].tolist()), tuple(powers.tolist())), (len(at), 1))
+    return _solved(at, powers)
+
+
+@lru_cache(maxsize=64)
+def _weights_of_one(at: tuple[float, ...], powers: tuple[int, ...]) -> Array:
+    return _solved(np.array([at]), np.array(powers))
+
+
+def _solved(at: Array, powers: IntArray) -> Array:
     basis = np.swapaxes(at[:, :, None] ** powers, 1, 2)
     unit = np.zeros((*at.shape, 1))
     unit[:, 0] = 1.0
@@ -245,7 +258,12 @@ def _foretold(odd: Array, even: Array) -> Array:
         decay = np.fmax(np.fmax(a2 / a1, np.sqrt(a3 / a1)), np.cbrt(a4 / a1))
         # Near a critical point the first term is no measure: odd terms decay like odd ones, even ones like even ones.
         apart = np.fmax(np.where(a3 > 0, a3 * np.fmin(a3 / a1, 1.0), 0.0), a4 * np.fmin(np.sqrt(a4 / a2), 1.0))
-        return np.asarray(np.where(a2 <= a1, a1 * np.nan_to_num(decay) ** 4, np.nan_to_num(apart)))
+        return np.asarray(np.where(a2 <= a1, a1 * _number(decay) ** 4, _number(apart)))
+
+
+def _number(sizes: Array) -> Array:
+    """Sizes >= 0 with 0 for NaN and the largest number for infinity; `numpy.nan_to_num` takes four times as long."""
+    return np.where(np.isnan(sizes), 0.0, np.minimum(sizes, _LARGEST))
 
 
 def _testimony(
