@@ -126,5 +126,5 @@ def digits_agreed(claim: Array, value: Array, bound: Array) -> Array:
         relative = (np.abs(claim - value) + bound) / size
         digits = -np.log10(relative)
     digits = np.where(size == 0, np.where(bound == 0, 17.0, 0.0), digits)
-    agreed: Array = np.clip(np.nan_to_num(digits, nan=0.0, posinf=17.0, neginf=0.0), 0.0, 17.0)
+    agreed: Array = np.where(np.isnan(digits), 0.0, digits).clip(0.0, 17.0)
     return agreed
