@@ -149,8 +149,8 @@ class _Rounds:
         offsets = self._realised(rows, meant)
         reply = yield Request(base=self.base, directions=self.directions[rows], offsets=offsets)
         self.spent += reply.spent
-        finite, refused = reply.finite, (reply.status == Status.REFUSED).any(axis=1).tolist()
-        works = finite.all(axis=1).tolist()
+        finite = reply.finite
+        refused, works = np.any(reply.status == Status.REFUSED, axis=1), np.all(finite, axis=1)
         slips = sign * (offsets - meant)
         fitted = []
         for i, (track, own) in enumerate(zip(tracks, half.tolist(), strict=True)):
