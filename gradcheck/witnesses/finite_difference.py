@@ -19,7 +19,7 @@ from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request, S
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.witnesses.difference_reasons import SPENT, UNSETTLED
 from gradcheck.witnesses.difference_track import Track
-from gradcheck.witnesses.ladder import LADDER, read_ladder
+from gradcheck.witnesses.ladder import FINEST, LADDER, Nature, Rungs, read_ladder, without_waves
 from gradcheck.witnesses.polynomial_fit import CLOSE, Fit, fit, stencil_on
 from gradcheck.witnesses.stencils import stage_of
 from gradcheck.witnesses.steps import Room, least_half_width, rounded_half_width
@@ -211,6 +211,8 @@ class _Rounds:
         rungs = read_ladder(realised, up, down, self.centre, np.full(rows.size, side != 0), slope)
         finite, refused = reply.finite, np.any(reply.status == Status.REFUSED, axis=1)
         works = np.all(finite, axis=1)
+        if side == 0:
+            rungs = yield from self._below(rows, works, steps, rungs, slope)
         for i, track in enumerate(tracks):
             if refused[i]:
                 track.stop(SPENT)
@@ -218,6 +220,24 @@ class _Rounds:
                 track.after_failure(*_failed_sides(finite[i], offsets[i]))
             else:
                 track.after_ladder(rungs, i, self.centre == 0)
+
+    def _below(
+        self, rows: IntArray, works: BoolArray, steps: Array, rungs: Rungs, slope: Array
+    ) -> Generator[Request, Reply, Rungs]:
+        """The ladder's rungs again, after a look at still finer steps where it heard noise."""
+        finest = rounded_half_width(steps[:, 0] / LADDER[0], self.room.grain[rows])[:, None] * FINEST
+        fine = works & (rungs.nature == Nature.NOISE).any(axis=1) & (finest[:, 0] >= 4 * self.room.grain[rows])
+        asked = np.flatnonzero(fine)
+        if asked.size == 0:
+            return rungs
+        offsets = self._realised(rows[asked], np.concatenate([finest[asked], -finest[asked]], axis=1))
+        reply = yield Request(base=self.base, directions=self.directions[rows[asked]], offsets=offsets)
+        self.spent += reply.spent
+        values = np.broadcast_to(self.centre, (rows.size, 4, self.centre.size)).copy()
+        # Where the budget or the model ends, nothing is seen: values as at the point.
+        seen = reply.finite.all(axis=1)
+        values[asked[seen]] = reply.values[seen]
+        return without_waves(rungs, steps[:, 1], finest, values[:, :2], values[:, 2:], self.centre, slope)
 
     def _realised(self, rows: IntArray, offsets: Array) -> Array:
         """Displacements as rounding will leave them: coordinates move to the number that x + h really is."""

@@ -4,7 +4,7 @@ A fit whose coefficients stop decaying far above rounding has met either noise, 
 fast wave, a kink, a jump, a plateau. Differences at steps that shrink by 8 tell them apart.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from enum import IntEnum
 
 import numpy as np
@@ -15,6 +15,11 @@ from gradcheck.witnesses.polynomial_fit import ROUNDING
 #: Steps in units of the variable's size, finest first. No round numbers: at a round x, round steps meet round waves and
 #: stairs always in the same phase.
 LADDER = 0.8637 * 8.0 ** -np.arange(13, 1, -1)
+#: Two more steps below these, where the ladder heard noise: a wave too fast for it is smooth there.
+FINEST = 0.8637 * 8.0 ** -np.arange(16, 14, -1)
+#: What second differences keep of their size on the finest steps if they are noise; what share of the noise a wave's
+#: slope and bend explain, carried on to the ladder's second step; how many units of rounding they must exceed.
+KEPT, EXPLAINED, SEEN = 0.1, 0.2, 6.0
 #: Quotients that differ by less than this share still belong to one smooth piece.
 SIMILAR = 0.03
 #: A second difference of independent errors of size 1 has this standard deviation.
@@ -124,6 +129,9 @@ def read_ladder(
     ):
         nature[where] = mark
 
+    # Where second differences shrink, those of the second rung still belong to the function.
+    smooth = nature == Nature.SMOOTH
+    noise = np.where(smooth, np.minimum(noise, np.maximum(np.abs(second[:, 0]) / _SECOND_DIFFERENCE, floor)), noise)
     error = 4 * noise[:, None, :] / h
     agreed = _largest_agreed(quotient, error)
     similar = _largest_agreed(quotient, error + SIMILAR * np.abs(quotient).max(axis=1, keepdims=True))
@@ -142,6 +150,51 @@ def read_ladder(
         left=np.where(at_kink, left * unit, np.nan),
         right=np.where(at_kink, right * unit, np.nan),
         slope_error=np.where(at_kink, error * unit, np.nan),
+    )
+
+
+def without_waves(
+    rungs: Rungs, step: Array, finest: Array, up: Array, down: Array, centre: Array, coarse_slope: Array
+) -> Rungs:
+    """Rungs on which a wave that was too fast for the ladder no longer counts as noise.
+
+    Parameters
+    ----------
+    rungs : Rungs
+    step : ndarray, shape (d,)
+        Second step of the ladder.
+    finest : ndarray, shape (d, 2)
+        Two steps finer than the ladder, increasing.
+    up, down : ndarray, shape (d, 2, m)
+        Values at + and − these.
+    centre : ndarray, shape (m,)
+    coarse_slope : ndarray, shape (d, m)
+        The slope that a wide fit saw.
+
+    Returns
+    -------
+    Rungs
+        Where the values on the finest steps are smooth, and steep or bent enough to make the noise of the ladder, they
+        are smooth with the larger of these steps. Values that are smooth there and go as the wide fit does belong to a
+        model that jumps: that is noise.
+    """
+    floor = ROUNDING * np.spacing(np.maximum(np.abs(up).max(axis=1), np.abs(centre)))
+    heard = np.fmax(rungs.noise, floor)
+    second = up + down - 2 * centre
+    level = np.sqrt(np.mean(second**2, axis=1)) / _SECOND_DIFFERENCE
+    h = finest[:, 1:]
+    slope, bend = np.abs((up[:, 1] - down[:, 1]) / 2 - coarse_slope * h), np.abs(second[:, 1]) / 2
+    slope, bend = (np.where(size > SEEN * floor, size, 0.0) for size in (slope, bend))
+    ratio = step[:, None] / h
+    explained = slope * ratio + bend * ratio**2 > EXPLAINED * heard
+    wave = (rungs.nature == Nature.NOISE) & (level < KEPT * heard) & explained
+    return replace(
+        rungs,
+        nature=np.where(wave, np.int8(Nature.SMOOTH), rungs.nature),
+        quotient=np.where(wave, (up[:, 1] - down[:, 1]) / (2 * h), rungs.quotient),
+        step=np.where(wave, h, rungs.step),
+        wide_step=np.where(wave, h, rungs.wide_step),
+        noise=np.where(wave, np.fmax(level, floor), rungs.noise),
     )
 
 

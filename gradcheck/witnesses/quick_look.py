@@ -94,9 +94,9 @@ class Pairs:
             spent=wider.spent,
         )
 
-    def narrowest(self, count: int) -> "Pairs":
-        """The last pairs only."""
-        return replace(self, steps=self.steps[:, -count:], odd=self.odd[:, -count:], even=self.even[:, -count:])
+    def part(self, which: slice) -> "Pairs":
+        """Some of the pairs only."""
+        return replace(self, steps=self.steps[:, which], odd=self.odd[:, which], even=self.even[:, which])
 
     def taylor(self) -> tuple[Array, Array]:
         """Odd terms a1, a3, ... and even ones a2, a4, ..., each (d, k, m), as values at the widest step of the pairs.
@@ -218,7 +218,7 @@ def wider_look(
     -------
     Testimony
         Along the directions `wanted`, in their order. The extrapolated values of two and of three pairs differ by the
-        error of the worse one.
+        error of the worse one. Rounding weighs less on the two wide pairs, truncation on all three: the better counts.
     """
     silent = _testimony(wanted.size, np.arange(0), centre)
     if seen.pairs is None:
@@ -235,9 +235,18 @@ def wider_look(
     steps = rounded_half_width(reach[rows], room.grain[rows])
     wider = yield from _measured(base, directions, rows, steps[:, None], centre)
     pairs = seen.pairs.beside(wider, places[rows])
-    value, amplification = pairs.extrapolated()
-    two, _ = pairs.narrowest(2).extrapolated()
-    return _testimony(wanted.size, chosen, centre, pairs, value, np.abs(value - two), amplification)
+    three, of_three = pairs.extrapolated()
+    narrow, _ = pairs.part(slice(1, None)).extrapolated()
+    wide, of_wide = pairs.part(slice(0, 2)).extrapolated()
+    all_three = _testimony(wanted.size, chosen, centre, pairs, three, np.abs(three - narrow), of_three)
+    widest = _testimony(wanted.size, chosen, centre, pairs, wide, np.abs(three - wide), of_wide)
+    return _sharper(all_three, widest)
+
+
+def _sharper(one: Testimony, other: Testimony) -> Testimony:
+    """The smaller bound of two, entry by entry."""
+    better = other.bound < one.bound
+    return replace(one, value=np.where(better, other.value, one.value), bound=np.where(better, other.bound, one.bound))
 
 
 def _measured(base: Array, directions: Directions, rows: IntArray, steps: Array, centre: Array) -> Inquiry[Pairs]:
