@@ -27,7 +27,9 @@ def entries_of(subject: Subject, function: str, kind: str, examined: Examined, l
 
     return Entries(
         index=index,
-        name=tuple(entry_name(subject, function, m, int(i), int(j)) for i, j in zip(rows, columns, strict=True)),
+        name=tuple(
+            entry_name(subject, function, m, i, j) for i, j in zip(rows.tolist(), columns.tolist(), strict=True)
+        ),
         claim=flat(examined.claim),
         witness=flat(examined.value),
         bound=flat(examined.bound),

@@ -401,7 +401,7 @@ class _Desk:
         self.confirmed[outputs] = False
 
     def open_columns(self) -> IntArray:
-        return np.flatnonzero((~self.confirmed & ~self.refuted & ~self.closed).any(axis=0))
+        return np.flatnonzero(~(self.confirmed | self.refuted | self.closed).all(axis=0))
 
     def refuted_columns(self) -> IntArray:
         return np.flatnonzero(self.refuted.any(axis=0))

@@ -102,11 +102,12 @@ def judge(
     -------
     Judgement
     """
-    allowed = tolerance.of(claim, value)
+    plain = tolerance.plain(claim, value)
+    allowed = plain + tolerance.allowance(claim)
     with np.errstate(invalid="ignore"):
         gap = np.abs(claim - value)
         known = np.isfinite(bound) & np.isfinite(value)
-        unseen = gap <= tolerance.plain(claim, value) + REFUTING_BOUNDS * bound
+        unseen = gap <= plain + REFUTING_BOUNDS * bound
         confirmed = known & np.isfinite(claim) & (gap + bound <= allowed) & unseen
         refuted = known & ((gap > allowed + REFUTING_BOUNDS * bound) | ~np.isfinite(claim))
         if left is not None and right is not None:

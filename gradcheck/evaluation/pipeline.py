@@ -182,6 +182,10 @@ def _reply(request: Request, outcomes: Sequence[tuple[int, Outcome]], width: int
     if request.source != "model":
         return _derivative_reply(request, outcomes[0][1], width, subject.layout.size)
     d, k = request.offsets.shape
+    spent = sum(outcome.spent for _, outcome in outcomes)
+    if len(outcomes) == 1 and name in (only := outcomes[0][1]).values:  # the usual case: all came in one piece
+        values, status = only.values[name].copy(), only.status[name].copy()
+        return Reply(values=values.reshape(d, k, width), status=status.reshape(d, k), spent=spent)
     values = np.full((d * k, width), np.nan, dtype=complex if request.arithmetic == "complex" else float)
     status = np.full(d * k, Status.REFUSED, dtype=np.int8)
     first = 0
@@ -192,7 +196,6 @@ def _reply(request: Request, outcomes: Sequence[tuple[int, Outcome]], width: int
         if name in outcome.values:
             values[part] = outcome.values[name]
         first += size
-    spent = sum(outcome.spent for _, outcome in outcomes)
     return Reply(values=values.reshape(d, k, width), status=status.reshape(d, k), spent=spent)
 
 

@@ -123,7 +123,7 @@ class Pairs:
         noise. Central differences give the mean slope at a kink for every step, so this must be asked for.
         """
         ratio = self._ratios
-        weights = _weights_at_zero(ratio, np.array([0, *(2 * np.arange(ratio.shape[1] - 1) + 1)]))
+        weights = _weights_at_zero(ratio, np.maximum(2 * np.arange(ratio.shape[1]) - 1, 0))
         shares = weights / ratio
         spread = np.sqrt(np.sum(shares**2, axis=1) / 2 + np.sum(shares, axis=1) ** 2)
         return 2 * np.abs(np.einsum("dk,dkm->dm", weights, self.even)), 2 * spread / self.steps[:, 0]
@@ -251,7 +251,8 @@ def _sharper(one: Testimony, other: Testimony) -> Testimony:
 
 def _measured(base: Array, directions: Directions, rows: IntArray, steps: Array, centre: Array) -> Inquiry[Pairs]:
     """Values at ± each step (d, k) along some directions."""
-    offsets = np.repeat(steps, 2, axis=1) * np.tile([1.0, -1.0], steps.shape[1])
+    offsets = steps.repeat(2, axis=1)
+    offsets[:, 1::2] *= -1.0
     moved = offsets
     if directions.ndim == 1:
         x = base[directions[rows]][:, None]
@@ -303,7 +304,7 @@ def _testimony(
         # another for rounding inside the model.
         flat = (pairs.odd == 0).all(axis=1) & (pairs.even == 0).all(axis=1)
         whole = np.where(flat, np.fmin(whole, np.spacing(largest) / pairs.steps[:, :1]), whole)
-    good = pairs.fine[:, None] & np.isfinite(value[rows])
+    good = pairs.fine[:, None] & np.isfinite(seen)
     bound[rows] = np.where(good, whole, np.inf)
     step[rows] = pairs.steps[:, :1]
     reasons = {(int(rows[i]), j): "the budget was spent" for i in np.flatnonzero(pairs.refused) for j in range(m)}
@@ -341,8 +342,9 @@ def close_look(base: Array, columns: IntArray, room: Room, claim: Array, centre:
     with np.errstate(invalid="ignore", over="ignore"):
         terms = np.where(np.isfinite(claim), claim, 0.0) * row[columns]
         # Rounding of f, and of every variable, over the small step; the moves are the variables' own sizes.
-        rounding = CLOSE_DEVIATIONS * np.finfo(float).eps * (np.abs(centre) + np.abs(terms).sum(axis=1)) / CLOSE
-        apart = np.abs(slope - terms.sum(axis=1)) > rounding + CLOSE_SHARE * np.abs(terms).sum(axis=1)
+        whole = np.abs(terms).sum(axis=1)
+        rounding = CLOSE_DEVIATIONS * np.finfo(float).eps * (np.abs(centre) + whole) / CLOSE
+        apart = np.abs(slope - terms.sum(axis=1)) > rounding + CLOSE_SHARE * whole
     result: BoolArray = apart
     return result
 
@@ -352,5 +354,5 @@ def _median(values: Array) -> Array:
     finite = np.isfinite(values)
     ordered = np.sort(np.where(finite, values, np.inf), axis=0)
     middle = np.maximum(finite.sum(axis=0) - 1, 0) // 2
-    median = np.take_along_axis(ordered, middle[None, :], axis=0)[0]
+    median = ordered[middle, np.arange(middle.size)]
     return np.where(np.isfinite(median), median, 0.0)
