@@ -239,7 +239,7 @@ class Track:
         if plainly.all():  # the usual case; the rest takes three times as long
             return plainly
         flat = fits.resolved[i] & fits.flat[i]
-        return (
+        return np.asarray(
             plainly
             | (flat & (fits.noise[i] <= AMPLIFIED_MARGIN * fits.floor[i]))
             | (flat & (fits.noise[i] <= HEARD_MARGIN * self.heard))
