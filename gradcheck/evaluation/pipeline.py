@@ -154,7 +154,7 @@ def _calls_of(request: Request, subject: Subject, most: int) -> Iterator[Call]:
     moves = Moves.of(request)
     if request.source == "model":
         for first in range(0, len(moves), most):
-            part = moves[first : first + most]
+            part = moves if len(moves) <= most else moves[first : first + most]
             yield Call(run=run, moves=part, arithmetic=request.arithmetic, level=request.level, fresh=request.fresh)
         return
     claim = request.source.startswith("claim:")
