@@ -298,7 +298,7 @@ def claimed_matrix(session: Session, function: str, kind: str, centre: Array) ->
             )
         ]
     )[0]
-    if reply.status[0, 0] == Status.CRASH:
+    if int(reply.status[0, 0]) == Status.CRASH:
         words = session.ledger.last_words[function, f"claim:{kind}"]
         return np.full((centre.size, subject.layout.size), np.nan), failing_claim(subject, function, kind, words)
     return reply.values[0], None

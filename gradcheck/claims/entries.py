@@ -49,9 +49,9 @@ def entry_name(subject: Subject, function: str, outputs: int, row: int, column: 
 def diagnoses_of(
     subject: Subject, function: str, kind: str, examined: Examined, columns: IntArray, rel_tol: float, abs_tol: float
 ) -> tuple[Any, ...]:
-    refuted = examined.verdict == Verdict.REFUTED
-    if not refuted.any():
+    if Verdict.REFUTED not in examined.verdict.ravel().tolist():
         return ()
+    refuted = examined.verdict == Verdict.REFUTED
     size = np.fmax(np.abs(examined.claim), np.abs(examined.value))
     noise = np.nan_to_num(examined.noise)[:, None] / subject.domain.scale[None, columns]
     m = examined.claim.shape[0]

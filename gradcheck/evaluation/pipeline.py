@@ -61,7 +61,7 @@ class Session:
                 worth=np.inf,
             )
             reply = self.gate([request])[0]
-            if reply.status[0, 0] == Status.REFUSED:
+            if reply.refused[0, 0]:
                 runs = len({target.run for target in self.subject.targets.values()})
                 raise UsageError(
                     f"the budget or the time ended before every function had its value at the start point; at least "

@@ -15,7 +15,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request, Status
+from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.witnesses.difference_reasons import SPENT, UNSETTLED
 from gradcheck.witnesses.difference_track import Track
@@ -150,7 +150,7 @@ class _Rounds:
         reply = yield Request(base=self.base, directions=self.directions[rows], offsets=offsets)
         self.spent += reply.spent
         finite = reply.finite
-        refused, works = np.any(reply.status == Status.REFUSED, axis=1), np.all(finite, axis=1)
+        refused, works = np.any(reply.refused, axis=1), np.all(finite, axis=1)
         slips = sign * (offsets - meant)
         fitted = []
         for i, (track, own) in enumerate(zip(tracks, half.tolist(), strict=True)):
@@ -209,7 +209,7 @@ class _Rounds:
         up, down = reply.values[:, :r], reply.values[:, r:]
         realised = sign * offsets[:, :r] if side else (offsets[:, :r] - offsets[:, r:]) / 2
         rungs = read_ladder(realised, up, down, self.centre, np.full(rows.size, side != 0), slope)
-        finite, refused = reply.finite, np.any(reply.status == Status.REFUSED, axis=1)
+        finite, refused = reply.finite, np.any(reply.refused, axis=1)
         works = np.all(finite, axis=1)
         if side == 0:
             rungs = yield from self._below(rows, works, steps, rungs, slope)

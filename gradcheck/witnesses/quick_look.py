@@ -9,7 +9,7 @@ from functools import lru_cache
 
 import numpy as np
 
-from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request, Status
+from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.witnesses.finite_difference import SOURCE
 from gradcheck.witnesses.polynomial_fit import ROUNDING
@@ -78,7 +78,7 @@ class Pairs:
                 even=(up + down - 2 * centre) / width,
                 largest=np.maximum(np.abs(reply.values).max(axis=1), np.abs(centre)),
                 fine=np.asarray(reply.finite.all(axis=1)) & apart,
-                refused=np.asarray((reply.status == Status.REFUSED).any(axis=1)),
+                refused=np.asarray(reply.refused.any(axis=1)),
                 spent=reply.spent,
             )
 
@@ -137,7 +137,7 @@ class Pairs:
 def _weights_at_zero(at: Array, powers: IntArray) -> Array:
     """(d, k): weights of values at the abscissae `at` (d, k) that give the constant of a sum of k powers."""
     if (at == at[:1]).all():  # nearly always: the steps of all directions have the same ratios
-        return np.tile(_weights_of_one(tuple(at[0].tolist()), tuple(powers.tolist())), (len(at), 1))
+        return _weights_of_one(tuple(at[0].tolist()), tuple(powers.tolist())).repeat(len(at), axis=0)
     return _solved(at, powers)
 
 
