@@ -1,8 +1,6 @@
 """The verb `check`: is a claimed derivative right?"""
 
 import time
-from collections.abc import Sequence
-from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -155,7 +153,7 @@ def check(
     for subject in subjects:
         session = open_session(subject, budget=budget, time_limit=time_limit)
         reports.extend(checked_claims(session, rules))
-    report = reports[0] if len(reports) == 1 else _several_points(reports)
+    report = reports[0] if len(reports) == 1 else merged(reports)
     return policy.carry_out(report)
 
 
@@ -260,7 +258,7 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
     findings += levels_at_point(subject, function, examined.jumps, examined.stairs, columns)
     findings += mutation(subject, session.ledger)
     entries = entries_of(subject, function, kind, examined, columns)
-    report = CheckReport(
+    return CheckReport(
         verdict=Verdict.overall(list(entries.verdict)),
         kind=kind,
         function=function,
@@ -273,8 +271,8 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
         notices=(*session.ledger.notices, *_left_out(subject), *_few_digits(precision, rules.rel_tol)),
         evaluations=session.ledger.evaluations - before,
         seconds=time.perf_counter() - began,
+        renderer=check_text,
     )
-    return replace(report, text=check_text(report))
 
 
 def claimed_matrix(session: Session, function: str, kind: str, centre: Array) -> tuple[Array, Finding | None]:
@@ -300,7 +298,7 @@ def claimed_matrix(session: Session, function: str, kind: str, centre: Array) ->
             )
         ]
     )[0]
-    if reply.status[0, 0] == Status.CRASH:
+    if int(reply.status[0, 0]) == Status.CRASH:
         words = session.ledger.last_words[function, f"claim:{kind}"]
         return np.full((centre.size, subject.layout.size), np.nan), failing_claim(subject, function, kind, words)
     return reply.values[0], None
@@ -366,8 +364,3 @@ def _raised(failure: Finding, entries: Entries) -> tuple[Diagnosis, ...]:
 def _left_out(subject: Subject) -> tuple[str, ...]:
     whole = [subject.layout.name(int(i)) for i in np.flatnonzero(subject.domain.integer)]
     return (f"entries for {listed(whole)} were not judged: whole numbers have no derivative",) if whole else ()
-
-
-def _several_points(reports: Sequence[CheckReport]) -> CheckReport:
-    report = merged(reports)
-    return replace(report, text=check_text(report))

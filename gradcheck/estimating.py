@@ -190,12 +190,10 @@ def _hessian(session: Session, centre: Array) -> dict[str, Any]:
 
 
 def _finished(fields: dict[str, Any], session: Session, began: float) -> Estimate:
-    from dataclasses import replace
-
-    record = Estimate(
+    return Estimate(
         **fields,
         evaluations=session.ledger.evaluations,
         notices=tuple(session.ledger.notices),
         seconds=time.perf_counter() - began,
+        renderer=estimate_text,
     )
-    return replace(record, text=estimate_text(record))

@@ -27,7 +27,9 @@ def entries_of(subject: Subject, function: str, kind: str, examined: Examined, l
 
     return Entries(
         index=index,
-        name=tuple(entry_name(subject, function, m, int(i), int(j)) for i, j in zip(rows, columns, strict=True)),
+        name=tuple(
+            entry_name(subject, function, m, i, j) for i, j in zip(rows.tolist(), columns.tolist(), strict=True)
+        ),
         claim=flat(examined.claim),
         witness=flat(examined.value),
         bound=flat(examined.bound),
@@ -47,9 +49,9 @@ def entry_name(subject: Subject, function: str, outputs: int, row: int, column: 
 def diagnoses_of(
     subject: Subject, function: str, kind: str, examined: Examined, columns: IntArray, rel_tol: float, abs_tol: float
 ) -> tuple[Any, ...]:
-    refuted = examined.verdict == Verdict.REFUTED
-    if not refuted.any():
+    if Verdict.REFUTED not in examined.verdict.ravel().tolist():
         return ()
+    refuted = examined.verdict == Verdict.REFUTED
     size = np.fmax(np.abs(examined.claim), np.abs(examined.value))
     noise = np.nan_to_num(examined.noise)[:, None] / subject.domain.scale[None, columns]
     m = examined.claim.shape[0]
@@ -90,4 +92,5 @@ def merged(reports: Sequence[CheckReport]) -> CheckReport:
         notices=tuple(dict.fromkeys(n for report in reports for n in report.notices)),
         evaluations=sum(report.evaluations for report in reports),
         seconds=sum(report.seconds for report in reports),
+        text="",
     )

@@ -202,6 +202,10 @@ def _along(room: Room, columns: IntArray) -> Room:
     )
 
 
+#: Picked from by number: to fill an array with a member of an enumeration takes numpy ten times as long.
+_VERDICTS = np.array([Verdict.UNDECIDED, Verdict.CONFIRMED, Verdict.REFUTED], dtype=object)
+
+
 class _Desk:
     """Collects testimonies about the entries of one claim and applies the rule after each."""
 
@@ -257,23 +261,18 @@ class _Desk:
             heard = self.noise_along[:, columns]
             self.noise_along[:, columns] = np.fmax(heard, testimony.noise_along.T)
         tolerance = self.tolerance(columns)
-        value, bound = testimony.value.T, testimony.bound.T
+        part = self._part(columns)
+        claim, value, bound = self.claim[part], testimony.value.T, testimony.bound.T
         if not final:
-            zero = (self.claim[:, columns] == 0) & (value == 0)
+            zero = (claim == 0) & (value == 0)
             tolerance = replace(tolerance, rounding=np.where(zero, tolerance.rounding, 0.0))
         left, right = testimony.left.T, testimony.right.T
-        # At a kink the bound covers half the gap between the slopes; the rest is what the slopes may be off.
-        slope_error = np.nan_to_num(bound - np.abs(right - left) / 2)
-        outcome = judge(
-            self.claim[:, columns],
-            value,
-            bound,
-            tolerance,
-            left=left,
-            right=right,
-            slope_error=slope_error,
-        )
-        part = np.ix_(np.arange(self.claim.shape[0]), columns)
+        if np.isfinite(left).any():
+            # At a kink the bound covers half the gap between the slopes; the rest is what the slopes may be off.
+            slope_error = np.nan_to_num(bound - np.abs(right - left) / 2)
+            outcome = judge(claim, value, bound, tolerance, left=left, right=right, slope_error=slope_error)
+        else:
+            outcome = judge(claim, value, bound, tolerance)
         fresh = ~self.confirmed[part] & ~self.refuted[part] & ~self.closed[part]
         if contested:
             fresh = fresh & ~self._conflict(part, value, bound)
@@ -298,7 +297,13 @@ class _Desk:
         if replacing:
             self._close(part)
 
-    def _close(self, part: tuple[IntArray, ...]) -> None:
+    def _part(self, columns: IntArray) -> tuple[slice, slice | IntArray]:
+        """Where these columns (increasing) stand in the arrays: as a slice if they are all, which is five times as fast
+        to read and to write.
+        """
+        return slice(None), slice(None) if columns.size == self.claim.shape[1] else columns
+
+    def _close(self, part: tuple[slice, slice | IntArray]) -> None:
         """Close the entries for which no derivative exists, or none that differences of any size agree on.
 
         On a plateau the derivative is zero and means nothing; another witness would only repeat that zero. Where digits
@@ -310,7 +315,7 @@ class _Desk:
         self.refuted[part] &= ~zero
         self.closed[part] |= zero & ~self.confirmed[part]
 
-    def _conflict(self, part: tuple[IntArray, ...], value: Array, bound: Array) -> BoolArray:
+    def _conflict(self, part: tuple[slice, slice | IntArray], value: Array, bound: Array) -> BoolArray:
         """Entries where two witnesses part beyond their bounds; neither is believed then."""
         with np.errstate(invalid="ignore"):
             parted: BoolArray = np.abs(value - self.value[part]) > bound + self.bound[part]
@@ -346,7 +351,7 @@ class _Desk:
         claim, value, bound = self.claim[:, columns], testimony.value.T, testimony.bound.T
         left, right = testimony.left.T, testimony.right.T
         tolerance = self.tolerance(columns)
-        part = np.ix_(np.arange(self.claim.shape[0]), columns)
+        part = self._part(columns)
         alone = judge(claim, value, bound, tolerance, left=left, right=right).refuted
         with np.errstate(invalid="ignore"):
             parted = np.abs(value - self.value[part])
@@ -376,7 +381,7 @@ class _Desk:
 
     def excuse(self, columns: IntArray, explained: BoolArray) -> None:
         """Take back the refutation of entries whose difference the jumps of the model explain."""
-        part = np.ix_(np.arange(self.claim.shape[0]), columns)
+        part = self._part(columns)
         self.refuted[part] &= ~explained
         self.closed[part] |= explained
         reason = self.reason[part]
@@ -389,7 +394,7 @@ class _Desk:
 
     def leave_open(self, columns: IntArray, entries: BoolArray, why: str) -> None:
         """Entries (m, d) of some columns that nobody can decide."""
-        part = np.ix_(np.arange(self.claim.shape[0]), columns)
+        part = self._part(columns)
         for mine, mark in ((self.confirmed, False), (self.provisional, False), (self.closed, True)):
             mine[part] = np.where(entries, mark, mine[part])
         self.reason[part] = np.where(entries, why, self.reason[part])
@@ -400,7 +405,7 @@ class _Desk:
         self.confirmed[outputs] = False
 
     def open_columns(self) -> IntArray:
-        return np.flatnonzero((~self.confirmed & ~self.refuted & ~self.closed).any(axis=0))
+        return np.flatnonzero(~(self.confirmed | self.refuted | self.closed).all(axis=0))
 
     def refuted_columns(self) -> IntArray:
         return np.flatnonzero(self.refuted.any(axis=0))
@@ -409,13 +414,12 @@ class _Desk:
         self.confirmed |= self.provisional & ~self.refuted
         columns = np.arange(self.claim.shape[1])
         tolerance = self.tolerance(columns)
-        verdict = np.full(self.claim.shape, Verdict.UNDECIDED, dtype=object)
-        verdict[self.confirmed] = Verdict.CONFIRMED
-        verdict[self.refuted] = Verdict.REFUTED
+        verdict = _VERDICTS[np.where(self.refuted, 2, np.where(self.confirmed, 1, 0))]
         by_floor = self.confirmed & tolerance.floor_decides(self.claim, self.value) & (self.reason == "")
         self.reason[by_floor] = "confirmed within the rounding of the function's value"
         undecided = ~self.confirmed & ~self.refuted & (self.reason == "")
-        self._explain_doubt(undecided)
+        if undecided.any():
+            self._explain_doubt(undecided)
         self.reason[self.refuted & ~np.isfinite(self.claim)] = "the claim is not a finite number while the witness is"
         return Examined(
             claim=self.claim,

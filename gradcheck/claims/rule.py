@@ -102,11 +102,12 @@ def judge(
     -------
     Judgement
     """
-    allowed = tolerance.of(claim, value)
+    plain = tolerance.plain(claim, value)
+    allowed = plain + tolerance.allowance(claim)
     with np.errstate(invalid="ignore"):
         gap = np.abs(claim - value)
         known = np.isfinite(bound) & np.isfinite(value)
-        unseen = gap <= tolerance.plain(claim, value) + REFUTING_BOUNDS * bound
+        unseen = gap <= plain + REFUTING_BOUNDS * bound
         confirmed = known & np.isfinite(claim) & (gap + bound <= allowed) & unseen
         refuted = known & ((gap > allowed + REFUTING_BOUNDS * bound) | ~np.isfinite(claim))
         if left is not None and right is not None:
@@ -126,5 +127,5 @@ def digits_agreed(claim: Array, value: Array, bound: Array) -> Array:
         relative = (np.abs(claim - value) + bound) / size
         digits = -np.log10(relative)
     digits = np.where(size == 0, np.where(bound == 0, 17.0, 0.0), digits)
-    agreed: Array = np.clip(np.nan_to_num(digits, nan=0.0, posinf=17.0, neginf=0.0), 0.0, 17.0)
+    agreed: Array = np.where(np.isnan(digits), 0.0, digits).clip(0.0, 17.0)
     return agreed

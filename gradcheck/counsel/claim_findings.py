@@ -16,7 +16,7 @@ def kinks_at_point(subject: Subject, function: str, left: Array, right: Array, c
     """Entries whose one-sided slopes, each (m, d) for d columns, part at the point itself."""
     findings = []
     several = left.shape[0] > 1
-    for output, place in np.argwhere(np.isfinite(left))[:KINKS_SHOWN]:
+    for output, place in zip(*(axis[:KINKS_SHOWN].tolist() for axis in np.isfinite(left).nonzero()), strict=True):
         below, above = float(left[output, place]), float(right[output, place])
         variable = subject.layout.name(int(columns[place]))
         part = f"output {output} of {function}" if several else function
@@ -49,7 +49,7 @@ def levels_at_point(
     """
     several = jumps.shape[0] > 1
     findings = []
-    for output, place in np.argwhere(jumps | stairs)[:KINKS_SHOWN]:
+    for output, place in zip(*(axis[:KINKS_SHOWN].tolist() for axis in (jumps | stairs).nonzero()), strict=True):
         variable = subject.layout.name(int(columns[place]))
         part = f"output {output} of {function}" if several else function
         jump = bool(jumps[output, place])

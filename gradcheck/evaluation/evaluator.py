@@ -215,7 +215,7 @@ class Evaluator:
         finally:
             self.ledger.seconds[call.kind] += time.perf_counter() - began
         state = Status.OK if np.isfinite(value).all() else Status.NONFINITE
-        return Outcome(values={name: value[None]}, status={name: np.array([state], dtype=np.int8)}, spent=1)
+        return Outcome(values={name: value[None]}, status={name: np.array([int(state)], dtype=np.int8)}, spent=1)
 
     def _claim(self, call: Call, target: Target) -> Array:
         kind = call.source.partition(":")[2]

@@ -47,8 +47,8 @@ class Moves:
     def of(request: Request) -> "Moves":
         """All points of a request, direction by direction."""
         d, k = request.offsets.shape
-        base = np.ascontiguousarray(request.base, dtype=np.result_type(float, request.offsets.dtype))
-        return Moves(base, request.directions, np.repeat(np.arange(d), k), request.offsets.ravel())
+        base = np.ascontiguousarray(request.base, dtype=complex if request.offsets.dtype.kind == "c" else float)
+        return Moves(base, request.directions, np.arange(d).repeat(k), request.offsets.ravel())
 
     def __len__(self) -> int:
         return self.which.size

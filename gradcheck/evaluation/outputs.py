@@ -93,7 +93,8 @@ class Output:
 
     def settle(self, begun: int) -> None:
         """After the last point: find values that are not finite; points that were not begun were refused."""
-        self.status[begun:] = Status.REFUSED
+        if begun < self.status.size:
+            self.status[begun:] = Status.REFUSED
         if self.values is not None:
             finite = np.isfinite(self.values[:begun])
             if finite.all():

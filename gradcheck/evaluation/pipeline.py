@@ -61,7 +61,7 @@ class Session:
                 worth=np.inf,
             )
             reply = self.gate([request])[0]
-            if reply.status[0, 0] == Status.REFUSED:
+            if reply.refused[0, 0]:
                 runs = len({target.run for target in self.subject.targets.values()})
                 raise UsageError(
                     f"the budget or the time ended before every function had its value at the start point; at least "
@@ -154,7 +154,7 @@ def _calls_of(request: Request, subject: Subject, most: int) -> Iterator[Call]:
     moves = Moves.of(request)
     if request.source == "model":
         for first in range(0, len(moves), most):
-            part = moves[first : first + most]
+            part = moves if len(moves) <= most else moves[first : first + most]
             yield Call(run=run, moves=part, arithmetic=request.arithmetic, level=request.level, fresh=request.fresh)
         return
     claim = request.source.startswith("claim:")
@@ -182,6 +182,10 @@ def _reply(request: Request, outcomes: Sequence[tuple[int, Outcome]], width: int
     if request.source != "model":
         return _derivative_reply(request, outcomes[0][1], width, subject.layout.size)
     d, k = request.offsets.shape
+    spent = sum(outcome.spent for _, outcome in outcomes)
+    if len(outcomes) == 1 and name in (only := outcomes[0][1]).values:  # the usual case: all came in one piece
+        values, status = only.values[name].copy(), only.status[name].copy()
+        return Reply(values=values.reshape(d, k, width), status=status.reshape(d, k), spent=spent)
     values = np.full((d * k, width), np.nan, dtype=complex if request.arithmetic == "complex" else float)
     status = np.full(d * k, Status.REFUSED, dtype=np.int8)
     first = 0
@@ -192,7 +196,6 @@ def _reply(request: Request, outcomes: Sequence[tuple[int, Outcome]], width: int
         if name in outcome.values:
             values[part] = outcome.values[name]
         first += size
-    spent = sum(outcome.spent for _, outcome in outcomes)
     return Reply(values=values.reshape(d, k, width), status=status.reshape(d, k), spent=spent)
 
 

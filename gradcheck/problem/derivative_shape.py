@@ -1,8 +1,7 @@
 """The shape that a claimed derivative must have, and the claim as a matrix (m, n)."""
 
+import math
 from typing import Any
-
-import numpy as np
 
 from gradcheck.errors import DerivativeShapeError
 from gradcheck.problem.layout import Layout, real_numbers
@@ -26,7 +25,7 @@ def claim_matrix(kind: str, raw: Any, layout: Layout, output_shape: tuple[int, .
     UsageError
         If the claim is not numeric, or complex.
     """
-    outputs = int(np.prod(output_shape, dtype=int))
+    outputs = math.prod(output_shape)
     if kind == "gradient" and outputs != 1:
         raise DerivativeShapeError(
             f"the model returns shape {output_shape} ({outputs} outputs), so a gradient cannot be checked: claim a "
@@ -45,7 +44,7 @@ def claim_matrix(kind: str, raw: Any, layout: Layout, output_shape: tuple[int, .
 
 def _accepted(kind: str, layout: Layout, output_shape: tuple[int, ...]) -> list[tuple[int, ...]]:
     """Shapes that mean the same without doubt, the proper one first."""
-    outputs = int(np.prod(output_shape, dtype=int))
+    outputs = math.prod(output_shape)
     inputs = layout.shape
     if kind == "gradient":
         # A size-1 output with a gradient claim is a scalar; its own (1,) axis may lead.
@@ -66,7 +65,7 @@ def _mismatch(kind: str, found: tuple[int, ...], layout: Layout, output_shape: t
     )
     if len(found) == 2 and found[::-1] in accepted:
         text += "; its transpose would fit: return `claim.T`"
-    elif int(np.prod(found, dtype=int)) == int(np.prod(expected, dtype=int)):
+    elif math.prod(found) == math.prod(expected):
         text += f"; it has the right number of entries: reshape it to {expected}"
     elif kind == "jacobian" and output_shape == () and found == layout.shape:
         text += "; for a model that returns a number, claim it with gradient=..."

@@ -61,6 +61,7 @@ def domain_of(x: Array, *, bounds: Any = None, typical: Any = None, integer: Any
         If shapes do not fit, a bound is NaN, lower exceeds upper, or x lies outside.
     """
     lower, upper = _bounds(bounds, x)
+    bounded = np.isfinite(upper - lower)
     outside = np.flatnonzero((x < lower) | (x > upper))
     if outside.size:
         i = int(outside[0])
@@ -71,8 +72,8 @@ def domain_of(x: Array, *, bounds: Any = None, typical: Any = None, integer: Any
     return Domain(
         lower=frozen(lower),
         upper=frozen(upper),
-        scale=frozen(_scale(x, lower, upper, typical)),
-        known=frozen(_told(typical, x) | np.isfinite(upper - lower), dtype=bool),
+        scale=frozen(_scale(x, np.where(bounded & (upper > lower), upper - lower, 1.0), typical)),
+        known=frozen(_told(typical, x) | bounded, dtype=bool),
         integer=frozen(np.zeros(x.size, bool) if integer is None else integer, dtype=bool),
     )
 
@@ -87,8 +88,7 @@ def windows(base: Array, domain: Domain) -> tuple[Array, Array]:
     return np.minimum(lower, base), np.maximum(upper, base)
 
 
-def _scale(x: Array, lower: Array, upper: Array, typical: Any) -> Array:
-    width = np.where(np.isfinite(upper - lower) & (upper > lower), upper - lower, 1.0)
+def _scale(x: Array, width: Array, typical: Any) -> Array:
     own = np.where(x != 0, np.abs(x), width)
     if typical is None:
         return own

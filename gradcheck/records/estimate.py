@@ -8,10 +8,11 @@ from gradcheck.errors import UsageError
 from gradcheck.records.arrays import Array, frozen
 from gradcheck.records.noise import NoiseKind
 from gradcheck.records.plain import plain
+from gradcheck.records.rendering import RenderedWhenRead
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False, repr=False)
-class Estimate:
+class Estimate(RenderedWhenRead):
     """A derivative from one witness, entry by entry value ± bound.
 
     Attributes
@@ -36,6 +37,8 @@ class Estimate:
         two variables: ``"x[0], x[3]"``, the first one not after the second.
     order : int
         1 for first derivatives, 2 for second ones.
+    renderer : callable, optional
+        Makes the text when it is first read; `estimate` hands it over, because records import nothing that renders.
     """
 
     value: Array
@@ -50,11 +53,13 @@ class Estimate:
     order: int = 1
     notices: tuple[str, ...] = ()
     seconds: float = 0.0
+    renderer: Callable[["Estimate"], str] | None = None
     text: str = ""
 
     def __post_init__(self) -> None:
         for field in ("value", "bound", "step", "noise"):
             object.__setattr__(self, field, frozen(getattr(self, field)))
+        self._await_reader()
 
     def __repr__(self) -> str:
         return f"<Estimate: {self.text.partition(chr(10))[0] or 'not rendered'}>"

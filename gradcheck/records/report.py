@@ -1,6 +1,7 @@
 """The two reports that users receive."""
 
 import json
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -13,6 +14,7 @@ from gradcheck.records.arrays import Array, frozen
 from gradcheck.records.finding import Finding
 from gradcheck.records.noise import NoiseKind
 from gradcheck.records.plain import plain
+from gradcheck.records.rendering import RenderedWhenRead
 from gradcheck.records.verdict import DiagnosisCode, Verdict
 
 FORMAT_VERSION = 1
@@ -83,7 +85,7 @@ class Diagnosis:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False, repr=False)
-class CheckReport:
+class CheckReport(RenderedWhenRead):
     """What `check` found out about one claim.
 
     Attributes
@@ -103,6 +105,8 @@ class CheckReport:
     evaluations : int
         Model evaluations spent.
     seconds : float
+    renderer : callable, optional
+        Makes the text when it is first read; `check` hands it over, because records import nothing that renders.
     """
 
     verdict: Verdict
@@ -116,10 +120,12 @@ class CheckReport:
     notices: tuple[str, ...] = ()
     evaluations: int = 0
     seconds: float = 0.0
+    renderer: Callable[["CheckReport"], str] | None = None
     text: str = ""
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "point", frozen(self.point))
+        self._await_reader()
 
     def __repr__(self) -> str:
         return f"<CheckReport: {self.text.partition(chr(10))[0] or 'not rendered'}>"

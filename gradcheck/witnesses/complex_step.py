@@ -152,7 +152,7 @@ class _Trial:
             arithmetic="complex" if np.iscomplexobj(offsets) else "real",
         )
         self.spent += reply.spent
-        self.refused |= bool((reply.status == Status.REFUSED).any())
+        self.refused |= bool(reply.refused.any())
         return reply.values, reply.status <= Status.NONFINITE
 
     def give_up(self, where: BoolArray, reason: str) -> None:

@@ -15,7 +15,7 @@ from collections.abc import Generator
 
 import numpy as np
 
-from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request, Status
+from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.records.noise import NoiseKind
 from gradcheck.witnesses.difference_table import difference_table
@@ -161,7 +161,7 @@ class _Listening:
         """Values at offsets (d, k); a direction that is refused is not asked about again."""
         reply = yield Request(base=self.base, directions=self.directions[rows], offsets=offsets, fresh=fresh)
         self.spent += reply.spent
-        self.alive[rows[(reply.status == Status.REFUSED).any(axis=1)]] = False
+        self.alive[rows[reply.refused.any(axis=1)]] = False
         return reply
 
     def _realised(self, rows: IntArray, offsets: Array) -> Array:
@@ -174,7 +174,7 @@ class _Listening:
     def _repeated(self, row: int, offsets: Array, before: Array) -> Generator[Request, Reply, None]:
         """Evaluate again, without any cache, what gave the values `before`."""
         reply = yield from self._ask(np.array([row]), offsets[None, :], fresh=True)
-        answered = reply.status[0] != Status.REFUSED
+        answered = ~reply.refused[0]
         if answered.any():
             with np.errstate(invalid="ignore"):
                 gaps = np.where(reply.values[0] == before, 0.0, np.abs(reply.values[0] - before))

@@ -154,7 +154,7 @@ def fit(
         NaN values where a difference is not finite.
     """
     # Squares of tiny or huge values would leave the range of floating-point numbers; powers of two lose nothing.
-    unit = 2.0 ** np.clip(np.floor(np.log2(np.where(largest > 0, largest, 1.0))), -1000, 1000)
+    unit = 2.0 ** np.minimum(np.maximum(np.floor(np.log2(np.where(largest > 0, largest, 1.0))), -1000), 1000)
     with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
         fits = _fitted(stencil, half_width, differences / unit[:, None, :], largest / unit, slips, derivative, wobble)
         scaled = {name: getattr(fits, name) * unit for name in _IN_UNITS_OF_VALUES}
@@ -188,29 +188,32 @@ def _fitted(
         # other are rounded alike.
         own, a = np.abs(a[:, -2:]).max(axis=1), a[:, :-2]
     k = a.shape[1]
-    size = np.abs(a)
+    squares = a**2
     last = min(4, k - 2)
-    tail = np.sqrt(np.mean(a[:, k - last :] ** 2, axis=1))
-    before = np.sqrt(np.mean(a[:, max(1, k - 2 * last) : k - last] ** 2, axis=1)) if k > last + 1 else tail
+    tail = _root_mean(squares[:, k - last :])
+    before = _root_mean(squares[:, max(1, k - 2 * last) : k - last]) if k > last + 1 else tail
     level = np.maximum(tail, floor)
-    significant = size > SIGNIFICANT * level[:, None, :]
+    significant = np.abs(a) > SIGNIFICANT * level[:, None, :]
     significant[:, 0] = True  # the constant is always fitted
-    order = k - np.argmax(significant[:, ::-1], axis=1)
-    fits = _concluded(stencil, half_width, a, order, floor, tail, before, derivative, wobble)
-    if own is None:
-        return fits
-    # Where x itself is rounded inside the model, the few digits of the other nodes may be spared what this pair meets.
-    return replace(fits, apart=own / np.maximum.reduce([tail, floor, fits.argument, np.full_like(tail, _TINY)]))
+    order = k - significant[:, ::-1].argmax(axis=1)
+    return _concluded(stencil, half_width, a, squares, order, floor, tail, before, own, derivative, wobble)
+
+
+def _root_mean(squares: Array) -> Array:
+    root: Array = np.sqrt(squares.sum(axis=1) / squares.shape[1])
+    return root
 
 
 def _concluded(
     stencil: Stencil,
     half_width: Array,
     a: Array,
+    squares: Array,
     order: IntArray,
     floor: Array,
     tail: Array,
     before: Array,
+    own: Array | None,
     derivative: int,
     wobble: Array | None,
 ) -> Fit:
@@ -218,30 +221,41 @@ def _concluded(
     index = np.arange(k)[None, :, None]
     kept = index < order[:, None, :]
     left_over = k - order
-    noise = np.sqrt(np.where(kept, 0.0, a**2).sum(axis=1) / np.maximum(left_over, 1))
+    noise = np.sqrt(np.where(kept, 0.0, squares).sum(axis=1) / np.maximum(left_over, 1))
     noise = np.maximum(noise, floor)
     weights = stencil.at_centre[derivative - 1, :k][None, :, None]
     # one division after the other: powers of a tiny or a huge width would leave the range of floating-point numbers
     size = [np.abs(half_width[:, None])] * derivative
     half_way = (order + left_over // 2)[:, None, :]
+    dropped = ~kept
     sooner, later = (
-        np.sqrt(np.where(part, a**2, 0.0).sum(axis=1) / np.maximum(part.sum(axis=1), 1))
-        for part in (~kept & (index < half_way), ~kept & (index >= half_way))
+        np.sqrt(np.where(part, squares, 0.0).sum(axis=1) / np.maximum(part.sum(axis=1), 1))
+        for part in (dropped & (index < half_way), dropped & (index >= half_way))
     )
-    value = _over(np.where(kept, weights * a, 0.0).sum(axis=1), size) * np.sign(half_width[:, None]) ** derivative
+    total = np.where(kept, weights * a, 0.0).sum(axis=1)
+    value = _over(total, size) * np.sign(half_width[:, None]) ** derivative
     # The derivative is fitted with the orders kept; where none of them moves it (a constant), the lowest that does sets
     # the amplification, so that an exact zero gets a bound that means something.
     counted = kept | (index <= derivative)
     amplification = _over(np.sqrt(np.where(counted, weights**2, 0.0).sum(axis=1)), size)
-    dropped = np.where(index >= order[:, None, :], np.abs(weights), 0.0)
-    next_weight = _over(np.where(index <= order[:, None, :] + 1, dropped, 0.0).max(axis=1), size)
+    after = dropped & (index <= order[:, None, :] + 1)
+    next_weight = _over(np.where(after, np.abs(weights), 0.0).max(axis=1), size)
     deviations = DEVIATIONS * (1 + 2 / np.maximum(left_over, 1))
     bound = noise * (deviations * amplification + DROPPED_SHARE * next_weight) + 2 * np.finfo(float).eps * np.abs(value)
     if wobble is not None and derivative < 3:
         next_one = np.where(kept, stencil.at_centre[derivative, :k][None, :, None] * a, 0.0).sum(axis=1)
         bound = bound + _over(wobble[:, None] * np.abs(next_one), [*size, size[0]])
     variation = np.abs(a[:, 1:]).max(axis=1)
-    slope = np.where(kept, stencil.at_centre[0, :k][None, :, None] * a, 0.0).sum(axis=1) / half_width[:, None]
+    argument = np.zeros_like(noise)
+    if wobble is not None:
+        if derivative > 1:
+            total = np.where(kept, stencil.at_centre[0, :k][None, :, None] * a, 0.0).sum(axis=1)
+        argument = np.abs(total / half_width[:, None]) * wobble[:, None]
+    apart = np.zeros_like(noise)
+    if own is not None:
+        # Where x itself is rounded inside the model, the few digits of the other nodes may be spared what this pair
+        # meets.
+        apart = own / np.maximum(np.maximum(tail, floor), np.maximum(argument, _TINY))
     return Fit(
         value=value,
         bound=bound,
@@ -252,8 +266,8 @@ def _concluded(
         floor=floor,
         variation=variation,
         resolved=(left_over >= SAMPLE_LEAST) & np.isfinite(value),
-        apart=np.zeros_like(noise),
-        argument=np.zeros_like(noise) if wobble is None else np.abs(slope) * wobble[:, None],
+        apart=apart,
+        argument=argument,
         flat=(left_over >= SAMPLE_LEAST + 1) & (sooner <= 3 * np.maximum(later, floor)),
     )
 

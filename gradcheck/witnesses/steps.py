@@ -99,6 +99,6 @@ def rounded_half_width(width: Array, grain: Array) -> Array:
     unit = least_half_width(grain)
     with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
         counted = np.floor(width / unit)
-        rounded = np.nan_to_num(np.maximum(counted, 1.0), nan=1.0, posinf=1.0) * unit
+        rounded = np.where(np.isfinite(counted), np.maximum(counted, 1.0), 1.0) * unit
     # A width of so many units is a multiple of them as it is (their number may be beyond the largest double).
     return np.asarray(np.where(counted >= 2.0**53, width, rounded))

@@ -57,15 +57,17 @@ class Testimony:
 
     def __post_init__(self) -> None:
         shape = np.shape(self.value)
-        for name in ("value", "bound", "step", "left", "right", "noise_along"):
-            given = np.asarray(getattr(self, name), dtype=float)
-            if name not in ("value", "bound") and given.size == 0:
-                given = np.full(shape, np.nan)
-            object.__setattr__(self, name, frozen(given))
-        doubtful = np.asarray(self.doubtful, dtype=bool)
-        object.__setattr__(self, "doubtful", frozen(doubtful if doubtful.size else np.zeros(shape, bool), dtype=bool))
-        noise = np.asarray(self.noise, dtype=float)
-        object.__setattr__(self, "noise", frozen(noise if noise.size else np.full(shape[-1:], np.nan)))
+        for name in ("value", "bound"):
+            object.__setattr__(self, name, frozen(getattr(self, name)))
+        # What was not given is one array for all fields: it cannot be written to, and most witnesses give few.
+        unknown = frozen(np.full(shape, np.nan))
+        for name in ("step", "left", "right", "noise_along"):
+            given = getattr(self, name)
+            object.__setattr__(self, name, frozen(given) if np.size(given) else unknown)
+        doubtful = self.doubtful if np.size(self.doubtful) else np.zeros(shape, bool)
+        object.__setattr__(self, "doubtful", frozen(doubtful, dtype=bool))
+        noise = self.noise if np.size(self.noise) else np.full(shape[-1:], np.nan)
+        object.__setattr__(self, "noise", frozen(noise))
 
     @staticmethod
     def silent(source: str, directions: int, outputs: int, reason: str, spent: int = 0) -> "Testimony":

@@ -727,3 +727,16 @@ def test_a_model_that_is_nan_at_the_point():
 
 def test_what_comes_back_is_a_report():
     assert isinstance(gradcheck.check(drag, X, gradient=drag_gradient), CheckReport)
+
+
+@pytest.mark.parametrize("claimed", [1.0, 5.0, math.inf])
+def test_the_verdict_on_every_entry_is_a_verdict(claimed):
+    report = gradcheck.check(
+        lambda x: abs(x[0]) + x[1],
+        at=[0.0, 2.0],
+        gradient=lambda x: [0.5, claimed],
+        on_refuted="return",
+        on_undecided="pass",
+    )
+    assert report.entries.verdict[0] == "undecided"
+    assert all(type(verdict) is Verdict for verdict in report.entries.verdict)
