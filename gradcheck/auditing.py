@@ -99,7 +99,7 @@ def audit(
     budget : int, optional
         Largest number of evaluations. What was left out for it is told.
     time_limit : float or str, optional
-        Seconds, or text such as ``"10min"``.
+        Seconds, or text such as ``"10min"``; looked at between the calls of the model, a call is never broken off.
     accept : mapping of str to str, optional
         Findings to silence, ``"code"``, ``"code:function"`` or ``"code:function:variable"``, each with a reason that
         the report shows.

@@ -82,7 +82,7 @@ def check(
     budget : int, optional
         Largest number of evaluations.
     time_limit : float or str, optional
-        Seconds, or text such as ``"10min"``.
+        Seconds, or text such as ``"10min"``; looked at between the calls of the model, a call is never broken off.
     seed : int
         Reserved for checks along random directions; every step of this check is deterministic.
     on_refuted : "raise" or "return"
