@@ -86,7 +86,8 @@ def scan(
     centre = session.start_values()[name]
     if centre.size != 1:
         raise UsageError(
-            f"{name} returns {centre.size} numbers; a scan looks at one: pick it with output=lambda r: r[0]"
+            f"{name} returns {centre.size} numbers; a scan looks at one: pick it with output=lambda r: r[0], or "
+            "scan a function that returns that one alone"
         )
     directions, label = _direction(subject, along)
     room = room_along(subject.start, directions, subject.domain)
@@ -150,7 +151,12 @@ def _direction(subject: Subject, along: Any) -> tuple[Directions, str]:
         if not 0 <= along < n:
             raise UsageError(f"along={along} is no variable; positions run from 0 to {n - 1}")
         return np.array([int(along)]), subject.layout.name(int(along))
+    if along is None or isinstance(along, bool):
+        raise UsageError(f"along is {along}; give the name or position of a variable, or a direction of {n} entries")
     row = np.ravel(real_numbers(along, "along"))
     if row.size != n or not np.isfinite(row).all() or not row.any():
-        raise UsageError(f"along must be a variable or a finite direction of {n} entries that are not all zero")
+        raise UsageError(
+            f"along is {along!r:.80}; give the name or position of a variable, or a finite direction of {n} entries "
+            "that are not all zero"
+        )
     return row[None, :], "direction"

@@ -8,6 +8,7 @@ from gradcheck.health.step_choice import StepChoice
 from gradcheck.records.arrays import Array, BoolArray
 from gradcheck.records.noise import NoiseKind
 from gradcheck.records.report import Steps
+from gradcheck.wording import listed
 
 
 def solver_steps(
@@ -57,7 +58,8 @@ def steps_to_paste(all_steps: Sequence[Steps], names: Sequence[str], start: Arra
     Returns
     -------
     list of str
-        Empty without steps. scipy's form is left out where some variable has no step.
+        Empty without steps. scipy's form is left out where some variable has no step, and the one in units of x where
+        some variable is 0.
 
     Notes
     -----
@@ -101,10 +103,9 @@ def _sign(side: float) -> str:
 
 
 def _for_scipy(steps: Steps, start: Array) -> list[str]:
-    with np.errstate(divide="ignore", invalid="ignore"):
-        forward = np.where(start == 0, 0.0, _signed(steps) / start)
-        central = np.where(start == 0, 0.0, steps.central / np.abs(start))
-    zero = [name for name, x in zip(steps.names, start, strict=True) if x == 0]
+    if not np.all(start):
+        return _absolute(steps, [name for name, x in zip(steps.names, start, strict=True) if x == 0])
+    forward, central = _signed(steps) / start, steps.central / np.abs(start)
     return [
         "# the same in units of x, as scipy.optimize.minimize takes them; for other methods: step = value * x",
         f"forward_relative = [{', '.join(f'{value:.6g}' for value in forward)}]",
@@ -112,8 +113,19 @@ def _for_scipy(steps: Steps, start: Array) -> list[str]:
         '# forward: jac="2-point", options={"finite_diff_rel_step": forward_relative}',
         '# central: jac="3-point", options={"finite_diff_rel_step": central_relative}',
         '# forward, absolute: no jac, options={"eps": list(forward_steps.values())}',
-        *[f"# x is 0 for {name!r}: there scipy takes relative steps of its own; give absolute ones" for name in zero],
     ]
+
+
+def _absolute(steps: Steps, zero: Sequence[str]) -> list[str]:
+    """Where some variable is 0, a step in units of x is none; scipy would take one of its own there, without a word."""
+    lines = [
+        f"# x is 0 for {listed(list(map(repr, zero)))}: scipy.optimize.minimize cannot take steps in units of x there",
+        '# forward: no jac, options={"eps": list(forward_steps.values())}',
+    ]
+    if not steps.central_side.any():
+        lines.append("# central, for f as the solver sees it: jac=lambda x: [(f(x + h) - f(x - h)) / (2 * h.sum())")
+        lines.append("#              for h in numpy.diag(list(central_steps.values()))]")
+    return lines
 
 
 def _of_other_functions(others: Sequence[Steps]) -> list[str]:

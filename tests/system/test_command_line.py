@@ -652,6 +652,7 @@ def test_a_picture_on_standard_output_stands_alone(folder):
         (["--svg", "-", "--json", "-"], "would mix on standard output"),
         (["--svg", "nowhere/curve.svg"], "there is no folder"),
         (["--svg", "."], "is a folder"),
+        (["--svg", ""], "the name of the file to write is empty"),
     ],
 )
 def test_a_picture_that_cannot_be_written_is_told_before_the_model_runs(verbs, capfd, options, words):
