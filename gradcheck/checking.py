@@ -16,6 +16,7 @@ from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import Session, open_session
 from gradcheck.evaluation.protocol import Request, Status
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
+from gradcheck.problem.sample_points import whole_number
 from gradcheck.problem.subject import CLAIM_KINDS, Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.arrays import Array, IntArray
 from gradcheck.records.finding import Finding
@@ -117,6 +118,7 @@ def check(
     'confirmed'
     """
     policy = Policy.of(on_refuted, on_undecided)
+    whole_number(seed, "seed")
     if isinstance(function, Problem):
         raise UsageError(
             "check takes a function; a Problem is looked at as a whole: gradcheck.audit(problem).claims holds a report "

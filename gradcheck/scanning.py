@@ -12,6 +12,7 @@ from gradcheck.evaluation.protocol import Directions
 from gradcheck.health.step_curve import step_curve
 from gradcheck.problem.layout import Points, real_numbers
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
+from gradcheck.problem.sample_points import whole_number
 from gradcheck.problem.subject import Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.estimate import Scan
 from gradcheck.report.plots import scan_svg
@@ -78,6 +79,7 @@ def scan(
     >>> round(curve.truncation.slope), round(curve.roundoff.slope)
     (2, -1)
     """
+    whole_number(seed, "seed")
     given = {"wrt": wrt, "output": output, "bounds": bounds, "names": names, "typical": typical}
     given |= {"batched": batched} if batched else {}
     subject = _subject(function, at, given)

@@ -684,6 +684,8 @@ def test_names_of_another_number():
         ("budget", 0, "budget is 0"),
         ("time_limit", "soon", "time_limit is 'soon'"),
         ("typical", -1.0, "typical"),
+        ("typical", "large", "typical is 'large'; give a number > 0"),
+        ("seed", "a", "seed is 'a'; give a whole number >= 0"),
         ("gradient", "calculus", "gradient='calculus' names no derivative source"),
     ],
 )

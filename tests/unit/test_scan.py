@@ -205,6 +205,7 @@ def test_the_record_is_made_of_plain_things_on_request():
         ({"along": None}, "along is None; give the name or position of a variable"),
         ({"along": True}, "along is True; give the name or position of a variable"),
         ({"at": None}, "the point is missing"),
+        ({"seed": -1}, "seed is -1"),
         ({"at": gradcheck.points(X, X)}, "scan takes one point"),
         ({"bounds": [(0.3, 0.3), (0.0, 2.0)]}, r"the bounds leave no room for a step along x\[0\]"),
         (
