@@ -65,7 +65,7 @@ def steps_to_paste(all_steps: Sequence[Steps], names: Sequence[str], start: Arra
     -----
     scipy (1.17, `scipy.optimize.minimize`) multiplies ``finite_diff_rel_step`` by x itself for ``jac="2-point"``, hence
     its sign, and by ``|x|`` for ``"3-point"``; where x is 0 it takes a step of its own. Without `jac` it takes absolute
-    steps, ``eps``.
+    steps, ``eps``. Its SLSQP ignores the steps of a ``NonlinearConstraint`` and takes those of the objective.
     """
     if not all_steps:
         return []
@@ -134,4 +134,9 @@ def _of_other_functions(others: Sequence[Steps]) -> list[str]:
         pairs = zip(steps.names, _signed(steps), steps.central, strict=True)
         rows = [f"        {name!r}: ({f:.3g}, {c:.3g})," for name, f, c in pairs if np.isfinite([f, c]).all()]
         lines += [f"    {steps.function!r}: {{", *rows, "    },"]
-    return [*lines, "}"]
+    return [
+        *lines,
+        "}",
+        '# scipy: method="SLSQP" takes the steps of the objective for constraints too, unless they bring a jac;',
+        '# "trust-constr" takes NonlinearConstraint(..., finite_diff_rel_step=[step / x, ...])',
+    ]

@@ -336,6 +336,30 @@ def test_steps_of_constraints_are_exported_too():
     assert members["other_steps"] == {"stress": {"span": (1.23e-8, 3e-6), "chord": (2e-8, 4e-6)}}
 
 
+@pytest.mark.parametrize(("method", "share"), [("SLSQP", 0.1), ("trust-constr", 0.01)])
+@pytest.mark.filterwarnings("ignore")
+def test_what_the_export_says_of_constraints_holds_for_scipy(method, share):
+    told = "\n".join(steps_to_paste([steps(), steps(function="stress")], ("span", "chord"), np.array([2.0, -4.0])))
+    start = np.array([2.0, 4.0])
+    seen = []
+
+    def constraint(x):
+        seen.append(float(x[0] - start[0]))
+        return x[0] * x[1]
+
+    optimize.minimize(
+        lambda x: float(x @ x),
+        start,
+        method=method,
+        jac="2-point",
+        options={"finite_diff_rel_step": [0.1, 0.1], "maxiter": 1},
+        constraints=optimize.NonlinearConstraint(constraint, 0, 100, jac="2-point", finite_diff_rel_step=[0.01, 0.01]),
+    )
+
+    assert '"SLSQP" takes the steps of the objective for constraints too' in told.replace("method=", "")
+    assert share * 2.0 in [pytest.approx(step) for step in seen]
+
+
 def test_an_audit_exports_steps_as_data_and_as_python():
     with warnings.catch_warnings():
         warnings.simplefilter("error")
