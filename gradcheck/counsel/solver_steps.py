@@ -123,7 +123,7 @@ def _absolute(steps: Steps, zero: Sequence[str]) -> list[str]:
         '# forward: no jac, options={"eps": list(forward_steps.values())}',
     ]
     if not steps.central_side.any():
-        lines.append("# central, for f as the solver sees it: jac=lambda x: [(f(x + h) - f(x - h)) / (2 * h.sum())")
+        lines.append("# central, of f, away from bounds: jac=lambda x: [(f(x + h) - f(x - h)) / (2 * h.sum())")
         lines.append("#              for h in numpy.diag(list(central_steps.values()))]")
     return lines
 
