@@ -114,4 +114,4 @@ def __getattr__(name: str) -> Any:
 
 
 def __dir__() -> list[str]:
-    return sorted([*globals(), *_HOME])
+    return sorted([*_HOME, *(name for name in globals() if name.startswith("__"))])

@@ -41,7 +41,7 @@ from gradcheck.health.step_choice import StepChoice, step_choice
 from gradcheck.problem.domain import windows
 from gradcheck.problem.layout import Points
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
-from gradcheck.problem.sample_points import given_points, random_points
+from gradcheck.problem.sample_points import given_points, random_points, whole_number
 from gradcheck.problem.subject import Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.advice import Advice, Family
 from gradcheck.records.arrays import Array, IntArray, frozen
@@ -99,7 +99,7 @@ def audit(
     budget : int, optional
         Largest number of evaluations. What was left out for it is told.
     time_limit : float or str, optional
-        Seconds, or text such as ``"10min"``.
+        Seconds, or text such as ``"10min"``; looked at between the calls of the model, a call is never broken off.
     accept : mapping of str to str, optional
         Findings to silence, ``"code"``, ``"code:function"`` or ``"code:function:variable"``, each with a reason that
         the report shows.
@@ -126,8 +126,7 @@ def audit(
     (True, <Verdict.CONFIRMED: 'confirmed'>)
     """
     began = time.perf_counter()
-    if isinstance(samples, bool) or int(samples) != samples or samples < 0:
-        raise UsageError(f"samples is {samples!r}; give a whole number >= 0")
+    samples, seed = whole_number(samples, "samples"), whole_number(seed, "seed")
     refuse_unknown(accept)
     options = {
         "at": at,
@@ -141,7 +140,7 @@ def audit(
         "batched": None,  # a description may say it
     }
     subject, more = _subject_and_points(problem_or_function, options)
-    more += given_points(points, subject) + random_points(subject, int(samples), seed)
+    more += given_points(points, subject) + random_points(subject, samples, seed)
     session = open_session(subject, budget=budget, time_limit=time_limit)
     tell = progress or (lambda line: None)
     audit_ = _Audit(session=session, seed=seed, tell=tell)

@@ -14,6 +14,7 @@ from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import Session, open_session
 from gradcheck.evaluation.protocol import Request, Status
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
+from gradcheck.problem.sample_points import whole_number
 from gradcheck.problem.subject import CLAIM_KINDS, Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.arrays import Array, IntArray
 from gradcheck.records.finding import Finding
@@ -80,7 +81,7 @@ def check(
     budget : int, optional
         Largest number of evaluations.
     time_limit : float or str, optional
-        Seconds, or text such as ``"10min"``.
+        Seconds, or text such as ``"10min"``; looked at between the calls of the model, a call is never broken off.
     seed : int
         Reserved for checks along random directions; every step of this check is deterministic.
     on_refuted : "raise" or "return"
@@ -115,6 +116,7 @@ def check(
     'confirmed'
     """
     policy = Policy.of(on_refuted, on_undecided)
+    whole_number(seed, "seed")
     if isinstance(function, Problem):
         raise UsageError(
             "check takes a function; a Problem is looked at as a whole: gradcheck.audit(problem).claims holds a report "

@@ -225,12 +225,14 @@ def _answer_of_checks(reports: list[Any], allow_undecided: bool) -> Answer:
 
 
 def _scan(given: Options, progress: Progress) -> Answer:
+    from gradcheck.report.scan_text import brief_scan
     from gradcheck.scanning import scan
 
     model = load(given["model"])
     along = int(given["along"]) if given["along"].isdigit() else given["along"]
     limits = {name: given[name] for name in ("budget", "time_limit", "seed")}
-    return Answer.of(scan(model, along=along, **_keywords(given, model, "at", "bounds"), **limits), Exit.READY)
+    curve = scan(model, along=along, **_keywords(given, model, "at", "bounds"), **limits)
+    return Answer(record=curve, text=str(curve), brief=brief_scan(curve), status=Exit.READY)
 
 
 def _demo(given: Options, progress: Progress) -> Answer:

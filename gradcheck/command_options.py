@@ -37,7 +37,9 @@ _OPTION = {
         "--budget", type=click.IntRange(min=1), metavar="N", help="At most this many evaluations of the model."
     ),
     "time_limit": click.option("--time-limit", metavar="TIME", help="At most this long: seconds, or 90s, 10min, 2h."),
-    "seed": click.option("--seed", type=int, default=0, show_default=True, help="Of everything that is random."),
+    "seed": click.option(
+        "--seed", type=click.IntRange(0), default=0, show_default=True, help="Of everything that is random."
+    ),
     "json": click.option("--json", metavar="FILE", help="Write the report as JSON; - is standard output."),
     "svg": click.option("--svg", metavar="FILE", help="Draw the curve as SVG; - is standard output."),
     "quiet": click.option("--quiet", is_flag=True, help="No progress; one line if there is nothing to complain of."),

@@ -19,6 +19,7 @@ from gradcheck.witnesses.hessian_difference import hessian_difference
 from gradcheck.witnesses.noise_of_outputs import noise_beside
 from gradcheck.witnesses.steps import room_along
 from gradcheck.witnesses.testimony import Testimony
+from gradcheck.wording import count
 
 
 def estimate(
@@ -63,7 +64,7 @@ def estimate(
     budget : int, optional
         Largest number of evaluations.
     time_limit : float or str, optional
-        Seconds, or text such as ``"10min"``.
+        Seconds, or text such as ``"10min"``; looked at between the calls of the model, a call is never broken off.
 
     Returns
     -------
@@ -90,7 +91,7 @@ def estimate(
     began = time.perf_counter()
     if isinstance(at, Points):
         raise UsageError("estimate takes one point; call it once for each of gradcheck.points(...)")
-    if order not in (1, 2):
+    if isinstance(order, bool | np.bool_) or order not in (1, 2):
         raise UsageError(f"order is {order!r}; first (1) and second (2) derivatives are available")
     subject = subjects_of_function(
         function,
@@ -103,6 +104,7 @@ def estimate(
         typical=typical,
         batched=batched,
     )[0]
+    order = int(order)
     session = open_session(subject, budget=budget, time_limit=time_limit)
     centre = next(iter(session.start_values().values()))
     if order == 2 and direction is None:
@@ -139,9 +141,11 @@ def _directions(subject: Subject, direction: Any) -> Directions:
     else:
         row = np.ravel(real_numbers(direction, "direction"))
     if row.size != subject.layout.size:
-        raise UsageError(f"direction has {row.size} entries but there are {subject.layout.size} variables")
+        raise UsageError(
+            f"direction has {count(row.size, 'entry', 'entries')} but there are {subject.layout.size} variables"
+        )
     if not np.isfinite(row).all() or not row.any():
-        raise UsageError("direction must be finite and not all zero")
+        raise UsageError(f"direction is {direction!r:.80}; it must be finite and not all zero")
     return row[None, :]
 
 
@@ -173,6 +177,7 @@ def _hessian(session: Session, centre: Array) -> dict[str, Any]:
         )
     inquiry = hessian_difference(subject.start, subject.domain, centre)
     testimony = conduct_one(addressed(inquiry, function=subject.name), session.gate)
+    heard = _noise(session, np.arange(subject.layout.size), centre, testimony)
     shape = (*subject.layout.shape, *subject.layout.shape)
 
     def name(i: int, j: int) -> str:
@@ -181,7 +186,7 @@ def _hessian(session: Session, centre: Array) -> dict[str, Any]:
 
     return {
         **{field: getattr(testimony, field).reshape(shape) for field in ("value", "bound", "step")},
-        "noise": testimony.noise,
+        **heard,
         "source": testimony.source,
         "reasons": {name(*place): reason for place, reason in testimony.reasons.items()},
         "names": subject.names if subject.layout.size <= 1000 else (),

@@ -12,6 +12,7 @@ from gradcheck.evaluation.protocol import Directions
 from gradcheck.health.step_curve import step_curve
 from gradcheck.problem.layout import Points, real_numbers
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
+from gradcheck.problem.sample_points import whole_number
 from gradcheck.problem.subject import Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.estimate import Scan
 from gradcheck.report.plots import scan_svg
@@ -78,6 +79,7 @@ def scan(
     >>> round(curve.truncation.slope), round(curve.roundoff.slope)
     (2, -1)
     """
+    whole_number(seed, "seed")
     given = {"wrt": wrt, "output": output, "bounds": bounds, "names": names, "typical": typical}
     given |= {"batched": batched} if batched else {}
     subject = _subject(function, at, given)
@@ -86,7 +88,8 @@ def scan(
     centre = session.start_values()[name]
     if centre.size != 1:
         raise UsageError(
-            f"{name} returns {centre.size} numbers; a scan looks at one: pick it with output=lambda r: r[0]"
+            f"{name} returns {centre.size} numbers; a scan looks at one: pick it with output=lambda r: r[0], or "
+            "scan a function that returns that one alone"
         )
     directions, label = _direction(subject, along)
     room = room_along(subject.start, directions, subject.domain)
@@ -150,7 +153,12 @@ def _direction(subject: Subject, along: Any) -> tuple[Directions, str]:
         if not 0 <= along < n:
             raise UsageError(f"along={along} is no variable; positions run from 0 to {n - 1}")
         return np.array([int(along)]), subject.layout.name(int(along))
+    if along is None or isinstance(along, bool):
+        raise UsageError(f"along is {along}; give the name or position of a variable, or a direction of {n} entries")
     row = np.ravel(real_numbers(along, "along"))
     if row.size != n or not np.isfinite(row).all() or not row.any():
-        raise UsageError(f"along must be a variable or a finite direction of {n} entries that are not all zero")
+        raise UsageError(
+            f"along is {along!r:.80}; give the name or position of a variable, or a finite direction of {n} entries "
+            "that are not all zero"
+        )
     return row[None, :], "direction"

@@ -8,6 +8,7 @@ from gradcheck.health.step_choice import StepChoice
 from gradcheck.records.arrays import Array, BoolArray
 from gradcheck.records.noise import NoiseKind
 from gradcheck.records.report import Steps
+from gradcheck.wording import listed
 
 
 def solver_steps(
@@ -57,13 +58,14 @@ def steps_to_paste(all_steps: Sequence[Steps], names: Sequence[str], start: Arra
     Returns
     -------
     list of str
-        Empty without steps. scipy's form is left out where some variable has no step.
+        Empty without steps. scipy's form is left out where some variable has no step, and the one in units of x where
+        some variable is 0.
 
     Notes
     -----
     scipy (1.17, `scipy.optimize.minimize`) multiplies ``finite_diff_rel_step`` by x itself for ``jac="2-point"``, hence
     its sign, and by ``|x|`` for ``"3-point"``; where x is 0 it takes a step of its own. Without `jac` it takes absolute
-    steps, ``eps``.
+    steps, ``eps``. Its SLSQP ignores the steps of a ``NonlinearConstraint`` and takes those of the objective.
     """
     if not all_steps:
         return []
@@ -101,10 +103,9 @@ def _sign(side: float) -> str:
 
 
 def _for_scipy(steps: Steps, start: Array) -> list[str]:
-    with np.errstate(divide="ignore", invalid="ignore"):
-        forward = np.where(start == 0, 0.0, _signed(steps) / start)
-        central = np.where(start == 0, 0.0, steps.central / np.abs(start))
-    zero = [name for name, x in zip(steps.names, start, strict=True) if x == 0]
+    if not np.all(start):
+        return _absolute(steps, [name for name, x in zip(steps.names, start, strict=True) if x == 0])
+    forward, central = _signed(steps) / start, steps.central / np.abs(start)
     return [
         "# the same in units of x, as scipy.optimize.minimize takes them; for other methods: step = value * x",
         f"forward_relative = [{', '.join(f'{value:.6g}' for value in forward)}]",
@@ -112,8 +113,19 @@ def _for_scipy(steps: Steps, start: Array) -> list[str]:
         '# forward: jac="2-point", options={"finite_diff_rel_step": forward_relative}',
         '# central: jac="3-point", options={"finite_diff_rel_step": central_relative}',
         '# forward, absolute: no jac, options={"eps": list(forward_steps.values())}',
-        *[f"# x is 0 for {name!r}: there scipy takes relative steps of its own; give absolute ones" for name in zero],
     ]
+
+
+def _absolute(steps: Steps, zero: Sequence[str]) -> list[str]:
+    """Where some variable is 0, a step in units of x is none; scipy would take one of its own there, without a word."""
+    lines = [
+        f"# x is 0 for {listed(list(map(repr, zero)))}: scipy.optimize.minimize cannot take steps in units of x there",
+        '# forward: no jac, options={"eps": list(forward_steps.values())}',
+    ]
+    if not steps.central_side.any():
+        lines.append("# central, of f, away from bounds: jac=lambda x: [(f(x + h) - f(x - h)) / (2 * h.sum())")
+        lines.append("#              for h in numpy.diag(list(central_steps.values()))]")
+    return lines
 
 
 def _of_other_functions(others: Sequence[Steps]) -> list[str]:
@@ -122,4 +134,9 @@ def _of_other_functions(others: Sequence[Steps]) -> list[str]:
         pairs = zip(steps.names, _signed(steps), steps.central, strict=True)
         rows = [f"        {name!r}: ({f:.3g}, {c:.3g})," for name, f, c in pairs if np.isfinite([f, c]).all()]
         lines += [f"    {steps.function!r}: {{", *rows, "    },"]
-    return [*lines, "}"]
+    return [
+        *lines,
+        "}",
+        '# scipy: method="SLSQP" takes the steps of the objective for constraints too, unless they bring a jac;',
+        '# "trust-constr" takes NonlinearConstraint(..., finite_diff_rel_step=[step / x, ...])',
+    ]

@@ -87,10 +87,18 @@ class Session:
             )
         return ModelFailure(
             f"{name} could not be evaluated at its start point x = {point}: it raised {words}. "
-            "Call the model by hand at this point to see the whole traceback.",
+            f"{self._by_hand()} to see the whole traceback.",
             reason="crash",
             last_words=words,
         )
+
+    def _by_hand(self) -> str:
+        """How to see the failure again."""
+        single = self.subject.layout.single
+        if not self.subject.batched or single is None:
+            return "Call the model by hand at this point"
+        shape = "(1,)" if single.scalar else f"(1, {self.subject.layout.size})"
+        return f"With batched=True it is given x of shape {shape}, one row a point: call it by hand like that"
 
     def shape_of(self, function: str) -> tuple[int, ...]:
         """Shape of what the function returns; known after `start_values`."""

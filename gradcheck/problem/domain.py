@@ -92,7 +92,10 @@ def _scale(x: Array, width: Array, typical: Any) -> Array:
     own = np.where(x != 0, np.abs(x), width)
     if typical is None:
         return own
-    given = np.asarray(typical, dtype=float)
+    try:
+        given = np.asarray(typical, dtype=float)
+    except (TypeError, ValueError):
+        raise UsageError(f"typical is {typical!r:.80}; give a number > 0, or one a variable") from None
     if given.size not in (1, x.size):
         raise UsageError(f"typical has {given.size} entries but there are {x.size} variables")
     given = np.broadcast_to(given.ravel(), x.shape)

@@ -2,7 +2,7 @@
 
 import inspect
 import math
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -174,7 +174,10 @@ def layout_of(at: Any, *, root: str = "x", wrt: Any = None, function: Any = None
     builder = _Builder(function=function, wrt=wrt)
     template = builder.build(at, root, top=True)
     if not builder.values or sum(value.size for value in builder.values) == 0:
-        raise UsageError(f"`at` is {at!r}: it holds no real number to differentiate with respect to")
+        raise UsageError(
+            f"`at` is {at!r:.80}: it holds no real number to differentiate with respect to"
+            + ("; whole numbers beside text, flags or None are no variables: write 1.0" if _passed_on(template) else "")
+        )
     layout = Layout(template, tuple(builder.leaves), tuple(dict.fromkeys(builder.notices)))
     return layout, np.concatenate([np.ravel(value) for value in builder.values])
 
@@ -333,6 +336,14 @@ def _walk(template: Any, of_leaf: Callable[[Leaf], Any]) -> Any:
 def _like(sequence: Any, parts: list[Any]) -> Any:
     """The parts in a sequence of the same type; a named tuple takes them one by one."""
     return type(sequence)(*parts) if hasattr(sequence, "_fields") else type(sequence)(parts)
+
+
+def _passed_on(template: Any) -> bool:
+    """Whether a part of a template is a whole number that the model receives as it is."""
+    if isinstance(template, Untouched):
+        return isinstance(template.value, int) and not isinstance(template.value, bool)
+    parts = template.values() if isinstance(template, dict) else template
+    return isinstance(parts, Iterable) and any(map(_passed_on, parts))
 
 
 def _varies(template: Any) -> bool:

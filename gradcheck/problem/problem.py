@@ -64,6 +64,9 @@ class Variable:
             object.__setattr__(self, name, number)
         if not math.isfinite(self.value):
             raise UsageError(f"variable {self.name!r}: the start value is {self.value}; give a finite number")
+        for name in ("lower", "upper"):
+            if math.isnan(getattr(self, name)):
+                raise UsageError(f"variable {self.name!r}: {name} is NaN; leave it out where there is no bound")
         if self.lower > self.upper:
             raise UsageError(
                 f"variable {self.name!r}: the bounds are the wrong way round: "

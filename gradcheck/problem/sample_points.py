@@ -1,14 +1,32 @@
 """Points beside the start at which a problem is looked at: given ones, and random ones within the bounds."""
 
+from collections.abc import Iterable
 from typing import Any
 
 import numpy as np
 
 from gradcheck.errors import UsageError
 from gradcheck.problem.domain import windows
-from gradcheck.problem.layout import Points
+from gradcheck.problem.layout import Points, real_numbers
 from gradcheck.problem.subject import Subject
 from gradcheck.records.arrays import Array
+
+
+def whole_number(value: Any, what: str) -> int:
+    """A whole number that is not negative: of samples, or a seed.
+
+    Raises
+    ------
+    UsageError
+        If it is anything else.
+    """
+    try:
+        whole = -1 if isinstance(value, bool | np.bool_ | str) or int(value) != value else int(value)
+    except (TypeError, ValueError, OverflowError):
+        whole = -1
+    if whole < 0:
+        raise UsageError(f"{what} is {value!r}; give a whole number >= 0")
+    return whole
 
 
 def given_points(points: Any, subject: Subject) -> list[Array]:
@@ -17,14 +35,16 @@ def given_points(points: Any, subject: Subject) -> list[Array]:
     Raises
     ------
     UsageError
-        If one has another number of entries, is not finite, or lies outside the bounds.
+        If they are no points, or one has another number of entries, is not finite, or lies outside the bounds.
     """
     if points is None:
         return []
-    listed = list(points.each) if isinstance(points, Points) else list(points)
+    listed = points.each if isinstance(points, Points) else points
+    if isinstance(listed, str) or not isinstance(listed, Iterable):
+        raise UsageError(f"points is {points!r:.80}; give a list of points, or an array with one row a point")
     rows = []
     for place, point in enumerate(listed):
-        row = np.ravel(np.asarray(point, dtype=float))
+        row = np.ravel(real_numbers([point], f"point {place} of points"))
         if row.size != subject.layout.size or not np.isfinite(row).all():
             raise UsageError(
                 f"point {place} of points has {row.size} entries, {int(np.isfinite(row).sum())} of them finite; "

@@ -1,7 +1,8 @@
 """One normal form of what the user gave: a function with ``at``, a decorated model, or a described Problem."""
 
 import inspect
-from collections.abc import Callable, Mapping
+from collections import Counter
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
 from functools import partial
 from typing import Any
@@ -13,6 +14,7 @@ from gradcheck.problem.domain import Domain, domain_of
 from gradcheck.problem.layout import Layout, Points, layout_of
 from gradcheck.problem.problem import Function, Output, Problem
 from gradcheck.records.arrays import Array, frozen
+from gradcheck.wording import count
 
 CLAIM_KINDS = ("gradient", "jacobian")
 
@@ -85,6 +87,10 @@ def subjects_of_function(
     if not callable(function):
         raise UsageError(
             f"the model is {function!r} ({type(function).__name__}), which cannot be called; pass the function itself"
+        )
+    if output is not None and not callable(output):
+        raise UsageError(
+            f"output is {output!r}; give a function that picks from what the model returns, such as lambda r: r[0]"
         )
     each = at.each if isinstance(at, Points) else (at,)
     name = getattr(function, "__name__", "") or type(function).__name__
@@ -174,9 +180,16 @@ def _given_claims(claims: Mapping[str, Any]) -> dict[str, Any]:
 def _named(layout: Layout, names: Any) -> Layout:
     if names is None:
         return layout
+    if isinstance(names, str) or not isinstance(names, Iterable):
+        raise UsageError(f"names is {names!r}; give a list with one name a variable")
     names = tuple(str(name) for name in names)
     if len(names) != layout.size:
-        raise UsageError(f"names has {len(names)} entries but there are {layout.size} variables")
+        raise UsageError(
+            f"names has {count(len(names), 'entry', 'entries')} but there are {count(layout.size, 'variable')}"
+        )
+    twice = [name for name, often in Counter(names).items() if often > 1]
+    if twice:
+        raise UsageError(f"names holds {twice[0]!r} more than once; names must differ")
     return Layout(layout.template, layout.leaves, layout.notices, names)
 
 

@@ -258,4 +258,7 @@ def _closing(report: CheckReport) -> str:
     witnesses = [source for source in dict.fromkeys(report.entries.source) if source]
     against = f" against {wording.listed(witnesses)}" if witnesses else ""
     spent = f": {wording.cost(report.evaluations, report.seconds)}" if report.evaluations else ""
-    return f"Checked at {wording.point(report.point.tolist())}{against}{spent}."
+    others = len({name.rpartition(" @ ")[2] for name in report.entries.name if " @ point " in name}) - 1
+    where = wording.point(report.point.tolist())
+    more = f" and {wording.count(others, 'other point')}" if others > 0 else ""
+    return f"Checked at {where}{more}{against}{spent}."

@@ -5,7 +5,7 @@ from collections.abc import Mapping
 import numpy as np
 
 from gradcheck import wording
-from gradcheck.records.arrays import IntArray
+from gradcheck.records.arrays import Array, IntArray
 from gradcheck.records.estimate import Estimate
 from gradcheck.report.paragraphs import paragraph, table
 
@@ -96,11 +96,17 @@ def _table(estimate: Estimate, shown: list[int]) -> list[str]:
         (
             _name(estimate, position),
             wording.with_bound(float(value[position]), float(bound[position]), digits=wording.MOST_DIGITS),
-            wording.number(float(step[position]), 2) if position < step.size else "-",
+            _step(step, position),
         )
         for position in shown
     ]
     return table(("entry", "value ± bound", "step"), rows, right="--r")
+
+
+def _step(steps: Array, position: int) -> str:
+    """The step of an entry, or a dash where no interval decided it."""
+    known = position < steps.size and np.isfinite(steps[position])
+    return wording.number(float(steps[position]), 2) if known else "-"
 
 
 def _name(estimate: Estimate, position: int) -> str:

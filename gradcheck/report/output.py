@@ -46,10 +46,12 @@ def refuse_unwritable(target: str | None) -> None:
     Raises
     ------
     UsageError
-        If `target` is a folder, or lies in one that does not exist.
+        If `target` is empty or a folder, or lies in one that does not exist.
     """
     if target is None or target == "-":
         return
+    if not target:
+        raise UsageError("the name of the file to write is empty; give one, or - for standard output")
     path = Path(target)
     if path.is_dir():
         raise UsageError(f"{target!r} is a folder; give the name of a file")

@@ -20,6 +20,7 @@ from gradcheck import wording
 from gradcheck.errors import MissingExtra
 from gradcheck.records.arrays import BoolArray
 from gradcheck.records.estimate import Branch, Scan
+from gradcheck.report.scan_text import error_left
 
 #: Width and height in inches of 72 points.
 SIZE = (7.6, 5.2)
@@ -80,7 +81,7 @@ def subtitle(scan: Scan) -> str:
     if not math.isfinite(scan.best_step):
         reason = wording.capitalised(wording.shortened(scan.notices[-1], 90)) if scan.notices else ""
         return f"{reason or 'The quotients approach no derivative as the step shrinks'}."
-    left = max(scan.best_error, scan.floor)
+    left = error_left(scan)
     share = f" (relative {wording.number(left / abs(scan.value), 2)})" if scan.value else ""
     return f"It leaves an error of about {wording.number(left, 2)}{share} in a {scan.formula}; {value}."
 

@@ -8,6 +8,7 @@ from gradcheck import wording
 from gradcheck.records.arrays import Array
 from gradcheck.records.estimate import Scan
 from gradcheck.report.paragraphs import paragraph
+from gradcheck.witnesses.difference_reasons import SPENT
 
 #: Size of the plot's field in characters.
 _COLUMNS, _LINES = 61, 15
@@ -38,18 +39,37 @@ def scan_text(scan: Scan) -> str:
     return "\n".join([*lines, *paragraph(_closing(scan))])
 
 
+def brief_scan(scan: Scan) -> str:
+    """The derivative and the best step, in one line.
+
+    Examples
+    --------
+    >>> import gradcheck
+    >>> brief_scan(gradcheck.scan(abs, at=0.0)).rpartition(", ")[2]
+    'no best step'
+    """
+    step = f"best step {wording.number(scan.best_step, 2)}{_unit(scan)}" if math.isfinite(scan.best_step) else ""
+    return f"{scan.text.partition(chr(10))[0]}, {step or 'no best step'}"
+
+
 def _best(scan: Scan) -> str:
     if not np.isfinite(scan.errors).any():
+        if SPENT in scan.notices:
+            return "The budget ended before the curve could be looked at."
         return "No step gives a finite difference quotient."
     if not math.isfinite(scan.best_step):
         return "No step gives a derivative here."
-    # What the reference does not resolve is not known to be smaller.
-    resolved = scan.bound if math.isfinite(scan.bound) and scan.bound <= abs(scan.value) else 0.0
-    left = max(scan.best_error, scan.floor, resolved)
     return (
         f"Best step for a {scan.formula}: {wording.number(scan.best_step, 2)}{_unit(scan)}, "
-        f"which leaves an error of about {wording.number(left, 2)}."
+        f"which leaves an error of about {wording.number(error_left(scan), 2)}."
     )
+
+
+def error_left(scan: Scan) -> float:
+    """The error to be told for the best step: what was seen, what noise leaves, and what the reference hides."""
+    # What the reference does not resolve is not known to be smaller.
+    resolved = scan.bound if math.isfinite(scan.bound) and scan.bound <= abs(scan.value) else 0.0
+    return max(scan.best_error, scan.floor, resolved)
 
 
 def _unit(scan: Scan) -> str:

@@ -30,7 +30,8 @@ def hessian_difference(base: Array, domain: Domain, centre: Array) -> Inquiry[Te
     -------
     Testimony
         Values and bounds (n, n), symmetric; ``reasons`` by (i, j) with i <= j. Where the function has a kink, a jump or
-        a curvature break along an axis, all mixed entries of that variable have infinite bounds.
+        a curvature break along an axis, all mixed entries of that variable have infinite bounds. ``doubtful`` is that
+        of the axes, (n, 1).
     """
     n = base.size
     axes = np.arange(n)
@@ -60,6 +61,7 @@ def hessian_difference(base: Array, domain: Domain, centre: Array) -> Inquiry[Te
         source=SOURCE,
         step=step,
         noise=own.noise,
+        doubtful=own.doubtful,
         spent=own.spent + mixed.spent,
         works=bool(np.isfinite(bound).any()),
         reasons=reasons,

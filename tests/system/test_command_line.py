@@ -202,6 +202,7 @@ def test_the_traceback_of_an_own_error_is_shown_on_request(verbs, capfd, monkeyp
         (["audit", "wing.py:drag", "--at", "0.3;1.2"], "--at '0.3;1.2': '0.3;1.2' is no number"),
         (["audit", "wing.py:drag", "--at", "1,2", "--gradient", "drag_gradint"], "did you mean drag_gradient"),
         (["audit", "wing.py:problem", "--budget", "0"], "see gradcheck audit --help"),
+        (["audit", "wing.py:problem", "--seed", "-1"], "-1 is not in the range"),
         (["audit", "wing.py:problem", "--points", "missing.csv"], "'missing.csv' cannot be read"),
         (["audit", "wing.py:problem", "--json", "nowhere/report.json"], "there is no folder"),
         (["audit", "wing.py:problem", "--json", "."], "is a folder"),
@@ -652,6 +653,7 @@ def test_a_picture_on_standard_output_stands_alone(folder):
         (["--svg", "-", "--json", "-"], "would mix on standard output"),
         (["--svg", "nowhere/curve.svg"], "there is no folder"),
         (["--svg", "."], "is a folder"),
+        (["--svg", ""], "the name of the file to write is empty"),
     ],
 )
 def test_a_picture_that_cannot_be_written_is_told_before_the_model_runs(verbs, capfd, options, words):

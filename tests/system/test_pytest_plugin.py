@@ -523,7 +523,7 @@ VALUES = {
     "witness": ("at=[1.0, 2.0], witnesses='oracle'", "witnesses is 'oracle'; choose among"),
     "bounds": ("at=[1.0, 2.0], bounds=[(0, 3)]", "bounds has 1 parts for 2 variables"),
     "outside": ("at=[1.0, 2.0], bounds=[(0, 3), (0, 1)]", "entry 1 of the point is 2, outside its bounds"),
-    "names": ("at=[1.0, 2.0], names=['span']", "names has 1 entries but there are 2 variables"),
+    "names": ("at=[1.0, 2.0], names=['span']", "names has 1 entry but there are 2 variables"),
     "point": ("at=[1j, 2.0]", "is complex"),
     "second point": ("at=gradcheck.points([1.0, 2.0], 'start')", "`at` is 'start'"),
     "word": ("at=[1.0, 2.0], on_undecided='shout'", "on_undecided is 'shout'; choose 'warn' or 'raise' or 'pass'"),

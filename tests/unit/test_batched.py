@@ -222,6 +222,20 @@ def test_a_claim_of_an_automatic_source_differentiates_the_batched_model(at):
     assert gradcheck.check(model, at=at, gradient="autograd", batched=True).verdict == "confirmed"
 
 
+@pytest.mark.parametrize(("at", "shape"), [(AT, "(1, 3)"), (0.5, "(1,)")], ids=["an array", "a number"])
+def test_a_model_that_takes_one_point_is_told_what_it_was_given(at, shape):
+    def of_one_point(x):
+        a, b, c = x
+        return a * b * c
+
+    def of_a_number(x):
+        raise TypeError("one number is needed")
+
+    with pytest.raises(ModelFailure) as told:
+        gradcheck.estimate(of_a_number if at == 0.5 else of_one_point, at=at, batched=True)
+    assert f"With batched=True it is given x of shape {shape}" in str(told.value)
+
+
 # --- counting and limits ---------------------------------------------------------------------------------------------
 
 

@@ -304,6 +304,12 @@ def test_a_claim_that_fails_at_one_of_several_points_is_refuted_there():
     assert [str(v) for v in report.entries.verdict] == ["confirmed", "confirmed", "confirmed", "refuted"]
 
 
+def test_a_check_at_several_points_says_at_how_many():
+    report = look(at=gradcheck.points([0.3, 1.2], [0.5, -0.7], [1.1, 2.0]), gradient=drag_gradient)
+
+    assert "Checked at (0.3, 1.2) and 2 other points against" in str(report)
+
+
 def test_a_matrix_is_never_several_points():
     report = look(lambda x: float(np.sum(x**2)), np.array([[1.0, 2.0], [3.0, 4.0]]), gradient=lambda x: 2 * x)
 
@@ -661,7 +667,7 @@ def test_a_point_outside_the_bounds():
 
 
 def test_names_of_another_number():
-    refused("names has 1 entries but there are 2 variables", names=["span"])
+    refused("names has 1 entry but there are 2 variables", names=["span"])
 
 
 @pytest.mark.parametrize(
@@ -678,6 +684,8 @@ def test_names_of_another_number():
         ("budget", 0, "budget is 0"),
         ("time_limit", "soon", "time_limit is 'soon'"),
         ("typical", -1.0, "typical"),
+        ("typical", "large", "typical is 'large'; give a number > 0"),
+        ("seed", "a", "seed is 'a'; give a whole number >= 0"),
         ("gradient", "calculus", "gradient='calculus' names no derivative source"),
     ],
 )

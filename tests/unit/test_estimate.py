@@ -247,19 +247,33 @@ def test_integers_become_floats_and_the_record_says_so():
     [
         ({"order": 3}, r"order is 3; first \(1\) and second \(2\)"),
         ({"order": 0}, "order is 0"),
-        ({"direction": [1.0]}, "direction has 1 entries but there are 2 variables"),
+        ({"order": True}, "order is True"),
+        ({"order": "2"}, "order is '2'"),
+        ({"output": "mass"}, "output is 'mass'; give a function that picks"),
+        ({"direction": [1.0]}, "direction has 1 entry but there are 2 variables"),
         ({"direction": [0.0, 0.0]}, "finite and not all zero"),
         ({"direction": [math.nan, 1.0]}, "finite and not all zero"),
         ({"at": gradcheck.points(X, X)}, "estimate takes one point"),
         ({"at": []}, "no real number"),
         ({"bounds": [(0.5, 1.0), (0.0, 2.0)]}, "outside its bounds"),
         ({"budget": -1}, "budget is -1"),
-        ({"names": ["a"]}, "names has 1 entries"),
+        ({"names": ["a"]}, "names has 1 entry"),
+        ({"names": "ab"}, "names is 'ab'; give a list with one name a variable"),
+        ({"names": 2}, "names is 2; give a list"),
+        ({"names": ["a", "a"]}, "names holds 'a' more than once"),
+        ({"at": [None, 1]}, "whole numbers beside text, flags or None are no variables: write 1.0"),
     ],
 )
 def test_what_makes_no_sense_is_refused(options, words):
     with pytest.raises(UsageError, match=words):
         gradcheck.estimate(model, **({"at": X} | options))
+
+
+def test_the_order_may_be_any_whole_number_of_one_or_two():
+    answer = gradcheck.estimate(math.exp, at=0.0, order=np.float64(2.0))
+
+    assert type(answer.order) is int
+    assert answer.order == 2
 
 
 def test_a_direction_that_is_no_direction_is_refused():

@@ -102,3 +102,10 @@ def test_no_line_is_wider_than_a_terminal(size):
     )
 
     assert max(len(line) for line in text.splitlines()) <= 80
+
+
+def test_an_entry_that_no_step_decided_has_a_dash_for_it():
+    text = estimate_text(estimate([0.0, 1.0], bound=[1.0, 1e-12], names=("chord", "span"), step=np.array([NAN, 0.1])))
+
+    assert "chord  0 ± 1" in text
+    assert [line.split()[-1] for line in text.splitlines() if "±" in line] == ["step", "-", "0.1"]

@@ -274,6 +274,19 @@ def test_an_estimate_tells_what_few_digits_do():
     assert answer.noise.item() == pytest.approx(1e-6 / math.sqrt(12.0))
 
 
+@pytest.mark.parametrize(
+    ("function", "kind"),
+    [(math.exp, ROUNDING), (lambda x: round(math.exp(x), 6), DIGITS), (lambda x: np.float32(math.exp(x)), SINGLE)],
+    ids=["rounding", "few digits", "single precision"],
+)
+@pytest.mark.parametrize("at", [0.7, [0.7, 0.2]], ids=["a number", "an array"])
+def test_an_estimate_of_second_derivatives_tells_the_kind_too(function, kind, at):
+    answer = gradcheck.estimate(lambda x: function(float(np.sum(x))), at=at, order=2)
+
+    assert answer.noise_kind == (kind,)
+    assert answer.noise.shape == (1,)
+
+
 def test_a_scan_tells_the_kind_in_words_and_in_json():
     curve = gradcheck.scan(lambda x: float(np.float32(math.exp(x))), at=0.7)
 

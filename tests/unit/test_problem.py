@@ -62,6 +62,12 @@ def test_a_bound_of_nan_is_refused():
         Variable("span", 1.2, upper=math.nan)
 
 
+@pytest.mark.parametrize("side", ["lower", "upper"])
+def test_a_bound_that_is_nan_is_told_as_such(side):
+    with pytest.raises(UsageError, match=f"'span': {side} is NaN; leave it out where there is no bound"):
+        Variable("span", 1.2, **{side: math.nan})
+
+
 @pytest.mark.parametrize("typical", [0.0, -1.0, math.nan, math.inf])
 def test_a_typical_size_must_be_finite_and_positive(typical):
     with pytest.raises(UsageError, match=r"'span': typical is .*; give a finite size > 0"):

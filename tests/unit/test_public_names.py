@@ -64,6 +64,13 @@ def test_dir_shows_every_public_name() -> None:
     assert set(PUBLIC) <= set(dir(gradcheck))
 
 
+def test_dir_shows_nothing_that_serves_the_package_only() -> None:
+    shown = {name for name in dir(gradcheck) if not name.startswith("__")}
+    modules = {path.stem for path in Path(gradcheck.__file__).parent.iterdir()}
+
+    assert shown - modules == set(PUBLIC)
+
+
 def test_every_public_name_is_documented() -> None:
     undocumented = [name for name in PUBLIC if not getattr(gradcheck, name).__doc__]
 

@@ -201,11 +201,17 @@ def test_the_record_is_made_of_plain_things_on_request():
         ({"along": 2}, "along=2 is no variable; positions run from 0 to 1"),
         ({"along": -1}, "along=-1 is no variable"),
         ({"along": [1.0]}, "a finite direction of 2 entries"),
-        ({"along": [0.0, 0.0]}, "not all zero"),
+        ({"along": [0.0, 0.0]}, r"along is \[0.0, 0.0\]; .* not all zero"),
+        ({"along": None}, "along is None; give the name or position of a variable"),
+        ({"along": True}, "along is True; give the name or position of a variable"),
         ({"at": None}, "the point is missing"),
+        ({"seed": -1}, "seed is -1"),
         ({"at": gradcheck.points(X, X)}, "scan takes one point"),
         ({"bounds": [(0.3, 0.3), (0.0, 2.0)]}, r"the bounds leave no room for a step along x\[0\]"),
-        ({"output": lambda r: np.ones(2)}, "returns 2 numbers; a scan looks at one: pick it with output="),
+        (
+            {"output": lambda r: np.ones(2)},
+            "returns 2 numbers; a scan looks at one: pick it with output=.* or scan a function",
+        ),
     ],
 )
 def test_what_makes_no_sense_is_refused(options, words):

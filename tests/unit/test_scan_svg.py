@@ -17,6 +17,7 @@ import pytest
 import gradcheck
 from gradcheck.errors import MissingExtra
 from gradcheck.report.plots import headline, remarks, scan_svg, subtitle
+from gradcheck.report.scan_text import scan_text
 from tests.unit.test_scan_text import scan
 
 ROOT = Path(gradcheck.__file__).parent.parent
@@ -88,6 +89,13 @@ def test_the_words_give_the_best_step_its_error_the_derivative_and_the_order():
     assert "2.718281828 ± " in text
     assert "power 2 of the step" in text
     assert "power -1 of the step" in text or "power -0.9" in text
+
+
+def test_the_picture_and_the_text_tell_the_same_error():
+    curve = scan(best_error=2e-12, floor=1e-12, bound=5e-11)
+
+    assert "an error of about 5e-11" in subtitle(curve)
+    assert "an error of about 5e-11" in " ".join(scan_text(curve).split())
 
 
 @pytest.mark.parametrize(

@@ -1,10 +1,13 @@
 """The step-size curve as text with a small plot."""
 
+import math
+
 import numpy as np
 import pytest
 
+import gradcheck
 from gradcheck.records.estimate import Scan
-from gradcheck.report.scan_text import plot, scan_text
+from gradcheck.report.scan_text import brief_scan, plot, scan_text
 from tests.records import INF, NAN
 
 STEPS = np.logspace(-14, 0, 43)
@@ -94,6 +97,18 @@ def test_a_scan_that_found_nothing_says_so():
     nothing = scan(errors=np.full(43, NAN), best_step=NAN, order=NAN, noise=NAN, value=NAN, bound=INF)
 
     assert "No step gives a finite difference quotient." in scan_text(nothing)
+
+
+def test_a_scan_whose_budget_ended_before_the_curve_blames_no_step():
+    text = str(gradcheck.scan(math.exp, at=0.7, budget=5))
+
+    assert "The budget ended before the curve could be looked at." in text
+    assert "No step" not in text
+
+
+def test_the_brief_line_holds_the_best_step():
+    assert brief_scan(scan(text="cost along span: 2\nmore", best_step=1.7e-5)) == "cost along span: 2, best step 1.7e-5"
+    assert brief_scan(scan(text="cost along span: 2\nmore", best_step=NAN)) == "cost along span: 2, no best step"
 
 
 @pytest.mark.parametrize("decades", [1, 30, 300])

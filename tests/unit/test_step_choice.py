@@ -284,10 +284,34 @@ def test_a_backward_step_is_exported_with_its_sign():
     assert np.array(members["forward_relative"]) * [2.0, -4.0] == pytest.approx([-1.23e-8, 2e-8], rel=1e-4)
 
 
-def test_a_start_at_zero_is_told_because_relative_steps_fail_there():
+def test_at_a_start_at_zero_only_steps_that_work_there_are_exported():
     lines = steps_to_paste([steps()], ("span", "chord"), np.array([0.0, 1.0]))
+    told = "\n".join(lines)
 
-    assert any("x is 0 for 'span'" in line for line in lines)
+    assert "x is 0 for 'span':" in told
+    assert "finite_diff_rel_step" not in told
+    assert 'options={"eps": list(forward_steps.values())}' in told
+
+
+def test_the_central_gradient_to_paste_at_a_start_at_zero_takes_the_central_steps():
+    lines = steps_to_paste([steps()], ("span", "chord"), np.array([0.0, 1.0]))
+    comment = " ".join(line.lstrip("# ") for line in lines if line.startswith("#"))
+    seen = []
+
+    def model(x):
+        seen.append(np.array(x))
+        return float(x @ x)
+
+    jac = eval(comment.partition("jac=")[2], {"f": model, "numpy": np} | pasted([steps()], start=(0.0, 1.0)))
+
+    assert jac(np.array([0.0, 1.0])) == pytest.approx([0.0, 2.0], abs=1e-9)
+    assert [s.tolist() for s in seen] == [[3e-6, 1.0], [-3e-6, 1.0], [0.0, 1.0 + 4e-6], [0.0, 1.0 - 4e-6]]
+
+
+def test_no_central_gradient_is_offered_that_would_leave_the_bounds():
+    told = "\n".join(steps_to_paste([steps(central_side=[1.0, 0.0])], ("span", "chord"), np.array([0.0, 1.0])))
+
+    assert "jac=lambda" not in told
 
 
 @pytest.mark.parametrize(
@@ -310,6 +334,30 @@ def test_steps_of_constraints_are_exported_too():
     members = pasted([steps(), steps(function="stress")])
 
     assert members["other_steps"] == {"stress": {"span": (1.23e-8, 3e-6), "chord": (2e-8, 4e-6)}}
+
+
+@pytest.mark.parametrize(("method", "share"), [("SLSQP", 0.1), ("trust-constr", 0.01)])
+@pytest.mark.filterwarnings("ignore")
+def test_what_the_export_says_of_constraints_holds_for_scipy(method, share):
+    told = "\n".join(steps_to_paste([steps(), steps(function="stress")], ("span", "chord"), np.array([2.0, -4.0])))
+    start = np.array([2.0, 4.0])
+    seen = []
+
+    def constraint(x):
+        seen.append(float(x[0] - start[0]))
+        return x[0] * x[1]
+
+    optimize.minimize(
+        lambda x: float(x @ x),
+        start,
+        method=method,
+        jac="2-point",
+        options={"finite_diff_rel_step": [0.1, 0.1], "maxiter": 1},
+        constraints=optimize.NonlinearConstraint(constraint, 0, 100, jac="2-point", finite_diff_rel_step=[0.01, 0.01]),
+    )
+
+    assert '"SLSQP" takes the steps of the objective for constraints too' in told.replace("method=", "")
+    assert share * 2.0 in [pytest.approx(step) for step in seen]
 
 
 def test_an_audit_exports_steps_as_data_and_as_python():
