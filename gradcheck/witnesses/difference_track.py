@@ -54,6 +54,8 @@ FORESEEN_SPANS = 2.7
 GROWTHS_MOST = 4
 #: No course is longer; in a box of a few units in the last place intervals stop shrinking.
 STAGES_MOST = 40
+#: What is known when the budget ends counts where the coefficients fall by this factor from one group to the next.
+DECAYS_FAST = 30.0
 #: The interval shrinks by 16 each time the model fails; after that the point itself is at the edge of its domain.
 ESCAPES_MOST = 6
 #: An interval grows where the bound exceeds this share of the value and the function is nearly a low polynomial.
@@ -197,6 +199,11 @@ class Track:
             self.reasons.setdefault(int(output), reason)
         self.stage = "done"
 
+    def _if_it_decays(self, fits: Fit, i: int, half: float) -> Candidate:
+        """Fit `i` where its coefficients end in rounding or decay fast; an alias or a step does neither."""
+        decays = fits.before[i] > DECAYS_FAST * fits.tail[i]
+        return candidate_of(fits, i, half, fits.resolved[i] & (decays | self._at_floor(fits, i)))
+
     # --- after a fit -----------------------------------------------------------------------------------------------
 
     def after_fit(self, fits: Fit, i: int, half: float, sides: Sides | None = None) -> None:
@@ -206,7 +213,7 @@ class Track:
             self.stop(UNSETTLED)
             return
         # needed where the budget ends and nowhere else
-        self.latest = partial(candidate_of, fits, i, half, fits.resolved[i])
+        self.latest = partial(self._if_it_decays, fits, i, half)
         if self._meets_plateau(fits, i):
             return
         at_floor = self._at_floor(fits, i)
@@ -397,6 +404,8 @@ class Track:
         outward = self.outward
         assert outward is not None
         outward.hear(fits, i, half, at_floor)
+        if at_floor.any():
+            self.candidates.append(candidate_of(fits, i, half, at_floor & self.coarse_flat))
         self.ripple = (self.ripple | outward.jumps) & ~outward.smooth
         if not self._wider_outward(half):
             self._restart(outward.inner)

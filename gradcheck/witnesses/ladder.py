@@ -141,6 +141,7 @@ def read_ladder(
     all_steps = np.broadcast_to(h, quotient.shape)
     step = pick(all_steps, agreed[:, None, :], axis=1)[:, 0]
     wide_step = pick(all_steps, similar[:, None, :], axis=1)[:, 0]
+    step, wide_step = _as_far_as_bends_agree(second, h, 40 * rounding, nature, one_sided, step, wide_step)
     left, right, error = _one_sided_slopes(h, up, down, centre, noise)
     at_kink = nature == Nature.KINK
     return Rungs(
@@ -153,6 +154,32 @@ def read_ladder(
         right=np.where(at_kink, right * unit, np.nan),
         slope_error=np.where(at_kink, error * unit, np.nan),
     )
+
+
+def _as_far_as_bends_agree(
+    second: Array,
+    h: Array,
+    noise: Array,
+    nature: np.ndarray[tuple[int, ...], np.dtype[np.int8]],
+    one_sided: BoolArray,
+    step: Array,
+    wide_step: Array,
+) -> tuple[Array, Array]:
+    """Steps, (d, m), that see the same bend as the finest ones where the quotients agree at every step.
+
+    On the top of a peak, or at the corner of a rounded kink, the quotients of all steps agree and say nothing about how
+    wide it is.
+    """
+    bend = second / h**2
+    seen = np.abs(second) > noise
+    first = np.argmax(seen, axis=1)[:, None, :]
+    reference = np.abs(np.take_along_axis(bend, first, axis=1))
+    agreed = _largest_agreed(
+        bend, 0.2 * noise / h**2 + np.where(seen.any(axis=1, keepdims=True), 0.3 * reference, np.inf)
+    )
+    cap = np.maximum(np.take_along_axis(np.broadcast_to(h, bend.shape), agreed[:, None, :], axis=1)[:, 0], h[:, 0])
+    blind = (nature == Nature.SMOOTH) & ~one_sided[:, None] & seen.any(axis=1) & (step >= 0.9 * h[:, -1])
+    return np.where(blind, np.minimum(step, cap), step), np.where(blind, np.minimum(wide_step, cap), wide_step)
 
 
 def without_waves(rungs: Rungs, step: Array, finest: Array, up: Array, down: Array, centre: Array) -> Rungs:

@@ -29,6 +29,8 @@ LEAST_ROOM, LEAST_WIDENING = 0.1, 2.0
 #: Step of the close look in units of the variables' sizes; what it may be off by rounding, in units in the last place,
 #: and as a share of its terms.
 CLOSE, CLOSE_DEVIATIONS, CLOSE_SHARE = 2.0**-20, 30.0, 1e-6
+#: Fractional parts of its multiples are spread evenly.
+GOLDEN = 0.6180339887
 #: Half-width of the bound in standard deviations of rounding.
 DEVIATIONS = 8.0
 #: Multiple of the next Taylor term, as the decay of the terms before foretells it, that counts as truncation.
@@ -332,7 +334,9 @@ def close_look(base: Array, columns: IntArray, room: Room, claim: Array, centre:
         False where nothing speaks against the claim, or the bounds or the model leave no room for a pair of values.
     """
     reach = np.minimum(room.below, room.above) / CLOSE
-    signs = np.where(np.arange(columns.size) % 2 == 0, 1.0, -1.0)
+    # Moves of unequal size: those of equal variables would cancel what both have in common.
+    place = np.arange(columns.size)
+    signs = np.where(place % 2 == 0, 1.0, -1.0) * (0.5 + 0.5 * ((0.31 + GOLDEN * place) % 1.0))
     row = np.zeros(base.size)
     row[columns] = signs * np.minimum(room.scale, reach)
     reply = yield Request(base=base, directions=row[None, :], offsets=np.array([[CLOSE, -CLOSE]]))

@@ -114,3 +114,37 @@ def test_the_last_interval_is_the_one_that_failed():
 
     assert outward.asked.all()
     assert outward.next_half(0.1) == 0.0
+
+
+@pytest.mark.parametrize("width", [1e-2, 1e-3, 1e-4, 1e-6])
+@pytest.mark.parametrize(
+    ("shape", "x", "slope", "bend"),
+    [
+        (lambda t, w: math.exp(-(((t - 1.1) / w) ** 2)) + t * t, 1.1, 2.2, lambda w: 2 - 2 / w**2),
+        (lambda t, w: 1 / ((t - 1.3) ** 2 + w * w), 1.3, 0.0, lambda w: -2 / w**4),
+        (lambda t, w: math.sqrt(t * t + w * w) + 0.5 * t, 0.0, 0.5, lambda w: 1 / w),
+    ],
+    ids=["well", "resonance", "rounded corner"],
+)
+def test_on_top_of_a_narrow_peak_both_derivatives_hold(shape, x, slope, bend, width):
+    first, second = (gradcheck.estimate(lambda t: shape(t, width), at=x, order=order) for order in (1, 2))
+
+    assert abs(float(first.value) - slope) <= float(first.bound) < np.inf
+    assert abs(float(second.value) - bend(width)) <= float(second.bound) < 1e-3 * abs(bend(width))
+
+
+@pytest.mark.parametrize("budget", range(2, 60, 3))
+@pytest.mark.parametrize(("frequency", "x"), [(9700.0, 1.0), (300.0, 2.5), (1.0, 0.7)])
+def test_a_bound_holds_wherever_the_budget_ends(frequency, x, budget):
+    answer = gradcheck.estimate(lambda t: math.sin(frequency * t), at=x, budget=budget)
+    error = abs(float(answer.value) - frequency * math.cos(frequency * x))
+
+    assert float(answer.bound) == np.inf or error <= float(answer.bound)
+
+
+@pytest.mark.parametrize("size", [1, 2, 3, 4, 10])
+def test_equal_variables_do_not_hide_what_all_have_in_common(size):
+    def model(x):
+        return float(np.sum(np.exp(x) + 0.5 * (x - 1) * np.exp(-(((x - 1) / 1e-5) ** 2))))
+
+    assert verdict(model, np.ones(size), np.exp(np.ones(size))) == Verdict.REFUTED

@@ -7,6 +7,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+import gradcheck
 from gradcheck import Verdict
 from gradcheck.claims.rule import ALLOWANCE, REFUTING_BOUNDS, ZERO_ALLOWANCE, Tolerance, digits_agreed, judge
 
@@ -216,3 +217,15 @@ def test_a_tighter_bound_never_takes_a_confirmation_back(claim, value, bound, ab
 @given(numbers, numbers, positive, positive)
 def test_the_sign_of_both_changes_nothing(claim, value, bound, abs_tol):
     assert verdict(claim, value, bound, abs_tol=abs_tol) == verdict(-claim, -value, bound, abs_tol=abs_tol)
+
+
+def test_rounding_does_not_confirm_half_of_a_slope_that_stands_out_of_it():
+    report = gradcheck.check(
+        lambda x: 1e15 + math.exp(x), 1.29385, gradient=1.8, on_undecided="pass", on_refuted="return"
+    )
+
+    assert report.verdict == Verdict.UNDECIDED
+
+
+def test_rounding_confirms_a_claim_that_no_value_could_show():
+    assert gradcheck.check(lambda x: 1e15 + 1e-3 * x, 1.0, gradient=1e-3).verdict == Verdict.CONFIRMED
