@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from gradcheck.claims.examination import Examined
+from gradcheck.claims.desk import Examined
 from gradcheck.claims.mistakes.case import Case
 from gradcheck.claims.mistakes.naming import likely_mistakes
 from gradcheck.claims.rule import ALLOWANCE

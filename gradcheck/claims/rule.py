@@ -3,8 +3,8 @@
 For a claim c, a witness w ± b and the tolerance T = abs_tol + rel_tol·max(|c|, |w|) + allowance·ε/τ:
 
 * confirmed: |c − w| + b <= T, and the witness sees no difference beyond what was asked for, that is
-  |c − w| <= abs_tol + rel_tol·max(|c|, |w|) + 3b: rounding may hide a difference, it does not excuse one that is seen; a
-  claim that is larger than rounding must also agree in its first digit;
+  |c − w| <= abs_tol + rel_tol·max(|c|, |w|) + 3b: rounding may hide a difference, it does not excuse one that is seen;
+  a claim that is larger than rounding must also agree in its first digit;
 * refuted: |c − w| > T + 3b (a second look has to agree; see `examination`);
 * else undecided.
 

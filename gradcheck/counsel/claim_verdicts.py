@@ -1,6 +1,6 @@
 """Findings from the verdicts on claims."""
 
-from gradcheck.claims.examination import SUSPECT
+from gradcheck.claims.desk import SUSPECT
 from gradcheck.problem.subject import Subject
 from gradcheck.records.finding import Finding, FindingCode, Location, Severity
 from gradcheck.records.report import CheckReport

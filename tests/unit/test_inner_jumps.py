@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 import gradcheck
-from gradcheck.claims.examination import INNER_JUMPS
+from gradcheck.claims.desk import INNER_JUMPS
 from gradcheck.records.verdict import Verdict
 
 

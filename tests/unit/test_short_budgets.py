@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 import gradcheck
-from gradcheck.claims.examination import SUSPECT
+from gradcheck.claims.desk import SUSPECT
 from gradcheck.records.verdict import Verdict
 
 AT = [0.5, 0.7, 0.3, 1.1, 0.9]
