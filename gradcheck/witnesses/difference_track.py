@@ -109,9 +109,9 @@ class Track:
         Noise level that the ladder saw; 0 before it.
     noisy : ndarray of bool, shape (m,)
         Where the ladder found noise.
-    values : ndarray, shape (26, m)
+    values : ndarray, shape (27, m)
         Values at the nodes filled so far.
-    slips : ndarray, shape (26,)
+    slips : ndarray, shape (27,)
         Displacement realised minus displacement meant.
     """
 
@@ -291,7 +291,7 @@ class Track:
 
     def _meets_narrow_feature(self, fits: Fit, i: int) -> bool:
         """Whether the pair close to the point parts from all other nodes: their common slope is not that there."""
-        narrow = (fits.apart[i] > NARROW_FEATURE) & self.satisfied & ~self.noisy & (self.side == 0)
+        narrow = (fits.apart[i] > NARROW_FEATURE) & self.satisfied & ~self.noisy
         if not narrow.any():
             return False
         for k, candidate in enumerate(self.candidates):

@@ -119,6 +119,8 @@ def read_ladder(
     grows = (np.abs(quotient[:, :-1]) > 1.3 * np.abs(quotient[:, 1:])) & (1.3 * moved[:, :-1] < moved[:, 1:])
     significant = np.abs(quotient) * h > 40 * rounding
     steep = (grows & significant[:, :-1])[:, :4].all(axis=1)
+    # Or by the same amount at every step, as that of x·log x; those of a smooth function settle.
+    steep |= _stays(np.abs(np.diff(quotient, axis=1)), (40 * rounding / h)[:, :-1], rungs=5, within=0.1)
     noisy = _does_not_shrink(second, floor)
     for mark, where in (
         (Nature.NOISE, noisy),

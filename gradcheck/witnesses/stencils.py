@@ -67,17 +67,20 @@ _SIDE_QUARTERS = _on_grid((1 - np.cos((np.arange(1, 13) - 0.5) * np.pi / 14)) / 
 
 _SIDE_BROAD = _on_grid((1 - np.cos(np.arange(1, 2 * _BROAD_PAIRS + 1) * np.pi / (2 * _BROAD_PAIRS))) / 2)
 
+#: A node close to the point here too. One alone is no pair: it is left out of the fit, which foretells its value.
 ONE_SIDED = {
     "probe": Stage(_tuple(_SIDE_SEVEN[:6]), 1.0, 0),
-    "low": Stage(_tuple(np.concatenate([_SIDE_SEVEN[:6] / LOW, _on_grid(np.array([1.0, 0.85, 0.7, 0.5]))])), LOW, 6),
+    "low": Stage(
+        _tuple(np.concatenate([_SIDE_SEVEN[:6] / LOW, _on_grid(np.array([1.0, 0.85, 0.7, 0.5])), _NEAR])), LOW, 6
+    ),
     "main": Stage(_tuple(np.concatenate([_SIDE_SEVEN, _SIDE_BETWEEN])), 1.0, 6),
     "outward": Stage(_tuple(np.concatenate([_SIDE_SEVEN, _SIDE_BETWEEN])), 1.0, 0),
-    "fine": Stage(_tuple(np.concatenate([_SIDE_SEVEN, _SIDE_BETWEEN, _SIDE_QUARTERS])), 1.0, 14),
+    "fine": Stage(_tuple(np.concatenate([_SIDE_SEVEN, _SIDE_BETWEEN, _SIDE_QUARTERS, _NEAR])), 1.0, 14),
     "broad": Stage(_tuple(_SIDE_BROAD), 1.0, 0),
 }
 
 #: Values of one direction that are kept at most.
-MOST_NODES = 26
+MOST_NODES = 27
 
 
 def stage_of(name: str, side: int) -> Stage:

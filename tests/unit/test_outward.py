@@ -148,3 +148,32 @@ def test_equal_variables_do_not_hide_what_all_have_in_common(size):
         return float(np.sum(np.exp(x) + 0.5 * (x - 1) * np.exp(-(((x - 1) / 1e-5) ** 2))))
 
     assert verdict(model, np.ones(size), np.exp(np.ones(size))) == Verdict.REFUTED
+
+
+@pytest.mark.parametrize("width", [1e-2, 1e-3, 1e-4, 1e-5])
+def test_a_boundary_layer_at_a_bound_is_seen(width):
+    def model(t):
+        return t * t + 10 * (t - 1) * math.exp(-(t - 1) / width)
+
+    answer = gradcheck.estimate(model, at=1.0, bounds=[(1.0, 3.0)])
+
+    assert abs(float(answer.value) - 12) <= float(answer.bound) < 1e-6
+    for claim, expected in ((12.0, Verdict.CONFIRMED), (2.0, Verdict.REFUTED)):
+        report = gradcheck.check(model, 1.0, gradient=claim, bounds=[(1.0, 3.0)], on_refuted="return")
+        assert report.verdict == expected
+
+
+@pytest.mark.parametrize("upper", [False, True])
+def test_a_smooth_model_at_a_bound_costs_no_more_than_one_value_for_that(upper):
+    bounds = [(-2.0, 0.7)] if upper else [(0.7, 3.0)]
+    answer = gradcheck.estimate(lambda t: math.sin(2 * t) + math.exp(t), at=0.7, bounds=bounds)
+
+    assert abs(float(answer.value) - (2 * math.cos(1.4) + math.exp(0.7))) <= float(answer.bound) < 1e-10
+    assert answer.evaluations <= 1 + 27 + 7
+
+
+@pytest.mark.parametrize("scale", [1e-3, 1.0, 1e4])
+def test_a_slope_that_grows_as_a_logarithm_has_no_bound(scale):
+    answer = gradcheck.estimate(lambda t: t * math.log(t / scale) if t > 0 else 0.0, at=0.0, bounds=[(0.0, scale)])
+
+    assert float(answer.bound) == math.inf
