@@ -108,7 +108,7 @@ def scan(
         floor=curve.floor,
         truncation=curve.truncation,
         roundoff=curve.roundoff,
-        noise=level if np.isfinite(level) else float(curve.reference.noise[0]),
+        noise=level if np.isfinite(level) else curve.noise,
         noise_kind=heard.kind[0][0],
         order=curve.truncation.slope if curve.truncation else float("nan"),
         value=float(curve.reference.value[0, 0]),

@@ -23,6 +23,8 @@ NEIGHBOURS = 1
 LEAST_ROOM = 1e-3
 #: A bound so many times wider than the smallest change from quotient to quotient says less than the quotients.
 BLURRED = 30.0
+#: Noise of so many times that of the reference, which met none, is a wave that the reference resolved.
+SEEN_THROUGH = 10.0
 #: Steps whose errors differ by no more than this factor are equally good.
 ALIKE = 1.05
 #: Where one of these holds, quotients of no step approximate a derivative.
@@ -44,12 +46,14 @@ class StepCurve:
     best_error : float
         Largest error of the best step and its neighbours.
     floor : float
-        What noise leaves at the best step; at a kink, half the difference of the slopes; NaN where there is neither.
+        What `noise` leaves at the best step; at a kink, half the difference of the slopes; NaN where there is neither.
     truncation, roundoff : Branch or None
     one_sided : bool
         Three values on one side instead of two around the point.
     reference : Testimony
         The answer that errors are measured against, one direction and one output.
+    noise : float
+        Standard deviation of one value.
     """
 
     steps: Array
@@ -62,6 +66,7 @@ class StepCurve:
     roundoff: Branch | None
     one_sided: bool
     reference: Testimony
+    noise: float
 
 
 def step_curve(
@@ -98,9 +103,15 @@ def step_curve(
     near, far = offsets[:k], offsets[k:]
     values = quotients(near, far, reply.values[0, :k, 0], reply.values[0, k:, 0], None if both else float(centre[0]))
     taken = np.abs(near - far) / 2 if both else np.abs(near)
-    for level in (float(reference.noise[0]), ROUNDING * float(np.spacing(abs(centre[0])))):
-        noise = noise if np.isfinite(noise) else level
-    return _read(taken, values, reference, noise, one_sided=not both)
+    return _read(taken, values, reference, _believed(noise, reference, float(centre[0])), one_sided=not both)
+
+
+def _believed(noise: float, reference: Testimony, centre: float) -> float:
+    """The noise that was measured, unless the reference saw through it: a faint fast wave is part of the function."""
+    own = float(reference.noise[0])
+    if np.isfinite(own) and not reference.doubtful[0, 0] and not noise <= SEEN_THROUGH * own:
+        return own
+    return next(level for level in (noise, own, ROUNDING * float(np.spacing(abs(centre)))) if np.isfinite(level))
 
 
 def quotients(near: Array, far: Array, first: Array, second: Array, centre: float | None) -> Array:
@@ -134,6 +145,7 @@ def _read(steps: Array, values: Array, reference: Testimony, noise: float, *, on
         truncation=truncation_branch(steps, errors, best, np.maximum(expected, resolved)) if best >= 0 else None,
         roundoff=roundoff if best >= 0 else None,
         one_sided=one_sided,
+        noise=noise,
         reference=reference,
     )
 
