@@ -4,7 +4,7 @@ For a claim c, a witness w ± b and the tolerance T = abs_tol + rel_tol·max(|c|
 
 * confirmed: |c − w| + b <= T, and the witness sees no difference beyond what was asked for, that is
   |c − w| <= abs_tol + rel_tol·max(|c|, |w|) + 3b: rounding may hide a difference, it does not excuse one that is seen;
-  a claim that is larger than rounding must also agree in its first digit;
+  where the witness tells the derivative from zero, they must also agree in the first digit;
 * refuted: |c − w| > T + 3b (a second look has to agree; see `examination`);
 * else undecided.
 
@@ -26,9 +26,8 @@ ALLOWANCE = 64.0
 ZERO_ALLOWANCE = 3000.0
 #: A claim is as good as zero if its variable, moved by its own size, changes the value by less than so many ε.
 ZERO_CLAIM = 1e5
-#: A claim of more than so many times the rounding floor over the typical size is more than zero; rounding confirms it
-#: only if it and the witness agree to this share of it.
-SHOWN, LEAST_AGREED = 4.0, 0.3
+#: Where the witness tells the derivative from zero, rounding confirms a claim only if both agree to this share of it.
+LEAST_AGREED = 0.3
 #: How many bounds beyond the tolerance a claim must be off to be refuted.
 REFUTING_BOUNDS = 3.0
 
@@ -111,7 +110,7 @@ def judge(
         gap = np.abs(claim - value)
         known = np.isfinite(bound) & np.isfinite(value)
         unseen = gap <= plain + REFUTING_BOUNDS * bound
-        agreed = (gap + bound <= LEAST_AGREED * np.abs(claim)) | (np.abs(claim) <= SHOWN * tolerance.rounding)
+        agreed = (gap + bound <= LEAST_AGREED * np.abs(claim)) | (np.abs(value) <= REFUTING_BOUNDS * bound)
         confirmed = known & np.isfinite(claim) & (gap + bound <= allowed) & unseen & (agreed | (gap + bound <= plain))
         refuted = known & ((gap > allowed + REFUTING_BOUNDS * bound) | ~np.isfinite(claim))
         if left is not None and right is not None:
