@@ -21,7 +21,7 @@ import numpy as np
 
 import gradcheck
 from benchmarks.corpus import CASES, Case
-from benchmarks.figures import Figure, aligned, side_by_side
+from benchmarks.figures import Figure, aligned, median, side_by_side
 from benchmarks.reference import AGREEMENT, derivative
 
 QUESTION = "How exact is a derivative from function values, and does its bound hold?"
@@ -191,17 +191,6 @@ def figures(samples: Sequence[Sample], goals: Goals = FIRST) -> list[Figure]:
         Figure(name="miscounted evaluations", value=sum(s.calls != s.reported for s in answered), goal=0.0),
         Figure(name="samples", value=len(samples), form=".0f"),
     ]
-
-
-def median(numbers: Any) -> float:
-    """The median of what is not NaN; NaN if nothing is."""
-    kept = [number for number in numbers if not math.isnan(number)]
-    # not numpy's, which warns where two infinities meet
-    kept.sort()
-    middle = len(kept) // 2
-    if not kept:
-        return math.nan
-    return float(kept[middle] if len(kept) % 2 else kept[middle - 1] / 2 + kept[middle] / 2)
 
 
 def summary(samples: Sequence[Sample], goals: Goals = FIRST) -> str:

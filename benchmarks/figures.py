@@ -3,6 +3,7 @@
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -67,3 +68,19 @@ def aligned(heading: Sequence[str], rows: Sequence[Sequence[str]]) -> str:
         return "  ".join([first, *(cell.rjust(width) for cell, width in zip(cells[1:], widths[1:], strict=True))])
 
     return "\n".join([line(heading), line(["-" * width for width in widths]), *map(line, rows)])
+
+
+def median(numbers: Any) -> float:
+    """The median of what is not NaN; NaN if nothing is."""
+    kept = [number for number in numbers if not math.isnan(number)]
+    # not numpy's, which warns where two infinities meet
+    kept.sort()
+    middle = len(kept) // 2
+    if not kept:
+        return math.nan
+    return float(kept[middle] if len(kept) % 2 else kept[middle - 1] / 2 + kept[middle] / 2)
+
+
+def percent(marks: Sequence[bool]) -> float:
+    """Share of true ones; NaN if there are none at all."""
+    return 100.0 * sum(map(bool, marks)) / len(marks) if len(marks) else math.nan

@@ -15,6 +15,8 @@ from typing import Any
 import numpy as np
 from numpy.random import Generator
 
+from tests.quality.line_corpus import simpson
+
 Scalar = Callable[[float], float]
 Background = Callable[[Any], Any]
 
@@ -240,17 +242,6 @@ def halving(rng: Generator) -> tuple[Place, Callable[[], Scalar], tuple[str, ...
         return 0.5 * (a + b) * (1.0 + 0.2 * math.sin(x / where.size))
 
     return where, lambda: solved, (INNER,)
-
-
-def simpson(f: Scalar, a: float, b: float, tolerance: float) -> float:
-    def part(a: float, b: float) -> float:
-        return (b - a) / 6.0 * (f(a) + 4.0 * f(0.5 * (a + b)) + f(b))
-
-    middle = 0.5 * (a + b)
-    whole, halves = part(a, b), part(a, middle) + part(middle, b)
-    if abs(whole - halves) < 15.0 * tolerance or b - a < 1e-4:
-        return halves
-    return simpson(f, a, middle, tolerance / 2.0) + simpson(f, middle, b, tolerance / 2.0)
 
 
 def quadrature(rng: Generator) -> tuple[Place, Callable[[], Scalar], tuple[str, ...]]:

@@ -16,8 +16,8 @@ import numpy as np
 
 import gradcheck
 from benchmarks import estimator
-from benchmarks.estimator import RESOLVED, WORST_SHOWN, Goals, measure, median, report
-from benchmarks.figures import Figure, aligned, side_by_side
+from benchmarks.estimator import RESOLVED, WORST_SHOWN, Goals, measure, report
+from benchmarks.figures import Figure, aligned, median, side_by_side
 from benchmarks.hessian_corpus import HESSIAN_CASES, HessianCase, exact_hessian
 
 QUESTION = "How exact is a second derivative from function values, and does its bound hold?"

@@ -21,7 +21,7 @@ import numpy as np
 import gradcheck
 from benchmarks.corpus import CASES
 from benchmarks.coupled_corpus import N, all_points
-from benchmarks.figures import Figure, aligned, side_by_side
+from benchmarks.figures import Figure, aligned, median, percent, side_by_side
 from benchmarks.reference import slope
 from gradcheck import Verdict
 
@@ -163,10 +163,6 @@ def cancelling_entries(count: int, seed: int) -> list[Entry]:
     return found
 
 
-def _percent(marks: Sequence[bool]) -> float:
-    return 100.0 * sum(marks) / len(marks) if len(marks) else math.nan
-
-
 def right_figures(entries: Sequence[Entry]) -> list[Figure]:
     """Of right claims."""
     ten = [entry.evaluations for entry in entries if entry.variables == N]
@@ -176,19 +172,19 @@ def right_figures(entries: Sequence[Entry]) -> list[Figure]:
         Figure(name="accused", value=sum(e.verdict == Verdict.REFUTED for e in entries), goal=0.0),
         Figure(
             name="confirmed, %",
-            value=_percent([e.verdict == Verdict.CONFIRMED for e in entries]),
+            value=percent([e.verdict == Verdict.CONFIRMED for e in entries]),
             goal=99.0,
             at_least=True,
             form=".2f",
         ),
         Figure(
             name="  by the share of rounding, %",
-            value=_percent([e.by_rounding and e.verdict == Verdict.CONFIRMED for e in entries]),
+            value=percent([e.by_rounding and e.verdict == Verdict.CONFIRMED for e in entries]),
             form=".2f",
         ),
-        Figure(name="evaluations a variable of ten, median", value=_median(ten), goal=6.0),
+        Figure(name="evaluations a variable of ten, median", value=median(ten), goal=6.0),
         Figure(name="  mean", value=float(np.mean(ten)) if ten else math.nan),
-        Figure(name="evaluations with one variable, median", value=_median(one)),
+        Figure(name="evaluations with one variable, median", value=median(one)),
         Figure(name="exceptions", value=sum(not e.verdict for e in entries), goal=0.0),
     ]
 
@@ -203,7 +199,7 @@ def wrong_figures(entries: Sequence[Entry]) -> list[Figure]:
         Figure(name="  visible", value=len(seen), form=".0f"),
         Figure(
             name="  of these refuted, %",
-            value=_percent([e.verdict == Verdict.REFUTED for e in seen]),
+            value=percent([e.verdict == Verdict.REFUTED for e in seen]),
             goal=99.9,
             at_least=True,
             form=".2f",
@@ -223,10 +219,6 @@ def wrong_figures(entries: Sequence[Entry]) -> list[Figure]:
         Figure(name="  of these accused", value=sum(e.verdict == Verdict.REFUTED for e in beside), goal=0.0),
         Figure(name="exceptions", value=sum(not e.verdict for e in entries), goal=0.0),
     ]
-
-
-def _median(numbers: Sequence[float]) -> float:
-    return float(np.median(numbers)) if numbers else math.nan
 
 
 def listing(entries: Sequence[Entry]) -> str:

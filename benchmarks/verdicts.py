@@ -18,7 +18,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 import gradcheck
-from benchmarks.figures import Figure, aligned, side_by_side
+from benchmarks.figures import Figure, aligned, percent, side_by_side
 from gradcheck import CheckReport, Verdict
 from tests.quality.mistake_corpus import MISTAKES, PLAIN, Claim, noisy_claims, planted, right_claims
 
@@ -89,11 +89,6 @@ def _asked(claim: Claim) -> Told:
         return Told(claim=claim, report=gradcheck.check(claim.function, claim.x, **options))
     except Exception as fault:  # whatever it is, it counts against the library and must not end the measurement
         return Told(claim=claim, failure=f"{type(fault).__name__}: {fault}")
-
-
-def percent(marks: Sequence[bool]) -> float:
-    """Share of true ones; NaN if there are none at all."""
-    return 100.0 * sum(map(bool, marks)) / len(marks) if len(marks) else math.nan
 
 
 def right_figures(told: Sequence[Told]) -> list[Figure]:

@@ -21,6 +21,7 @@ from gradcheck.records.finding import Finding
 from gradcheck.records.report import CheckReport, Diagnosis, Entries
 from gradcheck.records.verdict import DiagnosisCode, Verdict
 from gradcheck.report.check_text import check_text
+from gradcheck.witnesses.difference_reasons import SPENT
 from gradcheck.witnesses.steps import room_along
 from gradcheck.wording import listed
 
@@ -331,7 +332,7 @@ def _automatic_claim(session: Session, function: str, kind: str, source: str, ce
         if reply.status[0, 0] in (Status.OK, Status.NONFINITE):
             swept = reply.values[:, 0]
             return swept if arithmetic == "vjp" else swept.T
-    words = session.ledger.last_words.get((function, source), "the budget was spent")
+    words = session.ledger.last_words.get((function, source), SPENT)
     raise UsageError(f"{kind}={source!r}: {source} cannot differentiate {function}: {words}")
 
 

@@ -81,6 +81,6 @@ class Outward:
 
     def next_half(self, half: float) -> float:
         """Half-width of the next interval; 0 if there is none to ask."""
-        wider = FACTOR * half
-        going_on = bool(self.asked.any()) and self.rounds < ROUNDS_MOST and wider <= FACTOR * self.limit
-        return min(wider, self.limit) if going_on and half < self.limit else 0.0
+        if not self.asked.any() or self.rounds >= ROUNDS_MOST or half >= self.limit:
+            return 0.0
+        return min(FACTOR * half, self.limit)

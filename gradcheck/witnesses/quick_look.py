@@ -11,6 +11,7 @@ import numpy as np
 
 from gradcheck.evaluation.protocol import Directions, Inquiry, Reply, Request
 from gradcheck.records.arrays import Array, BoolArray, IntArray
+from gradcheck.witnesses.difference_reasons import SPENT
 from gradcheck.witnesses.finite_difference import SOURCE
 from gradcheck.witnesses.polynomial_fit import ROUNDING
 from gradcheck.witnesses.steps import Room, rounded_half_width
@@ -192,7 +193,7 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
     narrow = np.minimum(room.below, room.above)
     rows = np.flatnonzero(narrow >= LEAST_ROOM * wanted)
     if rows.size == 0:
-        return QuickLook(testimony=_testimony(len(directions), rows, centre), rows=rows, pairs=None)
+        return QuickLook(testimony=_unseen(len(directions), centre.size), rows=rows, pairs=None)
     h = rounded_half_width(np.minimum(wanted, narrow)[rows], room.grain[rows])
     pairs = yield from _measured(base, directions, rows, np.stack([h, h / RATIO], axis=1), centre)
     value, amplification = pairs.extrapolated()
@@ -222,7 +223,7 @@ def wider_look(
         Along the directions `wanted`, in their order. The extrapolated values of two and of three pairs differ by the
         error of the worse one. Rounding weighs less on the two wide pairs, truncation on all three: the better counts.
     """
-    silent = _testimony(wanted.size, np.arange(0), centre)
+    silent = _unseen(wanted.size, centre.size)
     if seen.pairs is None:
         return silent
     places = np.full(len(directions), -1)
@@ -278,20 +279,24 @@ def _number(sizes: Array) -> Array:
     return np.where(np.isnan(sizes), 0.0, np.minimum(sizes, _LARGEST))
 
 
+def _unseen(directions: int, outputs: int) -> Testimony:
+    """Testimony of a look for which there was no room."""
+    shape = directions, outputs
+    return Testimony(value=np.full(shape, np.nan), bound=np.full(shape, np.inf), source=SOURCE)
+
+
 def _testimony(
     directions: int,
     rows: IntArray,
     centre: Array,
-    pairs: Pairs | None = None,
-    seen: Array | None = None,
-    truncation: Array | None = None,
-    amplification: Array | None = None,
+    pairs: Pairs,
+    seen: Array,
+    truncation: Array,
+    amplification: Array,
 ) -> Testimony:
     """Testimony along all directions; the rows that were looked at have a bound if their values are finite."""
     d, m = directions, centre.size
     value, bound, step = np.full((d, m), np.nan), np.full((d, m), np.inf), np.full((d, m), np.nan)
-    if pairs is None or seen is None or truncation is None or amplification is None:
-        return Testimony(value=value, bound=bound, source=SOURCE)
     value[rows] = seen
     bend, spread = pairs.bend()
     largest = np.where(pairs.largest > 0, pairs.largest, float(np.abs(centre).max()) or 1.0)
@@ -309,7 +314,7 @@ def _testimony(
     good = pairs.fine[:, None] & np.isfinite(seen)
     bound[rows] = np.where(good, whole, np.inf)
     step[rows] = pairs.steps[:, :1]
-    reasons = {(int(rows[i]), j): "the budget was spent" for i in np.flatnonzero(pairs.refused) for j in range(m)}
+    reasons = {(int(rows[i]), j): SPENT for i in np.flatnonzero(pairs.refused) for j in range(m)}
     return Testimony(value=value, bound=bound, step=step, source=SOURCE, spent=pairs.spent, reasons=reasons)
 
 
