@@ -260,6 +260,10 @@ class Desk:
         reason[explained] = INNER_JUMPS
         self.reason[part] = reason
 
+    def run_out(self) -> None:
+        """The budget or the time is over: what is open stays open."""
+        self.reason[~self.confirmed & ~self.refuted & (self.reason == "")] = SPENT
+
     def flat_columns(self) -> IntArray:
         """Columns in which every witness value and every claim is exactly zero."""
         return np.flatnonzero(((self.value == 0) & (self.claim == 0)).all(axis=0))

@@ -174,6 +174,11 @@ class QuickLook:
     rows: IntArray
     pairs: Pairs | None
 
+    @property
+    def cut_short(self) -> bool:
+        """Whether the budget or the time ended before all values were there."""
+        return self.pairs is not None and bool(self.pairs.refused.any())
+
 
 def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -> Inquiry[QuickLook]:
     """Value ± bound along each direction from four evaluations.
