@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from gradcheck.checking import checked_claims
+from gradcheck.checks.choosing import checked_claims
 from gradcheck.claims.policy import Rules
 from gradcheck.counsel.claim_findings import kinks_at_point, mutation
 from gradcheck.counsel.claim_verdicts import verdict_findings

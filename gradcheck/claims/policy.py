@@ -18,31 +18,53 @@ DEFAULT_REL_TOL = 1e-8
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Rules:
-    """How a claim is judged: tolerances and witnesses, validated."""
+    """How a claim is judged: tolerances, witnesses, and along what; validated.
+
+    `directions` is ``"all"`` (entry by entry), a number of random directions, or None: by size.
+    """
 
     rel_tol: float | None = None
     abs_tol: float = 0.0
     witnesses: tuple[str, ...] = WITNESSES
+    directions: int | str | None = None
+    seed: int = 0
 
     @staticmethod
-    def of(rel_tol: float | None, abs_tol: float, witnesses: Any) -> "Rules":
+    def of(
+        rel_tol: float | None,
+        abs_tol: float,
+        witnesses: Any,
+        *,
+        directions: int | str | None = None,
+        seed: int = 0,
+    ) -> "Rules":
         """Rules from what the caller gave.
 
         Raises
         ------
         UsageError
-            If a tolerance is negative or NaN, or a witness is unknown.
+            If a tolerance is negative or NaN, a witness is unknown, or directions are no number.
         """
         for name, value in (("rel_tol", rel_tol), ("abs_tol", abs_tol)):
             if value is not None and not _is_tolerance(value):
                 raise UsageError(f"{name} is {value!r}; give a finite number >= 0")
+        _refuse_no_directions(directions)
         if witnesses is None:
-            return Rules(rel_tol=rel_tol, abs_tol=abs_tol)
+            return Rules(rel_tol=rel_tol, abs_tol=abs_tol, directions=directions, seed=seed)
         chosen = (witnesses,) if isinstance(witnesses, str) else tuple(witnesses)
         unknown = [name for name in chosen if name not in WITNESSES]
         if unknown or not chosen:
             raise UsageError(f"witnesses is {witnesses!r}; choose among {', '.join(map(repr, WITNESSES))}")
-        return Rules(rel_tol=rel_tol, abs_tol=abs_tol, witnesses=chosen)
+        return Rules(rel_tol=rel_tol, abs_tol=abs_tol, witnesses=chosen, directions=directions, seed=seed)
+
+
+def _refuse_no_directions(directions: Any) -> None:
+    if directions is None or directions == "all":
+        return
+    if isinstance(directions, bool | str) or not isinstance(directions, int | np.integer) or directions < 1:
+        raise UsageError(
+            f"directions is {directions!r}; give 'all' to check entry by entry, or a number of random directions >= 1"
+        )
 
 
 def _is_tolerance(value: Any) -> bool:

@@ -16,7 +16,7 @@ from gradcheck.problem.problem import Function, Output, Problem
 from gradcheck.records.arrays import Array, frozen
 from gradcheck.wording import count
 
-CLAIM_KINDS = ("gradient", "jacobian")
+CLAIM_KINDS = ("gradient", "jacobian", "hessian", "jvp", "vjp", "hvp", "value_and_gradient")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -156,7 +156,7 @@ def _target(name: str, run: str, function: Function | Output) -> Target:
         name=name,
         run=run,
         pick=partial(_pick, key=function.key) if isinstance(function, Output) else None,
-        claims=_given_claims({kind: getattr(function, kind) for kind in CLAIM_KINDS}),
+        claims=_given_claims({kind: getattr(function, kind, None) for kind in CLAIM_KINDS}),
         limits={
             side: getattr(function, side) for side in ("lower", "upper", "equal") if getattr(function, side) is not None
         },

@@ -27,6 +27,7 @@ ORDER = [
     "claims",
     "counsel",
     "report",
+    "checks",
     "demo",
     "verbs",
     "command_line",

@@ -1,0 +1,71 @@
+"""What the user claims, asked for through the gate."""
+
+import numpy as np
+
+from gradcheck.counsel.claim_findings import failing_claim
+from gradcheck.errors import UsageError
+from gradcheck.evaluation.pipeline import Session
+from gradcheck.evaluation.protocol import Request, Status
+from gradcheck.records.arrays import Array
+from gradcheck.records.finding import Finding
+from gradcheck.witnesses.difference_reasons import SPENT
+
+AD_SOURCES = ("jax", "autograd")
+
+
+def claimed_matrix(session: Session, function: str, kind: str, centre: Array) -> tuple[Array, Finding | None]:
+    """The claim as a matrix (m, n); NaN with a finding where the user's derivative raised.
+
+    Raises
+    ------
+    UsageError
+        If the claim names an AD source that is not available, or that cannot differentiate the model.
+    """
+    subject = session.subject
+    claim = subject.targets[function].claims[kind]
+    if isinstance(claim, str):
+        return _automatic_claim(session, function, kind, claim, centre), None
+    reply = session.gate(
+        [
+            Request(
+                base=subject.start,
+                directions=np.zeros(1, dtype=np.intp),
+                offsets=np.zeros((1, 1)),
+                source=f"claim:{kind}",
+                function=function,
+            )
+        ]
+    )[0]
+    if int(reply.status[0, 0]) == Status.CRASH:
+        words = session.ledger.last_words[function, f"claim:{kind}"]
+        return np.full((centre.size, subject.layout.size), np.nan), failing_claim(subject, function, kind, words)
+    return reply.values[0], None
+
+
+def _automatic_claim(session: Session, function: str, kind: str, source: str, centre: Array) -> Array:
+    """What AD says, in the mode that needs fewer sweeps, or the other one where that fails."""
+    subject = session.subject
+    if source not in AD_SOURCES:
+        raise UsageError(
+            f"{kind}={source!r} names no derivative source; use {' or '.join(map(repr, AD_SOURCES))}, a function, "
+            "or an array"
+        )
+    if kind == "gradient" and centre.size != 1:
+        raise UsageError(f"gradient={source!r}: the model returns {centre.size} outputs; use jacobian={source!r}")
+    n, m = subject.layout.size, centre.size
+    for arithmetic in ("vjp", "jvp") if m <= n else ("jvp", "vjp"):
+        size = m if arithmetic == "vjp" else n
+        request = Request(
+            base=subject.start,
+            directions=np.eye(size),
+            offsets=np.zeros((size, 1)),
+            arithmetic=arithmetic,
+            source=source,
+            function=function,
+        )
+        reply = session.gate([request])[0]
+        if reply.status[0, 0] in (Status.OK, Status.NONFINITE):
+            swept = reply.values[:, 0]
+            return swept if arithmetic == "vjp" else swept.T
+    words = session.ledger.last_words.get((function, source), SPENT)
+    raise UsageError(f"{kind}={source!r}: {source} cannot differentiate {function}: {words}")
