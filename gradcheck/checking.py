@@ -1,8 +1,9 @@
-"""The verb `check`: is a claimed derivative right?"""
+"""The verb `check`: are claimed derivatives right?"""
 
 from typing import Any
 
 from gradcheck.checks.choosing import checked_claims
+from gradcheck.checks.combined import combined
 from gradcheck.claims.entries import merged
 from gradcheck.claims.policy import Policy, Rules
 from gradcheck.errors import UsageError
@@ -40,7 +41,7 @@ def check(
     on_refuted: str = "raise",
     on_undecided: str = "warn",
 ) -> CheckReport:
-    """Compare a claimed derivative with independent witnesses: silent, or raises with the story.
+    """Compare claimed derivatives with independent witnesses: silent, or raises with the story.
 
     Parameters
     ----------
@@ -48,10 +49,25 @@ def check(
         The model: takes what `at` holds, returns a number or an array.
     at : float, list, array, nesting, `gradcheck.args(...)` or `gradcheck.points(...)`
         Where to check. A model decorated with `gradcheck.model` brings its own point and options.
-    gradient, jacobian : callable, array or str
-        The claim; exactly one. A callable with the model's own signature, its value at `at`, or the name of an AD
-        source (``"jax"``, ``"autograd"``). Shapes: gradient ``(n,)`` for a model that returns a number, Jacobian
-        ``(m, n)`` for one that returns ``(m,)``.
+    gradient, jacobian : callable, array or str, optional
+        A claim: a callable with the model's own signature, its value at `at`, or the name of an AD source (``"jax"``,
+        ``"autograd"``). Shapes: gradient ``(n,)`` for a model that returns a number, Jacobian ``(m, n)`` for one that
+        returns ``(m,)``.
+    hessian : callable, array or str, optional
+        Second derivatives: ``(n, n)`` for a model that returns a number, ``(m, n, n)`` for one that returns ``(m,)``; a
+        scipy.sparse matrix, or for a nested input a nesting of its structure twice over, as well. Held against
+        differences of the gradient where one is claimed in the same call and confirmed, which is cheaper and sharper;
+        else against second differences of the values. With more than 50 variables (16 without a gradient) it is looked
+        at along random directions; the report says what these would have seen.
+    jvp, vjp, hvp : callable or str, optional
+        Products: ``jvp(x, v)`` = J·v with the shape of the output, ``vjp(x, w)`` = Jᵀ·w and ``hvp(x, v)`` = H·v with
+        that of the input. They take the model's own positional arguments and then the vector: v has the structure of
+        the differentiated input (one part alone, or a tuple of parts where several arguments are differentiated), w the
+        shape of the output (a number for a model that returns one). Tried for unit vectors where these are few, and
+        for random ones of several lengths; linearity in the vector, zero for zero, ⟨J·v, w⟩ = ⟨v, Jᵀ·w⟩ where both are
+        claimed and the symmetry of H are held against the claim alone.
+    value_and_gradient : callable, optional
+        Returns the pair (value, gradient); the value is an entry of its own, ``value``.
     wrt : str or list of str, optional
         Which of several arguments to differentiate with respect to.
     output : callable, optional
@@ -66,6 +82,9 @@ def check(
         Among ``"differences"`` and ``"complex step"``; default both, as needed.
     rel_tol, abs_tol : float, optional
         Default 1e-8 (1e-3 for a model that returns single precision) and 0.
+    directions : int or "all", optional
+        How many random vectors or directions to look along instead of all unit vectors or entries, or that all of them
+        are looked at; by default that depends on their number.
     batched : bool
         Whether the model takes many points at once: x as ``(k, n)`` (``(k,)`` where `at` is one number), and returns
         ``(k,)`` or ``(k, m)``; `output` then picks from the whole batch. A claim still takes one point ``(n,)``. Every
@@ -75,7 +94,7 @@ def check(
     time_limit : float or str, optional
         Seconds, or text such as ``"10min"``; looked at between the calls of the model, a call is never broken off.
     seed : int
-        Reserved for checks along random directions; every step of this check is deterministic.
+        Of the random vectors and directions; the same seed gives the same ones, no verdict should depend on it.
     on_refuted : "raise" or "return"
     on_undecided : "warn", "raise" or "pass"
         Where every entry is undecided it raises unless ``"pass"``.
@@ -83,11 +102,12 @@ def check(
     Returns
     -------
     CheckReport
+        Of several claims, that on the decisive one, with the overall verdict and a report on each in ``parts``.
 
     Raises
     ------
     DerivativeMismatch
-        If the claim is refuted (or undecided where that was asked to raise). Its text is the report.
+        If a claim is refuted (or undecided where that was asked to raise). Its text is the report.
     UsageError, DerivativeShapeError
         If the call cannot be carried out as it stands.
     ModelFailure
@@ -106,6 +126,14 @@ def check(
     >>> report = gradcheck.check(area, at=[2.0, 3.0], gradient=lambda x: [x[1], x[0]])
     >>> str(report.verdict)
     'confirmed'
+
+    Several claims in one call; the Hessian is held against the gradient, once that is confirmed:
+
+    >>> report = gradcheck.check(
+    ...     area, at=[2.0, 3.0], gradient=lambda x: [x[1], x[0]], hessian=lambda x: [[0, 1], [1, 0]]
+    ... )
+    >>> [(part.kind, str(part.verdict)) for part in report.parts]
+    [('gradient', 'confirmed'), ('hessian', 'confirmed')]
     """
     policy = Policy.of(on_refuted, on_undecided)
     whole_number(seed, "seed")
@@ -126,11 +154,10 @@ def check(
         options |= {"batched": batched} if batched else {}
         rest = {"budget": budget, "time_limit": time_limit, "seed": seed, "on_refuted": on_refuted}
         return check(function, **(rest | {"on_undecided": on_undecided} | options))
-    if sum(claim is not None for claim in claims.values()) != 1:
-        given = [kind for kind, claim in claims.items() if claim is not None]
+    if all(claim is None for claim in claims.values()):
         raise UsageError(
-            "check needs exactly one claim, gradient=... or jacobian=...; "
-            + (f"{' and '.join(given)} were given" if given else "none was given, so there is nothing to check")
+            "check needs at least one claim, gradient=... or jacobian=... (or hessian, jvp, vjp, hvp, "
+            "value_and_gradient); none was given, so there is nothing to check"
         )
     rules = Rules.of(rel_tol, abs_tol, witnesses, directions=directions, seed=seed)
     subjects = subjects_of_function(
@@ -144,12 +171,12 @@ def check(
         typical=typical,
         batched=batched,
     )
-    reports = []
+    at_points = []
     for subject in subjects:
         session = open_session(subject, budget=budget, time_limit=time_limit)
-        reports.extend(checked_claims(session, rules))
-    report = reports[0] if len(reports) == 1 else merged(reports)
-    return policy.carry_out(report)
+        at_points.append(checked_claims(session, rules))
+    by_claim = [merged(reports) if len(reports) > 1 else reports[0] for reports in zip(*at_points, strict=True)]
+    return policy.carry_out(combined(by_claim))
 
 
 def _described_options(function: Any) -> dict[str, Any]:

@@ -1,10 +1,24 @@
 """Which way a claim is checked: by its kind, and by its size."""
 
+from dataclasses import replace
+
+from gradcheck.checks.combined import with_broken_pair
 from gradcheck.checks.entrywise import checked_entries
+from gradcheck.checks.identities import broken_pair
+from gradcheck.checks.products import checked_product
+from gradcheck.checks.products_claimed import Claimed, measure_of
+from gradcheck.checks.second_order import checked_second_order
+from gradcheck.checks.with_value import with_value
 from gradcheck.claims.policy import Rules
 from gradcheck.evaluation.pipeline import Session
 from gradcheck.records.arrays import Array
 from gradcheck.records.report import CheckReport
+from gradcheck.records.verdict import Verdict
+
+#: First derivatives, in the order in which a confirmed one serves second derivatives as a witness.
+FIRST = ("gradient", "value_and_gradient", "jacobian")
+PRODUCTS = ("jvp", "vjp")
+SECOND = ("hessian", "hvp")
 
 
 def checked_claims(session: Session, rules: Rules) -> list[CheckReport]:
@@ -18,14 +32,53 @@ def checked_claims(session: Session, rules: Rules) -> list[CheckReport]:
     before = session.ledger.evaluations
     centres = session.start_values()
     reports = []
-    for name, target in session.subject.targets.items():
-        for kind in target.claims:
-            # The values at the point itself are counted with the first claim that needs them.
-            reports.append(checked_claim(session, name, kind, centres[name], rules, before))
-            before = session.ledger.evaluations
+    for name in session.subject.targets:
+        found = _of_function(session, name, centres[name], rules, before)
+        reports += found
+        # The values at the point itself are counted with the first claim that needs them.
+        before = session.ledger.evaluations if found else before
     return reports
 
 
+def _of_function(session: Session, function: str, centre: Array, rules: Rules, before: int) -> list[CheckReport]:
+    """Reports on all claims of one function, in the order in which they were claimed.
+
+    First derivatives are looked at first: a confirmed one is the witness of second ones.
+    """
+    claims = session.subject.targets[function].claims
+    reports: dict[str, CheckReport] = {}
+    products: dict[str, Claimed] = {}
+    for kind in (kind for kind in (*FIRST, *PRODUCTS, *SECOND) if kind in claims):
+        if kind in SECOND:
+            confirmed = next((k for k in FIRST if k in reports and reports[k].verdict == Verdict.CONFIRMED), None)
+            reports[kind], products[kind] = checked_second_order(
+                session, function, kind, centre, rules, before, confirmed
+            )
+        elif kind in PRODUCTS:
+            reports[kind], products[kind] = checked_product(session, function, kind, centre, rules, before)
+        else:
+            reports[kind] = checked_claim(session, function, kind, centre, rules, before)
+        before = session.ledger.evaluations
+    _hold_pairs(session, function, rules, reports, products)
+    return [reports[kind] for kind in claims]
+
+
 def checked_claim(session: Session, function: str, kind: str, centre: Array, rules: Rules, before: int) -> CheckReport:
-    """The report on one claim of one function; `before` evaluations were spent on others."""
-    return checked_entries(session, function, kind, centre, rules, before)
+    """The report on one claimed first derivative of a function; `before` evaluations were spent on others."""
+    report = checked_entries(session, function, kind, centre, rules, before)
+    return with_value(session, function, centre, rules, report) if kind == "value_and_gradient" else report
+
+
+def _hold_pairs(
+    session: Session, function: str, rules: Rules, reports: dict[str, CheckReport], products: dict[str, Claimed]
+) -> None:
+    """⟨J·v, w⟩ = ⟨v, Jᵀ·w⟩ where both products are claimed: needs nothing but what they gave."""
+    if not {"jvp", "vjp"} <= products.keys() or any(products[kind].finding for kind in PRODUCTS):
+        return
+    measures = [measure_of(session, function, kind, rules) for kind in PRODUCTS]
+    found = broken_pair(products["jvp"], products["vjp"], max(measures, key=lambda each: each.unit_roundoff))
+    if found is not None:
+        reports["vjp"] = with_broken_pair(reports["vjp"], found)
+        return
+    told = "⟨jvp(v), w⟩ = ⟨v, vjp(w)⟩ holds for random v and w"
+    reports["vjp"] = replace(reports["vjp"], notices=(*reports["vjp"].notices, told), text="")

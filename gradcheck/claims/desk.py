@@ -82,12 +82,20 @@ class Desk:
     """Collects testimonies about the entries of one claim and applies the rule after each."""
 
     def __init__(
-        self, claim: Array, centre: Array, typical: Array, rel_tol: float, abs_tol: float, unit_roundoff: float
+        self,
+        claim: Array,
+        centre: Array,
+        typical: Array,
+        rel_tol: float,
+        abs_tol: float,
+        unit_roundoff: float,
+        magnitude: Array | None = None,
     ) -> None:
         self.claim = claim
         self.typical = typical
         self.rel_tol, self.abs_tol = rel_tol, abs_tol
-        largest = np.abs(centre)
+        # Outputs that are sums round as their terms do, however much of them cancels.
+        largest = np.abs(centre) if magnitude is None else np.fmax(np.abs(centre), magnitude)
         # A value of zero shows no size: that of the other outputs, or 1 (as the difference witness assumes).
         largest = np.where(largest > 0, largest, largest.max() if largest.max() > 0 else 1.0)
         self.floor = unit_roundoff * largest

@@ -20,7 +20,8 @@ def entries_of(subject: Subject, function: str, kind: str, examined: Examined, l
     m, d = examined.claim.shape
     rows = np.repeat(np.arange(m), d)
     columns = np.tile(looked_at, m)
-    index = columns if kind == "gradient" else np.stack([rows, columns], axis=1)
+    flat_ = kind == "gradient" or (kind == "value_and_gradient" and m == 1)
+    index = columns if flat_ else np.stack([rows, columns], axis=1)
 
     def flat(array: Any) -> Any:
         return np.ravel(array)

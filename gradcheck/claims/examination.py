@@ -43,6 +43,7 @@ def examine(
     abs_tol: float,
     unit_roundoff: float = np.finfo(float).eps / 2,
     witnesses: Sequence[str] = WITNESSES,
+    magnitude: Array | None = None,
 ) -> Inquiry[Examined]:
     """Examine columns of a claimed Jacobian (a gradient is one row).
 
@@ -64,12 +65,14 @@ def examine(
         u of the arithmetic that the model returns its values in.
     witnesses : sequence of str
         Among ``"differences"``, ``"complex step"``; at least one.
+    magnitude : ndarray, shape (m,), optional
+        Size of the terms that the outputs are sums of; their rounding is that of the terms.
 
     Returns
     -------
     Examined
     """
-    desk = Desk(claim, centre, typical, rel_tol, abs_tol, unit_roundoff)
+    desk = Desk(claim, centre, typical, rel_tol, abs_tol, unit_roundoff, magnitude)
     everything = np.arange(columns.size)
     if DIFFERENCES in witnesses:
         seen = yield from quick_look(base, columns, room, centre)

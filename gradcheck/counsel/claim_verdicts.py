@@ -8,6 +8,9 @@ from gradcheck.records.verdict import Verdict
 from gradcheck.witnesses.difference_reasons import SPENT
 from gradcheck.wording import count, listed
 
+#: Kinds of claims whose columns are variables.
+BY_VARIABLE = ("gradient", "jacobian", "value_and_gradient")
+
 
 def verdict_findings(subject: Subject, report: CheckReport) -> list[Finding]:
     """A refuted claim is a blocker; an undecided one a hazard, or a remark where only single entries stay open."""
@@ -63,6 +66,9 @@ def _mend(reasons: list[str]) -> tuple[str, Severity]:
 
 
 def _only_variable(subject: Subject, report: CheckReport, places: list[int]) -> str | None:
+    if report.kind not in BY_VARIABLE:
+        return None
     index = report.entries.index
     columns = {int(index[k] if index.ndim == 1 else index[k, 1]) for k in places}
-    return subject.layout.name(columns.pop()) if len(columns) == 1 else None
+    column = columns.pop() if len(columns) == 1 else -1
+    return subject.layout.name(column) if 0 <= column < subject.layout.size else None

@@ -70,7 +70,7 @@ def budgeted(engine: Engine, ledger: Ledger, limit: int | None, seconds: float |
     deadline = None if seconds is None else time.monotonic() + seconds
 
     def admit(calls: Sequence[Call]) -> list[Outcome]:
-        spent = ledger.evaluations + ledger.calls["jax"] + ledger.calls["autograd"]
+        spent = ledger.evaluations + ledger.calls["jax"] + ledger.calls["autograd"] + ledger.calls["slope"]
         admitted: list[Call] = []
         for call in calls:
             # Claims are the user's own derivative code: looking at them is what the budget is for.

@@ -1,5 +1,6 @@
 """The innermost layer: the only code that calls the user's functions."""
 
+import math
 import time
 import warnings
 from collections.abc import Callable, Sequence
@@ -19,8 +20,15 @@ from gradcheck.evaluation.ledger import Ledger
 from gradcheck.evaluation.outputs import NUMBERS, Output
 from gradcheck.evaluation.protocol import Status
 from gradcheck.problem.derivative_shape import claim_matrix
+from gradcheck.problem.product_shape import cotangent, hessian_products, product_vector, tangent, value_and_matrix
 from gradcheck.problem.subject import Subject, Target
 from gradcheck.records.arrays import Array
+
+
+#: Claims that are one matrix at the point; all other claims are asked for one product for each vector.
+MATRIX_CLAIMS = frozenset({"claim:gradient", "claim:jacobian", "claim:value_and_gradient"})
+#: What the source of a claim begins with that is asked as a function of its own, at any point.
+SLOPE = "slope:"
 
 
 class Evaluator:
@@ -47,7 +55,12 @@ class Evaluator:
     def __call__(self, calls: Sequence[Call]) -> list[Outcome]:
         with warnings.catch_warnings(), np.errstate(all="ignore"):
             warnings.simplefilter("ignore")
-            return [self._values(call) if call.source == "model" else self._derivative(call) for call in calls]
+            return [self._outcome(call) for call in calls]
+
+    def _outcome(self, call: Call) -> Outcome:
+        if call.source == "model":
+            return self._values(call)
+        return self._slopes(call) if call.source.startswith(SLOPE) else self._derivative(call)
 
     # --- values ------------------------------------------------------------------------------------------------------
 
@@ -219,25 +232,89 @@ class Evaluator:
 
     def _claim(self, call: Call, target: Target) -> Array:
         kind = call.source.partition(":")[2]
+        if call.source in MATRIX_CLAIMS:
+            return self._claimed_matrix(kind, target, call.moves.base)
+        assert call.rows is not None
+        layout, shape = self.subject.layout, self.shapes[target.name]
+        if kind == "hessian":
+            raw = self._asked(kind, target, call.moves.base)
+            return hessian_products(raw, layout, shape, call.rows)
+        width = {"jvp": math.prod(shape), "vjp": layout.size, "hvp": layout.size}[kind]
+        products = np.full((len(call.rows), width), np.nan)
+        for i, row in enumerate(call.rows):
+            vector = cotangent(shape, row) if kind == "vjp" else tangent(layout, row)
+            try:
+                products[i] = product_vector(kind, self._asked(kind, target, call.moves.base, vector), layout, shape)
+            except UsageError:
+                raise
+            except (Exception, SystemExit) as error:
+                self.ledger.failed_vectors.setdefault((target.name, kind), {})[i] = last_words(error)
+        return products
+
+    def _claimed_matrix(self, kind: str, target: Target, point: Array) -> Array:
+        """A claimed gradient or Jacobian at a point, (m, n)."""
+        layout, shape = self.subject.layout, self.shapes[target.name]
+        raw = self._asked(kind, target, point)
+        if kind != "value_and_gradient":
+            return claim_matrix(kind, raw, layout, shape)
+        value, matrix = value_and_matrix(raw, layout, shape)
+        self.ledger.claimed_values.setdefault(target.name, value)
+        return matrix
+
+    def _asked(self, kind: str, target: Target, point: Array, *vector: Any) -> Any:
+        """What a claim returns at a point, and for a vector; or is, where it was given as an array."""
         claim = target.claims[kind]
         if callable(claim):
             with self._scope(target.run):
-                claim, mutated = real.call(claim, self.subject.layout, call.moves.base)
+                claim, mutated = real.call(claim, self.subject.layout, point, *vector)
             if mutated:
                 self.ledger.mutated.add(f"{kind} of {target.name}")
         self.ledger.claim_kinds[target.name, kind] = str(getattr(claim, "dtype", "float64"))
-        return claim_matrix(kind, claim, self.subject.layout, self.shapes[target.name])
+        return claim
+
+    def _slopes(self, call: Call) -> Outcome:
+        """A claimed gradient or Jacobian as a function of its own: its flat values (k, m·n) at the points of a call."""
+        kind, target = call.source.removeprefix(SLOPE), self.subject.targets[call.function]
+        outputs = math.prod(self.shapes[target.name])
+        values = np.full((len(call), outputs * self.subject.layout.size), np.nan)
+        status = np.full(len(call), Status.REFUSED, dtype=np.int8)
+        began = time.perf_counter()
+        spent = 0
+        for i in range(len(call)):
+            if _late(call):
+                break
+            spent += 1
+            try:
+                values[i] = self._slope(kind, target, call.moves.point(i)).reshape(-1)
+                status[i] = Status.OK if np.isfinite(values[i]).all() else Status.NONFINITE
+            except (Exception, SystemExit) as error:  # here a wrong shape is one bad point among good ones, too
+                self.ledger.last_words[target.name, call.source] = last_words(error)
+                status[i] = Status.CRASH
+        self.ledger.calls[call.kind] += spent
+        self.ledger.seconds[call.kind] += time.perf_counter() - began
+        return Outcome(values={target.name: values}, status={target.name: status}, spent=spent)
+
+    def _slope(self, kind: str, target: Target, point: Array) -> Array:
+        claim = target.claims[kind]
+        if not isinstance(claim, str):
+            return self._claimed_matrix(kind, target, point)
+        outputs = np.eye(math.prod(self.shapes[target.name]))
+        return np.asarray(self._swept(claim, "vjp", target, point, outputs), dtype=float)
 
     def _automatic(self, call: Call, target: Target) -> NDArray[Any]:
+        assert call.rows is not None
+        return self._swept(call.source, call.arithmetic, target, call.moves.base, call.rows)
+
+    def _swept(self, source: str, sweep: str, target: Target, point: Array, rows: NDArray[Any]) -> NDArray[Any]:
+        """What AD gives for each row: ``"jvp"``, ``"vjp"`` or ``"hvp"``."""
         # Imported when used: jax and autograd are extras, and slow to load.
-        if call.source == "jax":
+        if source == "jax":
             from gradcheck.evaluation.arithmetic import with_jax as automatic
         else:
             from gradcheck.evaluation.arithmetic import with_autograd as automatic  # type: ignore[no-redef]
-        assert call.rows is not None
-        sweep = automatic.jvp if call.arithmetic == "jvp" else automatic.vjp
+        by_name = {"jvp": automatic.jvp, "vjp": automatic.vjp, "hvp": automatic.hvp}
         function = _of_one_point(self.subject.runs[target.run], target.pick, self.subject.batched)
-        return np.asarray(sweep(function, self.subject.layout, call.moves.base, call.rows), dtype=float)
+        return np.asarray(by_name[sweep](function, self.subject.layout, point, rows), dtype=float)
 
 
 class _Tally:

@@ -28,7 +28,8 @@ class Ledger:
     Attributes
     ----------
     calls, seconds : counters
-        Number of calls and time spent, by ``"model"``, ``"complex"``, ``"jax"``, ``"autograd"``, ``"claim"``.
+        Number of calls and time spent, by ``"model"``, ``"complex"``, ``"jax"``, ``"autograd"``, ``"claim"``; and
+        ``"slope"``, a claim asked as a function of its own.
     failures : list of Failure
     failed : int
         How many evaluations failed, kept or not.
@@ -36,6 +37,10 @@ class Ledger:
         Functions that wrote into their input.
     last_words : dict of (function, source) -> str
         What the last failing call of a source said: the message of a claim or an AD library.
+    failed_vectors : dict of (function, kind of claim) -> dict of int -> str
+        The vectors, by number, for which a claimed product raised, and its own last words.
+    claimed_values : dict of function -> ndarray, shape (m,)
+        The value at the point itself, as a claim of value and gradient told it first.
     claim_kinds : dict of (function, kind of claim) -> str
         The dtype of what a claim returned.
     output_kinds : dict of function -> str
@@ -49,6 +54,8 @@ class Ledger:
     mutated: set[str] = field(default_factory=set)
     output_kinds: dict[str, str] = field(default_factory=dict)
     claim_kinds: dict[tuple[str, str], str] = field(default_factory=dict)
+    failed_vectors: dict[tuple[str, str], dict[int, str]] = field(default_factory=dict)
+    claimed_values: dict[str, Array] = field(default_factory=dict)
     notices: list[str] = field(default_factory=list)
     refused: int = 0
     last_words: dict[tuple[str, str], str] = field(default_factory=dict)

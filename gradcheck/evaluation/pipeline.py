@@ -12,7 +12,7 @@ from gradcheck.errors import ModelFailure, UsageError
 from gradcheck.evaluation.budget import budgeted, evaluations_of, seconds_of
 from gradcheck.evaluation.cache import cached
 from gradcheck.evaluation.calls import Call, Engine, Outcome
-from gradcheck.evaluation.evaluator import Evaluator
+from gradcheck.evaluation.evaluator import MATRIX_CLAIMS, SLOPE, Evaluator
 from gradcheck.evaluation.ledger import Ledger
 from gradcheck.evaluation.moves import BATCH_BYTES, Moves
 from gradcheck.evaluation.protocol import Gate, Reply, Request, Status
@@ -121,7 +121,8 @@ def gate_over(engine: Engine, subject: Subject, evaluator: Evaluator) -> Gate:
     """The gate: requests in, calls of many points each (of one per sweep for AD), replies out."""
 
     def width(request: Request) -> int:
-        return math.prod(evaluator.shapes.get(request.function, (1,)))
+        outputs = math.prod(evaluator.shapes.get(request.function, (1,)))
+        return outputs * subject.layout.size if request.source.startswith(SLOPE) else outputs
 
     def gate(requests: Sequence[Request]) -> list[Reply]:
         calls = (
@@ -160,12 +161,21 @@ def _batches(calls: Iterator[tuple[int, Call]]) -> Iterator[list[tuple[int, Call
 def _calls_of(request: Request, subject: Subject, most: int) -> Iterator[Call]:
     run = subject.targets[request.function].run
     moves = Moves.of(request)
-    if request.source == "model":
+    if _at_every_point(request):
+        function = "" if request.source == "model" else request.function
         for first in range(0, len(moves), most):
             part = moves if len(moves) <= most else moves[first : first + most]
-            yield Call(run=run, moves=part, arithmetic=request.arithmetic, level=request.level, fresh=request.fresh)
+            yield Call(
+                run=run,
+                function=function,
+                moves=part,
+                arithmetic=request.arithmetic,
+                source=request.source,
+                level=request.level,
+                fresh=request.fresh,
+            )
         return
-    claim = request.source.startswith("claim:")
+    matrix = request.source in MATRIX_CLAIMS
     yield Call(
         run=run,
         function=request.function,
@@ -173,8 +183,13 @@ def _calls_of(request: Request, subject: Subject, most: int) -> Iterator[Call]:
         arithmetic=request.arithmetic,
         source=request.source,
         fresh=request.fresh,
-        rows=None if claim else _rows_of(request, subject.layout.size),
+        rows=None if matrix else _rows_of(request, subject.layout.size),
     )
+
+
+def _at_every_point(request: Request) -> bool:
+    """Whether values at all points are meant, of the model or of a claim, and not derivatives at the base."""
+    return request.source == "model" or request.source.startswith(SLOPE)
 
 
 def _rows_of(request: Request, size: int) -> NDArray[Any]:
@@ -187,7 +202,7 @@ def _rows_of(request: Request, size: int) -> NDArray[Any]:
 
 def _reply(request: Request, outcomes: Sequence[tuple[int, Outcome]], width: int, subject: Subject) -> Reply:
     name = request.function
-    if request.source != "model":
+    if not _at_every_point(request):
         return _derivative_reply(request, outcomes[0][1], width, subject.layout.size)
     d, k = request.offsets.shape
     spent = sum(outcome.spent for _, outcome in outcomes)
@@ -212,8 +227,9 @@ def _derivative_reply(request: Request, outcome: Outcome, width: int, size: int)
     status = int(outcome.status[name][0]) if name in outcome.status else int(Status.REFUSED)
     if name in outcome.values:
         values = outcome.values[name][0].copy()
-        # A claim is one matrix (m, n), not one row per direction.
-        values = values[None] if request.source.startswith("claim:") else values[:, None, :]
+        # A claimed matrix is (m, n), not one row per direction.
+        values = values[None] if request.source in MATRIX_CLAIMS else values[:, None, :]
     else:
-        values = np.full((len(request.directions), 1, size if request.arithmetic == "vjp" else width), np.nan)
+        entries = {"jvp": width, "vjp": size}.get(request.arithmetic, width * size)
+        values = np.full((len(request.directions), 1, entries), np.nan)
     return Reply(values=values, status=np.full(values.shape[:2], status, dtype=np.int8), spent=outcome.spent)

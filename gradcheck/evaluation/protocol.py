@@ -41,10 +41,12 @@ class Request:
     offsets : ndarray, shape (d, k)
         Displacements along each direction, in units of the direction; complex for complex arithmetic.
     arithmetic : str
-        ``"real"``, ``"complex"``, ``"jvp"`` (value: J·direction at each offset 0) or ``"vjp"``
-        (directions are ``(d, m)`` cotangents; value: Jᵀ·cotangent).
+        ``"real"``, ``"complex"``, ``"jvp"`` (value: J·direction at each offset 0), ``"vjp"``
+        (directions are ``(d, m)`` cotangents; value: Jᵀ·cotangent) or ``"hvp"`` (value: H·direction).
     source : str
-        ``"model"``, ``"jax"``, ``"autograd"``, or ``"claim:gradient"``, ``"claim:jacobian"``.
+        ``"model"``, ``"jax"``, ``"autograd"``; a claim at the point itself, such as ``"claim:gradient"`` (a matrix) or
+        ``"claim:jvp"`` (one product for each direction); or a claim as a function of its own, such as
+        ``"slope:gradient"`` (its flat values at every point asked for).
     function : str
         Which function of the problem; algorithms leave it empty and `addressed` fills it in.
     level : int

@@ -99,7 +99,13 @@ class Function:
         Takes the vector x, shape (n,), returns a number or a vector of shape (m,).
     gradient, jacobian : callable, array or str, optional
         The claim: a callable of x, its value at the start point, or the name of an AD source
-        (``"jax"``, ``"autograd"``).
+        (``"jax"``, ``"autograd"``). Shapes ``(n,)`` and ``(m, n)``.
+    hessian : callable, array or str, optional
+        Second derivatives ``(n, n)`` of a function that returns a number, ``(m, n, n)`` of one that returns ``(m,)``.
+    jvp, vjp, hvp : callable or str, optional
+        Products ``jvp(x, v)`` = J·v of shape ``(m,)``, ``vjp(x, w)`` = Jᵀ·w and ``hvp(x, v)`` = H·v of shape ``(n,)``.
+    value_and_gradient : callable or str, optional
+        Returns the pair (value, gradient).
     lower, upper, equal : float or array, optional
         Limits, where the function is a constraint.
     """
@@ -107,6 +113,11 @@ class Function:
     function: Callable[..., Any]
     gradient: Any = field(default=None, kw_only=True)
     jacobian: Any = field(default=None, kw_only=True)
+    hessian: Any = field(default=None, kw_only=True)
+    jvp: Any = field(default=None, kw_only=True)
+    vjp: Any = field(default=None, kw_only=True)
+    hvp: Any = field(default=None, kw_only=True)
+    value_and_gradient: Any = field(default=None, kw_only=True)
     lower: Any = field(default=None, kw_only=True)
     upper: Any = field(default=None, kw_only=True)
     equal: Any = field(default=None, kw_only=True)
@@ -128,13 +139,18 @@ class Output:
     ----------
     key : str or int
         What picks the output from what the run returns: ``run(x)[key]``.
-    gradient, jacobian, lower, upper, equal
-        As in `Function`.
+    gradient, jacobian, hessian, jvp, vjp, hvp, value_and_gradient, lower, upper, equal
+        As in `Function`. A claim takes x, and not what the run returns.
     """
 
     key: Any
     gradient: Any = field(default=None, kw_only=True)
     jacobian: Any = field(default=None, kw_only=True)
+    hessian: Any = field(default=None, kw_only=True)
+    jvp: Any = field(default=None, kw_only=True)
+    vjp: Any = field(default=None, kw_only=True)
+    hvp: Any = field(default=None, kw_only=True)
+    value_and_gradient: Any = field(default=None, kw_only=True)
     lower: Any = field(default=None, kw_only=True)
     upper: Any = field(default=None, kw_only=True)
     equal: Any = field(default=None, kw_only=True)

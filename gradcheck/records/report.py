@@ -27,7 +27,9 @@ class Entries:
     Attributes
     ----------
     index : ndarray of int
-        ``(k,)`` flat indices for a vector, ``(k, 2)`` (row, column) for a matrix.
+        ``(k,)`` flat indices for a vector, ``(k, 2)`` (row, column) for a matrix. Products of a derivative with vectors
+        are (output, vector) for ``jvp``, (vector, variable) for ``vjp`` and (variable, vector) for ``hvp``; unit
+        vectors have the number of their one, other vectors follow. The value of ``value_and_gradient`` has -1.
     name : tuple of str
         Readable name of each entry.
     claim, witness, bound : ndarray, shape (k,)
@@ -92,7 +94,7 @@ class CheckReport(RenderedWhenRead):
     ----------
     verdict : Verdict
     kind : str
-        ``"gradient"`` or ``"jacobian"``.
+        ``"gradient"``, ``"jacobian"``, ``"hessian"``, ``"jvp"``, ``"vjp"``, ``"hvp"`` or ``"value_and_gradient"``.
     function : str
         Name of the model or output whose derivative is claimed.
     point : ndarray, shape (n,)
@@ -105,6 +107,10 @@ class CheckReport(RenderedWhenRead):
     evaluations : int
         Model evaluations spent.
     seconds : float
+    parts : tuple of CheckReport
+        Where several claims were checked in one call: the report on each, in the order of the arguments of `check`.
+        The report that holds them is that on the decisive one (the first refuted, else the first undecided, else the
+        first), with the overall verdict and the evaluations of all. Empty for a single claim.
     renderer : callable, optional
         Makes the text when it is first read; `check` hands it over, because records import nothing that renders.
     """
@@ -120,6 +126,7 @@ class CheckReport(RenderedWhenRead):
     notices: tuple[str, ...] = ()
     evaluations: int = 0
     seconds: float = 0.0
+    parts: tuple["CheckReport", ...] = ()
     renderer: Callable[["CheckReport"], str] | None = None
     text: str = ""
 

@@ -43,7 +43,18 @@ def check_text(report: CheckReport) -> str:
     >>> print(check_text(report).partition(" ±")[0])
     gradient of model refuted: x[0] is claimed 3, found 6
     """
+    if report.parts:
+        return _several(report)
     return "\n".join([headline(report), *check_details(report)])
+
+
+def _several(report: CheckReport) -> str:
+    """The claims of one call, worst first: what decides stands in the first line."""
+    ordered = sorted(report.parts, key=lambda part: _RANK[part.verdict])
+    texts = ["\n".join([headline(part), *check_details(part)]) for part in ordered]
+    verdicts = _tally([part.verdict for part in ordered])
+    together = f"{wording.count(len(ordered), 'claim')}, {verdicts}: {wording.cost(report.evaluations, report.seconds)}."
+    return "\n\n".join([*texts, *paragraph(together, 0)])
 
 
 def headline(report: CheckReport, width: int = WIDTH) -> str:

@@ -92,10 +92,11 @@ def _at_once(function: Callable[..., Any], leaf: Leaf, moves: Moves, mutated: Ca
     return send
 
 
-def call(function: Callable[..., Any], layout: Layout, vector: Array) -> tuple[Any, bool]:
+def call(function: Callable[..., Any], layout: Layout, vector: Array, *more: Any) -> tuple[Any, bool]:
     """What the function returns at `vector`, and whether it wrote into its input.
 
-    The function always receives its own copy, so nothing it does to x reaches anybody else.
+    The function always receives its own copy, so nothing it does to x reaches anybody else. What is given in `more`
+    follows its positional arguments as it is.
     """
     passed: list[tuple[Leaf, Any]] = []
 
@@ -106,7 +107,7 @@ def call(function: Callable[..., Any], layout: Layout, vector: Array) -> tuple[A
         return part
 
     positional, keywords = layout.arguments(copy)
-    result = function(*positional, **keywords)
+    result = function(*positional, *more, **keywords)
     mutated = any(not same_content(bytearray(vector[leaf.start : leaf.stop].data), part) for leaf, part in passed)
     return result, mutated
 

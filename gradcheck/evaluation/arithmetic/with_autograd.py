@@ -57,6 +57,26 @@ def vjp(function: Callable[..., Any], layout: Layout, point: Array, cotangents: 
     return np.array([pull(row) for row in cotangents], dtype=float)
 
 
+def hvp(function: Callable[..., Any], layout: Layout, point: Array, tangents: NDArray[Any]) -> Array:
+    """Second derivatives times tangents ``(d, n)``: shape ``(d, m·n)``, output by output. Reverse over reverse, because
+    many of autograd's operations have no rule for forward mode. Everything else as in `jvp`.
+    """
+    flat = _flat(function, layout)
+    start = np.array(point, dtype=float)
+    outputs = np.size(np.asarray(autograd.make_vjp(flat)(start)[1]))
+    curvature = [_second_pull(flat, start, output) for output in range(outputs)]
+    return np.array([np.concatenate([pull(row) for pull in curvature]) for row in tangents], dtype=float)
+
+
+def _second_pull(flat: Callable[[Any], Any], start: Array, output: int) -> Callable[[Array], Array]:
+    """Tangent -> Hessian of one output times tangent; the Hessian is symmetric, so a cotangent does as well."""
+    try:
+        pull, _ = autograd.make_vjp(autograd.grad(lambda vector: flat(vector)[output]))(start)
+    except (AttributeError, TypeError):  # a gradient that does not hang on x is a plain array: nothing curves
+        return np.zeros_like
+    return lambda row: np.zeros_like(start) if (found := pull(row)) is None else np.asarray(found)
+
+
 def _flat(function: Callable[..., Any], layout: Layout) -> Callable[[Any], Any]:
     """The model as a function from one vector to one vector."""
 

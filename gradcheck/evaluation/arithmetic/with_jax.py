@@ -68,6 +68,23 @@ def vjp(function: Callable[..., Any], layout: Layout, point: Array, cotangents: 
         return _by_rows(lambda cotangent: pull(cotangent.astype(value.dtype))[0], cotangents)
 
 
+def hvp(function: Callable[..., Any], layout: Layout, point: Array, tangents: NDArray[Any]) -> Array:
+    """Second derivatives times tangents ``(d, n)``, forward over reverse: shape ``(d, m·n)``, output by output.
+
+    Everything else as in `jvp`.
+    """
+    with double_precision():
+        flat = _flat(function, layout)
+        start = jnp.asarray(point, dtype=float)
+        outputs = jax.eval_shape(flat, start).shape[0]
+
+        def slopes(vector: Any) -> Any:
+            value, pull = jax.vjp(flat, vector)
+            return jnp.concatenate([pull(unit)[0] for unit in jnp.eye(outputs, dtype=value.dtype)])
+
+        return _by_rows(lambda tangent: jax.jvp(slopes, (start,), (tangent,))[1], tangents)
+
+
 def double_precision() -> AbstractContextManager[Any]:
     """A scope in which jax computes in double precision; the user's own setting holds again after it."""
     if hasattr(jax, "enable_x64"):

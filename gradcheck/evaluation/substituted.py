@@ -1,0 +1,58 @@
+"""An inquiry about a function of other variables, or of other outputs, answered by the function at hand.
+
+A function F of n variables and m outputs has, at a point x, many functions inside it: ``t -> F(x + Σ t_i·v_i)`` of a few
+variables, whose Jacobian is J times the vectors v; ``x -> W·F(x)`` of a few outputs, whose Jacobian is W·J. Whatever
+examines a Jacobian examines products of it with vectors this way, and need not know.
+"""
+
+from dataclasses import replace
+
+import numpy as np
+
+from gradcheck.evaluation.conduct import Result
+from gradcheck.evaluation.protocol import Inquiry, Request
+from gradcheck.records.arrays import Array
+
+
+def substituted(
+    inquiry: Inquiry[Result], base: Array, *, rows: Array | None = None, mixture: Array | None = None
+) -> Inquiry[Result]:
+    """`inquiry`, whose requests are translated into the variables at hand, and the replies back.
+
+    Parameters
+    ----------
+    inquiry : Inquiry
+        Of a function of d variables around 0 where `rows` is given, else of n variables.
+    base : ndarray, shape (n,)
+        The point x.
+    rows : ndarray, shape (d, n), optional
+        The inquiry's variable i moves x along row i.
+    mixture : ndarray, shape (r, m), optional
+        The inquiry's output i is row i times the outputs.
+
+    Returns
+    -------
+    Result
+        What the inquiry returns.
+    """
+    try:
+        request = next(inquiry)
+        while True:
+            reply = yield request if rows is None else _translated(request, base, rows)
+            if mixture is not None:
+                with np.errstate(invalid="ignore", over="ignore"):
+                    reply = replace(reply, values=reply.values @ mixture.T)
+            request = inquiry.send(reply)
+    except StopIteration as end:
+        result: Result = end.value
+        return result
+
+
+def _translated(request: Request, base: Array, rows: Array) -> Request:
+    directions = request.directions
+    moved = base + request.base @ rows if request.base.any() else base
+    return replace(
+        request,
+        base=moved,
+        directions=rows[directions] if directions.ndim == 1 else directions @ rows,
+    )

@@ -1,0 +1,233 @@
+"""Products of a derivative with a vector, and Hessians: what the claim is given, and the shape that it must return."""
+
+import math
+from collections.abc import Iterator, Mapping
+from typing import Any
+
+import numpy as np
+
+from gradcheck.errors import DerivativeShapeError, UsageError
+from gradcheck.problem.derivative_shape import claim_matrix
+from gradcheck.problem.layout import Arguments, Layout, Leaf, Untouched, real_numbers
+from gradcheck.records.arrays import Array
+
+
+
+def tangent(layout: Layout, row: Array) -> Any:
+    """A vector (n,) in the structure of the differentiated input.
+
+    One part alone where one argument is differentiated, a tuple of parts where several are.
+    """
+    if not isinstance(layout.template, Arguments):
+        positional, _ = layout.restore(row)
+        return positional[0]
+    template = layout.template
+    positional, keywords = layout.restore(row)
+    parts = [
+        part
+        for slot, part in (
+            *zip(template.positional, positional, strict=True),
+            *((template.keywords[name], keywords[name]) for name in template.keywords),
+        )
+        if not isinstance(slot, Untouched)
+    ]
+    return parts[0] if len(parts) == 1 else tuple(parts)
+
+
+def cotangent(output_shape: tuple[int, ...], row: Array) -> Any:
+    """A vector (m,) in the shape of the output; a number where the model returns one."""
+    return float(row[0]) if output_shape == () else row.reshape(output_shape).copy()
+
+
+def product_vector(kind: str, raw: Any, layout: Layout, output_shape: tuple[int, ...]) -> Array:
+    """What a claimed product returned, as a vector: (m,) for ``"jvp"``, (n,) for ``"vjp"`` and ``"hvp"``.
+
+    Raises
+    ------
+    DerivativeShapeError
+        If the shape does not fit; the text names both shapes and says if it is that of the other side.
+    UsageError
+        If it is None, complex, ragged, or otherwise no array of real numbers.
+    """
+    if kind == "hvp":
+        _refuse_many_outputs(kind, layout, output_shape)
+    if raw is None:
+        raise UsageError(f"{kind} returned None; does it lack a return statement?")
+    if kind != "jvp" and layout.single is None and not hasattr(raw, "shape"):
+        return layout.flatten(raw, f"what {kind} returned")
+    array = real_numbers(raw, f"what {kind} returned")
+    inputs = layout.shape
+    expected, size = (output_shape, math.prod(output_shape)) if kind == "jvp" else (inputs, layout.size)
+    if array.shape == expected or array.shape == (size,) or (size == 1 and array.size == 1):
+        return array.reshape(-1)
+    raise _wrong_product(kind, array.shape, expected, inputs, output_shape)
+
+
+def _wrong_product(
+    kind: str, found: tuple[int, ...], expected: tuple[int, ...], inputs: tuple[int, ...], output_shape: tuple[int, ...]
+) -> DerivativeShapeError:
+    what = {"jvp": "J·v", "vjp": "Jᵀ·w", "hvp": "H·v"}[kind]
+    of = "the model's output" if kind == "jvp" else "x"
+    text = f"{kind} returned shape {found}, but {what} has the shape of {of}, {expected}"
+    other = inputs if kind == "jvp" else output_shape
+    if kind != "hvp" and found == other:
+        side = "Jᵀ·v, which is a vjp" if kind == "jvp" else "J·w, which is a jvp"
+        text += f"; {found} is the shape of {'x' if kind == 'jvp' else 'the output'}: it looks like {side}"
+    elif len(found) == 2 and found[0] == found[1]:
+        text += "; it looks like the whole matrix: multiply it by the vector"
+    elif math.prod(found) == math.prod(expected):
+        text += f"; it has the right number of entries: reshape it to {expected}"
+    return DerivativeShapeError(text + ".", name=kind, expected=expected, found=found)
+
+
+def _refuse_many_outputs(kind: str, layout: Layout, output_shape: tuple[int, ...]) -> None:
+    outputs = math.prod(output_shape)
+    if outputs != 1:
+        raise DerivativeShapeError(
+            f"the model returns shape {output_shape} ({outputs} outputs), so {kind} cannot be checked: a Hessian-vector "
+            "product is that of one output; pick one with output=..., or claim all second derivatives with hessian=... "
+            f"of shape ({outputs}, {layout.size}, {layout.size})",
+            name=kind,
+            expected=(),
+            found=output_shape,
+        )
+
+
+def hessian_products(raw: Any, layout: Layout, output_shape: tuple[int, ...], rows: Array) -> Array:
+    """A claimed Hessian times each of some vectors (k, n): shape (k, n), or (k, m·n) for m outputs.
+
+    Row i of the Hessian gives entry i of a product. A sparse Hessian is never made dense.
+
+    Raises
+    ------
+    DerivativeShapeError
+        If the shape is not ``(n, n)``, ``(m, n, n)`` for m outputs, or input shape + input shape.
+    UsageError
+        If the claim is not numeric, or complex.
+    """
+    m, n = math.prod(output_shape), layout.size
+    if hasattr(raw, "toarray"):
+        if raw.shape != (n, n) or m != 1:
+            raise _wrong_hessian(tuple(raw.shape), layout, output_shape)
+        if np.dtype(raw.dtype).kind == "c":
+            raise UsageError(f"the hessian claim is complex ({raw.dtype}); derivatives of a real model are real")
+        return np.asarray((raw @ rows.T).T, dtype=float)
+    if layout.single is None and m == 1 and isinstance(raw, Mapping | list | tuple) and not _is_matrix(raw, n):
+        matrix = _nested_hessian(layout, raw)
+    else:
+        matrix = real_numbers(raw, "the hessian claim")
+        shapes = [(*output_shape, *layout.shape, *layout.shape), (m, n, n), *([(n, n)] if m == 1 else [])]
+        if matrix.shape not in shapes:
+            raise _wrong_hessian(matrix.shape, layout, output_shape)
+        matrix = matrix.reshape(m * n, n)
+    with np.errstate(invalid="ignore", over="ignore"):
+        return np.asarray(_unspoiled(matrix, rows))
+
+
+def _unspoiled(matrix: Array, rows: Array) -> Array:
+    """``rows @ matrix.T``, where an entry that is not finite spoils only the products that it has a share in."""
+    if np.isfinite(matrix).all():
+        return np.asarray(rows @ matrix.T)
+    return np.stack([matrix[:, row != 0] @ row[row != 0] for row in rows])
+
+
+def _is_matrix(raw: Any, n: int) -> bool:
+    try:
+        return np.shape(raw) == (n, n)
+    except ValueError:
+        return False
+
+
+def _wrong_hessian(found: tuple[int, ...], layout: Layout, output_shape: tuple[int, ...]) -> DerivativeShapeError:
+    m, n = math.prod(output_shape), layout.size
+    expected = (*output_shape, *layout.shape, *layout.shape)
+    returns = "a number" if output_shape == () else f"shape {output_shape}"
+    text = (
+        f"the hessian claim has shape {found}, but x has shape {layout.shape} and the model returns {returns}, so shape "
+        f"{expected} is expected"
+    )
+    if found in (layout.shape, (n,)) and n > 1:
+        text += (
+            f"; {found} is the shape of x: if these are the diagonal entries alone, give the whole matrix, "
+            "numpy.diag(h), where it is diagonal; if it is the gradient, claim it with gradient=..."
+        )
+    elif m > 1 and found == (n, n):
+        text += f"; ({n}, {n}) is the Hessian of one output: pick one with output=..."
+    elif math.prod(found) == math.prod(expected):
+        text += f"; it has the right number of entries: reshape it to {expected}"
+    return DerivativeShapeError(text + ".", name="hessian", expected=expected, found=found)
+
+
+def _nested_hessian(layout: Layout, raw: Any) -> Array:
+    """(n, n) from a nesting of the input's structure, in each place of which stands a nesting of it again."""
+    rows = []
+    for outer, inner in _places(layout.template, raw):
+        height = outer.stop - outer.start
+        row = []
+        for leaf, part in _places(layout.template, inner):
+            block = real_numbers(part, f"the hessian claim at {outer.path}, {leaf.path}")
+            wanted = (*outer.shape, *leaf.shape)
+            if block.size != math.prod(wanted):
+                raise UsageError(
+                    f"the hessian claim has shape {block.shape} at {outer.path}, {leaf.path}, where shape {wanted} is "
+                    "expected"
+                )
+            row.append(block.reshape(height, -1))
+        rows.append(np.concatenate(row, axis=1))
+    return np.concatenate(rows, axis=0)
+
+
+def _places(template: Any, nested: Any) -> Iterator[tuple[Leaf, Any]]:
+    """Each part of a nesting that stands where the template has a leaf."""
+    if isinstance(template, Leaf):
+        yield template, nested
+    elif isinstance(template, Arguments):
+        slots = [part for part in (*template.positional, *template.keywords.values()) if not isinstance(part, Untouched)]
+        found = [nested] if len(slots) == 1 and not (isinstance(nested, tuple) and len(nested) == 1) else nested
+        yield from _in_sequence(slots, found)
+    elif isinstance(template, Mapping):
+        missing = [key for key, part in template.items() if not isinstance(part, Untouched)]
+        if not isinstance(nested, Mapping) or not set(missing) <= set(nested):
+            raise UsageError(
+                f"the hessian claim must have the structure of the input twice over, a dict with {sorted(map(str, missing))}"
+                f" in each place; found {type(nested).__name__}"
+            )
+        for key in missing:
+            yield from _places(template[key], nested[key])
+    elif isinstance(template, list | tuple):
+        yield from _in_sequence(list(template), nested)
+
+
+def _in_sequence(templates: list[Any], nested: Any) -> Iterator[tuple[Leaf, Any]]:
+    if not isinstance(nested, list | tuple) or len(nested) != len(templates):
+        raise UsageError(
+            "the hessian claim must have the structure of the input twice over: a sequence of "
+            f"{len(templates)} parts in each place; found {type(nested).__name__}"
+        )
+    for template, part in zip(templates, nested, strict=True):
+        yield from _places(template, part)
+
+
+def value_and_matrix(raw: Any, layout: Layout, output_shape: tuple[int, ...]) -> tuple[Array, Array]:
+    """What a claim of value and gradient returned: the value (m,), and the gradient or Jacobian (m, n).
+
+    Raises
+    ------
+    UsageError, DerivativeShapeError
+        If it is no pair, or one of the two has a shape that does not fit.
+    """
+    if not isinstance(raw, list | tuple) or len(raw) != 2:
+        found = f"a {type(raw).__name__} of {len(raw)}" if isinstance(raw, list | tuple) else type(raw).__name__
+        raise UsageError(f"value_and_gradient must return a pair (value, gradient); it returned {found}")
+    value = real_numbers(raw[0], "the value of value_and_gradient")
+    outputs = math.prod(output_shape)
+    if value.size != outputs or value.ndim > len(output_shape) + (outputs == 1):
+        raise DerivativeShapeError(
+            f"value_and_gradient returned a value of shape {value.shape}, but the model returns shape {output_shape}; "
+            "it must return (value, gradient), in this order.",
+            name="value_and_gradient",
+            expected=output_shape,
+            found=value.shape,
+        )
+    kind = "gradient" if outputs == 1 else "jacobian"
+    return value.reshape(-1), claim_matrix(kind, raw[1], layout, output_shape)
