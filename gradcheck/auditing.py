@@ -42,7 +42,7 @@ from gradcheck.problem.domain import windows
 from gradcheck.problem.layout import Points
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
 from gradcheck.problem.sample_points import given_points, random_points, whole_number
-from gradcheck.problem.subject import Subject, subject_of_problem, subjects_of_function
+from gradcheck.problem.subject import CLAIM_KINDS, Subject, subject_of_problem, subjects_of_function
 from gradcheck.records.advice import Advice, Family
 from gradcheck.records.arrays import Array, IntArray, frozen
 from gradcheck.records.finding import Finding, FindingCode, Severity
@@ -73,6 +73,7 @@ def audit(
     bounds: Any = None,
     gradient: Any = None,
     jacobian: Any = None,
+    hessian: Any = None,
     names: Any = None,
     typical: Any = None,
     wrt: Any = None,
@@ -90,7 +91,7 @@ def audit(
     Parameters
     ----------
     problem_or_function : Problem, decorated model or callable
-    at, bounds, gradient, jacobian, names, typical, wrt, output
+    at, bounds, gradient, jacobian, hessian, names, typical, wrt, output
         As in `gradcheck.check`, for a callable; a Problem brings them.
     samples : int
         How many more random points within the bounds get their claims checked.
@@ -133,6 +134,7 @@ def audit(
         "bounds": bounds,
         "gradient": gradient,
         "jacobian": jacobian,
+        "hessian": hessian,
         "names": names,
         "typical": typical,
         "wrt": wrt,
@@ -403,11 +405,11 @@ def _subject_and_points(thing: Any, options: dict[str, Any]) -> tuple[Subject, l
         return subject_of_problem(thing), []
     spec = getattr(thing, SPEC_ATTRIBUTE, None)
     if isinstance(spec, ModelSpec):
-        known = {name: spec.options[name] for name in options if name in spec.options}
+        known = {name: spec.options[name] for name in (*options, *CLAIM_KINDS) if name in spec.options}
         given = {"at": spec.at} | known | given
     if "at" not in given:
         raise UsageError("the point is missing: give at=..., or describe the model with @gradcheck.model(at=...)")
-    claims = {kind: given.pop(kind, None) for kind in ("gradient", "jacobian")}
+    claims = {kind: given.pop(kind, None) for kind in CLAIM_KINDS}
     at = given.pop("at")
     subjects = subjects_of_function(thing, at if isinstance(at, Points) else Points((at,)), claims=claims, **given)
     return subjects[0], [np.array(subject.start) for subject in subjects[1:]]

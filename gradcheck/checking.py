@@ -213,7 +213,10 @@ def check_described(
         if not any(
             getattr(f, k, None) is not None for f in (thing.objective, *thing.constraints.values()) for k in CLAIM_KINDS
         ):
-            raise UsageError("this Problem claims no derivative: give its Functions gradient=... or jacobian=...")
+            raise UsageError(
+                "this Problem claims no derivative: give its Functions gradient=... or jacobian=... (or hessian, jvp, "
+                "vjp, hvp, value_and_gradient)"
+            )
         rules = Rules.of(
             overrides.pop("rel_tol", None), overrides.pop("abs_tol", 0.0), overrides.pop("witnesses", None)
         )

@@ -129,12 +129,14 @@ def _along_tangents(
     parts = []
     if vectors.units.size:
         parts.append(examined_by(session, function, claimed.units.T, centre, measure, rules, columns=vectors.units))
-    parts.append(examined_by(session, function, claimed.random.T, centre, measure, rules, rows=vectors.random))
-    labels = vectors.labels(tuple(subject.layout.name(int(i)) for i in vectors.units), "random v")
-    m = centre.size
-    numbers = np.concatenate([vectors.units, subject.layout.size + np.arange(len(vectors.random))])
+    if not parts or Verdict.REFUTED not in parts[0].verdict:  # else it is decided
+        parts.append(examined_by(session, function, claimed.random.T, centre, measure, rules, rows=vectors.random))
+    examined, m = joined(parts), centre.size
+    many = examined.claim.shape[1]
+    labels = vectors.labels(tuple(subject.layout.name(int(i)) for i in vectors.units), "random v")[:many]
+    numbers = np.concatenate([vectors.units, subject.layout.size + np.arange(len(vectors.random))])[:many]
     return Looked(
-        examined=joined(parts),
+        examined=examined,
         names=tuple(
             f"along {label}" if m == 1 else f"{function}[{i}] along {label}" for i in range(m) for label in labels
         ),

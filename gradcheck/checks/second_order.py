@@ -215,7 +215,7 @@ class _Look:
     def name(self, row: str, label: str, *, unit: bool) -> str:
         if self.kind == "hvp" or not unit:
             return f"{row} along {label}"
-        return row if self.session.subject.layout.size == 1 and self.outputs == 1 else f"{row}, {label}"
+        return row if self.session.subject.layout.size == 1 and self.outputs == 1 else f"({row}, {label})"
 
     def _through_gradient(self, slope: Array) -> Seen:
         vectors, places_ = self.claimed.vectors, self.places

@@ -41,11 +41,14 @@ class Tolerance:
     rel_tol, abs_tol : float
     rounding : ndarray, broadcastable to the claim
         ε/τ: rounding floor of the output over the typical size of the variable.
+    zero_allowance : float
+        Share of `rounding` that a claim as good as zero may be off.
     """
 
     rel_tol: float
     abs_tol: float
     rounding: Array
+    zero_allowance: float = ZERO_ALLOWANCE
 
     def of(self, claim: Array, value: Array) -> Array:
         """T for each entry; an entry without finite size has no relative part."""
@@ -54,7 +57,7 @@ class Tolerance:
     def allowance(self, claim: Array) -> Array:
         """The part of T that rounding takes."""
         zero = np.abs(claim) <= ZERO_CLAIM * self.rounding
-        return np.where(zero, ZERO_ALLOWANCE, ALLOWANCE) * self.rounding
+        return np.where(zero, self.zero_allowance, ALLOWANCE) * self.rounding
 
     def plain(self, claim: Array, value: Array) -> Array:
         """The part of T that the caller asked for."""

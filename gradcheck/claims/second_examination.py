@@ -19,6 +19,9 @@ FEW_DIGITS = (
     "second differences of the values leave a bound wider than the tolerance; a gradient claimed in the same call, once "
     "it is confirmed, shows more digits"
 )
+#: As in `rule`, for a second derivative that is zero: the bound of the witness is about 400·ε/τ² there, and up to
+#: 2e4·ε/τ² where the steps have to shrink (measured on published test problems, More, Garbow & Hillstrom 1981).
+ZERO_ALLOWANCE = 1e5
 OTHER_STEPS = "a second look with other steps did not agree with the first"
 
 
@@ -81,6 +84,7 @@ def examine_second(
         rel_tol=rel_tol,
         abs_tol=abs_tol,
         rounding=_rounding(witness, centre, unit_roundoff) / np.outer(room.typical, room.typical),
+        zero_allowance=ZERO_ALLOWANCE,
     )
     examined = judged(claim, witness.value, witness.bound, tolerance, _reasons(witness, claim.shape), witness.source)
     refuted = _is_refuted(examined)

@@ -108,14 +108,20 @@ def _family(evidence: Evidence) -> tuple[Family, list[str]]:
     return Family.GRADIENT_BASED, reasons
 
 
+def _first_order(claims: Sequence[CheckReport]) -> list[CheckReport]:
+    """Claims that a solver can take its first derivatives from; a confirmed Hessian does not replace them."""
+    return [claim for claim in claims if claim.kind not in ("hessian", "hvp")]
+
+
 def _sources(evidence: Evidence) -> list[str]:
     """For each function the best derivative source, in words."""
     lines = []
     for name in evidence.subject.targets:
-        claims = [c for c in evidence.claims if c.function == name]
+        claims = _first_order([c for c in evidence.claims if c.function == name])
         works = [w for w in evidence.witnesses if w.function == name and w.works]
-        if any(c.verdict == Verdict.CONFIRMED for c in claims):
-            lines.append(f"{name}: your own {claims[0].kind}, confirmed")
+        confirmed = next((c.kind for c in claims if c.verdict == Verdict.CONFIRMED), "")
+        if confirmed:
+            lines.append(f"{name}: your own {confirmed}, confirmed")
             continue
         wrong = any(c.verdict == Verdict.REFUTED for c in claims)
         best = min(works, key=lambda w: (_rank(w), w.evaluations), default=None)

@@ -528,7 +528,6 @@ VALUES = {
     "second point": ("at=gradcheck.points([1.0, 2.0], 'start')", "`at` is 'start'"),
     "word": ("at=[1.0, 2.0], on_undecided='shout'", "on_undecided is 'shout'; choose 'warn' or 'raise' or 'pass'"),
     "other word": ("at=[1.0, 2.0], on_refuted='warn'", "on_refuted is 'warn'; choose 'raise' or 'return'"),
-    "two claims": ("at=[1.0, 2.0], jacobian=slope", "claims gradient and jacobian at once; give gradient=... or jac"),
 }
 
 

@@ -707,10 +707,6 @@ def test_no_claim_at_all():
         gradcheck.check(drag, X)
 
 
-def test_two_claims_at_once():
-    refused("gradient and jacobian were given", gradient=drag_gradient, jacobian=[[1.0, 2.0]])
-
-
 @pytest.mark.parametrize("position", [2, 3])
 def test_claims_are_given_by_keyword_only(position):
     with pytest.raises(TypeError, match="positional"):
