@@ -65,9 +65,7 @@ def indifferent(claimed: Claimed, measure: Measure, name: Callable[[int], str]) 
 def broken_pair(pushed: Claimed, pulled: Claimed, measure: Measure) -> Contradiction | None:
     """Where ⟨J·v, w⟩ = ⟨v, Jᵀ·w⟩ does not hold between two claims."""
     tangents, cotangents = (each.vectors.random[:PAIRED_MOST] for each in (pushed, pulled))
-    found = adjoint_pair(
-        tangents, pushed.random[:PAIRED_MOST], cotangents, pulled.random[:PAIRED_MOST], measure.slack
-    )
+    found = adjoint_pair(tangents, pushed.random[:PAIRED_MOST], cotangents, pulled.random[:PAIRED_MOST], measure.slack)
     if found is None:
         return None
     broken, v, w = found

@@ -14,13 +14,10 @@ from gradcheck.claims.policy import REL_TOL
 from gradcheck.counsel.claim_findings import mutation
 from gradcheck.evaluation.pipeline import Session
 from gradcheck.records.finding import Finding
-from gradcheck.records.report import CheckReport, Diagnosis, Entries
+from gradcheck.records.report import IDENTITY, CheckReport, Diagnosis, Entries
 from gradcheck.records.verdict import DiagnosisCode, Verdict
 from gradcheck.report.check_text import check_text
 from gradcheck.wording import listed
-
-#: What decided an entry that needs no witness.
-IDENTITY = "identity"
 
 
 def flat(examined: Examined) -> Examined:

@@ -25,7 +25,7 @@ from gradcheck.evaluation.pipeline import Session
 from gradcheck.evaluation.substituted import substituted
 from gradcheck.problem.subject import Subject
 from gradcheck.records.arrays import Array, IntArray
-from gradcheck.records.report import CheckReport
+from gradcheck.records.report import CheckReport, Diagnosis
 from gradcheck.records.verdict import Verdict
 from gradcheck.witnesses.steps import Room, room_along
 from gradcheck.wording import count
@@ -84,7 +84,7 @@ def checked_product(
 
     found = contradictions(claimed, measure, name)
     entries = with_contradictions(entries_from(looked.examined, looked.index, looked.names), found)
-    diagnoses = ()
+    diagnoses: tuple[Diagnosis, ...] = ()
     if Verdict.REFUTED in entries.verdict and claimed.finding is None:
         same, by_sign, every = indifferent(claimed, measure, name)
         conduct = Conduct(same=same, by_sign=by_sign, every=every, broken=[each.broken for each in found])
@@ -208,6 +208,7 @@ def examined_by(
     columns: IntArray | None = None,
     rows: Array | None = None,
     mixture: Array | None = None,
+    outputs: IntArray | None = None,
     magnitude: Array | None = None,
     source: str = "model",
     witnesses: tuple[str, ...] | None = None,
@@ -221,7 +222,8 @@ def examined_by(
         Values at the point.
     columns, rows : ndarray, shape (d,) or (d, n)
         One of the two.
-    mixture : ndarray, shape (r, m), optional
+    mixture, outputs : ndarray, shape (r, m) or (r,), optional
+        As in `substituted`.
     magnitude : ndarray, shape (r,), optional
         Size of the terms that the outputs are sums of.
     source : str
@@ -246,7 +248,7 @@ def examined_by(
         witnesses=rules.witnesses if witnesses is None else witnesses,
         magnitude=magnitude,
     )
-    inquiry = substituted(inquiry, subject.start, rows=rows, mixture=mixture)
+    inquiry = substituted(inquiry, subject.start, rows=rows, mixture=mixture, outputs=outputs)
     return conduct_one(addressed(inquiry, function=function, source=source), session.gate)
 
 
@@ -279,7 +281,7 @@ def _cases(subject: Subject, kind: str, looked: Looked, measure: Measure) -> tup
     return (units if cut and looked.whole else None), rest
 
 
-def _taken(array: np.ndarray, axis: int, part: slice) -> np.ndarray:  # type: ignore[type-arg]
+def _taken(array: np.ndarray, axis: int, part: slice) -> np.ndarray:
     return array[:, part] if axis == 1 else array[part]
 
 
@@ -288,7 +290,7 @@ def _part(examined: Examined, axis: int, part: slice) -> Examined:
     return replace(examined, **{name: _taken(getattr(examined, name), axis, part) for name in fields})
 
 
-def case_of(examined: Examined, names: np.ndarray, measure: Measure) -> Case:  # type: ignore[type-arg]
+def case_of(examined: Examined, names: np.ndarray, measure: Measure) -> Case:
     """Examined entries (a, b) as families of mistakes see them."""
     size = np.fmax(np.abs(examined.claim), np.abs(examined.value))
     rounding = ALLOWANCE * measure.unit_roundoff * np.nan_to_num(size)

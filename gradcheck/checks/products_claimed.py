@@ -80,10 +80,12 @@ def claimed_products(session: Session, function: str, kind: str, vectors: Vector
     reply = _asked(session, function, kind, f"claim:{kind}", rows)
     if int(reply.status[0, 0]) == Status.CRASH:
         words = session.ledger.last_words[function, f"claim:{kind}"]
-        finding = failing_claim(subject, function, kind, words)
-        return Claimed(kind=kind, vectors=vectors, products=_nothing(session, function, kind, len(rows)), finding=finding)
+        nothing = _nothing(session, function, kind, len(rows))
+        return Claimed(
+            kind=kind, vectors=vectors, products=nothing, finding=failing_claim(subject, function, kind, words)
+        )
     raised = session.ledger.failed_vectors.get((function, kind), {})
-    finding = None
+    finding: Finding | None = None
     if raised:
         which = f"for {len(raised)} of {count(len(rows), 'vector')}" if len(raised) < len(rows) else "for every vector"
         finding = failing_claim(subject, function, kind, f"{which}; the first time: {next(iter(raised.values()))}")

@@ -12,17 +12,18 @@ import numpy as np
 
 from gradcheck.checks.entrywise import _judgeable
 from gradcheck.checks.identities import Contradiction, broken_symmetry, contradictions, indifferent
-from gradcheck.checks.parts import appended, entries_from, joined, report_of, with_contradictions
+from gradcheck.checks.parts import entries_from, joined, report_of, with_contradictions
 from gradcheck.checks.products import case_of, examined_by, places, shared_room, tried
-from gradcheck.checks.products_claimed import Claimed, Measure, claimed_products, measure_of
+from gradcheck.checks.products_claimed import Claimed, claimed_products, measure_of
 from gradcheck.checks.vectors import UNITS_MOST, Vectors, random_rows, vectors_of
 from gradcheck.claims.desk import Examined
 from gradcheck.claims.examination import DIFFERENCES
-from gradcheck.claims.hessian_mistakes import hessian_mistakes
+from gradcheck.claims.hessian_mistakes import hessian_mistakes, scattered
 from gradcheck.claims.identities import Broken, symmetry
+from gradcheck.claims.mistakes.naming import likely_mistakes
 from gradcheck.claims.policy import Rules
 from gradcheck.claims.product_mistakes import Conduct, product_mistakes
-from gradcheck.claims.second_examination import examine_second, judged
+from gradcheck.claims.second_examination import Curvature, examine_second, judged
 from gradcheck.errors import UsageError
 from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.evaluator import SLOPE
@@ -32,7 +33,7 @@ from gradcheck.evaluation.substituted import substituted
 from gradcheck.records.arrays import Array, IntArray
 from gradcheck.records.report import CheckReport, Diagnosis, Entries
 from gradcheck.records.verdict import DiagnosisCode, Verdict
-from gradcheck.witnesses.steps import room_along
+from gradcheck.witnesses.steps import Room, room_along
 from gradcheck.wording import count, number
 
 #: Variables up to which all entries are looked at by function values: a pair of them takes about 16.
@@ -60,7 +61,9 @@ class Seen:
         The entries (m·n, n) of the Hessians themselves, where all of them were looked at.
     rest : Examined or None
         Products with random vectors (m·n, r).
-    rest_names : ndarray of object
+    names, rest_names : ndarray of object
+    narrowed : Examined or None
+        Whole columns (m·n, k) that were looked at because random directions had shown wrong rows; `names` are theirs.
     notices : tuple of str
     """
 
@@ -69,6 +72,7 @@ class Seen:
     rest: Examined | None
     names: np.ndarray[tuple[int, ...], np.dtype[np.object_]]
     rest_names: np.ndarray[tuple[int, ...], np.dtype[np.object_]]
+    narrowed: Examined | None = None
     notices: tuple[str, ...] = ()
 
 
@@ -107,7 +111,14 @@ class _Look:
     """One claim, what it gave, and the witness that it is held against."""
 
     def __init__(
-        self, session: Session, function: str, kind: str, centre: Array, able: IntArray, rules: Rules, confirmed: str | None
+        self,
+        session: Session,
+        function: str,
+        kind: str,
+        centre: Array,
+        able: IntArray,
+        rules: Rules,
+        confirmed: str | None,
     ) -> None:
         self.session, self.function, self.kind, self.centre = session, function, kind, centre
         self.able, self.rules = able, rules
@@ -227,14 +238,30 @@ class _Look:
         if self.kind == "hvp" or not vectors.units.size:
             parts.append(self._differences(random, slope, rows=vectors.random))
         seen = self._seen(parts, bool(vectors.units.size))
-        narrowed = () if vectors.units.size else self._narrowed(parts[0], slope)
+        if not vectors.units.size:
+            seen = replace(seen, notices=(self._visible(parts[0]),))
+            seen = self._narrowed(seen, parts[0], slope)
         spent = self.session.ledger.calls["slope"] - spent
-        notice = f"{count(spent, 'evaluation')} of the {self.confirmed}" if spent else f"no evaluation of the {self.confirmed}"
+        notice = (
+            f"{count(spent, 'evaluation')} of the {self.confirmed}"
+            if spent
+            else f"no evaluation of the {self.confirmed}"
+        )
         notices = (f"held against differences of the confirmed {self.confirmed}: {notice} at other points",)
-        entries = seen.entries
-        for more in narrowed:
-            entries = appended(entries, more)
-        return replace(seen, entries=entries, notices=(*notices, *seen.notices))
+        return replace(seen, notices=(*notices, *seen.notices))
+
+    def _visible(self, along: Examined) -> str:
+        """What a look along random directions would have seen, and what not: a bound for an error in any one entry."""
+        n = self.session.subject.layout.size
+        looked = f"{count(n, 'variable')}: looked at along {count(along.claim.shape[1], 'random direction')}"
+        with np.errstate(invalid="ignore"):
+            off = self.measure.abs_tol + self.measure.rel_tol * np.abs(along.claim) + 4 * along.bound
+        reach = np.abs(self.claimed.vectors.random[: along.claim.shape[1], self.able]).min(axis=1)
+        seen = (off / reach).min(axis=1)
+        if not np.isfinite(seen).any():
+            return looked
+        least = number(float(seen[np.isfinite(seen)].max()), 2)
+        return f"{looked}; an error of {least} in a single entry would have been seen"
 
     def _differences(
         self, claim: Array, slope: Array, *, columns: IntArray | None = None, rows: Array | None = None
@@ -243,10 +270,6 @@ class _Look:
         typical = subject.domain.scale[columns] if columns is not None else shared_room(subject, rows).typical  # type: ignore[arg-type]
         with np.errstate(invalid="ignore", over="ignore"):
             magnitude = np.nan_to_num(np.abs(claim), nan=0.0, posinf=0.0) @ typical
-        mixture = None
-        if chosen.size < slope.size:
-            mixture = np.zeros((chosen.size, slope.size))
-            mixture[np.arange(chosen.size), chosen] = 1.0
         found = examined_by(
             self.session,
             self.function,
@@ -256,7 +279,7 @@ class _Look:
             self.rules,
             columns=columns,
             rows=rows,
-            mixture=mixture,
+            outputs=chosen if chosen.size < slope.size else None,
             magnitude=magnitude,
             source=self.source,
             witnesses=(DIFFERENCES,),
@@ -264,30 +287,32 @@ class _Look:
         source = OF_GRADIENT.format(kind=self.confirmed)
         return replace(found, source=np.where(found.source == "", "", source).astype(object))
 
-    def _narrowed(self, along: Examined, slope: Array) -> tuple[Entries, ...]:
+    def _narrowed(self, seen: Seen, along: Examined, slope: Array) -> Seen:
         """All columns of the variables whose rows are wrong: a Hessian is symmetric, and so are most mistakes."""
-        rows = np.unique(self.places[(along.verdict == Verdict.REFUTED).any(axis=1)] % self.session.subject.layout.size)
+        n = self.session.subject.layout.size
+        rows = np.unique(self.places[(along.verdict == Verdict.REFUTED).any(axis=1)] % n)
         if rows.size == 0 or rows.size > NARROWED_MOST:
-            return ()
+            return seen
         vectors = Vectors(units=rows, random=self.claimed.vectors.random)
         columns = claimed_products(self.session, self.function, self.kind, vectors).units.T[self.places]
         found = self._differences(columns, slope, columns=rows)
         wrong = found.verdict == Verdict.REFUTED
         if not wrong.any():
-            return ()
-        layout, names = self.session.subject.layout, self.row_names()
+            return seen
+        labels = [self.session.subject.layout.name(int(j)) for j in rows]
+        names = np.array(
+            [[self.name(row, label, unit=True) for label in labels] for row in self.row_names()], dtype=object
+        )
+        fields = ("claim", "value", "bound", "left", "right", "verdict", "source", "reason")
+        picked = replace(found, **{field: getattr(found, field)[wrong] for field in fields})
         at = np.argwhere(wrong)
-        picked = replace(
-            found,
-            **{
-                field: getattr(found, field)[wrong]
-                for field in ("claim", "value", "bound", "left", "right", "verdict", "source", "reason")
-            },
-        )
         index = np.stack([self.places[at[:, 0]], rows[at[:, 1]]], axis=1)
-        return (
-            entries_from(picked, index, [self.name(names[i], layout.name(int(rows[j])), unit=True) for i, j in at]),
+        entries = entries_from(picked, index, names[wrong].tolist())
+        notice = (
+            f"after random directions the {count(rows.size, 'column')} of the variables in question "
+            f"{'was' if rows.size == 1 else 'were'} looked at in full; what was found wrong there is told"
         )
+        return replace(seen, entries=entries, narrowed=found, names=names, notices=(*seen.notices, notice))
 
     def _by_values(self) -> Seen:
         subject, able, vectors = self.session.subject, self.able, self.claimed.vectors
@@ -312,11 +337,9 @@ class _Look:
                 parts[1].append(judged(random[here], value, bound, tolerance, reasons, curvature.witness.source))
         return self._seen([_stacked(part) for part in parts if part], True)
 
-    def _examined(self, base, claim, room, output, rows):  # type: ignore[no-untyped-def]
-        mixture = None
-        if self.outputs > 1:
-            mixture = np.zeros((1, self.outputs))
-            mixture[0, output] = 1.0
+    def _examined(
+        self, base: Array, claim: Array, room: Room, output: int, rows: Array | None
+    ) -> tuple[Examined, Curvature]:
         inquiry = examine_second(
             base,
             claim,
@@ -326,13 +349,14 @@ class _Look:
             abs_tol=self.measure.abs_tol,
             unit_roundoff=self.measure.unit_roundoff,
         )
-        inquiry = substituted(inquiry, self.session.subject.start, rows=rows, mixture=mixture)
+        chosen = np.array([output]) if self.outputs > 1 else None
+        inquiry = substituted(inquiry, self.session.subject.start, rows=rows, outputs=chosen)
         return conduct_one(addressed(inquiry, function=self.function), self.session.gate)
 
     def _along_directions(self) -> Seen:
         """⟨u, H·v⟩ for a few random directions by function values, which cost the same for any number of variables."""
         subject, vectors = self.session.subject, self.claimed.vectors
-        few = min(len(vectors.random), self.rules.directions or DIRECTIONS)  # type: ignore[type-var]
+        few = min(len(vectors.random), self.rules.directions or DIRECTIONS)
         rows = vectors.random[: int(few)]
         room = shared_room(subject, rows)
         parts = []
@@ -342,19 +366,19 @@ class _Look:
                 claim = rows @ self.claimed.random[: len(rows), here].T
             parts.append(self._examined(np.zeros(len(rows)), claim, room, output, rows)[0])
         examined = _stacked(parts)
-        labels = [f"random v {i + 1}" for i in range(len(rows))]
+        labels = [f"v{i + 1}" for i in range(len(rows))]
         prefix = [""] if self.outputs == 1 else [f"{self.function}[{output}]: " for output in range(self.outputs)]
         names = [f"{p}⟨{u}, H·{v}⟩" for p in prefix for u in labels for v in labels]
         n = subject.layout.size
         index = places(n * np.arange(self.outputs * len(rows)), n + np.arange(len(rows)))
-        tolerance = np.abs(examined.claim) * self.measure.rel_tol + 4 * np.nan_to_num(examined.bound, posinf=np.nan)
-        size = np.median(np.abs(rows[:, self.able]))
+        with np.errstate(invalid="ignore"):
+            off = self.measure.abs_tol + self.measure.rel_tol * np.abs(examined.claim) + 4 * examined.bound
+        reach = np.abs(rows[:, self.able]).min(axis=1)
+        seen = (off / np.tile(np.outer(reach, reach), (self.outputs, 1))).min()
         notice = (
-            f"{count(n, 'variable')}: looked at along {count(len(rows), 'random direction')} by function values; a "
-            f"single entry that is off by less than about {np.nanmax(tolerance) / size**2:.0e} would not be seen, and "
-            "which entries are wrong is not told. A gradient claimed in the same call would show both"
-            if np.isfinite(tolerance).any()
-            else f"{count(n, 'variable')}: looked at along {count(len(rows), 'random direction')} by function values"
+            f"{count(n, 'variable')}: looked at along {count(len(rows), 'random direction')} by function values; an "
+            f"error of {number(float(seen), 2)} in a single entry would have been seen, but not in which. A gradient "
+            "claimed in the same call shows it"
         )
         shape = examined.claim.shape
         return Seen(
@@ -430,17 +454,21 @@ def _asymmetry(look: _Look) -> list[Contradiction]:
         entries=int(apart.sum()) // 2,
     )
     one, other = layout.name(int(able[i])), layout.name(int(able[j]))
-    return [Contradiction(broken=broken, name=f"H[{one}, {other}] = H[{other}, {one}]", place=(int(able[i]), int(able[j])))]
+    return [
+        Contradiction(broken=broken, name=f"H[{one}, {other}] = H[{other}, {one}]", place=(int(able[i]), int(able[j])))
+    ]
 
 
 def _symmetric(look: _Look, found: list[Contradiction]) -> tuple[str, ...]:
     """Which vectors were tried, and which identities held."""
     linear = not any(each.broken.name not in SYMMETRY for each in found)
     held = look.outputs == 1 and not any(each.broken.name in SYMMETRY for each in found)
-    if look.claimed.finding is not None:
+    if look.claimed.finding is not None or not np.isfinite(look.claimed.products).all():
         return ()
     if look.kind == "hessian":
-        return ("the claimed Hessian is symmetric",) if held and look.able.size > 1 else ()
+        whole = look.claimed.vectors.units.size
+        told = "the claimed Hessian is symmetric" if whole else "⟨u, H·v⟩ = ⟨v, H·u⟩ holds for random u and v"
+        return (told,) if held and look.able.size > 1 else ()
     text = tried("hvp", look.claimed.vectors, linear=linear)
     return (text + ("; ⟨u, H·v⟩ = ⟨v, H·u⟩ holds" if held else ""),)
 
@@ -448,10 +476,14 @@ def _symmetric(look: _Look, found: list[Contradiction]) -> tuple[str, ...]:
 def _diagnoses(look: _Look, seen: Seen, found: list[Contradiction]) -> tuple[Diagnosis, ...]:
     units = None if seen.matrix is None else case_of(seen.matrix, seen.names, look.measure)
     rest = None if seen.rest is None else case_of(seen.rest, seen.rest_names, look.measure)
+    if seen.narrowed is not None:
+        return likely_mistakes(case_of(seen.narrowed, seen.names, look.measure))
     conduct = _conduct(look, [each.broken for each in found])
     indifferent_to_size = bool(conduct.same or conduct.by_sign)
     if units is not None and look.outputs == 1 and units.refuted.any() and not indifferent_to_size:
         return hessian_mistakes(units)
+    if units is None and rest is not None and rest.refuted.any() and not indifferent_to_size and not conduct.broken:
+        return (scattered(rest),)
     return product_mistakes("hvp", units, rest, conduct) or tuple(_asymmetric(each) for each in found)
 
 

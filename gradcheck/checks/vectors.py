@@ -1,4 +1,4 @@
-"""The vectors that a claimed product is asked for: unit vectors where they are few, and random ones of several sizes."""
+"""The vectors that a claimed product is asked for: unit vectors where they are few, random ones of several sizes."""
 
 from dataclasses import dataclass
 

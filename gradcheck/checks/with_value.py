@@ -41,7 +41,10 @@ def with_value(session: Session, function: str, centre: Array, rules: Rules, rep
     wrong = [i for i in outputs.tolist() if examined.verdict[i] == Verdict.REFUTED]
     diagnoses = report.diagnoses
     if wrong:
-        diagnoses = (_wrong_value(float(value[wrong[0]]), float(centre[wrong[0]]), [names[i] for i in wrong]), *diagnoses)
+        diagnoses = (
+            _wrong_value(float(value[wrong[0]]), float(centre[wrong[0]]), [names[i] for i in wrong]),
+            *diagnoses,
+        )
     return replace(
         report,
         verdict=Verdict.overall(list(entries.verdict)),

@@ -1,5 +1,7 @@
 """Likely mistakes behind a refuted Hessian: those that a matrix of second derivatives invites, then the usual ones."""
 
+from dataclasses import replace
+
 import numpy as np
 
 from gradcheck.claims.mistakes.case import Case
@@ -19,12 +21,28 @@ def hessian_mistakes(case: Case) -> tuple[Diagnosis, ...]:
         found = family(case)
         if found is not None:
             return (found,)
-    told = likely_mistakes(case)
+    told = _usual(case)
     unknown = [diagnosis for diagnosis in told if diagnosis.code == DiagnosisCode.UNKNOWN]
     part = _positive_part(case) if unknown else None
     if part is None:
         return told
     return (*(diagnosis for diagnosis in told if diagnosis.code != DiagnosisCode.UNKNOWN), part)
+
+
+def _usual(case: Case) -> tuple[Diagnosis, ...]:
+    """The usual mistakes. Of a symmetric claim they are looked for in one triangle: that both sides of the diagonal are
+    off by the same factor proves nothing.
+    """
+    n = len(case.claim)
+    lower = np.tril(np.ones((n, n), bool), -1)
+    if not np.isfinite(case.claim).all() or not _is_symmetric(case.claim):
+        return likely_mistakes(case)
+    across = {case.name(i, j): case.name(j, i) for i in range(n) for j in range(i + 1, n)}
+    told = likely_mistakes(replace(case, refuted=case.refuted & ~lower))
+    return tuple(
+        replace(each, entries=(*each.entries, *(across[name] for name in each.entries if name in across)))
+        for each in told
+    )
 
 
 def _one_triangle(case: Case) -> Diagnosis | None:
@@ -120,10 +138,27 @@ def _positive_part(case: Case) -> Diagnosis | None:
         else f"has rank {_rank(claim)} only, while the Hessian has rank {_rank(value)}"
     )
     text = (
-        f"{listed(case.names(case.refuted))}: the claim is symmetric and {seen}: it fits an approximation from products "
-        "of first derivatives (Gauss-Newton, JᵀJ), which leaves out the second derivatives of what is squared."
+        f"{listed(case.names(case.refuted))}: the claim is symmetric and {seen}: it fits an approximation from "
+        "products of first derivatives (Gauss-Newton, JᵀJ), which leaves out the second derivatives of what is squared."
     )
     return Diagnosis(code=DiagnosisCode.MISSING_PATH, text=text, entries=case.names(case.refuted))
+
+
+def scattered(case: Case) -> Diagnosis:
+    """A mistake that random directions show: one factor for all of them, or no more than that it is there."""
+    names = case.names(case.refuted)
+    factor = _one_factor(case, case.refuted) if case.refuted.sum() > 1 else None
+    if factor is None:
+        text = (
+            f"{case.refuted.sum()} of {case.refuted.size} products with random vectors are wrong, which does not show "
+            "in which entries: claim a gradient in the same call, or ask for all entries with directions='all'."
+        )
+        return Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names)
+    flipped = abs(factor + 1) < 1e-6
+    mend = "look for a lost minus" if flipped else f"look for a missing factor {number(1 / factor)}"
+    text = f"all wrong products are {number(factor, 6)} times those with the second derivatives; {mend}."
+    code = DiagnosisCode.SIGN_FLIPPED if flipped else DiagnosisCode.CONSTANT_FACTOR
+    return Diagnosis(code=code, text=text, entries=names)
 
 
 def _known(case: Case) -> bool:

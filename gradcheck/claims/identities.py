@@ -1,4 +1,4 @@
-"""What holds of every right product with a vector, whatever the model: no value of the model is needed to see it broken.
+"""What holds of every right product with a vector, whatever the model: to see it broken needs no value of the model.
 
 A product is linear in its vector, and nothing for none; ⟨J·v, w⟩ = ⟨v, Jᵀ·w⟩; a Hessian is symmetric.
 """
@@ -23,7 +23,8 @@ class Broken:
     Attributes
     ----------
     name : str
-        Of the identity: ``"scaling"``, ``"negation"``, ``"sum"``, ``"zero vector"``, ``"adjoint pair"``, ``"symmetry"``.
+        Of the identity: ``"scaling"``, ``"negation"``, ``"sum"``, ``"zero vector"``, ``"adjoint pair"`` or
+        ``"symmetry"``.
     left, right, allowed : float
         Both sides in that entry, and by how much rounding may have them differ.
     entry : int
@@ -106,8 +107,12 @@ def ignored(first: Array, scaled: Array, negative: Array, slack: Slack) -> tuple
     """Entries (q,) that are the same for a vector and for its multiple: of both signs, or of one sign only."""
     with np.errstate(invalid="ignore"):
         seen = np.abs(first) > slack.of(first, scaled)
-        same = seen & (np.abs(scaled - first) <= slack.of(first, scaled)) & (np.abs(negative - first) <= slack.of(first))
-        by_sign = seen & (np.abs(scaled + first) <= slack.of(first, scaled)) & (np.abs(negative + first) <= slack.of(first))
+        same = (
+            seen & (np.abs(scaled - first) <= slack.of(first, scaled)) & (np.abs(negative - first) <= slack.of(first))
+        )
+        by_sign = (
+            seen & (np.abs(scaled + first) <= slack.of(first, scaled)) & (np.abs(negative + first) <= slack.of(first))
+        )
     return np.asarray(same), np.asarray(by_sign)
 
 

@@ -11,6 +11,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from gradcheck.evaluation.protocol import Inquiry
+from gradcheck.evaluation.substituted import substituted
 from gradcheck.health.smoothness import examine_line
 from gradcheck.records.arrays import Array, BoolArray
 from gradcheck.records.finding import FindingCode
@@ -42,16 +43,17 @@ def explained_by_jumps(
         A jump along one variable counts for all: an inner count that changes with one shifts the slopes of the others.
     """
     height = np.zeros(gap.shape)
+    asked = np.flatnonzero(np.isfinite(gap).any(axis=1))
     for place, column in enumerate(columns):
         length = float(below[place] + above[place])
         if not 0 < length < np.inf:
             continue
         start = np.array(base)
         start[column] -= below[place]
-        report = yield from examine_line(start, (column, length), budget=BUDGET)
+        report = yield from substituted(examine_line(start, (column, length), budget=BUDGET), base, outputs=asked)
         for kind in (FindingCode.JUMP, FindingCode.STAIRCASE):
             for found in report.of_kind(kind):
-                height[found.output, place] += abs(found.size)
+                height[asked[found.output], place] += abs(found.size)
     highest = height.max(axis=1, keepdims=True)
     with np.errstate(invalid="ignore", divide="ignore"):
         explained: BoolArray = (gap <= EXPLAINED * highest / (below + above)) & (highest > 0)

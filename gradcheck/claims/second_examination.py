@@ -16,8 +16,8 @@ from gradcheck.witnesses.testimony import Testimony
 
 #: Why an entry stays open that the values themselves cannot decide.
 FEW_DIGITS = (
-    "second differences of the values leave a bound wider than the tolerance; a gradient claimed in the same call, once "
-    "it is confirmed, shows more digits"
+    "second differences of the values leave a bound wider than the tolerance; a gradient claimed in the same call, "
+    "once it is confirmed, shows more digits"
 )
 #: As in `rule`, for a second derivative that is zero: the bound of the witness is about 400·ε/τ² there, and up to
 #: 2e4·ε/τ² where the steps have to shrink (measured on published test problems, More, Garbow & Hillstrom 1981).

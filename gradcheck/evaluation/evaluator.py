@@ -24,7 +24,6 @@ from gradcheck.problem.product_shape import cotangent, hessian_products, product
 from gradcheck.problem.subject import Subject, Target
 from gradcheck.records.arrays import Array
 
-
 #: Claims that are one matrix at the point; all other claims are asked for one product for each vector.
 MATRIX_CLAIMS = frozenset({"claim:gradient", "claim:jacobian", "claim:value_and_gradient"})
 #: What the source of a claim begins with that is asked as a function of its own, at any point.

@@ -1,8 +1,8 @@
 """An inquiry about a function of other variables, or of other outputs, answered by the function at hand.
 
-A function F of n variables and m outputs has, at a point x, many functions inside it: ``t -> F(x + Σ t_i·v_i)`` of a few
-variables, whose Jacobian is J times the vectors v; ``x -> W·F(x)`` of a few outputs, whose Jacobian is W·J. Whatever
-examines a Jacobian examines products of it with vectors this way, and need not know.
+A function F of n variables and m outputs has, at a point x, many functions inside it: ``t -> F(x + Σ t_i·v_i)`` of a
+few variables, whose Jacobian is J times the vectors v; ``x -> W·F(x)`` of a few outputs, whose Jacobian is W·J.
+Whatever examines a Jacobian examines products of it with vectors this way, and need not know.
 """
 
 from dataclasses import replace
@@ -11,11 +11,16 @@ import numpy as np
 
 from gradcheck.evaluation.conduct import Result
 from gradcheck.evaluation.protocol import Inquiry, Request
-from gradcheck.records.arrays import Array
+from gradcheck.records.arrays import Array, IntArray
 
 
 def substituted(
-    inquiry: Inquiry[Result], base: Array, *, rows: Array | None = None, mixture: Array | None = None
+    inquiry: Inquiry[Result],
+    base: Array,
+    *,
+    rows: Array | None = None,
+    mixture: Array | None = None,
+    outputs: IntArray | None = None,
 ) -> Inquiry[Result]:
     """`inquiry`, whose requests are translated into the variables at hand, and the replies back.
 
@@ -29,6 +34,8 @@ def substituted(
         The inquiry's variable i moves x along row i.
     mixture : ndarray, shape (r, m), optional
         The inquiry's output i is row i times the outputs.
+    outputs : ndarray of int, shape (r,), optional
+        The inquiry's output i is this one; not together with `mixture`.
 
     Returns
     -------
@@ -42,6 +49,8 @@ def substituted(
             if mixture is not None:
                 with np.errstate(invalid="ignore", over="ignore"):
                     reply = replace(reply, values=reply.values @ mixture.T)
+            elif outputs is not None:
+                reply = replace(reply, values=reply.values[:, :, outputs])
             request = inquiry.send(reply)
     except StopIteration as end:
         result: Result = end.value

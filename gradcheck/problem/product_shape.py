@@ -12,7 +12,6 @@ from gradcheck.problem.layout import Arguments, Layout, Leaf, Untouched, real_nu
 from gradcheck.records.arrays import Array
 
 
-
 def tangent(layout: Layout, row: Array) -> Any:
     """A vector (n,) in the structure of the differentiated input.
 
@@ -84,8 +83,8 @@ def _refuse_many_outputs(kind: str, layout: Layout, output_shape: tuple[int, ...
     outputs = math.prod(output_shape)
     if outputs != 1:
         raise DerivativeShapeError(
-            f"the model returns shape {output_shape} ({outputs} outputs), so {kind} cannot be checked: a Hessian-vector "
-            "product is that of one output; pick one with output=..., or claim all second derivatives with hessian=... "
+            f"the model returns shape {output_shape} ({outputs} outputs), so {kind} cannot be checked: a "
+            "Hessian-vector product is that of one output; pick one with output=..., or claim all second derivatives with hessian=... "
             f"of shape ({outputs}, {layout.size}, {layout.size})",
             name=kind,
             expected=(),
@@ -133,7 +132,7 @@ def _unspoiled(matrix: Array, rows: Array) -> Array:
 
 def _is_matrix(raw: Any, n: int) -> bool:
     try:
-        return np.shape(raw) == (n, n)
+        return bool(np.shape(raw) == (n, n))
     except ValueError:
         return False
 
@@ -143,8 +142,8 @@ def _wrong_hessian(found: tuple[int, ...], layout: Layout, output_shape: tuple[i
     expected = (*output_shape, *layout.shape, *layout.shape)
     returns = "a number" if output_shape == () else f"shape {output_shape}"
     text = (
-        f"the hessian claim has shape {found}, but x has shape {layout.shape} and the model returns {returns}, so shape "
-        f"{expected} is expected"
+        f"the hessian claim has shape {found}, but x has shape {layout.shape} and the model returns {returns}, so "
+        f"shape {expected} is expected"
     )
     if found in (layout.shape, (n,)) and n > 1:
         text += (
@@ -182,15 +181,17 @@ def _places(template: Any, nested: Any) -> Iterator[tuple[Leaf, Any]]:
     if isinstance(template, Leaf):
         yield template, nested
     elif isinstance(template, Arguments):
-        slots = [part for part in (*template.positional, *template.keywords.values()) if not isinstance(part, Untouched)]
+        slots = [
+            part for part in (*template.positional, *template.keywords.values()) if not isinstance(part, Untouched)
+        ]
         found = [nested] if len(slots) == 1 and not (isinstance(nested, tuple) and len(nested) == 1) else nested
         yield from _in_sequence(slots, found)
     elif isinstance(template, Mapping):
         missing = [key for key, part in template.items() if not isinstance(part, Untouched)]
         if not isinstance(nested, Mapping) or not set(missing) <= set(nested):
             raise UsageError(
-                f"the hessian claim must have the structure of the input twice over, a dict with {sorted(map(str, missing))}"
-                f" in each place; found {type(nested).__name__}"
+                "the hessian claim must have the structure of the input twice over, a dict with "
+                f"{sorted(map(str, missing))} in each place; found {type(nested).__name__}"
             )
         for key in missing:
             yield from _places(template[key], nested[key])

@@ -18,6 +18,8 @@ from gradcheck.records.rendering import RenderedWhenRead
 from gradcheck.records.verdict import DiagnosisCode, Verdict
 
 FORMAT_VERSION = 1
+#: The source of an entry that shows an identity broken: the claim contradicts itself, and no witness was needed.
+IDENTITY = "identity"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -38,7 +40,7 @@ class Entries:
         Decimal digits to which claim and witness are seen to agree.
     verdict : tuple of Verdict
     source : tuple of str
-        Which witness decided.
+        Which witness decided; ``"identity"`` where the claim contradicts itself.
     reason : tuple of str
         Why an entry is undecided or was not judged by the plain rule; empty where there is nothing to say.
     """

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from gradcheck import wording
-from gradcheck.records.report import CheckReport, Diagnosis, Entries
+from gradcheck.records.report import IDENTITY, CheckReport, Diagnosis, Entries
 from gradcheck.records.verdict import Verdict
 from gradcheck.report.finding_text import finding_lines
 from gradcheck.report.paragraphs import WIDTH, fits, paragraph, table
@@ -53,7 +53,9 @@ def _several(report: CheckReport) -> str:
     ordered = sorted(report.parts, key=lambda part: _RANK[part.verdict])
     texts = ["\n".join([headline(part), *check_details(part)]) for part in ordered]
     verdicts = _tally([part.verdict for part in ordered])
-    together = f"{wording.count(len(ordered), 'claim')}, {verdicts}: {wording.cost(report.evaluations, report.seconds)}."
+    together = (
+        f"{wording.count(len(ordered), 'claim')}, {verdicts}: {wording.cost(report.evaluations, report.seconds)}."
+    )
     return "\n\n".join([*texts, *paragraph(together, 0)])
 
 
@@ -101,14 +103,18 @@ def _notes(report: CheckReport, indent: int) -> list[str]:
 
 
 def worst_order(entries: Entries) -> np.ndarray:
-    """Positions of the entries, worst first: by verdict, then by digits agreed, then by the size of the difference."""
+    """Positions of the entries, worst first: by verdict, then by digits agreed, then by the size of the difference.
+
+    What a claim says against itself comes after what a witness says against it.
+    """
     rank = np.array([_RANK[verdict] for verdict in entries.verdict], dtype=int)
     # An unknown number of digits (a claim of NaN) is as bad as none; an unknown difference as bad as the largest.
     digits = np.where(np.isnan(entries.digits), -np.inf, entries.digits)
     with np.errstate(invalid="ignore"):
         difference = np.abs(entries.claim - entries.witness)
     difference = np.where(np.isnan(difference), np.inf, difference)
-    return np.lexsort((-difference, digits, rank))
+    itself = np.array([source == IDENTITY for source in entries.source], dtype=bool)
+    return np.lexsort((-difference, digits, itself, rank))
 
 
 @dataclass(frozen=True, slots=True)
