@@ -39,7 +39,12 @@ def equation(kind: str, identity: str) -> str:
 
 
 def contradictions(claimed: Claimed, measure: Measure, name: Callable[[int], str]) -> list[Contradiction]:
-    """Where a claimed product is not linear in its vector; `name` names the entries of a product."""
+    """Where a claimed product is not linear in its vector; `name` names the entries of a product.
+
+    A claim that raised has another story to tell.
+    """
+    if claimed.finding is not None:
+        return []
     first, second = claimed.random[:2]
     order = ("scaling", "negation", "sum", "zero vector")
     found = []

@@ -23,7 +23,7 @@ from gradcheck.claims.identities import Broken, symmetry
 from gradcheck.claims.mistakes.naming import likely_mistakes
 from gradcheck.claims.policy import Rules
 from gradcheck.claims.product_mistakes import Conduct, product_mistakes
-from gradcheck.claims.second_examination import Curvature, examine_second, judged
+from gradcheck.claims.second_examination import FEW_DIGITS, Curvature, examine_second, judged
 from gradcheck.errors import UsageError
 from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.evaluator import SLOPE
@@ -44,6 +44,9 @@ DIRECTIONS = 5
 OF_GRADIENT = "differences of the confirmed {kind}"
 #: How far away from the point the gradient is tried before its differences are believed, in sizes of the variables.
 ASIDE = 0.0137
+#: First derivatives whose differences are second derivatives.
+FIRST = frozenset({"gradient", "jacobian", "value_and_gradient"})
+UNCONFIRMED = "the first derivative claimed in the same call was not confirmed, so the values were differenced instead"
 #: Identities that are about the symmetry of a Hessian; the others are about products.
 SYMMETRY = ("symmetry", "adjoint pair")
 #: Columns that are looked at in full, at the most, after random directions have shown which rows are wrong.
@@ -139,6 +142,8 @@ class _Look:
     def _slope(self, confirmed: str | None) -> Array | None:
         """The confirmed gradient at the point, flat (m·n,), where its differences can be believed; else None."""
         if confirmed is None:
+            if FIRST.intersection(self.session.subject.targets[self.function].claims):
+                self.notices.append(UNCONFIRMED)
             return None
         claim = self.session.subject.targets[self.function].claims[confirmed]
         if not callable(claim) and not isinstance(claim, str):
@@ -334,8 +339,28 @@ class _Look:
             if self.kind == "hvp":
                 value, bound, tolerance = curvature.through(vectors.random[:, able])
                 reasons = np.full(value.shape, "", dtype=object)
-                parts[1].append(judged(random[here], value, bound, tolerance, reasons, curvature.witness.source))
+                products = judged(random[here], value, bound, tolerance, reasons, curvature.witness.source)
+                parts[1].append(self._only_if_new(products, examined, units[here]))
         return self._seen([_stacked(part) for part in parts if part], True)
+
+    def _only_if_new(self, products: Examined, units: Examined, columns: Array) -> Examined:
+        """Products of random vectors (k, r) rest on the same second differences as the unit vectors (k, k).
+
+        Where the claim is just as linear as it should be, no product is refuted whose row of entries is not.
+        """
+        rows = self.claimed.vectors.random[:, self.able]
+        slack = self.measure.slack
+        combined = columns @ rows.T
+        with np.errstate(invalid="ignore"):
+            allowed = np.stack([slack.of(column) for column in combined.T], axis=1)
+            linear = np.abs(products.claim - combined) <= allowed
+        known = (units.verdict == Verdict.REFUTED).any(axis=1, keepdims=True)
+        doubted = (products.verdict == Verdict.REFUTED) & linear & ~known
+        if not doubted.any():
+            return products
+        verdict, reason = products.verdict.copy(), products.reason.copy()
+        verdict[doubted], reason[doubted] = Verdict.UNDECIDED, FEW_DIGITS
+        return replace(products, verdict=verdict, reason=reason)
 
     def _examined(
         self, base: Array, claim: Array, room: Room, output: int, rows: Array | None

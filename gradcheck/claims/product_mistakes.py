@@ -59,10 +59,13 @@ def product_mistakes(kind: str, units: Case | None, rest: Case | None, conduct: 
         return (size,)
     if units is not None and (side := _other_side(kind, units)) is not None:
         return (side,)
-    if units is not None and units.refuted.any():
-        return likely_mistakes(units)
-    if conduct.broken:
-        return (_not_linear(kind, conduct, units),)
+    wrong = units is not None and bool(units.refuted.any())
+    bent = (_not_linear(kind, conduct, right=units is not None and not wrong),) if conduct.broken else ()
+    if wrong and not any(broken.name == "zero vector" for broken in conduct.broken):
+        assert units is not None
+        return (*likely_mistakes(units), *bent)
+    if bent:
+        return bent
     if rest is None or not rest.refuted.any():
         return ()
     return likely_mistakes(rest)
@@ -104,12 +107,12 @@ def _other_side(kind: str, units: Case) -> Diagnosis | None:
     return Diagnosis(code=DiagnosisCode.TRANSPOSED, text=text, entries=units.names(units.refuted))
 
 
-def _not_linear(kind: str, conduct: Conduct, units: Case | None) -> Diagnosis:
+def _not_linear(kind: str, conduct: Conduct, *, right: bool) -> Diagnosis:
     v, called, product = WORDS[kind]
     sides = "; ".join(_sides(kind, broken) for broken in conduct.broken)
-    right = "it is right for unit vectors, but " if units is not None else ""
+    but = "it is right for unit vectors, but " if right else ""
     text = (
-        f"{right}{product} must be linear in the {called} {v}, and this is not: {sides}. Look for a constant that is "
+        f"{but}{product} must be linear in the {called} {v}, and this is not: {sides}. Look for a constant that is "
         f"added, a norm, an absolute value or a comparison of {v}."
     )
     return Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=())

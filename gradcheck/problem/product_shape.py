@@ -84,8 +84,8 @@ def _refuse_many_outputs(kind: str, layout: Layout, output_shape: tuple[int, ...
     if outputs != 1:
         raise DerivativeShapeError(
             f"the model returns shape {output_shape} ({outputs} outputs), so {kind} cannot be checked: a "
-            "Hessian-vector product is that of one output; pick one with output=..., or claim all second derivatives with hessian=... "
-            f"of shape ({outputs}, {layout.size}, {layout.size})",
+            "Hessian-vector product is that of one output; pick one with output=..., or claim all second derivatives "
+            f"with hessian=... of shape ({outputs}, {layout.size}, {layout.size})",
             name=kind,
             expected=(),
             found=output_shape,
