@@ -134,17 +134,13 @@ def test_a_pair_that_holds_is_told():
 
 
 def test_a_pair_that_does_not_fit_is_refuted_even_where_no_witness_can_speak():
-    told = look(
-        jvp=lambda x, v: (J * np.cos(x)) @ v, vjp=lambda x, w: 1.01 * (J * np.cos(x)).T @ w, budget=1
-    )
+    told = look(jvp=lambda x, v: (J * np.cos(x)) @ v, vjp=lambda x, w: 1.01 * (J * np.cos(x)).T @ w, budget=1)
 
     assert [str(part.verdict) for part in told.parts] == ["undecided", "refuted"]
     assert "jvp and vjp are no adjoint pair" in told.diagnoses[0].text
 
 
 def test_a_claim_within_the_tolerance_asked_for_breaks_no_identity():
-    told = look(
-        jvp=lambda x, v: (J * np.cos(x)) @ v, vjp=lambda x, w: (1 + 1e-5) * (J * np.cos(x)).T @ w, rel_tol=1e-4
-    )
+    told = look(jvp=lambda x, v: (J * np.cos(x)) @ v, vjp=lambda x, w: (1 + 1e-5) * (J * np.cos(x)).T @ w, rel_tol=1e-4)
 
     assert told.verdict == Verdict.CONFIRMED
