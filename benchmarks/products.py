@@ -1,8 +1,8 @@
 """Are right Hessians and products with vectors confirmed, wrong ones refuted, and is the planted mistake named?
 
-Models: the published least-squares problems of More, Garbow & Hillstrom (1981) with Jacobians written by hand. Their sums
-of squares have Hessians by the complex step of the gradient written by hand, exact to rounding, where that takes complex
-numbers. Points: the standard start, then random ones around it.
+Models: the published least-squares problems of More, Garbow & Hillstrom (1981) with Jacobians written by hand. Their
+sums of squares have Hessians by the complex step of the gradient written by hand, exact to rounding, where that takes
+complex numbers. Points: the standard start, then random ones around it.
 """
 
 import warnings

@@ -5,8 +5,9 @@ from dataclasses import replace
 from gradcheck.checks.combined import with_broken_pair
 from gradcheck.checks.entrywise import checked_entries
 from gradcheck.checks.identities import broken_pair
+from gradcheck.checks.measure import measure_of
 from gradcheck.checks.products import checked_product
-from gradcheck.checks.products_claimed import Claimed, measure_of
+from gradcheck.checks.products_claimed import Claimed
 from gradcheck.checks.second_order import checked_second_order
 from gradcheck.checks.with_value import with_value
 from gradcheck.claims.policy import Rules

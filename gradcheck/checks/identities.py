@@ -5,7 +5,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from gradcheck.checks.products_claimed import Claimed, Measure
+from gradcheck.checks.measure import Measure
+from gradcheck.checks.products_claimed import Claimed
 from gradcheck.claims.identities import FACTOR, Broken, adjoint_pair, ignored, linearity
 from gradcheck.records.arrays import Array
 

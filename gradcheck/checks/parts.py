@@ -3,14 +3,17 @@
 import time
 from collections.abc import Sequence
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from gradcheck.checks.identities import Contradiction
-from gradcheck.checks.products_claimed import Measure
+from gradcheck.checks.measure import Measure
 from gradcheck.claims.desk import _VERDICTS, Examined
+from gradcheck.claims.mistakes.case import Case
 from gradcheck.claims.policy import REL_TOL
+from gradcheck.claims.rule import ALLOWANCE
 from gradcheck.counsel.claim_findings import mutation
 from gradcheck.evaluation.pipeline import Session
 from gradcheck.records.finding import Finding
@@ -19,18 +22,45 @@ from gradcheck.records.verdict import DiagnosisCode, Verdict
 from gradcheck.report.check_text import check_text
 from gradcheck.wording import listed
 
+#: What an examination has for each entry.
+FIELDS = ("claim", "value", "bound", "left", "right", "verdict", "source", "reason")
+
 
 def flat(examined: Examined) -> Examined:
     """The same entries as arrays of one axis."""
-    fields = ("claim", "value", "bound", "left", "right", "verdict", "source", "reason")
-    return replace(examined, **{name: np.ravel(getattr(examined, name)) for name in fields})
+    return replace(examined, **{name: np.ravel(getattr(examined, name)) for name in FIELDS})
 
 
 def joined(parts: Sequence[Examined]) -> Examined:
     """Examined columns of several parts side by side; all have the same rows."""
-    fields = ("claim", "value", "bound", "left", "right", "verdict", "source", "reason")
     noise = np.fmax.reduce([part.noise for part in parts])
-    return Examined(**{name: np.concatenate([getattr(p, name) for p in parts], axis=1) for name in fields}, noise=noise)
+    return Examined(**{name: np.concatenate([getattr(p, name) for p in parts], axis=1) for name in FIELDS}, noise=noise)
+
+
+def stacked(parts: Sequence[Examined]) -> Examined:
+    """Examined rows of several parts below each other; all have the same columns."""
+    fields = {name: np.concatenate([getattr(part, name) for part in parts], axis=0) for name in FIELDS}
+    return Examined(**fields, noise=np.concatenate([part.noise for part in parts]))
+
+
+def picked(examined: Examined, which: Any) -> Examined:
+    """Some of the entries: whatever picks from an array."""
+    return replace(examined, **{name: getattr(examined, name)[which] for name in FIELDS})
+
+
+def case_of(examined: Examined, names: NDArray[np.object_], measure: Measure) -> Case:
+    """Examined entries (a, b) as families of mistakes see them."""
+    size = np.fmax(np.abs(examined.claim), np.abs(examined.value))
+    rounding = ALLOWANCE * measure.unit_roundoff * np.nan_to_num(size)
+    return Case(
+        kind="jacobian",
+        claim=examined.claim,
+        value=examined.value,
+        bound=examined.bound,
+        tolerance=measure.abs_tol + measure.rel_tol * size + rounding,
+        refuted=np.asarray(examined.verdict == Verdict.REFUTED),
+        name=lambda i, j: str(names[i, j]),
+    )
 
 
 def entries_from(examined: Examined, index: NDArray[np.intp], names: Sequence[str]) -> Entries:

@@ -5,29 +5,26 @@ A tangent v makes the model a function of one number, ``t -> F(x + t·v)``, a co
 """
 
 import time
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
+from gradcheck.checks.along import examined_by, places
 from gradcheck.checks.entrywise import _judgeable
 from gradcheck.checks.identities import contradictions, indifferent, symbol
-from gradcheck.checks.parts import entries_from, joined, report_of, with_contradictions
-from gradcheck.checks.products_claimed import Claimed, Measure, claimed_products, measure_of
+from gradcheck.checks.measure import Measure, measure_of
+from gradcheck.checks.parts import case_of, entries_from, joined, picked, report_of, with_contradictions
+from gradcheck.checks.products_claimed import Claimed, claimed_products
 from gradcheck.checks.vectors import UNITS_MOST, Vectors, random_rows, vectors_of
 from gradcheck.claims.desk import Examined
-from gradcheck.claims.examination import examine
 from gradcheck.claims.mistakes.case import Case
 from gradcheck.claims.policy import Rules
 from gradcheck.claims.product_mistakes import Conduct, product_mistakes
-from gradcheck.claims.rule import ALLOWANCE
-from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import Session
-from gradcheck.evaluation.substituted import substituted
-from gradcheck.problem.subject import Subject
+from gradcheck.evaluation.substituted import mixed
 from gradcheck.records.arrays import Array, IntArray
 from gradcheck.records.report import CheckReport, Diagnosis
 from gradcheck.records.verdict import Verdict
-from gradcheck.witnesses.steps import Room, room_along
 from gradcheck.wording import count
 
 #: Outputs up to which a cotangent of one of them alone is tried.
@@ -88,7 +85,7 @@ def checked_product(
     if Verdict.REFUTED in entries.verdict and claimed.finding is None:
         same, by_sign, every = indifferent(claimed, measure, name)
         conduct = Conduct(same=same, by_sign=by_sign, every=every, broken=[each.broken for each in found])
-        diagnoses = product_mistakes(kind, *_cases(session.subject, kind, looked, measure), conduct)
+        diagnoses = product_mistakes(kind, *_cases(kind, looked, measure), conduct)
     report = report_of(
         session,
         function,
@@ -162,7 +159,7 @@ def _with_cotangents(
             session,
             function,
             claimed.judged[:, able],
-            weights @ centre,
+            mixed(centre, weights),
             measure,
             rules,
             columns=able,
@@ -180,7 +177,7 @@ def _with_cotangents(
             session,
             function,
             claim,
-            weights @ centre,
+            mixed(centre, weights),
             measure,
             rules,
             rows=rows,
@@ -197,109 +194,13 @@ def _with_cotangents(
     )
 
 
-def examined_by(
-    session: Session,
-    function: str,
-    claim: Array,
-    centre: Array,
-    measure: Measure,
-    rules: Rules,
-    *,
-    columns: IntArray | None = None,
-    rows: Array | None = None,
-    mixture: Array | None = None,
-    outputs: IntArray | None = None,
-    magnitude: Array | None = None,
-    source: str = "model",
-    witnesses: tuple[str, ...] | None = None,
-) -> Examined:
-    """Examine derivatives of mixtures of the outputs of a source, along coordinates or along rows.
-
-    Parameters
-    ----------
-    claim : ndarray, shape (r, d)
-    centre : ndarray, shape (r,)
-        Values at the point.
-    columns, rows : ndarray, shape (d,) or (d, n)
-        One of the two.
-    mixture, outputs : ndarray, shape (r, m) or (r,), optional
-        As in `substituted`.
-    magnitude : ndarray, shape (r,), optional
-        Size of the terms that the outputs are sums of.
-    source : str
-        Whose outputs: the model's, or those of a claim as a function of its own.
-    """
-    subject = session.subject
-    if rows is None:
-        assert columns is not None
-        base, directions, room = subject.start, columns, room_along(subject.start, columns, subject.domain)
-    else:
-        base, directions, room = np.zeros(len(rows)), np.arange(len(rows)), shared_room(subject, rows)
-    inquiry = examine(
-        base,
-        directions,
-        claim,
-        room,
-        centre,
-        room.typical if rows is not None else subject.domain.scale[directions],
-        rel_tol=measure.rel_tol,
-        abs_tol=measure.abs_tol,
-        unit_roundoff=measure.unit_roundoff,
-        witnesses=rules.witnesses if witnesses is None else witnesses,
-        magnitude=magnitude,
-    )
-    inquiry = substituted(inquiry, subject.start, rows=rows, mixture=mixture, outputs=outputs)
-    return conduct_one(addressed(inquiry, function=function, source=source), session.gate)
-
-
-def shared_room(subject: Subject, rows: Array) -> Room:
-    """Room along rows that may be gone along at the same time; the bounds are a box, and half of two ways inside it add
-    up to one inside.
-    """
-    room = room_along(subject.start, rows, subject.domain)
-    return replace(room, below=room.below / len(rows), above=room.above / len(rows))
-
-
-def places(rows: IntArray, columns: IntArray) -> IntArray:
-    """(a·b, 2): row and column of each entry, row by row."""
-    return np.stack([np.repeat(rows, columns.size), np.tile(columns, rows.size)], axis=1)
-
-
-def _cases(subject: Subject, kind: str, looked: Looked, measure: Measure) -> tuple[Case | None, Case | None]:
+def _cases(kind: str, looked: Looked, measure: Measure) -> tuple[Case | None, Case | None]:
     """The entries with unit vectors, and the others, as families of mistakes see them."""
-    a, b = looked.examined.claim.shape
-    names = np.array(looked.names, dtype=object).reshape(a, b)
-    axis = 1 if kind == "jvp" else 0
-    cut = looked.units
-    units, rest = (
-        case_of(part, picked, measure)
-        for part, picked in (
-            (_part(looked.examined, axis, slice(cut)), _taken(names, axis, slice(cut))),
-            (_part(looked.examined, axis, slice(cut, None)), _taken(names, axis, slice(cut, None))),
-        )
-    )
-    return (units if cut and looked.whole else None), rest
-
-
-def _taken(array: np.ndarray, axis: int, part: slice) -> np.ndarray:
-    return array[:, part] if axis == 1 else array[part]
-
-
-def _part(examined: Examined, axis: int, part: slice) -> Examined:
-    fields = ("claim", "value", "bound", "left", "right", "verdict", "source", "reason")
-    return replace(examined, **{name: _taken(getattr(examined, name), axis, part) for name in fields})
-
-
-def case_of(examined: Examined, names: np.ndarray, measure: Measure) -> Case:
-    """Examined entries (a, b) as families of mistakes see them."""
-    size = np.fmax(np.abs(examined.claim), np.abs(examined.value))
-    rounding = ALLOWANCE * measure.unit_roundoff * np.nan_to_num(size)
-    return Case(
-        kind="jacobian",
-        claim=examined.claim,
-        value=examined.value,
-        bound=examined.bound,
-        tolerance=measure.abs_tol + measure.rel_tol * size + rounding,
-        refuted=np.asarray(examined.verdict == Verdict.REFUTED),
-        name=lambda i, j: str(names[i, j]),
-    )
+    names = np.array(looked.names, dtype=object).reshape(looked.examined.claim.shape)
+    every = slice(None)
+    cut, left = slice(looked.units), slice(looked.units, None)
+    units, rest = ((every, cut), (every, left)) if kind == "jvp" else ((cut, every), (left, every))
+    others = case_of(picked(looked.examined, rest), names[rest], measure)
+    if not looked.units or not looked.whole:
+        return None, others
+    return case_of(picked(looked.examined, units), names[units], measure), others

@@ -6,8 +6,6 @@ import numpy as np
 
 from gradcheck.checks.claimed import AD_SOURCES
 from gradcheck.checks.vectors import Vectors
-from gradcheck.claims.identities import Slack
-from gradcheck.claims.policy import DEFAULT_REL_TOL, REL_TOL, Rules
 from gradcheck.counsel.claim_findings import failing_claim
 from gradcheck.errors import UsageError
 from gradcheck.evaluation.pipeline import Session
@@ -120,37 +118,3 @@ def _nothing(session: Session, function: str, kind: str, many: int) -> Array:
     outputs = int(np.prod(session.shape_of(function), dtype=int))
     size = session.subject.layout.size
     return np.full((many, {"jvp": outputs, "vjp": size}.get(kind, outputs * size)), np.nan)
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Measure:
-    """To how many digits a claim is judged.
-
-    Attributes
-    ----------
-    precision : str
-        The dtype that values or claim come in.
-    unit_roundoff, rel_tol, abs_tol : float
-    """
-
-    precision: str
-    unit_roundoff: float
-    rel_tol: float
-    abs_tol: float
-
-    @property
-    def slack(self) -> Slack:
-        """The same for identities."""
-        return Slack(rel_tol=self.rel_tol, abs_tol=self.abs_tol, unit_roundoff=self.unit_roundoff)
-
-
-def measure_of(session: Session, function: str, kind: str, rules: Rules) -> Measure:
-    """By the precision that the model and the claim turned out to have; the claim has been asked."""
-    kinds = session.ledger.output_kinds.get(function, "float64"), session.ledger.claim_kinds.get((function, kind), "")
-    precision = next((word for word in kinds if word in REL_TOL), "float64")
-    return Measure(
-        precision=precision,
-        unit_roundoff=float(np.finfo(precision).eps / 2),
-        rel_tol=REL_TOL.get(precision, DEFAULT_REL_TOL) if rules.rel_tol is None else rules.rel_tol,
-        abs_tol=rules.abs_tol,
-    )

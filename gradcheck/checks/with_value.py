@@ -4,8 +4,8 @@ from dataclasses import replace
 
 import numpy as np
 
+from gradcheck.checks.measure import measure_of
 from gradcheck.checks.parts import appended, entries_from
-from gradcheck.checks.products_claimed import measure_of
 from gradcheck.claims.policy import Rules
 from gradcheck.claims.rule import Tolerance
 from gradcheck.claims.second_examination import judged

@@ -6,8 +6,10 @@ Whatever examines a Jacobian examines products of it with vectors this way, and 
 """
 
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from gradcheck.evaluation.conduct import Result
 from gradcheck.evaluation.protocol import Inquiry, Request
@@ -47,14 +49,23 @@ def substituted(
         while True:
             reply = yield request if rows is None else _translated(request, base, rows)
             if mixture is not None:
-                with np.errstate(invalid="ignore", over="ignore"):
-                    reply = replace(reply, values=reply.values @ mixture.T)
+                reply = replace(reply, values=mixed(reply.values, mixture))
             elif outputs is not None:
                 reply = replace(reply, values=reply.values[:, :, outputs])
             request = inquiry.send(reply)
     except StopIteration as end:
         result: Result = end.value
         return result
+
+
+def mixed(values: NDArray[Any], mixture: Array) -> NDArray[Any]:
+    """Each row of a mixture (r, m) times values (..., m): (..., r), equal for equal values to the last bit.
+
+    A product of matrices is rounded differently from place to place; where nothing changes along a variable, the
+    difference would look like steps.
+    """
+    with np.errstate(invalid="ignore", over="ignore"):
+        return np.stack([(values * row).sum(axis=-1) for row in mixture], axis=-1)
 
 
 def _translated(request: Request, base: Array, rows: Array) -> Request:
