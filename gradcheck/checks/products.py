@@ -15,7 +15,7 @@ from gradcheck.checks.identities import contradictions, indifferent, symbol
 from gradcheck.checks.measure import Measure, measure_of
 from gradcheck.checks.parts import case_of, entries_from, joined, picked, report_of, with_contradictions
 from gradcheck.checks.products_claimed import Claimed, claimed_products
-from gradcheck.checks.vectors import UNITS_MOST, Vectors, random_rows, vectors_of
+from gradcheck.checks.vectors import UNITS_MOST, Vectors, few_if_long, random_rows, vectors_of
 from gradcheck.claims.desk import Examined
 from gradcheck.claims.mistakes.case import Case
 from gradcheck.claims.policy import Rules
@@ -168,9 +168,10 @@ def _with_cotangents(
         )
         columns = able
     else:
-        rows = np.zeros((DIRECTIONS, subject.layout.size))
-        rows[:, able] = random_rows(DIRECTIONS, subject.domain.scale[able], rules.seed + 1)
-        across = tuple(f"along direction {j + 1}" for j in range(DIRECTIONS))
+        many = few_if_long(DIRECTIONS, subject.layout.size)
+        rows = np.zeros((many, subject.layout.size))
+        rows[:, able] = random_rows(many, subject.domain.scale[able], rules.seed + 1)
+        across = tuple(f"along direction {j + 1}" for j in range(many))
         with np.errstate(invalid="ignore", over="ignore"):
             claim = claimed.judged @ rows.T
         examined = examined_by(
@@ -184,7 +185,7 @@ def _with_cotangents(
             mixture=weights,
             magnitude=magnitude,
         )
-        columns = subject.layout.size + np.arange(DIRECTIONS)
+        columns = subject.layout.size + np.arange(many)
     return Looked(
         examined=examined,
         names=tuple(f"{name} for {label}" for label in labels for name in across),

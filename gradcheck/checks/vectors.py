@@ -12,6 +12,8 @@ from gradcheck.records.arrays import Array, IntArray
 UNITS_MOST = 50
 #: Random vectors beside unit vectors, and instead of them.
 BESIDE, INSTEAD = 4, 8
+#: Vectors of more entries than this are long: fewer of them are held at a time.
+LONG, INSTEAD_IF_LONG = 20_000, 3
 #: How much longer each random vector is than the last but three; none has the length of a unit vector.
 LENGTHS = (1.0, 0.37, 7.3, 0.012)
 
@@ -67,10 +69,16 @@ def vectors_of(sizes: Array, able: IntArray, rules: Rules, *, units_most: int = 
         Number of unit vectors up to which they are all tried, unless `directions` says otherwise.
     """
     all_units = rules.directions == "all" or (rules.directions is None and able.size <= units_most)
-    many = rules.directions if isinstance(rules.directions, int) else BESIDE if all_units else INSTEAD
+    instead = few_if_long(INSTEAD, sizes.size)
+    many = rules.directions if isinstance(rules.directions, int) else BESIDE if all_units else instead
     random = np.zeros((max(2, int(many)), sizes.size))
     random[:, able] = random_rows(len(random), sizes[able], rules.seed)
     return Vectors(units=able if all_units else np.zeros(0, np.intp), random=random)
+
+
+def few_if_long(many: int, size: int) -> int:
+    """How many vectors of so many entries are tried where `many` short ones would be."""
+    return many if size <= LONG else min(many, INSTEAD_IF_LONG)
 
 
 def random_rows(many: int, sizes: Array, seed: int) -> Array:
@@ -79,6 +87,8 @@ def random_rows(many: int, sizes: Array, seed: int) -> Array:
     Equal magnitudes would let two wrong entries cancel; see the report on directions.
     """
     rng = np.random.default_rng(seed)
-    shape = many, sizes.size
-    lengths = np.resize(LENGTHS, many)[:, None]
-    return np.asarray(lengths * sizes * rng.choice([-1.0, 1.0], shape) * rng.uniform(0.5, 1.0, shape))
+    rows = rng.uniform(-0.5, 0.5, (many, sizes.size))
+    rows += np.copysign(0.5, rows)
+    rows *= sizes
+    rows *= np.resize(LENGTHS, many)[:, None]
+    return rows
