@@ -98,13 +98,13 @@ class Curvatures:
             return f"{row} along {label}"
         return row if self.layout.size == 1 and self.outputs == 1 else f"({row}, {label})"
 
-    def visible(self, examined: Examined, reach: Array) -> Array:
+    def visible(self, examined: Examined, reach: Array, allowed: Array | float = 0.0) -> Array:
         """By how much a single entry of the Hessian must be off to be refuted in each examined place.
 
-        `reach` is what such an error counts there at the least.
+        `reach` is what such an error counts there at the least, `allowed` what sums of many terms may be off.
         """
         with np.errstate(invalid="ignore"):
-            off = self.measure.abs_tol + self.measure.rel_tol * np.abs(examined.claim) + 4 * examined.bound
+            off = self.measure.abs_tol + self.measure.rel_tol * np.abs(examined.claim) + 4 * examined.bound + allowed
             return np.asarray(off / reach)
 
     def seen(self, parts: list[Examined]) -> Seen:

@@ -8,7 +8,7 @@ from gradcheck.checks.along import places, shared_room
 from gradcheck.checks.curvature import Curvatures, Seen
 from gradcheck.checks.parts import entries_from, stacked
 from gradcheck.claims.desk import Examined
-from gradcheck.claims.second_examination import FEW_DIGITS, Curvature, examine_second, judged
+from gradcheck.claims.second_examination import FEW_DIGITS, SUMMED, Curvature, examine_second, judged
 from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.substituted import substituted
 from gradcheck.records.arrays import Array
@@ -18,6 +18,8 @@ from gradcheck.wording import count, number
 
 #: Variables up to which all entries are looked at: a pair of them takes about 16 evaluations.
 VALUES_MOST = 16
+#: Why a product is confirmed that second differences alone leave open.
+FOLLOWS = "follows from the entries, which are confirmed and in which the product is linear"
 #: Directions that are looked along where there are more.
 DIRECTIONS = 5
 
@@ -43,7 +45,13 @@ def by_values(curvatures: Curvatures) -> Seen:
 
 
 def _examined(
-    curvatures: Curvatures, base: Array, claim: Array, room: Room, output: int, rows: Array | None
+    curvatures: Curvatures,
+    base: Array,
+    claim: Array,
+    room: Room,
+    output: int,
+    rows: Array | None,
+    terms: Array | None = None,
 ) -> tuple[Examined, Curvature]:
     """The claimed Hessian of one output, of the variables at hand or of ways along rows."""
     measure = curvatures.measure
@@ -55,6 +63,7 @@ def _examined(
         rel_tol=measure.rel_tol,
         abs_tol=measure.abs_tol,
         unit_roundoff=measure.unit_roundoff,
+        terms=terms,
     )
     chosen = np.array([output]) if curvatures.outputs > 1 else None
     inquiry = substituted(inquiry, curvatures.session.subject.start, rows=rows, outputs=chosen)
@@ -64,7 +73,8 @@ def _examined(
 def _through(curvatures: Curvatures, curvature: Curvature, units: Examined, claim: Array) -> Examined:
     """Products with random vectors (k, r), which rest on the same second differences as the entries (k, k).
 
-    Where the claim is just as linear as it should be, no product is refuted whose row of entries is not.
+    Where the claim is just as linear as it should be, its entries decide: a product is confirmed with its row of
+    entries, and not refuted without it. Else the verdict would depend on how much cancels for which vector.
     """
     rows = curvatures.claimed.vectors.random[:, curvatures.able]
     value, bound, tolerance = curvature.through(rows)
@@ -77,10 +87,11 @@ def _through(curvatures: Curvatures, curvature: Curvature, units: Examined, clai
         linear = np.abs(products.claim - combined) <= allowed
     known = (units.verdict == Verdict.REFUTED).any(axis=1, keepdims=True)
     doubted = (products.verdict == Verdict.REFUTED) & linear & ~known
-    if not doubted.any():
-        return products
+    right = (units.verdict == Verdict.CONFIRMED).all(axis=1, keepdims=True)
+    follows = (products.verdict != Verdict.CONFIRMED) & linear & right
     verdict, reason = products.verdict.copy(), products.reason.copy()
     verdict[doubted], reason[doubted] = Verdict.UNDECIDED, FEW_DIGITS
+    verdict[follows], reason[follows] = Verdict.CONFIRMED, FOLLOWS
     return replace(products, verdict=verdict, reason=reason)
 
 
@@ -90,12 +101,16 @@ def _along_directions(curvatures: Curvatures) -> Seen:
     random = curvatures.claimed.vectors.random
     rows = random[: directions if isinstance(directions, int) else DIRECTIONS]
     room = shared_room(curvatures.session.subject, rows)
-    parts = []
+    parts, allowed = [], []
     for output in range(outputs):
-        here = slice(output * n, (output + 1) * n)
+        products = curvatures.claimed.random[: len(rows), output * n : (output + 1) * n]
         with np.errstate(invalid="ignore", over="ignore"):
-            claim = rows @ curvatures.claimed.random[: len(rows), here].T
-        parts.append(_examined(curvatures, np.zeros(len(rows)), claim, room, output, rows)[0])
+            claim = rows @ products.T
+            # Both ways to sum the terms of ⟨u, H·v⟩ = ⟨v, H·u⟩; what cancels in one of them cancels in the claim too.
+            squares = np.nan_to_num(rows**2 @ (products**2).T, posinf=0.0)
+        terms = np.sqrt(np.minimum(squares, squares.T))
+        allowed.append(SUMMED * curvatures.measure.rel_tol * terms)
+        parts.append(_examined(curvatures, np.zeros(len(rows)), claim, room, output, rows, terms)[0])
     examined = stacked(parts)
     labels = [f"v{i + 1}" for i in range(len(rows))]
     prefix = [""] if outputs == 1 else [f"{curvatures.function}[{output}]: " for output in range(outputs)]
@@ -105,18 +120,19 @@ def _along_directions(curvatures: Curvatures) -> Seen:
         entries=entries_from(examined, index, names),
         rest=examined,
         rest_names=np.array(names, dtype=object).reshape(examined.claim.shape),
-        notices=(_visible(curvatures, examined, rows),),
+        notices=(_visible(curvatures, examined, rows, np.concatenate(allowed)),),
     )
 
 
-def _visible(curvatures: Curvatures, examined: Examined, rows: Array) -> str:
+def _visible(curvatures: Curvatures, examined: Examined, rows: Array, allowed: Array) -> str:
     """What random directions would have seen of an error in any one entry."""
     looked = (
         f"{count(curvatures.layout.size, 'variable')}: looked at along {count(len(rows), 'random direction')} by "
         "function values"
     )
     least = np.abs(rows[:, curvatures.able]).min(axis=1)
-    seen = float(curvatures.visible(examined, np.tile(np.outer(least, least), (curvatures.outputs, 1))).min())
+    reach = np.tile(np.outer(least, least), (curvatures.outputs, 1))
+    seen = float(curvatures.visible(examined, reach, allowed).min())
     if not np.isfinite(seen):
         return looked
     return (

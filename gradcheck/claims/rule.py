@@ -38,7 +38,8 @@ class Tolerance:
 
     Attributes
     ----------
-    rel_tol, abs_tol : float
+    rel_tol : float
+    abs_tol : float, or ndarray broadcastable to the claim
     rounding : ndarray, broadcastable to the claim
         ε/τ: rounding floor of the output over the typical size of the variable.
     zero_allowance : float
@@ -46,7 +47,7 @@ class Tolerance:
     """
 
     rel_tol: float
-    abs_tol: float
+    abs_tol: float | Array
     rounding: Array
     zero_allowance: float = ZERO_ALLOWANCE
 

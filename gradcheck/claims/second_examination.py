@@ -19,6 +19,8 @@ FEW_DIGITS = (
     "second differences of the values leave a bound wider than the tolerance; a gradient claimed in the same call, "
     "once it is confirmed, shows more digits"
 )
+#: What independent errors of many terms add up to, at the most, in units of the root of the sum of their squares.
+SUMMED = 4.0
 #: As in `rule`, for a second derivative that is zero: the bound of the witness is about 400·ε/τ² there, and up to
 #: 2e4·ε/τ² where the steps have to shrink (measured on published test problems, More, Garbow & Hillstrom 1981).
 ZERO_ALLOWANCE = 1e5
@@ -60,6 +62,7 @@ def examine_second(
     rel_tol: float,
     abs_tol: float,
     unit_roundoff: float = np.finfo(float).eps / 2,
+    terms: Array | None = None,
 ) -> Inquiry[tuple[Examined, Curvature]]:
     """Examine a claimed Hessian (k, k) of a function of one output.
 
@@ -72,6 +75,9 @@ def examine_second(
         Along all k coordinates.
     centre : ndarray, shape (1,)
     rel_tol, abs_tol, unit_roundoff : float
+    terms : ndarray, shape (k, k), optional
+        Where the claims are sums of many right entries: the root of the sum of the squares of what is summed, of which
+        each may be off by `rel_tol`.
 
     Returns
     -------
@@ -82,7 +88,7 @@ def examine_second(
     witness = yield from second_differences(base, room, centre)
     tolerance = Tolerance(
         rel_tol=rel_tol,
-        abs_tol=abs_tol,
+        abs_tol=abs_tol if terms is None else abs_tol + SUMMED * rel_tol * terms,
         rounding=_rounding(witness, centre, unit_roundoff) / np.outer(room.typical, room.typical),
         zero_allowance=ZERO_ALLOWANCE,
     )
