@@ -27,7 +27,8 @@ def by_slopes(curvatures: Curvatures, slopes: Slopes) -> Seen:
     parts = []
     if units.size:
         parts.append(_differences(curvatures, slopes, claimed.units.T[curvatures.places], columns=units))
-    if curvatures.kind == "hvp" or not units.size:
+    decided = units.size and Verdict.REFUTED in parts[0].verdict
+    if not units.size or (curvatures.kind == "hvp" and not decided):
         random = claimed.random.T[curvatures.places]
         parts.append(_differences(curvatures, slopes, random, rows=claimed.vectors.random))
     seen = curvatures.seen(parts)

@@ -52,7 +52,7 @@ def contradictions(claimed: Claimed, measure: Measure, name: Callable[[int], str
     for broken in linearity(first, second, claimed.probed, measure.slack):
         vector = claimed.vectors.judged + order.index(broken.name)
         place = (vector, broken.entry) if claimed.kind == "vjp" else (broken.entry, vector)
-        text = f"{equation(claimed.kind, broken.name)}, {name(broken.entry)}"
+        text = f"{equation(claimed.kind, broken.name)} in {name(broken.entry)}"
         found.append(Contradiction(broken=broken, name=text, place=place))
     return found
 
@@ -76,7 +76,9 @@ def broken_pair(pushed: Claimed, pulled: Claimed, measure: Measure) -> Contradic
         return None
     broken, v, w = found
     place = pulled.vectors.units.size + w, pushed.vectors.units.size + v
-    return Contradiction(broken=broken, name=f"⟨jvp(v), w⟩ = ⟨v, vjp(w)⟩, v {v + 1}, w {w + 1}", place=place)
+    return Contradiction(
+        broken=broken, name=f"⟨jvp(v), w⟩ = ⟨v, vjp(w)⟩ for random v {v + 1} and w {w + 1}", place=place
+    )
 
 
 def broken_symmetry(

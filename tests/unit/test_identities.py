@@ -109,7 +109,7 @@ def test_a_broken_identity_is_an_entry_with_both_sides():
     told = look(jvp=lambda x, v: (J * np.cos(x)) @ np.abs(v))
 
     entries = told.entries
-    place = next(i for i, name in enumerate(entries.name) if name.startswith("jvp(-v) = -jvp(v), "))
+    place = next(i for i, name in enumerate(entries.name) if name.startswith("jvp(-v) = -jvp(v) in "))
     assert entries.verdict[place] == Verdict.REFUTED
     assert entries.source[place] == "identity"
     assert entries.claim[place] == pytest.approx(-entries.witness[place])
