@@ -7,6 +7,7 @@ import pytest
 
 import gradcheck
 from gradcheck import DerivativeShapeError, DiagnosisCode, UsageError, Verdict
+from gradcheck.checking import check_described
 from gradcheck.records.finding import FindingCode
 
 A = np.array([[1.0, 2.0, 3.0], [4.0, 5.0, 6.0], [0.0, 1.0, 2.5], [1.0, 1.0, 1.0]])
@@ -339,7 +340,7 @@ def test_a_whole_number_variable_is_in_no_vector():
         variables=[gradcheck.Variable("span", 1.5), gradcheck.Variable("plies", 4, integer=True)],
         objective=gradcheck.Function(lambda x: x[0] ** 2 * x[1], jvp=forward),
     )
-    report = gradcheck.audit(problem).claims[0]
+    report = check_described(problem)[0]
 
     assert report.verdict == Verdict.CONFIRMED
     assert set(seen) == {0.0}
