@@ -155,7 +155,7 @@ def test_an_integer_inside_a_nesting_is_passed_through_untouched_with_a_notice()
 
     assert vector.tolist() == [0.5]
     assert type(x["count"]) is int
-    assert any("['count']" in notice for notice in layout.notices)
+    assert any('["count"]' in notice for notice in layout.notices)
 
 
 @pytest.mark.parametrize("flag", [True, "fast", None, b"raw"])
@@ -188,7 +188,7 @@ def test_complex_parameters_are_refused_with_the_mend(at):
 
 @pytest.mark.parametrize(
     ("at", "name"),
-    [([1.0, float("nan")], r"x\[1\]"), ({"a": np.array([0.5, np.inf])}, r"x\['a'\]\[1\]"), (float("nan"), "x")],
+    [([1.0, float("nan")], r"x\[1\]"), ({"a": np.array([0.5, np.inf])}, r'x\["a"\]\[1\]'), (float("nan"), "x")],
 )
 def test_an_entry_that_is_not_finite_is_refused_by_name(at, name):
     with pytest.raises(UsageError, match=f"at {name}; every entry must be finite"):
@@ -215,7 +215,7 @@ def test_entries_are_named_by_their_place():
 
 
 def test_entries_of_a_nesting_are_named_by_their_path():
-    assert names_of({"a": np.ones(2), "b": {"c": 0.5}}, root="p") == ["p['a'][0]", "p['a'][1]", "p['b']['c']"]
+    assert names_of({"a": np.ones(2), "b": {"c": 0.5}}, root="p") == ['p["a"][0]', 'p["a"][1]', 'p["b"]["c"]']
 
 
 def test_a_name_is_made_for_one_entry_without_making_all():
