@@ -19,6 +19,7 @@ from gradcheck.evaluation.ledger import Ledger
 from gradcheck.evaluation.outputs import NUMBERS, Output
 from gradcheck.evaluation.protocol import Status
 from gradcheck.problem.derivative_shape import claim_matrix
+from gradcheck.problem.output_layout import output_parts, precision_of
 from gradcheck.problem.subject import Subject, Target
 from gradcheck.records.arrays import Array
 
@@ -43,6 +44,8 @@ class Evaluator:
         self.ledger = ledger
         self.shapes: dict[str, tuple[int, ...]] = {}
         self.double: set[str] = set()
+        if subject.layout.holds_jax:
+            self._keep_double()
 
     def __call__(self, calls: Sequence[Call]) -> list[Outcome]:
         with warnings.catch_warnings(), np.errstate(all="ignore"):
@@ -53,7 +56,7 @@ class Evaluator:
 
     def _values(self, call: Call) -> Outcome:
         targets = [target for target in self.subject.targets.values() if target.run == call.run]
-        outputs = [Output(target, call, self.shapes, self.ledger) for target in targets]
+        outputs = [Output(target, call, self.shapes, self.ledger, self.subject.outputs) for target in targets]
         tally = _Tally()
         began = time.perf_counter()
         try:
@@ -174,6 +177,16 @@ class Evaluator:
         self.ledger.calls["model"] += 1
         return True
 
+    def _keep_double(self) -> None:
+        """Arrays of jax would reach the model rounded to single precision, where the user's setting is that."""
+        from gradcheck.evaluation.arithmetic.with_jax import is_double
+
+        if not is_double():
+            self.double |= set(self.subject.runs)
+            self.ledger.notices.append(
+                "jax is in single precision; its arrays reached the model in double precision, for these calls only"
+            )
+
     def _scope(self, run: str) -> AbstractContextManager[Any]:
         if run not in self.double:
             return nullcontext()
@@ -225,8 +238,9 @@ class Evaluator:
                 claim, mutated = real.call(claim, self.subject.layout, call.moves.base)
             if mutated:
                 self.ledger.mutated.add(f"{kind} of {target.name}")
-        self.ledger.claim_kinds[target.name, kind] = str(getattr(claim, "dtype", "float64"))
-        return claim_matrix(kind, claim, self.subject.layout, self.shapes[target.name])
+        self.ledger.claim_kinds[target.name, kind] = precision_of(claim)
+        outputs = self.subject.outputs.get(target.name)
+        return claim_matrix(kind, claim, self.subject.layout, self.shapes[target.name], outputs)
 
     def _automatic(self, call: Call, target: Target) -> NDArray[Any]:
         # Imported when used: jax and autograd are extras, and slow to load.
@@ -237,6 +251,9 @@ class Evaluator:
         assert call.rows is not None
         sweep = automatic.jvp if call.arithmetic == "jvp" else automatic.vjp
         function = _of_one_point(self.subject.runs[target.run], target.pick, self.subject.batched)
+        outputs = self.subject.outputs.get(target.name)
+        if outputs is not None and outputs.single is None:
+            function = automatic.in_one_vector(function, partial(output_parts, outputs))
         return np.asarray(sweep(function, self.subject.layout, call.moves.base, call.rows), dtype=float)
 
 

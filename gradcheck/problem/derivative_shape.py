@@ -108,8 +108,8 @@ def _refuse_pair(kind: str, raw: Any, layout: Layout) -> None:
     except ValueError:
         return
     raise DerivativeShapeError(
-        "the gradient claim returned a pair, (value, gradient): give it with value_and_gradient=..., or pick the second "
-        "part, gradient=lambda x: pair(x)[1]",
+        "the gradient claim returned a pair, (value, gradient): give it with value_and_gradient=..., or pick the "
+        "second part, gradient=lambda x: pair(x)[1]",
         name=kind,
     )
 

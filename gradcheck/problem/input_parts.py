@@ -10,7 +10,7 @@ from gradcheck.problem.containers import is_jax_array, opened
 from gradcheck.problem.numbers import is_floating, rectangle
 from gradcheck.problem.template import Leaf, Place, Read, Untouched
 from gradcheck.records.arrays import Array
-from gradcheck.wording import brief, listed
+from gradcheck.wording import brief, count, listed
 
 #: So many parts are named in a notice.
 _NAMED = 5
@@ -58,9 +58,10 @@ class InputParts:
     def _other_array(self, value: Any, place: Place, top: bool) -> Read:
         """An array that is no plain one of numpy."""
         if isinstance(value, np.ma.MaskedArray) and np.ma.is_masked(value):
+            masked = int(np.ma.getmaskarray(value).sum())
             raise UsageError(
-                f"{place} is a masked array with {int(np.ma.getmaskarray(value).sum())} masked entries, which are no numbers "
-                "to move; give only the valid ones, value.compressed(), and put them in place inside the model"
+                f"{place} is an array with {count(masked, 'masked entry', 'masked entries')}, which cannot be moved; give "
+                "the valid ones only, value.compressed(), and put them in place inside the model"
             )
         jax = is_jax_array(value)
         try:

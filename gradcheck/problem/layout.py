@@ -63,12 +63,12 @@ class Layout:
     _program: tuple[Template, ...] = field(init=False, repr=False)
     _starts: tuple[int, ...] = field(init=False, repr=False)
     #: Leaves whose axes do not stand in C's order in memory.
-    _turned: tuple[Leaf, ...] = field(init=False, repr=False)
+    turned: tuple[Leaf, ...] = field(init=False, repr=False)
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "_program", program_of(self.template))
         object.__setattr__(self, "_starts", tuple(leaf.start for leaf in self.leaves))
-        object.__setattr__(self, "_turned", tuple(leaf for leaf in self.leaves if leaf.axes is not None))
+        object.__setattr__(self, "turned", tuple(leaf for leaf in self.leaves if leaf.axes is not None))
 
     @property
     def size(self) -> int:
@@ -108,20 +108,20 @@ class Layout:
         """The vector with the entries of each leaf as they stand in memory; the vector itself where it is the caller's
         `own` to give away and nothing has to move, else a copy.
         """
-        if own and not self._turned:
+        if own and not self.turned:
             return vector
         memory = vector.copy()
-        for leaf in self._turned:
+        for leaf in self.turned:
             part = vector[leaf.start : leaf.stop].reshape(leaf.shape)
             memory[leaf.start : leaf.stop] = part.transpose(leaf.axes).reshape(-1)
         return memory
 
     def memory_positions(self, entries: IntArray) -> IntArray:
         """Where entries of the vector stand in order of memory."""
-        if not self._turned:
+        if not self.turned:
             return entries
         positions = entries.copy()
-        for leaf in self._turned:
+        for leaf in self.turned:
             here = (entries >= leaf.start) & (entries < leaf.stop)
             if here.any():
                 index = np.unravel_index(entries[here] - leaf.start, leaf.shape)

@@ -30,7 +30,7 @@ def real_numbers(value: Any, what: str) -> Array:
         if array.dtype.kind == "c":
             raise UsageError(f"{what} is complex ({array.dtype}); derivatives of a real model are real")
         if array.dtype.kind in "MmUS" or array.dtype == _FLOAT0:
-            raise UsageError(f"{what} holds {_said(array)}; an array of real numbers is needed")
+            raise UsageError(f"{what} is {_said(array)}; an array of real numbers is needed")
         return array.astype(float)
     except (TypeError, ValueError) as error:
         if isinstance(error, UsageError):

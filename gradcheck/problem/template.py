@@ -86,7 +86,7 @@ class Leaf:
             part = part.reshape(self.shape_in_memory).transpose(self.inverse)
         elif len(self.shape) != 1:
             part = part.reshape(self.shape)
-        return _to_jax(part) if self.jax else part
+        return to_jax(part) if self.jax else part
 
     def restore(self, vector: NDArray[Any]) -> Any:
         """The model's own copy of this part."""
@@ -95,7 +95,7 @@ class Leaf:
         part = vector[self.start : self.stop].reshape(self.shape)
         if self.axes is not None:
             return part.transpose(self.axes).copy().transpose(self.inverse)
-        return _to_jax(part.copy()) if self.jax else part.copy()
+        return to_jax(part.copy()) if self.jax else part.copy()
 
     def name(self, index: int) -> str:
         """Name of the entry at `index` of the whole vector."""
@@ -218,7 +218,8 @@ def filled(program: Iterable[Template], of_leaf: Callable[[Leaf], Any]) -> Any:
     return ready[0]
 
 
-def _to_jax(array: NDArray[Any]) -> Any:
+def to_jax(array: NDArray[Any]) -> Any:
+    """The array as one of jax; not a copy where jax can do without."""
     import jax.numpy as jnp  # loaded: the leaf was given as one
 
     return jnp.asarray(array)
