@@ -147,13 +147,14 @@ class Evaluator:
     def _sender(self, call: Call) -> real.Sender:
         """What calls the run at the point of a number, or at those of a slice."""
         function, layout, moves = self.subject.runs[call.run], self.subject.layout, call.moves
-        if call.arithmetic == "complex":
-            return complex_numbers.sender(function, layout, moves, batched=self.subject.batched)
 
         def mutated() -> None:
             self.ledger.mutated.add(call.run)
 
-        send = real.sender(function, layout, moves, mutated, batched=self.subject.batched)
+        if call.arithmetic == "complex":
+            send = complex_numbers.sender(function, layout, moves, batched=self.subject.batched)
+        else:
+            send = real.sender(function, layout, moves, mutated, batched=self.subject.batched)
         if call.run not in self.double:
             return send
 

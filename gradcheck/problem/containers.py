@@ -215,6 +215,8 @@ class Fields:
     original: Any = None
     carried: tuple[tuple[str, Any], ...] = ()
     stale: tuple[str, ...] = ()
+    #: Fields that no constructor is given; a claim may hold them, and is not asked for them.
+    derived: tuple[str, ...] = ()
 
     named = True
 
@@ -260,9 +262,9 @@ def _object(value: Any, names: tuple[str, ...], parts: list[Any]) -> Fields:
     carried = tuple((name, getattr(value, name)) for name in derived if not hasattr(again, name))
     everything = [*names, *(name for name in derived if hasattr(again, name))]
     if type(again) is kind and all(_same(getattr(again, name, None), getattr(value, name)) for name in everything):
-        return Fields(kind, names, keywords, carried=carried)
+        return Fields(kind, names, keywords, carried=carried, derived=tuple(derived))
     stale = [name for name in getattr(value, "__dict__", ()) if isinstance(getattr(kind, name, None), cached_property)]
-    copied = Fields(kind, names, keywords, original=value, stale=tuple(stale))
+    copied = Fields(kind, names, keywords, original=value, stale=tuple(stale), derived=tuple(derived))
     try:
         copied.make(parts)
     except Exception as error:

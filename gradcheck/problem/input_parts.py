@@ -58,10 +58,10 @@ class InputParts:
     def _other_array(self, value: Any, place: Place, top: bool) -> Read:
         """An array that is no plain one of numpy."""
         if isinstance(value, np.ma.MaskedArray) and np.ma.is_masked(value):
-            masked = int(np.ma.getmaskarray(value).sum())
+            masked = count(int(np.ma.getmaskarray(value).sum()), "masked entry", "masked entries")
             raise UsageError(
-                f"{place} is an array with {count(masked, 'masked entry', 'masked entries')}, which cannot be moved; give "
-                "the valid ones only, value.compressed(), and put them in place inside the model"
+                f"{place} is an array with {masked}, which cannot be moved; give the valid ones only, "
+                "value.compressed(), and put them in place inside the model"
             )
         jax = is_jax_array(value)
         try:

@@ -164,7 +164,7 @@ def _held(node: Node, found: Any, way: Way | None, leading: tuple[int, ...]) -> 
 
 def _by_name(node: Node, held: dict[Any, Any], found: Any, way: Way | None, leading: tuple[int, ...]) -> list[Any]:
     labels = node.container.labels
-    extra = _unknown(found, set(labels))
+    extra = _unknown(found, {*labels, *getattr(node.container, "derived", ())})
     for i, (label, part) in enumerate(zip(labels, node.parts, strict=True)):
         if label not in held and _due(part):
             step = node.container.step(i)

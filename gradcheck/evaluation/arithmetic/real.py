@@ -171,11 +171,14 @@ def as_array(result: Any, who: str) -> np.ndarray[Any, Any]:
     """
     if result is None:
         raise UsageError(f"{who} returned None; does it lack a return statement?")
+    if isinstance(result, np.ma.MaskedArray) and np.ma.is_masked(result):
+        raise UsageError(f"{who} returned masked entries, which are no numbers; pick the valid ones with output=...")
     try:
         array = np.array(result)
     except ValueError:
         raise UsageError(
-            f"{who} returned parts of unequal shape; return one array, or pick one with output=..."
+            f"{who} returned parts of unequal shape{_what_it_is(result)}; return one array, or pick one with "
+            f"output={picking(result)}"
         ) from None
     except Exception as error:
         raise UsageError(f"{who} returned {type(result).__name__}, which is no array of numbers: {error}") from None
@@ -199,6 +202,25 @@ def _from_objects(array: np.ndarray[Any, Any], result: Any, who: str) -> np.ndar
     except (TypeError, ValueError):
         keys = f" with keys {sorted(map(str, result))}" if isinstance(result, dict) else ""
         raise UsageError(
-            f"{who} returned {type(result).__name__}{keys}; a number or an array is needed: pick one output with "
-            "output=lambda result: ..."
+            f"{who} returned {type(result).__name__}{keys}{_what_it_is(result)}; a number or an array is needed: pick "
+            f"one output with output={picking(result)}"
         ) from None
+
+
+def _what_it_is(result: Any) -> str:
+    """A word on a value that comes with something beside it."""
+    first = result[0] if isinstance(result, list | tuple) and len(result) > 1 else None
+    number = isinstance(first, int | float | np.number) or getattr(first, "shape", None) == ()
+    return ", a value and something beside it" if number else ""
+
+
+def picking(result: Any) -> str:
+    """How to pick the first part that is numbers."""
+    found = opened(result)
+    if found is None:
+        return "lambda result: ..."
+    container, parts = found
+    for i, part in enumerate(parts):
+        if isinstance(part, float | np.floating) or getattr(getattr(part, "dtype", None), "kind", "") == "f":
+            return f"lambda r: r{container.step(i)}"
+    return f"lambda r: r{container.step(0)}" if parts else "lambda result: ..."
