@@ -175,6 +175,8 @@ def _kind_of(value: Any) -> str:
 
 
 def _doubles(array: NDArray[Any], place: Place) -> Array:
+    if array.dtype.kind in "fiu" and array.dtype.itemsize <= 8:
+        return array.astype(float)
     with np.errstate(over="ignore", invalid="ignore"):  # a long double beyond 1e308: infinite, told by name
         try:
             return array.astype(float)

@@ -69,7 +69,8 @@ def output_vector(layout: Layout, result: Any, name: str) -> Array:
     vector = np.empty(layout.size)
     try:
         for leaf, part, way in matched(layout.template, result):
-            found = real_numbers(part, leaf.path)
+            usual = type(part) is np.ndarray and part.dtype.kind == "f"
+            found = part if usual else real_numbers(part, leaf.path)
             if found.shape != leaf.shape:
                 raise Difference(f"shape {leaf.shape} and then {found.shape} at {leaf.path}", way, leaf, part)
             vector[leaf.start : leaf.stop] = found.reshape(-1)

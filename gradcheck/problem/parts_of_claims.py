@@ -93,12 +93,15 @@ def _block(leaf: Leaf, part: Any, way: Way | None, what: str, leading: tuple[int
     def differs(said: str) -> Difference:
         return Difference(said, way, leaf, part, leading)
 
-    if part is None:
+    if type(part) is np.ndarray and part.dtype.kind in "fiub":  # the usual case; its name is long to make
+        found = part.astype(float)
+    elif part is None:
         raise differs(f"None stands at {leaf.path}; where the model does not depend on it, claim zeros of shape {due}")
-    if opened(part) is not None and plain_rectangle(part) is None and not _is_array_like(part):
+    elif opened(part) is not None and plain_rectangle(part) is None and not _is_array_like(part):
         raise differs(f"{described(part)} stands at {leaf.path}, where {described_template(leaf, leading)} is due")
-    found = real_numbers(part.toarray() if hasattr(part, "toarray") else part, f"{what} at {leaf.path}")
-    if found.shape in (due, (math.prod(leading), size)) or (math.prod(due) == 1 == found.size):
+    else:
+        found = real_numbers(part.toarray() if hasattr(part, "toarray") else part, f"{what} at {leaf.path}")
+    if found.shape in (due, (math.prod(leading), size)) or (math.prod(due) == found.size <= 1):
         return found.reshape(math.prod(leading), size)
     text = f"it has shape {found.shape} at {leaf.path}, where shape {due} is due"
     inner = found.shape[len(leading) :]
@@ -112,11 +115,11 @@ def _block(leaf: Leaf, part: Any, way: Way | None, what: str, leading: tuple[int
 
 
 def _is_array_like(part: Any) -> bool:
-    """Whether numpy makes numbers of a list with arrays in it."""
+    """Whether numpy makes one array of a list with arrays in it; what it holds is looked at elsewhere."""
     if not isinstance(part, list | tuple):
         return False
     try:
-        return np.asarray(part).dtype.kind in "fiub"
+        return np.asarray(part).dtype.kind != "O"
     except (TypeError, ValueError):
         return False
 
