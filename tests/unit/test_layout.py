@@ -325,11 +325,11 @@ def test_a_deep_nesting_comes_back_too():
     assert layout.flatten(layout.restore(vector)[0][0], "the claim").tolist() == [1.5]
 
 
-def test_names_of_a_hundred_thousand_leaves_are_found_without_looking_at_all():
-    layout, _ = layout_of({f"k{i}": np.ones(2) for i in range(100_000)})
+def test_names_of_many_leaves_are_found_without_looking_at_all():
+    layout, _ = layout_of({f"k{i}": np.ones(2) for i in range(20_000)})
 
-    assert layout.name(199_999) == 'x["k99999"][1]'
-    assert layout.name(100_000) == 'x["k50000"][0]'
+    assert layout.name(39_999) == 'x["k19999"][1]'
+    assert layout.name(20_000) == 'x["k10000"][0]'
 
 
 # --- memory ----------------------------------------------------------------------------------------------------------
