@@ -4,7 +4,8 @@ What counts how:
 
 - Own time per evaluation is that of a request through the whole gate (cache, budget, evaluator) with a model that
   returns a constant, so nothing of it is the model's; the shortest of several repeats.
-- A goal is a twentieth of a model of 100 µs for small nestings, and for a long vector one vector beside the model's.
+- A goal is a twentieth of a model of 100 µs for small nestings, and for a long vector three: the one that
+  the model receives, and two that stand for a whole request (the point, and what the input must look like afterwards).
 - Seconds for many leaves are those of reading the nesting, filling it once, and taking a claim apart.
 """
 
@@ -105,7 +106,7 @@ def figures_of_long(at: Any, seed: int) -> list[Figure]:
             ]
         )
         tracemalloc.stop()
-        shown.append(Figure(name=f"vectors live, {name}", value=max(live) / (8 * LONG), goal=2.0))
+        shown.append(Figure(name=f"vectors live, {name}", value=max(live) / (8 * LONG), goal=3.01))
     return shown
 
 

@@ -19,10 +19,13 @@ from gradcheck.problem.template import (
     Node,
     Place,
     Read,
+    Step,
     Template,
     Untouched,
     filled,
+    filled_from,
     program_of,
+    steps_of,
     template_of,
 )
 from gradcheck.records.arrays import Array, IntArray
@@ -61,12 +64,18 @@ class Layout:
     notices: tuple[str, ...] = ()
     names: tuple[str, ...] = ()
     _program: tuple[Template, ...] = field(init=False, repr=False)
+    _steps: tuple[Step, ...] = field(init=False, repr=False)
     _starts: tuple[int, ...] = field(init=False, repr=False)
+    #: Whether the nesting is that of several arguments.
+    _several: bool = field(init=False, repr=False)
     #: Leaves whose axes do not stand in C's order in memory.
     turned: tuple[Leaf, ...] = field(init=False, repr=False)
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "_program", program_of(self.template))
+        object.__setattr__(self, "_steps", steps_of(self._program))
+        several = isinstance(self.template, Node) and isinstance(self.template.container, Given)
+        object.__setattr__(self, "_several", several)
         object.__setattr__(self, "_starts", tuple(leaf.start for leaf in self.leaves))
         object.__setattr__(self, "turned", tuple(leaf for leaf in self.leaves if leaf.axes is not None))
 
@@ -96,13 +105,12 @@ class Layout:
     def arguments(self, of_leaf: Callable[[Leaf], Any]) -> tuple[tuple[Any, ...], dict[str, Any]]:
         """Positional and keyword arguments with ``of_leaf(leaf)`` in each variable place (AD tracers, say)."""
         whole = filled(self._program, of_leaf)
-        if isinstance(self.template, Node) and isinstance(self.template.container, Given):
-            return whole  # type: ignore[no-any-return]
-        return (whole,), {}
+        return whole if self._several else ((whole,), {})
 
     def received(self, memory: NDArray[Any]) -> tuple[tuple[Any, ...], dict[str, Any]]:
         """Positional and keyword arguments that are views of a vector in order of memory; nothing is copied."""
-        return self.arguments(lambda leaf: leaf.received(memory))
+        whole = filled_from(self._steps, memory)
+        return whole if self._several else ((whole,), {})
 
     def in_memory_order(self, vector: NDArray[Any], *, own: bool = False) -> NDArray[Any]:
         """The vector with the entries of each leaf as they stand in memory; the vector itself where it is the caller's

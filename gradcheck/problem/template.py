@@ -218,6 +218,48 @@ def filled(program: Iterable[Template], of_leaf: Callable[[Leaf], Any]) -> Any:
     return ready[0]
 
 
+#: A step of filling a nesting with parts of a vector: what to do, with what, and a shape.
+Step: TypeAlias = tuple[int, Any, Any]
+_LINE, _SHAPED, _NUMBER, _LEAF, _GIVEN, _CONTAINER = range(6)
+
+
+def steps_of(program: Iterable[Template]) -> tuple[Step, ...]:
+    """The same order, prepared for `filled_from`: a model is called far more often than its input is read."""
+    return tuple(map(_step_of, program))
+
+
+def _step_of(part: Template) -> Step:
+    if isinstance(part, Untouched):
+        return _GIVEN, part.value, None
+    if isinstance(part, Node):
+        return _CONTAINER, part.container.make, len(part.parts)
+    if part.scalar:
+        return _NUMBER, part.start, None
+    if not part.plain:
+        return _LEAF, part, None
+    entries = slice(part.start, part.stop)
+    return (_LINE, entries, None) if len(part.shape) == 1 else (_SHAPED, entries, part.shape)
+
+
+def filled_from(steps: Iterable[Step], memory: NDArray[Any]) -> Any:
+    """The nesting of views of a vector in order of memory."""
+    ready: list[Any] = []
+    for kind, what, shape in steps:
+        if kind == _LINE:
+            ready.append(memory[what])
+        elif kind == _SHAPED:
+            ready.append(memory[what].reshape(shape))
+        elif kind == _NUMBER:
+            ready.append(memory.item(what))
+        elif kind == _CONTAINER:
+            held = ready[-shape:]
+            del ready[-shape:]
+            ready.append(what(held))
+        else:
+            ready.append(what if kind == _GIVEN else what.received(memory))
+    return ready[0]
+
+
 def to_jax(array: NDArray[Any]) -> Any:
     """The array as one of jax; not a copy where jax can do without."""
     import jax.numpy as jnp  # loaded: the leaf was given as one

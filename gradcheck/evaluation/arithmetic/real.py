@@ -86,7 +86,7 @@ def _with_one_part_moved(
     """The same for a nesting: its parts are views of one vector that belongs to the model."""
     entries, values = moves.entries()
     places, numbers = layout.memory_positions(entries).tolist(), values.tolist()
-    base = layout.in_memory_order(moves.base)
+    base = layout.in_memory_order(moves.base, own=True)  # only read
     content = bytearray(base.tobytes())
     picture = np.frombuffer(content)
 
