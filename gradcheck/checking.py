@@ -52,8 +52,9 @@ def check(
         The claim; exactly one. A callable with the model's own signature, its value at `at`, or the name of an AD
         source (``"jax"``, ``"autograd"``). Shapes: gradient ``(n,)`` for a model that returns a number, Jacobian
         ``(m, n)`` for one that returns ``(m,)``.
-    wrt : str or list of str, optional
-        Which of several arguments to differentiate with respect to.
+    wrt : str, int or list of them, optional
+        Which of several arguments to differentiate with respect to, by name or position. Parts of a claim, and the
+        variables, stand in this order.
     output : callable, optional
         Picks what is differentiated from what the model returns.
     bounds : list of (lower, upper) pairs or tuple (lower, upper), optional

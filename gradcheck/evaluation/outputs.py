@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from gradcheck.errors import UsageError
+from gradcheck.errors import DerivativeShapeError, UsageError
 from gradcheck.evaluation.arithmetic import complex as complex_numbers
 from gradcheck.evaluation.arithmetic import real
 from gradcheck.evaluation.calls import Call
@@ -154,13 +154,17 @@ class Output:
             # At the first evaluation this is a wrong model; later on, one bad point among good ones.
             raise (UsageError if self.target.name not in self.shapes else RuntimeError)(str(error)) from None
         self.ledger.output_kinds.setdefault(self.target.name, array.dtype.name)
+        if self.target.name not in self.shapes:
+            leaf = Leaf(Place(None, self.target.name), 0, array.shape[len(leading) :])
+            self.layouts[self.target.name] = Layout(leaf, (leaf,))
         return array.astype(float)
 
     # --- nestings ----------------------------------------------------------------------------------------------------
 
     def _nested(self) -> Layout | None:
         """The layout of what the function returns, where that is known to be a nesting."""
-        layout = self.layouts.get(self.target.name)
+        # what another session of the same subject has seen counts for nothing: it may have been elsewhere
+        layout = self.layouts.get(self.target.name) if self.target.name in self.shapes else None
         return layout if layout is not None and layout.single is None else None
 
     def _may_be_nested(self, picked: Any) -> bool:
@@ -183,13 +187,15 @@ class Output:
     def _vector(self, layout: Layout, picked: Any) -> NDArray[Any]:
         if picked is None:
             raise RuntimeError(f"{self.target.name} returned None")
-        return output_vector(layout, picked, self.target.name)
+        try:
+            return output_vector(layout, picked, self.target.name)
+        except DerivativeShapeError:  # another structure: a model to be mended
+            raise
+        except UsageError as error:  # None in one place, say: one bad point among good ones
+            raise RuntimeError(str(error)) from None
 
     def _known(self, shape: tuple[int, ...], i: int) -> None:
         known = self.shapes.setdefault(self.target.name, shape)
-        if self.target.name not in self.layouts:
-            leaf = Leaf(Place(None, self.target.name), 0, shape)
-            self.layouts[self.target.name] = Layout(leaf, (leaf,))
         if shape != known:
             raise UsageError(
                 f"{self.target.name} returned shape {known} at first and shape {shape} at x = "

@@ -101,7 +101,7 @@ def _refuse_pair(kind: str, raw: Any, layout: Layout) -> None:
     if kind != "gradient" or type(raw) not in (list, tuple) or len(raw) != 2 or layout.size == 1:
         return
     value, derivative = raw
-    if np.ndim(value) != 0 or isinstance(value, str) or value is None or opened(value) is not None:
+    if not isinstance(value, int | float | np.number) and getattr(value, "shape", None) != ():
         return
     try:
         claim_matrix(kind, derivative, layout, ())
@@ -116,8 +116,8 @@ def _refuse_pair(kind: str, raw: Any, layout: Layout) -> None:
 
 def _unwrapped(raw: Any) -> Any:
     """The array in a tuple of one, as AD gives it for one of several arguments."""
-    if type(raw) is tuple and len(raw) == 1 and np.ndim(raw[0]) > 0 and opened(raw[0]) is None:
-        return raw[0]
+    if type(raw) is tuple and len(raw) == 1:
+        return raw[0] if getattr(raw[0], "shape", ()) or plain_rectangle(raw[0]) is not None else raw
     return raw
 
 

@@ -75,9 +75,10 @@ class InputParts:
             ) from None
         if jax:
             return self._leaf(array, place, scalar=False, top=top, jax=True, given=value)
-        if type(value) is not np.memmap:
+        leaf = self._leaf(array, place, scalar=False, top=top, given=value)
+        if type(value) is not np.memmap and isinstance(leaf, Leaf):
             self._change(place, f"given as {type(value).__name__}; the model received a numpy array")
-        return self._leaf(array, place, scalar=False, top=top, given=value)
+        return leaf
 
     def _leaf(
         self,

@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from gradcheck.problem.containers import opened
+from gradcheck.problem.containers import Given, opened
 from gradcheck.problem.template import Leaf, Node, Place, Template, Untouched
 
 #: Parts shown before and after the first difference, and containers shown around it.
@@ -89,7 +89,7 @@ def side_by_side(difference: Difference) -> str:
 
 
 def _root(template: Any) -> str:
-    return (str(template.place) if isinstance(template, Node | Leaf) else "") or "arguments"
+    return (str(template.place) if isinstance(template, Node | Leaf) else "") or "claim"
 
 
 def _children(way: Way, difference: Difference, depth: int) -> list[tuple[str, str, str]]:
@@ -161,6 +161,8 @@ def described_template(template: Template, leading: tuple[int, ...] = ()) -> str
         return f"array {shape}" if shape or not template.scalar else "number"
     if isinstance(template, Untouched):
         return "(anything: no variable)"
+    if isinstance(template.container, Given):
+        return f"tuple of {len(template.container.wanted)}"
     return f"{template.container.word} of {len(template.parts)}"
 
 

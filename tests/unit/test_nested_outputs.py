@@ -1,5 +1,6 @@
 """Models that return nestings: rows with names, Jacobians with both structures."""
 
+import dataclasses
 import re
 from dataclasses import dataclass
 from typing import Any, NamedTuple
@@ -9,6 +10,8 @@ import pytest
 
 import gradcheck
 from gradcheck import DerivativeShapeError, ModelFailure, UsageError
+from gradcheck.evaluation.pipeline import open_session
+from gradcheck.problem.subject import subjects_of_function
 
 
 class Stresses(NamedTuple):
@@ -231,3 +234,35 @@ def test_complex_numbers_in_a_nested_output_are_refused_with_their_place():
 def test_masked_entries_of_an_output_are_refused():
     with pytest.raises(UsageError, match="masked entries"):
         check(lambda x: np.ma.masked_array(x, [True, False]), [1.0, 2.0], jacobian=np.eye(2))
+
+
+def test_none_in_one_place_at_one_point_is_a_bad_point_and_no_error():
+    def model(x):
+        return {"a": x, "b": None if x[0] > 1.0 else x[1]}
+
+    report = check(model, [1.0, 2.0], jacobian={"a": np.eye(2), "b": [0.0, 1.0]}, bounds=[(0.0, 2.0), (0.0, 3.0)])
+    assert report.verdict != "refuted"
+
+
+def test_points_of_unequal_size_have_outputs_of_their_own():
+    at = gradcheck.points([1.0, 2.0], [1.0, 2.0, 3.0])
+    report = check(lambda x: {"a": x}, at, jacobian=lambda x: {"a": np.eye(x.size)})
+
+    assert report.entries.name[-1] == 'model["a"][2] by x[2] @ point 1'
+
+
+def test_what_another_session_saw_does_not_count():
+    subject = subjects_of_function(lambda x: {"a": x.astype(np.float32)}, [1.0, 2.0], claims={"jacobian": 0})[0]
+    for start in (subject.start, subject.start + 1.0):
+        session = open_session(dataclasses.replace(subject, start=start))
+        session.start_values()
+
+        assert session.ledger.output_kinds == {"model": "float32"}
+
+
+def test_an_audit_takes_nested_inputs_outputs_and_claims():
+    report = gradcheck.audit(
+        lambda p: {"only": p["a"]["b"] ** 2}, at={"a": {"b": 0.5}}, jacobian={"only": {"a": {"b": 1.0}}}, budget=400
+    )
+
+    assert [str(claim.verdict) for claim in report.claims] == ["confirmed"]

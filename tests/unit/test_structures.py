@@ -301,6 +301,25 @@ def test_claims_for_several_arguments_must_be_as_many():
         layout.flatten((1.0, 2.0, 3.0), "the claim")
 
 
+def test_a_difference_inside_an_argument_is_shown_beside_the_others():
+    layout, _ = layout_of(args(1.0, {"c": 2.0}), function=lambda load, arm: load)
+    with pytest.raises(DerivativeShapeError, match=r'\["c"\] is missing at arm; \["d"\] stands there instead') as told:
+        layout.flatten((1.0, {"d": 2.0}), "the claim")
+
+    assert "claim: tuple of 2" in str(told.value)
+
+
+def test_tables_are_arrays_and_a_notice_says_so():
+    pandas = pytest.importorskip("pandas")
+    layout, vector = layout_of({"s": pandas.Series([1.0, 2.0]), "whole": pandas.DataFrame({"a": [1, 2]})})
+
+    assert vector.tolist() == [1.0, 2.0]
+    assert type(layout.restore(vector)[0][0]["s"]) is np.ndarray
+    assert layout.notices[0] == 'x["s"] was given as Series; the model received a numpy array'
+    assert 'x["whole"] (DataFrame)' in layout.notices[1]
+    assert layout.flatten({"s": pandas.Series([3.0, 4.0])}, "the claim").tolist() == [3.0, 4.0]
+
+
 # --- the whole check -------------------------------------------------------------------------------------------------
 
 
