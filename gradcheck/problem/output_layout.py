@@ -5,12 +5,12 @@ from typing import Any
 import numpy as np
 
 from gradcheck.errors import UsageError
-from gradcheck.problem.containers import is_jax_array, opened
+from gradcheck.problem.containers import Items, is_jax_array, opened
 from gradcheck.problem.layout import Layout
 from gradcheck.problem.numbers import is_floating, lowest_precision, plain_rectangle, real_numbers
 from gradcheck.problem.parts_of_claims import matched, refused
 from gradcheck.problem.structure_text import Difference
-from gradcheck.problem.template import Leaf, Place, Read, Untouched, template_of
+from gradcheck.problem.template import Leaf, Node, Place, Read, Template, Untouched, template_of
 from gradcheck.records.arrays import Array
 from gradcheck.wording import listed
 
@@ -67,16 +67,50 @@ def output_vector(layout: Layout, result: Any, name: str) -> Array:
         If a part is None or no real number.
     """
     vector = np.empty(layout.size)
+    usual = _as_at_first(layout.template, result)
+    if usual is not None and all(_fill(vector, leaf, part) for leaf, part in zip(layout.leaves, usual, strict=True)):
+        return vector
     try:
         for leaf, part, way in matched(layout.template, result):
-            usual = type(part) is np.ndarray and part.dtype.kind == "f"
-            found = part if usual else real_numbers(part, leaf.path)
+            found = real_numbers(part, leaf.path)
             if found.shape != leaf.shape:
                 raise Difference(f"shape {leaf.shape} and then {found.shape} at {leaf.path}", way, leaf, part)
             vector[leaf.start : leaf.stop] = found.reshape(-1)
     except Difference as difference:
         raise refused(difference, f"what {name} returns", "the same structure everywhere") from None
     return vector
+
+
+def _as_at_first(template: Template, result: Any) -> list[Any] | None:
+    """The parts of a result that is made of the very same containers of Python, which most are; None for others."""
+    parts: list[Any] = []
+    waiting = [(template, result)]
+    while waiting:
+        part, found = waiting.pop()
+        if isinstance(part, Leaf):
+            parts.append(found)
+        elif isinstance(part, Node):
+            labels = part.container.labels
+            keyed = isinstance(part.container, Items)
+            if keyed and type(found) is dict and found.keys() == set(labels):
+                held = [found[label] for label in labels]
+            elif not keyed and isinstance(found, list | tuple) and len(found) == len(part.parts):
+                held = list(found)
+            else:
+                return None
+            waiting.extend(zip(reversed(part.parts), reversed(held), strict=True))
+    return parts
+
+
+def _fill(vector: Array, leaf: Leaf, part: Any) -> bool:
+    """Whether the part is of the usual form; it then stands in the vector."""
+    if type(part) is float and leaf.shape == ():
+        vector[leaf.start] = part
+        return True
+    if type(part) is np.ndarray and part.shape == leaf.shape and part.dtype.kind == "f":
+        vector[leaf.start : leaf.stop] = part.reshape(-1)
+        return True
+    return False
 
 
 def output_parts(layout: Layout, result: Any) -> list[Any]:

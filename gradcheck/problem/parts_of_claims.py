@@ -8,7 +8,7 @@ import numpy as np
 
 from gradcheck.errors import DerivativeShapeError
 from gradcheck.problem.arguments import Arguments
-from gradcheck.problem.containers import Given, opened
+from gradcheck.problem.containers import Given, Items, opened
 from gradcheck.problem.numbers import plain_rectangle, real_numbers
 from gradcheck.problem.structure_text import NOTHING, Difference, Way, described, described_template, side_by_side
 from gradcheck.problem.template import Leaf, Node, Template, Untouched
@@ -155,7 +155,8 @@ def _held(node: Node, found: Any, way: Way | None, leading: tuple[int, ...]) -> 
     if known is not None:
         container, parts = known
         if not container.named:
-            if not node.container.named or isinstance(found, tuple):
+            # a dict has no places that a tuple could follow without doubt
+            if not node.container.named or (isinstance(found, tuple) and not isinstance(node.container, Items)):
                 return _in_turn(node, parts, found, way, leading)
         elif node.container.named or set(container.labels) == set(node.container.labels):
             return _by_name(node, dict(zip(container.labels, parts, strict=True)), found, way, leading)

@@ -228,6 +228,7 @@ DICT = {"a": np.ones((3, 2)), "b": 0.5, "n": 3}
         ({"a": np.ones((3, 2)), "b": None}, r'None stands at x\["b"\].*claim zeros', r"> .*number .*None"),
         ({"a": {"w": 1.0}, "b": 1.0}, r'dict of 1 stands at x\["a"\], where array \(3, 2\) is due', r"> .*dict of 1"),
         ([1.0, 2.0], "list of 2 was found, where dict of 3 is due", r"> x: dict of 3 +x: list of 2"),
+        ((np.ones((3, 2)), 1.0, 0), "tuple of 3 was found, where dict of 3 is due", r"> x: dict of 3 +x: tuple of 3"),
         (None, "returned None; does it lack a return statement", r"> x: dict of 3 +x: None"),
         (np.ones(4), r"array \(4,\) was found, where dict of 3 is due", r"> x: dict of 3 +x: array \(4,\)"),
     ],
