@@ -48,6 +48,8 @@ def nested_matrix(template: Template, size: int, nested: Any, what: str, leading
     UsageError
         If a part is no array of real numbers.
     """
+    if 0 in leading:  # an output without entries: nothing is claimed about it
+        return np.zeros((0, size))
     flat = _flat(nested, (*leading, size), what) if hasattr(nested, "shape") or hasattr(nested, "toarray") else None
     if flat is not None:
         return flat.reshape(-1, size)

@@ -10,13 +10,14 @@ from typing import Any, NamedTuple
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 import gradcheck
 from gradcheck import DerivativeShapeError, UsageError
 from gradcheck.problem.derivative_shape import claim_matrix
 from gradcheck.problem.layout import args, layout_of
+from gradcheck.problem.output_layout import output_layout
 
 
 class Load(NamedTuple):
@@ -437,3 +438,30 @@ def test_any_structure_comes_back_from_its_vector(at):
     names = [layout.name(i) for i in range(layout.size)]
     assert names == [again.name(i) for i in range(again.size)]
     assert len(set(names)) == len(names)
+
+
+@given(structures, structures)
+def test_a_claim_is_understood_or_refused_and_never_breaks_down(at, claim):
+    layout, _ = layout_of({"held": at, "one": 0.5})
+
+    for wrapped in ({"held": claim, "one": 0.5}, claim):
+        try:
+            assert layout.flatten(wrapped, "the claim").shape == (layout.size,)
+        except UsageError as told:
+            assert "the claim" in str(told)
+
+
+@settings(max_examples=50)
+@given(structures, structures)
+def test_a_jacobian_has_the_structure_of_the_output_and_inside_that_of_the_input(at, result):
+    layout, _ = layout_of({"held": at, "one": 0.5})
+    outputs = output_layout({"held": result, "one": 1.5}, "model")
+
+    def block(row):
+        """The rows of one output, with the number of each row in each place."""
+        numbers = np.arange(row.start, row.stop, dtype=float).reshape(row.shape)
+        return layout.arguments(lambda leaf: numbers[(..., *([None] * len(leaf.shape)))] + np.zeros(leaf.shape))[0][0]
+
+    claim = outputs.arguments(block)[0][0]
+    matrix = claim_matrix("jacobian", claim, layout, (outputs.size,), outputs)
+    assert np.array_equal(matrix, np.arange(outputs.size)[:, None] + np.zeros(layout.size))
