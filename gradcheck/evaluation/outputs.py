@@ -15,9 +15,9 @@ from gradcheck.evaluation.calls import Call
 from gradcheck.evaluation.failing import last_words
 from gradcheck.evaluation.ledger import Ledger
 from gradcheck.evaluation.protocol import Status
-from gradcheck.problem.containers import opened
 from gradcheck.problem.layout import Layout
 from gradcheck.problem.numbers import lowest_precision
+from gradcheck.problem.opening import opened
 from gradcheck.problem.output_layout import output_layout, output_parts, output_vector
 from gradcheck.problem.subject import Target
 from gradcheck.problem.template import Leaf, Place

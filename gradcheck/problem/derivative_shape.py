@@ -6,9 +6,9 @@ from typing import Any
 import numpy as np
 
 from gradcheck.errors import DerivativeShapeError
-from gradcheck.problem.containers import opened
 from gradcheck.problem.layout import Layout, real_numbers
 from gradcheck.problem.numbers import plain_rectangle
+from gradcheck.problem.opening import opened
 from gradcheck.problem.parts_of_claims import matched, nested_matrix, refused
 from gradcheck.problem.structure_text import Difference
 from gradcheck.records.arrays import Array

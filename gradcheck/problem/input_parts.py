@@ -6,8 +6,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gradcheck.errors import UsageError
-from gradcheck.problem.containers import is_jax_array, opened
+from gradcheck.problem.jax_trees import is_jax_array
 from gradcheck.problem.numbers import is_floating, rectangle
+from gradcheck.problem.opening import opened
 from gradcheck.problem.template import Leaf, Place, Read, Untouched
 from gradcheck.records.arrays import Array
 from gradcheck.wording import brief, count, listed

@@ -5,9 +5,11 @@ from typing import Any
 import numpy as np
 
 from gradcheck.errors import UsageError
-from gradcheck.problem.containers import Items, is_jax_array, opened
+from gradcheck.problem.containers import Items
+from gradcheck.problem.jax_trees import is_jax_array
 from gradcheck.problem.layout import Layout
 from gradcheck.problem.numbers import is_floating, lowest_precision, plain_rectangle, real_numbers
+from gradcheck.problem.opening import opened
 from gradcheck.problem.parts_of_claims import matched, refused
 from gradcheck.problem.structure_text import Difference
 from gradcheck.problem.template import Leaf, Node, Place, Read, Template, Untouched, template_of

@@ -8,8 +8,9 @@ import numpy as np
 
 from gradcheck.errors import DerivativeShapeError
 from gradcheck.problem.arguments import Arguments
-from gradcheck.problem.containers import Given, Items, opened
+from gradcheck.problem.containers import Given, Items
 from gradcheck.problem.numbers import plain_rectangle, real_numbers
+from gradcheck.problem.opening import opened
 from gradcheck.problem.structure_text import NOTHING, Difference, Way, described, described_template, side_by_side
 from gradcheck.problem.template import Leaf, Node, Template, Untouched
 from gradcheck.records.arrays import Array

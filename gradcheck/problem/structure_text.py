@@ -6,7 +6,8 @@ from typing import Any
 
 import numpy as np
 
-from gradcheck.problem.containers import Given, opened
+from gradcheck.problem.containers import Given
+from gradcheck.problem.opening import opened
 from gradcheck.problem.template import Leaf, Node, Place, Template, Untouched
 
 #: Parts shown before and after the first difference, and containers shown around it.

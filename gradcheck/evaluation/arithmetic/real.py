@@ -8,8 +8,9 @@ import numpy as np
 
 from gradcheck.errors import UsageError
 from gradcheck.evaluation.moves import Moves, same_content
-from gradcheck.problem.containers import is_jax_array, opened
+from gradcheck.problem.jax_trees import is_jax_array
 from gradcheck.problem.layout import Layout, Leaf
+from gradcheck.problem.opening import opened
 from gradcheck.problem.template import to_jax
 from gradcheck.records.arrays import Array
 
