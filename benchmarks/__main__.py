@@ -17,6 +17,7 @@ BENCHMARKS = (
     "slight_errors",
     "products",
     "cost",
+    "nested",
 )
 
 

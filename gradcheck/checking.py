@@ -68,8 +68,9 @@ def check(
         claimed and the symmetry of H are held against the claim alone.
     value_and_gradient : callable, optional
         Returns the pair (value, gradient); the value is an entry of its own, ``value``.
-    wrt : str or list of str, optional
-        Which of several arguments to differentiate with respect to.
+    wrt : str, int or list of them, optional
+        Which of several arguments to differentiate with respect to, by name or position. Parts of a claim, and the
+        variables, stand in this order.
     output : callable, optional
         Picks what is differentiated from what the model returns.
     bounds : list of (lower, upper) pairs or tuple (lower, upper), optional

@@ -5,6 +5,7 @@ failure message, in a report and on a page.
 """
 
 import math
+import reprlib
 from collections.abc import Collection, Iterable, Iterator, Sequence
 
 from gradcheck.records.advice import Family
@@ -323,6 +324,19 @@ def _around_middle(name: str, head: int, tail: int, width: int) -> str:
         return shortened(name if len(name) <= width else middle, width)
     front = ends - ends // 2
     return f"{name[:front]}..{middle}..{name[len(name) - ends // 2 :]}"
+
+
+def brief(value: object) -> str:
+    """What Python shows of a value, in about 80 characters; large and deep nestings are not shown as a whole.
+
+    Examples
+    --------
+    >>> brief({"a": 1.0}), brief(list(range(100)))
+    ("{'a': 1.0}", '[0, 1, 2, 3, 4, 5, ...]')
+    """
+    shown = reprlib.Repr()
+    shown.maxstring = shown.maxother = 80
+    return f"{shown.repr(value):.80}"
 
 
 def clean(text: str) -> str:

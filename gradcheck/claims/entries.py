@@ -44,7 +44,7 @@ def entries_of(subject: Subject, function: str, kind: str, examined: Examined, l
 def entry_name(subject: Subject, function: str, outputs: int, row: int, column: int) -> str:
     """Name of an entry: the variable, and for several outputs which one: ``stress[2] by span``."""
     variable = subject.layout.name(column)
-    return variable if outputs == 1 else f"{function}[{row}] by {variable}"
+    return variable if outputs == 1 else f"{subject.output_name(function, row)} by {variable}"
 
 
 def diagnoses_of(

@@ -20,6 +20,7 @@ from gradcheck.evaluation.ledger import Ledger
 from gradcheck.evaluation.outputs import NUMBERS, Output
 from gradcheck.evaluation.protocol import Status
 from gradcheck.problem.derivative_shape import claim_matrix
+from gradcheck.problem.output_layout import output_parts, precision_of
 from gradcheck.problem.product_shape import cotangent, hessian_products, product_vector, tangent, value_and_matrix
 from gradcheck.problem.subject import Subject, Target
 from gradcheck.records.arrays import Array
@@ -50,6 +51,8 @@ class Evaluator:
         self.ledger = ledger
         self.shapes: dict[str, tuple[int, ...]] = {}
         self.double: set[str] = set()
+        if subject.layout.holds_jax:
+            self._keep_double()
 
     def __call__(self, calls: Sequence[Call]) -> list[Outcome]:
         with warnings.catch_warnings(), np.errstate(all="ignore"):
@@ -65,7 +68,7 @@ class Evaluator:
 
     def _values(self, call: Call) -> Outcome:
         targets = [target for target in self.subject.targets.values() if target.run == call.run]
-        outputs = [Output(target, call, self.shapes, self.ledger) for target in targets]
+        outputs = [Output(target, call, self.shapes, self.ledger, self.subject.outputs) for target in targets]
         tally = _Tally()
         began = time.perf_counter()
         try:
@@ -156,13 +159,14 @@ class Evaluator:
     def _sender(self, call: Call) -> real.Sender:
         """What calls the run at the point of a number, or at those of a slice."""
         function, layout, moves = self.subject.runs[call.run], self.subject.layout, call.moves
-        if call.arithmetic == "complex":
-            return complex_numbers.sender(function, layout, moves, batched=self.subject.batched)
 
         def mutated() -> None:
             self.ledger.mutated.add(call.run)
 
-        send = real.sender(function, layout, moves, mutated, batched=self.subject.batched)
+        if call.arithmetic == "complex":
+            send = complex_numbers.sender(function, layout, moves, batched=self.subject.batched)
+        else:
+            send = real.sender(function, layout, moves, mutated, batched=self.subject.batched)
         if call.run not in self.double:
             return send
 
@@ -185,6 +189,16 @@ class Evaluator:
         )
         self.ledger.calls["model"] += 1
         return True
+
+    def _keep_double(self) -> None:
+        """Arrays of jax would reach the model rounded to single precision, where the user's setting is that."""
+        from gradcheck.evaluation.arithmetic.with_jax import is_double
+
+        if not is_double():
+            self.double |= set(self.subject.runs)
+            self.ledger.notices.append(
+                "jax is in single precision; its arrays reached the model in double precision, for these calls only"
+            )
 
     def _scope(self, run: str) -> AbstractContextManager[Any]:
         if run not in self.double:
@@ -255,7 +269,7 @@ class Evaluator:
         layout, shape = self.subject.layout, self.shapes[target.name]
         raw = self._asked(kind, target, point)
         if kind != "value_and_gradient":
-            return claim_matrix(kind, raw, layout, shape)
+            return claim_matrix(kind, raw, layout, shape, self.subject.outputs.get(target.name))
         value, matrix = value_and_matrix(raw, layout, shape)
         self.ledger.claimed_values.setdefault(target.name, value)
         return matrix
@@ -268,7 +282,7 @@ class Evaluator:
                 claim, mutated = real.call(claim, self.subject.layout, point, *vector)
             if mutated:
                 self.ledger.mutated.add(f"{kind} of {target.name}")
-        self.ledger.claim_kinds[target.name, kind] = str(getattr(claim, "dtype", "float64"))
+        self.ledger.claim_kinds[target.name, kind] = precision_of(claim)
         return claim
 
     def _slopes(self, call: Call) -> Outcome:
@@ -313,6 +327,9 @@ class Evaluator:
             from gradcheck.evaluation.arithmetic import with_autograd as automatic  # type: ignore[no-redef]
         by_name = {"jvp": automatic.jvp, "vjp": automatic.vjp, "hvp": automatic.hvp}
         function = _of_one_point(self.subject.runs[target.run], target.pick, self.subject.batched)
+        outputs = self.subject.outputs.get(target.name)
+        if outputs is not None and outputs.single is None:
+            function = automatic.in_one_vector(function, partial(output_parts, outputs))
         return np.asarray(by_name[sweep](function, self.subject.layout, point, rows), dtype=float)
 
 

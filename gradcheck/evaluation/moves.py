@@ -12,6 +12,8 @@ from gradcheck.records.arrays import Array, BoolArray, IntArray
 
 #: Points longer than this many bytes are known by their digest only.
 _LONG = 256
+#: Entries that are compared at once.
+_SOME = 65_536
 #: Points of a batch take about so much memory.
 BATCH_BYTES = 8_000_000
 #: The key of the start point itself; the key of a point that differs from it in one entry is that entry and its bytes,
@@ -70,10 +72,25 @@ class Moves:
         """One point (n,), an array of its own."""
         direction = self.directions[self.which[i]]
         if not self.along_axes:
-            return np.asarray(self.base + self.offsets[i] * direction)
+            point = np.asarray(self.offsets[i] * direction)
+            point += self.base  # in place: at a million variables, each vector counts
+            return point
         point = self.base.copy()
         point[direction] += self.offsets[i]
         return point
+
+    def is_point(self, i: int, array: NDArray[Any]) -> bool:
+        """Whether `array` is still the point `i`, bit by bit, off the axes; some entries at a time, so that no second
+        point is made.
+        """
+        direction, offset = self.directions[self.which[i]], self.offsets[i]
+        for first in range(0, array.size, _SOME):
+            part = slice(first, first + _SOME)
+            again = np.asarray(offset * direction[part])
+            again += self.base[part]
+            if _differ(again, array[part]).any():
+                return False
+        return True
 
     def points(self) -> NDArray[Any]:
         """All of them (k, n); for a batch of `most_at_once` at the most."""

@@ -78,7 +78,10 @@ class Session:
         words = next((f.message for f in self.ledger.failures if f.function == name), "budget or time spent")
         if status == Status.NONFINITE:
             bad = np.flatnonzero(~np.isfinite(values))
-            which = f"output {bad[0]} is" if values.size > 1 else "the value is"
+            layout = self.subject.outputs.get(name)
+            nested = layout is not None and layout.single is None
+            which = self.subject.output_name(name, int(bad[0])) if nested else f"output {bad[0]}"
+            which = f"{which} is" if values.size > 1 else "the value is"
             return ModelFailure(
                 f"{name} could not be evaluated at its start point x = {point}: {which} {values[bad[0]]}. "
                 "Start where the model is defined, or mend the model there.",

@@ -1,14 +1,16 @@
 """Products of a derivative with a vector, and Hessians: what the claim is given, and the shape that it must return."""
 
 import math
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
 
 from gradcheck.errors import DerivativeShapeError, UsageError
+from gradcheck.problem.containers import Given
 from gradcheck.problem.derivative_shape import claim_matrix
-from gradcheck.problem.layout import Arguments, Layout, Leaf, Untouched, real_numbers
+from gradcheck.problem.layout import Layout, real_numbers
+from gradcheck.problem.template import Node, Untouched
 from gradcheck.records.arrays import Array
 
 
@@ -17,19 +19,13 @@ def tangent(layout: Layout, row: Array) -> Any:
 
     One part alone where one argument is differentiated, a tuple of parts where several are.
     """
-    if not isinstance(layout.template, Arguments):
-        positional, _ = layout.restore(row)
-        return positional[0]
-    template = layout.template
     positional, keywords = layout.restore(row)
-    parts = [
-        part
-        for slot, part in (
-            *zip(template.positional, positional, strict=True),
-            *((template.keywords[name], keywords[name]) for name in template.keywords),
-        )
-        if not isinstance(slot, Untouched)
-    ]
+    template = layout.template
+    if not isinstance(template, Node) or not isinstance(template.container, Given):
+        return positional[0]
+    arguments = [*positional, *keywords.values()]
+    wanted = [i for i in template.container.wanted if not isinstance(template.parts[i], Untouched)]
+    parts = [arguments[i] for i in wanted]
     return parts[0] if len(parts) == 1 else tuple(parts)
 
 
@@ -112,7 +108,9 @@ def hessian_products(raw: Any, layout: Layout, output_shape: tuple[int, ...], ro
             raise UsageError(f"the hessian claim is complex ({raw.dtype}); derivatives of a real model are real")
         return np.asarray((raw @ rows.T).T, dtype=float)
     if layout.single is None and m == 1 and isinstance(raw, Mapping | list | tuple) and not _is_matrix(raw, n):
-        matrix = _nested_hessian(layout, raw)
+        # A nesting of the input's structure, in each place of which stands a nesting of it again: the Jacobian of the
+        # gradient.
+        matrix = claim_matrix("hessian", raw, layout, (n,), layout)
     else:
         matrix = real_numbers(raw, "the hessian claim")
         shapes = [(*output_shape, *layout.shape, *layout.shape), (m, n, n), *([(n, n)] if m == 1 else [])]
@@ -155,58 +153,6 @@ def _wrong_hessian(found: tuple[int, ...], layout: Layout, output_shape: tuple[i
     elif math.prod(found) == math.prod(expected):
         text += f"; it has the right number of entries: reshape it to {expected}"
     return DerivativeShapeError(text + ".", name="hessian", expected=expected, found=found)
-
-
-def _nested_hessian(layout: Layout, raw: Any) -> Array:
-    """(n, n) from a nesting of the input's structure, in each place of which stands a nesting of it again."""
-    rows = []
-    for outer, inner in _places(layout.template, raw):
-        height = outer.stop - outer.start
-        row = []
-        for leaf, part in _places(layout.template, inner):
-            block = real_numbers(part, f"the hessian claim at {outer.path}, {leaf.path}")
-            wanted = (*outer.shape, *leaf.shape)
-            if block.size != math.prod(wanted):
-                raise UsageError(
-                    f"the hessian claim has shape {block.shape} at {outer.path}, {leaf.path}, where shape {wanted} is "
-                    "expected"
-                )
-            row.append(block.reshape(height, -1))
-        rows.append(np.concatenate(row, axis=1))
-    return np.concatenate(rows, axis=0)
-
-
-def _places(template: Any, nested: Any) -> Iterator[tuple[Leaf, Any]]:
-    """Each part of a nesting that stands where the template has a leaf."""
-    if isinstance(template, Leaf):
-        yield template, nested
-    elif isinstance(template, Arguments):
-        slots = [
-            part for part in (*template.positional, *template.keywords.values()) if not isinstance(part, Untouched)
-        ]
-        found = [nested] if len(slots) == 1 and not (isinstance(nested, tuple) and len(nested) == 1) else nested
-        yield from _in_sequence(slots, found)
-    elif isinstance(template, Mapping):
-        missing = [key for key, part in template.items() if not isinstance(part, Untouched)]
-        if not isinstance(nested, Mapping) or not set(missing) <= set(nested):
-            raise UsageError(
-                "the hessian claim must have the structure of the input twice over, a dict with "
-                f"{sorted(map(str, missing))} in each place; found {type(nested).__name__}"
-            )
-        for key in missing:
-            yield from _places(template[key], nested[key])
-    elif isinstance(template, list | tuple):
-        yield from _in_sequence(list(template), nested)
-
-
-def _in_sequence(templates: list[Any], nested: Any) -> Iterator[tuple[Leaf, Any]]:
-    if not isinstance(nested, list | tuple) or len(nested) != len(templates):
-        raise UsageError(
-            "the hessian claim must have the structure of the input twice over: a sequence of "
-            f"{len(templates)} parts in each place; found {type(nested).__name__}"
-        )
-    for template, part in zip(templates, nested, strict=True):
-        yield from _places(template, part)
 
 
 def value_and_matrix(raw: Any, layout: Layout, output_shape: tuple[int, ...]) -> tuple[Array, Array]:

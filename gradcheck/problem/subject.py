@@ -3,7 +3,7 @@
 import inspect
 from collections import Counter
 from collections.abc import Callable, Iterable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import partial
 from typing import Any
 
@@ -57,6 +57,13 @@ class Subject:
     domain: Domain
     units: tuple[str, ...] = ()
     batched: bool = False
+    #: Layouts of what the functions return, by name; filled by the evaluator when first values come.
+    outputs: dict[str, Layout] = field(default_factory=dict)
+
+    def output_name(self, function: str, row: int) -> str:
+        """Readable name of one output, made only when it is shown: ``stress[2]``, ``stress["mid"][2]``."""
+        layout = self.outputs.get(function)
+        return f"{function}[{row}]" if layout is None else layout.name(row)
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -190,7 +197,7 @@ def _named(layout: Layout, names: Any) -> Layout:
     twice = [name for name, often in Counter(names).items() if often > 1]
     if twice:
         raise UsageError(f"names holds {twice[0]!r} more than once; names must differ")
-    return Layout(layout.template, layout.leaves, layout.notices, names)
+    return replace(layout, names=names)
 
 
 def _refuse_no_batch(batched: Any, layout: Layout) -> None:
@@ -214,7 +221,10 @@ def _signature(function: Any) -> inspect.Signature | None:
 
 def _root(signature: inspect.Signature | None) -> str:
     """What to call the vector in names of entries: the model's own first parameter."""
-    return "x" if signature is None else next(iter(signature.parameters), "x")
+    first = None if signature is None else next(iter(signature.parameters.values()), None)
+    if first is None:
+        return "x"
+    return f"{first.name}[0]" if first.kind == first.VAR_POSITIONAL else first.name
 
 
 def _refuse_other_arguments(function: Any, signature: inspect.Signature | None, layout: Layout, start: Array) -> None:

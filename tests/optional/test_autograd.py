@@ -1,5 +1,6 @@
 """Derivatives through autograd, and the witness that speaks from them."""
 
+import dataclasses
 import sys
 import warnings
 
@@ -11,6 +12,7 @@ pytest.importorskip("autograd")
 import autograd.numpy as anp
 from autograd.extend import defjvp, defvjp, primitive
 
+import gradcheck
 from gradcheck.evaluation.arithmetic import with_autograd
 from gradcheck.problem.layout import args, layout_of
 from tests.hearing import automatic_on, session_of
@@ -158,3 +160,19 @@ class TestWitness:
 
         assert np.all(np.abs(testimony.value[:, 0] - np.cos([0.3, 0.4])) <= testimony.bound[:, 0])
         assert np.all((testimony.bound > 1e-8) & (testimony.bound < 1e-4))
+
+
+class TestNestings:
+    def test_dataclasses_and_nested_outputs_are_differentiated(self):
+        @dataclasses.dataclass(frozen=True)
+        class Spring:
+            stiffness: float
+            rest: object
+
+        def model(spring):
+            return {"energy": spring.stiffness * anp.sum(spring.rest**2), "rest": [anp.sin(spring.rest)]}
+
+        report = gradcheck.check(model, at=Spring(0.5, np.array([1.0, 2.0])), jacobian="autograd")
+
+        assert report.verdict == "confirmed"
+        assert report.entries.name[-1] == 'model["rest"][0][1] by spring.rest[1]'

@@ -209,7 +209,7 @@ def test_a_vector_has_the_structure_of_a_dict():
     report = look(loss, {"w": np.array([1.0, 2.0]), "b": 2.0, "name": "n"}, hvp=second)
 
     assert report.verdict == Verdict.CONFIRMED
-    assert "p['b'] along p['w'][0]" in report.entries.name
+    assert 'p["b"] along p["w"][0]' in report.entries.name
 
 
 # --- wrong products --------------------------------------------------------------------------------------------------

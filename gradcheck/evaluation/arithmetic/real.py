@@ -1,5 +1,6 @@
 """How x and f travel in ordinary floating-point numbers."""
 
+import sys
 from collections.abc import Callable
 from typing import Any, TypeAlias
 
@@ -7,11 +8,17 @@ import numpy as np
 
 from gradcheck.errors import UsageError
 from gradcheck.evaluation.moves import Moves, same_content
+from gradcheck.problem.jax_trees import is_jax_array
 from gradcheck.problem.layout import Layout, Leaf
+from gradcheck.problem.opening import opened
+from gradcheck.problem.template import to_jax
 from gradcheck.records.arrays import Array
 
 #: Calls the model at the point of this number, or at all points at once.
 Sender: TypeAlias = Callable[[Any], Any]
+
+#: Points of more bytes are never copied.
+LONG = 1_000_000
 
 
 def sender(
@@ -35,16 +42,11 @@ def sender(
         return _at_once(function, single, moves, mutated)
     if single is not None and single.scalar:
         return _with_number(function, moves)
-    if single is not None and moves.along_axes and single.shape:
+    if single is not None and moves.along_axes and single.shape and single.plain:
         return _with_one_entry_moved(function, single, moves, mutated)
-
-    def send(i: int) -> Any:
-        result, written = call(function, layout, moves.point(i))
-        if written:
-            mutated()
-        return result
-
-    return send
+    if moves.along_axes:
+        return _with_one_part_moved(function, layout, moves, mutated)
+    return _with_all_moved(function, layout, moves, mutated)
 
 
 def _with_number(function: Callable[..., Any], moves: Moves) -> Sender:
@@ -79,12 +81,52 @@ def _with_one_entry_moved(
     return send
 
 
+def _with_one_part_moved(
+    function: Callable[..., Any], layout: Layout, moves: Moves, mutated: Callable[[], None]
+) -> Sender:
+    """The same for a nesting: its parts are views of one vector that belongs to the model."""
+    entries, values = moves.entries()
+    places, numbers = layout.memory_positions(entries).tolist(), values.tolist()
+    base = layout.in_memory_order(moves.base, own=True)  # only read
+    content = bytearray(base.tobytes())
+    picture = np.frombuffer(content)
+
+    def send(i: int) -> Any:
+        place, number = places[i], numbers[i]
+        memory = base.copy()
+        memory[place] = number
+        positional, keywords = layout.received(memory)
+        result = function(*positional, **keywords)
+        picture[place] = number
+        if not same_content(content, memory):
+            mutated()
+        picture[place] = base[place]
+        return result
+
+    return send
+
+
+def _with_all_moved(function: Callable[..., Any], layout: Layout, moves: Moves, mutated: Callable[[], None]) -> Sender:
+    def send(i: int) -> Any:
+        memory = layout.in_memory_order(moves.point(i), own=True)
+        # A long point is made again in parts afterwards; a copy of it would cost more than the time.
+        long = memory.nbytes > LONG and not layout.turned
+        content = bytearray() if long else bytearray(memory.data)
+        positional, keywords = layout.received(memory)
+        result = function(*positional, **keywords)
+        if not (moves.is_point(i, memory) if long else same_content(content, memory)):
+            mutated()
+        return result
+
+    return send
+
+
 def _at_once(function: Callable[..., Any], leaf: Leaf, moves: Moves, mutated: Callable[[], None]) -> Sender:
     def send(part: slice) -> Any:
         points = moves[part].points()
         points = points[:, 0].copy() if leaf.scalar else points
         content = bytearray(points.data)
-        result = function(points)
+        result = function(to_jax(points) if leaf.jax else points)
         if not same_content(content, points):
             mutated()
         return result
@@ -98,27 +140,27 @@ def call(function: Callable[..., Any], layout: Layout, vector: Array, *more: Any
     The function always receives its own copy, so nothing it does to x reaches anybody else. What is given in `more`
     follows its positional arguments as it is.
     """
-    passed: list[tuple[Leaf, Any]] = []
-
-    def copy(leaf: Leaf) -> Any:
-        part = leaf.restore(vector)
-        if isinstance(part, np.ndarray):
-            passed.append((leaf, part))
-        return part
-
-    positional, keywords = layout.arguments(copy)
+    memory = layout.in_memory_order(vector)
+    content = bytearray(memory.data)
+    positional, keywords = layout.received(memory)
     result = function(*positional, *more, **keywords)
-    mutated = any(not same_content(bytearray(vector[leaf.start : leaf.stop].data), part) for leaf, part in passed)
-    return result, mutated
+    return result, not same_content(content, memory)
 
 
 def is_single_precision_jax(result: Any) -> bool:
     """Whether a model returned jax arrays (or a nesting of them) in single precision, as jax does by itself."""
-    if isinstance(result, list | tuple):
-        return any(is_single_precision_jax(part) for part in result)
-    if isinstance(result, dict):
-        return any(is_single_precision_jax(part) for part in result.values())
-    return type(result).__module__.startswith("jax") and getattr(result, "dtype", None) == np.float32
+    if type(result) is np.ndarray or "jax" not in sys.modules:
+        return False
+    waiting = [result]
+    while waiting:
+        part = waiting.pop()
+        if is_jax_array(part):
+            if part.dtype == np.float32:
+                return True
+        elif not isinstance(part, np.ndarray | np.generic | int | float | str):
+            found = opened(part)
+            waiting += found[1] if found is not None else ()
+    return False
 
 
 def as_array(result: Any, who: str) -> np.ndarray[Any, Any]:
@@ -131,11 +173,14 @@ def as_array(result: Any, who: str) -> np.ndarray[Any, Any]:
     """
     if result is None:
         raise UsageError(f"{who} returned None; does it lack a return statement?")
+    if isinstance(result, np.ma.MaskedArray) and np.ma.is_masked(result):
+        raise UsageError(f"{who} returned masked entries, which are no numbers; pick the valid ones with output=...")
     try:
         array = np.array(result)
     except ValueError:
         raise UsageError(
-            f"{who} returned parts of unequal shape; return one array, or pick one with output=..."
+            f"{who} returned parts of unequal shape{_what_it_is(result)}; return one array, or pick one with "
+            f"output={picking(result)}"
         ) from None
     except Exception as error:
         raise UsageError(f"{who} returned {type(result).__name__}, which is no array of numbers: {error}") from None
@@ -159,6 +204,25 @@ def _from_objects(array: np.ndarray[Any, Any], result: Any, who: str) -> np.ndar
     except (TypeError, ValueError):
         keys = f" with keys {sorted(map(str, result))}" if isinstance(result, dict) else ""
         raise UsageError(
-            f"{who} returned {type(result).__name__}{keys}; a number or an array is needed: pick one output with "
-            "output=lambda result: ..."
+            f"{who} returned {type(result).__name__}{keys}{_what_it_is(result)}; a number or an array is needed: pick "
+            f"one output with output={picking(result)}"
         ) from None
+
+
+def _what_it_is(result: Any) -> str:
+    """A word on a value that comes with something beside it."""
+    first = result[0] if isinstance(result, list | tuple) and len(result) > 1 else None
+    number = isinstance(first, int | float | np.number) or getattr(first, "shape", None) == ()
+    return ", a value and something beside it" if number else ""
+
+
+def picking(result: Any) -> str:
+    """How to pick the first part that is numbers."""
+    found = opened(result)
+    if found is None:
+        return "lambda result: ..."
+    container, parts = found
+    for i, part in enumerate(parts):
+        if isinstance(part, float | np.floating) or getattr(getattr(part, "dtype", None), "kind", "") == "f":
+            return f"lambda r: r{container.step(i)}"
+    return f"lambda r: r{container.step(0)}" if parts else "lambda result: ..."

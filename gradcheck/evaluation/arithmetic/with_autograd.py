@@ -77,6 +77,16 @@ def _second_pull(flat: Callable[[Any], Any], start: Array, output: int) -> Calla
     return lambda row: np.zeros_like(start) if (found := pull(row)) is None else np.asarray(found)
 
 
+def in_one_vector(function: Callable[..., Any], parts: Callable[[Any], list[Any]]) -> Callable[..., Any]:
+    """The model that returns the `parts` of its nesting as one vector."""
+
+    def flat(*positional: Any, **keywords: Any) -> Any:
+        held = parts(function(*positional, **keywords))
+        return anp.concatenate([anp.ravel(anp.array(part)) for part in held])
+
+    return flat
+
+
 def _flat(function: Callable[..., Any], layout: Layout) -> Callable[[Any], Any]:
     """The model as a function from one vector to one vector."""
 

@@ -85,6 +85,11 @@ def hvp(function: Callable[..., Any], layout: Layout, point: Array, tangents: ND
         return _by_rows(lambda tangent: jax.jvp(slopes, (start,), (tangent,))[1], tangents)
 
 
+def is_double() -> bool:
+    """Whether jax computes in double precision by the user's own setting."""
+    return bool(jax.dtypes.canonicalize_dtype(np.float64) == np.float64)
+
+
 def double_precision() -> AbstractContextManager[Any]:
     """A scope in which jax computes in double precision; the user's own setting holds again after it."""
     if hasattr(jax, "enable_x64"):
@@ -95,6 +100,16 @@ def double_precision() -> AbstractContextManager[Any]:
         switch = experimental.enable_x64
     scope: AbstractContextManager[Any] = switch(True)
     return scope
+
+
+def in_one_vector(function: Callable[..., Any], parts: Callable[[Any], list[Any]]) -> Callable[..., Any]:
+    """The model that returns the `parts` of its nesting as one vector."""
+
+    def flat(*positional: Any, **keywords: Any) -> Any:
+        held = parts(function(*positional, **keywords))
+        return jnp.concatenate([jnp.ravel(jnp.asarray(part)) for part in held])
+
+    return flat
 
 
 def _flat(function: Callable[..., Any], layout: Layout) -> Callable[[Any], Any]:
