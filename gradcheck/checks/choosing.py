@@ -1,5 +1,6 @@
 """Which way a claim is checked: by its kind, and by its size."""
 
+from gradcheck.checks.automatic_claims import with_trials
 from gradcheck.checks.entrywise import checked_entries
 from gradcheck.claims.policy import Rules
 from gradcheck.evaluation.pipeline import Session
@@ -28,4 +29,5 @@ def checked_claims(session: Session, rules: Rules) -> list[CheckReport]:
 
 def checked_claim(session: Session, function: str, kind: str, centre: Array, rules: Rules, before: int) -> CheckReport:
     """The report on one claim of one function; `before` evaluations were spent on others."""
-    return checked_entries(session, function, kind, centre, rules, before)
+    report = checked_entries(session, function, kind, centre, rules, before)
+    return with_trials(session, report, function, kind, centre, rules)

@@ -22,6 +22,8 @@ from gradcheck.problem.derivative_shape import claim_matrix
 from gradcheck.problem.subject import Subject, Target
 from gradcheck.records.arrays import Array
 
+_IN_DOUBLE = "{run} is a jax model in single precision; it was evaluated in double precision"
+
 
 class Evaluator:
     """Makes the calls one after another; turns exceptions and non-finite values into recorded facts.
@@ -43,6 +45,24 @@ class Evaluator:
         self.ledger = ledger
         self.shapes: dict[str, tuple[int, ...]] = {}
         self.double: set[str] = set()
+        self.transformed: dict[tuple[str, str], Callable[[str, NDArray[Any]], Array]] = {}
+        self._expect_jax()
+
+    def _expect_jax(self) -> None:
+        """Models whose claim is named "jax" are jax's: double precision from the first value on.
+
+        What they return need not show it: numpy's numbers in, numpy's numbers out, and single precision in between.
+        """
+        runs = {t.run for t in self.subject.targets.values() if any(_is_jax(claim) for claim in t.claims.values())}
+        if not runs:
+            return
+        try:
+            from gradcheck.evaluation.arithmetic.with_jax import single_by_default
+        except ImportError:  # told where the derivative is asked for
+            return
+        if single_by_default():
+            self.double |= runs
+            self.ledger.notices.extend(_IN_DOUBLE.format(run=run) for run in sorted(runs))
 
     def __call__(self, calls: Sequence[Call]) -> list[Outcome]:
         with warnings.catch_warnings(), np.errstate(all="ignore"):
@@ -168,9 +188,7 @@ class Evaluator:
         if call.arithmetic != "real" or call.run in self.double or not real.is_single_precision_jax(result):
             return False
         self.double.add(call.run)
-        self.ledger.notices.append(
-            f"{call.run} is a jax model in single precision; it was evaluated in double precision"
-        )
+        self.ledger.notices.append(_IN_DOUBLE.format(run=call.run))
         self.ledger.calls["model"] += 1
         return True
 
@@ -235,9 +253,23 @@ class Evaluator:
         else:
             from gradcheck.evaluation.arithmetic import with_autograd as automatic  # type: ignore[no-redef]
         assert call.rows is not None
+        if call.arithmetic not in ("jvp", "vjp"):
+            return self._transformed(call, target)(call.arithmetic, call.rows)
         sweep = automatic.jvp if call.arithmetic == "jvp" else automatic.vjp
         function = _of_one_point(self.subject.runs[target.run], target.pick, self.subject.batched)
         return np.asarray(sweep(function, self.subject.layout, call.moves.base, call.rows), dtype=float)
+
+    def _transformed(self, call: Call, target: Target) -> Callable[[str, NDArray[Any]], Array]:
+        """The sweeps of a function under transformations; kept, because what is compiled is used again."""
+        key = (target.name, call.source)
+        if key not in self.transformed:
+            if call.source == "jax":
+                from gradcheck.evaluation.arithmetic.jax_transforms import Transformed
+            else:
+                from gradcheck.evaluation.arithmetic.with_autograd import Transformed  # type: ignore[assignment]
+            function = _of_one_point(self.subject.runs[target.run], target.pick, self.subject.batched)
+            self.transformed[key] = Transformed(function, self.subject.layout)
+        return self.transformed[key]
 
 
 class _Tally:
@@ -247,6 +279,10 @@ class _Tally:
 
     def __init__(self) -> None:
         self.begun = self.finished = 0
+
+
+def _is_jax(claim: Any) -> bool:
+    return isinstance(claim, str) and claim == "jax"
 
 
 def _late(call: Call) -> bool:

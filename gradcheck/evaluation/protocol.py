@@ -42,7 +42,8 @@ class Request:
         Displacements along each direction, in units of the direction; complex for complex arithmetic.
     arithmetic : str
         ``"real"``, ``"complex"``, ``"jvp"`` (value: J·direction at each offset 0) or ``"vjp"``
-        (directions are ``(d, m)`` cotangents; value: Jᵀ·cotangent).
+        (directions are ``(d, m)`` cotangents; value: Jᵀ·cotangent); or a way in which a rule is tried, such as
+        ``"jit reverse"``: directions are the rows of `evaluation.arithmetic.jax_transforms`, values the rows it gives.
     source : str
         ``"model"``, ``"jax"``, ``"autograd"``, or ``"claim:gradient"``, ``"claim:jacobian"``.
     function : str
