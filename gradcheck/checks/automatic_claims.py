@@ -9,13 +9,13 @@ import numpy as np
 from gradcheck.checks.claimed import AD_SOURCES, claimed_matrix
 from gradcheck.claims.entries import entry_name
 from gradcheck.claims.policy import Rules
-from gradcheck.claims.transforms import Broken, Tried, trials
+from gradcheck.claims.transforms import Tried, trials
 from gradcheck.counsel.rule_findings import (
     lost_in_single,
     notice_of,
     reason_of,
     restriction,
-    rule_diagnosis,
+    rule_diagnoses,
     short_diagnosis,
     short_finding,
     wrong_second,
@@ -124,7 +124,6 @@ class _Story:
         self.subject, self.function, self.source = subject, function, source
         self.report, self.tried, self.words = report, tried, words
         self.parts = [leaf.path for leaf in leaves]
-        # what the witnesses have refuted anyway says nothing about a transformation of it
         self.broken = tried.broken
 
     def told(self) -> CheckReport:
@@ -132,7 +131,7 @@ class _Story:
         entries = report.entries
         for broken in self.broken:
             entries = _refuted(entries, broken.wrong, reason_of(broken, self.parts))
-        diagnoses = [rule_diagnosis(broken, self.name(broken), self.parts, self.source) for broken in self.broken]
+        diagnoses = rule_diagnoses(self.broken, self._name, self.parts, self.source)
         short = self._short()
         diagnoses += [short] if short else []
         verdict = Verdict.REFUTED if self.broken else report.verdict
@@ -146,8 +145,8 @@ class _Story:
             notices=(*report.notices, *([notice] if notice else [])),
         )
 
-    def name(self, broken: Broken) -> "_Name":
-        return _Name(self.subject, self.function, len(broken.wrong))
+    def _name(self, row: int, column: int) -> str:
+        return entry_name(self.subject, self.function, len(self.broken[0].wrong), row, column)
 
     def variables(self, marks: BoolArray) -> tuple[str, ...]:
         return tuple(self.subject.layout.name(int(j)) for j in marks.nonzero()[0])
@@ -169,11 +168,7 @@ class _Story:
     def _findings(self, short_told: bool) -> list[Finding]:
         point, tried = self.subject.start, self.tried
         about = {"function": self.function, "point": point, "source": self.source}
-        findings = [
-            restriction(way, self._words(way), self.function, point, self.parts, self.source)
-            for way in dict.fromkeys(tried.raised)
-            if self.source == "jax"  # few rules of autograd know forward mode, and nobody misses it
-        ]
+        findings = [] if self.broken else self._restrictions()
         if tried.second:
             findings.append(wrong_second(tried.second, names=self.variables(tried.second.wrong), **about))  # type: ignore[arg-type]
         if tried.single:
@@ -182,29 +177,33 @@ class _Story:
             findings.append(short_finding(self.variables(tried.short), **about))  # type: ignore[arg-type]
         return findings
 
+    def _restrictions(self) -> list[Finding]:
+        """One finding for all ways that fail for the same reason: what cannot be compiled cannot be scanned either."""
+        if self.source != "jax":  # few rules of autograd know forward mode, and nobody misses it
+            return []
+        groups: dict[str, list[str]] = {}
+        for way in dict.fromkeys(self.tried.raised):
+            groups.setdefault(self._words(way).partition(":")[0], []).append(way)
+        return [
+            restriction(ways, self._words(ways[0]), self.function, self.subject.start, self.parts, self.source)
+            for ways in groups.values()
+        ]
+
     def _words(self, way: str) -> str:
-        for each in (f"jit {way}", way, "jit reverse" if way == "jit" else "", "jit second", "jit second reverse"):
+        forward = way.replace("vmap", "vmap forward")
+        for each in (f"jit {way}", way, forward, *(("jit reverse", "jit forward") if way == "jit" else ())):
             if each in self.words:
                 return self.words[each]
         return "it raised"
 
 
-class _Name:
-    """Names of entries by row and column."""
-
-    def __init__(self, subject: Subject, function: str, outputs: int) -> None:
-        self.subject, self.function, self.outputs = subject, function, outputs
-
-    def __call__(self, row: int, column: int) -> str:
-        return entry_name(self.subject, self.function, self.outputs, row, column)
-
-
 def _refuted(entries: Entries, wrong: BoolArray, reason: str) -> Entries:
     """The entries with these refuted; what was refuted before keeps its reason."""
+    index = np.asarray(entries.index)
+    hit = wrong[0, index] if index.ndim == 1 else wrong[index[:, 0], index[:, 1]]
     verdicts, reasons = list(entries.verdict), list(entries.reason)
-    for k, index in enumerate(np.atleast_2d(entries.index.T).T):
-        row, column = (0, int(index[0])) if len(index) == 1 else map(int, index)
-        if wrong[row, column] and verdicts[k] != Verdict.REFUTED:
+    for k in np.flatnonzero(hit).tolist():
+        if verdicts[k] != Verdict.REFUTED:
             verdicts[k], reasons[k] = Verdict.REFUTED, reason
     return replace(entries, verdict=tuple(verdicts), reason=tuple(reasons))
 

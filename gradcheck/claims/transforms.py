@@ -4,9 +4,10 @@ A claim named after an AD library is asked for with the cotangent 1, once, at on
 meet other cotangents, run forwards, are compiled, batched, scanned and differentiated again. Here each of these is
 tried on its own and held against the claim, or against the same sweep done plainly, so that what breaks has a name.
 
-The identities: a sweep is linear in its cotangent (wᵀJ for every w, exactly 0 for 0) or tangent (Jv for every v), forward
-and reverse mode give the same J (⟨Jv, w⟩ = ⟨v, Jᵀw⟩), and a transformation changes nothing but the last digits. Second
-derivatives are held against differences of the gradient along a random direction, and single precision against double.
+The identities: a sweep is linear in its cotangent (wᵀJ for every w, exactly 0 for 0) or tangent (Jv for every v),
+forward and reverse mode give the same J (⟨Jv, w⟩ = ⟨v, Jᵀw⟩), and a transformation changes nothing but the last digits.
+Second derivatives are held against differences of the gradient along a random direction, single precision against
+double.
 """
 
 from collections.abc import Generator, Sequence
@@ -76,7 +77,7 @@ class Broken:
     place : (row, column)
         Where that is; the column is -1 for the value.
     factor : float
-        The size of the cotangent or tangent there, 1 being that of the first one.
+        The cotangent there, if there is one output; else its size, or that of the tangent, beside the first one.
     scaling : Scaling
     power : float
     """
@@ -216,6 +217,7 @@ class _Trials:
         self.first = self.cotangent()
 
     def run(self, second: bool, single: bool, transforms: bool) -> Inquiry[Tried]:
+        self.compiled = transforms
         plain = yield from self._reverse()
         if plain is not None and transforms:
             rows, reference = yield from self._jit(plain)
@@ -253,7 +255,7 @@ class _Trials:
         return np.asarray(reply.values[:, 0, :], dtype=float)
 
     def beyond(self, got: Array, due: Array, rows: Array, level: Array | None = None) -> BoolArray:
-        """Where rows of reverse mode (k, m+n) differ by more than rounding; `level` (k, n) is the size of their terms."""
+        """Where rows of reverse mode (k, m+n) differ by more than rounding; `level` (k, n) is the size of terms."""
         cotangents = np.abs(rows[:, self.n :])
         value, gradient = np.abs(np.where(np.isfinite(due), due, 0.0))[:, : self.m], np.abs(due[:, self.m :])
         gradient = np.where(np.isfinite(gradient), gradient, 0.0)
@@ -282,37 +284,32 @@ class _Trials:
         return np.concatenate([np.tile(self.centre, (len(rows), 1)), gradient], axis=1), level
 
     def cotangent(self) -> Array:
-        return self.rng.uniform(0.5, 1.0, self.m) * self.rng.choice([-1.0, 1.0], self.m) * self.balance
+        return np.asarray(self._random(self.m) * self.balance)
 
     def elsewhere(self, share: float) -> Array:
         """Another point within the bounds; variables of whole numbers stay."""
-        moved = self.rng.uniform(0.5, 1.0, self.n) * self.rng.choice([-1.0, 1.0], self.n) * share * self.size
+        moved = self._random(self.n) * share * self.size
         moved = np.where(self.domain.integer, 0.0, moved)
-        return np.clip(self.base + moved, self.domain.lower, self.domain.upper)
+        return np.asarray(np.clip(self.base + moved, self.domain.lower, self.domain.upper))
+
+    def _random(self, count: int) -> Array:
+        """Numbers of either sign, none of them small."""
+        return np.asarray(self.rng.uniform(0.5, 1.0, count) * self.rng.choice([-1.0, 1.0], count))
 
     def row(self, point: Array, other: Array) -> Array:
         return np.concatenate([point, other])
 
-    def blame(self, way: str, got: Array, due: Array, beyond: BoolArray, **more: object) -> Broken:
+    def blame(self, way: str, got: Array, due: Array, beyond: BoolArray) -> Broken:
         """The broken way with its worst place, from rows of reverse mode."""
         with np.errstate(invalid="ignore"):
             gap = np.abs(got - due)
         gap = np.where(beyond, np.where(np.isfinite(gap), gap, np.inf), -1.0)
         gap[:, self.m :] *= self.size
         k, place = np.unravel_index(int(gap.argmax()), gap.shape)
-        columns = beyond.any(axis=0)
+        columns: BoolArray = np.asarray(beyond.any(axis=0))
         wrong = np.broadcast_to(columns[: self.m, None], self.claim.shape) | self._entries(columns[self.m :])
         entry = (int(place), -1) if place < self.m else (int(wrong[:, place - self.m].argmax()), int(place) - self.m)
-        return Broken(
-            **{
-                "way": _without_jit(way) if way != "jit" else way,
-                "wrong": wrong,
-                "got": float(got[k, place]),
-                "due": float(due[k, place]),
-                "place": entry,
-            }
-            | more  # type: ignore[arg-type]
-        )
+        return Broken(way=way, wrong=wrong, got=float(got[k, place]), due=float(due[k, place]), place=entry)
 
     def _entries(self, columns: BoolArray) -> BoolArray:
         """The entries (m, n) of these columns that may be to blame: the ones that are not zero, or all of them."""
@@ -322,7 +319,7 @@ class _Trials:
     # --- reverse mode, plainly ---
 
     def _reverse(self) -> _Swept:
-        """Rows of the first cotangents at the point, and one at another point last; None if reverse mode is not right."""
+        """Rows of the first cotangents at the point, one at another point last; None if reverse mode is not right."""
         w = self.first
         cotangents = [w, *(size * w for size in (SIZES[1:2] if self.large else SIZES)), 0 * w]
         if not self.large:
@@ -368,12 +365,12 @@ class _Trials:
             if alone is not None and not self.beyond(alone[:count], due, rows[:count], level)[:, self.m :].any():
                 self.tried.broken.append(self.blame("between", found[:count], due, beyond))
                 return
-        columns = beyond.any(axis=0)[self.m :]
+        columns = np.asarray(beyond.any(axis=0))[self.m :]
         sizes = np.array([1.0, *(SIZES[1:2] if self.large else SIZES), 0.0])
         scaling, power = _scaling(found[: len(sizes), self.m :][:, columns], sizes)
         worst = self.blame("reverse", found[:count], due, beyond)
         k = int(np.abs(np.where(beyond, found[:count] - due, 0.0)).max(axis=1).argmax()) if beyond.any() else 0
-        factor = float(sizes[k]) if k < len(sizes) else 1.0
+        factor = float(rows[k, -1]) if self.m == 1 else float(sizes[k]) if k < len(sizes) else 1.0
         wrong = yield from self._entry_by_entry(worst.wrong)
         self.tried.broken.append(replace(worst, scaling=scaling, power=power, factor=factor, wrong=wrong))
 
@@ -405,7 +402,7 @@ class _Trials:
         asked = np.vstack([expanded, *probes[:, None]])
         found = yield from self.ask("jit reverse", asked)
         if found is not None:
-            self._measure_noise(found[len(expanded) :], plain[0])
+            self._measure_noise(found[len(expanded) :], found[0])
             known = np.vstack([expanded, *self.aside[:, None]])
             due, level = self.due(known)
             away = [i for i, row in enumerate(expanded) if not np.array_equal(row[: self.n], self.base)]
@@ -420,10 +417,11 @@ class _Trials:
         found = yield from self.ask("apart", asked, silent=True)
         if found is None:
             return rows, None
-        self._measure_noise(found[len(expanded) :], plain[0])
+        self._measure_noise(found[len(expanded) :], found[0])
         return rows, found[: len(expanded)]
 
     def _measure_noise(self, probes: Array, plain: Array) -> None:
+        """How much sweeps close to the point differ from the one at it, done in the same way."""
         if len(probes):
             moved = np.abs(np.where(np.isfinite(probes), probes - plain, 0.0))
             self.noise = np.where(np.isfinite(plain), moved.max(axis=0), 0.0)
@@ -457,40 +455,47 @@ class _Trials:
     # --- forward mode ---
 
     def _forward(self) -> Inquiry[None]:
+        """Other tangents; compiled if that is no trouble, because plain forward mode compiles every operation."""
         first = self.tangent()
         tangents = [first, *(size * first for size in (SIZES[1:2] if self.large else SIZES)), 0 * first]
         tangents += [] if self.large else [self.tangent()]
         rows = np.array([self.row(self.base, v) for v in tangents])
+        with np.errstate(invalid="ignore", over="ignore"):
+            due = rows[:, self.n :] @ self.claim.T
+        compiled = None
+        if self.compiled and not self.tried.raised:
+            compiled = yield from self.ask("jit forward", rows, silent=True)
+            if compiled is not None and not self._beyond_forward(compiled[:, self.m :], due, rows).any():
+                return
         found = yield from self.ask("forward", rows)
         if found is None:
             return
-        with np.errstate(invalid="ignore", over="ignore"):
-            due = rows[:, self.n :] @ self.claim.T
         got = found[:, self.m :]
         beyond = self._beyond_forward(got, due, rows)
-        if not beyond.any():
-            return
-        outputs = beyond.any(axis=0)
+        if beyond.any():
+            yield from self._accuse_forward(got, due, beyond)
+        elif compiled is not None:
+            beyond = self._beyond_forward(compiled[:, self.m :], due, rows)
+            self.tried.broken.append(self._blame_forward("jit", compiled[:, self.m :], due, beyond))
+
+    def _accuse_forward(self, got: Array, due: Array, beyond: BoolArray) -> Inquiry[None]:
         sizes = np.array([1.0, *(SIZES[1:2] if self.large else SIZES), 0.0])
-        scaling, power = _scaling(got[: len(sizes)][:, outputs], sizes)
-        gap = np.where(beyond, np.nan_to_num(np.abs(got - due), nan=np.inf, posinf=np.inf), -1.0)
-        k, i = np.unravel_index(int(gap.argmax()), gap.shape)
-        wrong = yield from self._column_by_column(np.broadcast_to(outputs[:, None], self.claim.shape))
-        self.tried.broken.append(
-            Broken(
-                way="forward",
-                wrong=wrong,
-                got=float(got[k, i]),
-                due=float(due[k, i]),
-                place=(int(i), int(wrong[i].argmax())),
-                factor=float(sizes[k]) if k < len(sizes) else 1.0,
-                scaling=scaling,
-                power=power,
-            )
-        )
+        scaling, power = _scaling(got[: len(sizes)][:, beyond.any(axis=0)], sizes)
+        broken = self._blame_forward("forward", got, due, beyond)
+        k = int(np.where(beyond, np.nan_to_num(np.abs(got - due), nan=np.inf), -1.0).max(axis=1).argmax())
+        factor = float(sizes[k]) if k < len(sizes) else 1.0
+        wrong = yield from self._column_by_column(broken.wrong)
+        self.tried.broken.append(replace(broken, wrong=wrong, factor=factor, scaling=scaling, power=power))
+
+    def _blame_forward(self, way: str, got: Array, due: Array, beyond: BoolArray) -> Broken:
+        """The broken way with its worst place, from derivatives (k, m) of forward mode."""
+        gap = np.where(beyond, np.nan_to_num(np.abs(got - due), nan=np.inf), -1.0)
+        k, i = (int(place) for place in np.unravel_index(int(gap.argmax()), gap.shape))
+        wrong = np.broadcast_to(np.asarray(beyond.any(axis=0))[:, None], self.claim.shape)
+        return Broken(way=way, wrong=wrong, got=float(got[k, i]), due=float(due[k, i]), place=(i, 0))
 
     def tangent(self) -> Array:
-        return self.rng.uniform(0.5, 1.0, self.n) * self.rng.choice([-1.0, 1.0], self.n) * self.size
+        return np.asarray(self._random(self.n) * self.size)
 
     def _beyond_forward(self, got: Array, due: Array, rows: Array) -> BoolArray:
         tangents = np.abs(rows[:, self.n :])
@@ -516,21 +521,29 @@ class _Trials:
         """Under jit and vmap where there is forward mode only."""
         if self.large or any(broken.way == "forward" for broken in self.tried.broken):
             return
-        points = [self.base, self.elsewhere(NEAR)]
+        points = [self.base, self.elsewhere(NEAR), self.elsewhere(NEAR)]
         rows = np.array([self.row(point, self.tangent()) for point in points])
-        plain = yield from self.ask("forward", rows, silent=True)
+        expanded = _expanded(rows, self.n, self.parts)
+        plain = yield from self.ask("forward", expanded, silent=True)
         if plain is None:
             return
-        for way, name in (("jit forward", "jit"), ("vmap forward", "vmap points")):
-            found = yield from self.ask(way, rows)
-            if found is None:
-                continue
-            beyond = self._beyond_forward(found[:, self.m :], plain[:, self.m :], rows)
-            if beyond.any():
-                k, i = np.unravel_index(int(beyond.argmax()), beyond.shape)
-                wrong = np.broadcast_to(beyond.any(axis=0)[:, None], self.claim.shape)
-                got, due = float(found[k, self.m + i]), float(plain[k, self.m + i])
-                self.tried.broken.append(Broken(way=name, wrong=wrong, got=got, due=due, place=(int(i), 0)))
+        names = ["points", "tangents", *(f"argument {i}" for i in range(len(self.parts)))]
+        yield from self._one_forward("jit forward", "jit", expanded, expanded, plain)
+        found = yield from self.ask("vmap forward", rows, silent=True)
+        if found is not None and not self._beyond_forward(found[:, self.m :], plain[:, self.m :], expanded).any():
+            return
+        for i, name in enumerate(names):
+            part = slice(i * len(rows), (i + 1) * len(rows))
+            yield from self._one_forward(f"vmap forward {name}", f"vmap {name}", rows, expanded[part], plain[part])
+
+    def _one_forward(self, way: str, name: str, rows: Array, due_rows: Array, plain: Array) -> Inquiry[None]:
+        found = yield from self.ask(way, rows)
+        if found is None:
+            return
+        got, due = found[:, self.m :], plain[:, self.m :]
+        beyond = self._beyond_forward(got, due, due_rows)
+        if beyond.any():
+            self.tried.broken.append(self._blame_forward(name, got, due, beyond))
 
     # --- second order ---
 
@@ -548,6 +561,7 @@ class _Trials:
         got, centre = found[0], gradient[self.m :]
         room = room_along(self.base, tangent[None], self.domain)
         wrong = np.ones(self.n, dtype=bool)
+        seen: Testimony | None = None
         for width in (1.0, OTHER_WIDTH):
             other = replace(room, scale=room.scale * width, widest=room.widest * width)
             seen = yield from self._differences(tangent, other, centre)
@@ -556,6 +570,7 @@ class _Trials:
             wrong = wrong & self._off(got, seen, centre)
             if not wrong.any():
                 return
+        assert seen is not None  # or it has returned
         value, bound = seen.value[0], seen.bound[0]
         with np.errstate(invalid="ignore"):
             gap = np.where(wrong, np.nan_to_num(np.abs(got - value), nan=np.inf) * self.size, -1.0)
@@ -595,7 +610,8 @@ class _Trials:
         rows = np.array([self._in_single(row) for row in rows[:1]])
         if not np.isfinite(rows).all():
             return
-        found = yield from self.ask(self.way("single"), rows)
+        # What raises here may be jax's own: it keeps constants of the other precision between its scopes.
+        found = yield from self.ask(self.way("single"), rows, silent=True)
         if found is None:
             return
         shaken = [self.row(point, rows[0, self.n :]) for point in self._shaken(rows[0, : self.n])]
@@ -613,7 +629,8 @@ class _Trials:
             budget = np.maximum(budget, SINGLE_PLAIN * np.maximum(size, SINGLE_PLAIN * reach))
             wrong = np.isfinite(due) & ~(np.abs(got - due) <= np.nan_to_num(budget, nan=np.inf))
         if wrong.any():
-            gap = np.where(wrong, np.nan_to_num(np.abs(got - due), nan=np.inf) * self.size, -1.0)
+            with np.errstate(over="ignore"):
+                gap = np.where(wrong, np.nan_to_num(np.abs(got - due), nan=np.inf) * self.size, -1.0)
             j = int(gap.argmax())
             self.tried.single = Off(wrong=wrong, column=j, got=float(got[j]), due=float(due[j]), bound=float(budget[j]))
 
@@ -687,4 +704,4 @@ def _reply_of(found: Array | None, count: int, m: int, n: int) -> Reply:
 
 
 def _without_jit(way: str) -> str:
-    return "jit" if way == "jit reverse" else way.removeprefix("jit ")
+    return "jit" if way in ("jit reverse", "jit forward") else way.removeprefix("jit ").replace("vmap forward", "vmap")

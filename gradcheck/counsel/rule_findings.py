@@ -2,6 +2,8 @@
 
 from collections.abc import Callable, Mapping, Sequence
 
+import numpy as np
+
 from gradcheck.claims.transforms import Broken, Off, Scaling, Tried
 from gradcheck.records.arrays import Array
 from gradcheck.records.finding import Finding, FindingCode, Location, Severity
@@ -10,6 +12,8 @@ from gradcheck.records.verdict import DiagnosisCode
 from gradcheck.wording import count, listed, number, with_bound
 
 Name = Callable[[int, int], str]
+#: Entries that are named one by one; more are shown by nobody.
+NAMES_MOST = 1000
 
 _WAYS = {
     "reverse": "in reverse mode",
@@ -17,6 +21,7 @@ _WAYS = {
     "jit": "under jit",
     "vmap points": "under vmap (a batch of points)",
     "vmap cotangents": "under vmap (a batch of cotangents at one point)",
+    "vmap tangents": "under vmap (a batch of tangents at one point)",
     "scan": "inside scan",
     "checkpoint": "inside checkpoint",
     "between": "if another point is passed forward before the backward pass",
@@ -25,7 +30,8 @@ _WAYS = {
 }
 
 _MENDS = {
-    "jit": "Look for Python code that does something else while it is traced, and for numbers kept from an earlier call.",
+    "jit": "Look for Python code that does something else while it is traced, and for numbers kept from an earlier "
+    "call.",
     "vmap": "Look at the batching rule, and at host code that is handed the whole batch: sums, means and shapes there.",
     "scan": "Look for Python code that does something else while it is traced.",
     "checkpoint": "Look for what the rule keeps outside its residuals: the forward pass is run twice here.",
@@ -39,8 +45,8 @@ _RESTRICTIONS = {
     "reverse": "Keep to forward mode (jvp, jacfwd); reverse mode needs loops whose length is known beforehand.",
     "jit": "Keep it out of compiled code, or put lax.cond and jnp.where where numbers are needed while it is traced.",
     "vmap": "Loop over the batch instead, or give the operation that has none a batching rule.",
-    "second": "Take second derivatives by differences of the gradient, or write the rule with what jax can differentiate.",
-    "single": "Run it in double precision, or let its constants and results follow the precision of its arguments.",
+    "second": "Take second derivatives by differences of the gradient, or write the rule with operations that have "
+    "rules themselves.",
 }
 
 
@@ -51,54 +57,78 @@ def way_in_words(way: str, parts: Sequence[str]) -> str:
     return _WAYS.get(way, f"under {way}")
 
 
+def _listed(phrases: Sequence[str]) -> str:
+    return listed(phrases, limit=len(phrases), width=80)
+
+
 def reason_of(broken: Broken, parts: Sequence[str]) -> str:
     """Why entries that look right are refuted: ``right alone, wrong under jit: 0.5 where 1 is due``."""
-    what = f"{_what(broken)}{number(broken.got)} where {number(broken.due)} is due"
-    if broken.way in ("reverse", "forward") and broken.scaling != Scaling.LINEAR:
-        size = "cotangent" if broken.way == "reverse" else "tangent"
-        return f"right for a {size} of 1, wrong for {number(broken.factor)}: {what}"
-    if broken.way in ("reverse", "forward"):
+    what = f"{'the value is ' if broken.place[1] < 0 else ''}{number(broken.got)} where {number(broken.due)} is due"
+    if broken.way not in ("reverse", "forward"):
+        return f"right alone, wrong {way_in_words(broken.way, parts)}: {what}"
+    if not _of_size(broken):
         other = "forward" if broken.way == "reverse" else "reverse"
-        if broken.factor == 0:
-            return f"right for a cotangent of 1, wrong for zero: {what}"
         return f"right in {other} mode, wrong {_WAYS[broken.way]}: {what}"
-    return f"right alone, wrong {way_in_words(broken.way, parts)}: {what}"
+    if broken.way == "forward":
+        return f"right for unit tangents, wrong for a tangent {number(broken.factor)} times as large: {what}"
+    if len(broken.wrong) == 1:
+        return f"right for a cotangent of 1, wrong for {number(broken.factor)}: {what}"
+    return f"right for unit cotangents, wrong for others {number(broken.factor)} times as large: {what}"
 
 
-def _what(broken: Broken) -> str:
-    return "the value is " if broken.place[1] < 0 else ""
+def _of_size(broken: Broken) -> bool:
+    """Whether it is the size of the cotangent or tangent that the rule does not follow."""
+    return broken.way in ("reverse", "forward") and (broken.scaling != Scaling.LINEAR or broken.factor == 0)
 
 
-def rule_diagnosis(broken: Broken, name: Name, parts: Sequence[str], source: str) -> Diagnosis:
-    """The likely mistake behind one way that breaks."""
-    names = tuple(name(int(i), int(j)) for i, j in zip(*broken.wrong.nonzero(), strict=True))
+def rule_diagnoses(every: Sequence[Broken], name: Name, parts: Sequence[str], source: str) -> list[Diagnosis]:
+    """The likely mistakes: one for the cotangent, one for the tangent, and one for all transformations that break."""
+    modes = [broken for broken in every if broken.way in ("reverse", "forward")]
+    others = [broken for broken in every if broken.way not in ("reverse", "forward")]
+    diagnoses = [_of_mode(broken, name, parts, source) for broken in modes]
+    if others:
+        first = others[0]
+        names = _names(others, name)
+        also = list(dict.fromkeys(way_in_words(broken.way, parts) for broken in others[1:]))
+        more = f" It goes wrong {_listed(also)} as well." if also else ""
+        mend = _MENDS[first.way.partition(" ")[0]]
+        text = f"{listed(names)}: {reason_of(first, parts)}.{more} {mend}"
+        diagnoses.append(Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names))
+    return diagnoses
+
+
+def _of_mode(broken: Broken, name: Name, parts: Sequence[str], source: str) -> Diagnosis:
+    names = _names([broken], name)
     told = f"{listed(names)}: {reason_of(broken, parts)}"
-    cotangent = broken.way == "reverse" and (broken.scaling != Scaling.LINEAR or broken.factor == 0)
-    if broken.scaling != Scaling.LINEAR or cotangent:
-        size = "cotangent" if broken.way == "reverse" else "tangent"
-        text = (
-            f"{told}. {_of_scaling(broken, size)} Multiply the local derivative by the incoming {size}, once: "
-            f"{source} hands the rule a {size} other than 1 as soon as it stands inside a larger model."
-        )
-        code = DiagnosisCode.IGNORES_COTANGENT if cotangent else DiagnosisCode.UNKNOWN
-        return Diagnosis(code=code, text=text, entries=names)
-    mend = _MENDS[broken.way.partition(" ")[0]]
-    return Diagnosis(code=DiagnosisCode.UNKNOWN, text=f"{told}. {mend}", entries=names)
+    if not _of_size(broken):
+        return Diagnosis(code=DiagnosisCode.UNKNOWN, text=f"{told}. {_MENDS[broken.way]}", entries=names)
+    size = "cotangent" if broken.way == "reverse" else "tangent"
+    text = (
+        f"{told}. {_of_scaling(broken, size)} Multiply the local derivative by the incoming {size}, once: {source} "
+        f"hands the rule other {size}s as soon as it stands inside a larger model."
+    )
+    code = DiagnosisCode.IGNORES_COTANGENT if size == "cotangent" else DiagnosisCode.UNKNOWN
+    return Diagnosis(code=code, text=text, entries=names)
+
+
+def _names(every: Sequence[Broken], name: Name) -> tuple[str, ...]:
+    wrong = np.logical_or.reduce([broken.wrong for broken in every])
+    return tuple(name(int(i), int(j)) for i, j in np.argwhere(wrong)[:NAMES_MOST])
 
 
 def _of_scaling(broken: Broken, size: str) -> str:
-    mode = "reverse" if broken.way == "reverse" else "forward"
+    rule = f"The {'reverse' if broken.way == 'reverse' else 'forward'} rule"
     if broken.scaling == Scaling.CONSTANT:
-        return f"The {mode} rule gives the same for every {size}."
-    if broken.scaling == Scaling.POWER:
-        if broken.power == 1:
-            return f"The {mode} rule loses the sign of its {size}."
-        if broken.power == 0:
-            return f"The {mode} rule takes only the sign of its {size}."
-        return f"The {mode} rule grows with the power {number(broken.power)} of its {size}."
+        return f"{rule} gives the same for every {size}."
     if broken.scaling == Scaling.LINEAR:
-        return f"The {mode} rule divides by its {size}."
-    return f"The {mode} rule does not scale with its {size}: a part of it does not see the {size}, or sees it changed."
+        return f"{rule} divides by its {size}, or by something that vanishes with it."
+    if broken.scaling == Scaling.POWER and broken.power == 1:
+        return f"{rule} loses the sign of its {size}."
+    if broken.scaling == Scaling.POWER and broken.power == 0:
+        return f"{rule} takes only the sign of its {size}."
+    if broken.scaling == Scaling.POWER:
+        return f"{rule} grows with the power {number(broken.power)} of its {size}."
+    return f"{rule} does not scale with its {size}: a part of it does not see the {size}, or sees it changed."
 
 
 def short_diagnosis(names: tuple[str, ...], source: str) -> Diagnosis:
@@ -123,16 +153,19 @@ def short_finding(names: tuple[str, ...], function: str, point: Array, source: s
     )
 
 
-def restriction(way: str, words: str, function: str, point: Array, parts: Sequence[str], source: str) -> Finding:
-    """A way in which the model cannot be differentiated at all: it limits the use of the derivative, no more."""
+def restriction(
+    ways: Sequence[str], words: str, function: str, point: Array, parts: Sequence[str], source: str
+) -> Finding:
+    """Ways in which the model cannot be differentiated at all: they limit the use of the derivative, no more."""
+    phrases = list(dict.fromkeys(way_in_words(way, parts) for way in ways))
     return Finding(
         code=FindingCode.CRASH,
         severity=Severity.REMARK,
         function=function,
         variable=None,
         where=Location(point=point),
-        text=f"{source} cannot differentiate {function} {way_in_words(way, parts)}: {words}",
-        remedy=_RESTRICTIONS.get(way.partition(" ")[0], f"Do without {way} around it."),
+        text=f"{source} cannot differentiate {function} {_listed(phrases)}: {words}",
+        remedy=_RESTRICTIONS.get(ways[0].partition(" ")[0], f"Do without {ways[0]} around it."),
     )
 
 
@@ -167,8 +200,8 @@ def lost_in_single(single: Off, function: str, names: Sequence[str], point: Arra
         else f"has hardly a digit left in single precision, {source}'s default: {number(single.got)} where double "
         f"precision gives {number(single.due)}"
         if abs(single.got - single.due) > 0.1 * abs(single.due)
-        else f"keeps few digits in single precision, {source}'s default: {number(single.got, 8)} where double precision "
-        f"gives {number(single.due, 8)}"
+        else f"keeps few digits in single precision, {source}'s default: {number(single.got, 8)} where double "
+        f"precision gives {number(single.due, 8)}"
     )
     return Finding(
         code=FindingCode.NON_FINITE if overflow else FindingCode.LOW_PRECISION,

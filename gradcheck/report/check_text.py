@@ -141,7 +141,7 @@ def _story(report: CheckReport, name_width: int, bounded: bool) -> str:
         return _direction_story(report)
     name = wording.shortened(worst.name, name_width)
     if worst.verdict == Verdict.REFUTED and worst.agrees and worst.reason:
-        return f"{name} is {worst.reason if bounded else worst.reason.partition(':')[0]}"
+        return f"{name} is {worst.reason if bounded else worst.reason.partition(':')[0].partition(' (')[0]}"
     claim, witness = _figures(worst, wording.MOST_DIGITS)
     if worst.verdict == Verdict.UNDECIDED and not np.isfinite([worst.witness, worst.bound]).all():
         return f"{name} is claimed {claim}, and no witness can tell"

@@ -546,6 +546,28 @@ trap(
     says=("forward mode",),
 )
 
+# --- traps that were added later ----------------------------------------------------------------------------------
+
+
+def _first_of_the_batch_on_host(x: Any, y: Any) -> Any:
+    """Right for one point and for batches of both arguments; of a batch of one argument it takes the first for all."""
+    if x.shape != y.shape:
+        lead = np.broadcast_shapes(x.shape, y.shape)[:-1]
+        return np.broadcast_to(np.sum(x[:1] * y[:1], axis=-1), lead)
+    return np.sum(x * y, axis=-1)
+
+
+weighted_on_host = by_reverse(
+    on_host(_first_of_the_batch_on_host, (), "expand_dims"),
+    lambda residue, c: (c * residue[1], c * residue[0]),
+)
+trap(
+    "host code wrong for a batch of one argument of two",
+    lambda a, b: weighted_on_host(a, b) ** 2,
+    args(np.array([0.3, 0.7]), np.array([1.1, 0.4])),
+    says=("under vmap over",),
+)
+
 # --- honest models ------------------------------------------------------------------------------------------------
 
 RESTRICTION = ("crash",)

@@ -9,10 +9,12 @@ from collections.abc import Callable
 from contextlib import AbstractContextManager
 from typing import Any, TypeAlias
 
+import jax
+import jax.numpy as jnp
 import numpy as np
 from numpy.typing import NDArray
 
-from gradcheck.evaluation.arithmetic.with_jax import double_precision, flat_model, in_precision, jax, jnp
+from gradcheck.evaluation.arithmetic.with_jax import double_precision, flat_model, in_precision
 from gradcheck.problem.layout import Layout, Leaf
 from gradcheck.records.arrays import Array
 
@@ -39,9 +41,10 @@ class Transformed:
 
     * ``"reverse"``: all forward passes first, one a different point, then the backward passes in the order of the rows;
     * ``"apart"``: the same row by row;
-    * ``"forward"``; ``"vmap forward"``;
+    * ``"forward"``;
     * ``"vmap points"``, ``"vmap cotangents"`` (at the first point), ``"vmap argument 0"`` (the others from the first
       point), and ``"vmap"``: the rows of all of these, one after another;
+    * ``"vmap forward"``, ``"vmap forward points"``, ``"vmap forward tangents"``, ``"vmap forward argument 0"``;
     * ``"scan"`` over the rows, ``"checkpoint"``, and both: ``"scan checkpoint"``;
     * ``"second"`` (forward over reverse), ``"second reverse"`` (reverse over reverse);
     * ``"single"``: ``"reverse"`` in single precision.
@@ -129,35 +132,44 @@ class Transformed:
         return np.array(found)
 
     def _vmapped(self, way: str) -> Program:
-        if way == "vmap":
-            ways = ["vmap points", "vmap cotangents", *(f"vmap argument {i}" for i in arguments_alone(self.leaves))]
-            each = [self._vmapped(one) for one in ways]
-            return lambda rows: jnp.concatenate([one(rows) for one in each])
-        if way == "vmap points":
-            return jax.vmap(self._reverse)
-        if way == "vmap forward":
-            return jax.vmap(self._forward)
-        if way == "vmap cotangents":
+        forward = way.startswith("vmap forward")
+        kind = way.removeprefix("vmap forward" if forward else "vmap").strip()
+        if kind == "points":
+            program: Program = jax.vmap(self._forward if forward else self._reverse)
+            return program
+        if kind in ("cotangents", "tangents"):
+            return self._over_tangents if forward else self._over_cotangents
+        if kind:
+            return self._over_one_argument(int(kind.rpartition(" ")[2]), forward)
+        alone = [f"argument {i}" for i in arguments_alone(self.leaves)]
+        each = [self._vmapped(f"{way} {one}") for one in ("points", "tangents" if forward else "cotangents", *alone)]
+        return lambda rows: jnp.concatenate([one(rows) for one in each])
 
-            def over_cotangents(rows: Any) -> Any:
-                value, pull = jax.vjp(self.flat, rows[0, : self.size])
-                gradients = jax.vmap(lambda c: pull(c.astype(value.dtype))[0])(rows[:, self.size :])
-                return jnp.concatenate([jnp.broadcast_to(value, (len(rows), value.size)), gradients], axis=1)
+    def _over_cotangents(self, rows: Any) -> Any:
+        value, pull = jax.vjp(self.flat, rows[0, : self.size])
+        gradients = jax.vmap(lambda c: pull(c.astype(value.dtype))[0])(rows[:, self.size :])
+        return jnp.concatenate([jnp.broadcast_to(value, (len(rows), value.size)), gradients], axis=1)
 
-            return over_cotangents
-        return self._over_one_argument(int(way.rpartition(" ")[2]))
+    def _over_tangents(self, rows: Any) -> Any:
+        point = rows[0, : self.size]
+        return jax.vmap(lambda v: jnp.concatenate(jax.jvp(self.flat, (point,), (v,))))(rows[:, self.size :])
 
-    def _over_one_argument(self, which: int) -> Program:
-        def of_parts(parts: Any, cotangent: Any) -> Any:
+    def _over_one_argument(self, which: int, forward: bool) -> Program:
+        def reverse(parts: Any, cotangent: Any) -> Any:
             value, pull = jax.vjp(self.parts, parts)
             gradient = pull(cotangent.astype(value.dtype))[0]
             return jnp.concatenate([value, *(jnp.ravel(part) for part in gradient)])
+
+        def push(parts: Any, tangent: Any) -> Any:
+            moved = tuple(_part(tangent, leaf) for leaf in self.leaves)
+            return jnp.concatenate(jax.jvp(self.parts, (parts,), (moved,)))
 
         def over_one(rows: Any) -> Any:
             parts = [_part(rows[0], leaf) for leaf in self.leaves]
             parts[which] = jax.vmap(lambda row: _part(row, self.leaves[which]))(rows[:, : self.size])
             axes = tuple(0 if i == which else None for i in range(len(parts)))
-            return jax.vmap(of_parts, in_axes=(axes, 0))(tuple(parts), rows[:, self.size :])
+            sweep = jax.vmap(push if forward else reverse, in_axes=(axes, 0))
+            return sweep(tuple(parts), rows[:, self.size :])
 
         return over_one
 
