@@ -90,6 +90,7 @@ def tried_claim(
         centre,
         subject.domain,
         source,
+        right=_known(report.entries, claim),
         parts=[slice(leaf.start, leaf.stop) for leaf in leaves[:PARTS_MOST]] if len(leaves) > 1 else (),
         second=source == "jax" and report.verdict != Verdict.REFUTED,
         single=source == "jax" and _single_by_default(),
@@ -195,6 +196,16 @@ class _Story:
             if each in self.words:
                 return self.words[each]
         return "it raised"
+
+
+def _known(entries: Entries, claim: Array) -> Array:
+    """The derivative as far as it is known: the witness where it has refuted the claim, else the claim."""
+    index = np.asarray(entries.index)
+    rows, columns = (np.zeros(len(index), dtype=np.intp), index) if index.ndim == 1 else index.T
+    refuted = np.array([verdict == Verdict.REFUTED for verdict in entries.verdict], dtype=bool)
+    known = claim.copy()
+    known[rows[refuted], columns[refuted]] = entries.witness[refuted]
+    return known
 
 
 def _refuted(entries: Entries, wrong: BoolArray, reason: str) -> Entries:

@@ -80,6 +80,8 @@ class Broken:
         The cotangent there, if there is one output; else its size, or that of the tangent, beside the first one.
     scaling : Scaling
     power : float
+    claimed_right : bool
+        Whether the claim itself, with unit cotangents or tangents, stands.
     """
 
     way: str
@@ -90,6 +92,7 @@ class Broken:
     factor: float = 1.0
     scaling: Scaling = Scaling.LINEAR
     power: float = 1.0
+    claimed_right: bool = True
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -149,6 +152,7 @@ def trials(
     domain: Domain,
     source: str,
     *,
+    right: Array | None = None,
     parts: Sequence[slice] = (),
     second: bool = True,
     single: bool = False,
@@ -168,6 +172,8 @@ def trials(
         Other points stay within its bounds.
     source : str
         ``"jax"``, or ``"autograd"`` (with ``transforms=False``).
+    right : ndarray, shape (m, n), optional
+        The derivative as far as it is known otherwise; by default the claim.
     parts : sequence of slice
         Parts of x that are each put under vmap alone.
     second : bool
@@ -187,7 +193,8 @@ def trials(
     About thirty sweeps and ten more for the second derivative; a handful for more than 20,000 variables and outputs.
     """
     parts = parts if len(parts) > 1 else ()
-    return (yield from _Trials(base, claim, centre, domain, source, parts, seed).run(second, single, transforms))
+    known = claim if right is None else right
+    return (yield from _Trials(base, claim, known, centre, domain, source, parts, seed).run(second, single, transforms))
 
 
 class _Trials:
@@ -195,13 +202,14 @@ class _Trials:
         self,
         base: Array,
         claim: Array,
+        right: Array,
         centre: Array,
         domain: Domain,
         source: str,
         parts: Sequence[slice],
         seed: int,
     ) -> None:
-        self.base, self.claim, self.centre = np.asarray(base, dtype=float), claim, centre
+        self.base, self.claim, self.right, self.centre = np.asarray(base, dtype=float), claim, right, centre
         self.domain, self.source, self.parts = domain, source, parts
         self.rng = np.random.default_rng(seed)
         self.m, self.n = claim.shape
@@ -311,6 +319,12 @@ class _Trials:
         entry = (int(place), -1) if place < self.m else (int(wrong[:, place - self.m].argmax()), int(place) - self.m)
         return Broken(way=way, wrong=wrong, got=float(got[k, place]), due=float(due[k, place]), place=entry)
 
+    def _stands(self, marks: BoolArray) -> bool:
+        """Whether the claim is right in the marked entries, as far as is known."""
+        with np.errstate(invalid="ignore"):
+            off = np.abs(self.claim - self.right) > PLAIN * np.abs(self.right)
+        return not bool((off & marks).any())
+
     def _entries(self, columns: BoolArray) -> BoolArray:
         """The entries (m, n) of these columns that may be to blame: the ones that are not zero, or all of them."""
         entries = columns & (self.claim != 0)
@@ -369,7 +383,11 @@ class _Trials:
         sizes = np.array([1.0, *(SIZES[1:2] if self.large else SIZES), 0.0])
         scaling, power = _scaling(found[: len(sizes), self.m :][:, columns], sizes)
         worst = self.blame("reverse", found[:count], due, beyond)
-        k = int(np.abs(np.where(beyond, found[:count] - due, 0.0)).max(axis=1).argmax()) if beyond.any() else 0
+        gap = np.where(beyond, np.nan_to_num(np.abs(found[:count] - due), nan=np.inf), -1.0)
+        k, place = (int(part) for part in np.unravel_index(int(gap.argmax()), gap.shape))
+        with np.errstate(invalid="ignore"):
+            worth = float(rows[k, self.n :] @ self.right[:, place - self.m])
+        worst = replace(worst, got=float(found[k, place]), due=worth, claimed_right=self._stands(worst.wrong))
         factor = float(rows[k, -1]) if self.m == 1 else float(sizes[k]) if k < len(sizes) else 1.0
         wrong = yield from self._entry_by_entry(worst.wrong)
         self.tried.broken.append(replace(worst, scaling=scaling, power=power, factor=factor, wrong=wrong))
@@ -461,11 +479,12 @@ class _Trials:
         tangents += [] if self.large else [self.tangent()]
         rows = np.array([self.row(self.base, v) for v in tangents])
         with np.errstate(invalid="ignore", over="ignore"):
-            due = rows[:, self.n :] @ self.claim.T
+            due = rows[:, self.n :] @ self.right.T
         compiled = None
         if self.compiled and not self.tried.raised:
             compiled = yield from self.ask("jit forward", rows, silent=True)
             if compiled is not None and not self._beyond_forward(compiled[:, self.m :], due, rows).any():
+                self._accuse_claim(rows, due)
                 return
         found = yield from self.ask("forward", rows)
         if found is None:
@@ -474,18 +493,36 @@ class _Trials:
         beyond = self._beyond_forward(got, due, rows)
         if beyond.any():
             yield from self._accuse_forward(got, due, beyond)
-        elif compiled is not None:
+            return
+        self._accuse_claim(rows, due)
+        if compiled is not None:
             beyond = self._beyond_forward(compiled[:, self.m :], due, rows)
             self.tried.broken.append(self._blame_forward("jit", compiled[:, self.m :], due, beyond))
 
+    def _accuse_claim(self, rows: Array, due: Array) -> None:
+        """Forward mode is right: does the claim differ from it, and is that reverse mode?"""
+        if any(broken.way == "reverse" for broken in self.tried.broken) or "reverse" in self.tried.raised:
+            return
+        with np.errstate(invalid="ignore", over="ignore"):
+            claimed = rows[:, self.n :] @ self.claim.T
+        beyond = self._beyond_forward(claimed, due, rows)
+        if beyond.any():
+            broken = self._blame_forward("reverse", claimed, due, beyond)
+            with np.errstate(invalid="ignore"):
+                off = np.abs(self.claim - self.right) > PLAIN * np.abs(self.right)
+            self.tried.broken.append(replace(broken, wrong=off, claimed_right=False) if off.any() else broken)
+
     def _accuse_forward(self, got: Array, due: Array, beyond: BoolArray) -> Inquiry[None]:
         sizes = np.array([1.0, *(SIZES[1:2] if self.large else SIZES), 0.0])
-        scaling, power = _scaling(got[: len(sizes)][:, beyond.any(axis=0)], sizes)
+        scaling, power = _scaling(got[: len(sizes)][:, np.asarray(beyond.any(axis=0))], sizes)
         broken = self._blame_forward("forward", got, due, beyond)
         k = int(np.where(beyond, np.nan_to_num(np.abs(got - due), nan=np.inf), -1.0).max(axis=1).argmax())
         factor = float(sizes[k]) if k < len(sizes) else 1.0
         wrong = yield from self._column_by_column(broken.wrong)
-        self.tried.broken.append(replace(broken, wrong=wrong, factor=factor, scaling=scaling, power=power))
+        right = self._stands(wrong)
+        self.tried.broken.append(
+            replace(broken, wrong=wrong, factor=factor, scaling=scaling, power=power, claimed_right=right)
+        )
 
     def _blame_forward(self, way: str, got: Array, due: Array, beyond: BoolArray) -> Broken:
         """The broken way with its worst place, from derivatives (k, m) of forward mode."""
@@ -500,7 +537,7 @@ class _Trials:
     def _beyond_forward(self, got: Array, due: Array, rows: Array) -> BoolArray:
         tangents = np.abs(rows[:, self.n :])
         with np.errstate(invalid="ignore", over="ignore"):
-            level = tangents @ np.abs(np.where(np.isfinite(self.claim), self.claim, 0.0)).T
+            level = tangents @ np.abs(np.where(np.isfinite(self.right), self.right, 0.0)).T
         moved = (tangents / self.size).max(axis=1, keepdims=True)
         noise = (tangents @ self.noise[self.m :])[:, None] / np.abs(self.first)
         allowed = self.plain * level + ROUNDINGS * moved * np.abs(self.centre) + NOISE_MARGIN * noise
@@ -514,7 +551,7 @@ class _Trials:
         found = yield from self.ask("forward", rows, silent=True)
         if found is None:
             return suspected
-        wrong = self._beyond_forward(found[:, self.m :], rows[:, self.n :] @ self.claim.T, rows).T
+        wrong = self._beyond_forward(found[:, self.m :], rows[:, self.n :] @ self.right.T, rows).T
         return wrong if wrong.any() else suspected
 
     def _forward_transformed(self) -> Inquiry[None]:

@@ -68,12 +68,21 @@ def reason_of(broken: Broken, parts: Sequence[str]) -> str:
         return f"right alone, wrong {way_in_words(broken.way, parts)}: {what}"
     if not _of_size(broken):
         other = "forward" if broken.way == "reverse" else "reverse"
-        return f"right in {other} mode, wrong {_WAYS[broken.way]}: {what}"
-    if broken.way == "forward":
-        return f"right for unit tangents, wrong for a tangent {number(broken.factor)} times as large: {what}"
-    if len(broken.wrong) == 1:
-        return f"right for a cotangent of 1, wrong for {number(broken.factor)}: {what}"
-    return f"right for unit cotangents, wrong for others {number(broken.factor)} times as large: {what}"
+        if broken.claimed_right or broken.way == "reverse":
+            return f"right in {other} mode, wrong {_WAYS[broken.way]}: {what}"
+        return f"wrong {_WAYS[broken.way]} as well: {what}"
+    size = "tangent" if broken.way == "forward" else "cotangent"
+    times = number(broken.factor)
+    if size == "cotangent" and len(broken.wrong) == 1:
+        return (
+            f"right for a cotangent of 1, wrong for {times}: {what}"
+            if broken.claimed_right
+            else (f"wrong for a cotangent of {times}: {what}")
+        )
+    which = f"a random one{'' if broken.factor == 1 else f' times {times}'}"
+    if broken.claimed_right:
+        return f"right for unit {size}s, wrong for others ({which}): {what}"
+    return f"wrong for other {size}s ({which}): {what}"
 
 
 def _of_size(broken: Broken) -> bool:
