@@ -203,6 +203,7 @@ def _known(entries: Entries, claim: Array) -> Array:
     index = np.asarray(entries.index)
     rows, columns = (np.zeros(len(index), dtype=np.intp), index) if index.ndim == 1 else index.T
     refuted = np.array([verdict == Verdict.REFUTED for verdict in entries.verdict], dtype=bool)
+    refuted &= np.isfinite(entries.claim)  # of NaN the other mode makes NaN as well
     known = claim.copy()
     known[rows[refuted], columns[refuted]] = entries.witness[refuted]
     return known

@@ -309,9 +309,7 @@ class _Trials:
 
     def blame(self, way: str, got: Array, due: Array, beyond: BoolArray) -> Broken:
         """The broken way with its worst place, from rows of reverse mode."""
-        with np.errstate(invalid="ignore"):
-            gap = np.abs(got - due)
-        gap = np.where(beyond, np.where(np.isfinite(gap), gap, np.inf), -1.0)
+        gap = _gap(got, due, beyond)
         gap[:, self.m :] *= self.size
         k, place = np.unravel_index(int(gap.argmax()), gap.shape)
         columns: BoolArray = np.asarray(beyond.any(axis=0))
@@ -355,11 +353,24 @@ class _Trials:
         at_point = slice(len(cotangents))
         self._measure_precision(found)
         due, level = self.due(rows[at_point])
+        due = self._without_overflow(found[at_point], due)
         beyond = self.beyond(found[at_point], due, rows[at_point], level)
         if not beyond[:, self.m :].any():
             return found
         yield from self._accuse_reverse(rows, found, due, level, beyond)
         return None
+
+    def _without_overflow(self, found: Array, due: Array) -> Array:
+        """What is due, unknown where a large cotangent or tangent may have made the numbers overflow on the way."""
+        large = np.abs(self._sizes(len(due)))[:, None] > 1
+        return np.where(large & ~np.isfinite(found), np.nan, due)
+
+    def _sizes(self, count: int) -> Array:
+        """Sizes of the cotangents or tangents of the first rows, beside the first one; those of the others are 1."""
+        sizes = np.ones(count)
+        some = [1.0, *(SIZES[1:2] if self.large else SIZES), 0.0]
+        sizes[: len(some)] = some[:count]
+        return sizes
 
     def _measure_precision(self, found: Array) -> None:
         """Where gradients come as exact float32 for random cotangents: everywhere, or only in the rule."""
@@ -383,7 +394,7 @@ class _Trials:
         sizes = np.array([1.0, *(SIZES[1:2] if self.large else SIZES), 0.0])
         scaling, power = _scaling(found[: len(sizes), self.m :][:, columns], sizes)
         worst = self.blame("reverse", found[:count], due, beyond)
-        gap = np.where(beyond, np.nan_to_num(np.abs(found[:count] - due), nan=np.inf), -1.0)
+        gap = _gap(found[:count], due, beyond)
         k, place = (int(part) for part in np.unravel_index(int(gap.argmax()), gap.shape))
         with np.errstate(invalid="ignore"):
             worth = float(rows[k, self.n :] @ self.right[:, place - self.m])
@@ -441,8 +452,8 @@ class _Trials:
     def _measure_noise(self, probes: Array, plain: Array) -> None:
         """How much sweeps close to the point differ from the one at it, done in the same way."""
         if len(probes):
-            moved = np.abs(np.where(np.isfinite(probes), probes - plain, 0.0))
-            self.noise = np.where(np.isfinite(plain), moved.max(axis=0), 0.0)
+            known = np.isfinite(probes) & np.isfinite(plain)
+            self.noise = np.maximum(_gap(probes, plain, known).max(axis=0), 0.0)
 
     def way(self, name: str) -> str:
         return f"jit {name}" if self.compiled else name
@@ -478,45 +489,48 @@ class _Trials:
         tangents = [first, *(size * first for size in (SIZES[1:2] if self.large else SIZES)), 0 * first]
         tangents += [] if self.large else [self.tangent()]
         rows = np.array([self.row(self.base, v) for v in tangents])
-        with np.errstate(invalid="ignore", over="ignore"):
-            due = rows[:, self.n :] @ self.right.T
         compiled = None
         if self.compiled and not self.tried.raised:
             compiled = yield from self.ask("jit forward", rows, silent=True)
-            if compiled is not None and not self._beyond_forward(compiled[:, self.m :], due, rows).any():
-                self._accuse_claim(rows, due)
+            if compiled is not None and not self._off_forward(compiled, rows, self.claim).any():
                 return
         found = yield from self.ask("forward", rows)
         if found is None:
             return
-        got = found[:, self.m :]
-        beyond = self._beyond_forward(got, due, rows)
-        if beyond.any():
-            yield from self._accuse_forward(got, due, beyond)
-            return
-        self._accuse_claim(rows, due)
-        if compiled is not None:
-            beyond = self._beyond_forward(compiled[:, self.m :], due, rows)
-            self.tried.broken.append(self._blame_forward("jit", compiled[:, self.m :], due, beyond))
+        if not self._off_forward(found, rows, self.claim).any():
+            if compiled is not None:
+                beyond = self._off_forward(compiled, rows, self.claim)
+                due = self._due_forward(rows, self.claim)
+                self.tried.broken.append(self._blame_forward("jit", compiled[:, self.m :], due, beyond))
+        elif (beyond := self._off_forward(found, rows, self.right)).any():
+            yield from self._accuse_forward(found[:, self.m :], self._due_forward(rows, self.right), beyond)
+        else:
+            self._accuse_claim(rows)
 
-    def _accuse_claim(self, rows: Array, due: Array) -> None:
-        """Forward mode is right: does the claim differ from it, and is that reverse mode?"""
+    def _due_forward(self, rows: Array, derivative: Array) -> Array:
+        with np.errstate(invalid="ignore", over="ignore"):
+            return np.asarray(rows[:, self.n :] @ derivative.T)
+
+    def _off_forward(self, found: Array, rows: Array, derivative: Array) -> BoolArray:
+        """Where forward mode differs from a derivative."""
+        got = found[:, self.m :]
+        return self._beyond_forward(got, self._without_overflow(got, self._due_forward(rows, derivative)), rows)
+
+    def _accuse_claim(self, rows: Array) -> None:
+        """Forward mode gives what the witnesses say, and the claim by reverse mode does not."""
         if any(broken.way == "reverse" for broken in self.tried.broken) or "reverse" in self.tried.raised:
             return
-        with np.errstate(invalid="ignore", over="ignore"):
-            claimed = rows[:, self.n :] @ self.claim.T
-        beyond = self._beyond_forward(claimed, due, rows)
-        if beyond.any():
-            broken = self._blame_forward("reverse", claimed, due, beyond)
-            with np.errstate(invalid="ignore"):
-                off = np.abs(self.claim - self.right) > PLAIN * np.abs(self.right)
-            self.tried.broken.append(replace(broken, wrong=off, claimed_right=False) if off.any() else broken)
+        claimed, due = self._due_forward(rows, self.claim), self._due_forward(rows, self.right)
+        broken = self._blame_forward("reverse", claimed, due, self._beyond_forward(claimed, due, rows))
+        with np.errstate(invalid="ignore"):
+            off = np.abs(self.claim - self.right) > PLAIN * np.abs(self.right)
+        self.tried.broken.append(replace(broken, wrong=off, claimed_right=False))
 
     def _accuse_forward(self, got: Array, due: Array, beyond: BoolArray) -> Inquiry[None]:
         sizes = np.array([1.0, *(SIZES[1:2] if self.large else SIZES), 0.0])
         scaling, power = _scaling(got[: len(sizes)][:, np.asarray(beyond.any(axis=0))], sizes)
         broken = self._blame_forward("forward", got, due, beyond)
-        k = int(np.where(beyond, np.nan_to_num(np.abs(got - due), nan=np.inf), -1.0).max(axis=1).argmax())
+        k = int(_gap(got, due, beyond).max(axis=1).argmax())
         factor = float(sizes[k]) if k < len(sizes) else 1.0
         wrong = yield from self._column_by_column(broken.wrong)
         right = self._stands(wrong)
@@ -526,13 +540,13 @@ class _Trials:
 
     def _blame_forward(self, way: str, got: Array, due: Array, beyond: BoolArray) -> Broken:
         """The broken way with its worst place, from derivatives (k, m) of forward mode."""
-        gap = np.where(beyond, np.nan_to_num(np.abs(got - due), nan=np.inf), -1.0)
+        gap = _gap(got, due, beyond)
         k, i = (int(place) for place in np.unravel_index(int(gap.argmax()), gap.shape))
         wrong = np.broadcast_to(np.asarray(beyond.any(axis=0))[:, None], self.claim.shape)
         return Broken(way=way, wrong=wrong, got=float(got[k, i]), due=float(due[k, i]), place=(i, 0))
 
     def tangent(self) -> Array:
-        return np.asarray(self._random(self.n) * self.size)
+        return np.asarray(self._random(self.n) * self.size / self.size.max())
 
     def _beyond_forward(self, got: Array, due: Array, rows: Array) -> BoolArray:
         tangents = np.abs(rows[:, self.n :])
@@ -547,7 +561,7 @@ class _Trials:
         """The wrong entries, each variable moved on its own."""
         if self.n > ROWS_MOST:
             return suspected
-        rows = np.array([self.row(self.base, tangent) for tangent in np.diag(-1.7 * self.size)])
+        rows = np.array([self.row(self.base, tangent) for tangent in np.diag(-1.7 * self.size / self.size.max())])
         found = yield from self.ask("forward", rows, silent=True)
         if found is None:
             return suspected
@@ -585,7 +599,7 @@ class _Trials:
     # --- second order ---
 
     def _second(self, gradient: Array) -> Inquiry[None]:
-        tangent = self.tangent() / np.sqrt(self.n)
+        tangent = self.tangent()
         tangent = np.where(self.domain.integer, 0.0, tangent)
         rows = np.concatenate([self.base, self.first, tangent])[None]
         found = yield from self.ask(self.way("second"), rows, silent=True)
@@ -609,9 +623,7 @@ class _Trials:
                 return
         assert seen is not None  # or it has returned
         value, bound = seen.value[0], seen.bound[0]
-        with np.errstate(invalid="ignore"):
-            gap = np.where(wrong, np.nan_to_num(np.abs(got - value), nan=np.inf) * self.size, -1.0)
-        j = int(gap.argmax())
+        j = int((_gap(got, value, wrong) * self.size).argmax())
         self.tried.second = Off(wrong=wrong, column=j, got=float(got[j]), due=float(value[j]), bound=float(bound[j]))
 
     def _off(self, got: Array, seen: Testimony, gradient: Array) -> BoolArray:
@@ -658,7 +670,7 @@ class _Trials:
         if reference is None:
             return
         got, due = found[0, self.m :], reference[0, self.m :]
-        condition = np.abs(reference[1:, self.m :] - due).max(axis=0)
+        condition = _gap(reference[1:, self.m :], due, np.isfinite(due)).max(axis=0)
         size = np.abs(np.where(np.isfinite(due), due, 0.0))
         reach = float((size * self.size).max()) / self.size
         with np.errstate(invalid="ignore"):
@@ -666,9 +678,7 @@ class _Trials:
             budget = np.maximum(budget, SINGLE_PLAIN * np.maximum(size, SINGLE_PLAIN * reach))
             wrong = np.isfinite(due) & ~(np.abs(got - due) <= np.nan_to_num(budget, nan=np.inf))
         if wrong.any():
-            with np.errstate(over="ignore"):
-                gap = np.where(wrong, np.nan_to_num(np.abs(got - due), nan=np.inf) * self.size, -1.0)
-            j = int(gap.argmax())
+            j = int(_gap(got / 2, due / 2, wrong).argmax())
             self.tried.single = Off(wrong=wrong, column=j, got=float(got[j]), due=float(due[j]), bound=float(budget[j]))
 
     def _in_single(self, row: Array) -> Array:
@@ -684,6 +694,13 @@ class _Trials:
     def _shaken(self, point: Array) -> Array:
         moved = point * (1 + 4 * SINGLE * self.rng.choice([-1.0, 1.0], (3, self.n)))
         return np.clip(moved, self.domain.lower, self.domain.upper)
+
+
+def _gap(got: Array, due: Array, where: BoolArray) -> Array:
+    """Distances; infinite where one is not finite, -1 outside `where`."""
+    with np.errstate(invalid="ignore", over="ignore"):
+        gap = np.abs(got - due)
+    return np.where(where, np.where(np.isfinite(gap), gap, np.inf), -1.0)
 
 
 def _differs(got: Array, due: Array, allowed: Array) -> BoolArray:
