@@ -657,7 +657,8 @@ class _Trials:
 
     def _single(self, rows: Array) -> Inquiry[None]:
         rows = np.array([self._in_single(row) for row in rows[:1]])
-        if not np.isfinite(rows).all():
+        inside = (rows[:, : self.n] >= self.domain.lower) & (rows[:, : self.n] <= self.domain.upper)
+        if not (np.isfinite(rows).all() and inside.all()):  # no such number between the bounds
             return
         # What raises here may be jax's own: it keeps constants of the other precision between its scopes.
         found = yield from self.ask(self.way("single"), rows, silent=True)
