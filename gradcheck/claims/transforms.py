@@ -43,6 +43,9 @@ PLAIN_SECOND = 1e-5
 OTHER_WIDTH = 0.3719
 #: With more variables and outputs than this, fewer sweeps, and none under vmap: their batches take memory.
 LARGE = 20_000
+#: Compiling takes some milliseconds an equation. Programs of more equations than the first number are not compiled for
+#: second order, scan, checkpoint and single precision as well; beyond the second one not for vmap either.
+EQUATIONS_FEW, EQUATIONS_MANY = 120, 360
 #: Up to so many rows, a wrong matrix is asked for row by row to find its wrong entries.
 ROWS_MOST = 32
 #: Unit round-off of single precision; gradients may be off by so many of them, and by so many times what so small a
@@ -133,6 +136,8 @@ class Tried:
     sweeps : int
     complete : bool
         False where the budget or the time ended before.
+    equations : int
+        Of a sweep in reverse mode, where that is the reason why only some transformations were tried; else 0.
     """
 
     short: BoolArray
@@ -143,6 +148,7 @@ class Tried:
     single: Off | None = None
     sweeps: int = 0
     complete: bool = True
+    equations: int = 0
 
 
 def trials(
@@ -228,18 +234,37 @@ class _Trials:
         self.compiled = transforms
         plain = yield from self._reverse()
         if plain is not None and transforms:
+            equations = yield from self._equations()
             rows, reference = yield from self._jit(plain)
             if reference is not None and not self.large:
-                yield from self._vmap(rows, reference)
-                yield from self._scan(rows, reference)
-                if single:
-                    yield from self._single(rows)
-                if second and not self.tried.broken:
-                    yield from self._second(reference[0])
+                if equations <= EQUATIONS_MANY:
+                    yield from self._vmap(rows, reference)
+                if equations <= EQUATIONS_FEW:
+                    yield from self._further(rows, reference, second, single)
         yield from self._forward()
         if plain is None and "reverse" in self.tried.raised and transforms:
             yield from self._forward_transformed()
         return self.tried
+
+    def _further(self, rows: Array, reference: Array, second: bool, single: bool) -> Inquiry[None]:
+        yield from self._scan(rows, reference)
+        if single:
+            yield from self._single(rows)
+        if second and not self.tried.broken:
+            yield from self._second(reference[0])
+
+    def _equations(self) -> Generator[Request, Reply, int]:
+        """The size of the program; 0 where it cannot be traced, and so will not be compiled."""
+        if self.large:
+            return 0
+        found = yield from self.ask("equations", np.array([self.row(self.base, self.first)]), silent=True)
+        if found is None:
+            return 0
+        self.tried.ways.pop()
+        self.tried.sweeps -= 1
+        equations = int(found[0, 0])
+        self.tried.equations = equations if equations > EQUATIONS_FEW else 0
+        return equations
 
     # --- asking and comparing ---
 

@@ -243,4 +243,9 @@ def notice_of(tried: Tried, source: str) -> str:
     if not done:
         return ""
     rest = "" if tried.complete else "; the budget or the time ended before more could be tried"
+    if tried.equations:
+        rest += (
+            f"; the other transformations were left out, because the program is large "
+            f"({count(tried.equations, 'equation')}): check rules of your own apart"
+        )
     return f"{source} was also tried with {listed(done, limit=len(done))}: {count(tried.sweeps, 'sweep')}{rest}"

@@ -47,7 +47,8 @@ class Transformed:
     * ``"vmap forward"``, ``"vmap forward points"``, ``"vmap forward tangents"``, ``"vmap forward argument 0"``;
     * ``"scan"`` over the rows, ``"checkpoint"``, and both: ``"scan checkpoint"``;
     * ``"second"`` (forward over reverse), ``"second reverse"`` (reverse over reverse);
-    * ``"single"``: ``"reverse"`` in single precision.
+    * ``"single"``: ``"reverse"`` in single precision;
+    * ``"equations"``: no sweep, but how many equations one of reverse mode has, as a single number.
     """
 
     def __init__(self, function: Callable[..., Any], layout: Layout) -> None:
@@ -72,6 +73,8 @@ class Transformed:
 
     def _program(self, way: str, *, compiled: bool) -> Program:
         each = {"forward": self._forward, "second": self._second, "second reverse": self._second_reverse}
+        if way == "equations":
+            return self._equations
         if way == "reverse" and not compiled:
             return self._interleaved
         if way in ("reverse", "apart", "single", *each):
@@ -131,6 +134,10 @@ class Transformed:
             found.append(np.concatenate([np.asarray(value), np.asarray(gradient)]))
         return np.array(found)
 
+    def _equations(self, rows: Rows) -> NDArray[Any]:
+        traced = jax.make_jaxpr(self._reverse)(jnp.asarray(rows[0], dtype=float))
+        return np.array([[float(_equations_of(traced.jaxpr))]])
+
     def _vmapped(self, way: str) -> Program:
         forward = way.startswith("vmap forward")
         kind = way.removeprefix("vmap forward" if forward else "vmap").strip()
@@ -187,6 +194,18 @@ def _of_parts(function: Callable[..., Any], layout: Layout) -> Callable[[Any], A
 
 def _part(row: Any, leaf: Leaf) -> Any:
     return row[leaf.start] if leaf.scalar else row[leaf.start : leaf.stop].reshape(leaf.shape)
+
+
+def _equations_of(program: Any) -> int:
+    """Equations of a traced program and of all programs inside it."""
+    inner = (part for equation in program.eqns for value in equation.params.values() for part in _programs_in(value))
+    return len(program.eqns) + sum(map(_equations_of, inner))
+
+
+def _programs_in(value: Any) -> list[Any]:
+    parts = value if isinstance(value, tuple | list) else (value,)
+    opened = [getattr(part, "jaxpr", part) for part in parts]
+    return [part for part in opened if hasattr(part, "eqns")]
 
 
 def _precision_of(way: str) -> AbstractContextManager[Any]:
