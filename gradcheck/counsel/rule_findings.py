@@ -72,7 +72,7 @@ def reason_of(broken: Broken, parts: Sequence[str]) -> str:
             return f"right in {other} mode, wrong {_WAYS[broken.way]}: {what}"
         return f"wrong {_WAYS[broken.way]} as well: {what}"
     size = "tangent" if broken.way == "forward" else "cotangent"
-    times = number(broken.factor)
+    times = number(broken.factor) if broken.factor else "zero"
     if size == "cotangent" and len(broken.wrong) == 1:
         return (
             f"right for a cotangent of 1, wrong for {times}: {what}"
