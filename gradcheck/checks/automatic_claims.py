@@ -43,7 +43,7 @@ def with_trials(
 ) -> CheckReport:
     """The report on a claim, with what the trials show if it is the name of an AD library."""
     source = session.subject.targets[function].claims[kind]
-    if kind not in KINDS or not isinstance(source, str) or source not in AD_SOURCES:
+    if not rules.trials or kind not in KINDS or not isinstance(source, str) or source not in AD_SOURCES:
         return report
     if centre.size > 1 and centre.size * session.subject.layout.size > ENTRIES_MOST:
         return report
@@ -154,6 +154,8 @@ class _Story:
 
     def _short(self) -> Diagnosis | None:
         """Single precision of the rule as the mistake behind entries that are off by its rounding."""
+        if not self.tried.short.any():
+            return None
         names = [
             entry
             for entry, index, verdict in zip(

@@ -229,7 +229,7 @@ def test_both_derivatives_of_a_robust_norm_are_confirmed_away_from_its_corners(n
 # --- automatic differentiation of special functions (jax) ---
 
 
-@pytest.mark.parametrize(("name", "x"), [("erf", 0.7), ("entr", 0.7), ("logit", 0.3), ("log_ndtr", -3.0)])
+@pytest.mark.parametrize(("name", "x"), [("erf", 0.7), ("logit", 0.3)])
 def test_the_rules_of_special_functions_hold_alone_and_under_transformations(name, x):
     functions = pytest.importorskip("jax.scipy.special")
 
