@@ -256,11 +256,8 @@ def jnp():
 
 #: What jax gives, and the slopes below and above the point.
 KINKS = {
-    "abs": (lambda np: np.abs, 0.0, 1.0, (-1.0, 1.0)),
     "maximum": (lambda np: lambda x: np.maximum(x, 0.0), 0.0, 0.5, (0.0, 1.0)),
-    "rectifier by where": (lambda np: lambda x: np.where(x > 0, x, 0.0), 0.0, 0.0, (0.0, 1.0)),
     "clip": (lambda np: lambda x: np.clip(x, 0.0, 1.0), 1.0, 0.5, (1.0, 0.0)),
-    "largest of two equal ones": (lambda np: lambda x: np.max(np.stack([x, 0 * x + 0.7])), 0.7, 0.5, (0.0, 1.0)),
     "table": (
         lambda np: lambda x: np.interp(x, np.array([0.0, 1.0, 2.0]), np.array([0.0, 1.0, 4.0])),
         1.0,
@@ -286,14 +283,10 @@ def test_at_a_kink_the_report_shows_what_jax_returns_between_the_slopes_of_both_
     assert f"the slope is {below:g} below it and {above:g} above" in text
 
 
-@pytest.mark.parametrize(
-    ("name", "x", "bad"),
-    [("sqrt", 0.0, np.inf), ("arccos", 1.0, -np.inf)],
-)
-def test_an_infinite_slope_is_undecided_because_the_quotients_grow_without_limit(jnp, name, x, bad):
-    report = report_on(getattr(jnp, name), x, gradient="jax")
+def test_an_infinite_slope_is_undecided_because_the_quotients_grow_without_limit(jnp):
+    report = report_on(jnp.arccos, 1.0, gradient="jax")
 
-    assert (report.verdict, report.entries.claim[0]) == (UNDECIDED, bad)
+    assert (report.verdict, report.entries.claim[0]) == (UNDECIDED, -np.inf)
     assert "grow without limit" in report.entries.reason[0]
 
 
@@ -304,13 +297,8 @@ def test_an_angle_at_the_origin_jumps_and_its_nan_is_undecided(jnp):
     assert {finding.code for finding in report.findings} == {"jump"}
 
 
-@pytest.mark.parametrize(
-    ("name", "at"), [("std", [0.5, 0.5, 0.5]), ("linalg.norm", [0.0, 0.0])], ids=["equal values", "norm at zero"]
-)
-def test_a_nan_at_a_kink_is_refuted_and_the_kink_told_beside_it(jnp, name, at):
-    function = jnp.linalg.norm if name == "linalg.norm" else jnp.std
-
-    report = report_on(function, at, gradient="jax")
+def test_a_nan_at_a_kink_is_refuted_and_the_kink_told_beside_it(jnp):
+    report = report_on(jnp.std, [0.5, 0.5, 0.5], gradient="jax")
 
     assert report.verdict == REFUTED
     assert {finding.code for finding in report.findings} == {"kink"}
@@ -323,10 +311,3 @@ def test_a_value_that_overflows_is_told_before_any_derivative(jnp):
         report_on(lambda x: jnp.log(1 + jnp.exp(x)), 800.0, gradient="jax")
 
     assert report_on(lambda x: jnp.logaddexp(0.0, x), 800.0, gradient="jax").verdict == CONFIRMED
-
-
-def test_a_level_of_a_staircase_has_the_derivative_zero_and_nothing_is_decided(jnp):
-    report = report_on(jnp.round, 0.3, gradient="jax")
-
-    assert (report.verdict, report.entries.claim[0]) == (UNDECIDED, 0.0)
-    assert [finding.code for finding in report.findings] == ["staircase"]

@@ -1,4 +1,4 @@
-"""Every eighth trap and every eighth honest rule of the corpus; the whole of it is measured by `benchmarks.rules`."""
+"""Every twelfth trap and every twelfth honest rule of the corpus; the whole of it is measured by `benchmarks.rules`."""
 
 import pytest
 
@@ -17,12 +17,12 @@ def test_the_corpus_has_traps_and_honest_rules_enough_and_no_name_twice():
     assert len(set(names)) == len(names)
 
 
-@pytest.mark.parametrize("rule", TRAPS[1::8], ids=lambda rule: rule.name)
+@pytest.mark.parametrize("rule", TRAPS[4::12], ids=lambda rule: rule.name)
 def test_a_trap_is_named(rule):
     assert heard(rule).missing == []
 
 
-@pytest.mark.parametrize("rule", HONEST[1::8], ids=lambda rule: rule.name)
+@pytest.mark.parametrize("rule", HONEST[4::12], ids=lambda rule: rule.name)
 def test_an_honest_rule_is_not_accused(rule):
     outcome = heard(rule)
 
