@@ -107,7 +107,7 @@ def heard(rule: "Rule", times: int = 1) -> Outcome:
     except Exception as error:  # whatever it is, it counts against the library and must not end the measurement
         return Outcome(rule=rule, verdict="", text=f"{type(error).__name__}: {error}")
     report = reports[0]
-    sweeps = re.search(r"(\d+) sweeps?", report.notices[-1]) if report.notices else None
+    sweeps = re.search(r"(\d+) sweeps?", " ".join(report.notices))
     return Outcome(
         rule=rule,
         verdict=str(report.verdict),

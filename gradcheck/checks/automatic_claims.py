@@ -136,14 +136,18 @@ class _Story:
         short = self._short()
         diagnoses += [short] if short else []
         verdict = Verdict.REFUTED if self.broken else report.verdict
-        notice = notice_of(self.tried, self.source)
+        notices = [notice_of(self.tried, self.source)]
+        if self.tried.second:
+            notices.append(
+                f"the verdict is on the gradient; its second derivative by {self.source} is wrong, see there"
+            )
         return replace(
             report,
             verdict=verdict,
             entries=entries,
             diagnoses=(*diagnoses, *_unexplained(report.diagnoses, diagnoses)),
             findings=(*report.findings, *self._findings(short is not None)),
-            notices=(*report.notices, *([notice] if notice else [])),
+            notices=(*report.notices, *filter(None, notices)),
         )
 
     def _name(self, row: int, column: int) -> str:

@@ -161,6 +161,7 @@ class TestSecondOrder:
         (finding,) = report.findings
         assert (finding.code, finding.severity) == ("witness-conflict", "hazard")
         assert "second derivative" in finding.text
+        assert "second derivative" in report.notices[-1]
         assert finding.evidence["by_jax"] == 0
         assert abs(finding.evidence["by_differences"]) > 0.1
 
