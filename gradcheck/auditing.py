@@ -245,7 +245,7 @@ class _Audit:
         moved = replace(self.subject, start=frozen(point))
         session = replace(self.session, subject=moved)
         try:
-            self._take(checked_claims(session, Rules()), moved)
+            self._take(checked_claims(session, Rules(trials=False)), moved)
         except ModelFailure as error:
             self.findings.append(replace(start_failure(moved, error), severity=Severity.HAZARD, remedy=_AVOID))
 

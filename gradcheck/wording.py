@@ -47,7 +47,7 @@ FINDING_WORDS: dict[FindingCode, str] = {
     FindingCode.TOLERANCE_DRIFT: "the derivative drifts with the model's own tolerance",
     FindingCode.UNREPEATABLE: "the same point gives different values",
     FindingCode.NON_FINITE: "NaN or infinity within the bounds",
-    FindingCode.CRASH: "the model fails within the bounds",
+    FindingCode.CRASH: "the model or its derivative fails",
     FindingCode.TIMEOUT: "the model takes too long",
     FindingCode.BOUND_CROSSED: "the model was called outside its bounds",
     FindingCode.DEAD_VARIABLE: "a variable has no effect",

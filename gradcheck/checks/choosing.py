@@ -2,6 +2,7 @@
 
 from dataclasses import replace
 
+from gradcheck.checks.automatic_claims import with_trials
 from gradcheck.checks.combined import with_broken_pair
 from gradcheck.checks.entrywise import checked_entries
 from gradcheck.checks.identities import broken_pair
@@ -67,7 +68,9 @@ def _of_function(session: Session, function: str, centre: Array, rules: Rules, b
 def checked_claim(session: Session, function: str, kind: str, centre: Array, rules: Rules, before: int) -> CheckReport:
     """The report on one claimed first derivative of a function; `before` evaluations were spent on others."""
     report = checked_entries(session, function, kind, centre, rules, before)
-    return with_value(session, function, centre, rules, report) if kind == "value_and_gradient" else report
+    if kind == "value_and_gradient":
+        return with_value(session, function, centre, rules, report)
+    return with_trials(session, report, function, kind, centre, rules)
 
 
 def _hold_pairs(

@@ -10,6 +10,7 @@ from gradcheck.records.arrays import Array
 from gradcheck.records.finding import Finding
 from gradcheck.witnesses.difference_reasons import SPENT
 
+_MODES = {"vjp": "reverse mode", "jvp": "forward mode"}
 AD_SOURCES = ("jax", "autograd")
 
 
@@ -53,6 +54,7 @@ def _automatic_claim(session: Session, function: str, kind: str, source: str, ce
     if kind == "gradient" and centre.size != 1:
         raise UsageError(f"gradient={source!r}: the model returns {centre.size} outputs; use jacobian={source!r}")
     n, m = subject.layout.size, centre.size
+    words: dict[str, str] = {}
     for arithmetic in ("vjp", "jvp") if m <= n else ("jvp", "vjp"):
         size = m if arithmetic == "vjp" else n
         request = Request(
@@ -67,5 +69,8 @@ def _automatic_claim(session: Session, function: str, kind: str, source: str, ce
         if reply.status[0, 0] in (Status.OK, Status.NONFINITE):
             swept = reply.values[:, 0]
             return swept if arithmetic == "vjp" else swept.T
-    words = session.ledger.last_words.get((function, source), SPENT)
-    raise UsageError(f"{kind}={source!r}: {source} cannot differentiate {function}: {words}")
+        words[_MODES[arithmetic]] = session.ledger.last_words.get((function, source), SPENT)
+    # a mistake in a rule may show in one mode only, while the other has no rule at all
+    told = set(words.values())
+    each = told if len(told) == 1 else [f"in {mode}, {text}" for mode, text in words.items()]
+    raise UsageError(f"{kind}={source!r}: {source} cannot differentiate {function}: {'; '.join(each)}")

@@ -20,7 +20,8 @@ DEFAULT_REL_TOL = 1e-8
 class Rules:
     """How a claim is judged: tolerances, witnesses, and along what; validated.
 
-    `directions` is ``"all"`` (entry by entry), a number of random directions, or None: by size.
+    `directions` is ``"all"`` (entry by entry), a number of random directions, or None: by size. `trials` is whether
+    claims that name an AD library are also tried with other cotangents and under transformations.
     """
 
     rel_tol: float | None = None
@@ -28,6 +29,7 @@ class Rules:
     witnesses: tuple[str, ...] = WITNESSES
     directions: int | str | None = None
     seed: int = 0
+    trials: bool = True
 
     @staticmethod
     def of(

@@ -29,6 +29,7 @@ from gradcheck.records.arrays import Array
 MATRIX_CLAIMS = frozenset({"claim:gradient", "claim:jacobian", "claim:value_and_gradient"})
 #: What the source of a claim begins with that is asked as a function of its own, at any point.
 SLOPE = "slope:"
+_IN_DOUBLE = "{run} is a jax model in single precision; it was evaluated in double precision"
 
 
 class Evaluator:
@@ -51,8 +52,26 @@ class Evaluator:
         self.ledger = ledger
         self.shapes: dict[str, tuple[int, ...]] = {}
         self.double: set[str] = set()
+        self.transformed: dict[tuple[str, str], Callable[[str, NDArray[Any]], Array]] = {}
         if subject.layout.holds_jax:
             self._keep_double()
+        self._expect_jax()
+
+    def _expect_jax(self) -> None:
+        """Models whose claim is named "jax" are jax's: double precision from the first value on.
+
+        What they return need not show it: numpy's numbers in, numpy's numbers out, and single precision in between.
+        """
+        runs = {t.run for t in self.subject.targets.values() if any(_is_jax(claim) for claim in t.claims.values())}
+        if not runs:
+            return
+        try:
+            from gradcheck.evaluation.arithmetic.with_jax import is_double
+        except ImportError:  # told where the derivative is asked for
+            return
+        if not is_double() and not runs <= self.double:
+            self.double |= runs
+            self.ledger.notices.extend(_IN_DOUBLE.format(run=run) for run in sorted(runs))
 
     def __call__(self, calls: Sequence[Call]) -> list[Outcome]:
         with warnings.catch_warnings(), np.errstate(all="ignore"):
@@ -184,9 +203,7 @@ class Evaluator:
         if call.arithmetic != "real" or call.run in self.double or not real.is_single_precision_jax(result):
             return False
         self.double.add(call.run)
-        self.ledger.notices.append(
-            f"{call.run} is a jax model in single precision; it was evaluated in double precision"
-        )
+        self.ledger.notices.append(_IN_DOUBLE.format(run=call.run))
         self.ledger.calls["model"] += 1
         return True
 
@@ -316,6 +333,8 @@ class Evaluator:
 
     def _automatic(self, call: Call, target: Target) -> NDArray[Any]:
         assert call.rows is not None
+        if call.arithmetic not in ("jvp", "vjp", "hvp"):
+            return self._transformed(call, target)(call.arithmetic, call.rows)
         return self._swept(call.source, call.arithmetic, target, call.moves.base, call.rows)
 
     def _swept(self, source: str, sweep: str, target: Target, point: Array, rows: NDArray[Any]) -> NDArray[Any]:
@@ -326,11 +345,34 @@ class Evaluator:
         else:
             from gradcheck.evaluation.arithmetic import with_autograd as automatic  # type: ignore[no-redef]
         by_name = {"jvp": automatic.jvp, "vjp": automatic.vjp, "hvp": automatic.hvp}
+        function = self._in_one_vector(target, automatic.in_one_vector)
+        return np.asarray(by_name[sweep](function, self.subject.layout, point, rows), dtype=float)
+
+    def _in_one_vector(self, target: Target, made: Callable[..., Callable[..., Any]]) -> Callable[..., Any]:
+        """The function of one point; `made` so that it returns one vector, where it returns a nesting."""
         function = _of_one_point(self.subject.runs[target.run], target.pick, self.subject.batched)
         outputs = self.subject.outputs.get(target.name)
-        if outputs is not None and outputs.single is None:
-            function = automatic.in_one_vector(function, partial(output_parts, outputs))
-        return np.asarray(by_name[sweep](function, self.subject.layout, point, rows), dtype=float)
+        return (
+            function
+            if outputs is None or outputs.single is not None
+            else made(function, partial(output_parts, outputs))
+        )
+
+    def _transformed(self, call: Call, target: Target) -> Callable[[str, NDArray[Any]], Array]:
+        """The sweeps of a function under transformations; kept, because what is compiled is used again."""
+        key = (target.name, call.source)
+        if key not in self.transformed:
+            if call.source == "jax":
+                from gradcheck.evaluation.arithmetic.jax_transforms import Transformed
+                from gradcheck.evaluation.arithmetic.with_jax import in_one_vector
+            else:
+                from gradcheck.evaluation.arithmetic.with_autograd import (  # type: ignore[assignment]
+                    Transformed,
+                    in_one_vector,
+                )
+            function = self._in_one_vector(target, in_one_vector)
+            self.transformed[key] = Transformed(function, self.subject.layout)
+        return self.transformed[key]
 
 
 class _Tally:
@@ -340,6 +382,10 @@ class _Tally:
 
     def __init__(self) -> None:
         self.begun = self.finished = 0
+
+
+def _is_jax(claim: Any) -> bool:
+    return isinstance(claim, str) and claim == "jax"
 
 
 def _late(call: Call) -> bool:

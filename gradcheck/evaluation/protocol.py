@@ -42,7 +42,9 @@ class Request:
         Displacements along each direction, in units of the direction; complex for complex arithmetic.
     arithmetic : str
         ``"real"``, ``"complex"``, ``"jvp"`` (value: J·direction at each offset 0), ``"vjp"``
-        (directions are ``(d, m)`` cotangents; value: Jᵀ·cotangent) or ``"hvp"`` (value: H·direction).
+        (directions are ``(d, m)`` cotangents; value: Jᵀ·cotangent), ``"hvp"`` (value: H·direction); or a way in which
+        a rule is tried, such as ``"jit reverse"``: directions are the rows of
+        `evaluation.arithmetic.jax_transforms`, values the rows it gives.
     source : str
         ``"model"``, ``"jax"``, ``"autograd"``; a claim at the point itself, such as ``"claim:gradient"`` (a matrix) or
         ``"claim:jvp"`` (one product for each direction); or a claim as a function of its own, such as

@@ -127,6 +127,12 @@ class _Entry:
     bound: float
     digits: float
     verdict: Verdict
+    reason: str
+
+    @property
+    def agrees(self) -> bool:
+        """Whether claim and witness look alike; where such an entry is refuted, something else has refuted it."""
+        return abs(self.claim - self.witness) <= max(self.bound, 1e-8 * abs(self.witness))
 
 
 def _entry(entries: Entries, position: int) -> _Entry:
@@ -137,6 +143,7 @@ def _entry(entries: Entries, position: int) -> _Entry:
         bound=float(entries.bound[position]),
         digits=float(entries.digits[position]),
         verdict=entries.verdict[position],
+        reason=entries.reason[position],
     )
 
 
@@ -150,6 +157,8 @@ def _story(report: CheckReport, name_width: int, bounded: bool) -> str:
     if worst.verdict != report.verdict:  # the directions decided, and no single entry carries the verdict
         return _direction_story(report)
     name = wording.shortened(worst.name, name_width)
+    if worst.verdict == Verdict.REFUTED and worst.agrees and worst.reason:
+        return f"{name} is {worst.reason if bounded else worst.reason.partition(':')[0].partition(' (')[0]}"
     claim, witness = _figures(worst, wording.MOST_DIGITS)
     if worst.verdict == Verdict.UNDECIDED and not np.isfinite([worst.witness, worst.bound]).all():
         return f"{name} is claimed {claim}, and no witness can tell"

@@ -87,6 +87,37 @@ def in_one_vector(function: Callable[..., Any], parts: Callable[[Any], list[Any]
     return flat
 
 
+class Transformed:
+    """Sweeps that are tried beside the claim, row by row: see `gradcheck.evaluation.arithmetic.jax_transforms`.
+
+    Ways: ``"reverse"`` (all forward passes first), ``"apart"`` and ``"forward"``.
+    """
+
+    def __init__(self, function: Callable[..., Any], layout: Layout) -> None:
+        self.flat = _flat(function, layout)
+        self.size = layout.size
+
+    def __call__(self, way: str, rows: NDArray[Any]) -> Array:
+        """The rows that come back: value and gradient, or value and derivative along the tangent.
+
+        Raises
+        ------
+        Exception
+            Whatever tracing raises; NotImplementedError where an operation has no rule for forward mode.
+        """
+        points, others = rows[:, : self.size], rows[:, self.size :]
+        if way == "forward":
+            pushes = [autograd.make_jvp(self.flat)(point) for point in points]
+            pairs = [push(other) for push, other in zip(pushes, others, strict=True)]
+            return np.array([np.concatenate(pair) for pair in pairs], dtype=float)
+        if way == "apart":
+            return np.concatenate([self("reverse", row[None]) for row in rows])
+        passes = [autograd.make_vjp(self.flat)(point) for point in points]
+        return np.array(
+            [np.concatenate([value, pull(c)]) for (pull, value), c in zip(passes, others, strict=True)], dtype=float
+        )
+
+
 def _flat(function: Callable[..., Any], layout: Layout) -> Callable[[Any], Any]:
     """The model as a function from one vector to one vector."""
 

@@ -53,7 +53,7 @@ def jvp(function: Callable[..., Any], layout: Layout, point: Array, tangents: ND
     Double precision holds in this thread and for this call only; the switch of the whole process is not touched.
     """
     with double_precision():
-        flat = _flat(function, layout)
+        flat = flat_model(function, layout)
         start = jnp.asarray(point, dtype=float)
         return _by_rows(lambda tangent: jax.jvp(flat, (start,), (tangent,))[1], tangents)
 
@@ -64,7 +64,7 @@ def vjp(function: Callable[..., Any], layout: Layout, point: Array, cotangents: 
     Everything else as in `jvp`.
     """
     with double_precision():
-        value, pull = jax.vjp(_flat(function, layout), jnp.asarray(point, dtype=float))
+        value, pull = jax.vjp(flat_model(function, layout), jnp.asarray(point, dtype=float))
         return _by_rows(lambda cotangent: pull(cotangent.astype(value.dtype))[0], cotangents)
 
 
@@ -74,7 +74,7 @@ def hvp(function: Callable[..., Any], layout: Layout, point: Array, tangents: ND
     Everything else as in `jvp`.
     """
     with double_precision():
-        flat = _flat(function, layout)
+        flat = flat_model(function, layout)
         start = jnp.asarray(point, dtype=float)
         outputs = jax.eval_shape(flat, start).shape[0]
 
@@ -92,13 +92,18 @@ def is_double() -> bool:
 
 def double_precision() -> AbstractContextManager[Any]:
     """A scope in which jax computes in double precision; the user's own setting holds again after it."""
+    return in_precision(double=True)
+
+
+def in_precision(*, double: bool) -> AbstractContextManager[Any]:
+    """A scope in which jax computes in double or in single precision, whatever the user's own setting is."""
     if hasattr(jax, "enable_x64"):
         switch = jax.enable_x64
     else:  # before jax 0.8
         from jax import experimental
 
         switch = experimental.enable_x64
-    scope: AbstractContextManager[Any] = switch(True)
+    scope: AbstractContextManager[Any] = switch(double)
     return scope
 
 
@@ -112,21 +117,23 @@ def in_one_vector(function: Callable[..., Any], parts: Callable[[Any], list[Any]
     return flat
 
 
-def _flat(function: Callable[..., Any], layout: Layout) -> Callable[[Any], Any]:
-    """The model as a function from one vector to one vector."""
+def _part(vector: Any, leaf: Leaf) -> Any:
+    return vector[leaf.start] if leaf.scalar else vector[leaf.start : leaf.stop].reshape(leaf.shape)
+
+
+def flat_model(
+    function: Callable[..., Any], layout: Layout, part: Callable[[Any, Leaf], Any] = _part
+) -> Callable[[Any], Any]:
+    """The model as a function from one vector (or what `part` takes the leaves from) to one vector."""
 
     def flat(vector: Any) -> Any:
-        positional, keywords = layout.arguments(lambda leaf: _part(vector, leaf))
+        positional, keywords = layout.arguments(lambda leaf: part(vector, leaf))
         output = jnp.ravel(jnp.asarray(function(*positional, **keywords)))
         if not jnp.issubdtype(output.dtype, jnp.floating):
             raise TypeError(f"the model returned {output.dtype} inside jax; no derivative passes through that")
         return output
 
     return flat
-
-
-def _part(vector: Any, leaf: Leaf) -> Any:
-    return vector[leaf.start] if leaf.scalar else vector[leaf.start : leaf.stop].reshape(leaf.shape)
 
 
 def _by_rows(sweep: Sweep, rows: NDArray[Any]) -> Array:
