@@ -19,6 +19,7 @@ from gradcheck.evaluation.ledger import Ledger
 from gradcheck.evaluation.outputs import NUMBERS, Output
 from gradcheck.evaluation.protocol import Status
 from gradcheck.problem.derivative_shape import claim_matrix
+from gradcheck.problem.sparse_claim import is_sparse, is_stored, stored_entries
 from gradcheck.problem.subject import Subject, Target
 from gradcheck.records.arrays import Array
 
@@ -214,10 +215,11 @@ class Evaluator:
             return Outcome(status={name: np.array([Status.CRASH], dtype=np.int8)}, spent=1)
         finally:
             self.ledger.seconds[call.kind] += time.perf_counter() - began
-        state = Status.OK if np.isfinite(value).all() else Status.NONFINITE
+        numbers = value["value"] if is_stored(value) else value
+        state = Status.OK if np.isfinite(numbers).all() else Status.NONFINITE
         return Outcome(values={name: value[None]}, status={name: np.array([int(state)], dtype=np.int8)}, spent=1)
 
-    def _claim(self, call: Call, target: Target) -> Array:
+    def _claim(self, call: Call, target: Target) -> NDArray[Any]:
         kind = call.source.partition(":")[2]
         claim = target.claims[kind]
         if callable(claim):
@@ -226,7 +228,12 @@ class Evaluator:
             if mutated:
                 self.ledger.mutated.add(f"{kind} of {target.name}")
         self.ledger.claim_kinds[target.name, kind] = str(getattr(claim, "dtype", "float64"))
-        return claim_matrix(kind, claim, self.subject.layout, self.shapes[target.name])
+        layout, shape = self.subject.layout, self.shapes[target.name]
+        if kind == "jacobian" and is_sparse(claim):
+            entries, notices = stored_entries(kind, claim, layout.size, shape, layout.shape)
+            self.ledger.notices.extend(notices)
+            return entries
+        return claim_matrix(kind, claim, layout, shape)
 
     def _automatic(self, call: Call, target: Target) -> NDArray[Any]:
         # Imported when used: jax and autograd are extras, and slow to load.

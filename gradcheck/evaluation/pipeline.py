@@ -16,6 +16,7 @@ from gradcheck.evaluation.evaluator import Evaluator
 from gradcheck.evaluation.ledger import Ledger
 from gradcheck.evaluation.moves import BATCH_BYTES, Moves
 from gradcheck.evaluation.protocol import Gate, Reply, Request, Status
+from gradcheck.problem.sparse_claim import is_stored
 from gradcheck.problem.subject import Subject
 from gradcheck.records.arrays import Array
 
@@ -212,8 +213,11 @@ def _derivative_reply(request: Request, outcome: Outcome, width: int, size: int)
     status = int(outcome.status[name][0]) if name in outcome.status else int(Status.REFUSED)
     if name in outcome.values:
         values = outcome.values[name][0].copy()
-        # A claim is one matrix (m, n), not one row per direction.
-        values = values[None] if request.source.startswith("claim:") else values[:, None, :]
+        # A claim is one matrix (m, n), or the stored entries of one, not one row per direction.
+        if is_stored(values):
+            values = values[None, None]
+        else:
+            values = values[None] if request.source.startswith("claim:") else values[:, None, :]
     else:
         values = np.full((len(request.directions), 1, size if request.arithmetic == "vjp" else width), np.nan)
     return Reply(values=values, status=np.full(values.shape[:2], status, dtype=np.int8), spent=outcome.spent)
