@@ -1,0 +1,310 @@
+"""Looks at many rows of a Jacobian at once, along directions that move many variables.
+
+A place where a row meets a direction is a slot. What a row's slot should hold is known from the claim; a quick look
+confirms most slots, the whole difference witness looks at the rows that are left. A row that fails at some point does
+not spoil the others.
+"""
+
+from collections.abc import Generator
+from dataclasses import dataclass, replace
+from typing import TypeVar
+
+import numpy as np
+
+from gradcheck.claims.desk import Desk, Examined
+from gradcheck.claims.rule import Tolerance
+from gradcheck.evaluation.protocol import Inquiry, Reply, Request, Status
+from gradcheck.records.arrays import Array, BoolArray, IntArray
+from gradcheck.records.verdict import Verdict
+from gradcheck.witnesses.difference_reasons import SPENT
+from gradcheck.witnesses.finite_difference import finite_difference
+from gradcheck.witnesses.quick_look import QuickLook, quick_look, wider_look
+from gradcheck.witnesses.steps import Room
+from gradcheck.witnesses.testimony import Testimony
+
+Result = TypeVar("Result")
+
+#: Slots that the whole witness looks at together: more would take too much memory.
+SLOTS_AT_ONCE = 100_000
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Accuracy:
+    """How exact a claim must be."""
+
+    rel_tol: float
+    abs_tol: float
+    unit_roundoff: float
+
+
+class SlotDesk(Desk):
+    """A desk whose slots belong to variables of their own: typical size and move of each, (m, d)."""
+
+    def __init__(self, claim: Array, centre: Array, typical: Array, size: Array, accuracy: Accuracy) -> None:
+        super().__init__(claim, centre, typical, accuracy.rel_tol, accuracy.abs_tol, accuracy.unit_roundoff)
+        self.size = size
+
+    def tolerance(self, columns: IntArray) -> Tolerance:
+        floor = self.floor[:, None]
+        heard = np.fmax(self.noise[:, None], self.noise_along[:, columns])
+        rounding = np.minimum(np.fmax(heard, floor), 1e3 * floor) / self.typical[:, columns]
+        # An absolute tolerance is meant for entries; slots are in units of moves.
+        return Tolerance(rel_tol=self.rel_tol, abs_tol=self.abs_tol * self.size[:, columns], rounding=rounding)
+
+
+def of_outputs(inquiry: Inquiry[Result], outputs: IntArray) -> Inquiry[Result]:
+    """`inquiry` as if the model had these outputs only; a point counts as failed only where one of them is."""
+    try:
+        request = next(inquiry)
+        while True:
+            reply = yield request
+            request = inquiry.send(_only(reply, outputs))
+    except StopIteration as end:
+        result: Result = end.value
+        return result
+
+
+def _only(reply: Reply, outputs: IntArray) -> Reply:
+    if reply.values.shape[-1] <= (outputs.max() if outputs.size else 0):  # nothing came but refusals
+        values = np.full((*reply.values.shape[:2], outputs.size), np.nan)
+        return replace(reply, values=values)
+    values = reply.values[:, :, outputs]
+    status = reply.status.copy()
+    bad = np.asarray(status == Status.NONFINITE.value)
+    status[bad & np.isfinite(values).all(axis=2)] = Status.OK.value
+    return replace(reply, values=values, status=status)
+
+
+def forgiving(inquiry: Inquiry[Result], centre: Array) -> Generator[Request, Reply, tuple[Result, BoolArray]]:
+    """The result of `inquiry`, and which outputs (m,) were not finite somewhere: these it saw as standing still."""
+    broken = np.zeros(centre.size, bool)
+    try:
+        request = next(inquiry)
+        while True:
+            reply = yield request
+            bad = np.asarray(reply.status == Status.NONFINITE.value)
+            if bad.any():
+                wrong = ~np.isfinite(reply.values) & bad[:, :, None]
+                broken |= wrong.any(axis=(0, 1))
+                status = reply.status.copy()
+                status[bad] = Status.OK.value
+                reply = replace(reply, values=np.where(wrong, centre, reply.values), status=status)
+            request = inquiry.send(reply)
+    except StopIteration as end:
+        return end.value, broken
+
+
+def glance(base: Array, rows: Array, room: Room, centre: Array) -> Inquiry[tuple[Testimony, QuickLook]]:
+    """Four evaluations a direction; infinite bounds for outputs that failed somewhere."""
+    seen, broken = yield from forgiving(quick_look(base, rows, room, centre), centre)
+    return _blind(seen.testimony, broken), seen
+
+
+def second_glance(
+    base: Array, rows: Array, room: Room, centre: Array, seen: QuickLook, wanted: IntArray
+) -> Inquiry[Testimony]:
+    """Two more evaluations along the wanted directions."""
+    testimony, broken = yield from forgiving(wider_look(base, rows, room, centre, seen, wanted), centre)
+    return _blind(testimony, broken)
+
+
+def _blind(testimony: Testimony, broken: BoolArray) -> Testimony:
+    return replace(testimony, bound=np.where(broken, np.inf, testimony.bound)) if broken.any() else testimony
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Slots:
+    """Slots (m, d) of a claim after looks along d directions, in units of these.
+
+    Attributes
+    ----------
+    value, bound, left, right : ndarray
+    confirmed, refuted : ndarray of bool
+        Refuted ones have had one look only.
+    reason : ndarray of object
+    cut_short : bool
+        The budget or the time ended.
+    """
+
+    value: Array
+    bound: Array
+    left: Array
+    right: Array
+    confirmed: BoolArray
+    refuted: BoolArray
+    reason: np.ndarray[tuple[int, ...], np.dtype[np.object_]]
+    cut_short: bool
+
+
+def look_along(
+    base: Array,
+    rows: Array,
+    room: Room,
+    claim: Array,
+    centre: Array,
+    typical: Array,
+    size: Array,
+    accuracy: Accuracy,
+    *,
+    distrusted: BoolArray | None = None,
+    needed: BoolArray | None = None,
+) -> Inquiry[Slots]:
+    """Examine slots as cheaply as the verdict allows.
+
+    Parameters
+    ----------
+    base : ndarray, shape (n,)
+    rows : ndarray, shape (d, n)
+        Directions.
+    room : Room
+        Along them.
+    claim : ndarray, shape (m, d)
+        What each slot should hold, in units of the direction.
+    centre : ndarray, shape (m,)
+    typical : ndarray, shape (m, d)
+        Typical size of the variable of each slot, in units of the direction.
+    size : ndarray, shape (m, d)
+        How far it moves.
+    accuracy : Accuracy
+    distrusted : ndarray of bool, shape (m,), optional
+        Outputs that a quick look must not confirm.
+    needed : ndarray of bool, shape (m, d), optional
+        Slots that are worth the whole witness if a quick look does not confirm them; default all.
+
+    Returns
+    -------
+    Slots
+    """
+    desk = SlotDesk(claim, centre, typical, size, accuracy)
+    everything = np.arange(len(rows))
+    testimony, seen = yield from glance(base, rows, room, centre)
+    desk.hear(testimony, everything, final=False)
+    if seen.cut_short:
+        desk.run_out()
+        return _slots(desk.result(), cut_short=True)
+    doubted = desk.open_columns()
+    if doubted.size:
+        desk.hear((yield from second_glance(base, rows, room, centre, seen, doubted)), doubted, final=False)
+    if distrusted is not None:
+        desk.doubt(distrusted)
+    open_ = ~desk.confirmed if needed is None else ~desk.confirmed & needed
+    found = _so_far(desk)
+    return (yield from _whole_witness(base, rows, room, claim, centre, typical, size, accuracy, open_, found))
+
+
+def _whole_witness(
+    base: Array,
+    rows: Array,
+    room: Room,
+    claim: Array,
+    centre: Array,
+    typical: Array,
+    size: Array,
+    accuracy: Accuracy,
+    open_: BoolArray,
+    found: Slots,
+) -> Inquiry[Slots]:
+    """The slots of the open rows as the whole difference witness sees them, one direction after the other."""
+    cut_short = False
+    for d in np.flatnonzero(open_.any(axis=0)):
+        rest = np.flatnonzero(open_[:, d])
+        for part in _parts(rest, found.bound[:, d]):
+            own = room_of_one(room, int(d))
+            heard = yield from of_outputs(
+                finite_difference(base, rows[d : d + 1], own, centre[part]), part
+            )
+            slot = slice(int(d), int(d) + 1)
+            desk = SlotDesk(claim[part, slot], centre[part], typical[part, slot], size[part, slot], accuracy)
+            desk.hear(heard, np.arange(1), replacing=True)
+            _take_over(found, part, int(d), _slots(desk.result(), cut_short=False))
+        cut_short |= bool(rest.size) and _ended(found.reason[rest, d])
+        if cut_short:
+            break
+    return replace(found, cut_short=cut_short)
+
+
+def _ended(reasons: np.ndarray[tuple[int, ...], np.dtype[np.object_]]) -> bool:
+    return bool((reasons == SPENT).all())
+
+
+def _parts(rows: IntArray, bound: Array) -> list[IntArray]:
+    """Rows that are looked at together: those that a quick look saw fail apart from the others, and not too many."""
+    failing = ~np.isfinite(bound[rows])
+    groups = [rows[failing], rows[~failing]]
+    return [
+        group[first : first + SLOTS_AT_ONCE] for group in groups for first in range(0, group.size, SLOTS_AT_ONCE)
+    ]
+
+
+def _take_over(found: Slots, part: IntArray, d: int, new: Slots) -> None:
+    for name in ("value", "bound", "left", "right", "confirmed", "refuted", "reason"):
+        getattr(found, name)[part, d] = getattr(new, name)[:, 0]
+
+
+def second_look(
+    base: Array,
+    rows: Array,
+    room: Room,
+    claim: Array,
+    centre: Array,
+    typical: Array,
+    size: Array,
+    accuracy: Accuracy,
+    first: Slots,
+) -> Inquiry[Slots]:
+    """Refuted slots keep that verdict only if the whole witness, at other steps along these directions, agrees.
+
+    `first` holds what was seen before, in units of these directions; slots that are not refuted there are not judged.
+    """
+    desk = SlotDesk(claim, centre, typical, size, accuracy)
+    desk.value, desk.bound, desk.left, desk.right = first.value, first.bound, first.left, first.right
+    desk.refuted, desk.confirmed, desk.reason = first.refuted.copy(), first.confirmed.copy(), first.reason.copy()
+    desk.source[:] = "finite difference"
+    everything = np.arange(len(rows))
+    heard = yield from finite_difference(base, rows, room, centre)
+    desk.second(heard, everything)
+    # What was moved alone, or with fewer others, is seen better than what was moved with many.
+    sharper = desk.refuted & (heard.bound.T <= 10 * desk.bound) & np.isfinite(heard.value.T)
+    desk.value = np.where(sharper, heard.value.T, desk.value)
+    desk.bound = np.where(sharper, heard.bound.T, desk.bound)
+    return _slots(desk.result(), cut_short=False)
+
+
+def _so_far(desk: Desk) -> Slots:
+    """What quick looks came to; what they leave open needs no reason yet."""
+    return Slots(
+        value=desk.value,
+        bound=desk.bound,
+        left=desk.left,
+        right=desk.right,
+        confirmed=desk.confirmed,
+        refuted=desk.refuted,
+        reason=desk.reason,
+        cut_short=False,
+    )
+
+
+def _slots(examined: Examined, *, cut_short: bool) -> Slots:
+    return Slots(
+        value=examined.value,
+        bound=examined.bound,
+        left=examined.left,
+        right=examined.right,
+        confirmed=np.asarray(examined.verdict == Verdict.CONFIRMED),
+        refuted=np.asarray(examined.verdict == Verdict.REFUTED),
+        reason=examined.reason,
+        cut_short=cut_short,
+    )
+
+
+def room_of_one(room: Room, d: int, *, scale: float = 1.0) -> Room:
+    """The room along one of several directions, on intervals of another width if asked for."""
+    part = slice(d, d + 1)
+    return Room(
+        scale=room.scale[part] * scale,
+        typical=room.typical[part],
+        widest=room.widest[part] * scale,
+        below=room.below[part],
+        above=room.above[part],
+        grain=room.grain[part],
+    )
