@@ -24,6 +24,8 @@ from gradcheck.witnesses.testimony import Testimony
 
 Result = TypeVar("Result")
 
+#: Where more than this share of the slots of a direction is in doubt, two more values along it are worth their price.
+MANY = 0.02
 #: Slots that the whole witness looks at together: more would take too much memory.
 SLOTS_AT_ONCE = 100_000
 
@@ -145,11 +147,8 @@ def look_along(
     typical: Array,
     size: Array,
     accuracy: Accuracy,
-    *,
-    distrusted: BoolArray | None = None,
-    needed: BoolArray | None = None,
 ) -> Inquiry[Slots]:
-    """Examine slots as cheaply as the verdict allows.
+    """Quick looks at slots: they confirm most right ones, and refute none.
 
     Parameters
     ----------
@@ -166,79 +165,67 @@ def look_along(
     size : ndarray, shape (m, d)
         How far it moves.
     accuracy : Accuracy
-    distrusted : ndarray of bool, shape (m,), optional
-        Outputs that a quick look must not confirm.
-    needed : ndarray of bool, shape (m, d), optional
-        Slots that are worth the whole witness if a quick look does not confirm them; default all.
 
     Returns
     -------
     Slots
     """
     desk = SlotDesk(claim, centre, typical, size, accuracy)
-    everything = np.arange(len(rows))
     testimony, seen = yield from glance(base, rows, room, centre)
-    desk.hear(testimony, everything, final=False)
+    desk.hear(testimony, np.arange(len(rows)), final=False)
     if seen.cut_short:
         desk.run_out()
-        return _slots(desk.result(), cut_short=True)
-    doubted = desk.open_columns()
+        return _so_far(desk, cut_short=True)
+    doubted = np.flatnonzero((~desk.confirmed).sum(axis=0) > MANY * centre.size)
     if doubted.size:
         desk.hear((yield from second_glance(base, rows, room, centre, seen, doubted)), doubted, final=False)
-    if distrusted is not None:
-        desk.doubt(distrusted)
-    open_ = ~desk.confirmed if needed is None else ~desk.confirmed & needed
-    found = _so_far(desk)
-    return (yield from _whole_witness(base, rows, room, claim, centre, typical, size, accuracy, open_, found))
+    return _so_far(desk)
 
 
-def _whole_witness(
+def whole_look(
     base: Array,
-    rows: Array,
+    row: Array,
     room: Room,
     claim: Array,
     centre: Array,
     typical: Array,
     size: Array,
     accuracy: Accuracy,
-    open_: BoolArray,
-    found: Slots,
+    failing: BoolArray,
 ) -> Inquiry[Slots]:
-    """The slots of the open rows as the whole difference witness sees them, one direction after the other."""
-    cut_short = False
-    for d in np.flatnonzero(open_.any(axis=0)):
-        rest = np.flatnonzero(open_[:, d])
-        for part in _parts(rest, found.bound[:, d]):
-            own = room_of_one(room, int(d))
-            heard = yield from of_outputs(
-                finite_difference(base, rows[d : d + 1], own, centre[part]), part
-            )
-            slot = slice(int(d), int(d) + 1)
-            desk = SlotDesk(claim[part, slot], centre[part], typical[part, slot], size[part, slot], accuracy)
-            desk.hear(heard, np.arange(1), replacing=True)
-            _take_over(found, part, int(d), _slots(desk.result(), cut_short=False))
-        cut_short |= bool(rest.size) and _ended(found.reason[rest, d])
-        if cut_short:
-            break
-    return replace(found, cut_short=cut_short)
+    """The slots (m, 1) along one direction (1, n) as the whole difference witness sees them: it may refute.
+
+    `failing` outputs (m,), which were not finite in a quick look, are looked at apart from the others.
+    """
+    parts = []
+    for part in _parts(failing):
+        heard = yield from of_outputs(finite_difference(base, row, room, centre[part]), part)
+        desk = SlotDesk(claim[part], centre[part], typical[part], size[part], accuracy)
+        desk.hear(heard, np.arange(1), replacing=True)
+        parts.append((part, _slots(desk.result(), cut_short=_ended(desk.reason))))
+    return _assembled(parts, centre.size)
+
+
+def _assembled(parts: list[tuple[IntArray, Slots]], m: int) -> Slots:
+    def whole(name: str) -> np.ndarray[tuple[int, ...], np.dtype[np.generic]]:
+        example = getattr(parts[0][1], name)
+        result = np.empty((m, 1), dtype=example.dtype)
+        for part, slots in parts:
+            result[part] = getattr(slots, name)
+        return result
+
+    names = ("value", "bound", "left", "right", "confirmed", "refuted", "reason")
+    return Slots(**{name: whole(name) for name in names}, cut_short=any(slots.cut_short for _, slots in parts))  # type: ignore[arg-type]
 
 
 def _ended(reasons: np.ndarray[tuple[int, ...], np.dtype[np.object_]]) -> bool:
-    return bool((reasons == SPENT).all())
+    return bool((reasons == SPENT).any())
 
 
-def _parts(rows: IntArray, bound: Array) -> list[IntArray]:
-    """Rows that are looked at together: those that a quick look saw fail apart from the others, and not too many."""
-    failing = ~np.isfinite(bound[rows])
-    groups = [rows[failing], rows[~failing]]
-    return [
-        group[first : first + SLOTS_AT_ONCE] for group in groups for first in range(0, group.size, SLOTS_AT_ONCE)
-    ]
-
-
-def _take_over(found: Slots, part: IntArray, d: int, new: Slots) -> None:
-    for name in ("value", "bound", "left", "right", "confirmed", "refuted", "reason"):
-        getattr(found, name)[part, d] = getattr(new, name)[:, 0]
+def _parts(failing: BoolArray) -> list[IntArray]:
+    """Outputs that are looked at together: those that fail apart from the others, and not too many."""
+    groups = [np.flatnonzero(failing), np.flatnonzero(~failing)]
+    return [group[first : first + SLOTS_AT_ONCE] for group in groups for first in range(0, group.size, SLOTS_AT_ONCE)]
 
 
 def second_look(
@@ -251,6 +238,7 @@ def second_look(
     size: Array,
     accuracy: Accuracy,
     first: Slots,
+    acquitting: BoolArray,
 ) -> Inquiry[Slots]:
     """Refuted slots keep that verdict only if the whole witness, at other steps along these directions, agrees.
 
@@ -263,6 +251,14 @@ def second_look(
     everything = np.arange(len(rows))
     heard = yield from finite_difference(base, rows, room, centre)
     desk.second(heard, everything)
+    if acquitting.any():
+        alone = SlotDesk(claim, centre, typical, size, accuracy)
+        alone.hear(heard, everything, replacing=True)
+        cleared = acquitting[:, None] & ~desk.refuted & alone.confirmed
+        desk.confirmed |= cleared
+        desk.value = np.where(acquitting[:, None], alone.value, desk.value)
+        desk.bound = np.where(acquitting[:, None], alone.bound, desk.bound)
+        desk.reason[cleared] = ""
     # What was moved alone, or with fewer others, is seen better than what was moved with many.
     sharper = desk.refuted & (heard.bound.T <= 10 * desk.bound) & np.isfinite(heard.value.T)
     desk.value = np.where(sharper, heard.value.T, desk.value)
@@ -270,7 +266,7 @@ def second_look(
     return _slots(desk.result(), cut_short=False)
 
 
-def _so_far(desk: Desk) -> Slots:
+def _so_far(desk: Desk, *, cut_short: bool = False) -> Slots:
     """What quick looks came to; what they leave open needs no reason yet."""
     return Slots(
         value=desk.value,
@@ -280,7 +276,7 @@ def _so_far(desk: Desk) -> Slots:
         confirmed=desk.confirmed,
         refuted=desk.refuted,
         reason=desk.reason,
-        cut_short=False,
+        cut_short=cut_short,
     )
 
 

@@ -12,6 +12,7 @@
 Rows that are too full for step 3 are judged as wholes, and searched for their faults where they disagree.
 """
 
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -28,6 +29,7 @@ from gradcheck.claims.joint_looks import (
     room_of_one,
     second_glance,
     second_look,
+    whole_look,
 )
 from gradcheck.claims.joint_moves import PART_BITS, Moves, Way, halves, position_weights, room_of
 from gradcheck.claims.rule import ALLOWANCE, REFUTING_BOUNDS, ZERO_ALLOWANCE, ZERO_CLAIM
@@ -39,6 +41,7 @@ from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.witnesses.difference_reasons import NO_ROOM, SPENT
 from gradcheck.witnesses.finite_difference import finite_difference
 from gradcheck.witnesses.quick_look import CLOSE, CLOSE_DEVIATIONS, CLOSE_SHARE
+from gradcheck.witnesses.steps import Room
 
 #: Random directions, where the caller does not say how many.
 RANDOM = 2
@@ -55,8 +58,10 @@ DIRECTION_TOLERANCE = 4.0
 SEARCHES_MOST = 4
 #: Into how many parts the columns of a full row are divided, search by search.
 PARTS_OF_FULL_ROWS = (8, 64)
-#: A row with more faults than this is told as a whole.
-FAULTS_OF_A_ROW_MOST = 64
+#: Looks at single entries take no more directions than this.
+GROUPS_AGAIN_MOST = 256
+#: What is said of entries beyond that.
+TOO_MANY = "suspect: its row holds too many faults for each to get a look of its own"
 #: Columns with large entries move less, but not by more than this, where rows are judged as wholes.
 LEAST_WEIGHT = 2.0**-10
 
@@ -182,6 +187,7 @@ class _Examination:
         if rows.size and not self.ended:
             yield from self._look_by_groups(rows)
         yield from self._search_unexplained()
+        yield from self._settle_open()
         yield from self._search_full_rows()
         yield from self._look_again()
         self._drop_empty_places()
@@ -345,7 +351,7 @@ class _Examination:
         return rows
 
     def _look_closely(self) -> Inquiry[None]:
-        """Rows whose slope close to the point is not what the claim says: all other steps are wide beside a narrow feature."""
+        """Rows whose slope close to the point is another than at wider steps: there may be a narrow feature."""
         seen = next((one for one in self.random if one.way == Way.BOTH), None)
         if seen is None or self.ended:
             return
@@ -357,8 +363,8 @@ class _Examination:
             claimed = np.where(np.isfinite(self.table.claim), self.table.claim, 0.0)
             whole = self.table.product(np.abs(seen.row), np.abs(claimed))
             rounding = CLOSE_DEVIATIONS * np.finfo(float).eps * (np.abs(self.centre) + whole) / CLOSE
-            gap = np.abs(slope - self.table.product(seen.row, claimed))
-            self.close = np.isfinite(gap) & (gap > rounding + CLOSE_SHARE * whole)
+            gap = np.abs(slope - seen.value)
+            self.close = np.isfinite(gap) & (gap > rounding + seen.bound + CLOSE_SHARE * (whole + np.abs(seen.value)))
 
     # --- places outside the pattern ----------------------------------------------------------------------------------
 
@@ -521,10 +527,9 @@ class _Examination:
             typical,
             moved,
             self.accuracy,
-            distrusted=self.close[rows] if self.close.any() else None,
-            needed=filled,
         )
         seen = yield from of_outputs(looking, rows)
+        seen.confirmed[self.close[rows]] = False
         self._take_down(entries, size, seen, place, slot)
         with np.errstate(invalid="ignore"):
             odd = ~filled & ~seen.confirmed & (np.abs(seen.value) > SUSPECT * seen.bound) & np.isfinite(seen.bound)
@@ -549,33 +554,76 @@ class _Examination:
         table.verdict[entries] = np.where(seen.refuted[at], REFUTED, np.where(seen.confirmed[at], CONFIRMED, UNDECIDED))
         table.reason[entries] = seen.reason[at]
 
+    def _settle_open(self) -> Inquiry[None]:
+        """What quick looks left open gets the whole witness: only the columns in question move."""
+        table = self.table
+        movable = (table.verdict == UNDECIDED) & (self.moves.way[table.column] != Way.STILL)
+        open_ = np.flatnonzero(movable & self.by_entry[table.row] & (table.reason == ""))
+        for own, direction, way in self._divided(open_):
+            arrangement = self._arranged(own, direction, way)
+            failing = ~np.isfinite(table.bound[own]) if way == Way.BOTH else np.zeros(own.size, bool)
+            looking = whole_look(*arrangement, failing)
+            seen = yield from of_outputs(looking, table.row[own])
+            self._take_down(own, self.moves.size[table.column[own]], seen, np.arange(own.size), np.zeros(own.size, np.intp))
+            self.ended |= seen.cut_short
+            if self.ended:
+                return
+
     def _look_again(self) -> Inquiry[None]:
-        """Refuted entries once more: only accused columns move, at other steps, no two of a row together."""
-        suspects = np.flatnonzero(self.table.verdict == REFUTED)
-        if suspects.size == 0:
+        """Refuted entries once more, at other steps."""
+        for own, direction, way in self._divided(np.flatnonzero(self.table.verdict == REFUTED)):
+            yield from self._look_again_along(own, direction, way)
+
+    def _divided(self, entries: IntArray) -> Iterator[tuple[IntArray, Array, Way]]:
+        """These entries in groups that can be looked at together, each with its direction (1, n).
+
+        Only their columns move, and in none of their rows two of them.
+        """
+        table = self.table
+        if entries.size == 0:
             return
-        rows = np.unique(self.table.row[suspects])
-        accused = np.zeros(self.table.shape[1], bool)
-        accused[self.table.column[suspects]] = True
-        pattern = self.table.pattern(rows, accused[self.table.column])
+        rows = np.unique(table.row[entries])
+        meant = np.zeros(table.shape[1], bool)
+        meant[table.column[entries]] = True
+        pattern = table.pattern(rows, meant[table.column])
         for way in (Way.BOTH, Way.INWARD):
-            columns = accused & self.moves.along(way)
+            columns = meant & self.moves.along(way)
             if not columns.any():
                 continue
             colouring = coloured(pattern, columns)
             assert colouring is not None  # no limit was set
-            for group in range(min(colouring.count, 4 * FAULTS_OF_A_ROW_MOST)):
-                own = suspects[colouring.colour[self.table.column[suspects]] == group]
-                if own.size:
-                    yield from self._look_again_along(own, self.moves.groups(colouring.colour, np.array([group])), way)
-            left = suspects[colouring.colour[self.table.column[suspects]] >= 4 * FAULTS_OF_A_ROW_MOST]
-            self.table.verdict[left] = UNDECIDED
-            self.table.reason[left] = "suspect: its row holds too many faults for each to get a second look"
+            own = colouring.colour[table.column[entries]]
+            for group in range(min(colouring.count, GROUPS_AGAIN_MOST)):
+                if (own == group).any():
+                    direction = self.moves.groups(colouring.colour, np.array([group]))
+                    yield entries[own == group], direction, way
+            left = entries[own >= GROUPS_AGAIN_MOST]
+            table.verdict[left] = UNDECIDED
+            table.reason[left] = TOO_MANY
+
+    def _arranged(
+        self, own: IntArray, direction: Array, way: Way, *, scale: float = 1.0
+    ) -> tuple[Array, Array, Room, Array, Array, Array, Array, Accuracy]:
+        """What a look at these entries along a direction needs to know."""
+        table = self.table
+        columns = table.column[own]
+        size = self.moves.size[columns]
+        room = room_of_one(room_of(self.base, direction, self.domain, way), 0, scale=scale)
+        claim, typical = (table.claim[own] * size)[:, None], self.moves.typical[columns][:, None]
+        return (
+            self.base,
+            direction,
+            room,
+            claim,
+            self.centre[table.row[own]],
+            typical,
+            np.abs(size)[:, None],
+            self.accuracy,
+        )
 
     def _look_again_along(self, own: IntArray, direction: Array, way: Way) -> Inquiry[None]:
         table = self.table
-        rows, size = table.row[own], self.moves.size[table.column[own]]
-        room = room_of_one(room_of(self.base, direction, self.domain, way), 0, scale=OTHER_WIDTH)
+        size = self.moves.size[table.column[own]]
         one = np.ones((own.size, 1), bool)
         lower, upper = table.left[own] * size, table.right[own] * size
         first = Slots(
@@ -588,18 +636,8 @@ class _Examination:
             reason=np.full((own.size, 1), "", dtype=object),
             cut_short=False,
         )
-        looking = second_look(
-            self.base,
-            direction,
-            room,
-            (table.claim[own] * size)[:, None],
-            self.centre[rows],
-            self.moves.typical[table.column[own]][:, None],
-            np.abs(size)[:, None],
-            self.accuracy,
-            first,
-        )
-        seen = yield from of_outputs(looking, rows)
+        looking = second_look(*self._arranged(own, direction, way, scale=OTHER_WIDTH), first, ~self.by_entry[table.row[own]])
+        seen = yield from of_outputs(looking, table.row[own])
         self._take_down(own, size, seen, np.arange(own.size), np.zeros(own.size, np.intp))
 
     def _drop_empty_places(self) -> None:
