@@ -33,6 +33,7 @@ def check(
     rel_tol: float | None = None,
     abs_tol: float = 0.0,
     directions: int | str | None = None,
+    pattern: Any = None,
     batched: bool = False,
     budget: int | None = None,
     time_limit: float | str | None = None,
@@ -66,6 +67,9 @@ def check(
         Among ``"differences"`` and ``"complex step"``; default both, as needed.
     rel_tol, abs_tol : float, optional
         Default 1e-8 (1e-3 for a model that returns single precision) and 0.
+    pattern : scipy.sparse matrix or boolean array, shape (m, n), optional
+        Which entries of a Jacobian may differ from zero; of a sparse matrix all stored entries. Entries outside it on
+        which the model depends refute the claim. Without it, the entries that a sparse claim stores are its pattern.
     batched : bool
         Whether the model takes many points at once: x as ``(k, n)`` (``(k,)`` where `at` is one number), and returns
         ``(k,)`` or ``(k, m)``; `output` then picks from the whole batch. A claim still takes one point ``(n,)``. Every
@@ -119,7 +123,7 @@ def check(
     if at is None:
         options = _described_options(function)
         described = {"wrt": wrt, "output": output, "bounds": bounds, "names": names, "typical": typical}
-        described |= {"witnesses": witnesses, "rel_tol": rel_tol, "directions": directions} | claims
+        described |= {"pattern": pattern, "witnesses": witnesses, "rel_tol": rel_tol, "directions": directions} | claims
         if any(claim is not None for claim in claims.values()):
             options = {name: value for name, value in options.items() if name not in CLAIM_KINDS}
         options |= {name: value for name, value in described.items() if value is not None}
@@ -132,6 +136,8 @@ def check(
             "check needs exactly one claim, gradient=... or jacobian=...; "
             + (f"{' and '.join(given)} were given" if given else "none was given, so there is nothing to check")
         )
+    if pattern is not None and jacobian is None:
+        raise UsageError("pattern=... says which entries of a Jacobian may differ from zero; it needs jacobian=...")
     rules = Rules.of(rel_tol, abs_tol, witnesses, directions=directions, seed=seed)
     subjects = subjects_of_function(
         function,
@@ -143,6 +149,7 @@ def check(
         names=names,
         typical=typical,
         batched=batched,
+        pattern=pattern,
     )
     reports = []
     for subject in subjects:

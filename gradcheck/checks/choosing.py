@@ -1,6 +1,7 @@
 """Which way a claim is checked: by its kind, and by its size."""
 
 from gradcheck.checks.entrywise import checked_entries
+from gradcheck.checks.sparse import checked_jointly, goes_by_joint_moves
 from gradcheck.claims.policy import Rules
 from gradcheck.evaluation.pipeline import Session
 from gradcheck.records.arrays import Array
@@ -28,4 +29,8 @@ def checked_claims(session: Session, rules: Rules) -> list[CheckReport]:
 
 def checked_claim(session: Session, function: str, kind: str, centre: Array, rules: Rules, before: int) -> CheckReport:
     """The report on one claim of one function; `before` evaluations were spent on others."""
+    if goes_by_joint_moves(session, function, kind, centre, rules):
+        report = checked_jointly(session, function, kind, centre, rules, before)
+        if report is not None:
+            return report
     return checked_entries(session, function, kind, centre, rules, before)

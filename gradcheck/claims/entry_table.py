@@ -5,7 +5,6 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
 
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 
@@ -120,6 +119,8 @@ class EntryTable:
 
     def pattern(self, rows: IntArray | None = None, which: BoolArray | None = None) -> Any:
         """The places as a csr_array of some rows, in their order; of some entries only if asked for."""
+        from scipy import sparse
+
         chosen = np.ones(len(self), bool) if which is None else which
         row, column = self.row[chosen], self.column[chosen]
         counts = np.bincount(row, minlength=self.shape[0])

@@ -102,6 +102,8 @@ class Function:
         (``"jax"``, ``"autograd"``).
     lower, upper, equal : float or array, optional
         Limits, where the function is a constraint.
+    pattern : sparse matrix or boolean array (m, n), optional
+        Which entries of the Jacobian may differ from zero.
     """
 
     function: Callable[..., Any]
@@ -110,6 +112,7 @@ class Function:
     lower: Any = field(default=None, kw_only=True)
     upper: Any = field(default=None, kw_only=True)
     equal: Any = field(default=None, kw_only=True)
+    pattern: Any = field(default=None, kw_only=True)
 
     def __post_init__(self) -> None:
         if not callable(self.function):
@@ -128,7 +131,7 @@ class Output:
     ----------
     key : str or int
         What picks the output from what the run returns: ``run(x)[key]``.
-    gradient, jacobian, lower, upper, equal
+    gradient, jacobian, lower, upper, equal, pattern
         As in `Function`.
     """
 
@@ -138,6 +141,7 @@ class Output:
     lower: Any = field(default=None, kw_only=True)
     upper: Any = field(default=None, kw_only=True)
     equal: Any = field(default=None, kw_only=True)
+    pattern: Any = field(default=None, kw_only=True)
 
     def __post_init__(self) -> None:
         _refuse_crossed_limits(self.lower, self.upper, self.equal)

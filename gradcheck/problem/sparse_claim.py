@@ -5,11 +5,11 @@ in the order of rows: plain data that can be cached and sent, and never more tha
 """
 
 import math
+import sys
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
 
 from gradcheck.errors import DerivativeShapeError, UsageError
 from gradcheck.records.arrays import Array, IntArray
@@ -21,7 +21,9 @@ STORED = np.dtype([("row", np.intp), ("column", np.intp), ("value", float)])
 
 def is_sparse(value: Any) -> bool:
     """Whether this is a sparse matrix or array of scipy, of any format."""
-    return bool(sparse.issparse(value))
+    # Who holds a sparse matrix has loaded scipy.sparse; loading it here would slow every start down.
+    loaded = sys.modules.get("scipy.sparse")
+    return loaded is not None and bool(loaded.issparse(value))
 
 
 def is_stored(values: NDArray[Any]) -> bool:
@@ -97,6 +99,8 @@ def dense_of(entries: NDArray[Any], rows: int, columns: int) -> Array:
 
 def matrix_of(entries: NDArray[Any], rows: int, columns: int) -> Any:
     """The claim as a `scipy.sparse.csr_array` (m, n); explicit zeros are stored."""
+    from scipy import sparse
+
     return sparse.csr_array((entries["value"], entries["column"], _pointers(entries["row"], rows)), (rows, columns))
 
 
@@ -133,7 +137,9 @@ def declared_pattern(pattern: Any, rows: int, columns: int) -> Any:
     UsageError
         If it has another shape (both are named, and whether the transpose fits) or is no pattern.
     """
-    if sparse.issparse(pattern):
+    from scipy import sparse
+
+    if is_sparse(pattern):
         flat = pattern.tocoo()
         shape, row, column = tuple(int(size) for size in flat.shape), flat.row, flat.col
     else:

@@ -15,6 +15,7 @@ from gradcheck.records.finding import Finding
 from gradcheck.records.noise import NoiseKind
 from gradcheck.records.plain import plain
 from gradcheck.records.rendering import RenderedWhenRead
+from gradcheck.records.sparsity import SparsityChecks
 from gradcheck.records.verdict import DiagnosisCode, Verdict
 
 FORMAT_VERSION = 1
@@ -105,6 +106,9 @@ class CheckReport(RenderedWhenRead):
     evaluations : int
         Model evaluations spent.
     seconds : float
+    sparsity : SparsityChecks or None
+        For a Jacobian that is sparse or has many columns: counts, and the lists of faults. `entries` then holds those
+        that are not confirmed, and of the confirmed ones only a few where there are many.
     renderer : callable, optional
         Makes the text when it is first read; `check` hands it over, because records import nothing that renders.
     """
@@ -122,6 +126,7 @@ class CheckReport(RenderedWhenRead):
     seconds: float = 0.0
     renderer: Callable[["CheckReport"], str] | None = None
     text: str = ""
+    sparsity: SparsityChecks | None = None
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "point", frozen(self.point))
