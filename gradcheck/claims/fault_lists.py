@@ -46,7 +46,8 @@ def faults_of(table: EntryTable, influence: Influence) -> Faults:
     # A claimed entry outside a declared pattern may be right: then the pattern is wrong.
     missing = ~table.inside & ((refuted & (table.claim == 0)) | ((table.claim != 0) & there & (refuted | (table.verdict == CONFIRMED))))
     wrong = refuted & (table.inside | (table.claim != 0)) & ~(missing & (table.claim == 0))
-    unused = table.inside & (table.value == 0) & influence.looked & ~influence.changes
+    # Where a value is claimed that should be zero, that value is wrong, and told there.
+    unused = table.inside & (table.value == 0) & (table.claim == 0) & influence.looked & ~influence.changes
     places = np.flatnonzero(missing & (table.claim == 0))
     return Faults(
         missing=np.flatnonzero(missing),

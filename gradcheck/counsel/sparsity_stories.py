@@ -5,7 +5,7 @@ from collections.abc import Callable, Sequence
 import numpy as np
 
 from gradcheck.claims.entry_table import EntryTable
-from gradcheck.claims.fault_lists import Faults, ratio_in_common
+from gradcheck.claims.fault_lists import SAME_VALUE, Faults, ratio_in_common
 from gradcheck.claims.mistakes.case import Case
 from gradcheck.claims.mistakes.naming import likely_mistakes
 from gradcheck.problem.subject import Subject
@@ -124,11 +124,18 @@ def _wrong(
     tolerance: Callable[[IntArray], np.ndarray[tuple[int, ...], np.dtype[np.float64]]],
 ) -> list[Diagnosis]:
     """The usual families of mistakes, asked about the wrong entries alone, as if they stood in one row."""
-    if any(one.kind == "wrong" for one in repeated):
-        return [_repeated(table, wrong, repeated, name)]
+    diagnoses = []
+    for one in repeated:
+        if one.kind == "wrong":
+            steps = np.arange(one.count)
+            chain = table.find(one.row + one.row_step * steps, one.column + one.column_step * steps)
+            diagnoses.append(_repeated(table, chain, one, name))
+            wrong = wrong[~np.isin(wrong, chain)]
     if wrong.size > EXPLAINED_MOST:
-        return [_many(table, wrong, repeated, name)]
-    return list(
+        return [*diagnoses, _many(table, wrong, name)]
+    if wrong.size == 0:
+        return diagnoses
+    return diagnoses + list(
         likely_mistakes(
             Case(
                 kind=kind,
@@ -143,24 +150,30 @@ def _wrong(
     )
 
 
-def _repeated(table: EntryTable, wrong: IntArray, repeated: Sequence[Repetition], name: Named) -> Diagnosis:
+def _repeated(table: EntryTable, chain: IntArray, repetition: Repetition, name: Named) -> Diagnosis:
     """Wrong values that repeat regularly, and the factor they have in common."""
-    ratio = ratio_in_common(table.claim[wrong], table.value[wrong])
-    places = _where(table, wrong, "wrong", repeated, name)
-    code, what = DiagnosisCode.UNKNOWN, "wrong values that repeat regularly"
-    if abs(ratio + 1) < 1e-6:
-        code, what = DiagnosisCode.SIGN_FLIPPED, "the claim is minus the derivative"
-    elif ratio == 0:
-        code, what = DiagnosisCode.ZERO_ENTRY, "claimed zero"
-    elif np.isfinite(ratio):
-        code, what = DiagnosisCode.CONSTANT_FACTOR, f"the claim is {number(ratio, digits=6)} times the derivative"
-    text = f"{what}: {places}. One formula makes them all; look at the line that fills this block."
+    code, what = _in_common(table, chain)
+    text = (
+        f"{what}: {repetition_words(repetition, name)}. One formula makes them all; look at the line that fills this block."
+    )
+    return Diagnosis(code=code, text=text, entries=_names(table, chain, name))
+
+
+def _in_common(table: EntryTable, at: IntArray) -> tuple[DiagnosisCode, str]:
+    ratio = ratio_in_common(table.claim[at], table.value[at])
+    if abs(ratio + 1) < SAME_VALUE:
+        return DiagnosisCode.SIGN_FLIPPED, "the claim is minus the derivative"
+    if ratio == 0:
+        return DiagnosisCode.ZERO_ENTRY, "claimed zero"
+    if np.isfinite(ratio):
+        return DiagnosisCode.CONSTANT_FACTOR, f"the claim is {number(ratio, digits=6)} times the derivative"
+    return DiagnosisCode.UNKNOWN, "wrong values, by different factors"
+
+
+def _many(table: EntryTable, wrong: IntArray, name: Named) -> Diagnosis:
+    code, what = _in_common(table, wrong)
+    text = f"{what}: {count(wrong.size, 'entry', 'entries')}, {listed(_names(table, wrong[:6], name))} and so on."
     return Diagnosis(code=code, text=text, entries=_names(table, wrong, name))
-
-
-def _many(table: EntryTable, wrong: IntArray, repeated: Sequence[Repetition], name: Named) -> Diagnosis:
-    diagnosis = _repeated(table, wrong, repeated, name)
-    return Diagnosis(code=diagnosis.code, text=diagnosis.text.partition(". One formula")[0] + ".", entries=diagnosis.entries)
 
 
 def _transposed(table: EntryTable, faults: Faults, name: Named) -> Diagnosis | None:

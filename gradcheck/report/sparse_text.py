@@ -13,6 +13,7 @@ from gradcheck.report.paragraphs import fits, paragraph, table
 #: Entries that are shown of each list.
 SHOWN = 6
 _DIGITS = 6
+_UNUSED = "In the pattern, but zero wherever one looks"
 
 
 def sparse_story(report: CheckReport, name_width: int, *, bounded: bool) -> str:
@@ -21,33 +22,35 @@ def sparse_story(report: CheckReport, name_width: int, *, bounded: bool) -> str:
     assert checks is not None  # asked only for such reports
     if report.verdict == Verdict.CONFIRMED:
         return _confirmed(checks)
+    moved = len(checks.misplaced)
     lists = [
-        (len(checks.wrong), "wrong"),
-        (len(checks.missing), "outside the pattern"),
-        (len(checks.unexplained_rows), "disagreeing as a whole"),
+        (len(checks.wrong) - moved, "wrong"),
+        (moved, "misplaced"),
+        (len(checks.missing) - moved, "outside the pattern"),
     ]
     told = [f"{size:,} {what}" for size, what in lists if size]
+    if len(checks.unexplained_rows):
+        told.append(f"{wording.count(len(checks.unexplained_rows), 'row')} refuted as a whole")
     if report.verdict == Verdict.UNDECIDED or not told:
-        open_rows = len(checks.undecided_rows)
-        rows = f"{wording.count(open_rows, 'row')} undecided" if open_rows else ""
-        entries = f"{checks.undecided:,} of {_looked_at(checks):,} entries undecided" if checks.undecided else ""
-        return ", ".join(part for part in (entries, rows) if part)
-    entries = "row" if told[0].endswith("whole") else "entry"
-    size = next(size for size, _ in lists if size)
-    plural = {"row": "rows", "entry": "entries"}[entries]
-    head = told[0].replace(" ", f" {entries if size == 1 else plural} ", 1)
-    story = ", ".join([head, *told[1:]])
-    first = _first(report, name_width)
-    return f"{story}; {first}" if bounded and first else story
-
-
-def _first(report: CheckReport, name_width: int) -> str:
-    entries = report.entries
-    refuted = [i for i, verdict in enumerate(entries.verdict) if verdict == Verdict.REFUTED]
+        return _undecided(checks)
+    refuted = [i for i, verdict in enumerate(report.entries.verdict) if verdict == Verdict.REFUTED]
     if not refuted:
-        return ""
-    name = wording.shortened(entries.name[refuted[0]], name_width)
-    return f"first {name}"
+        return ", ".join(told)
+    name = wording.shortened(report.entries.name[refuted[0]], name_width)
+    if len(refuted) == 1:
+        claim, digits = report.entries.claim[refuted[0]], wording.digits_to_tell_apart(report.entries.digits[refuted[0]])
+        found = wording.with_bound(report.entries.witness[refuted[0]], report.entries.bound[refuted[0]], max(digits, 4))
+        found = found if bounded else found.partition(" ± ")[0]
+        return f"{name} is claimed {wording.number(claim, digits)}, found {found}"
+    # In a narrow line the first name gives way.
+    return f"{', '.join(told)}; first {name}" if bounded else ", ".join(told)
+
+
+def _undecided(checks: SparsityChecks) -> str:
+    parts = [f"{checks.undecided:,} of {_looked_at(checks):,} entries undecided"] if checks.undecided else []
+    if len(checks.undecided_rows):
+        parts.append(f"{wording.count(len(checks.undecided_rows), 'row')} undecided as a whole")
+    return ", ".join(parts) or "nothing could be decided"
 
 
 def _confirmed(checks: SparsityChecks) -> str:
@@ -64,11 +67,15 @@ def sparse_lines(report: CheckReport, indent: int) -> list[str]:
     """Counts, the three lists, and what the random directions can see."""
     checks = report.sparsity
     assert checks is not None
+    if report.verdict == Verdict.CONFIRMED:
+        lines = paragraph(_counts(checks), indent + 2)
+        visible = paragraph(_visible(report, checks), indent + 2) if np.isfinite(checks.smallest_visible) else []
+        return lines + _list_lines(report.entries, checks.unused, _UNUSED, indent + 2) + visible
     lines = ["", *paragraph(_counts(checks), indent)]
     for places, head in (
         (checks.missing, "Outside the pattern, where the function depends on the variable"),
         (checks.wrong, "Wrong values"),
-        (checks.unused, "In the pattern, but zero wherever one looks"),
+        (checks.unused, _UNUSED),
     ):
         lines += _list_lines(report.entries, places, head, indent)
     if len(checks.unexplained_rows):
