@@ -13,9 +13,15 @@ from gradcheck.claims.fault_lists import Faults, faults_of, repetitions
 from gradcheck.claims.joint_looks import Accuracy
 from gradcheck.claims.policy import DEFAULT_REL_TOL, REL_TOL, Rules
 from gradcheck.claims.rule import ALLOWANCE, digits_agreed
-from gradcheck.claims.sparse_examination import SparseExamined, examine_sparse
+from gradcheck.claims.sparse_examination import UNEXPLAINED, SparseExamined, examine_sparse
 from gradcheck.counsel.claim_findings import mutation
-from gradcheck.counsel.sparsity_stories import Named, diagnoses_of_faults, kinks_of_entries, unused_finding
+from gradcheck.counsel.sparsity_stories import (
+    Named,
+    diagnoses_of_faults,
+    diagnoses_of_rows,
+    kinks_of_entries,
+    unused_finding,
+)
 from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import Session
 from gradcheck.problem.sparse_claim import declared_pattern, matrix_of
@@ -95,9 +101,15 @@ def checked_jointly(
     findings += mutation(subject, session.ledger)
     verdict = _verdict(examined, faults)
     diagnoses = diagnoses_of_faults(
-        table, faults, repeated, name, kind, lambda at: _tolerance(table, at, examined, accuracy, centre, subject.domain.scale),
+        table,
+        faults,
+        repeated,
+        name,
+        kind,
+        lambda at: _tolerance(table, at, accuracy, centre, subject.domain.scale),
         declared,
     )
+    diagnoses += diagnoses_of_rows(function, np.flatnonzero(_unexplained(examined)), examined.factor)
     if left_out:
         whole = [subject.layout.name(int(i)) for i in np.flatnonzero(subject.domain.integer)[:10]]
         notices.append(f"entries for {listed(whole)} were not judged: whole numbers have no derivative")
@@ -183,13 +195,15 @@ def _verdict(examined: SparseExamined, faults: Faults) -> Verdict:
 
 def _unexplained(examined: SparseExamined) -> BoolArray:
     """Rows that random directions refute, in which no entry at fault was found."""
-    found = np.zeros(examined.by_entry.size, bool)
-    found[examined.table.row[examined.table.verdict != CONFIRMED]] = True
-    return examined.unexplained & ~(found & examined.by_entry)
+    # Where entries of the row were never looked at (a budget), they may well be the ones at fault.
+    unseen = np.zeros(examined.by_entry.size, bool)
+    table = examined.table
+    unseen[table.row[(table.verdict == UNDECIDED) & (table.reason != UNEXPLAINED)]] = True
+    return examined.unexplained & ~(unseen & examined.by_entry)
 
 
 def _tolerance(
-    table: EntryTable, at: IntArray, examined: SparseExamined, accuracy: Accuracy, centre: Array, scale: Array
+    table: EntryTable, at: IntArray, accuracy: Accuracy, centre: Array, scale: Array
 ) -> Array:
     size = np.fmax(np.abs(table.claim[at]), np.abs(table.value[at]))
     floor = accuracy.unit_roundoff * np.abs(centre[table.row[at]])

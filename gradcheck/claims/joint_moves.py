@@ -106,6 +106,11 @@ def room_of(base: Array, rows: Array, domain: Domain, way: Way, *, bits: int = 0
     return replace(room, grain=np.full(len(rows), GRAIN * 2.0**bits))
 
 
+def shuffled(size: int, seed: int) -> IntArray:
+    """A random order of n positions."""
+    return np.asarray(np.argsort(_hashed(np.arange(size, dtype=np.uint64), seed), kind="stable"))
+
+
 def halves(size: int, seed: int, parts: int) -> IntArray:
     """A random division of n positions into `parts`."""
     bits = _hashed(np.arange(size, dtype=np.uint64), seed)

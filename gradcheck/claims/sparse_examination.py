@@ -31,7 +31,7 @@ from gradcheck.claims.joint_looks import (
     second_look,
     whole_look,
 )
-from gradcheck.claims.joint_moves import PART_BITS, Moves, Way, halves, position_weights, room_of
+from gradcheck.claims.joint_moves import PART_BITS, Moves, Way, halves, position_weights, room_of, shuffled
 from gradcheck.claims.rule import ALLOWANCE, REFUTING_BOUNDS, ZERO_ALLOWANCE, ZERO_CLAIM
 from gradcheck.claims.sparsity import Colouring, coloured, dense_rows
 from gradcheck.claims.unused_entries import Influence, influence_along
@@ -62,6 +62,10 @@ PARTS_OF_FULL_ROWS = (8, 64)
 GROUPS_AGAIN_MOST = 256
 #: What is said of entries beyond that.
 TOO_MANY = "suspect: its row holds too many faults for each to get a look of its own"
+#: What is said of entries of rows in which something else is wrong that was not found.
+UNEXPLAINED = "its row depends on variables outside the pattern that were not found, which may be seen in this entry"
+#: A full row is not searched further if more than this share of its groups of columns disagree: most of it is wrong.
+MOSTLY_WRONG = 0.7
 #: Columns with large entries move less, but not by more than this, where rows are judged as wholes.
 LEAST_WEIGHT = 2.0**-10
 
@@ -95,6 +99,8 @@ class SparseExamined:
     random : list of RandomDirection
     tolerance : list of ndarray, shape (m,)
         Of each random direction.
+    factor : ndarray, shape (m,)
+        By which the claim of a row differs from all random directions; NaN where there is none.
     influence : Influence
         What becomes of entries that are zero here.
     still : ndarray of bool, shape (n,)
@@ -111,6 +117,7 @@ class SparseExamined:
     groups: int
     random: list[RandomDirection]
     tolerance: list[Array]
+    factor: Array
     visible: float
     influence: Influence
     still: BoolArray
@@ -423,15 +430,39 @@ class _Examination:
 
     def _search_full_rows(self) -> Inquiry[None]:
         """Rows judged as wholes that disagree: their faults, with the columns in smaller and smaller groups."""
-        rows = np.flatnonzero(self._disagreeing() & ~self.by_entry)
+        searchable = ~self.by_entry & ~self._of_one_factor()
+        rows = np.flatnonzero(self._disagreeing() & searchable)
         if rows.size == 0 or self.ended:
             return
         yield from self._accuse_single(rows)
         for parts in PARTS_OF_FULL_ROWS:
-            rows = np.flatnonzero(self._disagreeing() & ~self.by_entry)
+            rows = np.flatnonzero(self._disagreeing() & searchable)
             if rows.size == 0 or self.ended:
                 return
-            yield from self._accuse_in_groups(rows, parts)
+            disagreeing = yield from self._accuse_in_groups(rows, parts)
+            searchable &= disagreeing <= MOSTLY_WRONG * parts
+
+    def _of_one_factor(self) -> BoolArray:
+        """Rows (m,) that are wrong by one factor, as all random directions have it."""
+        result: BoolArray = np.isfinite(self._factors())
+        return result
+
+    def _factors(self) -> Array:
+        """(m,): the factor by which the claim differs from every random direction; NaN where there is none, or is 1."""
+        claimed = np.where(np.isfinite(self.table.claim), self.table.claim, 0.0)
+        ratios, slacks = [], []
+        for seen in self.random:
+            claim = self.table.product(seen.row, claimed)
+            with np.errstate(divide="ignore", invalid="ignore"):
+                ratios.append(claim / seen.value)
+                slacks.append((seen.bound + self._tolerance(seen.row)) / np.abs(seen.value) * np.fmax(1.0, np.abs(ratios[-1])))
+        if len(ratios) < RANDOM:
+            return np.full(self.centre.size, np.nan)
+        ratio, slack = np.array(ratios), np.array(slacks)
+        with np.errstate(invalid="ignore"):
+            same = (np.abs(ratio - ratio[0]) <= 2 * (slack + slack[0])).all(axis=0) & (slack.max(axis=0) < 1e-3)
+            off = np.abs(ratio[0] - 1) > SUSPECT * slack[0]
+        return np.where(same & off & (ratio[0] != 0), ratio[0], np.nan)
 
     def _accuse_single(self, rows: IntArray) -> Inquiry[None]:
         weights = position_weights(self.table.shape[1])
@@ -449,7 +480,9 @@ class _Examination:
             gaps, slacks = own[0][1][found], own[0][2][found]
             self._accuse(found, columns, gaps / own[0][0].row[columns], slacks / np.abs(own[0][0].row[columns]))
 
-    def _accuse_in_groups(self, rows: IntArray, parts: int) -> Inquiry[None]:
+    def _accuse_in_groups(self, rows: IntArray, parts: int) -> Inquiry[IntArray]:
+        """Search the columns group by group; in how many groups each row (m,) disagrees."""
+        disagreeing = np.zeros(self.centre.size, np.intp)
         n = self.table.shape[1]
         weights = position_weights(n)
         weight = self._weight
@@ -468,19 +501,21 @@ class _Examination:
                 for row in (plain, plain * weights):
                     seen = yield from self._along(row, way, rows)
                     if self.ended:
-                        return
+                        return disagreeing
                     evidence.append(
                         (row, seen.value - self.table.product(row, self.table.best), seen.bound + self._tolerance(row))
                     )
                 gap, slack = evidence[0][1], evidence[0][2]
                 with np.errstate(invalid="ignore"):
                     apart = rows[np.isfinite(slack[rows]) & (np.abs(gap[rows]) > SUSPECT * slack[rows])]
+                disagreeing[apart] += 1
                 if apart.size == 0:
                     continue
                 found, at, _ = row_faults.single_faults(
                     self.table, apart, evidence[:1], evidence[1][1:], weights, members
                 )
                 self._accuse(found, at, gap[found] / plain[at], slack[found] / np.abs(plain[at]))
+        return disagreeing
 
     def _accuse(self, rows: IntArray, columns: IntArray, error: Array, spread: Array) -> None:
         """Take faults of full rows down, as refuted by one look; where several columns may be meant, all are looked at."""
@@ -571,10 +606,28 @@ class _Examination:
 
     def _look_again(self) -> Inquiry[None]:
         """Refuted entries once more, at other steps."""
-        for own, direction, way in self._divided(np.flatnonzero(self.table.verdict == REFUTED)):
+        # In other groups than before: what a place outside the pattern adds to an entry is not added again.
+        order = shuffled(self.table.shape[1], self.seed + 13)
+        for own, direction, way in self._divided(np.flatnonzero(self.table.verdict == REFUTED), order):
             yield from self._look_again_along(own, direction, way)
+        yield from self._look_at_rows_again()
 
-    def _divided(self, entries: IntArray) -> Iterator[tuple[IntArray, Array, Way]]:
+    def _look_at_rows_again(self) -> Inquiry[None]:
+        """Rows that nothing explains get a second look along a random direction; their entries cannot be judged."""
+        table = self.table
+        rows = np.flatnonzero(self._disagreeing())
+        for seen in self.random[:1] if rows.size and not self.ended else ():
+            direction = seen.row[None, :]
+            room = room_of(self.base, direction, self.domain, seen.way, bits=PART_BITS)
+            looking = finite_difference(self.base, direction, room_of_one(room, 0, scale=OTHER_WIDTH), self.centre[rows])
+            heard = yield from of_outputs(looking, rows)
+            seen.value[rows], seen.bound[rows] = heard.value[0], np.fmax(heard.bound[0], seen.bound[rows])
+        unexplained = self._disagreeing()
+        accused = (table.verdict == REFUTED) & unexplained[table.row] & self.by_entry[table.row]
+        table.verdict[accused] = UNDECIDED
+        table.reason[accused] = UNEXPLAINED
+
+    def _divided(self, entries: IntArray, order: IntArray | None = None) -> Iterator[tuple[IntArray, Array, Way]]:
         """These entries in groups that can be looked at together, each with its direction (1, n).
 
         Only their columns move, and in none of their rows two of them.
@@ -590,7 +643,7 @@ class _Examination:
             columns = meant & self.moves.along(way)
             if not columns.any():
                 continue
-            colouring = coloured(pattern, columns)
+            colouring = coloured(pattern, columns, order=order)
             assert colouring is not None  # no limit was set
             own = colouring.colour[table.column[entries]]
             for group in range(min(colouring.count, GROUPS_AGAIN_MOST)):
@@ -700,6 +753,7 @@ class _Examination:
             groups=self.groups,
             random=self.random,
             tolerance=[self._tolerance(seen.row) for seen in self.random],
+            factor=self._factors(),
             visible=self._visible(),
             influence=influence,
             still=still,

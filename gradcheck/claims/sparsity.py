@@ -54,7 +54,9 @@ def dense_rows(pattern: Any) -> BoolArray:
     return result
 
 
-def coloured(pattern: Any, columns: BoolArray, *, most: int | None = None) -> Colouring | None:
+def coloured(
+    pattern: Any, columns: BoolArray, *, most: int | None = None, order: IntArray | None = None
+) -> Colouring | None:
     """Groups of columns such that no row of the pattern meets a group twice.
 
     Parameters
@@ -64,6 +66,8 @@ def coloured(pattern: Any, columns: BoolArray, *, most: int | None = None) -> Co
         Which columns are to be moved.
     most : int, optional
         More groups are of no use: None is returned then.
+    order : ndarray of int, shape (n,), optional
+        In which order to take the columns, all of them; for other groups than the usual ones.
 
     Returns
     -------
@@ -88,6 +92,8 @@ def coloured(pattern: Any, columns: BoolArray, *, most: int | None = None) -> Co
         return None
     by_column = pattern.tocsc()
     pointers, rows = by_column.indptr.tolist(), by_column.indices.tolist()
+    if order is not None:
+        return _greedy(pointers, rows, order[columns[order]], pattern.shape, most)
     natural = np.flatnonzero(columns)
     found = _greedy(pointers, rows, natural, pattern.shape, most)
     if found is None or found.count > fullest:

@@ -9,7 +9,7 @@ from gradcheck.claims.fault_lists import SAME_VALUE, Faults, ratio_in_common
 from gradcheck.claims.mistakes.case import Case
 from gradcheck.claims.mistakes.naming import likely_mistakes
 from gradcheck.problem.subject import Subject
-from gradcheck.records.arrays import IntArray
+from gradcheck.records.arrays import Array, IntArray
 from gradcheck.records.finding import Finding, FindingCode, Location, Severity
 from gradcheck.records.report import Diagnosis
 from gradcheck.records.sparsity import Repetition
@@ -21,6 +21,8 @@ Named = Callable[[int, int], str]
 
 #: Entries that a diagnosis names; more of them are counted.
 NAMED_MOST = 1_000
+#: Rows are off by the same factor if it agrees to this share; so many different factors are told.
+SAME_ROW_FACTOR, ROW_STORIES_MOST = 1e-5, 4
 #: Wrong entries beyond this many are too many to be looked at for a common mistake one by one.
 EXPLAINED_MOST = 5_000
 
@@ -174,6 +176,30 @@ def _many(table: EntryTable, wrong: IntArray, name: Named) -> Diagnosis:
     code, what = _in_common(table, wrong)
     text = f"{what}: {count(wrong.size, 'entry', 'entries')}, {listed(_names(table, wrong[:6], name))} and so on."
     return Diagnosis(code=code, text=text, entries=_names(table, wrong, name))
+
+
+def diagnoses_of_rows(function: str, rows: IntArray, factor: Array) -> tuple[Diagnosis, ...]:
+    """Likely mistakes in whole rows: those that are off by one factor."""
+    diagnoses = []
+    left = rows[np.isfinite(factor[rows])]
+    while left.size:
+        ratio = float(np.median(factor[left]))
+        ratio = float(factor[left][np.abs(factor[left] - ratio).argmin()])
+        alike = np.abs(factor[left] - ratio) <= SAME_ROW_FACTOR * abs(ratio)
+        names = tuple(f"{function}[{row}]" for row in left[alike][:NAMED_MOST])
+        minus = abs(ratio + 1) <= SAME_ROW_FACTOR
+        what = "minus the derivative" if minus else f"{number(ratio, digits=6)} times the derivative"
+        many = "the whole row" if len(names) == 1 else f"the whole of {count(int(alike.sum()), 'row')}"
+        text = (
+            f"{many} {listed(names)} is claimed {what}, along every random direction; look for a sign or a factor lost or "
+            "doubled in this output."
+        )
+        code = DiagnosisCode.SIGN_FLIPPED if minus else DiagnosisCode.CONSTANT_FACTOR
+        diagnoses.append(Diagnosis(code=code, text=text, entries=names))
+        left = left[~alike]
+        if len(diagnoses) >= ROW_STORIES_MOST:
+            break
+    return tuple(diagnoses)
 
 
 def _transposed(table: EntryTable, faults: Faults, name: Named) -> Diagnosis | None:

@@ -54,9 +54,9 @@ def _undecided(checks: SparsityChecks) -> str:
 
 
 def _confirmed(checks: SparsityChecks) -> str:
-    whole = f"{checks.whole_rows_confirmed:,} rows as wholes" if checks.whole_rows else ""
-    entries = f"all {checks.confirmed:,} entries, one by one" if checks.confirmed else ""
-    return " and ".join(part for part in (entries, whole) if part) + ", agree"
+    whole = wording.count(checks.whole_rows_confirmed, "whole row") if checks.whole_rows else ""
+    entries = f"all {checks.confirmed:,} entries" if checks.confirmed else ""
+    return " and ".join(part for part in (entries, whole) if part) + " agree"
 
 
 def _looked_at(checks: SparsityChecks) -> int:
