@@ -54,8 +54,8 @@ SLOTS_OF_A_ROUND = 600_000
 SUSPECT = 3.0
 #: Tolerance of a direction, in roots of the sum of squares of those of its terms.
 DIRECTION_TOLERANCE = 4.0
-#: How often rows that nothing explains are searched, with groups twice as small each time.
-SEARCHES_MOST = 4
+#: How often rows that nothing explains are searched, and how often the groups are divided further.
+SEARCHES_MOST, HALVINGS_MOST = 8, 3
 #: Into how many parts the columns of a full row are divided, search by search.
 PARTS_OF_FULL_ROWS = (8, 64)
 #: Looks at single entries take no more directions than this.
@@ -399,12 +399,15 @@ class _Examination:
             rows = np.flatnonzero((self._disagreeing() | self.stray) & self.by_entry)
             if rows.size == 0 or self.ended:
                 return
-            found = yield from self._search_in_groups(rows, 2**search)
-            if self.table.add(*found) and not self.ended:
+            found = yield from self._search_in_groups(rows, search)
+            fresh = self.table.add(*found)
+            if not fresh and search >= HALVINGS_MOST:
+                return
+            if fresh and not self.ended:
                 self.stray[rows] = False
                 yield from self._look_by_groups(rows)
 
-    def _search_in_groups(self, rows: IntArray, parts: int) -> Inquiry[tuple[IntArray, IntArray]]:
+    def _search_in_groups(self, rows: IntArray, search: int) -> Inquiry[tuple[IntArray, IntArray]]:
         """Candidates (rows, columns) from three weightings of every group of columns, divided further at random."""
         n = self.table.shape[1]
         weights = position_weights(n)
@@ -415,7 +418,8 @@ class _Examination:
                 continue
             colouring = coloured(self.table.pattern(rows), columns)
             assert colouring is not None  # no limit was set
-            group = colouring.colour * parts + halves(n, self.seed + 77 * parts, parts)
+            parts = 2 ** min(search, HALVINGS_MOST)
+            group = colouring.colour * parts + halves(n, self.seed + 77 * (search + 1), parts)
             for number in np.unique(group[columns]):
                 members = columns & (group == number)
                 plain = np.where(members, self.moves.size, 0.0)
