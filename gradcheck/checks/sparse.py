@@ -31,7 +31,7 @@ from gradcheck.records.report import CheckReport, DirectionChecks, Entries
 from gradcheck.records.sparsity import Repetition, SparsityChecks
 from gradcheck.records.verdict import Verdict
 from gradcheck.report.check_text import check_text
-from gradcheck.wording import count, listed
+from gradcheck.wording import listed
 
 #: Jacobians of more columns than this are checked along joint moves, also where they are dense.
 MANY_COLUMNS = 1_000
@@ -202,9 +202,7 @@ def _unexplained(examined: SparseExamined) -> BoolArray:
     return examined.unexplained & ~(unseen & examined.by_entry)
 
 
-def _tolerance(
-    table: EntryTable, at: IntArray, accuracy: Accuracy, centre: Array, scale: Array
-) -> Array:
+def _tolerance(table: EntryTable, at: IntArray, accuracy: Accuracy, centre: Array, scale: Array) -> Array:
     size = np.fmax(np.abs(table.claim[at]), np.abs(table.value[at]))
     floor = accuracy.unit_roundoff * np.abs(centre[table.row[at]])
     tolerance: Array = accuracy.abs_tol + accuracy.rel_tol * size + ALLOWANCE * floor / scale[table.column[at]]

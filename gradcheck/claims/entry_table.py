@@ -62,7 +62,11 @@ class EntryTable:
         key = rows * n + claim.indices
         if pattern is None:
             return EntryTable(
-                shape=(m, n), row=rows, column=claim.indices.astype(np.intp), claim=claim.data, inside=np.ones(key.size, bool)
+                shape=(m, n),
+                row=rows,
+                column=claim.indices.astype(np.intp),
+                claim=claim.data,
+                inside=np.ones(key.size, bool),
             )
         declared = np.repeat(np.arange(m), np.diff(pattern.indptr)) * n + pattern.indices
         whole = np.union1d(key, declared)
@@ -96,7 +100,14 @@ class EntryTable:
             return 0
         at = np.searchsorted(key, wanted)
         row, column = np.divmod(wanted, self.shape[1])
-        fresh = {"row": row, "column": column, "claim": 0.0, "inside": False, "value": np.nan, "bound": np.inf}
+        fresh: dict[str, Any] = {
+            "row": row,
+            "column": column,
+            "claim": 0.0,
+            "inside": False,
+            "value": np.nan,
+            "bound": np.inf,
+        }
         fresh |= {"left": np.nan, "right": np.nan, "verdict": UNDECIDED, "reason": ""}
         for name, values in fresh.items():
             setattr(self, name, np.insert(getattr(self, name), at, values))
@@ -109,8 +120,8 @@ class EntryTable:
 
     def product(self, direction: Array, values: Array) -> Array:
         """(m,): these values of the entries, as a matrix, times a direction (n,)."""
-        moved: Array = np.bincount(self.row, weights=values * direction[self.column], minlength=self.shape[0])
-        return moved
+        terms = values * direction[self.column]
+        return np.asarray(np.bincount(self.row, weights=terms, minlength=self.shape[0]), dtype=float)
 
     def root_of_squares(self, direction: Array, values: Array) -> Array:
         """(m,): the root of the sum of squares of the terms of such a product."""

@@ -44,7 +44,9 @@ def faults_of(table: EntryTable, influence: Influence) -> Faults:
     with np.errstate(invalid="ignore"):
         there = np.isfinite(table.bound) & (np.abs(table.value) > 3 * table.bound)
     # A claimed entry outside a declared pattern may be right: then the pattern is wrong.
-    missing = ~table.inside & ((refuted & (table.claim == 0)) | ((table.claim != 0) & there & (refuted | (table.verdict == CONFIRMED))))
+    missing = ~table.inside & (
+        (refuted & (table.claim == 0)) | ((table.claim != 0) & there & (refuted | (table.verdict == CONFIRMED)))
+    )
     wrong = refuted & (table.inside | (table.claim != 0)) & ~(missing & (table.claim == 0))
     # Where a value is claimed that should be zero, that value is wrong, and told there.
     unused = table.inside & (table.value == 0) & (table.claim == 0) & influence.looked & ~influence.changes

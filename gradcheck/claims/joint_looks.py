@@ -7,7 +7,7 @@ not spoil the others.
 
 from collections.abc import Generator
 from dataclasses import dataclass, replace
-from typing import TypeVar
+from typing import Any, TypeVar
 
 import numpy as np
 
@@ -207,15 +207,14 @@ def whole_look(
 
 
 def _assembled(parts: list[tuple[IntArray, Slots]], m: int) -> Slots:
-    def whole(name: str) -> np.ndarray[tuple[int, ...], np.dtype[np.generic]]:
-        example = getattr(parts[0][1], name)
-        result = np.empty((m, 1), dtype=example.dtype)
+    def whole(name: str) -> Any:
+        result = np.empty((m, 1), dtype=getattr(parts[0][1], name).dtype)
         for part, slots in parts:
             result[part] = getattr(slots, name)
         return result
 
     names = ("value", "bound", "left", "right", "confirmed", "refuted", "reason")
-    return Slots(**{name: whole(name) for name in names}, cut_short=any(slots.cut_short for _, slots in parts))  # type: ignore[arg-type]
+    return Slots(**{name: whole(name) for name in names}, cut_short=any(slots.cut_short for _, slots in parts))
 
 
 def _ended(reasons: np.ndarray[tuple[int, ...], np.dtype[np.object_]]) -> bool:
@@ -260,7 +259,7 @@ def second_look(
         desk.bound = np.where(acquitting[:, None], alone.bound, desk.bound)
         desk.reason[cleared] = ""
     # What was moved alone, or with fewer others, is seen better than what was moved with many.
-    sharper = desk.refuted & (heard.bound.T <= 10 * desk.bound) & np.isfinite(heard.value.T)
+    sharper = desk.refuted & (10 * desk.bound >= heard.bound.T) & np.isfinite(heard.value.T)
     desk.value = np.where(sharper, heard.value.T, desk.value)
     desk.bound = np.where(sharper, heard.bound.T, desk.bound)
     return _slots(desk.result(), cut_short=False)

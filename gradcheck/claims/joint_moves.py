@@ -123,9 +123,9 @@ def _power_of_two(size: Array) -> Array:
     return np.where(size > 0, np.ldexp(1.0, exponent - 1), 0.0)
 
 
-def _hashed(position: np.ndarray[tuple[int, ...], np.dtype[np.uint64]], seed: int) -> np.ndarray[
-    tuple[int, ...], np.dtype[np.uint64]
-]:
+def _hashed(
+    position: np.ndarray[tuple[int, ...], np.dtype[np.uint64]], seed: int
+) -> np.ndarray[tuple[int, ...], np.dtype[np.uint64]]:
     """A well mixed number for each position (splitmix64; Steele, Lea & Flood 2014): the same whatever is left out."""
     with np.errstate(over="ignore"):
         mixed = (position + np.uint64((seed * 0x9E3779B97F4A7C15 + 0x632BE59BD9B4E019) % 2**64)) * np.uint64(

@@ -38,13 +38,14 @@ class Tolerance:
 
     Attributes
     ----------
-    rel_tol, abs_tol : float
+    rel_tol : float
+    abs_tol : float or ndarray, broadcastable to the claim
     rounding : ndarray, broadcastable to the claim
         ε/τ: rounding floor of the output over the typical size of the variable.
     """
 
     rel_tol: float
-    abs_tol: float
+    abs_tol: float | Array
     rounding: Array
 
     def of(self, claim: Array, value: Array) -> Array:

@@ -289,9 +289,7 @@ class _Examination:
             self.ended |= look.cut_short
             seen = self._spread(row, way, outputs, heard.value[0], heard.bound[0], m)
             if callable(wider) and wider(seen) and not self.ended:
-                again = yield from of_outputs(
-                    second_glance(self.base, rows, room, centre, look, np.arange(1)), outputs
-                )
+                again = yield from of_outputs(second_glance(self.base, rows, room, centre, look, np.arange(1)), outputs)
                 better = again.bound[0] < heard.bound[0]
                 value = np.where(better, again.value[0], heard.value[0])
                 return self._spread(row, way, outputs, value, np.fmin(again.bound[0], heard.bound[0]), m)
@@ -459,7 +457,9 @@ class _Examination:
             claim = self.table.product(seen.row, claimed)
             with np.errstate(divide="ignore", invalid="ignore"):
                 ratios.append(claim / seen.value)
-                slacks.append((seen.bound + self._tolerance(seen.row)) / np.abs(seen.value) * np.fmax(1.0, np.abs(ratios[-1])))
+                slacks.append(
+                    (seen.bound + self._tolerance(seen.row)) / np.abs(seen.value) * np.fmax(1.0, np.abs(ratios[-1]))
+                )
         if len(ratios) < RANDOM:
             return np.full(self.centre.size, np.nan)
         ratio, slack = np.array(ratios), np.array(slacks)
@@ -603,7 +603,9 @@ class _Examination:
             failing = ~np.isfinite(table.bound[own]) if way == Way.BOTH else np.zeros(own.size, bool)
             looking = whole_look(*arrangement, failing)
             seen = yield from of_outputs(looking, table.row[own])
-            self._take_down(own, self.moves.size[table.column[own]], seen, np.arange(own.size), np.zeros(own.size, np.intp))
+            self._take_down(
+                own, self.moves.size[table.column[own]], seen, np.arange(own.size), np.zeros(own.size, np.intp)
+            )
             self.ended |= seen.cut_short
             if self.ended:
                 return
@@ -623,7 +625,9 @@ class _Examination:
         for seen in self.random[:1] if rows.size and not self.ended else ():
             direction = seen.row[None, :]
             room = room_of(self.base, direction, self.domain, seen.way, bits=PART_BITS)
-            looking = finite_difference(self.base, direction, room_of_one(room, 0, scale=OTHER_WIDTH), self.centre[rows])
+            looking = finite_difference(
+                self.base, direction, room_of_one(room, 0, scale=OTHER_WIDTH), self.centre[rows]
+            )
             heard = yield from of_outputs(looking, rows)
             seen.value[rows], seen.bound[rows] = heard.value[0], np.fmax(heard.bound[0], seen.bound[rows])
         unexplained = self._disagreeing()
@@ -693,7 +697,9 @@ class _Examination:
             reason=np.full((own.size, 1), "", dtype=object),
             cut_short=False,
         )
-        looking = second_look(*self._arranged(own, direction, way, scale=OTHER_WIDTH), first, ~self.by_entry[table.row[own]])
+        looking = second_look(
+            *self._arranged(own, direction, way, scale=OTHER_WIDTH), first, ~self.by_entry[table.row[own]]
+        )
         seen = yield from of_outputs(looking, table.row[own])
         self._take_down(own, size, seen, np.arange(own.size), np.zeros(own.size, np.intp))
 
@@ -701,7 +707,9 @@ class _Examination:
         """Places outside the pattern that were suspected, and hold zero as claimed."""
         table = self.table
         with np.errstate(invalid="ignore"):
-            nothing = (table.verdict == CONFIRMED) | ((table.verdict == UNDECIDED) & (np.abs(table.value) <= table.bound))
+            nothing = (table.verdict == CONFIRMED) | (
+                (table.verdict == UNDECIDED) & (np.abs(table.value) <= table.bound)
+            )
         table.drop(~table.inside & (table.claim == 0) & nothing)
 
     def _influence(self) -> Inquiry[Influence]:

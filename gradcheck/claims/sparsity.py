@@ -107,12 +107,8 @@ def coloured(
 def _degrees(pattern: Any, by_column: Any) -> Array:
     """(n,): an upper bound of how many other columns share a row with each column."""
     counts = np.diff(pattern.indptr).astype(float)
-    sums: Array = np.bincount(
-        np.repeat(np.arange(pattern.shape[1]), np.diff(by_column.indptr)),
-        weights=counts[by_column.indices],
-        minlength=pattern.shape[1],
-    )
-    return sums
+    columns = np.repeat(np.arange(pattern.shape[1]), np.diff(by_column.indptr))
+    return np.asarray(np.bincount(columns, weights=counts[by_column.indices], minlength=pattern.shape[1]), dtype=float)
 
 
 def _greedy(

@@ -155,9 +155,7 @@ def _wrong(
 def _repeated(table: EntryTable, chain: IntArray, repetition: Repetition, name: Named) -> Diagnosis:
     """Wrong values that repeat regularly, and the factor they have in common."""
     code, what = _in_common(table, chain)
-    text = (
-        f"{what}: {repetition_words(repetition, name)}. One formula makes them all; look at the line that fills this block."
-    )
+    text = f"{what}: {repetition_words(repetition, name)}. One formula makes them all; look at the line that fills this block."
     return Diagnosis(code=code, text=text, entries=_names(table, chain, name))
 
 
@@ -244,8 +242,8 @@ def unused_finding(
         variable=subject.layout.name(int(table.column[unused[0]])) if unused.size == 1 else None,
         where=Location(point=subject.start),
         text=(
-            f"{unused.size:,} {what} zero here and did not change a bit of {function} far from the point and at another "
-            f"point either: {_where(table, unused, 'unused', repeated, name)}."
+            f"{unused.size:,} {what} zero here and did not change a bit of {function} far from the point, nor at "
+            f"another point: {_where(table, unused, 'unused', repeated, name)}."
         ),
         remedy="Leave such entries out of the pattern if they are zero everywhere: a solver factorises them in vain.",
         evidence={"entries": int(unused.size)},

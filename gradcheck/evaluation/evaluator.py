@@ -21,7 +21,6 @@ from gradcheck.evaluation.protocol import Status
 from gradcheck.problem.derivative_shape import claim_matrix
 from gradcheck.problem.sparse_claim import is_sparse, is_stored, stored_entries
 from gradcheck.problem.subject import Subject, Target
-from gradcheck.records.arrays import Array
 
 
 class Evaluator:

@@ -83,7 +83,7 @@ def stored_entries(
     zeros = int((value == 0).sum())
     if zeros:
         notices.append(
-            f"the {kind} claim stores {count(zeros, 'explicit zero')}: kept as entries of its pattern, claimed zero here"
+            f"the {kind} claim stores {count(zeros, 'explicit zero')}: kept as part of its pattern, claimed zero here"
         )
     entries = np.empty(row.size, dtype=STORED)
     entries["row"], entries["column"], entries["value"] = row, column, value

@@ -38,7 +38,10 @@ def sparse_story(report: CheckReport, name_width: int, *, bounded: bool) -> str:
         return ", ".join(told)
     name = wording.shortened(report.entries.name[refuted[0]], name_width)
     if len(refuted) == 1:
-        claim, digits = report.entries.claim[refuted[0]], wording.digits_to_tell_apart(report.entries.digits[refuted[0]])
+        claim, digits = (
+            report.entries.claim[refuted[0]],
+            wording.digits_to_tell_apart(report.entries.digits[refuted[0]]),
+        )
         found = wording.with_bound(report.entries.witness[refuted[0]], report.entries.bound[refuted[0]], max(digits, 4))
         found = found if bounded else found.partition(" ± ")[0]
         return f"{name} is claimed {wording.number(claim, digits)}, found {found}"
@@ -94,8 +97,9 @@ def _counts(checks: SparsityChecks) -> str:
     parts = []
     if _looked_at(checks):
         parts.append(
-            f"{_looked_at(checks):,} entries looked at one by one, in {wording.count(checks.groups, 'group')} of columns "
-            f"that share no row: {checks.confirmed:,} confirmed, {checks.refuted:,} refuted, {checks.undecided:,} undecided"
+            f"{_looked_at(checks):,} entries looked at one by one, in {wording.count(checks.groups, 'group')} of "
+            f"columns that share no row: {checks.confirmed:,} confirmed, {checks.refuted:,} refuted, "
+            f"{checks.undecided:,} undecided"
         )
     if checks.whole_rows:
         parts.append(
@@ -134,7 +138,9 @@ def _table(entries: Entries, shown: Sequence[int], indent: int) -> list[str]:
             refuted = entries.verdict[i] == Verdict.REFUTED
             digits = min(wording.digits_to_tell_apart(float(entries.digits[i])) if refuted else _DIGITS, most)
             witness = wording.with_bound(float(entries.witness[i]), float(entries.bound[i]), max(digits, 4))
-            rows.append((entries.name[i], wording.number(float(entries.claim[i]), digits), witness, str(entries.verdict[i])))
+            rows.append(
+                (entries.name[i], wording.number(float(entries.claim[i]), digits), witness, str(entries.verdict[i]))
+            )
         lines = table(("entry", "claim", "witness ± bound", "verdict"), rows, right="----", indent=indent)
         if fits(lines):
             break
