@@ -245,7 +245,7 @@ def second_look(
     """
     desk = SlotDesk(claim, centre, typical, size, accuracy)
     desk.value, desk.bound, desk.left, desk.right = first.value, first.bound, first.left, first.right
-    desk.refuted, desk.confirmed, desk.reason = first.refuted.copy(), first.confirmed.copy(), first.reason.copy()
+    desk.refuted, desk.confirmed = first.refuted.copy(), first.confirmed.copy()
     desk.source[:] = "finite difference"
     everything = np.arange(len(rows))
     heard = yield from finite_difference(base, rows, room, centre)

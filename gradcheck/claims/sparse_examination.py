@@ -221,7 +221,7 @@ class _Examination:
         return rows if self._colours(np.flatnonzero(rows), GROUPS_MOST) is not None else none
 
     def _colours(self, rows: IntArray, most: int | None = None) -> list[tuple[Way, Colouring]] | None:
-        """The groups of orthogonal columns on these rows, for those that move to both sides and those that move inwards."""
+        """The groups of orthogonal columns on these rows: of those that move to both sides, and inwards."""
         pattern = self.table.pattern(rows)
         met = np.zeros(self.table.shape[1], bool)
         met[pattern.indices] = True
@@ -522,7 +522,7 @@ class _Examination:
         return disagreeing
 
     def _accuse(self, rows: IntArray, columns: IntArray, error: Array, spread: Array) -> None:
-        """Take faults of full rows down, as refuted by one look; where several columns may be meant, all are looked at."""
+        """Take down faults of full rows, as refuted by one look; where several columns may be meant, all of them."""
         self.table.add(rows, columns)
         at = self.table.find(rows, columns)
         claimed = np.where(np.isfinite(self.table.claim[at]), self.table.claim[at], 0.0)

@@ -92,8 +92,8 @@ def _misplaced(table: EntryTable, faults: Faults, repeated: Sequence[Repetition]
     here = name(int(table.row[first]), int(table.column[first]))
     there = name(int(table.row[second]), int(table.column[second]))
     text = (
-        f"the value {number(float(table.claim[first]))} claimed for {here} belongs to {there}: the derivative is zero at "
-        f"the first and {number(float(table.value[second]))} at the second, where the claim has no entry"
+        f"the value {number(float(table.claim[first]))} claimed for {here} belongs to {there}: the derivative is zero "
+        f"at the first and {number(float(table.value[second]))} at the second, where the claim has no entry"
     )
     if len(pairs) > 1:
         text += f"; so do the others: {_where(table, pairs[:, 0], 'misplaced', repeated, name)}"
@@ -110,9 +110,8 @@ def _missing(
     text = (
         f"{many} outside the {which}, where the function does depend on the variable: "
         f"{_where(table, missing, 'missing', repeated, name)}. The largest is "
-        f"{name(int(table.row[largest]), int(table.column[largest]))}, found {number(float(table.value[largest]))}. Add "
-        + ("it" if missing.size == 1 else "them")
-        + " to the pattern, with the derivative."
+        f"{name(int(table.row[largest]), int(table.column[largest]))}, found {number(float(table.value[largest]))}. "
+        "Add " + ("it" if missing.size == 1 else "them") + " to the pattern, with the derivative."
     )
     return Diagnosis(code=DiagnosisCode.ZERO_ENTRY, text=text, entries=_names(table, missing, name))
 
@@ -155,7 +154,8 @@ def _wrong(
 def _repeated(table: EntryTable, chain: IntArray, repetition: Repetition, name: Named) -> Diagnosis:
     """Wrong values that repeat regularly, and the factor they have in common."""
     code, what = _in_common(table, chain)
-    text = f"{what}: {repetition_words(repetition, name)}. One formula makes them all; look at the line that fills this block."
+    places = repetition_words(repetition, name)
+    text = f"{what}: {places}. One formula makes them all; look at the line that fills this block."
     return Diagnosis(code=code, text=text, entries=_names(table, chain, name))
 
 
@@ -189,8 +189,8 @@ def diagnoses_of_rows(function: str, rows: IntArray, factor: Array) -> tuple[Dia
         what = "minus the derivative" if minus else f"{number(ratio, digits=6)} times the derivative"
         many = "the whole row" if len(names) == 1 else f"the whole of {count(int(alike.sum()), 'row')}"
         text = (
-            f"{many} {listed(names)} is claimed {what}, along every random direction; look for a sign or a factor lost or "
-            "doubled in this output."
+            f"{many} {listed(names)} is claimed {what}, along every random direction; look for a sign or a factor "
+            "lost or doubled in this output."
         )
         code = DiagnosisCode.SIGN_FLIPPED if minus else DiagnosisCode.CONSTANT_FACTOR
         diagnoses.append(Diagnosis(code=code, text=text, entries=names))
@@ -223,8 +223,8 @@ def _transposed(table: EntryTable, faults: Faults, name: Named) -> Diagnosis | N
     return Diagnosis(
         code=DiagnosisCode.TRANSPOSED,
         text=(
-            f"all {count(at.size, 'entry', 'entries')} at fault agree with the claim's transpose: rows are outputs, columns "
-            "are variables; return `claim.T`, or exchange the row and column indices."
+            f"all {count(at.size, 'entry', 'entries')} at fault agree with the claim's transpose: rows are outputs, "
+            "columns are variables; return `claim.T`, or exchange the row and column indices."
         ),
         entries=_names(table, at, name),
     )
