@@ -16,6 +16,7 @@ BENCHMARKS = (
     "verdicts",
     "slight_errors",
     "cost",
+    "sparse",
 )
 
 
