@@ -158,7 +158,9 @@ def _accuracy(session: Session, function: str, kind: str, rules: Rules) -> tuple
             f"values or claim come in single precision ({precision}), so the claim was judged to a relative "
             f"{REL_TOL[precision]:g} only; rel_tol=... asks for more"
         )
-    return Accuracy(rel_tol=rel_tol, abs_tol=rules.abs_tol, unit_roundoff=unit), notices
+    return Accuracy(
+        rel_tol=rel_tol, abs_tol=rules.abs_tol, unit_roundoff=unit, complex_step="complex step" in rules.witnesses
+    ), notices
 
 
 def _without_whole_numbers(table: EntryTable, integer: BoolArray) -> tuple[EntryTable, bool]:

@@ -16,6 +16,7 @@ from gradcheck.claims.rule import Tolerance
 from gradcheck.evaluation.protocol import Inquiry, Reply, Request, Status
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 from gradcheck.records.verdict import Verdict
+from gradcheck.witnesses.complex_step import complex_step
 from gradcheck.witnesses.difference_reasons import SPENT
 from gradcheck.witnesses.finite_difference import finite_difference
 from gradcheck.witnesses.quick_look import QuickLook, quick_look, wider_look
@@ -32,11 +33,12 @@ SLOTS_AT_ONCE = 100_000
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Accuracy:
-    """How exact a claim must be."""
+    """How exact a claim must be, and whether the complex step may be asked where differences cannot tell."""
 
     rel_tol: float
     abs_tol: float
     unit_roundoff: float
+    complex_step: bool = True
 
 
 class SlotDesk(Desk):
@@ -202,8 +204,28 @@ def whole_look(
         heard = yield from of_outputs(finite_difference(base, row, room, centre[part]), part)
         desk = SlotDesk(claim[part], centre[part], typical[part], size[part], accuracy)
         desk.hear(heard, np.arange(1), replacing=True)
+        left = np.flatnonzero(~(desk.confirmed | desk.refuted | desk.closed | (desk.reason == SPENT))[:, 0])
+        if left.size and accuracy.complex_step:
+            outputs = part[left]
+            asked = complex_step(
+                base,
+                row,
+                outputs.size,
+                scale=room.scale,
+                f0=centre[outputs],
+                reach=np.minimum(room.below, room.above),
+            )
+            exact = yield from of_outputs(asked, outputs)
+            desk.hear(_among(exact, left, part.size), np.arange(1), contested=True)
         parts.append((part, _slots(desk.result(), cut_short=_ended(desk.reason))))
     return _assembled(parts, centre.size)
+
+
+def _among(testimony: Testimony, outputs: IntArray, m: int) -> Testimony:
+    """A testimony on some of m outputs as one on all of them."""
+    value, bound = np.full((1, m), np.nan), np.full((1, m), np.inf)
+    value[:, outputs], bound[:, outputs] = testimony.value, testimony.bound
+    return Testimony(value=value, bound=bound, source=testimony.source, works=testimony.works)
 
 
 def _assembled(parts: list[tuple[IntArray, Slots]], m: int) -> Slots:
