@@ -56,7 +56,7 @@ def stored_entries(
     Notes
     -----
     Entries that are stored more than once are summed, as every sparse format means it. Explicit zeros stay: they belong
-    to the pattern. NaN and infinities stay, to be refuted.
+    to the pattern (but for those that fill the blocks of a block matrix). NaN and infinities stay, to be refuted.
     """
     _refuse_shape(kind, tuple(int(size) for size in raw.shape), columns, output_shape, input_shape)
     if raw.dtype.kind == "c":
@@ -66,6 +66,9 @@ def stored_entries(
     flat = raw.tocoo()
     row, column = (np.asarray(axis, dtype=np.intp) for axis in (flat.row, flat.col))
     value = np.asarray(flat.data, dtype=float)
+    if raw.format == "bsr":
+        # Blocks cannot but store zeros; they say nothing about a pattern.
+        row, column, value = row[value != 0], column[value != 0], value[value != 0]
     notices = []
     order = np.lexsort((column, row))
     row, column, value = row[order], column[order], value[order]
