@@ -9,6 +9,7 @@ import pytest
 from scipy import sparse
 
 import gradcheck
+from gradcheck.checking import check_described
 from gradcheck.errors import DerivativeMismatch, DerivativeShapeError, UndecidedWarning, UsageError
 from gradcheck.report.json_format import document, schema
 
@@ -252,7 +253,7 @@ def test_the_functions_of_a_problem_may_declare_patterns():
         constraints={"c": gradcheck.Function(lambda x: x**2, jacobian=lambda x: np.diag(2 * x), pattern=np.eye(8) > 0)},
     )
 
-    report = gradcheck.audit(problem).claims[1]
+    report = check_described(problem)[1]
 
     assert report.verdict == "confirmed"
     assert report.sparsity.declared
@@ -450,7 +451,7 @@ def test_whole_numbers_are_left_out_and_that_is_said():
         },
     )
 
-    report = gradcheck.audit(problem).claims[1]
+    report = check_described(problem)[1]
 
     assert report.sparsity.confirmed == 7
     assert any("whole numbers" in notice for notice in report.notices)
