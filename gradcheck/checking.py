@@ -67,9 +67,11 @@ def check(
         Among ``"differences"`` and ``"complex step"``; default both, as needed.
     rel_tol, abs_tol : float, optional
         Default 1e-8 (1e-3 for a model that returns single precision) and 0.
-    pattern : scipy.sparse matrix or boolean array, shape (m, n), optional
+    pattern : scipy.sparse matrix, boolean array of shape (m, n), or "detect", optional
         Which entries of a Jacobian may differ from zero; of a sparse matrix all stored entries. Entries outside it on
         which the model depends refute the claim. Without it, the entries that a sparse claim stores are its pattern.
+        ``"detect"`` sees from values which outputs change when groups of variables move, for Jacobians of up to 4
+        million places.
     batched : bool
         Whether the model takes many points at once: x as ``(k, n)`` (``(k,)`` where `at` is one number), and returns
         ``(k,)`` or ``(k, m)``; `output` then picks from the whole batch. A claim still takes one point ``(n,)``. Every
@@ -136,6 +138,8 @@ def check(
             "check needs exactly one claim, gradient=... or jacobian=...; "
             + (f"{' and '.join(given)} were given" if given else "none was given, so there is nothing to check")
         )
+    if isinstance(pattern, str) and pattern != "detect":
+        raise UsageError(f"pattern is {pattern!r}; give a scipy.sparse matrix, a boolean array (m, n), or 'detect'")
     if pattern is not None and jacobian is None:
         raise UsageError("pattern=... says which entries of a Jacobian may differ from zero; it needs jacobian=...")
     rules = Rules.of(rel_tol, abs_tol, witnesses, directions=directions, seed=seed)

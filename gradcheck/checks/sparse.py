@@ -11,17 +11,20 @@ from gradcheck.claims.entries import entry_name
 from gradcheck.claims.entry_table import CONFIRMED, REFUTED, UNDECIDED, EntryTable
 from gradcheck.claims.fault_lists import Faults, faults_of, repetitions
 from gradcheck.claims.joint_looks import Accuracy
+from gradcheck.claims.pattern_detection import PLACES_MOST
 from gradcheck.claims.policy import DEFAULT_REL_TOL, REL_TOL, Rules
 from gradcheck.claims.rule import ALLOWANCE, digits_agreed
 from gradcheck.claims.sparse_examination import UNEXPLAINED, SparseExamined, examine_sparse
 from gradcheck.counsel.claim_findings import mutation
 from gradcheck.counsel.sparsity_stories import (
     Named,
+    detection_words,
     diagnoses_of_faults,
     diagnoses_of_rows,
     kinks_of_entries,
     unused_finding,
 )
+from gradcheck.errors import UsageError
 from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import Session
 from gradcheck.problem.sparse_claim import declared_pattern, matrix_of
@@ -77,6 +80,12 @@ def checked_jointly(
     if table is None:
         return None
     accuracy, notices = _accuracy(session, function, kind, rules)
+    detect = isinstance(subject.targets[function].pattern, str)
+    if detect and centre.size * subject.layout.size > PLACES_MOST:
+        raise UsageError(
+            f'pattern="detect" is meant for Jacobians of up to {PLACES_MOST:,} places; this one has {centre.size:,} × '
+            f"{subject.layout.size:,}: declare its pattern, or leave pattern out to rely on that of the claim"
+        )
     table, left_out = _without_whole_numbers(table, subject.domain.integer)
     inquiry = examine_sparse(
         subject.start,
@@ -86,6 +95,7 @@ def checked_jointly(
         accuracy,
         directions=rules.directions,
         seed=rules.seed,
+        detect=detect,
     )
     examined = conduct_one(addressed(inquiry, function=function), session.gate)
     faults = faults_of(table, examined.influence)
@@ -110,6 +120,8 @@ def checked_jointly(
         declared,
     )
     diagnoses += diagnoses_of_rows(function, np.flatnonzero(_unexplained(examined)), examined.factor)
+    if examined.detection is not None:
+        notices.append(detection_words(examined.detection))
     if left_out:
         whole = [subject.layout.name(int(i)) for i in np.flatnonzero(subject.domain.integer)[:10]]
         notices.append(f"entries for {listed(whole)} were not judged: whole numbers have no derivative")
@@ -135,7 +147,7 @@ def _table_of(session: Session, function: str, kind: str, centre: Array) -> tupl
     subject = session.subject
     m, n = centre.size, subject.layout.size
     pattern = subject.targets[function].pattern
-    pattern = None if pattern is None else declared_pattern(pattern, m, n)
+    pattern = None if pattern is None or isinstance(pattern, str) else declared_pattern(pattern, m, n)
     stored = sparse_claim(session, function, kind)
     if stored is not None:
         return EntryTable.of(matrix_of(stored, m, n), pattern), pattern is not None

@@ -32,6 +32,7 @@ from gradcheck.claims.joint_looks import (
     whole_look,
 )
 from gradcheck.claims.joint_moves import PART_BITS, Moves, Way, halves, position_weights, room_of, shuffled
+from gradcheck.claims.pattern_detection import PLACES_MOST, Detected, detect_pattern
 from gradcheck.claims.rule import ALLOWANCE, REFUTING_BOUNDS, ZERO_ALLOWANCE, ZERO_CLAIM
 from gradcheck.claims.sparsity import Colouring, coloured, dense_rows
 from gradcheck.claims.unused_entries import Influence, influence_along
@@ -56,6 +57,10 @@ SUSPECT = 3.0
 DIRECTION_TOLERANCE = 4.0
 #: How often rows that nothing explains are searched, and how often the groups are divided further.
 SEARCHES_MOST, HALVINGS_MOST = 8, 3
+#: Fewer variables than this are searched as cheaply one by one.
+DETECTED_LEAST = 600
+#: So many rows, and such a share of all, are many.
+MANY_ROWS, MANY_ROWS_SHARE = 30, 0.1
 #: Into how many parts the columns of a full row are divided, search by search.
 PARTS_OF_FULL_ROWS = (8, 64)
 #: Looks at single entries take no more directions than this.
@@ -107,6 +112,8 @@ class SparseExamined:
         Columns that were not moved.
     visible : float
         Smallest single error that the random directions would have seen, as a share of the largest term of its row.
+    detection : Detected or None
+        What was seen of the pattern, where it was looked for.
     cut_short : bool
     """
 
@@ -121,6 +128,7 @@ class SparseExamined:
     visible: float
     influence: Influence
     still: BoolArray
+    detection: Detected | None
     cut_short: bool
 
 
@@ -133,6 +141,7 @@ def examine_sparse(
     *,
     directions: int | str | None = None,
     seed: int = 0,
+    detect: bool = False,
 ) -> Inquiry[SparseExamined]:
     """Examine a claimed Jacobian by directions that move many variables.
 
@@ -148,12 +157,14 @@ def examine_sparse(
         A number: so many random directions, and every row is judged as a whole. ``"all"``: every entry, however many
         groups that takes. None: every entry where few groups suffice.
     seed : int
+    detect : bool
+        See from values first which outputs depend on which variables; m·n at the most `PLACES_MOST`.
 
     Returns
     -------
     SparseExamined
     """
-    return (yield from _Examination(base, table, centre, domain, accuracy, directions, seed).run())
+    return (yield from _Examination(base, table, centre, domain, accuracy, directions, seed, detect).run())
 
 
 @dataclass(slots=True, eq=False)
@@ -165,12 +176,14 @@ class _Examination:
     accuracy: Accuracy
     directions: int | str | None
     seed: int
+    detect: bool
     moves: Moves = field(init=False)
     floor: Array = field(init=False)
     by_entry: BoolArray = field(init=False)
     random: list[RandomDirection] = field(default_factory=list)
     close: BoolArray = field(init=False)
     stray: BoolArray = field(init=False)
+    detection: Detected | None = None
     ended: bool = False
     groups: int = 0
 
@@ -185,6 +198,9 @@ class _Examination:
         self.by_entry = self._rows_by_entry()
 
     def run(self) -> Inquiry[SparseExamined]:
+        if self.detect:
+            yield from self._detect(np.arange(self.centre.size))
+            self.by_entry = self._rows_by_entry()
         yield from self._look_at_random()
         yield from self._look_closely()
         flagged = self._disagreeing()
@@ -391,8 +407,34 @@ class _Examination:
             )
             self.table.add(rows[outside], columns[outside])
 
+    def _detect(self, rows: IntArray) -> Inquiry[IntArray]:
+        """Take up every place at which these outputs are seen to depend on a variable; which rows were settled so."""
+        columns = self.moves.way != Way.STILL
+        counts = np.bincount(self.table.row, minlength=self.table.shape[0])[rows]
+        detecting = detect_pattern(
+            self.base,
+            self.moves.size,
+            columns,
+            self.centre[rows],
+            entries=float(np.median(counts)) if rows.size else 0.0,
+            seed=self.seed,
+        )
+        found = yield from of_outputs(detecting, rows)
+        self.detection = found
+        self.table.add(rows[found.rows], found.columns)
+        return rows if found.complete else rows[:0]
+
     def _search_unexplained(self) -> Inquiry[None]:
         """Rows that the entries seen so far do not explain: more places outside the pattern."""
+        rows = np.flatnonzero((self._disagreeing() | self.stray) & self.by_entry)
+        # Where many rows are at fault in many places, it is cheaper to see the whole pattern than to search by place.
+        many = rows.size >= max(MANY_ROWS, MANY_ROWS_SHARE * self.table.shape[0])
+        many &= self.base.size >= DETECTED_LEAST
+        if many and not self.ended and self.detection is None and rows.size * self.base.size <= PLACES_MOST:
+            rows = yield from self._detect(rows)
+            if rows.size and not self.ended:
+                self.stray[rows] = False
+                yield from self._look_by_groups(rows)
         for search in range(SEARCHES_MOST):
             rows = np.flatnonzero((self._disagreeing() | self.stray) & self.by_entry)
             if rows.size == 0 or self.ended:
@@ -769,6 +811,7 @@ class _Examination:
             visible=self._visible(),
             influence=influence,
             still=still,
+            detection=self.detection,
             cut_short=self.ended,
         )
 

@@ -8,6 +8,7 @@ from gradcheck.claims.entry_table import EntryTable
 from gradcheck.claims.fault_lists import SAME_VALUE, Faults, ratio_in_common
 from gradcheck.claims.mistakes.case import Case
 from gradcheck.claims.mistakes.naming import likely_mistakes
+from gradcheck.claims.pattern_detection import Detected
 from gradcheck.problem.subject import Subject
 from gradcheck.records.arrays import Array, IntArray
 from gradcheck.records.finding import Finding, FindingCode, Location, Severity
@@ -227,6 +228,17 @@ def _transposed(table: EntryTable, faults: Faults, name: Named) -> Diagnosis | N
             "columns are variables; return `claim.T`, or exchange the row and column indices."
         ),
         entries=_names(table, at, name),
+    )
+
+
+def detection_words(detected: Detected) -> str:
+    """What the detection of the pattern cost, and what it does not say."""
+    cost = count(detected.evaluations, "evaluation")
+    if not detected.complete:
+        return f"the pattern of the function was looked for, but it is too full, or the budget too short ({cost})"
+    return (
+        f"which outputs depend on which variables was seen from values ({cost}): {count(detected.rows.size, 'place')}; "
+        "an entry that is zero at this point may be nonzero elsewhere"
     )
 
 
