@@ -40,6 +40,8 @@ from gradcheck.wording import listed
 MANY_COLUMNS = 1_000
 #: Sparse claims of so few columns are checked like dense ones.
 FEW_COLUMNS = 4
+#: Points and values that have more numbers than this together are not remembered.
+LONG = 20_000
 #: Claims with so few entries are listed in full; of larger ones those that are not confirmed, and the confirmed ones
 #: that agree least.
 LISTED_IN_FULL, LISTED_MOST, LEAST_AGREEING = 2_000, 10_000, 20
@@ -97,7 +99,9 @@ def checked_jointly(
         seed=rules.seed,
         detect=detect,
     )
-    examined = conduct_one(addressed(inquiry, function=function), session.gate)
+    # No point is asked for twice here; to remember long ones would take more memory than all the rest.
+    long = centre.size + subject.layout.size > LONG
+    examined = conduct_one(addressed(inquiry, function=function, fresh=long), session.gate)
     faults = faults_of(table, examined.influence)
     m = centre.size
 

@@ -50,7 +50,7 @@ RANDOM = 2
 #: as wholes.
 GROUPS_MOST = 64
 #: Slots (rows times directions) of one round, which bounds the memory.
-SLOTS_OF_A_ROUND = 600_000
+SLOTS_OF_A_ROUND = 200_000
 #: A row that a direction disagrees with by more than so many of its tolerances and bounds is searched.
 SUSPECT = 3.0
 #: Tolerance of a direction, in roots of the sum of squares of those of its terms.
