@@ -106,14 +106,20 @@ def _missing(
     table: EntryTable, missing: IntArray, repeated: Sequence[Repetition], name: Named, declared: bool
 ) -> Diagnosis:
     largest = int(missing[np.abs(table.value[missing]).argmax()])
+    first = name(int(table.row[largest]), int(table.column[largest]))
+    found = number(float(table.value[largest]))
     which = "declared pattern" if declared else "pattern of the claim"
-    many = count(missing.size, "entry", "entries")
-    text = (
-        f"{many} outside the {which}, where the function does depend on the variable: "
-        f"{_where(table, missing, 'missing', repeated, name)}. The largest is "
-        f"{name(int(table.row[largest]), int(table.column[largest]))}, found {number(float(table.value[largest]))}. "
-        "Add " + ("it" if missing.size == 1 else "them") + " to the pattern, with the derivative."
-    )
+    if missing.size == 1:
+        text = (
+            f"{first} lies outside the {which}, but the function depends on this variable there: found {found}. Add the "
+            "entry, with its derivative."
+        )
+    else:
+        text = (
+            f"{missing.size:,} entries outside the {which}, where the function does depend on the variable: "
+            f"{_where(table, missing, 'missing', repeated, name)}. The largest is {first}, found {found}. Add them to the "
+            "pattern, with their derivatives."
+        )
     return Diagnosis(code=DiagnosisCode.ZERO_ENTRY, text=text, entries=_names(table, missing, name))
 
 
@@ -133,6 +139,11 @@ def _wrong(
             chain = table.find(one.row + one.row_step * steps, one.column + one.column_step * steps)
             diagnoses.append(_repeated(table, chain, one, name))
             wrong = wrong[~np.isin(wrong, chain)]
+    with np.errstate(invalid="ignore"):
+        empty = wrong[(np.abs(table.value[wrong]) <= 3 * table.bound[wrong]) & np.isfinite(table.claim[wrong])]
+    if empty.size:
+        diagnoses.append(_without_effect(table, empty, name))
+        wrong = wrong[~np.isin(wrong, empty)]
     if wrong.size > EXPLAINED_MOST:
         return [*diagnoses, _many(table, wrong, name)]
     if wrong.size == 0:
@@ -150,6 +161,17 @@ def _wrong(
             )
         )
     )
+
+
+def _without_effect(table: EntryTable, empty: IntArray, name: Named) -> Diagnosis:
+    """Values where the derivative is zero, which are missing nowhere else in their row or column."""
+    names = _names(table, empty, name)
+    claimed = f", claimed {number(float(table.claim[empty[0]]))}" if empty.size == 1 else ""
+    text = (
+        f"{listed(names)}{claimed}: the derivative is zero there. Look whether the function should depend on this variable "
+        "(a term lost in the model), or the value belongs to another row or column."
+    )
+    return Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names)
 
 
 def _repeated(table: EntryTable, chain: IntArray, repetition: Repetition, name: Named) -> Diagnosis:
