@@ -14,7 +14,8 @@ from gradcheck.claims.joint_looks import Accuracy
 from gradcheck.claims.pattern_detection import PLACES_MOST
 from gradcheck.claims.policy import DEFAULT_REL_TOL, REL_TOL, Rules
 from gradcheck.claims.rule import ALLOWANCE, digits_agreed
-from gradcheck.claims.sparse_examination import UNEXPLAINED, SparseExamined, examine_sparse
+from gradcheck.claims.slot_looks import UNEXPLAINED
+from gradcheck.claims.sparse_examination import SparseExamined, examine_sparse
 from gradcheck.counsel.claim_findings import mutation
 from gradcheck.counsel.sparsity_stories import (
     Named,

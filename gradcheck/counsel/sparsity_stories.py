@@ -111,14 +111,14 @@ def _missing(
     which = "declared pattern" if declared else "pattern of the claim"
     if missing.size == 1:
         text = (
-            f"{first} lies outside the {which}, but the function depends on this variable there: found {found}. Add the "
-            "entry, with its derivative."
+            f"{first} lies outside the {which}, but the function depends on this variable there: found {found}. Add "
+            "the entry, with its derivative."
         )
     else:
         text = (
             f"{missing.size:,} entries outside the {which}, where the function does depend on the variable: "
-            f"{_where(table, missing, 'missing', repeated, name)}. The largest is {first}, found {found}. Add them to the "
-            "pattern, with their derivatives."
+            f"{_where(table, missing, 'missing', repeated, name)}. The largest is {first}, found {found}. Add them "
+            "to the pattern, with their derivatives."
         )
     return Diagnosis(code=DiagnosisCode.ZERO_ENTRY, text=text, entries=_names(table, missing, name))
 
@@ -168,8 +168,8 @@ def _without_effect(table: EntryTable, empty: IntArray, name: Named) -> Diagnosi
     names = _names(table, empty, name)
     claimed = f", claimed {number(float(table.claim[empty[0]]))}" if empty.size == 1 else ""
     text = (
-        f"{listed(names)}{claimed}: the derivative is zero there. Look whether the function should depend on this variable "
-        "(a term lost in the model), or the value belongs to another row or column."
+        f"{listed(names)}{claimed}: the derivative is zero there. Look whether the function should depend on this "
+        "variable (a term lost in the model), or the value belongs to another row or column."
     )
     return Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names)
 
