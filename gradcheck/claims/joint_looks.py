@@ -233,7 +233,7 @@ def _nearly(desk: Desk, outputs: IntArray) -> IntArray:
     """Those of some outputs whose bound a better interval might bring below the tolerance."""
     with np.errstate(invalid="ignore"):
         tolerance = desk.tolerance(np.arange(1)).of(desk.claim, desk.value)
-        return outputs[(desk.bound <= HOPE * tolerance)[outputs, 0]]
+        return np.asarray(outputs[(desk.bound <= HOPE * tolerance)[outputs, 0]])
 
 
 def _left(desk: Desk) -> IntArray:
