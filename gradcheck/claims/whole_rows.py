@@ -15,6 +15,7 @@ from gradcheck.claims.joint_moves import PART_BITS, Moves, Way, room_of
 from gradcheck.claims.pattern_detection import Detected
 from gradcheck.claims.rule import ALLOWANCE, REFUTING_BOUNDS, ZERO_ALLOWANCE, ZERO_CLAIM
 from gradcheck.claims.sparsity import Colouring, coloured, dense_rows
+from gradcheck.claims.unused_entries import influence_along
 from gradcheck.evaluation.protocol import Inquiry, Request
 from gradcheck.problem.domain import Domain
 from gradcheck.records.arrays import Array, BoolArray, IntArray
@@ -80,7 +81,7 @@ class WholeRows:
         """Rows whose entries are looked at one by one: all but those too full for it, or none."""
         m, _ = self.table.shape
         none = np.zeros(m, bool)
-        if isinstance(self.directions, int):
+        if isinstance(self.directions, int) or len(self.table) == 0:
             return none
         pattern = self.table.pattern()
         if self.directions == "all":
@@ -147,6 +148,16 @@ class WholeRows:
         whole = np.flatnonzero(~self.by_entry)
         if whole.size and not self.ended:
             yield from self._settle_whole_rows(whole)
+        if len(self.table) == 0 and self.random and not self.ended:
+            yield from self._look_for_stairs()
+
+    def _look_for_stairs(self) -> Inquiry[None]:
+        """Where nothing at all is claimed: an output that is flat here, on one of several levels, confirms no zero."""
+        for seen in self.random:
+            rows = seen.row[None, :]
+            room = room_of(self.base, rows, self.domain, seen.way, bits=PART_BITS)
+            found = yield from influence_along(self.base, rows, room, self.centre, self.base)
+            seen.bound[found.stairs] = np.inf
 
     def _along(self, row: Array, way: Way, outputs: IntArray, *, wider: object = None) -> Inquiry[RandomDirection]:
         """Value ± bound of some outputs along one direction; of the others nothing."""
@@ -204,7 +215,10 @@ class WholeRows:
         rounding = self.floor[table.row] / typical
         allowance = np.where(size <= ZERO_CLAIM * rounding, ZERO_ALLOWANCE, ALLOWANCE)
         own = self.accuracy.abs_tol + self.accuracy.rel_tol * size + allowance * rounding
-        return DIRECTION_TOLERANCE * table.root_of_squares(row, own)
+        # A row without entries is claimed zero as a whole.
+        empty = np.bincount(table.row, minlength=self.centre.size) == 0
+        zero = np.where(empty, self.accuracy.abs_tol * np.abs(row).max() + ZERO_ALLOWANCE * self.floor, 0.0)
+        return DIRECTION_TOLERANCE * (table.root_of_squares(row, own) + zero)
 
     def _disagreement(self) -> list[tuple[RandomDirection, Array, Array]]:
         """Each random direction with what the best known values leave unexplained, and what may be: (m,) each."""

@@ -58,8 +58,9 @@ def _undecided(checks: SparsityChecks) -> str:
 
 def _confirmed(checks: SparsityChecks) -> str:
     whole = wording.count(checks.whole_rows_confirmed, "whole row") if checks.whole_rows else ""
-    entries = f"all {checks.confirmed:,} entries" if checks.confirmed else ""
-    return " and ".join(part for part in (entries, whole) if part) + " agree"
+    entries = f"all {checks.confirmed:,} entries" if checks.confirmed > 1 else "the entry" if checks.confirmed else ""
+    one = checks.confirmed + checks.whole_rows_confirmed == 1
+    return " and ".join(part for part in (entries, whole) if part) + (" agrees" if one else " agree")
 
 
 def _looked_at(checks: SparsityChecks) -> int:

@@ -197,6 +197,28 @@ def test_an_empty_claim_of_a_function_that_depends_is_refuted():
     assert lists(report) == NOTHING | {"missing": [[0, 0]]}
 
 
+def test_an_empty_claim_of_a_function_that_stands_still_is_confirmed_and_of_a_staircase_not():
+    empty = sparse.csr_array((N, N))
+
+    assert looked_at(empty, lambda x: np.full(N, 3.0)).verdict == "confirmed"
+    assert looked_at(empty, lambda x: x**2, np.zeros(N)).verdict == "confirmed"
+    assert looked_at(empty, lambda x: np.floor(10 * x)).verdict == "undecided"
+
+
+def test_explicit_zeros_on_a_staircase_are_undecided():
+    zeros = sparse.diags_array(np.ones(N)).tocsr()
+    zeros.data[:] = 0
+
+    assert looked_at(zeros, lambda x: np.floor(10 * x)).verdict == "undecided"
+
+
+def test_values_in_single_precision_are_judged_by_their_digits():
+    report = looked_at(defects_jacobian, lambda x: defects(x).astype(np.float32))
+
+    assert report.sparsity.refuted == 0
+    assert report.sparsity.confirmed >= 0.9 * RIGHT.nnz
+
+
 def test_rows_and_columns_without_entries_are_fine():
     def partly(x):
         y = np.zeros(N)
