@@ -97,6 +97,8 @@ class Policy:
             raise DerivativeMismatch(report)
         if report.verdict == Verdict.UNDECIDED and self.on_undecided != "pass":
             everything = all(verdict == Verdict.UNDECIDED for verdict in report.entries.verdict)
+            if report.sparsity is not None:  # confirmed entries and rows are counted there, and not all listed
+                everything &= report.sparsity.confirmed + report.sparsity.whole_rows_confirmed == 0
             if self.on_undecided == "raise" or everything:
                 raise DerivativeMismatch(report)
             warnings.warn(str(report), UndecidedWarning, stacklevel=stacklevel + 1)
