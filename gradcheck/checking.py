@@ -52,7 +52,8 @@ def check(
     gradient, jacobian : callable, array or str
         The claim; exactly one. A callable with the model's own signature, its value at `at`, or the name of an AD
         source (``"jax"``, ``"autograd"``). Shapes: gradient ``(n,)`` for a model that returns a number, Jacobian
-        ``(m, n)`` for one that returns ``(m,)``.
+        ``(m, n)`` for one that returns ``(m,)``. A Jacobian may be a scipy.sparse matrix or array of any format; it is
+        never made dense, and the evaluations that it takes do not grow with n.
     wrt : str or list of str, optional
         Which of several arguments to differentiate with respect to.
     output : callable, optional
