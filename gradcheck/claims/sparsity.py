@@ -83,7 +83,7 @@ def coloured(
     --------
     >>> import numpy
     >>> from scipy import sparse
-    >>> tridiagonal = sparse.diags_array([1, 1, 1], offsets=[-1, 0, 1], shape=(6, 6)).tocsr()
+    >>> tridiagonal = sparse.diags_array([1.0, 1.0, 1.0], offsets=[-1, 0, 1], shape=(6, 6)).tocsr()
     >>> coloured(tridiagonal, numpy.ones(6, bool)).count
     3
     """
