@@ -19,6 +19,7 @@ BENCHMARKS = (
     "rules",
     "cost",
     "nested",
+    "sparse",
 )
 
 

@@ -38,6 +38,7 @@ def check(
     rel_tol: float | None = None,
     abs_tol: float = 0.0,
     directions: int | str | None = None,
+    pattern: Any = None,
     batched: bool = False,
     budget: int | None = None,
     time_limit: float | str | None = None,
@@ -58,6 +59,8 @@ def check(
         ``"autograd"``). A source is also tried with random cotangents and tangents of other sizes, ``"jax"`` under jit,
         vmap, scan and checkpoint, in second order and in single precision as well (at the first three points). Shapes:
         gradient ``(n,)`` for a model that returns a number, Jacobian ``(m, n)`` for one that returns ``(m,)``.
+        A Jacobian may be a scipy.sparse matrix or array of any format; it is never made dense, and the evaluations that
+        it takes hardly grow with n.
     hessian : callable, array or str, optional
         Second derivatives: ``(n, n)`` for a model that returns a number, ``(m, n, n)`` for one that returns ``(m,)``; a
         scipy.sparse matrix, or for a nested input a nesting of its structure twice over, as well. Held against
@@ -91,6 +94,11 @@ def check(
     directions : int or "all", optional
         How many random vectors or directions to look along instead of all unit vectors or entries, or that all of them
         are looked at; by default that depends on their number.
+    pattern : scipy.sparse matrix, boolean array of shape (m, n), or "detect", optional
+        Which entries of a Jacobian may differ from zero; of a sparse matrix all stored entries. Entries outside it on
+        which the model depends refute the claim. Without it, the entries that a sparse claim stores are its pattern.
+        ``"detect"`` sees from values which outputs change when groups of variables move, for Jacobians of up to 4
+        million places.
     batched : bool
         Whether the model takes many points at once: x as ``(k, n)`` (``(k,)`` where `at` is one number), and returns
         ``(k,)`` or ``(k, m)``; `output` then picks from the whole batch. A claim still takes one point ``(n,)``. Every
@@ -153,7 +161,7 @@ def check(
     if at is None:
         options = _described_options(function)
         described = {"wrt": wrt, "output": output, "bounds": bounds, "names": names, "typical": typical}
-        described |= {"witnesses": witnesses, "rel_tol": rel_tol, "directions": directions} | claims
+        described |= {"pattern": pattern, "witnesses": witnesses, "rel_tol": rel_tol, "directions": directions} | claims
         if any(claim is not None for claim in claims.values()):
             options = {name: value for name, value in options.items() if name not in CLAIM_KINDS}
         options |= {name: value for name, value in described.items() if value is not None}
@@ -165,6 +173,10 @@ def check(
             "check needs at least one claim, gradient=... or jacobian=... (or hessian, jvp, vjp, hvp, "
             "value_and_gradient); none was given, so there is nothing to check"
         )
+    if isinstance(pattern, str) and pattern != "detect":
+        raise UsageError(f"pattern is {pattern!r}; give a scipy.sparse matrix, a boolean array (m, n), or 'detect'")
+    if pattern is not None and jacobian is None:
+        raise UsageError("pattern=... says which entries of a Jacobian may differ from zero; it needs jacobian=...")
     rules = Rules.of(rel_tol, abs_tol, witnesses, directions=directions, seed=seed)
     subjects = subjects_of_function(
         function,
@@ -176,6 +188,7 @@ def check(
         names=names,
         typical=typical,
         batched=batched,
+        pattern=pattern,
     )
     at_points = []
     for k, subject in enumerate(subjects):

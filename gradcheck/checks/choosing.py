@@ -10,6 +10,7 @@ from gradcheck.checks.measure import measure_of
 from gradcheck.checks.products import checked_product
 from gradcheck.checks.products_claimed import Claimed
 from gradcheck.checks.second_order import checked_second_order
+from gradcheck.checks.sparse import checked_jointly, goes_by_joint_moves
 from gradcheck.checks.with_value import with_value
 from gradcheck.claims.policy import Rules
 from gradcheck.evaluation.pipeline import Session
@@ -67,6 +68,10 @@ def _of_function(session: Session, function: str, centre: Array, rules: Rules, b
 
 def checked_claim(session: Session, function: str, kind: str, centre: Array, rules: Rules, before: int) -> CheckReport:
     """The report on one claimed first derivative of a function; `before` evaluations were spent on others."""
+    if goes_by_joint_moves(session, function, kind, centre, rules):
+        jointly = checked_jointly(session, function, kind, centre, rules, before)
+        if jointly is not None:
+            return jointly
     report = checked_entries(session, function, kind, centre, rules, before)
     if kind == "value_and_gradient":
         return with_value(session, function, centre, rules, report)

@@ -1,11 +1,15 @@
 """What the user claims, asked for through the gate."""
 
+from typing import Any
+
 import numpy as np
+from numpy.typing import NDArray
 
 from gradcheck.counsel.claim_findings import failing_claim
 from gradcheck.errors import UsageError
 from gradcheck.evaluation.pipeline import Session
-from gradcheck.evaluation.protocol import Request, Status
+from gradcheck.evaluation.protocol import Reply, Request, Status
+from gradcheck.problem.sparse_claim import dense_of, is_stored
 from gradcheck.records.arrays import Array
 from gradcheck.records.finding import Finding
 from gradcheck.witnesses.difference_reasons import SPENT
@@ -26,21 +30,35 @@ def claimed_matrix(session: Session, function: str, kind: str, centre: Array) ->
     claim = subject.targets[function].claims[kind]
     if isinstance(claim, str):
         return _automatic_claim(session, function, kind, claim, centre), None
-    reply = session.gate(
-        [
-            Request(
-                base=subject.start,
-                directions=np.zeros(1, dtype=np.intp),
-                offsets=np.zeros((1, 1)),
-                source=f"claim:{kind}",
-                function=function,
-            )
-        ]
-    )[0]
+    reply = _asked_for(session, function, kind)
     if int(reply.status[0, 0]) == Status.CRASH:
         words = session.ledger.last_words[function, f"claim:{kind}"]
         return np.full((centre.size, subject.layout.size), np.nan), failing_claim(subject, function, kind, words)
+    if is_stored(reply.values):
+        return dense_of(reply.values[0, 0], centre.size, subject.layout.size), None
     return reply.values[0], None
+
+
+def sparse_claim(session: Session, function: str, kind: str) -> NDArray[Any] | None:
+    """The stored entries of a sparse claim; None if it is dense, an AD source, or raised.
+
+    The gate remembers what the user's derivative returned: to ask again costs nothing.
+    """
+    if isinstance(session.subject.targets[function].claims[kind], str):
+        return None
+    values = _asked_for(session, function, kind).values
+    return values[0, 0] if is_stored(values) else None
+
+
+def _asked_for(session: Session, function: str, kind: str) -> Reply:
+    request = Request(
+        base=session.subject.start,
+        directions=np.zeros(1, dtype=np.intp),
+        offsets=np.zeros((1, 1)),
+        source=f"claim:{kind}",
+        function=function,
+    )
+    return session.gate([request])[0]
 
 
 def _automatic_claim(session: Session, function: str, kind: str, source: str, centre: Array) -> Array:

@@ -100,6 +100,8 @@ class Policy:
         if report.verdict == Verdict.UNDECIDED and self.on_undecided != "pass":
             looked_at = [verdict for part in report.parts or (report,) for verdict in part.entries.verdict]
             everything = all(verdict == Verdict.UNDECIDED for verdict in looked_at)
+            if report.sparsity is not None:  # confirmed entries and rows are counted there, and not all listed
+                everything &= report.sparsity.confirmed + report.sparsity.whole_rows_confirmed == 0
             if self.on_undecided == "raise" or everything:
                 raise DerivativeMismatch(report)
             warnings.warn(str(report), UndecidedWarning, stacklevel=stacklevel + 1)

@@ -67,7 +67,8 @@ class Outcome:
     ----------
     values : dict of function -> ndarray
         Flat values ``(k, m)``, or ``(1, d, m)`` for a jvp, ``(1, d, n)`` for a vjp; NaN at points that failed. A
-        function that failed everywhere may be missing.
+        function that failed everywhere may be missing. A claim: ``(1, m, n)``; a sparse one its stored entries
+        ``(1, k)``, see `problem.sparse_claim`.
     status : dict of function -> ndarray of int8, shape (k,)
         A `Status` each; a function that is missing was refused everywhere.
     spent : int
@@ -97,6 +98,8 @@ def assembled(pieces: Iterable[Piece], size: int, spent: int) -> Outcome:
             status[name][mine] = states[theirs]
         for name, found in outcome.values.items():
             if name not in values:
-                values[name] = np.full((size, *found.shape[1:]), np.nan, dtype=found.dtype)
+                # The stored entries of a sparse claim are records, and know no NaN.
+                unknown = np.nan if found.dtype.names is None else 0
+                values[name] = np.full((size, *found.shape[1:]), unknown, dtype=found.dtype)
             values[name][mine] = found[theirs]
     return Outcome(values=values, status=status, spent=spent)

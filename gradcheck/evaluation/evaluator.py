@@ -22,6 +22,7 @@ from gradcheck.evaluation.protocol import Status
 from gradcheck.problem.derivative_shape import claim_matrix
 from gradcheck.problem.output_layout import output_parts, precision_of
 from gradcheck.problem.product_shape import cotangent, hessian_products, product_vector, tangent, value_and_matrix
+from gradcheck.problem.sparse_claim import dense_of, is_sparse, is_stored, stored_entries
 from gradcheck.problem.subject import Subject, Target
 from gradcheck.records.arrays import Array
 
@@ -257,10 +258,11 @@ class Evaluator:
             return Outcome(status={name: np.array([Status.CRASH], dtype=np.int8)}, spent=1)
         finally:
             self.ledger.seconds[call.kind] += time.perf_counter() - began
-        state = Status.OK if np.isfinite(value).all() else Status.NONFINITE
+        numbers = value["value"] if is_stored(value) else value
+        state = Status.OK if np.isfinite(numbers).all() else Status.NONFINITE
         return Outcome(values={name: value[None]}, status={name: np.array([int(state)], dtype=np.int8)}, spent=1)
 
-    def _claim(self, call: Call, target: Target) -> Array:
+    def _claim(self, call: Call, target: Target) -> NDArray[Any]:
         kind = call.source.partition(":")[2]
         if call.source in MATRIX_CLAIMS:
             return self._claimed_matrix(kind, target, call.moves.base)
@@ -281,10 +283,14 @@ class Evaluator:
                 self.ledger.failed_vectors.setdefault((target.name, kind), {})[i] = last_words(error)
         return products
 
-    def _claimed_matrix(self, kind: str, target: Target, point: Array) -> Array:
-        """A claimed gradient or Jacobian at a point, (m, n)."""
+    def _claimed_matrix(self, kind: str, target: Target, point: Array) -> NDArray[Any]:
+        """A claimed gradient or Jacobian at a point, (m, n); of a sparse Jacobian its stored entries."""
         layout, shape = self.subject.layout, self.shapes[target.name]
         raw = self._asked(kind, target, point)
+        if kind == "jacobian" and is_sparse(raw):
+            entries, notices = stored_entries(kind, raw, layout.size, shape, layout.shape)
+            self.ledger.notices.extend(notice for notice in notices if notice not in self.ledger.notices)
+            return entries
         if kind != "value_and_gradient":
             return claim_matrix(kind, raw, layout, shape, self.subject.outputs.get(target.name))
         value, matrix = value_and_matrix(raw, layout, shape)
@@ -325,11 +331,11 @@ class Evaluator:
         return Outcome(values={target.name: values}, status={target.name: status}, spent=spent)
 
     def _slope(self, kind: str, target: Target, point: Array) -> Array:
-        claim = target.claims[kind]
-        if not isinstance(claim, str):
-            return self._claimed_matrix(kind, target, point)
-        outputs = np.eye(math.prod(self.shapes[target.name]))
-        return np.asarray(self._swept(claim, "vjp", target, point, outputs), dtype=float)
+        claim, outputs = target.claims[kind], math.prod(self.shapes[target.name])
+        if isinstance(claim, str):
+            return np.asarray(self._swept(claim, "vjp", target, point, np.eye(outputs)), dtype=float)
+        matrix = self._claimed_matrix(kind, target, point)
+        return dense_of(matrix, outputs, self.subject.layout.size) if is_stored(matrix) else matrix
 
     def _automatic(self, call: Call, target: Target) -> NDArray[Any]:
         assert call.rows is not None

@@ -16,6 +16,7 @@ from gradcheck.evaluation.evaluator import MATRIX_CLAIMS, SLOPE, Evaluator
 from gradcheck.evaluation.ledger import Ledger
 from gradcheck.evaluation.moves import BATCH_BYTES, Moves
 from gradcheck.evaluation.protocol import Gate, Reply, Request, Status
+from gradcheck.problem.sparse_claim import is_stored
 from gradcheck.problem.subject import Subject
 from gradcheck.records.arrays import Array
 
@@ -230,8 +231,11 @@ def _derivative_reply(request: Request, outcome: Outcome, width: int, size: int)
     status = int(outcome.status[name][0]) if name in outcome.status else int(Status.REFUSED)
     if name in outcome.values:
         values = outcome.values[name][0].copy()
-        # A claimed matrix is (m, n), not one row per direction.
-        values = values[None] if request.source in MATRIX_CLAIMS else values[:, None, :]
+        # A claimed matrix is one matrix (m, n), or the stored entries of one, not one row per direction.
+        if is_stored(values):
+            values = values[None, None]
+        else:
+            values = values[None] if request.source in MATRIX_CLAIMS else values[:, None, :]
     else:
         entries = {"jvp": width, "vjp": size}.get(request.arithmetic, width * size)
         values = np.full((len(request.directions), 1, entries), np.nan)

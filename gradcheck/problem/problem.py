@@ -108,6 +108,8 @@ class Function:
         Returns the pair (value, gradient).
     lower, upper, equal : float or array, optional
         Limits, where the function is a constraint.
+    pattern : sparse matrix or boolean array (m, n), optional
+        Which entries of the Jacobian may differ from zero.
     """
 
     function: Callable[..., Any]
@@ -121,6 +123,7 @@ class Function:
     lower: Any = field(default=None, kw_only=True)
     upper: Any = field(default=None, kw_only=True)
     equal: Any = field(default=None, kw_only=True)
+    pattern: Any = field(default=None, kw_only=True)
 
     def __post_init__(self) -> None:
         if not callable(self.function):
@@ -139,7 +142,7 @@ class Output:
     ----------
     key : str or int
         What picks the output from what the run returns: ``run(x)[key]``.
-    gradient, jacobian, hessian, jvp, vjp, hvp, value_and_gradient, lower, upper, equal
+    gradient, jacobian, hessian, jvp, vjp, hvp, value_and_gradient, lower, upper, equal, pattern
         As in `Function`. A claim takes x, and not what the run returns.
     """
 
@@ -154,6 +157,7 @@ class Output:
     lower: Any = field(default=None, kw_only=True)
     upper: Any = field(default=None, kw_only=True)
     equal: Any = field(default=None, kw_only=True)
+    pattern: Any = field(default=None, kw_only=True)
 
     def __post_init__(self) -> None:
         _refuse_crossed_limits(self.lower, self.upper, self.equal)

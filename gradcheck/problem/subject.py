@@ -33,6 +33,8 @@ class Target:
     claims : mapping of kind to claim
     limits : mapping
         ``lower``, ``upper``, ``equal`` where the function is a constraint.
+    pattern : sparse matrix, boolean array (m, n) or None
+        Which entries of the Jacobian may differ from zero, where that was declared.
     """
 
     name: str
@@ -40,6 +42,7 @@ class Target:
     pick: Callable[[Any], Any] | None = None
     claims: Mapping[str, Any] = field(default_factory=dict)
     limits: Mapping[str, Any] = field(default_factory=dict)
+    pattern: Any = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -83,6 +86,7 @@ def subjects_of_function(
     typical: Any = None,
     integer: Any = None,
     batched: Any = False,
+    pattern: Any = None,
 ) -> list[Subject]:
     """One subject per point of `at`.
 
@@ -102,7 +106,7 @@ def subjects_of_function(
     each = at.each if isinstance(at, Points) else (at,)
     name = getattr(function, "__name__", "") or type(function).__name__
     name = "model" if name == "<lambda>" else name
-    target = Target(name=name, run=name, pick=output, claims=_given_claims(claims))
+    target = Target(name=name, run=name, pick=output, claims=_given_claims(claims), pattern=pattern)
     subjects = []
     signature = _signature(function)
     for point in each:
@@ -167,6 +171,7 @@ def _target(name: str, run: str, function: Function | Output) -> Target:
         limits={
             side: getattr(function, side) for side in ("lower", "upper", "equal") if getattr(function, side) is not None
         },
+        pattern=function.pattern,
     )
 
 

@@ -15,6 +15,7 @@ from gradcheck.records.finding import Finding
 from gradcheck.records.noise import NoiseKind
 from gradcheck.records.plain import plain
 from gradcheck.records.rendering import RenderedWhenRead
+from gradcheck.records.sparsity import SparsityChecks
 from gradcheck.records.verdict import DiagnosisCode, Verdict
 
 FORMAT_VERSION = 1
@@ -113,6 +114,9 @@ class CheckReport(RenderedWhenRead):
         Where several claims were checked in one call: the report on each, in the order of the arguments of `check`.
         The report that holds them is that on the decisive one (the first refuted, else the first undecided, else the
         first), with the overall verdict and the evaluations of all. Empty for a single claim.
+    sparsity : SparsityChecks or None
+        For a Jacobian that is sparse or has many columns: counts, and the lists of faults. `entries` then holds those
+        that are not confirmed, and of the confirmed ones only a few where there are many.
     renderer : callable, optional
         Makes the text when it is first read; `check` hands it over, because records import nothing that renders.
     """
@@ -131,6 +135,7 @@ class CheckReport(RenderedWhenRead):
     parts: tuple["CheckReport", ...] = ()
     renderer: Callable[["CheckReport"], str] | None = None
     text: str = ""
+    sparsity: SparsityChecks | None = None
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "point", frozen(self.point))

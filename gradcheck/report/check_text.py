@@ -10,6 +10,7 @@ from gradcheck.records.report import IDENTITY, CheckReport, Diagnosis, Entries
 from gradcheck.records.verdict import Verdict
 from gradcheck.report.finding_text import finding_lines
 from gradcheck.report.paragraphs import WIDTH, fits, paragraph, table
+from gradcheck.report.sparse_text import sparse_lines, sparse_story
 
 #: Rows of the table of worst entries.
 WORST = 10
@@ -84,9 +85,12 @@ def check_details(report: CheckReport, *, indent: int = 0, rows: int = WORST, fi
     if len(mistakes) > _MISTAKES:
         more = wording.count(len(mistakes) - _MISTAKES, "other likely mistake")
         lines += paragraph(f"and {more}, in the report's diagnoses", indent)
-    if len(report.entries) and not confirmed:
-        lines += ["", *_worst_lines(report.entries, indent, rows)]
-    lines += _direction_lines(report, indent)
+    if report.sparsity is not None:
+        lines += sparse_lines(report, indent)
+    else:
+        if len(report.entries) and not confirmed:
+            lines += ["", *_worst_lines(report.entries, indent, rows)]
+        lines += _direction_lines(report, indent)
     lines += _reason_lines(report.entries, indent)
     brief = _brief_reasons(report.entries, indent)
     lines += ["", *brief] if brief and not confirmed else brief
@@ -149,6 +153,8 @@ def _entry(entries: Entries, position: int) -> _Entry:
 
 def _story(report: CheckReport, name_width: int, bounded: bool) -> str:
     entries = report.entries
+    if report.sparsity is not None:
+        return sparse_story(report, name_width, bounded=bounded)
     if not len(entries):
         return _direction_story(report)
     if report.verdict == Verdict.CONFIRMED:
