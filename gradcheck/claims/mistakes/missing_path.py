@@ -1,0 +1,145 @@
+"""Entries that lack a contribution: what is missing is itself simple, or the claim is the derivative of another function."""
+
+from collections.abc import Iterator
+
+import numpy as np
+
+from gradcheck.claims.mistakes.case import MOST_BITS, Case
+from gradcheck.claims.mistakes.explanation import FITTED, Explanation
+from gradcheck.claims.mistakes.where import in_words
+from gradcheck.records.arrays import Array, BoolArray
+from gradcheck.records.verdict import DiagnosisCode
+from gradcheck.wording import number
+
+COST = 10.0
+#: Whole numbers up to this size are no accident.
+WHOLE_MOST = 1000
+#: Different constants that are tried.
+CONSTANTS_MOST = 20
+
+
+def missing_path(case: Case) -> Iterator[Explanation]:
+    """Stories about the difference between derivative and claim."""
+    yield from _whole_numbers(case)
+    yield from _in_common(case)
+    yield from _of_value(case)
+    yield from _one_intermediate(case)
+    yield from _of_another_function(case)
+
+
+def _missing(case: Case) -> Array:
+    with np.errstate(invalid="ignore"):
+        return np.asarray(case.value - case.claim)
+
+
+def _able(case: Case) -> BoolArray:
+    """Refuted entries that were filled in."""
+    able: BoolArray = case.refuted & np.isfinite(case.claim) & (case.claim != 0)
+    return able
+
+
+def _whole_numbers(case: Case) -> Iterator[Explanation]:
+    """One entry lacks exactly 12, say: a term that is the variable itself times a number of observations."""
+    missing = np.where(_able(case), _missing(case), np.nan)
+    nearest = np.round(missing)
+    for amount in np.unique(nearest[np.isfinite(nearest)])[:CONSTANTS_MOST]:
+        if 1 <= abs(amount) <= WHOLE_MOST:
+            cost = COST + float(np.log2(2 * abs(amount)))
+            yield from _story(case, np.full(case.claim.shape, amount), cost, f"lacks {number(amount)} exactly")
+
+
+def _in_common(case: Case) -> Iterator[Explanation]:
+    """Several entries lack the same, or the same times their variable, or over it: a penalty or a barrier left out."""
+    missing = np.where(_able(case), _missing(case), np.nan)
+    with np.errstate(all="ignore"):
+        shapes = (
+            (np.ones_like(missing), "lacks the same {} in each"),
+            (np.broadcast_to(case.x, missing.shape), "lacks {} times the variable in each, as of a square left out"),
+            (np.broadcast_to(1 / case.x, missing.shape), "lacks {} over the variable in each, as of a logarithm left out"),
+        )
+        for shape, words in shapes:
+            for amount in _repeated(missing / shape):
+                yield from _story(case, amount * shape, FITTED, words.format(number(amount, 6)))
+
+
+def _repeated(numbers: Array) -> list[float]:
+    """Numbers that occur at least twice, to seven digits."""
+    sorted_ = np.sort(numbers[np.isfinite(numbers)])
+    near = np.flatnonzero(np.abs(np.diff(sorted_)) <= 1e-7 * np.abs(sorted_[1:]))
+    found: list[float] = []
+    for place in near:
+        amount = float(sorted_[place])
+        if amount != 0 and (not found or abs(amount - found[-1]) > 1e-6 * abs(amount)):
+            found.append(amount)
+    return found[:CONSTANTS_MOST]
+
+
+def _of_value(case: Case) -> Iterator[Explanation]:
+    """What is missing is the value over the variable: one half of a product rule."""
+    if case.values.size != case.claim.shape[0]:
+        return
+    with np.errstate(all="ignore"):
+        amount = case.values[:, None] / case.x[None, :]
+    yield from _story(case, amount, COST, "lacks the value over the variable, as one half of a product rule")
+
+
+def _story(case: Case, missing: Array, cost: float, words: str) -> Iterator[Explanation]:
+    with np.errstate(all="ignore"):
+        predicted = case.value - missing
+    where = _able(case) & np.isfinite(predicted) & case.met(predicted, case.doubt + case.rel_tol * np.abs(case.value))
+    if where.any():
+        yield Explanation(
+            code=DiagnosisCode.MISSING_PATH,
+            where=where,
+            bits=case.bits(predicted, case.doubt + case.rel_tol * np.abs(case.value)),
+            cost=cost,
+            tell=lambda left: f"{in_words(case, left)}: the claim {words}; look for a term that is not differentiated.",
+        )
+
+
+def _one_intermediate(case: Case) -> Iterator[Explanation]:
+    """What a Jacobian lacks is a column times a row: a path through one quantity in between."""
+    missing = np.where(case.refuted, _missing(case), 0.0)
+    if min(case.claim.shape) < 2 or not np.isfinite(missing).all():
+        return
+    with np.errstate(all="ignore"):
+        weight = np.where(case.refuted, np.abs(missing) / (case.doubt + case.rel_tol * np.abs(case.value)), 0.0)
+        i, j = np.unravel_index(int(np.argmax(np.nan_to_num(weight))), weight.shape)
+        column, row = missing[:, j], missing[i] / missing[i, j]
+        predicted = case.value - np.outer(column, row)
+        margin = case.doubt + case.rel_tol * np.abs(case.value)
+        doubt = margin + np.outer(margin[:, j], np.abs(row)) + np.outer(np.abs(column / missing[i, j]), margin[i])
+    where = case.refuted & case.met(predicted, doubt)
+    bits = case.bits(predicted, doubt)
+    # The row and the column that were fitted are no evidence.
+    bits[i], bits[:, j] = 0.0, 0.0
+    rows, columns = where.any(axis=1).sum(), where.any(axis=0).sum()
+    if not (where == case.refuted).all() or rows < 2 or columns < 2:
+        return
+    yield Explanation(
+        code=DiagnosisCode.MISSING_PATH,
+        where=where,
+        bits=bits,
+        cost=COST,
+        tell=lambda left: (
+            f"{in_words(case, left)}: what the claim lacks is one column times one row, in all {left.sum()} entries: the "
+            "path through one intermediate quantity, which these outputs depend on, is left out (or counted twice)."
+        ),
+    )
+
+
+def _of_another_function(case: Case) -> Iterator[Explanation]:
+    """The refuted part of the claim is known to be a derivative, though not of the model."""
+    if case.derivative_of_another.size != case.claim.shape[0] or not case.derivative_of_another.any():
+        return
+    where = case.refuted & case.derivative_of_another[:, None]
+    yield Explanation(
+        code=DiagnosisCode.MISSING_PATH,
+        where=where,
+        bits=np.full(case.claim.shape, MOST_BITS),
+        cost=COST,
+        tell=lambda left: (
+            f"{in_words(case, left)}: in these entries the claim is the exact derivative of some other function (its own "
+            "derivatives are symmetric); a term of the model is left out or is one too many, or a constant differs."
+        ),
+    )
