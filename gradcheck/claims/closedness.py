@@ -1,7 +1,7 @@
 """Is a part of a claim the derivative of any function at all?
 
-The derivatives of a gradient are symmetric (Schwarz 1873). Where a claim of several entries keeps to that although it is
-refuted, its formulas belong together: they differentiate another function than the model, one that lacks a term, say.
+The derivatives of a gradient are symmetric (Schwarz 1873). Where several refuted entries of a claim keep to that, their
+formulas belong together: they differentiate another function than the model, one that lacks a term, say.
 Entries with slips of their own are not symmetric. Only the claim is called, at eight points; the model never.
 """
 
@@ -46,15 +46,16 @@ def derivative_of_something(
     one, other = (_weights(columns[part::2], scale) for part in (0, 1))
     sides, doubts = [], []
     for along, seen in ((one, other), (other, one)):
-        slopes = []
+        slopes, largest = [], 0.0
         for step in (STEP, STEP / 2):
             ahead = yield from _claimed(base + step * along, lower, upper, kind, row)
             behind = yield from _claimed(base - step * along, lower, upper, kind, row)
             if ahead is None or behind is None:
                 return None
+            largest = float(np.abs(ahead) @ np.abs(seen))
             slopes.append(float((ahead - behind) @ seen) / (2 * step))
         sides.append((4 * slopes[1] - slopes[0]) / 3)
-        doubts.append(abs(slopes[1] - slopes[0]) * 4 * STEP**2 + 1e-15 * float(np.abs(ahead) @ np.abs(seen)) / STEP)
+        doubts.append(abs(slopes[1] - slopes[0]) * 4 * STEP**2 + 1e-15 * largest / STEP)
     size, doubt = max(map(abs, sides)), max(doubts)
     if not np.isfinite(size) or size <= SIGNAL * doubt:
         return None

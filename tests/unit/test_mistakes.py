@@ -14,23 +14,25 @@ RIGHT = np.array([[1.3, -0.7, 2.9, 11.0]])
 SQUARE = np.array([[1.0, 2.0, 3.0], [4.0, 5.0, 6.0], [7.0, 8.0, 10.0]])
 
 
-def told(claim, value, *, bound=1e-12, tolerance=1e-8):
-    """Diagnoses of a claim whose entries are refuted where they part from the value."""
+def case_of(claim, value, *, bound=1e-12, tolerance=1e-8, **more):
+    """A claim whose entries are refuted where they part from the value, and confirmed elsewhere."""
     claim, value = np.atleast_2d(np.asarray(claim, dtype=float)), np.atleast_2d(np.asarray(value, dtype=float))
-    bounds, tolerances = np.full(value.shape, bound), tolerance * np.abs(value)
+    bounds = np.full(value.shape, bound)
     with np.errstate(invalid="ignore"):
-        refuted = ~(np.abs(claim - value) <= tolerances + 3 * bounds)
-    return likely_mistakes(
-        Case(
-            kind="gradient" if value.shape[0] == 1 else "jacobian",
-            claim=claim,
-            value=value,
-            bound=bounds,
-            tolerance=tolerances,
-            refuted=refuted,
-            name=lambda i, j: f"x[{j}]" if value.shape[0] == 1 else f"f[{i}] by x[{j}]",
-        )
-    )
+        refuted = ~(np.abs(claim - value) <= tolerance * np.fmax(np.abs(claim), np.abs(value)) + 3 * bounds)
+    details = {
+        "kind": "gradient" if value.shape[0] == 1 else "jacobian",
+        "rel_tol": tolerance,
+        "floor": np.zeros(value.shape),
+        "name": lambda i, j: f"x[{j}]" if value.shape[0] == 1 else f"f[{i}] by x[{j}]",
+        "x": np.full(value.shape[1], np.nan),
+    }
+    return Case(claim=claim, value=value, bound=bounds, refuted=refuted, confirmed=~refuted, **(details | more))
+
+
+def told(claim, value, **more):
+    """Diagnoses of such a claim."""
+    return likely_mistakes(case_of(claim, value, **more))
 
 
 def only(diagnoses):

@@ -2,10 +2,8 @@
 
 from collections.abc import Callable
 from dataclasses import dataclass, field
-from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 
@@ -55,8 +53,6 @@ class Case:
         Shape of what the model returns.
     values : ndarray, shape (m,)
         What the model returns at the point; NaN where unknown.
-    derivative_of_another : ndarray of bool, shape (m,)
-        Rows of which it is known that the claim is a derivative, of another function than the model.
     """
 
     kind: str
@@ -73,7 +69,6 @@ class Case:
     blocks: tuple[Block, ...] = ()
     outputs: tuple[int, ...] = ()
     values: Array = field(default_factory=lambda: np.empty(0))
-    derivative_of_another: NDArray[np.bool_] = field(default_factory=lambda: np.empty(0, bool))
 
     @property
     def doubt(self) -> Array:
@@ -114,8 +109,3 @@ class Case:
         """Claim over witness; NaN or infinite where there is none."""
         with np.errstate(all="ignore"):
             return np.asarray(self.claim / self.value)
-
-
-def sized(array: Any, shape: tuple[int, ...], fill: float = np.nan) -> Array:
-    """`array`, or one of that shape filled with `fill` where nothing was given."""
-    return np.asarray(array, dtype=float) if np.size(array) else np.full(shape, fill)

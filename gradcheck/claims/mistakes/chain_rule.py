@@ -2,6 +2,7 @@
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 
@@ -77,7 +78,7 @@ def missing_chain_rule(case: Case) -> Iterator[Explanation]:
                 where=where,
                 bits=case.bits(predicted, doubt),
                 cost=COST,
-                tell=lambda left, transform=transform: _sentence(case, left, transform),
+                tell=partial(_sentence, case, transform=transform),
                 brief=transform.factor.format("x"),
             )
 

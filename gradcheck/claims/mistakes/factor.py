@@ -2,6 +2,7 @@
 
 import math
 from collections.abc import Iterator
+from functools import partial
 
 import numpy as np
 
@@ -39,9 +40,14 @@ KNOWN = {
 }
 KNOWN_COST = 7.0
 #: Powers of ten: prefixes, per cent (2), centimetres (2), bar (5) and decibar (4) for pascal, and the like.
-TENS = {10.0**k: f"1e{k}" for k in range(-12, 13) if abs(k) > 2} | {10.0: "10", 0.1: "1/10", 100.0: "100", 0.01: "1/100"}
-#: Conversions that are exact by definition, or as the source gives them: NIST Special Publication 811 (2008), appendix B;
-#: the constants of the SI as of 2019.
+TENS = {10.0**k: f"1e{k}" for k in range(-12, 13) if abs(k) > 2} | {
+    10.0: "10",
+    0.1: "1/10",
+    100.0: "100",
+    0.01: "1/100",
+}
+#: Conversions that are exact by definition, or as the source gives them: NIST Special Publication 811 (2008), appendix
+#: B, and the constants of the SI as of 2019; from memory.
 CONVERSIONS = {
     60.0: "minutes and seconds",
     3600.0: "hours and seconds",
@@ -121,7 +127,8 @@ def mean_for_sum(case: Case) -> Iterator[Explanation]:
     if ratio.size < 2 or not (case.refuted | case.silent).all():
         return
     for inverse in (False, True):
-        size = float(np.median(1 / ratio if inverse else ratio))
+        with np.errstate(divide="ignore", invalid="ignore"):
+            size = float(np.median(1 / ratio if inverse else ratio))
         amount = round(size) if math.isfinite(size) else 0
         if 3 <= amount <= OBSERVATIONS_MOST:
             factor, label = (1 / amount, f"1/{amount:,}") if inverse else (float(amount), f"{amount:,}")
@@ -159,7 +166,7 @@ def _story(
                 where=where,
                 bits=case.bits(predicted, doubt),
                 cost=cost + (0.0 if sign > 0 else 1.0),
-                tell=lambda left, shown=shown: _sentence(case, left, shown, mend),
+                tell=partial(_sentence, case, shown=shown, mend=mend),
                 brief=f"a factor of {shown}",
             )
 

@@ -1,6 +1,7 @@
-"""Entries that lack a contribution: what is missing is itself simple, or the claim is the derivative of another function."""
+"""Entries that lack a contribution: what is missing is simple, or the claim is the derivative of another function."""
 
 from collections.abc import Iterator
+from functools import partial
 
 import numpy as np
 
@@ -16,6 +17,8 @@ COST = 10.0
 WHOLE_MOST = 1000
 #: Different constants that are tried.
 CONSTANTS_MOST = 20
+#: So many entries must hold the same before they are said to hold nothing else.
+LEAST_HELD = 3
 
 
 def missing_path(case: Case) -> Iterator[Explanation]:
@@ -24,7 +27,7 @@ def missing_path(case: Case) -> Iterator[Explanation]:
     yield from _in_common(case)
     yield from _of_value(case)
     yield from _one_intermediate(case)
-    yield from _of_another_function(case)
+    yield from _nothing_but(case)
 
 
 def _missing(case: Case) -> Array:
@@ -40,36 +43,77 @@ def _able(case: Case) -> BoolArray:
 
 def _whole_numbers(case: Case) -> Iterator[Explanation]:
     """One entry lacks exactly 12, say: a term that is the variable itself times a number of observations."""
-    missing = np.where(_able(case), _missing(case), np.nan)
+    # Whole numbers beside whole numbers are no surprise.
+    fractional = np.abs(case.claim - np.round(case.claim)) > 1e-6
+    missing = np.where(_able(case) & fractional, _missing(case), np.nan)
     nearest = np.round(missing)
     for amount in np.unique(nearest[np.isfinite(nearest)])[:CONSTANTS_MOST]:
         if 1 <= abs(amount) <= WHOLE_MOST:
             cost = COST + float(np.log2(2 * abs(amount)))
-            yield from _story(case, np.full(case.claim.shape, amount), cost, f"lacks {number(amount)} exactly")
+            yield from _story(
+                case, np.where(nearest == amount, amount, np.nan), cost, f"lacks {number(amount)} exactly"
+            )
 
 
 def _in_common(case: Case) -> Iterator[Explanation]:
     """Several entries lack the same, or the same times their variable, or over it: a penalty or a barrier left out."""
     missing = np.where(_able(case), _missing(case), np.nan)
+    doubt = case.doubt + case.rel_tol * np.abs(case.value)
+    words = (
+        "lacks the same {} in each",
+        "lacks {} times the variable in each, as of a square left out",
+        "lacks {} over the variable in each, as of a logarithm or a product left out",
+    )
+    for shape, told in zip(_shapes(case), words, strict=True):
+        for amount in _repeated(missing, doubt, shape, least=2):
+            yield from _story(case, amount * shape, FITTED, told.format(number(amount, 6)))
+
+
+def _shapes(case: Case) -> tuple[Array, Array, Array]:
+    """What simple terms have for derivatives: a constant, the variable, one over it."""
+    x = np.broadcast_to(case.x, case.claim.shape)
     with np.errstate(all="ignore"):
-        shapes = (
-            (np.ones_like(missing), "lacks the same {} in each"),
-            (np.broadcast_to(case.x, missing.shape), "lacks {} times the variable in each, as of a square left out"),
-            (np.broadcast_to(1 / case.x, missing.shape), "lacks {} over the variable in each, as of a logarithm left out"),
-        )
-        for shape, words in shapes:
-            for amount in _repeated(missing / shape):
-                yield from _story(case, amount * shape, FITTED, words.format(number(amount, 6)))
+        return np.ones(case.claim.shape), x, 1 / x
 
 
-def _repeated(numbers: Array) -> list[float]:
-    """Numbers that occur at least twice, to seven digits."""
-    sorted_ = np.sort(numbers[np.isfinite(numbers)])
-    near = np.flatnonzero(np.abs(np.diff(sorted_)) <= 1e-7 * np.abs(sorted_[1:]))
+def _nothing_but(case: Case) -> Iterator[Explanation]:
+    """What several entries do hold is simple: one term of the model alone, the others are not there."""
+    held = np.where(_able(case), case.claim, np.nan)
+    doubt = case.rel_tol * np.abs(case.claim)
+    words = ("{} in each", "{} times the variable", "{} over the variable")
+    for shape, told in zip(_shapes(case), words, strict=True):
+        for amount in _repeated(held, doubt, shape, least=LEAST_HELD):
+            predicted, what = amount * shape, told.format(number(amount, 6))
+            where = _able(case) & case.met(predicted, np.zeros_like(predicted))
+            yield Explanation(
+                code=DiagnosisCode.MISSING_PATH,
+                where=where,
+                bits=case.bits(predicted, np.zeros_like(predicted)),
+                cost=FITTED,
+                tell=partial(_holding, case, what=what),
+            )
+
+
+def _holding(case: Case, left: BoolArray, what: str) -> str:
+    return (
+        f"{in_words(case, left)}: the claim holds nothing but {what}; the other terms of the model are not "
+        "differentiated there."
+    )
+
+
+def _repeated(amounts: Array, doubt: Array, shape: Array, least: int) -> list[float]:
+    """Factors of `shape` that so many entries have in common, as far as can be seen."""
+    with np.errstate(all="ignore"):
+        factors, doubts = (amounts / shape).ravel(), np.abs(doubt / shape).ravel()
+    usable = np.isfinite(factors) & (np.abs(factors) > doubts)
+    order = np.argsort(factors[usable])
+    factors, doubts = factors[usable][order], doubts[usable][order]
     found: list[float] = []
-    for place in near:
-        amount = float(sorted_[place])
-        if amount != 0 and (not found or abs(amount - found[-1]) > 1e-6 * abs(amount)):
+    for place in range(factors.size - least + 1):
+        together = slice(place, place + least)
+        amount = float(factors[together][np.argmin(doubts[together])])
+        seen = found and abs(amount - found[-1]) <= 1e-6 * abs(amount)
+        if not seen and np.all(np.abs(factors[together] - amount) <= doubts[together] + doubts[together].min()):
             found.append(amount)
     return found[:CONSTANTS_MOST]
 
@@ -86,7 +130,12 @@ def _of_value(case: Case) -> Iterator[Explanation]:
 def _story(case: Case, missing: Array, cost: float, words: str) -> Iterator[Explanation]:
     with np.errstate(all="ignore"):
         predicted = case.value - missing
-    where = _able(case) & np.isfinite(predicted) & case.met(predicted, case.doubt + case.rel_tol * np.abs(case.value))
+    where = (
+        _able(case)
+        & np.isfinite(predicted)
+        & np.isfinite(missing)
+        & case.met(predicted, case.doubt + case.rel_tol * np.abs(case.value))
+    )
     if where.any():
         yield Explanation(
             code=DiagnosisCode.MISSING_PATH,
@@ -122,24 +171,21 @@ def _one_intermediate(case: Case) -> Iterator[Explanation]:
         bits=bits,
         cost=COST,
         tell=lambda left: (
-            f"{in_words(case, left)}: what the claim lacks is one column times one row, in all {left.sum()} entries: the "
-            "path through one intermediate quantity, which these outputs depend on, is left out (or counted twice)."
+            f"{in_words(case, left)}: what the claim lacks is one column times one row, in all {left.sum()} entries: "
+            "the path through one intermediate quantity, which these outputs depend on, is left out (or counted twice)."
         ),
     )
 
 
-def _of_another_function(case: Case) -> Iterator[Explanation]:
-    """The refuted part of the claim is known to be a derivative, though not of the model."""
-    if case.derivative_of_another.size != case.claim.shape[0] or not case.derivative_of_another.any():
-        return
-    where = case.refuted & case.derivative_of_another[:, None]
-    yield Explanation(
+def of_another_function(case: Case, where: BoolArray) -> Explanation:
+    """The story of refuted entries that are known to be a derivative, though not of the model."""
+    return Explanation(
         code=DiagnosisCode.MISSING_PATH,
         where=where,
         bits=np.full(case.claim.shape, MOST_BITS),
         cost=COST,
         tell=lambda left: (
-            f"{in_words(case, left)}: in these entries the claim is the exact derivative of some other function (its own "
-            "derivatives are symmetric); a term of the model is left out or is one too many, or a constant differs."
+            f"{in_words(case, left)}: in these entries the claim is the exact derivative of some other function (its "
+            "own derivatives are symmetric); a term of the model is left out or is one too many, or a constant differs."
         ),
     )

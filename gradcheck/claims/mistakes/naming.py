@@ -1,7 +1,6 @@
 """Which likely mistakes explain a refuted claim: the stories that save most, until none is worth telling."""
 
 from collections.abc import Callable
-from dataclasses import replace
 
 import numpy as np
 
@@ -9,7 +8,7 @@ from gradcheck.claims.mistakes.case import Case
 from gradcheck.claims.mistakes.chain_rule import missing_chain_rule
 from gradcheck.claims.mistakes.explanation import LEAST, Explanation, Family
 from gradcheck.claims.mistakes.factor import constant_factor, degrees_for_radians, mean_for_sum, unit_factor
-from gradcheck.claims.mistakes.missing_path import missing_path
+from gradcheck.claims.mistakes.missing_path import missing_path, of_another_function
 from gradcheck.claims.mistakes.reordered import reordered
 from gradcheck.claims.mistakes.shifted import shifted_entries
 from gradcheck.claims.mistakes.sign import sign_flipped
@@ -20,6 +19,7 @@ from gradcheck.claims.mistakes.unknown import unexplained
 from gradcheck.claims.mistakes.zero import zero_entry
 from gradcheck.records.arrays import BoolArray, IntArray
 from gradcheck.records.report import Diagnosis
+from gradcheck.records.verdict import DiagnosisCode
 
 FAMILIES: tuple[Family, ...] = (
     single_precision,
@@ -56,11 +56,23 @@ def likely_mistakes(case: Case, ask: Asking | None = None) -> tuple[Diagnosis, .
         return ()
     found, left = _told(case, [each for family in FAMILIES for each in family(case)], case.refuted.copy())
     if left.any() and ask is not None:
-        known = np.array([bool(row.sum() > 1 and ask(i, np.flatnonzero(row))) for i, row in enumerate(left)])
-        asked = replace(case, refuted=left, derivative_of_another=known)
-        more, left = _told(asked, list(missing_path(asked)), left)
-        found += more
+        found, left = _asked(case, found, left, ask)
     return (*found, unexplained(case, left)) if left.any() else tuple(found)
+
+
+def _asked(case: Case, found: list[Diagnosis], left: BoolArray, ask: Asking) -> tuple[list[Diagnosis], BoolArray]:
+    """What is left may be a part of the derivative of another function, with what lacks a term for sure."""
+    lacking = {name for each in found if each.code == DiagnosisCode.MISSING_PATH for name in each.entries}
+    for i in np.flatnonzero(left.any(axis=1)).tolist():
+        asked = np.array(
+            [left[i, j] or (case.refuted[i, j] and case.name(i, j) in lacking) for j in range(left.shape[1])]
+        )
+        if asked.sum() > 1 and ask(i, np.flatnonzero(asked)):
+            where = np.zeros_like(left)
+            where[i] = left[i]
+            more, left = _told(case, [of_another_function(case, where)], left)
+            found = found + more
+    return found, left
 
 
 def _told(case: Case, stories: list[Explanation], left: BoolArray) -> tuple[list[Diagnosis], BoolArray]:

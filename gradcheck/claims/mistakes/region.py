@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from gradcheck.claims.mistakes.case import BOUNDS
-from gradcheck.records.arrays import BoolArray
+from gradcheck.records.arrays import Array, BoolArray
 from gradcheck.records.report import CheckReport, Diagnosis
 from gradcheck.records.verdict import DiagnosisCode, Verdict
 from gradcheck.wording import listed, number
@@ -38,10 +38,12 @@ def divided(reports: Sequence[CheckReport]) -> Divided | None:
     entries = refuted.any(axis=0)
     wrong = [k for k in range(len(reports)) if refuted[k].any()]
     right = [k for k in range(len(reports)) if confirmed[k, entries].all() and (confirmed & seen)[k, entries].any()]
-    return Divided(right, wrong, entries) if right and wrong else None
+    return Divided(right, wrong, np.asarray(entries)) if right and wrong else None
 
 
-def region_story(reports: Sequence[CheckReport], parts: Divided, names: tuple[str, ...], labels: Sequence[str]) -> Diagnosis:
+def region_story(
+    reports: Sequence[CheckReport], parts: Divided, names: tuple[str, ...], labels: Sequence[str]
+) -> Diagnosis:
     """The story of a claim that is right in one region only.
 
     Parameters
@@ -66,7 +68,7 @@ def _points(places: Sequence[int]) -> str:
     return ("point " if len(places) == 1 else "points ") + listed([str(k) for k in places])
 
 
-def _separators(points: np.ndarray, parts: Divided, labels: Sequence[str]) -> list[str]:  # type: ignore[type-arg]
+def _separators(points: Array, parts: Divided, labels: Sequence[str]) -> list[str]:
     """Variables with a threshold between the points where the claim is right and those where it is wrong."""
     right, wrong = points[parts.right], points[parts.wrong]
     if min(len(right), len(wrong)) < LEAST:
@@ -74,15 +76,19 @@ def _separators(points: np.ndarray, parts: Divided, labels: Sequence[str]) -> li
     found = []
     for i in range(points.shape[1]):
         if wrong[:, i].min() > right[:, i].max():
-            found.append(f"wrong where {labels[i]} ≥ {_low(wrong[:, i])}, right where {labels[i]} ≤ {_high(right[:, i])}")
+            found.append(
+                f"wrong where {labels[i]} ≥ {_low(wrong[:, i])}, right where {labels[i]} ≤ {_high(right[:, i])}"
+            )
         elif wrong[:, i].max() < right[:, i].min():
-            found.append(f"wrong where {labels[i]} ≤ {_high(wrong[:, i])}, right where {labels[i]} ≥ {_low(right[:, i])}")
+            found.append(
+                f"wrong where {labels[i]} ≤ {_high(wrong[:, i])}, right where {labels[i]} ≥ {_low(right[:, i])}"
+            )
     return found if len(found) <= SEPARATORS_MOST else []
 
 
-def _low(values: np.ndarray) -> str:  # type: ignore[type-arg]
+def _low(values: Array) -> str:
     return number(float(values.min()), 4)
 
 
-def _high(values: np.ndarray) -> str:  # type: ignore[type-arg]
+def _high(values: Array) -> str:
     return number(float(values.max()), 4)

@@ -5,7 +5,7 @@ from collections.abc import Iterator
 import numpy as np
 
 from gradcheck.claims.mistakes.case import Block
-from gradcheck.claims.mistakes.explanation import Explanation, places
+from gradcheck.claims.mistakes.explanation import Explanation, places, said
 from gradcheck.claims.mistakes.views import Columns, out_of_place
 from gradcheck.records.arrays import IntArray
 from gradcheck.records.verdict import DiagnosisCode
@@ -36,7 +36,7 @@ def _of_block(columns: Columns, block: Block, cost: float) -> Iterator[Explanati
         order: IntArray = np.arange(columns.case.claim.shape[1])
         order[block.columns] = block.start + inner
         moved = order != np.arange(order.size)
-        met = columns.case.met(*columns.predicted(order)).all(axis=0)
+        met = columns.wholly_met(order)
         if met[moved].all() and columns.marks(moved).any():
             text = _sentence(columns, block, order, flat_as)
             yield Explanation(
@@ -44,7 +44,7 @@ def _of_block(columns: Columns, block: Block, cost: float) -> Iterator[Explanati
                 where=columns.marks(moved),
                 bits=columns.case.bits(*columns.predicted(order)),
                 cost=cost + (0.0 if flat_as == "F" else 0.5),
-                tell=lambda _, text=text: text,
+                tell=said(text),
             )
 
 

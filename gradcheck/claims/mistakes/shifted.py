@@ -4,7 +4,7 @@ from collections.abc import Iterator
 
 import numpy as np
 
-from gradcheck.claims.mistakes.explanation import Explanation, places
+from gradcheck.claims.mistakes.explanation import Explanation, places, said
 from gradcheck.claims.mistakes.views import Columns, out_of_place
 from gradcheck.records.arrays import BoolArray, IntArray
 from gradcheck.records.verdict import DiagnosisCode
@@ -48,8 +48,7 @@ def _shifts(columns: Columns) -> list[int]:
 
 def _neutral(columns: Columns, order: IntArray) -> BoolArray:
     """Columns that are right as they are and would be so if they were shifted."""
-    whole: BoolArray = columns.case.met(*columns.predicted(order)).all(axis=0) & ~columns.case.refuted.any(axis=0)
-    return whole
+    return columns.wholly_met(order) & ~np.asarray(columns.case.refuted.any(axis=0))
 
 
 def _runs(able: BoolArray, met: BoolArray) -> Iterator[tuple[int, int]]:
@@ -74,9 +73,7 @@ def _end(columns: Columns, first: int, stop: int, shift: int) -> tuple[int, int]
     return None
 
 
-def _story(
-    columns: Columns, order: IntArray, told: BoolArray, shift: int, end: tuple[int, int] | None
-) -> Explanation:
+def _story(columns: Columns, order: IntArray, told: BoolArray, shift: int, end: tuple[int, int] | None) -> Explanation:
     n = order.size
     moved = np.flatnonzero(told)
     inner = moved if end is None else moved[moved != end[0]]
@@ -93,7 +90,7 @@ def _story(
         where=columns.marks(told),
         bits=columns.case.bits(*columns.predicted(order)),
         cost=COST + (0.0 if abs(shift) == 1 else places(n)) + (0.0 if whole else 2 * places(n)),
-        tell=lambda _: f"{text}; look for an index that is off.",
+        tell=said(f"{text}; look for an index that is off."),
     )
 
 

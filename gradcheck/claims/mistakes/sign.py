@@ -2,14 +2,13 @@
 
 from collections.abc import Iterator
 
-import numpy as np
-
 from gradcheck.claims.mistakes.case import Case
 from gradcheck.claims.mistakes.explanation import Explanation
 from gradcheck.claims.mistakes.where import in_words
+from gradcheck.records.arrays import BoolArray
 from gradcheck.records.verdict import DiagnosisCode
 
-COST = 3.0
+COST = 2.0
 
 
 def sign_flipped(case: Case) -> Iterator[Explanation]:
@@ -18,7 +17,7 @@ def sign_flipped(case: Case) -> Iterator[Explanation]:
     if not where.any():
         return
 
-    def tell(left: np.ndarray) -> str:  # type: ignore[type-arg]
+    def tell(left: BoolArray) -> str:
         if left.sum() > 1 and (left | case.silent).all():
             return (
                 f"all {left.sum():,} entries have the opposite sign of the derivative; look for a lost minus in front "

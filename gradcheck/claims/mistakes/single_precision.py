@@ -5,7 +5,7 @@ from collections.abc import Iterator
 import numpy as np
 
 from gradcheck.claims.mistakes.case import MOST_BITS, Case
-from gradcheck.claims.mistakes.explanation import Explanation
+from gradcheck.claims.mistakes.explanation import Explanation, said
 from gradcheck.records.arrays import Array, BoolArray
 from gradcheck.records.verdict import DiagnosisCode
 from gradcheck.wording import number
@@ -21,7 +21,7 @@ COST = 6.0
 
 
 def single_precision(case: Case) -> Iterator[Explanation]:
-    """Every entry agrees to about seven digits, and the claims are numbers of single precision or off by differently."""
+    """Every entry agrees to about seven digits; the claims are single precision numbers, or off by different shares."""
     size = np.fmax(np.abs(case.claim), np.abs(case.value))
     # Sums of terms that cancel are off by the spacing of their terms, not of the result.
     room = LOST * SPACING * np.fmax(size, 1e-3 * np.nanmax(size, axis=1, keepdims=True)) + case.doubt
@@ -49,7 +49,7 @@ def single_precision(case: Case) -> Iterator[Explanation]:
         where=case.refuted,
         bits=np.full(case.claim.shape, MOST_BITS),
         cost=COST,
-        tell=lambda _: text,
+        tell=said(text),
     )
 
 

@@ -37,8 +37,8 @@ def changing_claim(
         return Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names)
     if right_at_first:
         why = (
-            "right before and wrong after the model was evaluated elsewhere: the claim uses what the last evaluation left "
-            "behind, not its own argument"
+            "right before and wrong after the model was evaluated elsewhere: the claim uses what the last evaluation "
+            "left behind, not its own argument"
         )
     elif right_at_last:
         why = "wrong in the first call and right in the next: the claim returns what an earlier call worked out"
@@ -48,7 +48,7 @@ def changing_claim(
 
 
 def stale_points(reports: Sequence[CheckReport]) -> dict[int, int]:
-    """Points whose claim is the derivative at another one: which, by their places; an earlier one where there is one."""
+    """Points whose claim is the derivative at another one: which, by their places; an earlier one if there is."""
     found: dict[int, int] = {}
     for k, report in enumerate(reports):
         if report.verdict == Verdict.REFUTED and len(report.entries):
@@ -68,7 +68,9 @@ def _claims_that_of(report: CheckReport, other: CheckReport) -> bool:
         off = np.abs(mine.claim - theirs.witness)
         met = off <= SAME * np.fmax(np.abs(mine.claim), np.abs(theirs.witness)) + BOUNDS * theirs.bound
     refuted = np.array([verdict == Verdict.REFUTED for verdict in mine.verdict])
-    return bool(met[np.isfinite(theirs.bound)].all() and (met & refuted).sum() >= min(LEAST, met.size) and refuted.any())
+    return bool(
+        met[np.isfinite(theirs.bound)].all() and (met & refuted).sum() >= min(LEAST, met.size) and refuted.any()
+    )
 
 
 def stale_story(found: dict[int, int], names: dict[int, tuple[str, ...]]) -> Diagnosis:
@@ -76,8 +78,12 @@ def stale_story(found: dict[int, int], names: dict[int, tuple[str, ...]]) -> Dia
     all_names = tuple(name for k in found for name in names[k])
     behind = all(k - j == 1 for k, j in found.items())
     if behind and len(found) > 1:
-        what = f"at points {listed([str(k) for k in found])} the claim is the derivative of the point before, in all entries"
+        what = (
+            f"at points {listed([str(k) for k in found])} the claim is the derivative of the point before, in all of it"
+        )
     else:
-        what = "; ".join(f"at point {k} the claim is the derivative at point {j}, in all entries" for k, j in found.items())
+        what = "; ".join(
+            f"at point {k} the claim is the derivative at point {j}, in all entries" for k, j in found.items()
+        )
     text = f"{what}; look for a value kept from an earlier call, or a list of results that is one place off."
     return Diagnosis(code=DiagnosisCode.STALE_POINT, text=text, entries=all_names)

@@ -4,7 +4,7 @@ from collections.abc import Iterator
 
 import numpy as np
 
-from gradcheck.claims.mistakes.explanation import Explanation, places
+from gradcheck.claims.mistakes.explanation import Explanation, places, said
 from gradcheck.claims.mistakes.views import Columns, out_of_place
 from gradcheck.records.arrays import BoolArray, IntArray
 from gradcheck.records.verdict import DiagnosisCode
@@ -81,7 +81,7 @@ def _story(columns: Columns, order: IntArray, text: str, cost: float) -> Explana
         where=columns.marks(moved),
         bits=columns.case.bits(*columns.predicted(order)),
         cost=cost,
-        tell=lambda _: text,
+        tell=said(text),
     )
 
 

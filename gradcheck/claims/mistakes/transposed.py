@@ -5,7 +5,7 @@ from collections.abc import Iterator
 import numpy as np
 
 from gradcheck.claims.mistakes.case import Case
-from gradcheck.claims.mistakes.explanation import Explanation, places
+from gradcheck.claims.mistakes.explanation import Explanation, places, said
 from gradcheck.records.verdict import DiagnosisCode
 
 COST = 3.0
@@ -50,5 +50,5 @@ def _part(case: Case, rows: slice, columns: slice) -> Explanation | None:
         )
         cost = COST + 3 * places(max(m, n))
     return Explanation(
-        code=DiagnosisCode.TRANSPOSED, where=where, bits=case.bits(predicted, doubt), cost=cost, tell=lambda _: text
+        code=DiagnosisCode.TRANSPOSED, where=where, bits=case.bits(predicted, doubt), cost=cost, tell=said(text)
     )

@@ -22,17 +22,17 @@ def unexplained(case: Case, left: BoolArray) -> Diagnosis:
     shown = in_words(case, left)
     if gap < CLOSE:
         text = (
-            f"{shown}: claim and derivative agree to {int(-np.log10(gap))} digits, so no term of any weight is wrong. If "
-            "the model iterates to a tolerance, the derivative of the program differs from the exact one by about as "
-            "much; tighten it and check again. Otherwise look for a small term, or constants with few digits."
+            f"{shown}: claim and derivative agree to {int(-np.log10(gap))} digits, so no term of any weight is wrong. "
+            "If the model iterates to a tolerance, the derivative of the program differs from the exact one by about "
+            "as much; tighten it and check again. Otherwise look for a small term, or constants with few digits."
         )
     elif not np.isfinite(case.claim[left]).any():
         text = f"{shown}: the claim is not a finite number; look for 0/0, log(0) or an overflow in it."
     else:
         them = "it" if left.sum() == 1 else "them"
         text = (
-            f"{shown}: no simple mistake explains the difference{_ratios(case, left)}{_right_part(case)}; derive {them} "
-            "afresh."
+            f"{shown}: no simple mistake explains the difference{_ratios(case, left)}{_right_part(case)}; derive "
+            f"{them} afresh."
         )
     return Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=case.names(left))
 

@@ -1,4 +1,4 @@
-"""The same refuted claim seen as columns, as rows, or one row at a time: what is out of place may be so in any of them."""
+"""The same refuted claim seen as columns, as rows, or one row at a time: things may be out of place in any of them."""
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
@@ -40,8 +40,11 @@ class Columns:
 
     def met(self, order: IntArray) -> BoolArray:
         """Columns (n,) that are wholly what such an order predicts, with a refuted entry among them."""
-        whole: BoolArray = self.case.met(*self.predicted(order)).all(axis=0) & self.case.refuted.any(axis=0)
-        return whole
+        return self.wholly_met(order) & np.asarray(self.case.refuted.any(axis=0))
+
+    def wholly_met(self, order: IntArray) -> BoolArray:
+        """Columns (n,) that are wholly what such an order predicts, refuted or not."""
+        return np.asarray(self.case.met(*self.predicted(order)).all(axis=0))
 
     def marks(self, columns: BoolArray) -> BoolArray:
         """Refuted entries in these columns."""
@@ -58,13 +61,17 @@ def out_of_place(family: ColumnFamily) -> Family:
         if case.claim.size > ENTRIES_MOST:
             return
         noun = case.variable(0).partition("[")[0]
-        yield from family(Columns(case, noun))
-        m = case.claim.shape[0]
-        if m == 1:
+        explained = np.zeros_like(case.refuted)
+        for found in family(Columns(case, noun)):
+            explained |= found.where
+            yield found
+        if case.claim.shape[0] == 1:
             return
-        for found in family(Columns(_turned(case), "row")):
-            yield _back(found, np.s_[:], turned=True, shape=case.claim.shape)
-        rows = np.flatnonzero(case.refuted.any(axis=1))
+        for turned in family(Columns(_turned(case), "row")):
+            found = _back(turned, np.s_[:], turned=True, shape=case.claim.shape)
+            explained |= found.where
+            yield found
+        rows = np.flatnonzero((case.refuted & ~explained).any(axis=1))
         for i in rows[:ROWS_MOST].tolist():
             for found in family(Columns(_row(case, i), noun)):
                 yield _back(found, np.s_[i : i + 1], turned=False, shape=case.claim.shape)
@@ -106,4 +113,3 @@ def _row(case: Case, i: int) -> Case:
         name=lambda _, j: case.name(i, j),
         outputs=(),
     )
-

@@ -3,7 +3,7 @@
 import numpy as np
 
 from gradcheck.claims.mistakes.case import Block, Case
-from gradcheck.records.arrays import BoolArray
+from gradcheck.records.arrays import BoolArray, IntArray
 from gradcheck.wording import count, listed
 
 #: From so many entries on a run of them is told by its ends.
@@ -46,13 +46,13 @@ def _rows_and_columns(case: Case, where: BoolArray) -> str:
     return ""
 
 
-def _product(case: Case, where: BoolArray, rows: np.ndarray, columns: np.ndarray) -> bool:  # type: ignore[type-arg]
+def _product(case: Case, where: BoolArray, rows: IntArray, columns: IntArray) -> bool:
     part = np.zeros_like(where)
     part[np.ix_(rows, columns)] = True
     return filled(case, where, part) and not where[~part].any()
 
 
-def _range(noun: str, places: np.ndarray) -> str:  # type: ignore[type-arg]
+def _range(noun: str, places: IntArray) -> str:
     if places.size == 1:
         return f"{noun} {places[0]}"
     if places.size >= FEW and np.all(np.diff(places) == 1):
@@ -60,7 +60,7 @@ def _range(noun: str, places: np.ndarray) -> str:  # type: ignore[type-arg]
     return f"{noun}s {listed([str(place) for place in places])}"
 
 
-def _variables(case: Case, columns: np.ndarray) -> str:  # type: ignore[type-arg]
+def _variables(case: Case, columns: IntArray) -> str:
     names = [case.variable(int(j)) for j in columns]
     if columns.size >= RUN and np.all(np.diff(columns) == 1):
         return f"{names[0]} to {names[-1]}"

@@ -7,6 +7,7 @@ import numpy as np
 from gradcheck.claims.mistakes.case import MOST_BITS, Case
 from gradcheck.claims.mistakes.explanation import Explanation
 from gradcheck.claims.mistakes.where import in_words
+from gradcheck.records.arrays import BoolArray
 from gradcheck.records.verdict import DiagnosisCode
 from gradcheck.wording import number
 
@@ -19,7 +20,7 @@ def zero_entry(case: Case) -> Iterator[Explanation]:
     if not where.any():
         return
 
-    def tell(left: np.ndarray) -> str:  # type: ignore[type-arg]
+    def tell(left: BoolArray) -> str:
         found = case.value[left]
         size = f" (by {number(found[0], 4)})" if found.size == 1 else ""
         return (
