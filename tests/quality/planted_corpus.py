@@ -438,7 +438,16 @@ def missing_term(site: Site) -> Plan | None:
     term = int(site.random.integers(len(site.model.terms)))
     missing = site.right - site.model.derivative(site.x, without=term)
     mask = missing != 0
-    return _plan(lambda x: site.model.derivative(x, without=term), "missing-path", mask) if mask.any() else None
+    if not mask.any():
+        return None
+    return Plan(claimed=lambda x: site.model.derivative(x, without=term), parts=_lacking(site, mask, missing))
+
+
+def _lacking(site: Site, mask: np.ndarray, missing: np.ndarray) -> tuple[tuple[str, np.ndarray], ...]:
+    """Entries that a missing term leaves at zero were never filled in; the others lack a contribution."""
+    zero = mask & (site.right - missing == 0)
+    parts = (("zero-entry", zero), ("missing-path", mask & ~zero))
+    return tuple((code, part) for code, part in parts if part.any())
 
 
 def missing_path(site: Site) -> Plan | None:
@@ -454,8 +463,9 @@ def missing_path(site: Site) -> Plan | None:
     # A term that is all there is leaves zeros, which is another mistake.
     if np.all((site.right - missing)[mask] == 0):
         return None
-    return _plan(
-        lambda x: np.where(mask, site.model.derivative(x, without=term), site.model.derivative(x)), "missing-path", mask
+    return Plan(
+        claimed=lambda x: np.where(mask, site.model.derivative(x, without=term), site.model.derivative(x)),
+        parts=_lacking(site, mask, missing),
     )
 
 
