@@ -103,7 +103,7 @@ def constant_factor(case: Case) -> Iterator[Explanation]:
         code, cost = DiagnosisCode.CONSTANT_FACTOR, SIMPLE_COST if factor in SIMPLE else KNOWN_COST
         yield from _story(case, factor, code, cost, (SIMPLE | KNOWN)[factor], _PLAIN)
     for factor in _shared(case):
-        yield from _story(case, factor, DiagnosisCode.CONSTANT_FACTOR, FITTED, number(factor, 6), _PLAIN)
+        yield from _story(case, factor, DiagnosisCode.CONSTANT_FACTOR, FITTED, _written(factor), _PLAIN)
 
 
 def degrees_for_radians(case: Case) -> Iterator[Explanation]:
@@ -193,6 +193,13 @@ def _shared(case: Case) -> list[float]:
             found.append(factor)
             last = factor
     return found
+
+
+def _written(factor: float) -> str:
+    """A fitted factor; one over a whole number as such."""
+    inverse = round(1 / factor) if factor > 1e-6 else 0
+    plain = 2 <= inverse <= OBSERVATIONS_MOST and math.isclose(factor * inverse, 1.0, rel_tol=1e-9)
+    return f"1/{inverse:,}" if plain else number(factor, 6)
 
 
 def _exactness(case: Case) -> Array:

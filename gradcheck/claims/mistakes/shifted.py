@@ -23,6 +23,7 @@ def _moved(columns: Columns) -> Iterator[Explanation]:
     wrong = columns.refuted()
     if wrong.size < LEAST:
         return
+    yield from _round(columns)
     for shift in _shifts(columns):
         order = np.arange(n) - shift
         order[(order < 0) | (order >= n)] = -1
@@ -37,6 +38,33 @@ def _moved(columns: Columns) -> Iterator[Explanation]:
                 order[place], told[place] = source, True
             if told.sum() >= LEAST:
                 yield _story(columns, order.copy(), told, shift, end)
+
+
+def _round(columns: Columns) -> Iterator[Explanation]:
+    """All columns moved on by some places, the last ones to the front."""
+    n = columns.case.claim.shape[1]
+    for shift in range(2, n - 1 if n <= ALL_SHIFTS else 0):
+        order = np.roll(np.arange(n), shift)
+        if columns.wholly_met(order).all():
+            far = count(min(shift, n - shift), "place")
+            here, there = columns.label(0), columns.label(int(order[0]))
+            text = (
+                f"all {n} {_things(columns)} shifted round by {far}: the claim for {here} is that of {there}, and so on"
+            )
+            yield Explanation(
+                code=DiagnosisCode.SHIFTED_ENTRIES,
+                where=columns.marks(np.ones(n, bool)),
+                bits=columns.case.bits(*columns.predicted(order)),
+                cost=COST + places(n),
+                tell=said(f"{text}; look for an index that is off."),
+            )
+
+
+def _things(columns: Columns) -> str:
+    """What the columns of this view are to the reader."""
+    if columns.noun == "row":
+        return "rows"
+    return "entries" if columns.case.claim.shape[0] == 1 else "columns"
 
 
 def _shifts(columns: Columns) -> list[int]:
@@ -79,7 +107,7 @@ def _story(columns: Columns, order: IntArray, told: BoolArray, shift: int, end: 
     inner = moved if end is None else moved[moved != end[0]]
     some = [f"{columns.label(int(j))} is that of {columns.label(int(order[j]))}" for j in inner[:2]]
     far = count(abs(shift), "place")
-    text = f"{count(int(told.sum()), 'entry', 'entries')} shifted by {far}: the claim for {', for '.join(some)}"
+    text = f"{told.sum()} {_things(columns)} shifted by {far}: the claim for {', for '.join(some)}"
     text += ", and so on" if inner.size > 2 else ""
     if end is not None:
         place, source = end

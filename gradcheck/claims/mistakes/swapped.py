@@ -61,17 +61,20 @@ def _rounds(columns: Columns, wrong: IntArray, fits: BoolArray) -> Iterator[Expl
             order[here] = np.roll(here, -1)
             shown = listed([columns.label(int(j)) for j in here], limit=ROUND_MOST)
             due = listed([columns.label(int(j)) for j in np.roll(here, -1)], limit=ROUND_MOST)
-            text = f"{shown}: the claim holds what is due in {due}; check the order of the variables."
+            text = f"{shown}: the claim holds what is due in {due}; check the order of the {_of(columns)}."
             yield _story(columns, order, text, COST + 3.0 + len(way) * places(n))
 
 
 def _exchange(columns: Columns, i: int, j: int) -> str:
     a, b = columns.label(i), columns.label(j)
-    of = "outputs" if columns.noun == "row" else "variables"
     return (
         f"the claims for {a} and {b} stand in each other's place (each is the derivative that is due in the other); "
-        f"check the order of the {of}."
+        f"check the order of the {_of(columns)}."
     )
+
+
+def _of(columns: Columns) -> str:
+    return "outputs" if columns.noun == "row" else "variables"
 
 
 def _story(columns: Columns, order: IntArray, text: str, cost: float) -> Explanation:

@@ -8,6 +8,7 @@ import numpy as np
 
 from gradcheck.claims.mistakes.case import Block, Case
 from gradcheck.claims.mistakes.explanation import Explanation, Family
+from gradcheck.claims.mistakes.where import row_in_words
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 
 #: So many rows are looked at one by one.
@@ -25,7 +26,7 @@ class Columns:
 
     def label(self, column: int) -> str:
         if self.noun == "row":
-            return f"row {column}"
+            return row_in_words(column, self.case.name(0, column))
         return self.case.name(0, column) if self.case.claim.shape[0] == 1 else f"the column of {self.noun}[{column}]"
 
     def refuted(self) -> IntArray:

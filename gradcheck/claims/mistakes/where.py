@@ -10,6 +10,8 @@ from gradcheck.wording import count, listed
 RUN = 4
 #: Fewer entries are told by their names.
 FEW = 3
+#: More entries than this do not all get their names.
+LISTED = 6
 
 
 def in_words(case: Case, where: BoolArray) -> str:
@@ -38,11 +40,15 @@ def _rows_and_columns(case: Case, where: BoolArray) -> str:
         return ""
     rows, columns = np.flatnonzero(where.any(axis=1)), np.flatnonzero(where.any(axis=0))
     if _product(case, where, rows, np.arange(n)):
-        return _range("row", rows)
+        return _rows(case, rows)
     if _product(case, where, np.arange(m), columns):
         return f"all outputs by {_variables(case, columns)}"
     if rows.size > 1 and columns.size > 1 and _product(case, where, rows, columns):
-        return f"{_range('row', rows)} by {_variables(case, columns)}"
+        return f"{_rows(case, rows)} by {_variables(case, columns)}"
+    if columns.size == 1 and rows.size > LISTED and 2 * rows.size >= m:
+        return f"{rows.size} of the {m} outputs by {_variables(case, columns)}"
+    if rows.size == 1 and columns.size > LISTED and 2 * columns.size >= n:
+        return f"{columns.size} of the {n} entries of {_rows(case, rows)}"
     return ""
 
 
@@ -52,12 +58,18 @@ def _product(case: Case, where: BoolArray, rows: IntArray, columns: IntArray) ->
     return filled(case, where, part) and not where[~part].any()
 
 
-def _range(noun: str, places: IntArray) -> str:
+def _rows(case: Case, places: IntArray) -> str:
     if places.size == 1:
-        return f"{noun} {places[0]}"
+        return row_in_words(int(places[0]), case.name(int(places[0]), 0))
     if places.size >= FEW and np.all(np.diff(places) == 1):
-        return f"{noun}s {places[0]} to {places[-1]}"
-    return f"{noun}s {listed([str(place) for place in places])}"
+        return f"rows {places[0]} to {places[-1]}"
+    return f"rows {listed([str(place) for place in places])}"
+
+
+def row_in_words(row: int, entry: str) -> str:
+    """A row and its output's name, which the name of any of its entries begins with."""
+    output, by, _ = entry.partition(" by ")
+    return f"row {row} ({output})" if by else f"row {row}"
 
 
 def _variables(case: Case, columns: IntArray) -> str:
