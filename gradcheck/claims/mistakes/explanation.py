@@ -47,12 +47,24 @@ class Explanation:
     tell: Callable[[BoolArray], str]
     brief: str = ""
 
-    def worth(self, left: BoolArray) -> float:
-        """Bits saved in the entries that are left, less the cost."""
-        return float(self.bits[self.where & left].sum() - self.cost)
+    def worth(self, left: BoolArray, refuted: BoolArray) -> float:
+        """Bits saved in the entries that are left, less the cost, and less what it takes to say which of all refuted
+        entries the story is about.
+        """
+        return float(self.bits[self.where & left].sum() - self.cost - _placing(self.where, refuted))
 
 
 Family: TypeAlias = Callable[[Case], Iterator[Explanation]]
+
+
+def _placing(where: BoolArray, refuted: BoolArray) -> float:
+    """Bits to say which of the refuted entries: nothing for all; else one by one, or by the ends of runs."""
+    amounts = [where.sum()]
+    for turned, all_ in ((where, refuted), (where.T, refuted.T)):
+        marks = turned[all_]
+        amounts.append(2 * (int(marks[0]) + int(np.sum(marks[1:] & ~marks[:-1]))) if marks.size else 0)
+    count = int(refuted.sum())
+    return 0.0 if amounts[0] == count else float(min(amounts) * places(count))
 
 
 def said(text: str) -> Callable[[BoolArray], str]:

@@ -1,7 +1,7 @@
 """Entries that are off by one constant factor: a plain one, an angle's, a unit's, or the number of observations."""
 
 import math
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from functools import partial
 
 import numpy as np
@@ -83,6 +83,8 @@ CONVERSIONS = {
 UNIT_COST = 9.0
 #: A whole number, or one over it, up to this size in all entries may be a number of observations.
 OBSERVATIONS_MOST = 100_000
+#: Margin of the quick look at factors, over the doubt about a ratio.
+NEAR = 4.0
 
 
 def unit_of(factor: float) -> tuple[str, str]:
@@ -99,7 +101,8 @@ def unit_of(factor: float) -> tuple[str, str]:
 
 def constant_factor(case: Case) -> Iterator[Explanation]:
     """A factor with a name, or one that several entries share."""
-    for factor in SIMPLE | KNOWN:
+    near = _Near(case)
+    for factor in near.only(SIMPLE | KNOWN):
         code, cost = DiagnosisCode.CONSTANT_FACTOR, SIMPLE_COST if factor in SIMPLE else KNOWN_COST
         yield from _story(case, factor, code, cost, (SIMPLE | KNOWN)[factor], _PLAIN)
     for factor in _shared(case):
@@ -108,14 +111,14 @@ def constant_factor(case: Case) -> Iterator[Explanation]:
 
 def degrees_for_radians(case: Case) -> Iterator[Explanation]:
     """The factor between degrees and radians."""
-    for factor, label in ANGLES.items():
-        yield from _story(case, factor, DiagnosisCode.DEGREES_FOR_RADIANS, ANGLE_COST, label, _ANGLE)
+    for factor in _Near(case).only(ANGLES):
+        yield from _story(case, factor, DiagnosisCode.DEGREES_FOR_RADIANS, ANGLE_COST, ANGLES[factor], _ANGLE)
 
 
 def unit_factor(case: Case) -> Iterator[Explanation]:
     """The factor of a conversion between units."""
     known = [*TENS, *CONVERSIONS, *(1 / factor for factor in CONVERSIONS)]
-    for factor in known:
+    for factor in _Near(case).only(known):
         label, words = unit_of(factor)
         mend = f"the conversion between {words}." if words else "look for a conversion between units, or per cent."
         yield from _story(case, factor, DiagnosisCode.UNIT_FACTOR, UNIT_COST, label, mend)
@@ -141,6 +144,18 @@ def mean_for_sum(case: Case) -> Iterator[Explanation]:
             )
             mend += f" (there are {known})." if known else "."
             yield from _story(case, factor, DiagnosisCode.MEAN_FOR_SUM, cost, label, mend, signed=False)
+
+
+class _Near:
+    """Says which factors any entry comes near, at little cost: most cases come near none of a hundred."""
+
+    def __init__(self, case: Case) -> None:
+        ratio, exact = np.abs(case.ratios())[case.refuted], _exactness(case)[case.refuted]
+        usable = np.isfinite(ratio) & (ratio > 0)
+        self.logs, self.room = np.log(ratio[usable]), NEAR * exact[usable]
+
+    def only(self, factors: Iterable[float]) -> list[float]:
+        return [factor for factor in factors if np.any(np.abs(self.logs - math.log(factor)) <= self.room)]
 
 
 _PLAIN = "look for a factor lost or doubled in these terms, such as an inner derivative."

@@ -17,6 +17,8 @@ COST = 10.0
 WHOLE_MOST = 1000
 #: Different constants that are tried.
 CONSTANTS_MOST = 20
+#: Places where such a constant may be found that are looked at.
+PLACES_MOST = 500
 #: So many entries must hold the same before they are said to hold nothing else.
 LEAST_HELD = 3
 
@@ -109,7 +111,9 @@ def _repeated(amounts: Array, doubt: Array, shape: Array, least: int) -> list[fl
     order = np.argsort(factors[usable])
     factors, doubts = factors[usable][order], doubts[usable][order]
     found: list[float] = []
-    for place in range(factors.size - least + 1):
+    ends = slice(least - 1, None), slice(None, factors.size - least + 1)
+    near = np.abs(factors[ends[0]] - factors[ends[1]]) <= doubts[ends[0]] + doubts[ends[1]]
+    for place in np.flatnonzero(near)[:PLACES_MOST].tolist():
         together = slice(place, place + least)
         amount = float(factors[together][np.argmin(doubts[together])])
         seen = found and abs(amount - found[-1]) <= 1e-6 * abs(amount)

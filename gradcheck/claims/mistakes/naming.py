@@ -6,7 +6,7 @@ import numpy as np
 
 from gradcheck.claims.mistakes.case import Case
 from gradcheck.claims.mistakes.chain_rule import missing_chain_rule
-from gradcheck.claims.mistakes.explanation import LEAST, Explanation, Family
+from gradcheck.claims.mistakes.explanation import FITTED, LEAST, Explanation, Family
 from gradcheck.claims.mistakes.factor import constant_factor, degrees_for_radians, mean_for_sum, unit_factor
 from gradcheck.claims.mistakes.missing_path import missing_path, of_another_function
 from gradcheck.claims.mistakes.reordered import reordered
@@ -21,7 +21,8 @@ from gradcheck.records.arrays import BoolArray, IntArray
 from gradcheck.records.report import Diagnosis
 from gradcheck.records.verdict import DiagnosisCode
 
-FAMILIES: tuple[Family, ...] = (
+#: Families that look at each entry alone.
+ENTRY_BY_ENTRY: tuple[Family, ...] = (
     single_precision,
     sign_flipped,
     zero_entry,
@@ -30,12 +31,11 @@ FAMILIES: tuple[Family, ...] = (
     unit_factor,
     mean_for_sum,
     missing_chain_rule,
-    swapped_entries,
-    shifted_entries,
-    transposed,
-    reordered,
-    missing_path,
 )
+#: Families that compare entries with one another, which takes its time where there are many.
+TOGETHER: tuple[Family, ...] = (swapped_entries, shifted_entries, transposed, reordered, missing_path)
+#: A story worth this much for each entry it explains needs no other beside it.
+PLAIN = 15.0
 #: About so few entries another story that fits as well is told beside the first.
 FEW = 2
 
@@ -54,10 +54,23 @@ def likely_mistakes(case: Case, ask: Asking | None = None) -> tuple[Diagnosis, .
     """
     if not case.refuted.any():
         return ()
-    found, left = _told(case, [each for family in FAMILIES for each in family(case)], case.refuted.copy())
+    # Wrong claims hold infinities, NaN and zeros to divide by; a story that they lead nowhere is simply not told.
+    with np.errstate(all="ignore"):
+        stories = [each for family in ENTRY_BY_ENTRY for each in family(case)]
+        if not any(_explains_all(case, story) for story in stories):
+            stories += [each for family in TOGETHER for each in family(case)]
+        found, left = _told(case, stories, case.refuted.copy())
     if left.any() and ask is not None:
         found, left = _asked(case, found, left, ask)
-    return (*found, unexplained(case, left)) if left.any() else tuple(found)
+    with np.errstate(all="ignore"):
+        return (*found, unexplained(case, left)) if left.any() else tuple(found)
+
+
+def _explains_all(case: Case, story: Explanation) -> bool:
+    """Whether one story with no fitted number explains every refuted entry exactly."""
+    if story.cost >= FITTED or not (story.where == case.refuted).all():
+        return False
+    return story.worth(case.refuted, case.refuted) >= PLAIN * case.refuted.sum()
 
 
 def _asked(case: Case, found: list[Diagnosis], left: BoolArray, ask: Asking) -> tuple[list[Diagnosis], BoolArray]:
@@ -79,7 +92,7 @@ def _told(case: Case, stories: list[Explanation], left: BoolArray) -> tuple[list
     """The best stories one after another, each about the entries that better ones left; and what is left at the end."""
     found = []
     while left.any() and stories:
-        worths = [story.worth(left) for story in stories]
+        worths = [story.worth(left, case.refuted) for story in stories]
         best = stories[int(np.argmax(worths))]
         if max(worths) < LEAST:
             break
@@ -97,6 +110,6 @@ def _beside(best: Explanation, stories: list[Explanation], where: BoolArray) -> 
     rivals = {
         story.brief: None
         for story in stories
-        if story.brief and story.brief != best.brief and story.where[where].all() and story.worth(where) >= LEAST
+        if story.brief and story.brief != best.brief and story.where[where].all() and story.worth(where, where) >= LEAST
     }
     return f" At this point {' or '.join(list(rivals)[:2])} would fit as well." if rivals else ""

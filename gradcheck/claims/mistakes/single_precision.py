@@ -24,7 +24,7 @@ def single_precision(case: Case) -> Iterator[Explanation]:
     """Every entry agrees to about seven digits; the claims are single precision numbers, or off by different shares."""
     size = np.fmax(np.abs(case.claim), np.abs(case.value))
     # Sums of terms that cancel are off by the spacing of their terms, not of the result.
-    room = LOST * SPACING * np.fmax(size, 1e-3 * np.nanmax(size, axis=1, keepdims=True)) + case.doubt
+    room = LOST * SPACING * np.fmax(size, 1e-3 * np.fmax.reduce(size, axis=1, keepdims=True)) + case.doubt
     with np.errstate(invalid="ignore"):
         near = np.abs(case.claim - case.value) <= room
     if not (near | ~(case.refuted | case.confirmed)).all():
@@ -34,7 +34,7 @@ def single_precision(case: Case) -> Iterator[Explanation]:
     if not exactly and not _scattered(case):
         return
     with np.errstate(all="ignore"):
-        gap = float(np.nanmax(np.where(case.refuted, np.abs(case.claim - case.value) / size, np.nan)))
+        gap = float(np.fmax.reduce((np.abs(case.claim - case.value) / size)[case.refuted]))
     evidence = (
         "every claimed number is one of single precision (float32)"
         if exactly

@@ -12,7 +12,7 @@ from gradcheck.claims.mistakes.where import row_in_words
 from gradcheck.records.arrays import Array, BoolArray, IntArray
 
 #: So many rows are looked at one by one.
-ROWS_MOST = 64
+ROWS_MOST = 16
 #: Matrices with more entries than this are not searched for entries out of place.
 ENTRIES_MOST = 1_000_000
 
