@@ -67,10 +67,14 @@ def compared(
     again = third()
     steady = again is not None and not _parted(second, again, rel_tol, floor).any()
     places = [(int(i), int(j)) for i, j in np.argwhere(changed)]
+    with np.errstate(all="ignore"):
+        apart = np.where(changed, np.abs(first - second) / np.fmax(np.abs(first), np.abs(second)), -1.0)
+    worst = np.unravel_index(int(np.argmax(apart)), apart.shape)
     diagnosis = changing_claim(
         tuple(name(i, j) for i, j in places),
-        first[places[0]],
-        second[places[0]],
+        name(int(worst[0]), int(worst[1])),
+        float(first[worst]),
+        float(second[worst]),
         steady=steady,
         right_at_first=not wrong[0][changed].any(),
         right_at_last=not wrong[1][changed].any(),

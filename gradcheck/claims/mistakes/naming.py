@@ -70,7 +70,7 @@ def _explains_all(case: Case, story: Explanation) -> bool:
     """Whether one story with no fitted number explains every refuted entry exactly."""
     if story.cost >= FITTED or not (story.where == case.refuted).all():
         return False
-    return story.worth(case.refuted, case.refuted) >= PLAIN * case.refuted.sum()
+    return story.worth(case.refuted, case.refuted) >= PLAIN * int(case.refuted.sum())
 
 
 def _asked(case: Case, found: list[Diagnosis], left: BoolArray, ask: Asking) -> tuple[list[Diagnosis], BoolArray]:

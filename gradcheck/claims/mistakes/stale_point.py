@@ -5,9 +5,10 @@ from collections.abc import Sequence
 import numpy as np
 
 from gradcheck.claims.mistakes.case import BOUNDS
+from gradcheck.claims.rule import digits_agreed
 from gradcheck.records.report import CheckReport, Diagnosis
 from gradcheck.records.verdict import DiagnosisCode, Verdict
-from gradcheck.wording import listed, number
+from gradcheck.wording import digits_to_tell_apart, listed, number
 
 #: Relative difference up to which two derivatives at different points count as the same.
 SAME = 1e-7
@@ -16,7 +17,14 @@ LEAST = 2
 
 
 def changing_claim(
-    names: tuple[str, ...], first: float, second: float, *, steady: bool, right_at_first: bool, right_at_last: bool
+    names: tuple[str, ...],
+    worst: str,
+    first: float,
+    second: float,
+    *,
+    steady: bool,
+    right_at_first: bool,
+    right_at_last: bool,
 ) -> Diagnosis:
     """The story of a claim that gives different answers at the same point.
 
@@ -24,14 +32,19 @@ def changing_claim(
     ----------
     names : tuple of str
         The entries that changed.
+    worst : str
+        The one that changed most.
     first, second : float
-        Both answers in the first of these.
+        Both answers there.
     steady : bool
         Whether it gave the second answer again when asked a third time, with nothing in between.
     right_at_first, right_at_last : bool
         Whether the first answers, or the second ones, agree with the witness.
     """
-    values = f"{names[0]} was claimed {number(first, 6)} at first and {number(second, 6)} later, at the same point"
+    digits = digits_to_tell_apart(float(digits_agreed(np.array(first), np.array(second), np.array(0.0))))
+    values = (
+        f"{worst} was claimed {number(first, digits)} at first and {number(second, digits)} later, at the same point"
+    )
     if not steady:
         text = f"{values}, and another number at each call; look for unseeded random numbers or a state that moves on."
         return Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names)
