@@ -80,7 +80,7 @@ def diagnoses_of(
     if not refuted.any():
         return ()
     m = examined.claim.shape[0]
-    whole = columns.size == subject.layout.size
+    judged = subject.layout.size - int(np.sum(subject.domain.integer))
     case = Case(
         kind=kind,
         claim=examined.claim,
@@ -93,7 +93,10 @@ def diagnoses_of(
         name=lambda i, j: entry_name(subject, function, m, i, int(columns[j])),
         x=subject.start[columns],
         variable=lambda j: subject.layout.name(int(columns[j])),
-        blocks=tuple(Block(leaf.path, leaf.start, leaf.shape) for leaf in subject.layout.leaves) if whole else (),
+        blocks=tuple(Block(leaf.path, leaf.start, leaf.shape) for leaf in subject.layout.leaves)
+        if columns.size == subject.layout.size
+        else (),
+        whole=columns.size == judged,
         outputs=outputs,
         values=np.empty(0) if values is None else np.ravel(values),
     )

@@ -517,3 +517,30 @@ def test_arbitrary_wrong_numbers_get_no_story(seed):
     claim[0, :5] = random.standard_normal(5)
 
     assert only(told(claim, right, x=random.uniform(0.2, 3.0, 8))).code == "unknown"
+
+
+def test_of_a_part_of_the_claim_nothing_is_said_about_all_entries():
+    text = only(told(-RIGHT, RIGHT, whole=False)).text
+
+    assert "all" not in text.partition("have")[0]
+    assert only(told(RIGHT / 14, RIGHT, whole=False)).code == "constant-factor"
+
+
+def test_a_hundred_thousand_wrong_entries_are_one_story_in_one_sentence():
+    right = np.random.default_rng(1).standard_normal(100_000)
+    diagnosis = only(told(-right, right))
+
+    assert (diagnosis.code, len(diagnosis.entries)) == ("sign-flipped", 100_000)
+    assert len(diagnosis.text) < 200
+
+
+@pytest.mark.filterwarnings("error")
+@pytest.mark.parametrize("bad", [math.inf, -math.inf, math.nan, 0.0, 1e308, 5e-324])
+@pytest.mark.parametrize("x", [X, 0 * X, -X, np.full(8, math.nan), 1e200 * X], ids=["x", "0", "-x", "nan", "large"])
+def test_no_number_disturbs_the_naming(bad, x):
+    for right in (LONG, 0 * LONG, 1e300 * LONG, 1e-300 * LONG):
+        claim = np.vstack([right, LONG])
+        claim[0, 2:5] = bad
+        names = [n for d in told(claim, np.vstack([right, LONG]), x=x, values=np.array([1.0, 0.0])) for n in d.entries]
+
+        assert len(names) == len(set(names))

@@ -49,6 +49,8 @@ class Case:
         Name of a column's variable.
     blocks : tuple of Block
         Parts of the input, if all their columns were looked at.
+    whole : bool
+        Whether these columns are all that the claim has: of a part, nothing can be said about all entries.
     outputs : tuple of int
         Shape of what the model returns.
     values : ndarray, shape (m,)
@@ -67,6 +69,7 @@ class Case:
     x: Array
     variable: Callable[[int], str] = "x[{}]".format
     blocks: tuple[Block, ...] = ()
+    whole: bool = True
     outputs: tuple[int, ...] = ()
     values: Array = field(default_factory=lambda: np.empty(0))
 
@@ -82,6 +85,11 @@ class Case:
         undecided = ~self.refuted & ~self.confirmed
         marks: BoolArray = ~self.refuted & (zero | undecided)
         return marks
+
+    @property
+    def all_wrong(self) -> bool:
+        """Whether nothing in the whole claim is right but zeros."""
+        return self.whole and bool((self.refuted | self.silent).all())
 
     def margin(self, predicted: Array, doubt: Array) -> Array:
         """How far a claim may be from what a story predicts."""

@@ -127,7 +127,7 @@ def unit_factor(case: Case) -> Iterator[Explanation]:
 def mean_for_sum(case: Case) -> Iterator[Explanation]:
     """All entries are off by a whole number, or by one over it: the number of what is summed."""
     ratio = case.ratios()[case.refuted]
-    if ratio.size < 2 or not (case.refuted | case.silent).all():
+    if ratio.size < 2 or not case.all_wrong:
         return
     for inverse in (False, True):
         with np.errstate(divide="ignore", invalid="ignore"):

@@ -39,6 +39,9 @@ PLAIN = 15.0
 #: About so few entries another story that fits as well is told beside the first.
 FEW = 2
 
+#: So many rows are asked about; each takes eight calls of the claim.
+ROWS_ASKED = 4
+
 #: Whether the claim in some columns of a row is the derivative of any function; None if that could not be asked.
 Asking = Callable[[int, IntArray], bool | None]
 
@@ -76,7 +79,7 @@ def _explains_all(case: Case, story: Explanation) -> bool:
 def _asked(case: Case, found: list[Diagnosis], left: BoolArray, ask: Asking) -> tuple[list[Diagnosis], BoolArray]:
     """What is left may be a part of the derivative of another function, with what lacks a term for sure."""
     lacking = {name for each in found if each.code == DiagnosisCode.MISSING_PATH for name in each.entries}
-    for i in np.flatnonzero(left.any(axis=1)).tolist():
+    for i in np.flatnonzero(left.any(axis=1))[:ROWS_ASKED].tolist():
         asked = np.array(
             [left[i, j] or (case.refuted[i, j] and case.name(i, j) in lacking) for j in range(left.shape[1])]
         )

@@ -16,6 +16,9 @@ def at_point(name: str, place: int) -> str:
 
 def mistakes_at_points(reports: Sequence[CheckReport], labels: Sequence[str] = ()) -> tuple[Diagnosis, ...]:
     """Diagnoses of reports on the same claim, one a point; names of entries say at which."""
+    if len({(report.function, report.kind) for report in reports}) > 1:
+        # Claims about different functions, which say nothing about one another.
+        return tuple(diagnosis for report in reports for diagnosis in report.diagnoses)
     stale = stale_points(reports)
     names = {k: _refuted_names(report, k) for k, report in enumerate(reports)}
     told = [stale_story(stale, names)] if stale else []

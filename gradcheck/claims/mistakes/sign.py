@@ -18,7 +18,7 @@ def sign_flipped(case: Case) -> Iterator[Explanation]:
         return
 
     def tell(left: BoolArray) -> str:
-        if left.sum() > 1 and (left | case.silent).all():
+        if case.all_wrong and left.sum() > 1 and (left | case.silent).all():
             return (
                 f"all {left.sum():,} entries have the opposite sign of the derivative; look for a lost minus in front "
                 "of the whole, or a maximum written as a minimum."

@@ -35,14 +35,15 @@ def single_precision(case: Case) -> Iterator[Explanation]:
         return
     with np.errstate(all="ignore"):
         gap = float(np.fmax.reduce((np.abs(case.claim - case.value) / size)[case.refuted]))
+    part = "" if case.whole else " that was looked at"
     evidence = (
         "every claimed number is one of single precision (float32)"
         if exactly
         else "the errors are those of single precision (float32), another one in each entry"
     )
     text = (
-        f"claim and derivative agree to about {number(gap, 1)} everywhere, and {evidence}; look for float32 in the "
-        "derivative or its data, or ask for less with rel_tol=1e-6."
+        f"claim and derivative agree to about {number(gap, 1)} everywhere{part}, and {evidence}; look for float32 in "
+        "the derivative or its data, or ask for less with rel_tol=1e-6."
     )
     yield Explanation(
         code=DiagnosisCode.SINGLE_PRECISION,

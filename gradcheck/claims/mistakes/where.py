@@ -29,7 +29,7 @@ def filled(case: Case, where: BoolArray, part: BoolArray) -> bool:
 
 
 def _everything(case: Case, where: BoolArray) -> str:
-    if not filled(case, where, np.ones_like(where)):
+    if not case.whole or not filled(case, where, np.ones_like(where)):
         return ""
     return f"all {where.sum():,} entries" if where.all() else f"all {where.sum():,} entries that are not zero"
 
@@ -39,7 +39,7 @@ def _rows_and_columns(case: Case, where: BoolArray) -> str:
     if m == 1:
         return ""
     rows, columns = np.flatnonzero(where.any(axis=1)), np.flatnonzero(where.any(axis=0))
-    if _product(case, where, rows, np.arange(n)):
+    if case.whole and _product(case, where, rows, np.arange(n)):
         return _rows(case, rows)
     if _product(case, where, np.arange(m), columns):
         return f"all outputs by {_variables(case, columns)}"
@@ -47,7 +47,7 @@ def _rows_and_columns(case: Case, where: BoolArray) -> str:
         return f"{_rows(case, rows)} by {_variables(case, columns)}"
     if columns.size == 1 and rows.size > LISTED and 2 * rows.size >= m:
         return f"{rows.size} of the {m} outputs by {_variables(case, columns)}"
-    if rows.size == 1 and columns.size > LISTED and 2 * columns.size >= n:
+    if case.whole and rows.size == 1 and columns.size > LISTED and 2 * columns.size >= n:
         return f"{columns.size} of the {n} entries of {_rows(case, rows)}"
     return ""
 
