@@ -85,7 +85,13 @@ def compared(
         reason[place] = f"asked again at the same point the claim gave {number(second[place], 6)}"
         if len(places) > 1:  # one sentence for all of them, and not one for each
             reason[place] = "asked again at the same point, the claim gave another number"
-    return Repeated(examined=replace(examined, verdict=verdict, reason=reason), changed=changed, diagnoses=(diagnosis,))
+    # The answer that is wrong is the one to show.
+    shown = np.where(changed & ~wrong[0], second, first)
+    return Repeated(
+        examined=replace(examined, claim=shown, verdict=verdict, reason=reason),
+        changed=changed,
+        diagnoses=(diagnosis,),
+    )
 
 
 def _parted(a: Array, b: Array, rel_tol: float, doubt: Array) -> BoolArray:

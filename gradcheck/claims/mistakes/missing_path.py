@@ -21,6 +21,8 @@ CONSTANTS_MOST = 20
 PLACES_MOST = 500
 #: So many entries must hold the same before they are said to hold nothing else.
 LEAST_HELD = 3
+#: Relative difference up to which all rows lack the same.
+SAME = 1e-6
 
 
 def missing_path(case: Case) -> Iterator[Explanation]:
@@ -174,10 +176,21 @@ def _one_intermediate(case: Case) -> Iterator[Explanation]:
         where=where,
         bits=bits,
         cost=COST,
-        tell=lambda left: (
-            f"{in_words(case, left)}: what the claim lacks is one column times one row, in all {left.sum()} entries: "
-            "the path through one intermediate quantity, which these outputs depend on, is left out (or counted twice)."
-        ),
+        tell=partial(_intermediate, case, same=bool(np.ptp(column / missing[i, j]) <= SAME)),
+    )
+
+
+def _intermediate(case: Case, left: BoolArray, same: bool) -> str:
+    if same:
+        what, path = "the same in every row", "a term that all these outputs share"
+    else:
+        what, path = (
+            "one column times one row",
+            "the path through one intermediate quantity, on which all of them depend,",
+        )
+    return (
+        f"{in_words(case, left)}: what the claim lacks is {what}, in all {left.sum()} entries; {path} is left out (or "
+        "counted twice)."
     )
 
 

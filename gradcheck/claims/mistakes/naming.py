@@ -36,6 +36,8 @@ ENTRY_BY_ENTRY: tuple[Family, ...] = (
 TOGETHER: tuple[Family, ...] = (swapped_entries, shifted_entries, transposed, reordered, missing_path)
 #: A story worth this much for each entry it explains needs no other beside it.
 PLAIN = 15.0
+#: What it is worth that no second story is needed.
+ALONE = 40.0
 #: About so few entries another story that fits as well is told beside the first.
 FEW = 2
 
@@ -95,10 +97,11 @@ def _told(case: Case, stories: list[Explanation], left: BoolArray) -> tuple[list
     """The best stories one after another, each about the entries that better ones left; and what is left at the end."""
     found = []
     while left.any() and stories:
-        worths = [story.worth(left, case.refuted) for story in stories]
-        best = stories[int(np.argmax(worths))]
-        if max(worths) < LEAST:
+        worths = np.array([story.worth(left, case.refuted) for story in stories])
+        if worths.max() < LEAST:
             break
+        alone = np.array([bool(story.where[left].all()) for story in stories])
+        best = stories[int(np.argmax(worths + np.where(alone & (worths >= LEAST), ALONE, 0.0)))]
         where = best.where & left
         text = best.tell(where) + _beside(best, stories, where)
         found.append(Diagnosis(code=best.code, text=text, entries=case.names(where)))
