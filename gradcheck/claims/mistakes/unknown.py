@@ -24,7 +24,8 @@ def unexplained(case: Case, left: BoolArray) -> Diagnosis:
         text = (
             f"{shown}: claim and derivative agree to {int(-np.log10(gap))} digits, so no term of any weight is wrong. "
             "If the model iterates to a tolerance, the derivative of the program differs from the exact one by about "
-            "as much; tighten it and check again. Otherwise look for a small term, or constants with few digits."
+            "as much; tighten it and check again. Otherwise look for single precision (float32), a small term, or "
+            "constants with few digits."
         )
     elif not np.isfinite(case.claim[left]).any():
         text = f"{shown}: the claim is not a finite number; look for 0/0, log(0) or an overflow in it."
