@@ -129,6 +129,10 @@ def check(
 
     Notes
     -----
+    A claim that is a callable is called once more at the end, after the model was evaluated elsewhere: one that then
+    answers something else is refuted. Where no likely mistake explains what is wrong, it is called at eight more points
+    nearby, within the bounds.
+
     A claim that is NaN where the witness is finite is refuted. Values given as integers, lists or float32 reach the
     model as float64, and the report says so.
 

@@ -4,10 +4,13 @@ import time
 
 import numpy as np
 
+from gradcheck.checks.asked_again import asking, second_answer
 from gradcheck.checks.claimed import claimed_matrix
-from gradcheck.claims.entries import diagnoses_of, entries_of
+from gradcheck.claims.desk import Examined
+from gradcheck.claims.entries import diagnoses_of, entries_of, entry_name, floor_of
 from gradcheck.claims.examination import examine
 from gradcheck.claims.policy import DEFAULT_REL_TOL, REL_TOL, Rules
+from gradcheck.claims.repeated_answers import Repeated, compared
 from gradcheck.counsel.claim_findings import kinks_at_point, levels_at_point, mutation
 from gradcheck.errors import UsageError
 from gradcheck.evaluation.conduct import addressed, conduct_one
@@ -47,6 +50,8 @@ def checked_entries(
         witnesses=rules.witnesses,
     )
     examined = conduct_one(addressed(inquiry, function=function), session.gate)
+    repeated = _asked_again(session, function, kind, examined, columns, rel_tol, rules.abs_tol)
+    examined = repeated.examined
     findings: list[Finding] = [failure] if failure else []
     findings += kinks_at_point(subject, function, examined.left, examined.right, columns)
     findings += levels_at_point(subject, function, examined.jumps, examined.stairs, columns)
@@ -60,12 +65,56 @@ def checked_entries(
         entries=entries,
         diagnoses=_raised(failure, entries)
         if failure
-        else diagnoses_of(subject, function, kind, examined, columns, rel_tol, rules.abs_tol),
+        else (
+            *repeated.diagnoses,
+            *diagnoses_of(
+                subject,
+                function,
+                kind,
+                examined,
+                columns,
+                rel_tol,
+                rules.abs_tol,
+                outputs=session.shape_of(function),
+                values=centre,
+                told=repeated.changed,
+                ask=asking(session, function, kind, columns),
+            ),
+        ),
         findings=tuple(findings),
         notices=(*session.ledger.notices, *_left_out(subject), *_few_digits(precision, rules.rel_tol)),
         evaluations=session.ledger.evaluations - before,
         seconds=time.perf_counter() - began,
         renderer=check_text,
+    )
+
+
+def _asked_again(
+    session: Session,
+    function: str,
+    kind: str,
+    examined: Examined,
+    columns: IntArray,
+    rel_tol: float,
+    abs_tol: float,
+) -> Repeated:
+    """The entries once the claim has answered again, the model having been evaluated elsewhere in between."""
+    subject, m = session.subject, examined.claim.shape[0]
+    second = second_answer(session, function, kind)
+    if second is None:
+        return Repeated(examined=examined, changed=np.zeros(examined.claim.shape, bool))
+
+    def third() -> Array | None:
+        answer = second_answer(session, function, kind)
+        return None if answer is None else answer[:, columns]
+
+    return compared(
+        examined,
+        second[:, columns],
+        third,
+        rel_tol,
+        floor_of(subject, examined, columns, abs_tol),
+        lambda i, j: entry_name(subject, function, m, i, int(columns[j])),
     )
 
 

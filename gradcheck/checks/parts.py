@@ -48,8 +48,8 @@ def picked(examined: Examined, which: Any) -> Examined:
     return replace(examined, **{name: getattr(examined, name)[which] for name in FIELDS})
 
 
-def case_of(examined: Examined, names: NDArray[np.object_], measure: Measure) -> Case:
-    """Examined entries (a, b) as families of mistakes see them."""
+def case_of(examined: Examined, names: NDArray[np.object_], measure: Measure, *, whole: bool = True) -> Case:
+    """Examined entries (a, b) as families of mistakes see them; `whole` if they are all that the claim has."""
     size = np.fmax(np.abs(examined.claim), np.abs(examined.value))
     rounding = ALLOWANCE * measure.unit_roundoff * np.nan_to_num(size)
     return Case(
@@ -57,9 +57,13 @@ def case_of(examined: Examined, names: NDArray[np.object_], measure: Measure) ->
         claim=examined.claim,
         value=examined.value,
         bound=examined.bound,
-        tolerance=measure.abs_tol + measure.rel_tol * size + rounding,
         refuted=np.asarray(examined.verdict == Verdict.REFUTED),
+        confirmed=np.asarray(examined.verdict == Verdict.CONFIRMED),
+        rel_tol=measure.rel_tol,
+        floor=measure.abs_tol + rounding,
         name=lambda i, j: str(names[i, j]),
+        x=np.full(examined.claim.shape[1], np.nan),
+        whole=whole,
     )
 
 

@@ -153,7 +153,7 @@ def _diagnoses(look: Curvatures, seen: Seen, found: list[Contradiction]) -> tupl
     units = None if seen.matrix is None else case_of(seen.matrix, seen.names, look.measure)
     rest = None if seen.rest is None else case_of(seen.rest, seen.rest_names, look.measure)
     if seen.narrowed is not None:
-        return likely_mistakes(case_of(seen.narrowed, seen.names, look.measure))
+        return likely_mistakes(case_of(seen.narrowed, seen.names, look.measure, whole=False))
     conduct = _conduct(look, [each.broken for each in found])
     indifferent_to_size = bool(conduct.same or conduct.by_sign)
     if units is not None and look.outputs == 1 and units.refuted.any() and not indifferent_to_size:

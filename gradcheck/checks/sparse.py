@@ -18,6 +18,7 @@ from gradcheck.claims.slot_looks import UNEXPLAINED
 from gradcheck.claims.sparse_examination import SparseExamined, examine_sparse
 from gradcheck.counsel.claim_findings import mutation
 from gradcheck.counsel.sparsity_stories import (
+    Judged,
     Named,
     detection_words,
     diagnoses_of_faults,
@@ -121,7 +122,11 @@ def checked_jointly(
         repeated,
         name,
         kind,
-        lambda at: _tolerance(table, at, accuracy, centre, subject.domain.scale),
+        Judged(
+            rel_tol=accuracy.rel_tol,
+            floor=lambda at: _floor(table, at, accuracy, centre, subject.domain.scale),
+            start=subject.start,
+        ),
         declared,
     )
     diagnoses += diagnoses_of_rows(function, np.flatnonzero(_unexplained(examined)), examined.factor)
@@ -221,11 +226,9 @@ def _unexplained(examined: SparseExamined) -> BoolArray:
     return examined.unexplained & ~(unseen & examined.by_entry)
 
 
-def _tolerance(table: EntryTable, at: IntArray, accuracy: Accuracy, centre: Array, scale: Array) -> Array:
-    size = np.fmax(np.abs(table.claim[at]), np.abs(table.value[at]))
-    floor = accuracy.unit_roundoff * np.abs(centre[table.row[at]])
-    tolerance: Array = accuracy.abs_tol + accuracy.rel_tol * size + ALLOWANCE * floor / scale[table.column[at]]
-    return tolerance
+def _floor(table: EntryTable, at: IntArray, accuracy: Accuracy, centre: Array, scale: Array) -> Array:
+    rounding = accuracy.unit_roundoff * np.abs(centre[table.row[at]])
+    return np.asarray(accuracy.abs_tol + ALLOWANCE * rounding / scale[table.column[at]])
 
 
 def _entries(table: EntryTable, examined: SparseExamined, faults: Faults, name: Named) -> Entries:

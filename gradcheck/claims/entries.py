@@ -7,12 +7,13 @@ from typing import Any
 import numpy as np
 
 from gradcheck.claims.desk import Examined
-from gradcheck.claims.mistakes.case import Case
-from gradcheck.claims.mistakes.naming import likely_mistakes
+from gradcheck.claims.mistakes.case import Block, Case
+from gradcheck.claims.mistakes.naming import Asking, likely_mistakes
+from gradcheck.claims.mistakes.points import mistakes_at_points
 from gradcheck.claims.rule import ALLOWANCE
 from gradcheck.problem.subject import Subject
-from gradcheck.records.arrays import IntArray
-from gradcheck.records.report import CheckReport, Entries
+from gradcheck.records.arrays import Array, BoolArray, IntArray
+from gradcheck.records.report import CheckReport, Diagnosis, Entries
 from gradcheck.records.verdict import Verdict
 
 
@@ -48,25 +49,65 @@ def entry_name(subject: Subject, function: str, outputs: int, row: int, column: 
 
 
 def diagnoses_of(
-    subject: Subject, function: str, kind: str, examined: Examined, columns: IntArray, rel_tol: float, abs_tol: float
-) -> tuple[Any, ...]:
-    if Verdict.REFUTED not in examined.verdict.ravel().tolist():
+    subject: Subject,
+    function: str,
+    kind: str,
+    examined: Examined,
+    columns: IntArray,
+    rel_tol: float,
+    abs_tol: float,
+    *,
+    outputs: tuple[int, ...] = (),
+    values: Array | None = None,
+    told: BoolArray | None = None,
+    ask: Asking | None = None,
+) -> tuple[Diagnosis, ...]:
+    """Likely mistakes behind the refuted entries.
+
+    Parameters
+    ----------
+    outputs : tuple of int
+        Shape of what the model returns.
+    values : ndarray, shape (m,), optional
+        What it returns at the point.
+    told : ndarray of bool, shape (m, d), optional
+        Entries about which something was said already.
+    ask : callable, optional
+        See `likely_mistakes`.
+    """
+    refuted = np.asarray(examined.verdict == Verdict.REFUTED)
+    if told is not None:
+        refuted = refuted & ~told
+    if not refuted.any():
         return ()
-    refuted = examined.verdict == Verdict.REFUTED
-    size = np.fmax(np.abs(examined.claim), np.abs(examined.value))
-    noise = np.nan_to_num(examined.noise)[:, None] / subject.domain.scale[None, columns]
     m = examined.claim.shape[0]
-    return likely_mistakes(
-        Case(
-            kind=kind,
-            claim=examined.claim,
-            value=examined.value,
-            bound=examined.bound,
-            tolerance=abs_tol + rel_tol * size + ALLOWANCE * noise,
-            refuted=refuted,
-            name=lambda i, j: entry_name(subject, function, m, i, int(columns[j])),
-        )
+    judged = subject.layout.size - int(np.sum(subject.domain.integer))
+    case = Case(
+        kind=kind,
+        claim=examined.claim,
+        value=examined.value,
+        bound=examined.bound,
+        refuted=refuted,
+        confirmed=np.asarray(examined.verdict == Verdict.CONFIRMED),
+        rel_tol=rel_tol,
+        floor=np.broadcast_to(floor_of(subject, examined, columns, abs_tol), examined.claim.shape),
+        name=lambda i, j: entry_name(subject, function, m, i, int(columns[j])),
+        x=subject.start[columns],
+        variable=lambda j: subject.layout.name(int(columns[j])),
+        blocks=tuple(Block(leaf.path, leaf.start, leaf.shape) for leaf in subject.layout.leaves)
+        if columns.size == subject.layout.size
+        else (),
+        whole=columns.size == judged,
+        outputs=outputs,
+        values=np.empty(0) if values is None else np.ravel(values),
     )
+    return likely_mistakes(case, ask)
+
+
+def floor_of(subject: Subject, examined: Examined, columns: IntArray, abs_tol: float) -> Array:
+    """Absolute error (m, d) that the caller allows, and rounding may leave, in a right claim."""
+    noise = np.nan_to_num(examined.noise)[:, None] / subject.domain.scale[None, columns]
+    return np.asarray(abs_tol + ALLOWANCE * noise)
 
 
 def merged(reports: Sequence[CheckReport]) -> CheckReport:
@@ -88,7 +129,7 @@ def merged(reports: Sequence[CheckReport]) -> CheckReport:
         worst,
         verdict=Verdict.overall([report.verdict for report in reports]),
         entries=entries,
-        diagnoses=tuple(d for report in reports for d in report.diagnoses),
+        diagnoses=mistakes_at_points(reports),
         findings=tuple(f for report in reports for f in report.findings),
         notices=tuple(dict.fromkeys(n for report in reports for n in report.notices)),
         evaluations=sum(report.evaluations for report in reports),

@@ -1,6 +1,7 @@
 """What the faults of a sparse claim come to: diagnoses and findings with their sentences."""
 
 from collections.abc import Callable, Sequence
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -28,13 +29,22 @@ SAME_ROW_FACTOR, ROW_STORIES_MOST = 1e-5, 4
 EXPLAINED_MOST = 5_000
 
 
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Judged:
+    """How entries were judged: relative tolerance, absolute one with its share of rounding, and the point."""
+
+    rel_tol: float
+    floor: Callable[[IntArray], Array]
+    start: Array
+
+
 def diagnoses_of_faults(
     table: EntryTable,
     faults: Faults,
     repeated: Sequence[Repetition],
     name: Named,
     kind: str,
-    tolerance: Callable[[IntArray], np.ndarray[tuple[int, ...], np.dtype[np.float64]]],
+    judged: Judged,
     declared: bool,
 ) -> tuple[Diagnosis, ...]:
     """Likely mistakes: the whole claim transposed, or else what is misplaced, missing and wrong."""
@@ -50,7 +60,7 @@ def diagnoses_of_faults(
         diagnoses.append(_missing(table, missing, repeated, name, declared))
     wrong = np.array([at for at in faults.wrong.tolist() if at not in explained], dtype=np.intp)
     if wrong.size:
-        diagnoses += _wrong(table, wrong, repeated, name, kind, tolerance)
+        diagnoses += _wrong(table, wrong, repeated, name, kind, judged)
     return tuple(diagnoses)
 
 
@@ -129,7 +139,7 @@ def _wrong(
     repeated: Sequence[Repetition],
     name: Named,
     kind: str,
-    tolerance: Callable[[IntArray], np.ndarray[tuple[int, ...], np.dtype[np.float64]]],
+    judged: Judged,
 ) -> list[Diagnosis]:
     """The usual families of mistakes, asked about the wrong entries alone, as if they stood in one row."""
     diagnoses = []
@@ -155,9 +165,13 @@ def _wrong(
                 claim=table.claim[None, wrong],
                 value=table.value[None, wrong],
                 bound=table.bound[None, wrong],
-                tolerance=tolerance(wrong)[None, :],
                 refuted=np.ones((1, wrong.size), bool),
+                confirmed=np.zeros((1, wrong.size), bool),
+                rel_tol=judged.rel_tol,
+                floor=judged.floor(wrong)[None, :],
                 name=lambda i, j: name(int(table.row[wrong[j]]), int(table.column[wrong[j]])),
+                x=judged.start[table.column[wrong]],
+                whole=False,
             )
         )
     )

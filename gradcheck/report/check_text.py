@@ -1,5 +1,6 @@
 """What `check` found, as plain text for someone in a hurry: verdict, likely mistake, worst entries, cost."""
 
+import re
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -20,6 +21,11 @@ _MISTAKES, _REASONS = 4, 6
 
 #: Digits of a claim that is not refuted; there is nothing to tell apart.
 _DIGITS_ELSEWHERE = 6
+
+#: How sentences call many entries at once (`claims/mistakes/where.py`).
+_IN_WORDS = re.compile(
+    r"\ball ([\d,]+ )?(entries|outputs|rows|columns)\b|\brows? \d|\bpoints? \d|\d+ entries\b|and [\d,]+ more\b"
+)
 
 _RANK = {Verdict.REFUTED: 0, Verdict.UNDECIDED: 1, Verdict.CONFIRMED: 2}
 
@@ -209,9 +215,14 @@ def _figures(entry: _Entry, most: int) -> tuple[str, str]:
 def _diagnosis_lines(diagnosis: Diagnosis, indent: int) -> list[str]:
     lines = paragraph(f"{wording.DIAGNOSIS_WORDS[diagnosis.code]} ({diagnosis.code})", indent, first="Likely mistake: ")
     lines += paragraph(diagnosis.text, indent + 2)
-    if any(name not in diagnosis.text for name in diagnosis.entries):
+    if not _placed(diagnosis):
         lines += paragraph(wording.listed(diagnosis.entries), indent + 2, first="where: ")
     return lines
+
+
+def _placed(diagnosis: Diagnosis) -> bool:
+    """Whether the sentence itself says which entries: by their names, or by the part that they fill."""
+    return bool(_IN_WORDS.search(diagnosis.text)) or all(name in diagnosis.text for name in diagnosis.entries)
 
 
 def _worst_lines(entries: Entries, indent: int, rows: int) -> list[str]:

@@ -1,21 +1,34 @@
 """Entries with the wrong sign."""
 
+from collections.abc import Iterator
+
 from gradcheck.claims.mistakes.case import Case
-from gradcheck.records.report import Diagnosis
+from gradcheck.claims.mistakes.explanation import Explanation
+from gradcheck.claims.mistakes.where import in_words
+from gradcheck.records.arrays import BoolArray
 from gradcheck.records.verdict import DiagnosisCode
-from gradcheck.wording import listed
+
+COST = 2.0
 
 
-def sign_flipped(case: Case) -> Diagnosis | None:
+def sign_flipped(case: Case) -> Iterator[Explanation]:
     """The claim is minus the witness."""
-    where = case.explains(-case.value)
+    where = case.refuted & case.met(-case.value, case.doubt)
     if not where.any():
-        return None
-    names = case.names(where)
-    rest = "all refuted entries have" if where.sum() == case.refuted.sum() else f"{listed(names)}:"
-    text = (
-        f"{rest} the opposite sign of the derivative; look for a lost minus, or a maximum written as a minimum."
-        if where.sum() == case.refuted.sum()
-        else f"{rest} the claim has the opposite sign of the derivative; look for a lost minus in these terms."
+        return
+
+    def tell(left: BoolArray) -> str:
+        if case.all_wrong and left.sum() > 1 and (left | case.silent).all():
+            return (
+                f"all {left.sum():,} entries have the opposite sign of the derivative; look for a lost minus in front "
+                "of the whole, or a maximum written as a minimum."
+            )
+        verb = "has" if left.sum() == 1 else "have"
+        return (
+            f"{in_words(case, left)} {verb} the opposite sign of the derivative, to all digits; look for a lost minus "
+            "in these terms."
+        )
+
+    yield Explanation(
+        code=DiagnosisCode.SIGN_FLIPPED, where=where, bits=case.bits(-case.value, case.doubt), cost=COST, tell=tell
     )
-    return Diagnosis(code=DiagnosisCode.SIGN_FLIPPED, text=text, entries=names)

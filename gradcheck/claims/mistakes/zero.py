@@ -1,19 +1,32 @@
 """Entries that are claimed to be zero although the function depends on the variable."""
 
-from gradcheck.claims.mistakes.case import Case
-from gradcheck.records.report import Diagnosis
+from collections.abc import Iterator
+
+import numpy as np
+
+from gradcheck.claims.mistakes.case import MOST_BITS, Case
+from gradcheck.claims.mistakes.explanation import Explanation
+from gradcheck.claims.mistakes.where import in_words
+from gradcheck.records.arrays import BoolArray
 from gradcheck.records.verdict import DiagnosisCode
-from gradcheck.wording import listed
+from gradcheck.wording import number
+
+COST = 6.0
 
 
-def zero_entry(case: Case) -> Diagnosis | None:
+def zero_entry(case: Case) -> Iterator[Explanation]:
     """The claim is exactly zero, the witness is not."""
     where = case.refuted & (case.claim == 0)
     if not where.any():
-        return None
-    names = case.names(where)
-    text = (
-        f"{listed(names)}: claimed as exactly zero, but the function does change with it; "
-        "look for a term that was never filled in."
-    )
-    return Diagnosis(code=DiagnosisCode.ZERO_ENTRY, text=text, entries=names)
+        return
+
+    def tell(left: BoolArray) -> str:
+        found = case.value[left]
+        size = f" (by {number(found[0], 4)})" if found.size == 1 else ""
+        return (
+            f"{in_words(case, left)}: claimed as exactly zero, but the function does change with it{size}; "
+            "look for a term that was never filled in."
+        )
+
+    bits = np.full(case.claim.shape, MOST_BITS)
+    yield Explanation(code=DiagnosisCode.ZERO_ENTRY, where=where, bits=bits, cost=COST, tell=tell)

@@ -1,0 +1,42 @@
+"""The user's claim asked once more: at the end of a check, and around the point where no story explains it."""
+
+import numpy as np
+
+from gradcheck.claims.closedness import derivative_of_something
+from gradcheck.claims.mistakes.naming import Asking
+from gradcheck.evaluation.conduct import addressed, conduct_one
+from gradcheck.evaluation.pipeline import Session
+from gradcheck.evaluation.protocol import Request, Status
+from gradcheck.records.arrays import Array, IntArray
+
+
+def second_answer(session: Session, function: str, kind: str) -> Array | None:
+    """What a claim answers when it is called again at the start point; None if it is no callable, or raises."""
+    subject = session.subject
+    if not callable(subject.targets[function].claims[kind]):
+        return None
+    request = Request(
+        base=subject.start,
+        directions=np.zeros(1, dtype=np.intp),
+        offsets=np.zeros((1, 1)),
+        source=f"claim:{kind}",
+        function=function,
+        fresh=True,
+    )
+    reply = session.gate([request])[0]
+    return reply.values[0] if int(reply.status[0, 0]) in (Status.OK, Status.NONFINITE) else None
+
+
+def asking(session: Session, function: str, kind: str, columns: IntArray) -> Asking | None:
+    """How to ask whether a part of the claim is the derivative of some function; None where that cannot be asked."""
+    subject = session.subject
+    if not callable(subject.targets[function].claims[kind]):
+        return None
+
+    def ask(row: int, part: IntArray) -> bool | None:
+        inquiry = derivative_of_something(
+            subject.start, columns[part], row, subject.domain.scale, subject.domain.lower, subject.domain.upper, kind
+        )
+        return conduct_one(addressed(inquiry, function=function), session.gate)
+
+    return ask
