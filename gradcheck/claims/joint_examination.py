@@ -5,11 +5,12 @@ right, and new directions look again: they find what cancelled by chance, and ar
 is accused.
 """
 
+import math
 from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from gradcheck.claims.directions import GROUPS, LEAST, Allowed, Group, Moves, allowed_along, moves_of, with_level
+from gradcheck.claims.directions import GROUPS, Allowed, Group, Moves, allowed_along, moves_of, with_level
 from gradcheck.claims.localisation import Located, Part, Search, wrong_entries
 from gradcheck.claims.rule import REFUTING_BOUNDS
 from gradcheck.evaluation.protocol import Inquiry
@@ -28,6 +29,9 @@ USUAL = {Group.SCALED: 4, Group.ZERO: 2, Group.INWARD: 2}
 RAISED_MOST = 1e3
 #: The search begins anew after every pass that found something; it ends after so many quiet directions, or passes.
 QUIET, PASSES = 2, 8
+#: A claim that is off by this share of its terms or more may be a multiple of the derivative everywhere; so many
+#: directions must say so.
+LARGE, ALIKE = 0.1, 3
 #: Directions of later passes have other seeds.
 _PASS, _GROUP = 1000, 100
 
@@ -92,8 +96,12 @@ class JointlyExamined:
         Wrong entries; `agreed` says whether a second look stands behind them.
     agreed : bool
         New directions found nothing once the culprits were put right.
+    quiet : list of Direction
+        Directions of the claim with the culprits put right.
     parts : list of Part
         Parts that hold more wrong entries than can be named one by one.
+    ratio : float
+        Where the claim is the same multiple of the derivative along several directions: that multiple; else NaN.
     refused : bool
         The budget or the time ended.
     noise : float
@@ -103,7 +111,9 @@ class JointlyExamined:
     directions: list[Direction] = field(default_factory=list)
     culprits: list[Culprit] = field(default_factory=list)
     agreed: bool = True
+    quiet: list[Direction] = field(default_factory=list)
     parts: list[Part] = field(default_factory=list)
+    ratio: float = np.nan
     refused: bool = False
     noise: float = np.nan
 
@@ -213,7 +223,7 @@ class _Examination:
         for first in range(0, row.size, 1 << 16):
             part = slice(first, first + (1 << 16))
             total += float(np.nansum((self.mended[part] * row[part]) ** 2))
-        return total**0.5
+        return math.sqrt(total)
 
     def _judged(self, group: Group, seed: int) -> Inquiry[Direction]:
         """The verdict along one direction of the claim, as mended so far; the whole witness is heard in doubt."""
@@ -274,6 +284,8 @@ class _Examination:
 
     def _search(self, group: Group, seed: int, direction: Direction) -> Inquiry[None]:
         """Find the wrong entries of a group; new directions look again until they find nothing more."""
+        if (yield from self._one_factor(group, seed, direction)):
+            return
         quiet, passes = 0, 0
         while quiet < QUIET and passes < PASSES:
             if direction.verdict == Verdict.CONFIRMED:
@@ -290,10 +302,30 @@ class _Examination:
             if quiet < QUIET:
                 seed = self._seed_of(group, _PASS * (passes + 1) + quiet)
                 direction = yield from self._judged(group, seed)
+                self.result.quiet.append(direction)
                 if self.result.refused or direction.verdict == Verdict.UNDECIDED:
                     self.result.agreed = False
                     return
         self.result.agreed &= quiet >= QUIET
+
+    def _one_factor(self, group: Group, seed: int, first: Direction) -> Inquiry[bool]:
+        """Whether the claim is the same multiple of the derivative along several directions.
+
+        Asked only where what is off is as large as the sum of all terms would be: few wrong entries cannot do that.
+        """
+        row = self.result.moves.row(group, seed, 0, self.base.size)
+        if abs(first.claim - first.witness) < LARGE * self._spread(row) or not abs(first.witness) > first.bound:
+            return False
+        ratio = first.claim / first.witness
+        for number in range(1, ALIKE):
+            other = yield from self._judged(group, self._seed_of(group, number))
+            self.result.directions.append(other)
+            doubt = abs(ratio) * (other.bound + first.bound * abs(other.witness / first.witness))
+            if not abs(other.claim - ratio * other.witness) <= doubt + abs(ratio) * other.allowed.plain:
+                return False
+        self.result.ratio, self.result.agreed = ratio, False
+        self.result.parts = [Part(start=0, stop=self.base.size, gap=first.claim - first.witness, bound=first.bound)]
+        return True
 
     def _located(self, group: Group, seed: int, direction: Direction) -> Inquiry[Located]:
         search = Search(
@@ -369,6 +401,3 @@ def _wobble(base: Array, claim: Array) -> float:
         with np.errstate(invalid="ignore", over="ignore"):
             total += float(np.nansum((claim[part] * base[part]) ** 2))
     return 0.3 * np.finfo(float).eps * total**0.5 if np.isfinite(total) else 0.0
-
-
-__all__ = ["LEAST", "Culprit", "Direction", "JointlyExamined", "examine_jointly"]

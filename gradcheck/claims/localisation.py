@@ -155,9 +155,7 @@ def wrong_entries(search: Search, root: Part, allowed: float) -> Inquiry[Located
             narrowed = None
             if probable >= LIKELY_SINGLE or part is root:
                 narrowed = yield from _single(search, part, limit, found)
-            if found.refused:
-                return found
-            if narrowed is None:
+            if narrowed is None and not found.refused:
                 below += yield from _halves(search, part, limit, found)
             if found.refused:
                 return found
@@ -222,7 +220,7 @@ def _halves(search: Search, part: Part, limit: float, found: Located) -> Inquiry
     right_limit = search.allowed(search.moves.row(search.group, search.seed, middle, part.stop))
     threshold = right_limit + right.bound
     unclear = threshold / UNCLEAR < abs(right.gap) < threshold * UNCLEAR
-    if unclear or right.measurements > INFERRED_MOST or right.size == 1 and abs(right.gap) > threshold / UNCLEAR:
+    if unclear or right.measurements > INFERRED_MOST or (right.size == 1 and abs(right.gap) > threshold / UNCLEAR):
         measured = yield from search.measure(middle, part.stop, part.gap)
         if measured is None:
             found.refused = True

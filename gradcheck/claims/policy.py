@@ -96,7 +96,8 @@ class Policy:
         if report.verdict == Verdict.REFUTED and self.on_refuted == "raise":
             raise DerivativeMismatch(report)
         if report.verdict == Verdict.UNDECIDED and self.on_undecided != "pass":
-            everything = all(verdict == Verdict.UNDECIDED for verdict in report.entries.verdict)
+            along = () if report.directions is None else report.directions.verdict
+            everything = all(verdict == Verdict.UNDECIDED for verdict in (*report.entries.verdict, *along))
             if self.on_undecided == "raise" or everything:
                 raise DerivativeMismatch(report)
             warnings.warn(str(report), UndecidedWarning, stacklevel=stacklevel + 1)

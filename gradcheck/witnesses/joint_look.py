@@ -173,7 +173,7 @@ class Sight:
             return True
         slope = float(reply.values[0, 0, 0] - reply.values[0, 1, 0]) / (2 * CLOSE)
         rounding = CLOSE_DEVIATIONS * max(np.finfo(float).eps * (abs(self.centre[0]) + terms), self.noise) / CLOSE
-        return abs(slope - claimed) <= rounding + CLOSE_SHARE * terms
+        return bool(abs(slope - claimed) <= rounding + CLOSE_SHARE * terms)
 
 
 def _truncation(pairs: Pairs, spread: float) -> float:
