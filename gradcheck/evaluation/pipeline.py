@@ -211,7 +211,9 @@ def _derivative_reply(request: Request, outcome: Outcome, width: int, size: int)
     name = request.function
     status = int(outcome.status[name][0]) if name in outcome.status else int(Status.REFUSED)
     if name in outcome.values:
-        values = outcome.values[name][0].copy()
+        # Not copied: a claim may have a million entries. What is remembered cannot be written to.
+        values = outcome.values[name][0].view()
+        values.setflags(write=False)
         # A claim is one matrix (m, n), not one row per direction.
         values = values[None] if request.source.startswith("claim:") else values[:, None, :]
     else:

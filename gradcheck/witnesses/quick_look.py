@@ -265,7 +265,8 @@ def measured_pairs(base: Array, directions: Directions, rows: IntArray, steps: A
     if directions.ndim == 1:
         x = base[directions[rows]][:, None]
         moved = (x + offsets) - x
-    reply = yield Request(base=base, directions=directions[rows], offsets=moved)
+    chosen = directions if rows.size == len(directions) else directions[rows]
+    reply = yield Request(base=base, directions=chosen, offsets=moved)
     return Pairs.of((moved[:, 0::2] - moved[:, 1::2]) / 2, reply, centre)
 
 
