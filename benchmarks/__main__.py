@@ -15,6 +15,7 @@ BENCHMARKS = (
     "solver_steps",
     "verdicts",
     "slight_errors",
+    "large",
     "cost",
 )
 

@@ -313,8 +313,10 @@ class _Examination:
 
         Asked only where what is off is as large as the sum of all terms would be: few wrong entries cannot do that.
         """
+        if group is Group.ZERO or not abs(first.witness) > first.bound:
+            return False
         row = self.result.moves.row(group, seed, 0, self.base.size)
-        if abs(first.claim - first.witness) < LARGE * self._spread(row) or not abs(first.witness) > first.bound:
+        if abs(first.claim - first.witness) < LARGE * self._spread(row):
             return False
         ratio = first.claim / first.witness
         for number in range(1, ALIKE):

@@ -102,7 +102,7 @@ class Search:
         More digits than a share of what is off `within` the larger part are not asked for, but of single entries.
         """
         row = self.moves.row(self.group, self.seed, start, stop, graded=graded)
-        allowed = self.allowed(row)
+        allowed = self.allowed(row, start, stop)
         coarse = 0.0 if stop - start == 1 else DIGITS * abs(within)
         spread = float(np.linalg.norm(self.claim[start:stop] * row[start:stop]))
         seen = yield from self.sight.along(row, max(allowed / 3, coarse), spread)
@@ -111,11 +111,13 @@ class Search:
         gap = float(np.dot(np.nan_to_num(self.claim[start:stop]), row[start:stop])) - seen.value
         return Part(start=start, stop=stop, gap=gap, bound=seen.bound), allowed
 
-    def allowed(self, row: Array) -> float:
+    def allowed(self, row: Array, start: int, stop: int) -> float:
+        """What the claim may be off along a row that moves these entries only."""
+        part = slice(start, stop)
         return allowed_along(
-            row,
-            self.claim,
-            self.moves.typical,
+            row[part],
+            self.claim[part],
+            self.moves.typical[part],
             rel_tol=self.rel_tol,
             abs_tol=self.abs_tol,
             rounding=self.rounding,
@@ -217,7 +219,7 @@ def _halves(search: Search, part: Part, limit: float, found: Located) -> Inquiry
         bound=part.bound + left.bound,
         measurements=part.measurements + 1,
     )
-    right_limit = search.allowed(search.moves.row(search.group, search.seed, middle, part.stop))
+    right_limit = search.allowed(search.moves.row(search.group, search.seed, middle, part.stop), middle, part.stop)
     threshold = right_limit + right.bound
     unclear = threshold / UNCLEAR < abs(right.gap) < threshold * UNCLEAR
     if unclear or right.measurements > INFERRED_MOST or (right.size == 1 and abs(right.gap) > threshold / UNCLEAR):
