@@ -189,6 +189,7 @@ def smallest_visible_is_seen(n: int, seed: int) -> bool:
     place = int(_covered(claim, x, random, 1)[0])
     full = next(part for part in report.directions.coverage if np.isfinite(part.share))
     small = [part for part in report.directions.coverage if "below" in part.what]
-    limited = small and abs(claim[place] * x[place]) < float(small[0].what.rpartition(" ")[2]) * 1.01
+    limit = float(small[0].what.rpartition(" ")[2]) * 1.01 if small else 0.0
+    limited = abs(claim[place] * x[place]) < limit
     claim[place] += small[0].over_size / abs(x[place]) if limited else full.share * claim[place]
     return check(model, x, claim, seed + 1).verdict != Verdict.CONFIRMED
