@@ -18,6 +18,7 @@ BENCHMARKS = (
     "mistakes",
     "products",
     "rules",
+    "large",
     "cost",
     "nested",
     "sparse",

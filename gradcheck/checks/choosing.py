@@ -4,6 +4,7 @@ from dataclasses import replace
 
 from gradcheck.checks.automatic_claims import with_trials
 from gradcheck.checks.combined import with_broken_pair
+from gradcheck.checks.directional import checked_directions
 from gradcheck.checks.entrywise import checked_entries
 from gradcheck.checks.identities import broken_pair
 from gradcheck.checks.measure import measure_of
@@ -43,6 +44,10 @@ def checked_claims(session: Session, rules: Rules) -> list[CheckReport]:
     return reports
 
 
+#: Gradients with more entries than this are looked at along random directions, unless the caller wants all entries.
+ENTRIES_MOST = 1000
+
+
 def _of_function(session: Session, function: str, centre: Array, rules: Rules, before: int) -> list[CheckReport]:
     """Reports on all claims of one function, in the order in which they were claimed.
 
@@ -72,7 +77,8 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
         jointly = checked_jointly(session, function, kind, centre, rules, before)
         if jointly is not None:
             return jointly
-    report = checked_entries(session, function, kind, centre, rules, before)
+    along = kind != "jacobian" and centre.size == 1 and _along_directions(session, rules)
+    report = (checked_directions if along else checked_entries)(session, function, kind, centre, rules, before)
     if kind == "value_and_gradient":
         return with_value(session, function, centre, rules, report)
     return with_trials(session, report, function, kind, centre, rules)
@@ -91,3 +97,10 @@ def _hold_pairs(
         return
     told = "⟨jvp(v), w⟩ = ⟨v, vjp(w)⟩ holds for random v and w"
     reports["vjp"] = replace(reports["vjp"], notices=(*reports["vjp"].notices, told), text="")
+
+
+def _along_directions(session: Session, rules: Rules) -> bool:
+    """Whether a gradient is checked along directions: as the caller says, or by its size."""
+    if rules.directions is None:
+        return session.subject.layout.size > ENTRIES_MOST and "differences" in rules.witnesses
+    return rules.directions != "all"

@@ -20,6 +20,9 @@ BATCH_BYTES = 8_000_000
 #: which together are never as long as this mark and all bytes, or their digest, for a point that differs in more.
 _AT_START = b""
 _ELSEWHERE = b"all"
+#: The same for a point on a direction of so many entries that it is known by its direction and offset.
+_ALONG = b"along"
+_MANY = 1 << 14
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -115,8 +118,22 @@ class Moves:
         if self.along_axes and (self.base is start or self.base.tobytes() == start.tobytes()):
             entries, values = self.entries()
             return _short_keys(entries, values, _differ(values, start[entries]))
+        if self.base.size > _MANY:
+            return self._keys_along(start)
         most = self.most_at_once
         return [key for at in range(0, len(self), most) for key in _long_keys(self[at : at + most].points(), start)]
+
+    def _keys_along(self, start: Array) -> list[bytes]:
+        """Keys of points with so many entries that reading each would take as long as evaluating it.
+
+        A direction is read once for all its points; the same point on two directions counts as two.
+        """
+        origin = b"" if self.base is start or np.array_equal(self.base, start) else fingerprint(self.base.tobytes())
+        rows = {int(row): fingerprint(np.asarray(self.directions[row]).tobytes()) for row in np.unique(self.which)}
+        return [
+            _AT_START if offset == 0 and not origin else _ALONG + origin + rows[row] + offset.tobytes()
+            for row, offset in zip(self.which.tolist(), self.offsets, strict=True)
+        ]
 
 
 def same_content(content: bytearray, array: NDArray[Any]) -> bool:

@@ -230,7 +230,9 @@ def _derivative_reply(request: Request, outcome: Outcome, width: int, size: int)
     name = request.function
     status = int(outcome.status[name][0]) if name in outcome.status else int(Status.REFUSED)
     if name in outcome.values:
-        values = outcome.values[name][0].copy()
+        # Not copied: a claim may have a million entries. What is remembered cannot be written to.
+        values = outcome.values[name][0].view()
+        values.setflags(write=False)
         # A claimed matrix is one matrix (m, n), or the stored entries of one, not one row per direction.
         if is_stored(values):
             values = values[None, None]

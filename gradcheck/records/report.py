@@ -65,15 +65,60 @@ class Entries:
         return len(self.name)
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Coverage:
+    """How well random directions cover some of the entries: what a single error must be to be surely seen.
+
+    Attributes
+    ----------
+    what : str
+        Which entries, in words.
+    entries : int
+        How many.
+    share : float
+        Smallest single error that is surely seen, as a share of the claimed value; NaN where that depends on the entry.
+    over_size : float
+        The same as an error of the derivative times the size of its variable, so in units of the function; NaN where
+        `share` tells it.
+    """
+
+    what: str
+    entries: int
+    share: float = float("nan")
+    over_size: float = float("nan")
+
+
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class DirectionChecks:
-    """Directional derivatives that were compared instead of single entries, as parallel arrays of length d."""
+    """Directional derivatives that were compared instead of single entries, as parallel arrays of length d.
+
+    Attributes
+    ----------
+    claim, witness, bound : ndarray, shape (d,)
+        The claim along each direction, and the witness ± bound.
+    verdict : tuple of Verdict
+    smallest_visible : float
+        The smallest error of a single entry that is surely seen, as a share of its claimed value, in the entries that
+        are covered in full; NaN if there are none.
+    coverage : tuple of Coverage
+        The same for each kind of entries, also for those that are covered less well.
+    left_out : int
+        Entries that no direction moves.
+    left_out_names : tuple of str
+        The first of them.
+    reason : tuple of str
+        Why a direction is undecided.
+    """
 
     claim: Array
     witness: Array
     bound: Array
     verdict: tuple[Verdict, ...]
     smallest_visible: float = float("nan")
+    coverage: tuple[Coverage, ...] = ()
+    left_out: int = 0
+    left_out_names: tuple[str, ...] = ()
+    reason: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         for name in ("claim", "witness", "bound"):

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from gradcheck import wording
-from gradcheck.records.report import IDENTITY, CheckReport, Diagnosis, Entries
+from gradcheck.records.report import IDENTITY, CheckReport, Coverage, Diagnosis, Entries
 from gradcheck.records.verdict import Verdict
 from gradcheck.report.finding_text import finding_lines
 from gradcheck.report.paragraphs import WIDTH, fits, paragraph, table
@@ -258,12 +258,34 @@ def _direction_lines(report: CheckReport, indent: int) -> list[str]:
     directions = report.directions
     if directions is None or not directions.verdict:
         return []
+    confirmed = report.verdict == Verdict.CONFIRMED
+    inner = indent + 2 if confirmed else indent
+    lines = [] if confirmed else [""]
     told = f"{wording.count(len(directions.verdict), 'random direction')}: {_tally(directions.verdict)}."
-    if np.isfinite(directions.smallest_visible):
+    if np.isfinite(directions.smallest_visible) and not directions.coverage:
         told += (
             f" The smallest single error that they would have seen: {wording.number(directions.smallest_visible, 2)}."
         )
-    return ["", *paragraph(told, indent)]
+    lines += paragraph(told, inner)
+    if directions.coverage:
+        lines += paragraph("A single error is surely seen", inner)
+    for coverage in directions.coverage:
+        lines += paragraph(_coverage(coverage), inner, first="  * ")
+    if directions.left_out:
+        names = wording.listed(directions.left_out_names)
+        many = directions.left_out > len(directions.left_out_names)
+        which = f"{wording.count(directions.left_out, 'entry', 'entries')} ({names}{' ...' if many else ''})"
+        lines += paragraph(f"Not covered: {which}, for they are no number, or their variables cannot move.", inner)
+    for reason in dict.fromkeys(filter(None, directions.reason)):
+        lines += paragraph(reason, inner, first="because: ")
+    return lines
+
+
+def _coverage(coverage: Coverage) -> str:
+    where = f"in {coverage.what} ({wording.count(coverage.entries, 'entry', 'entries')})"
+    if np.isfinite(coverage.share):
+        return f"{where}: from {wording.number(100 * coverage.share, 2)} % of the claimed value;"
+    return f"{where}: from {wording.number(coverage.over_size, 2)} over the size of its variable;"
 
 
 def _reason_lines(entries: Entries, indent: int) -> list[str]:

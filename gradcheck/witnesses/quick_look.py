@@ -200,11 +200,11 @@ def quick_look(base: Array, directions: Directions, room: Room, centre: Array) -
     if rows.size == 0:
         return QuickLook(testimony=_unseen(len(directions), centre.size), rows=rows, pairs=None)
     h = rounded_half_width(np.minimum(wanted, narrow)[rows], room.grain[rows])
-    pairs = yield from _measured(base, directions, rows, np.stack([h, h / RATIO], axis=1), centre)
+    pairs = yield from measured_pairs(base, directions, rows, np.stack([h, h / RATIO], axis=1), centre)
     value, amplification = pairs.extrapolated()
     odd, even = pairs.taylor()
     # An error of order 5 at steps h and h / 4 leaves 1/16 of it, with the other sign.
-    truncation = FORETOLD * _foretold(odd, even) / RATIO**2 / pairs.steps[:, :1]
+    truncation = FORETOLD * foretold_term(odd, even) / RATIO**2 / pairs.steps[:, :1]
     testimony = _testimony(len(directions), rows, centre, pairs, value, truncation, amplification)
     return QuickLook(testimony=testimony, rows=rows, pairs=pairs)
 
@@ -241,7 +241,7 @@ def wider_look(
         return silent
     rows = wanted[chosen]
     steps = rounded_half_width(reach[rows], room.grain[rows])
-    wider = yield from _measured(base, directions, rows, steps[:, None], centre)
+    wider = yield from measured_pairs(base, directions, rows, steps[:, None], centre)
     pairs = seen.pairs.beside(wider, places[rows])
     three, of_three = pairs.extrapolated()
     narrow, _ = pairs.part(slice(1, None)).extrapolated()
@@ -257,7 +257,7 @@ def _sharper(one: Testimony, other: Testimony) -> Testimony:
     return replace(one, value=np.where(better, other.value, one.value), bound=np.where(better, other.bound, one.bound))
 
 
-def _measured(base: Array, directions: Directions, rows: IntArray, steps: Array, centre: Array) -> Inquiry[Pairs]:
+def measured_pairs(base: Array, directions: Directions, rows: IntArray, steps: Array, centre: Array) -> Inquiry[Pairs]:
     """Values at ± each step (d, k) along some directions."""
     offsets = steps.repeat(2, axis=1)
     offsets[:, 1::2] *= -1.0
@@ -265,11 +265,12 @@ def _measured(base: Array, directions: Directions, rows: IntArray, steps: Array,
     if directions.ndim == 1:
         x = base[directions[rows]][:, None]
         moved = (x + offsets) - x
-    reply = yield Request(base=base, directions=directions[rows], offsets=moved)
+    chosen = directions if rows.size == len(directions) else directions[rows]
+    reply = yield Request(base=base, directions=chosen, offsets=moved)
     return Pairs.of((moved[:, 0::2] - moved[:, 1::2]) / 2, reply, centre)
 
 
-def _foretold(odd: Array, even: Array) -> Array:
+def foretold_term(odd: Array, even: Array) -> Array:
     """(d, m): the fifth Taylor term at the larger step, from the first four of them."""
     a1, a3, a2, a4 = (np.abs(terms[:, i]) for terms in (odd, even) for i in (0, 1))
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):

@@ -1,0 +1,251 @@
+"""The check of a gradient with many entries: along random directions, with the wrong entries found and named."""
+
+import time
+from dataclasses import dataclass
+
+import numpy as np
+
+from gradcheck.checks.claimed import claimed_matrix
+from gradcheck.checks.entrywise import _few_digits, _left_out, _raised
+from gradcheck.claims.desk import Examined
+from gradcheck.claims.directions import LEAST, Group
+from gradcheck.claims.entries import diagnoses_of, entries_of
+from gradcheck.claims.examination import examine
+from gradcheck.claims.joint_examination import Culprit, JointlyExamined, examine_jointly
+from gradcheck.claims.policy import DEFAULT_REL_TOL, REL_TOL, Rules
+from gradcheck.claims.rule import Tolerance, judge
+from gradcheck.counsel.claim_findings import kinks_at_point, levels_at_point, mutation
+from gradcheck.evaluation.conduct import addressed, conduct_one
+from gradcheck.evaluation.pipeline import Session
+from gradcheck.problem.subject import Subject
+from gradcheck.records.arrays import Array, IntArray
+from gradcheck.records.finding import Finding
+from gradcheck.records.report import CheckReport, Coverage, DirectionChecks
+from gradcheck.records.verdict import Verdict
+from gradcheck.report.check_text import check_text
+from gradcheck.witnesses.finite_difference import SOURCE
+from gradcheck.witnesses.steps import room_along
+from gradcheck.wording import count, number
+
+#: Entries that are looked at one by one where directions do not settle which are wrong: claims that are no number,
+#: examples from a claim that is wrong nearly everywhere.
+EXAMPLES = 8
+#: Names of entries that no direction covers.
+NAMED = 5
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Settings:
+    rel_tol: float
+    abs_tol: float
+    unit_roundoff: float
+
+
+def checked_directions(
+    session: Session, function: str, kind: str, centre: Array, rules: Rules, before: int
+) -> CheckReport:
+    """The report on a gradient claim, looked at along random directions; `before` evaluations were spent on others."""
+    began = time.perf_counter()
+    subject = session.subject
+    matrix, failure = claimed_matrix(session, function, kind, centre)
+    claim = matrix[0]
+    kinds = session.ledger.output_kinds.get(function, "float64"), session.ledger.claim_kinds.get((function, kind), "")
+    precision = next((word for word in kinds if word in REL_TOL), "float64")
+    settings = _Settings(
+        rel_tol=REL_TOL.get(precision, DEFAULT_REL_TOL) if rules.rel_tol is None else rules.rel_tol,
+        abs_tol=rules.abs_tol,
+        unit_roundoff=float(np.finfo(precision if precision in REL_TOL else float).eps / 2),
+    )
+    inquiry = examine_jointly(
+        subject.start,
+        claim,
+        subject.domain,
+        centre,
+        rel_tol=settings.rel_tol,
+        abs_tol=settings.abs_tol,
+        unit_roundoff=settings.unit_roundoff,
+        directions=rules.directions if isinstance(rules.directions, int) else None,
+        seed=rules.seed,
+    )
+    joint = conduct_one(addressed(inquiry, function=function), session.gate)
+    columns, examined = _entries(session, function, claim, centre, joint, settings, rules)
+    findings: list[Finding] = [failure] if failure else []
+    findings += kinks_at_point(subject, function, examined.left, examined.right, columns)
+    findings += levels_at_point(subject, function, examined.jumps, examined.stairs, columns)
+    findings += mutation(subject, session.ledger)
+    entries = entries_of(subject, function, kind, examined, columns)
+    directions = _direction_checks(subject, claim, joint, any(v == Verdict.REFUTED for v in entries.verdict))
+    return CheckReport(
+        verdict=Verdict.overall([*entries.verdict, *directions.verdict]),
+        kind=kind,
+        function=function,
+        point=subject.start,
+        entries=entries,
+        directions=directions,
+        diagnoses=_raised(failure, entries)
+        if failure
+        else diagnoses_of(subject, function, kind, examined, columns, settings.rel_tol, settings.abs_tol),
+        findings=tuple(findings),
+        notices=(
+            *_everywhere(subject, joint),
+            *session.ledger.notices,
+            *_left_out(subject),
+            *_few_digits(precision, rules.rel_tol),
+        ),
+        evaluations=session.ledger.evaluations - before,
+        seconds=time.perf_counter() - began,
+        renderer=check_text,
+    )
+
+
+def _entries(
+    session: Session,
+    function: str,
+    claim: Array,
+    centre: Array,
+    joint: JointlyExamined,
+    settings: _Settings,
+    rules: Rules,
+) -> tuple[IntArray, Examined]:
+    """The entries that are told one by one, and what is known of them.
+
+    Culprits that a second look agreed on are judged by what was measured; everything else by the whole examination.
+    """
+    culprits = sorted(joint.culprits, key=lambda culprit: culprit.place)
+    if joint.agreed and culprits:
+        columns = np.array([culprit.place for culprit in culprits], dtype=np.intp)
+        measured = _measured(session.subject, claim, centre, culprits, joint, settings)
+        if all(verdict == Verdict.REFUTED for verdict in measured.verdict[0]):
+            return columns, measured
+    columns = _examples(claim, joint, session.subject)
+    inquiry = examine(
+        session.subject.start,
+        columns,
+        claim[None, columns],
+        room_along(session.subject.start, columns, session.subject.domain),
+        centre,
+        session.subject.domain.scale[columns],
+        rel_tol=settings.rel_tol,
+        abs_tol=settings.abs_tol,
+        unit_roundoff=settings.unit_roundoff,
+        witnesses=rules.witnesses,
+    )
+    return columns, conduct_one(addressed(inquiry, function=function), session.gate)
+
+
+def _examples(claim: Array, joint: JointlyExamined, subject: Subject) -> IntArray:
+    """Entries to be examined one by one: culprits in doubt, claims that are no number, entries of wrong parts."""
+    chosen = [culprit.place for culprit in joint.culprits[:EXAMPLES]]
+    broken = np.flatnonzero(~np.isfinite(claim) & ~subject.domain.integer)
+    chosen += broken[:EXAMPLES].tolist()
+    if len(joint.parts) == 1:
+        moved = np.flatnonzero(joint.moves.group)
+        chosen += moved[((np.arange(EXAMPLES) + 0.5) * moved.size / EXAMPLES).astype(int)].tolist()
+    elif joint.parts:
+        parts = joint.parts[:: -(-len(joint.parts) // EXAMPLES)]
+        places = [part.start + np.flatnonzero(joint.moves.group[part.start : part.stop]) for part in parts]
+        chosen += [int(within[within.size // 2]) for within in places if within.size]
+    return np.unique(np.array(chosen, dtype=np.intp))
+
+
+def _measured(
+    subject: Subject,
+    claim: Array,
+    centre: Array,
+    culprits: list[Culprit],
+    joint: JointlyExamined,
+    settings: _Settings,
+) -> Examined:
+    columns = np.array([culprit.place for culprit in culprits], dtype=np.intp)
+    value = np.array([[culprit.value for culprit in culprits]])
+    bound = np.array([[culprit.bound for culprit in culprits]])
+    claimed = claim[None, columns]
+    floor = settings.unit_roundoff * (abs(float(centre[0])) or 1.0)
+    rounding = np.full(columns.size, min(max(floor, joint.noise), 1e3 * floor)) / subject.domain.scale[columns]
+    tolerance = Tolerance(rel_tol=settings.rel_tol, abs_tol=settings.abs_tol, rounding=rounding[None, :])
+    judged = judge(claimed, value, bound, tolerance)
+    verdict = np.where(judged.refuted, Verdict.REFUTED, Verdict.UNDECIDED).astype(object)
+    unknown = np.full(value.shape, np.nan)
+    return Examined(
+        claim=claimed,
+        value=value,
+        bound=bound,
+        left=unknown,
+        right=unknown,
+        verdict=verdict,
+        source=np.full(value.shape, SOURCE, dtype=object),
+        reason=np.full(value.shape, "", dtype=object),
+        noise=np.array([joint.noise]),
+    )
+
+
+def _direction_checks(subject: Subject, claim: Array, joint: JointlyExamined, refuted: bool) -> DirectionChecks:
+    directions = joint.directions
+    suspects = [Verdict.REFUTED if refuted and d.suspect else d.verdict for d in directions]
+    left_out = np.flatnonzero(joint.moves.group == Group.LEFT_OUT)
+    coverage = tuple(_coverage(claim, joint))
+    return DirectionChecks(
+        claim=np.array([direction.claim for direction in directions]),
+        witness=np.array([direction.witness for direction in directions]),
+        bound=np.array([direction.bound for direction in directions]),
+        verdict=tuple(suspects),
+        smallest_visible=next((part.share for part in coverage if np.isfinite(part.share)), float("nan")),
+        coverage=coverage,
+        left_out=left_out.size,
+        left_out_names=tuple(subject.layout.name(int(i)) for i in left_out[:NAMED]),
+        reason=tuple(direction.reason for direction in directions),
+    )
+
+
+def _coverage(claim: Array, joint: JointlyExamined) -> list[Coverage]:
+    """What a single error must be to be surely seen, for each kind of entries."""
+    visible = {
+        group: min(d.visible for d in (*joint.directions, *joint.quiet) if d.group == group) / LEAST
+        for group in {d.group for d in joint.directions if not np.isfinite(joint.ratio)}
+    }
+    moves, told = joint.moves, []
+    if (seen := visible.get(Group.SCALED)) is not None:
+        limited = int(np.count_nonzero(moves.limited(claim)))
+        full = moves.count(Group.SCALED) - limited
+        if full:
+            told.append(Coverage(what="entries scaled by their claim", entries=full, share=seen / moves.level))
+        if limited:
+            level = number(moves.level, digits=2)
+            what = f"entries with |claim| times size below {level}"
+            told.append(Coverage(what=what, entries=limited, over_size=seen))
+    if (seen := visible.get(Group.ZERO)) is not None:
+        what = "entries claimed to be zero, or as good as zero"
+        told.append(Coverage(what=what, entries=moves.count(Group.ZERO), over_size=seen))
+    if (seen := visible.get(Group.INWARD)) is not None:
+        inward = moves.group == Group.INWARD
+        least = float((np.abs(moves.reach[inward]) / moves.typical[inward]).min())
+        what = "entries close to a bound"
+        told.append(Coverage(what=what, entries=moves.count(Group.INWARD), over_size=seen / least))
+    return told
+
+
+def _everywhere(subject: Subject, joint: JointlyExamined) -> tuple[str, ...]:
+    """Where more is wrong than can be named: which parts."""
+    if np.isfinite(joint.ratio):
+        along = count(sum(d.group == joint.directions[0].group for d in joint.directions), "random direction")
+        text = (
+            f"along {along} over all {joint.moves.count(joint.directions[0].group):,} entries the claim is "
+            f"{number(joint.ratio, digits=6)} times the derivative, so that nearly all entries are; those below are "
+            "examples."
+        )
+        return (text,)
+    if not joint.parts:
+        return ()
+    runs: list[list[int]] = []
+    for part in sorted(joint.parts, key=lambda part: part.start):
+        if runs and part.start == runs[-1][1]:
+            runs[-1][1] = part.stop
+        else:
+            runs.append([part.start, part.stop])
+    name = subject.layout.name
+    stretches = [f"{name(start)} to {name(stop - 1)}" for start, stop in runs[:4]]
+    text = (
+        f"more entries are wrong than can be named one by one: {count(len(joint.parts), 'part')} of the claim hold "
+        f"wrong ones, {', '.join(stretches)}{' ...' if len(runs) > 4 else ''}; the entries below are examples."
+    )
+    return (text,)
