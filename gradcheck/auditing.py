@@ -480,7 +480,7 @@ def _ready(findings: Sequence[Finding], claims: Sequence[CheckReport]) -> bool:
         return False
     if any(claim.verdict == Verdict.REFUTED for claim in claims):
         return False
-    verdicts = [verdict for claim in claims for verdict in claim.entries.verdict]
+    verdicts = [verdict for claim in claims for verdict in claim.verdicts]
     return not verdicts or any(verdict != Verdict.UNDECIDED for verdict in verdicts)
 
 

@@ -2,8 +2,12 @@
 
 import numpy as np
 
+from gradcheck.checks.measure import Measure
 from gradcheck.claims.closedness import derivative_of_something
+from gradcheck.claims.desk import Examined
+from gradcheck.claims.entries import entry_name, floor_of
 from gradcheck.claims.mistakes.naming import Asking
+from gradcheck.claims.repeated_answers import Repeated, compared
 from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import Session
 from gradcheck.evaluation.protocol import Request, Status
@@ -25,6 +29,34 @@ def second_answer(session: Session, function: str, kind: str) -> Array | None:
     )
     reply = session.gate([request])[0]
     return reply.values[0] if int(reply.status[0, 0]) in (Status.OK, Status.NONFINITE) else None
+
+
+def answered_again(
+    session: Session,
+    function: str,
+    kind: str,
+    examined: Examined,
+    columns: IntArray,
+    measure: Measure,
+    second: Array | None,
+) -> Repeated:
+    """The entries once the claim has answered again, the model having been evaluated elsewhere in between."""
+    subject, m = session.subject, examined.claim.shape[0]
+    if second is None:
+        return Repeated(examined=examined, changed=np.zeros(examined.claim.shape, bool))
+
+    def third() -> Array | None:
+        answer = second_answer(session, function, kind)
+        return None if answer is None else answer[:, columns]
+
+    return compared(
+        examined,
+        second[:, columns],
+        third,
+        measure.rel_tol,
+        floor_of(subject, examined, columns, measure.abs_tol),
+        lambda i, j: entry_name(subject, function, m, i, int(columns[j])),
+    )
 
 
 def asking(session: Session, function: str, kind: str, columns: IntArray) -> Asking | None:

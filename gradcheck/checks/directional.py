@@ -1,18 +1,19 @@
 """The check of a gradient with many entries: along random directions, with the wrong entries found and named."""
 
 import time
-from dataclasses import dataclass
 
 import numpy as np
 
+from gradcheck.checks.asked_again import answered_again, asking, second_answer
 from gradcheck.checks.claimed import claimed_matrix
-from gradcheck.checks.entrywise import _few_digits, _left_out, _raised
+from gradcheck.checks.measure import Measure, measure_of
+from gradcheck.checks.notices import few_digits, left_out, raised
 from gradcheck.claims.desk import Examined
 from gradcheck.claims.directions import LEAST, Group
 from gradcheck.claims.entries import diagnoses_of, entries_of
 from gradcheck.claims.examination import examine
 from gradcheck.claims.joint_examination import Culprit, JointlyExamined, examine_jointly
-from gradcheck.claims.policy import DEFAULT_REL_TOL, REL_TOL, Rules
+from gradcheck.claims.policy import Rules
 from gradcheck.claims.rule import Tolerance, judge
 from gradcheck.counsel.claim_findings import kinks_at_point, levels_at_point, mutation
 from gradcheck.evaluation.conduct import addressed, conduct_one
@@ -34,13 +35,6 @@ EXAMPLES = 8
 NAMED = 5
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
-class _Settings:
-    rel_tol: float
-    abs_tol: float
-    unit_roundoff: float
-
-
 def checked_directions(
     session: Session, function: str, kind: str, centre: Array, rules: Rules, before: int
 ) -> CheckReport:
@@ -49,26 +43,26 @@ def checked_directions(
     subject = session.subject
     matrix, failure = claimed_matrix(session, function, kind, centre)
     claim = matrix[0]
-    kinds = session.ledger.output_kinds.get(function, "float64"), session.ledger.claim_kinds.get((function, kind), "")
-    precision = next((word for word in kinds if word in REL_TOL), "float64")
-    settings = _Settings(
-        rel_tol=REL_TOL.get(precision, DEFAULT_REL_TOL) if rules.rel_tol is None else rules.rel_tol,
-        abs_tol=rules.abs_tol,
-        unit_roundoff=float(np.finfo(precision if precision in REL_TOL else float).eps / 2),
-    )
+    measure = measure_of(session, function, kind, rules)
     inquiry = examine_jointly(
         subject.start,
         claim,
         subject.domain,
         centre,
-        rel_tol=settings.rel_tol,
-        abs_tol=settings.abs_tol,
-        unit_roundoff=settings.unit_roundoff,
+        rel_tol=measure.rel_tol,
+        abs_tol=measure.abs_tol,
+        unit_roundoff=measure.unit_roundoff,
         directions=rules.directions if isinstance(rules.directions, int) else None,
         seed=rules.seed,
     )
     joint = conduct_one(addressed(inquiry, function=function), session.gate)
-    columns, examined = _entries(session, function, claim, centre, joint, settings, rules)
+    second = second_answer(session, function, kind)
+    changed = _changed(claim, second, measure)
+    columns, examined = _entries(session, function, claim, centre, joint, changed, measure, rules)
+    if changed.size:  # entries were looked at in between
+        second = second_answer(session, function, kind)
+    repeated = answered_again(session, function, kind, examined, columns, measure, second)
+    examined = repeated.examined
     findings: list[Finding] = [failure] if failure else []
     findings += kinks_at_point(subject, function, examined.left, examined.right, columns)
     findings += levels_at_point(subject, function, examined.jumps, examined.stairs, columns)
@@ -82,15 +76,29 @@ def checked_directions(
         point=subject.start,
         entries=entries,
         directions=directions,
-        diagnoses=_raised(failure, entries)
+        diagnoses=raised(failure, entries)
         if failure
-        else diagnoses_of(subject, function, kind, examined, columns, settings.rel_tol, settings.abs_tol),
+        else (
+            *repeated.diagnoses,
+            *diagnoses_of(
+                subject,
+                function,
+                kind,
+                examined,
+                columns,
+                measure.rel_tol,
+                measure.abs_tol,
+                values=centre,
+                told=repeated.changed,
+                ask=asking(session, function, kind, columns),
+            ),
+        ),
         findings=tuple(findings),
         notices=(
             *_everywhere(subject, joint),
             *session.ledger.notices,
-            *_left_out(subject),
-            *_few_digits(precision, rules.rel_tol),
+            *left_out(subject),
+            *few_digits(measure.precision, rules.rel_tol),
         ),
         evaluations=session.ledger.evaluations - before,
         seconds=time.perf_counter() - began,
@@ -104,7 +112,8 @@ def _entries(
     claim: Array,
     centre: Array,
     joint: JointlyExamined,
-    settings: _Settings,
+    changed: IntArray,
+    measure: Measure,
     rules: Rules,
 ) -> tuple[IntArray, Examined]:
     """The entries that are told one by one, and what is known of them.
@@ -112,12 +121,12 @@ def _entries(
     Culprits that a second look agreed on are judged by what was measured; everything else by the whole examination.
     """
     culprits = sorted(joint.culprits, key=lambda culprit: culprit.place)
-    if joint.agreed and culprits:
+    if joint.agreed and culprits and changed.size == 0:
         columns = np.array([culprit.place for culprit in culprits], dtype=np.intp)
-        measured = _measured(session.subject, claim, centre, culprits, joint, settings)
+        measured = _measured(session.subject, claim, centre, culprits, joint, measure)
         if all(verdict == Verdict.REFUTED for verdict in measured.verdict[0]):
             return columns, measured
-    columns = _examples(claim, joint, session.subject)
+    columns = np.union1d(_examples(claim, joint, session.subject), changed)
     inquiry = examine(
         session.subject.start,
         columns,
@@ -125,12 +134,22 @@ def _entries(
         room_along(session.subject.start, columns, session.subject.domain),
         centre,
         session.subject.domain.scale[columns],
-        rel_tol=settings.rel_tol,
-        abs_tol=settings.abs_tol,
-        unit_roundoff=settings.unit_roundoff,
+        rel_tol=measure.rel_tol,
+        abs_tol=measure.abs_tol,
+        unit_roundoff=measure.unit_roundoff,
         witnesses=rules.witnesses,
     )
     return columns, conduct_one(addressed(inquiry, function=function), session.gate)
+
+
+def _changed(claim: Array, second: Array | None, measure: Measure) -> IntArray:
+    """The first entries that the claim answers otherwise when it is asked again."""
+    if second is None:
+        return np.zeros(0, np.intp)
+    with np.errstate(invalid="ignore"):
+        apart = ~(np.abs(second[0] - claim) <= measure.abs_tol + measure.rel_tol * np.abs(claim))
+    apart &= np.isfinite(claim) | np.isfinite(second[0])
+    return np.flatnonzero(apart)[:EXAMPLES]
 
 
 def _examples(claim: Array, joint: JointlyExamined, subject: Subject) -> IntArray:
@@ -154,15 +173,15 @@ def _measured(
     centre: Array,
     culprits: list[Culprit],
     joint: JointlyExamined,
-    settings: _Settings,
+    measure: Measure,
 ) -> Examined:
     columns = np.array([culprit.place for culprit in culprits], dtype=np.intp)
     value = np.array([[culprit.value for culprit in culprits]])
     bound = np.array([[culprit.bound for culprit in culprits]])
     claimed = claim[None, columns]
-    floor = settings.unit_roundoff * (abs(float(centre[0])) or 1.0)
+    floor = measure.unit_roundoff * (abs(float(centre[0])) or 1.0)
     rounding = np.full(columns.size, min(max(floor, joint.noise), 1e3 * floor)) / subject.domain.scale[columns]
-    tolerance = Tolerance(rel_tol=settings.rel_tol, abs_tol=settings.abs_tol, rounding=rounding[None, :])
+    tolerance = Tolerance(rel_tol=measure.rel_tol, abs_tol=measure.abs_tol, rounding=rounding[None, :])
     judged = judge(claimed, value, bound, tolerance)
     verdict = np.where(judged.refuted, Verdict.REFUTED, Verdict.UNDECIDED).astype(object)
     unknown = np.full(value.shape, np.nan)
@@ -199,9 +218,10 @@ def _direction_checks(subject: Subject, claim: Array, joint: JointlyExamined, re
 
 def _coverage(claim: Array, joint: JointlyExamined) -> list[Coverage]:
     """What a single error must be to be surely seen, for each kind of entries."""
+    confirmed = [d for d in (*joint.directions, *joint.quiet) if d.verdict == Verdict.CONFIRMED]
     visible = {
-        group: min(d.visible for d in (*joint.directions, *joint.quiet) if d.group == group) / LEAST
-        for group in {d.group for d in joint.directions if not np.isfinite(joint.ratio)}
+        group: min(d.visible for d in confirmed if d.group == group) / LEAST
+        for group in {direction.group for direction in confirmed}
     }
     moves, told = joint.moves, []
     if (seen := visible.get(Group.SCALED)) is not None:

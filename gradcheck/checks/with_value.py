@@ -47,7 +47,7 @@ def with_value(session: Session, function: str, centre: Array, rules: Rules, rep
         )
     return replace(
         report,
-        verdict=Verdict.overall(list(entries.verdict)),
+        verdict=Verdict.overall([report.verdict, *examined.verdict.tolist()]),
         entries=entries,
         diagnoses=diagnoses,
         text="",

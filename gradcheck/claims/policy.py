@@ -98,11 +98,7 @@ class Policy:
         if report.verdict == Verdict.REFUTED and self.on_refuted == "raise":
             raise DerivativeMismatch(report)
         if report.verdict == Verdict.UNDECIDED and self.on_undecided != "pass":
-            looked_at = [verdict for part in report.parts or (report,) for verdict in part.entries.verdict]
-            looked_at += [v for part in report.parts or (report,) if part.directions for v in part.directions.verdict]
-            everything = all(verdict == Verdict.UNDECIDED for verdict in looked_at)
-            if report.sparsity is not None:  # confirmed entries and rows are counted there, and not all listed
-                everything &= report.sparsity.confirmed + report.sparsity.whole_rows_confirmed == 0
+            everything = all(verdict == Verdict.UNDECIDED for verdict in report.verdicts)
             if self.on_undecided == "raise" or everything:
                 raise DerivativeMismatch(report)
             warnings.warn(str(report), UndecidedWarning, stacklevel=stacklevel + 1)

@@ -22,7 +22,39 @@ def verdict_findings(subject: Subject, report: CheckReport) -> list[Finding]:
         places = [k for k, v in enumerate(report.entries.verdict) if v == verdict]
         if places:
             findings.append(_finding(subject, report, code, places))
+    if not findings and report.verdict != Verdict.CONFIRMED:
+        findings.append(_along_directions(report))
     return findings
+
+
+def _along_directions(report: CheckReport) -> Finding:
+    """A claim that is refuted or undecided along random directions, without an entry that could be named."""
+    refuted = report.verdict == Verdict.REFUTED
+    what = f"the {report.kind} of {report.function}"
+    directions = () if report.directions is None else report.directions.verdict
+    seen = sum(verdict == report.verdict for verdict in directions)
+    reasons = [] if report.directions is None else list(dict.fromkeys(filter(None, report.directions.reason)))
+    if refuted:
+        shows = "directions='all' shows which entries."
+        likely = report.diagnoses[0].text if report.diagnoses else shows
+        text = f"{what} is wrong: {seen} of {count(len(directions), 'random direction')} say so."
+        remedy, severity = f"Mend the derivative before any run: {likely}", Severity.BLOCKER
+    else:
+        text = (
+            f"{what} could not be judged along {seen} of {count(len(directions), 'random direction')}: "
+            f"{'; '.join(reasons[:2])}."
+        )
+        remedy, severity = _mend(reasons)
+    return Finding(
+        code=FindingCode.CLAIM_REFUTED if refuted else FindingCode.CLAIM_UNDECIDED,
+        severity=severity,
+        function=report.function,
+        variable=None,
+        where=Location(point=report.point),
+        evidence={"directions": seen, "of": len(directions)},
+        text=text,
+        remedy=remedy,
+    )
 
 
 def _finding(subject: Subject, report: CheckReport, code: FindingCode, places: list[int]) -> Finding:

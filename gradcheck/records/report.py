@@ -192,6 +192,19 @@ class CheckReport(RenderedWhenRead):
     def __str__(self) -> str:
         return self.text
 
+    @property
+    def verdicts(self) -> tuple[Verdict, ...]:
+        """Verdicts on all that was looked at: entries, random directions, and those of the parts.
+
+        Of a sparse claim the confirmed entries are counted, not listed: one stands for all of them.
+        """
+        found = [verdict for part in self.parts for verdict in part.verdicts]
+        if not self.parts:
+            found += [*self.entries.verdict, *(self.directions.verdict if self.directions else ())]
+            if self.sparsity is not None and self.sparsity.confirmed + self.sparsity.whole_rows_confirmed:
+                found.append(Verdict.CONFIRMED)
+        return tuple(found)
+
     def to_dict(self) -> dict[str, Any]:
         """The report in builtin types; NaN and infinities as strings."""
         return {"format": "gradcheck-check", "version": FORMAT_VERSION} | plain(self)  # type: ignore[no-any-return]

@@ -164,7 +164,7 @@ def _story(report: CheckReport, name_width: int, bounded: bool) -> str:
     if not len(entries):
         return _direction_story(report)
     if report.verdict == Verdict.CONFIRMED:
-        return _agreement(entries, brief=not bounded)
+        return _direction_story(report) if report.directions else _agreement(entries, brief=not bounded)
     worst = _entry(entries, int(worst_order(entries)[0]))
     if worst.verdict != report.verdict:  # the directions decided, and no single entry carries the verdict
         return _direction_story(report)
@@ -198,7 +198,13 @@ def _direction_story(report: CheckReport) -> str:
     if report.directions is None or not report.directions.verdict:
         return "no entry was looked at"
     verdicts = report.directions.verdict
-    return f"of {wording.count(len(verdicts), 'direction')}, {_tally(verdicts)}"
+    directions = wording.count(len(verdicts), "random direction")
+    covered = sum(part.entries for part in report.directions.coverage)
+    if report.verdict == Verdict.CONFIRMED and covered:
+        return f"{covered:,} entries along {directions}"
+    if report.verdict == Verdict.REFUTED and Verdict.REFUTED not in verdicts:
+        return "right as it stands, but see below"
+    return f"of {directions}, {_tally(verdicts)}"
 
 
 def _tally(verdicts: Sequence[Verdict]) -> str:
