@@ -19,6 +19,7 @@ BENCHMARKS = (
     "products",
     "rules",
     "large",
+    "repeated_seeds",
     "cost",
     "nested",
     "sparse",
