@@ -20,6 +20,9 @@ from gradcheck.problem.sparse_claim import is_stored
 from gradcheck.problem.subject import Subject
 from gradcheck.records.arrays import Array
 
+#: How far the companion of the start point is moved, in units of a variable's size; values of a point in company and
+#: alone may differ by this share of the largest output, for sums may be taken in another order.
+COMPANION, SAME = 0.1, 1e-6
 #: Points of one call, and about as many handed to the layers at once.
 POINTS_AT_ONCE = 16_384
 
@@ -72,7 +75,54 @@ class Session:
             if not reply.finite.all():
                 raise self._failure(name, Status(reply.status[0, 0]), reply.values[0, 0])
             values[name] = reply.values[0, 0]
+        if self.subject.batched:
+            self._refuse_company(values)
         return values
+
+    def _refuse_company(self, alone: dict[str, Array]) -> None:
+        """The start point once more, beside another point: its values must not depend on the company.
+
+        Raises
+        ------
+        UsageError
+            If they do: every difference would be one of the company. A model that never answers alike is told
+            elsewhere, and a model that fails beside the start point as well.
+        """
+        start, domain = self.subject.start, self.subject.domain
+        place = int(np.argmax(domain.upper - domain.lower))
+        room = min(domain.upper[place] - start[place], COMPANION * domain.scale[place])
+        step = room if room > 0 else -min(start[place] - domain.lower[place], COMPANION * domain.scale[place])
+        for name, value in alone.items():
+            request = Request(
+                base=start,
+                directions=np.array([place], dtype=np.intp),
+                offsets=np.array([[0.0, step]]),
+                function=name,
+                fresh=True,
+            )
+            reply = self.gate([request])[0]
+            if not reply.finite.all():
+                continue
+            together = reply.values[0, 0]
+            i = int(np.argmax(np.abs(together - value)))
+            if abs(together[i] - value[i]) <= SAME * float(np.abs(value).max()) or self._never_alike(name, value):
+                continue
+            raise UsageError(
+                f"batched=True: {name} gives {together[i]:.10g} at the start point beside another point, and "
+                f"{value[i]:.10g} there alone, so its rows depend on one another (a mean or a norm over the batch?); "
+                "mend the model, or leave batched out"
+            )
+
+    def _never_alike(self, name: str, value: Array) -> bool:
+        """Whether the model gives other values at the start point when it is asked alone once more."""
+        request = Request(
+            base=self.subject.start,
+            directions=np.zeros(1, dtype=np.intp),
+            offsets=np.zeros((1, 1)),
+            function=name,
+            fresh=True,
+        )
+        return not np.array_equal(self.gate([request])[0].values[0, 0], value)
 
     def _failure(self, name: str, status: Status, values: Array) -> ModelFailure:
         point = np.array2string(self.subject.start, threshold=8, precision=6)

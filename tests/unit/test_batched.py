@@ -59,6 +59,9 @@ def ask(session, offsets, **options):
     return session.gate([request])[0]
 
 
+#: Evaluations of a batched model that find out whether its rows depend on one another.
+COMPANY = 2
+
 # --- what the model receives -----------------------------------------------------------------------------------------
 
 
@@ -68,7 +71,8 @@ def test_the_model_receives_the_points_of_a_request_as_rows_of_one_array():
     session.start_values()
     ask(session, [0.1, 0.2, 0.3])
 
-    assert model.shapes == [(1, 3), (3, 3)]
+    # The start point alone and beside a companion, and then what was asked for.
+    assert model.shapes == [(1, 3), (2, 3), (3, 3)]
 
 
 def test_where_x_is_one_number_the_model_receives_k_numbers():
@@ -135,7 +139,7 @@ def test_an_estimate_is_the_same_to_the_last_bit(model):
 
     for field in ("value", "bound", "step"):
         assert np.array_equal(getattr(one, field), getattr(many, field))
-    assert one.evaluations == many.evaluations
+    assert one.evaluations + COMPANY == many.evaluations
 
 
 def test_second_derivatives_are_the_same():
@@ -168,7 +172,7 @@ def test_a_check_is_the_same(witnesses):
 
     assert many.verdict == "confirmed"
     assert np.array_equal(one.entries.witness, many.entries.witness)
-    assert one.evaluations == many.evaluations
+    assert one.evaluations + COMPANY == many.evaluations
 
 
 def test_a_wrong_claim_is_refuted():
@@ -275,7 +279,35 @@ def test_when_the_time_is_over_no_batch_is_begun():
     session.start_values()
 
     assert set(ask(session, [0.1, 0.2]).status.ravel().tolist()) == {Status.REFUSED}
-    assert session.ledger.refused == 2
+    assert session.ledger.refused == 2 + COMPANY
+
+
+# --- rows that depend on one another ----------------------------------------------------------------------------------
+
+
+def test_a_model_that_subtracts_the_mean_of_its_batch_is_told():
+    def centred(x):
+        return np.sum((x - x.mean(axis=0)) ** 2 + x, axis=1)
+
+    with pytest.raises(gradcheck.UsageError, match=r"batched=True: centred gives .* so its rows depend on one another"):
+        gradcheck.check(centred, at=AT, gradient=np.ones(3), batched=True)
+
+
+def test_sums_in_another_order_are_no_dependence():
+    def summed(x):
+        return waves(x) + 1e-13 * len(x)
+
+    assert gradcheck.check(summed, at=AT, gradient=waves_gradient, batched=True).verdict == "confirmed"
+
+
+def test_a_model_that_never_answers_alike_is_not_taken_for_one():
+    noise = np.random.default_rng(1)
+
+    def shaken(x):
+        return waves(x) + 1e-3 * noise.normal(size=len(x))
+
+    report = gradcheck.check(shaken, at=AT, gradient=waves_gradient, batched=True, on_undecided="pass")
+    assert report.verdict == "undecided"
 
 
 # --- failures --------------------------------------------------------------------------------------------------------
