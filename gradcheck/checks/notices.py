@@ -22,7 +22,7 @@ def few_digits(precision: str, rel_tol: float | None) -> tuple[str, ...]:
 
 def raised(failure: Finding, entries: Entries) -> tuple[Diagnosis, ...]:
     """The story of a claim that raised: it is no wrong derivative, it is none."""
-    return (Diagnosis(code=DiagnosisCode.UNKNOWN, text=failure.text, entries=entries.name),)
+    return (Diagnosis(code=DiagnosisCode.UNKNOWN, text=failure.text, entries=tuple(entries.name)),)
 
 
 def left_out(subject: Subject) -> tuple[str, ...]:

@@ -110,7 +110,7 @@ def appended(entries: Entries, more: Entries) -> Entries:
         return more
     return Entries(
         index=np.concatenate([entries.index, more.index]),
-        name=entries.name + more.name,
+        name=(*entries.name, *more.name),
         verdict=entries.verdict + more.verdict,
         source=entries.source + more.source,
         reason=entries.reason + more.reason,

@@ -13,8 +13,12 @@ from gradcheck.claims.mistakes.points import mistakes_at_points
 from gradcheck.claims.rule import ALLOWANCE
 from gradcheck.problem.subject import Subject
 from gradcheck.records.arrays import Array, BoolArray, IntArray
+from gradcheck.records.names import Names
 from gradcheck.records.report import CheckReport, Diagnosis, Entries
 from gradcheck.records.verdict import Verdict
+
+#: Names of so many entries are made at once.
+NAMED_AT_ONCE = 1000
 
 
 def entries_of(subject: Subject, function: str, kind: str, examined: Examined, looked_at: IntArray) -> Entries:
@@ -29,9 +33,7 @@ def entries_of(subject: Subject, function: str, kind: str, examined: Examined, l
 
     return Entries(
         index=index,
-        name=tuple(
-            entry_name(subject, function, m, i, j) for i, j in zip(rows.tolist(), columns.tolist(), strict=True)
-        ),
+        name=_names(subject, function, m, rows, columns),
         claim=flat(examined.claim),
         witness=flat(examined.value),
         bound=flat(examined.bound),
@@ -40,6 +42,16 @@ def entries_of(subject: Subject, function: str, kind: str, examined: Examined, l
         source=tuple(flat(examined.source)),
         reason=tuple(flat(examined.reason)),
     )
+
+
+def _names(subject: Subject, function: str, outputs: int, rows: IntArray, columns: IntArray) -> Sequence[str]:
+    """Names of entries: of many they are made when they are read."""
+
+    def name(k: int) -> str:
+        return entry_name(subject, function, outputs, int(rows[k]), int(columns[k]))
+
+    many = Names(rows.size, name)
+    return many if rows.size > NAMED_AT_ONCE else tuple(many)
 
 
 def entry_name(subject: Subject, function: str, outputs: int, row: int, column: int) -> str:

@@ -1,7 +1,7 @@
 """Records in builtin types, so that they travel: JSON, worker processes, test reports."""
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import fields, is_dataclass
 from enum import Enum
 from typing import Any
@@ -31,6 +31,6 @@ def plain(value: Any) -> Any:
         return value
     if isinstance(value, Mapping):
         return {str(key): plain(item) for key, item in value.items()}
-    if isinstance(value, list | tuple | set | frozenset):
+    if isinstance(value, Sequence | set | frozenset):
         return [plain(item) for item in value]
     return str(value)

@@ -1,7 +1,7 @@
 """The two reports that users receive."""
 
 import json
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -33,8 +33,8 @@ class Entries:
         ``(k,)`` flat indices for a vector, ``(k, 2)`` (row, column) for a matrix. Products of a derivative with vectors
         are (output, vector) for ``jvp``, (vector, variable) for ``vjp`` and (variable, vector) for ``hvp``; unit
         vectors have the number of their one, other vectors follow. The value of ``value_and_gradient`` has -1.
-    name : tuple of str
-        Readable name of each entry.
+    name : sequence of str
+        Readable name of each entry; of many entries they are made when they are read.
     claim, witness, bound : ndarray, shape (k,)
         Claimed value, witness value, and the witness's absolute error bound.
     digits : ndarray, shape (k,)
@@ -47,7 +47,7 @@ class Entries:
     """
 
     index: NDArray[np.intp]
-    name: tuple[str, ...]
+    name: Sequence[str]
     claim: Array
     witness: Array
     bound: Array
