@@ -118,7 +118,7 @@ def test_directions_are_told_with_the_smallest_error_that_they_would_have_seen()
     )
     text = check_text(check_report(verdict=REFUTED, directions=directions))
 
-    assert text.startswith("gradient of drag refuted: of 2 directions, 1 refuted, 1 confirmed\n")
+    assert text.startswith("gradient of drag refuted: of 2 random directions, 1 refuted, 1 confirmed\n")
     assert "would have seen: 2e-4" in " ".join(text.split())
 
 

@@ -40,8 +40,8 @@ def test_a_place_outside_is_an_error_that_says_how_many_there_are(place):
 
 
 def test_they_are_added_to_tuples():
-    assert names(1) + ("y",) == ("x[0]", "y")
-    assert ("y",) + names(1) == ("y", "x[0]")
+    assert names(1).__add__(("y",)) == ("x[0]", "y")
+    assert names(1).__radd__(("y",)) == ("y", "x[0]")
 
 
 def test_they_travel_as_a_tuple():
