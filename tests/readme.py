@@ -77,19 +77,110 @@ def scan_output() -> str:
     return str(scanned())
 
 
+def rod_energy(x):
+    """Energy of a long rod, whose pieces pull at their neighbours."""
+    import numpy as np
+
+    return float(np.sum(0.5 * (x[1:] - x[:-1]) ** 2) + np.sum(0.1 * x**4))
+
+
+def rod_gradient(x):
+    """Its gradient, with two wrong entries."""
+    import numpy as np
+
+    pull = np.diff(x)
+    gradient = 0.4 * x**3
+    gradient[:-1] -= pull
+    gradient[1:] += pull
+    gradient[271] *= 2.0
+    gradient[82_818] = 0.0
+    return gradient
+
+
+def many_output() -> str:
+    """The error text of a wrong gradient with 100,000 entries."""
+    import numpy as np
+
+    import gradcheck
+
+    at = 1.0 + 0.5 * np.sin(np.arange(100_000.0))
+    return str(gradcheck.check(rod_energy, at=at, gradient=rod_gradient, on_refuted="return"))
+
+
+STEPS, SECONDS = 200, 0.05
+
+
+def defects(z):
+    """A vehicle over 200 time steps: how far position, velocity and energy are from following from the step before."""
+    import numpy as np
+
+    position, velocity, energy, thrust = z.reshape(STEPS + 1, 4).T
+    return np.stack(
+        [
+            np.diff(position) - SECONDS * velocity[:-1],
+            np.diff(velocity) - SECONDS * (thrust[:-1] - 0.02 * velocity[:-1] ** 2),
+            np.diff(energy) + SECONDS * thrust[:-1] * velocity[:-1],
+        ],
+        axis=1,
+    ).ravel()
+
+
+def defects_jacobian(z):
+    """Its sparse Jacobian: thrust has the wrong sign, and what energy owes to velocity is forgotten."""
+    import numpy as np
+    from scipy import sparse
+
+    velocity = z.reshape(STEPS + 1, 4)[:-1, 1]
+    step = np.arange(STEPS)
+    blocks = [
+        (0, 4, 1.0),
+        (0, 0, -1.0),
+        (0, 1, -SECONDS),
+        (1, 5, 1.0),
+        (1, 1, -1.0 + 0.04 * SECONDS * velocity),
+        (1, 3, SECONDS),
+        (2, 6, 1.0),
+        (2, 2, -1.0),
+        (2, 3, SECONDS * velocity),
+    ]
+    rows = np.concatenate([3 * step + row for row, _, _ in blocks])
+    columns = np.concatenate([4 * step + column for _, column, _ in blocks])
+    values = np.concatenate([np.broadcast_to(value, STEPS) for _, _, value in blocks])
+    return sparse.csr_array((values, (rows, columns)), shape=(3 * STEPS, 4 * (STEPS + 1)))
+
+
+def sparse_output() -> str:
+    """The error text of the wrong sparse Jacobian."""
+    import numpy as np
+
+    import gradcheck
+
+    z = np.random.default_rng(0).uniform(0.5, 1.5, 4 * (STEPS + 1))
+    names = [f"{what}[{k}]" for k in range(STEPS + 1) for what in ("position", "velocity", "energy", "thrust")]
+    return str(gradcheck.check(defects, at=z, names=names, jacobian=defects_jacobian, on_refuted="return"))
+
+
 def told_by(picture: str) -> str:
     """Title and description of a picture, which say what it shows."""
     return "\n".join(re.findall(r"<(?:title|desc)[^>]*>([^<]*)</", picture))
 
 
-OUTPUTS = {"demo": demo_output, "mismatch": mismatch_output, "scan": scan_output}
+OUTPUTS = {
+    "demo": demo_output,
+    "mismatch": mismatch_output,
+    "many": many_output,
+    "sparse": sparse_output,
+    "scan": scan_output,
+}
 
 
 def excerpt(name: str, said: str) -> str:
     """What README.md shows of an output: all of it, or the telling parts of the long demo."""
+    lines = said.splitlines()
+    if name == "sparse":
+        return "\n".join([*lines[: lines.index("Wrong values (200):") - 1], "", "..."])
     if name != "demo":
         return said
-    lines = said.splitlines()
 
     def part(start: str, after: int = 0) -> list[str]:
         first = next(k for k in range(after, len(lines)) if start in lines[k])

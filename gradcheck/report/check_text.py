@@ -274,7 +274,8 @@ def _direction_lines(report: CheckReport, indent: int) -> list[str]:
         )
     lines += paragraph(told, inner)
     if directions.coverage:
-        lines += paragraph("A single error is surely seen", inner)
+        beside = "Beside what is told above, a" if report.verdict == Verdict.REFUTED else "A"
+        lines += paragraph(f"{beside} single error would surely have been seen", inner)
     for coverage in directions.coverage:
         lines += paragraph(_coverage(coverage), inner, first="  * ")
     if directions.left_out:
@@ -290,8 +291,8 @@ def _direction_lines(report: CheckReport, indent: int) -> list[str]:
 def _coverage(coverage: Coverage) -> str:
     where = f"in {coverage.what} ({wording.count(coverage.entries, 'entry', 'entries')})"
     if np.isfinite(coverage.share):
-        return f"{where}: from {wording.number(100 * coverage.share, 2)} % of the claimed value;"
-    return f"{where}: from {wording.number(coverage.over_size, 2)} over the size of its variable;"
+        return f"{where}: from {wording.number(100 * coverage.share, 2)} % of the claimed value"
+    return f"{where}: from {wording.number(coverage.over_size, 2)} over the size of its variable"
 
 
 def _reason_lines(entries: Entries, indent: int) -> list[str]:
