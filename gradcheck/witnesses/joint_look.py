@@ -60,6 +60,8 @@ class Sight:
         Noise level of the values: at first that of rounding (of the value, and of x), after the survey what it heard.
     width, pairs : float, int
         The widest step, and the number of pairs, that suited the last direction.
+    two : Seen or None
+        What the best two pairs of the survey saw: enough where no more digits are asked for.
     """
 
     base: Array
@@ -67,6 +69,7 @@ class Sight:
     noise: float
     width: float = float(LADDER[2])
     pairs: int = 2
+    two: Seen | None = None
     samples: list[float] = field(default_factory=list)
 
     @property
@@ -106,6 +109,7 @@ class Sight:
             for k in PAIRS
         }
         enough = max(goal, NEARLY * min(seen.bound for seen in best.values()))
+        self.two = best[2]
         self.pairs = next(k for k in PAIRS if best[k].bound <= enough)
         seen = best[self.pairs]
         self.width = float(np.clip(seen.better, seen.step / 2, seen.step * 2))
@@ -117,13 +121,15 @@ class Sight:
         Offsets go up to `WIDEST` times the row on both sides.
         """
         best = Seen()
+        if self.two is not None and self.pairs > 2 and self.two.bound <= goal:
+            seen = yield from self._looked(row, self.two.step, 2, spread)
+            if seen.refused or seen.bound <= goal:
+                return seen
         width, attempts = self.width, 0
         for _ in range(TRIES + ATTEMPTS):
-            steps = width * RATIO ** -np.arange(float(self.pairs))[None, :]
-            pairs = yield from measured_pairs(self.base, row[None, :], np.zeros(1, np.intp), steps, self.centre)
-            if pairs.refused[0]:
-                return Seen(refused=True)
-            seen = self._read(pairs, spread)
+            seen = yield from self._looked(row, width, self.pairs, spread)
+            if seen.refused:
+                return seen
             better = seen.better
             if seen.bound < best.bound:
                 best, self.width = seen, width
@@ -136,6 +142,11 @@ class Sight:
         if np.isfinite(best.sample):
             self.samples.append(best.sample)
         return best
+
+    def _looked(self, row: Array, width: float, pairs: int, spread: float) -> Inquiry[Seen]:
+        steps = width * RATIO ** -np.arange(float(pairs))[None, :]
+        values = yield from measured_pairs(self.base, row[None, :], np.zeros(1, np.intp), steps, self.centre)
+        return Seen(refused=True) if values.refused[0] else self._read(values, spread)
 
     def _read(self, pairs: Pairs, spread: float) -> Seen:
         """Value ± bound from some pairs."""
