@@ -213,7 +213,8 @@ def _tally(verdicts: Sequence[Verdict]) -> str:
 
 def _figures(entry: _Entry, most: int) -> tuple[str, str]:
     """Claim, and witness ± bound: where refuted, with enough digits to look different, but at most `most`."""
-    refuted = entry.verdict == Verdict.REFUTED
+    # What something else than the witness refutes looks like it; digits would not tell it apart.
+    refuted = entry.verdict == Verdict.REFUTED and not (entry.agrees and entry.reason)
     digits = min(wording.digits_to_tell_apart(entry.digits) if refuted else _DIGITS_ELSEWHERE, most)
     return wording.number(entry.claim, digits), wording.with_bound(entry.witness, entry.bound, max(digits, 4))
 
