@@ -294,7 +294,7 @@ class _Examination:
     def _allowed(self, row: Array) -> Allowed:
         return allowed_along(
             row,
-            self.claim,
+            self.mended,  # the rule's max(|c|, |w|): a wrong zero that was put right is allowed a share of its value
             self.result.moves.typical,
             rel_tol=self.rel_tol,
             abs_tol=self.abs_tol,
