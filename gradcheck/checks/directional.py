@@ -1,6 +1,7 @@
 """The check of a gradient with many entries: along random directions, with the wrong entries found and named."""
 
 import time
+from dataclasses import replace
 
 import numpy as np
 
@@ -12,7 +13,7 @@ from gradcheck.claims.desk import Examined
 from gradcheck.claims.directions import LEAST, Group
 from gradcheck.claims.entries import diagnoses_of, entries_of
 from gradcheck.claims.examination import examine
-from gradcheck.claims.joint_examination import Culprit, JointlyExamined, examine_jointly
+from gradcheck.claims.joint_examination import APART, Culprit, JointlyExamined, examine_jointly
 from gradcheck.claims.policy import Rules
 from gradcheck.claims.rule import Tolerance, judge
 from gradcheck.counsel.claim_findings import kinks_at_point, levels_at_point, mutation
@@ -164,6 +165,8 @@ def _examples(claim: Array, joint: JointlyExamined, subject: Subject) -> IntArra
         parts = joint.parts[:: -(-len(joint.parts) // EXAMPLES)]
         places = [part.start + np.flatnonzero(joint.moves.group[part.start : part.stop]) for part in parts]
         chosen += [int(within[within.size // 2]) for within in places if within.size]
+    if not joint.directions and not chosen:  # no variable has any room: entries tell the reason
+        chosen = np.flatnonzero(~subject.domain.integer)[:EXAMPLES].tolist()
     return np.unique(np.array(chosen, dtype=np.intp))
 
 
@@ -200,6 +203,12 @@ def _measured(
 
 def _direction_checks(subject: Subject, claim: Array, joint: JointlyExamined, refuted: bool) -> DirectionChecks:
     directions = joint.directions
+    if joint.doubted and not refuted and not joint.parts:
+        # What they are off was explained by entries, and these are not refuted one by one.
+        directions = [
+            replace(each, verdict=Verdict.UNDECIDED, reason=APART) if each.verdict == Verdict.REFUTED else each
+            for each in directions
+        ]
     suspects = [Verdict.REFUTED if refuted and d.suspect else d.verdict for d in directions]
     left_out = np.flatnonzero(joint.moves.group == Group.LEFT_OUT)
     coverage = tuple(_coverage(claim, joint))

@@ -8,6 +8,7 @@ of a direction can be made again without keeping it, a million entries in some m
 Sources: signs and magnitudes at random are common practice; the hash is SplitMix64 (Steele, Lea & Flood 2014).
 """
 
+import math
 from dataclasses import dataclass, replace
 from enum import IntEnum
 
@@ -181,6 +182,17 @@ def allowed_along(
         moved, size = np.abs(row[part]), np.abs(np.nan_to_num(claim[part]))
         floor = rounding / typical[part]
         allowance = np.where(size <= ZERO_CLAIM * floor, ZERO_ALLOWANCE, ALLOWANCE) * floor
-        plain += float(np.sum((moved * (abs_tol + rel_tol * size)) ** 2))
-        share += float(np.sum((moved * allowance) ** 2))
-    return Allowed(plain=SPREAD * plain**0.5, rounding=SPREAD * share**0.5)
+        plain = math.hypot(plain, root_of_squares(moved * (abs_tol + rel_tol * size)))
+        share = math.hypot(share, root_of_squares(moved * allowance))
+    return Allowed(plain=SPREAD * plain, rounding=SPREAD * share)
+
+
+def root_of_squares(values: Array) -> float:
+    """√Σv² of those that are numbers, also where the squares are too large or too small for floating point."""
+    sizes = np.abs(values)
+    largest = float(np.fmax.reduce(sizes, initial=0.0))
+    if largest == 0 or not np.isfinite(largest):
+        return largest
+    # By a power of two, which rounds nothing.
+    scale = 2.0 ** max(math.frexp(largest)[1] - 1, -1022)
+    return scale * math.sqrt(float(np.nansum((sizes / scale) ** 2)))

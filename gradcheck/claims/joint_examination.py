@@ -10,7 +10,16 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from gradcheck.claims.directions import GROUPS, Allowed, Group, Moves, allowed_along, moves_of, with_level
+from gradcheck.claims.directions import (
+    GROUPS,
+    Allowed,
+    Group,
+    Moves,
+    allowed_along,
+    moves_of,
+    root_of_squares,
+    with_level,
+)
 from gradcheck.claims.localisation import Located, Part, Search, wrong_entries
 from gradcheck.claims.rule import REFUTING_BOUNDS
 from gradcheck.evaluation.protocol import Inquiry
@@ -34,6 +43,7 @@ QUIET, PASSES = 2, 8
 LARGE, ALIKE = 0.1, 3
 #: Directions of later passes have other seeds.
 _PASS, _GROUP = 1000, 100
+APART = "the slope very close to the point is another one than around it: a narrow feature at the point"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -43,6 +53,7 @@ class Direction:
     Attributes
     ----------
     group : Group
+    seed : int
     claim, witness, bound : float
     allowed : Allowed
     verdict : Verdict
@@ -53,6 +64,7 @@ class Direction:
     """
 
     group: Group
+    seed: int
     claim: float
     witness: float
     bound: float
@@ -96,6 +108,8 @@ class JointlyExamined:
         Wrong entries; `agreed` says whether a second look stands behind them.
     agreed : bool
         New directions found nothing once the culprits were put right.
+    doubted : bool
+        Far smaller steps do not see what the culprits are said to be off.
     quiet : list of Direction
         Directions of the claim with the culprits put right.
     parts : list of Part
@@ -111,6 +125,7 @@ class JointlyExamined:
     directions: list[Direction] = field(default_factory=list)
     culprits: list[Culprit] = field(default_factory=list)
     agreed: bool = True
+    doubted: bool = False
     quiet: list[Direction] = field(default_factory=list)
     parts: list[Part] = field(default_factory=list)
     ratio: float = np.nan
@@ -193,6 +208,7 @@ class _Examination:
                     yield from self._search(group, seed, direction)
                     break
         yield from self._close_look()
+        yield from self._second_look()
         result.noise = self.sight.noise
         return result
 
@@ -222,8 +238,9 @@ class _Examination:
         total = 0.0
         for first in range(0, row.size, 1 << 16):
             part = slice(first, first + (1 << 16))
-            total += float(np.nansum((self.mended[part] * row[part]) ** 2))
-        return math.sqrt(total)
+            with np.errstate(invalid="ignore"):
+                total = math.hypot(total, root_of_squares(self.mended[part] * row[part]))
+        return total
 
     def _judged(self, group: Group, seed: int) -> Inquiry[Direction]:
         """The verdict along one direction of the claim, as mended so far; the whole witness is heard in doubt."""
@@ -231,7 +248,13 @@ class _Examination:
         allowed = self._allowed(row)
         claimed = float(np.dot(np.nan_to_num(self.mended), row))
         direction = Direction(
-            group=group, claim=claimed, witness=np.nan, bound=np.inf, allowed=allowed, verdict=Verdict.UNDECIDED
+            group=group,
+            seed=seed,
+            claim=claimed,
+            witness=np.nan,
+            bound=np.inf,
+            allowed=allowed,
+            verdict=Verdict.UNDECIDED,
         )
         if group is not Group.INWARD:
             seen = yield from self.sight.along(row, allowed.plain / 3, self._spread(row))
@@ -271,7 +294,7 @@ class _Examination:
     def _allowed(self, row: Array) -> Allowed:
         return allowed_along(
             row,
-            self.claim,
+            self.mended,  # the rule's max(|c|, |w|): a wrong zero that was put right is allowed a share of its value
             self.result.moves.typical,
             rel_tol=self.rel_tol,
             abs_tol=self.abs_tol,
@@ -357,7 +380,7 @@ class _Examination:
     def _close_look(self) -> Inquiry[None]:
         """Where all is confirmed: is the slope very close to the point the same?"""
         result = self.result
-        if any(direction.verdict != Verdict.CONFIRMED for direction in result.directions):
+        if not result.directions or any(d.verdict != Verdict.CONFIRMED for d in result.directions):
             return
         first = result.directions[0]
         if first.group is Group.INWARD:
@@ -367,10 +390,51 @@ class _Examination:
         same = yield from self.sight.close_to_the_point(row, first.claim, terms)
         if not same:
             judged = yield from self._whole_witness(replace(first, verdict=Verdict.UNDECIDED), row)
-            apart = "the slope very close to the point is another one than around it: a narrow feature at the point"
             if judged.verdict == Verdict.CONFIRMED:
-                judged = replace(judged, verdict=Verdict.UNDECIDED, reason=apart)
+                judged = replace(judged, verdict=Verdict.UNDECIDED, reason=APART)
             result.directions[0] = judged
+
+    def _second_look(self) -> Inquiry[None]:
+        """What is off is looked at with far smaller steps, too: around a narrow feature, wide steps see another slope.
+
+        Culprits must be seen by them as well, or are examined one by one; a direction that is seen as it is claimed is
+        not refuted.
+        """
+        result = self.result
+        if result.culprits and result.agreed:
+            yield from self._second_look_at_culprits()
+        for place, direction in enumerate(result.directions):
+            if direction.verdict != Verdict.REFUTED or (result.culprits and result.agreed):
+                continue
+            row = result.moves.row(direction.group, direction.seed, 0, self.base.size)
+            slopes, excess = yield from self._closer(row, direction.witness, direction.group)
+            with np.errstate(invalid="ignore"):
+                spoken = excess > np.abs(slopes - direction.claim)
+            if spoken.any():
+                result.directions[place] = replace(direction, verdict=Verdict.UNDECIDED, reason=APART)
+            elif not result.refused:  # where no entries explain it, steps of all sizes must agree
+                doubted = replace(direction, verdict=Verdict.UNDECIDED)
+                result.directions[place] = yield from self._whole_witness(doubted, row)
+        if all(direction.verdict != Verdict.REFUTED for direction in result.directions):
+            result.parts, result.ratio = [], np.nan
+
+    def _second_look_at_culprits(self) -> Inquiry[None]:
+        result = self.result
+        for group in GROUPS:
+            places = [culprit.place for culprit in result.culprits if result.moves.group[culprit.place] == group]
+            if not places:
+                continue
+            row = np.zeros(self.base.size)
+            whole = result.moves.row(group, self._seed_of(group, 0), 0, self.base.size)
+            row[places] = whole[places]
+            _, excess = yield from self._closer(row, float(np.dot(self.mended[places], row[places])), group)
+            result.doubted |= bool((excess > 0).any())
+            result.agreed &= not result.doubted
+
+    def _closer(self, row: Array, seen: float, group: Group) -> Inquiry[tuple[Array, Array]]:
+        sizes = np.fmax(np.abs(np.nan_to_num(self.claim)), np.abs(np.nan_to_num(self.mended)))
+        terms = float(np.dot(sizes, np.abs(row)))
+        return (yield from self.sight.speaks_against(row, seen, terms, inward=group is Group.INWARD))
 
 
 def _decided(direction: Direction) -> Direction:
@@ -401,5 +465,5 @@ def _wobble(base: Array, claim: Array) -> float:
     for first in range(0, base.size, 1 << 16):
         part = slice(first, first + (1 << 16))
         with np.errstate(invalid="ignore", over="ignore"):
-            total += float(np.nansum((claim[part] * base[part]) ** 2))
-    return 0.3 * np.finfo(float).eps * total**0.5 if np.isfinite(total) else 0.0
+            total = math.hypot(total, root_of_squares(claim[part] * base[part]))
+    return 0.3 * np.finfo(float).eps * total if np.isfinite(total) else 0.0

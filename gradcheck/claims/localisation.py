@@ -12,7 +12,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from gradcheck.claims.directions import Group, Moves, allowed_along
+from gradcheck.claims.directions import Group, Moves, allowed_along, root_of_squares
 from gradcheck.evaluation.protocol import Inquiry
 from gradcheck.records.arrays import Array
 from gradcheck.witnesses.joint_look import Sight
@@ -104,7 +104,8 @@ class Search:
         row = self.moves.row(self.group, self.seed, start, stop, graded=graded)
         allowed = self.allowed(row, start, stop)
         coarse = 0.0 if stop - start == 1 else DIGITS * abs(within)
-        spread = float(np.linalg.norm(self.claim[start:stop] * row[start:stop]))
+        with np.errstate(invalid="ignore"):
+            spread = root_of_squares(self.claim[start:stop] * row[start:stop])
         seen = yield from self.sight.along(row, max(allowed / 3, coarse), spread)
         if seen.refused:
             return None

@@ -30,6 +30,10 @@ STAYS = 16.0
 ENOUGH, MEDIAN = 3, 0.6745
 #: The close pair: its step in units of the direction; what it may be off by rounding, and as a share of the terms.
 CLOSE, CLOSE_DEVIATIONS, CLOSE_SHARE = 2.0**-20, 30.0, 1e-6
+#: Steps of a second look at what is off: a feature may be as narrow as rounding lets it be seen.
+CLOSER = CLOSE * 2.0 ** np.array([0.0, -8.0, -16.0])
+#: A slope from one side takes a second step, and is so many times as uncertain as one from both.
+ONE_SIDED = 8.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -186,6 +190,40 @@ class Sight:
         rounding = CLOSE_DEVIATIONS * max(np.finfo(float).eps * (abs(self.centre[0]) + terms), self.noise) / CLOSE
         return bool(abs(slope - claimed) <= rounding + CLOSE_SHARE * terms)
 
+    def speaks_against(self, row: Array, seen: float, terms: float, *, inward: bool) -> Inquiry[tuple[Array, Array]]:
+        """Slopes along `row` at much smaller steps, and by how much more than their doubt they are off what was `seen`.
+
+        Parameters
+        ----------
+        row : ndarray, shape (n,)
+        seen : float
+            The derivative along the row, as wide steps see it.
+        terms : float
+            Sum of the sizes of its terms.
+        inward : bool
+            Whether only positive multiples of the row stay within the bounds.
+
+        Returns
+        -------
+        slopes, excess : ndarray, shape (k,)
+            NaN where the function fails or the budget ended.
+        """
+        offsets = np.stack([CLOSER, CLOSER / 2 if inward else -CLOSER], axis=1)
+        reply = yield Request(base=self.base, directions=row[None, :], offsets=offsets.reshape(1, -1))
+        one, other = np.where(reply.finite[0], reply.values[0, :, 0], np.nan).reshape(-1, 2).T
+        centre = float(self.centre[0])
+        if inward:
+            slopes, bends = (4 * other - one - 3 * centre) / CLOSER, one - 2 * other + centre
+        else:
+            slopes, bends = (one - other) / (2 * CLOSER), one + other - 2 * centre
+        # Wide steps take for noise what is none close to the point; noise would show there, and closer, as well.
+        bends = np.nan_to_num(np.abs(bends), posinf=0.0)
+        bends[-1] = bends[-2:].max()
+        noise = np.minimum(self.noise, np.maximum.accumulate(bends[::-1])[::-1])
+        rounding = CLOSE_DEVIATIONS * np.maximum(np.finfo(float).eps * (abs(centre) + terms), noise) / CLOSER
+        rounding *= ONE_SIDED if inward else 1.0
+        return slopes, np.abs(slopes - seen) - rounding - CLOSE_SHARE * terms
+
 
 def _truncation(pairs: Pairs, spread: float) -> float:
     """What the next odd term leaves in the value extrapolated from k pairs.
@@ -208,7 +246,9 @@ def _plateau(samples: list[float]) -> float:
     first = last
     while first > 0 and samples[first - 1] <= STAYS * max(samples[first:]):
         first -= 1
-    return float(np.sqrt(np.mean(np.square(samples[first:]))))
+    counted = np.array(samples[first:])
+    largest = counted.max()  # squares of huge values would be infinite
+    return float(largest * np.sqrt(np.mean(np.square(counted / largest)))) if largest > 0 else 0.0
 
 
 def _worthwhile(width: float, better: float) -> bool:
