@@ -39,9 +39,7 @@ def claimed_matrix(session: Session, function: str, kind: str, centre: Array) ->
 
 def in_full(reply: Reply, m: int, n: int) -> Array:
     """The claim (m, n) that a reply holds, sparse or not."""
-    if is_stored(reply.values):
-        return dense_of(reply.values[0, 0], m, n)
-    return reply.values[0]
+    return dense_of(reply.values[0, 0], m, n) if is_stored(reply.values) else np.asarray(reply.values[0])
 
 
 def sparse_claim(session: Session, function: str, kind: str) -> NDArray[Any] | None:
