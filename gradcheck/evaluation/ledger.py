@@ -66,9 +66,8 @@ class Ledger:
         return self.calls["model"] + self.calls["complex"]
 
     def begin_point(self) -> None:
-        """Forget what claims said at the point that was looked at before: it is held against nothing at another one."""
+        """Forget the values that claims told at the point before: they are held against nothing at another one."""
         self.claimed_values.clear()
-        self.failed_vectors.clear()
 
     def fail(self, function: str, point: Callable[[], Array], status: Status, message: str) -> None:
         """Record a failed evaluation; `point` makes the point where it is kept."""
