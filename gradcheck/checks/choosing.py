@@ -87,7 +87,12 @@ def checked_claim(session: Session, function: str, kind: str, centre: Array, rul
 def _hold_pairs(
     session: Session, function: str, rules: Rules, reports: dict[str, CheckReport], products: dict[str, Claimed]
 ) -> None:
-    """⟨J·v, w⟩ = ⟨v, Jᵀ·w⟩ where both products are claimed: needs nothing but what they gave."""
+    """⟨J·v, w⟩ = ⟨v, Jᵀ·w⟩ where both products are claimed: needs nothing but what they gave.
+
+    Where one of the two is refuted already, the pair cannot hold, and that says nothing about the other.
+    """
+    if any(kind in reports and reports[kind].verdict == Verdict.REFUTED for kind in PRODUCTS):
+        return
     if not {"jvp", "vjp"} <= products.keys() or any(products[kind].finding for kind in PRODUCTS):
         return
     measures = [measure_of(session, function, kind, rules) for kind in PRODUCTS]

@@ -34,9 +34,12 @@ def claimed_matrix(session: Session, function: str, kind: str, centre: Array) ->
     if int(reply.status[0, 0]) == Status.CRASH:
         words = session.ledger.last_words[function, f"claim:{kind}"]
         return np.full((centre.size, subject.layout.size), np.nan), failing_claim(subject, function, kind, words)
-    if is_stored(reply.values):
-        return dense_of(reply.values[0, 0], centre.size, subject.layout.size), None
-    return reply.values[0], None
+    return in_full(reply, centre.size, subject.layout.size), None
+
+
+def in_full(reply: Reply, m: int, n: int) -> Array:
+    """The claim (m, n) that a reply holds, sparse or not."""
+    return dense_of(reply.values[0, 0], m, n) if is_stored(reply.values) else np.asarray(reply.values[0])
 
 
 def sparse_claim(session: Session, function: str, kind: str) -> NDArray[Any] | None:

@@ -135,7 +135,9 @@ def _along_tangents(
     return Looked(
         examined=examined,
         names=tuple(
-            f"along {label}" if m == 1 else f"{function}[{i}] along {label}" for i in range(m) for label in labels
+            f"along {label}" if m == 1 else f"{subject.output_name(function, i)} along {label}"
+            for i in range(m)
+            for label in labels
         ),
         index=places(np.arange(m), numbers),
         units=vectors.units.size,
@@ -148,7 +150,7 @@ def _with_cotangents(
     subject, vectors = session.subject, claimed.vectors
     m = centre.size
     weights = vectors.rows()[: vectors.judged]
-    unit = tuple("w = 1" if m == 1 else f"{function}[{i}]" for i in vectors.units.tolist())
+    unit = tuple("w = 1" if m == 1 else subject.output_name(function, i) for i in vectors.units.tolist())
     labels = vectors.labels(unit, "random w")
     numbers = np.concatenate([vectors.units, m + np.arange(len(vectors.random))])
     magnitude = np.abs(weights) @ np.abs(centre)

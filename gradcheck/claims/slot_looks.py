@@ -126,10 +126,16 @@ class SlotLooks(RowSearch):
         yield from self._look_at_rows_again()
 
     def _look_at_rows_again(self) -> Inquiry[None]:
-        """Rows that nothing explains get a second look along a random direction; their entries cannot be judged."""
+        """Rows that nothing explains get a second look along the directions; their entries cannot be judged.
+
+        Along every direction that disagrees: each of them would refute the row by itself.
+        """
         table = self.table
-        rows = np.flatnonzero(self._disagreeing())
-        for seen in self.random[:1] if rows.size and not self.ended else ():
+        for seen, gap, slack in self._disagreement():
+            with np.errstate(invalid="ignore"):
+                rows = np.flatnonzero(np.isfinite(slack) & (np.abs(gap) > SUSPECT * slack))
+            if rows.size == 0 or self.ended:
+                continue
             direction = seen.row[None, :]
             room = room_of(self.base, direction, self.domain, seen.way, bits=PART_BITS)
             looking = finite_difference(

@@ -272,11 +272,13 @@ class Evaluator:
             raw = self._asked(kind, target, call.moves.base)
             return hessian_products(raw, layout, shape, call.rows)
         width = {"jvp": math.prod(shape), "vjp": layout.size, "hvp": layout.size}[kind]
+        outputs = self.subject.outputs.get(target.name)
         products = np.full((len(call.rows), width), np.nan)
         for i, row in enumerate(call.rows):
-            vector = cotangent(shape, row) if kind == "vjp" else tangent(layout, row)
+            vector = cotangent(shape, row, outputs) if kind == "vjp" else tangent(layout, row)
             try:
-                products[i] = product_vector(kind, self._asked(kind, target, call.moves.base, vector), layout, shape)
+                raw = self._asked(kind, target, call.moves.base, vector)
+                products[i] = product_vector(kind, raw, layout, shape, outputs)
             except UsageError:
                 raise
             except (Exception, SystemExit) as error:

@@ -65,6 +65,10 @@ class Ledger:
         """Calls of the user's model, in real and complex numbers."""
         return self.calls["model"] + self.calls["complex"]
 
+    def begin_point(self) -> None:
+        """Forget the values that claims told at the point before: they are held against nothing at another one."""
+        self.claimed_values.clear()
+
     def fail(self, function: str, point: Callable[[], Array], status: Status, message: str) -> None:
         """Record a failed evaluation; `point` makes the point where it is kept."""
         self.failed += 1

@@ -55,6 +55,7 @@ class Session:
         UsageError
             If what it returns is no array of real numbers.
         """
+        self.ledger.begin_point()
         values = {}
         for name in self.subject.targets:
             request = Request(

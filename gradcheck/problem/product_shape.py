@@ -1,7 +1,6 @@
 """Products of a derivative with a vector, and Hessians: what the claim is given, and the shape that it must return."""
 
 import math
-from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
@@ -10,6 +9,7 @@ from gradcheck.errors import DerivativeShapeError, UsageError
 from gradcheck.problem.containers import Given
 from gradcheck.problem.derivative_shape import claim_matrix
 from gradcheck.problem.layout import Layout, real_numbers
+from gradcheck.problem.opening import opened
 from gradcheck.problem.template import Node, Untouched
 from gradcheck.records.arrays import Array
 
@@ -29,13 +29,19 @@ def tangent(layout: Layout, row: Array) -> Any:
     return parts[0] if len(parts) == 1 else tuple(parts)
 
 
-def cotangent(output_shape: tuple[int, ...], row: Array) -> Any:
-    """A vector (m,) in the shape of the output; a number where the model returns one."""
+def cotangent(output_shape: tuple[int, ...], row: Array, outputs: Layout | None = None) -> Any:
+    """A vector (m,) in the shape of the output, or its structure (`outputs`); a number where the model returns one."""
+    if outputs is not None and outputs.single is None:
+        return outputs.restore(row)[0][0]
     return float(row[0]) if output_shape == () else row.reshape(output_shape).copy()
 
 
-def product_vector(kind: str, raw: Any, layout: Layout, output_shape: tuple[int, ...]) -> Array:
+def product_vector(
+    kind: str, raw: Any, layout: Layout, output_shape: tuple[int, ...], outputs: Layout | None = None
+) -> Array:
     """What a claimed product returned, as a vector: (m,) for ``"jvp"``, (n,) for ``"vjp"`` and ``"hvp"``.
+
+    `outputs` is the layout of what the model returns, where that is a nesting.
 
     Raises
     ------
@@ -48,8 +54,9 @@ def product_vector(kind: str, raw: Any, layout: Layout, output_shape: tuple[int,
         _refuse_many_outputs(kind, layout, output_shape)
     if raw is None:
         raise UsageError(f"{kind} returned None; does it lack a return statement?")
-    if kind != "jvp" and layout.single is None and not hasattr(raw, "shape"):
-        return layout.flatten(raw, f"what {kind} returned")
+    side = outputs if kind == "jvp" else layout
+    if side is not None and side.single is None and not hasattr(raw, "shape"):
+        return side.flatten(raw, f"what {kind} returned")
     array = real_numbers(raw, f"what {kind} returned")
     inputs = layout.shape
     expected, size = (output_shape, math.prod(output_shape)) if kind == "jvp" else (inputs, layout.size)
@@ -107,7 +114,7 @@ def hessian_products(raw: Any, layout: Layout, output_shape: tuple[int, ...], ro
         if np.dtype(raw.dtype).kind == "c":
             raise UsageError(f"the hessian claim is complex ({raw.dtype}); derivatives of a real model are real")
         return np.asarray((raw @ rows.T).T, dtype=float)
-    if layout.single is None and m == 1 and isinstance(raw, Mapping | list | tuple) and not _is_matrix(raw, n):
+    if layout.single is None and m == 1 and not _is_matrix(raw, n) and opened(raw) is not None:
         # A nesting of the input's structure, in each place of which stands a nesting of it again: the Jacobian of the
         # gradient.
         matrix = claim_matrix("hessian", raw, layout, (n,), layout)

@@ -435,3 +435,11 @@ def test_a_spent_budget_leaves_a_product_undecided():
 
     assert report.verdict == Verdict.UNDECIDED
     assert report.evaluations <= 9
+
+
+def test_a_right_vjp_is_not_refuted_beside_a_wrong_jvp():
+    x = np.array([0.5, 1.5, 2.0])
+    report = gradcheck.check(
+        lambda x: x**2, at=x, jvp=lambda x, v: 4 * x * v, vjp=lambda x, w: 2 * x * w, on_refuted="return"
+    )
+    assert {part.kind: str(part.verdict) for part in report.parts} == {"jvp": "refuted", "vjp": "confirmed"}

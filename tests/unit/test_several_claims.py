@@ -307,3 +307,19 @@ def test_what_is_no_pair_of_value_and_gradient_is_an_error(claim, error, words):
         look(value_and_gradient=claim)
 
     assert words in str(told.value)
+
+
+def _two_variables(**claims):
+    variables = [gradcheck.Variable(name, 0.5, lower=0.0, upper=2.0) for name in ("span", "chord")]
+    return gradcheck.Problem(
+        variables=variables, objective=gradcheck.Function(lambda x: float(x[0] ** 2 * x[1]), **claims)
+    )
+
+
+def test_an_audit_holds_the_value_beside_a_gradient_against_the_model_at_the_same_point():
+    problem = _two_variables(
+        value_and_gradient=lambda x: (x[0] ** 2 * x[1], np.array([2 * x[0] * x[1], x[0] ** 2])),
+    )
+    report = gradcheck.audit(problem, samples=3)
+    assert [str(claim.verdict) for claim in report.claims] == ["confirmed"] * 4
+    assert all("value" in claim.entries.name for claim in report.claims)

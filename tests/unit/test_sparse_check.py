@@ -574,3 +574,36 @@ def test_the_entries_of_a_tiny_sparse_claim_are_all_listed():
 
     assert len(report.entries) == 4
     assert report.verdict == "confirmed"
+
+
+@pytest.mark.parametrize("columns", [1, 3])
+def test_a_sparse_claim_of_few_columns_may_be_a_callable(columns):
+    """It is checked entry by entry, and asked once more at the end: what it stores then is read like the first time."""
+
+    def rows(x):
+        return np.array([x[0] ** 2, np.sin(x[-1])])
+
+    def rows_jacobian(x):
+        claim = sparse.lil_array((2, columns))
+        claim[0, 0], claim[1, columns - 1] = 2 * x[0], np.cos(x[-1])
+        return claim.tocsr()
+
+    report = looked_at(rows_jacobian, function=rows, at=X[:columns])
+    assert report.verdict == "confirmed"
+
+
+@pytest.mark.parametrize("scale", [1e-3, 1e-4, 1e-6])
+@pytest.mark.parametrize("seed", range(3))
+def test_a_narrow_model_at_zero_is_not_refuted_by_a_direction_that_had_one_look(scale, seed):
+    """At 0 the typical size of the variable is not known: random directions reach far beyond what the model bends in.
+
+    Each of them that disagrees gets a second look; one look alone refutes nothing.
+    """
+    report = looked_at(
+        sparse.csr_array([[1 / scale]]),
+        function=lambda x: np.tanh(x / scale),
+        at=[0.0],
+        pattern=np.ones((1, 1), bool),
+        seed=seed,
+    )
+    assert report.verdict == "confirmed"
