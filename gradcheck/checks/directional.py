@@ -27,7 +27,7 @@ from gradcheck.records.verdict import Verdict
 from gradcheck.report.check_text import check_text
 from gradcheck.witnesses.finite_difference import SOURCE
 from gradcheck.witnesses.steps import room_along
-from gradcheck.wording import count, number
+from gradcheck.wording import count, listed, number
 
 #: Entries that are looked at one by one where directions do not settle which are wrong: claims that are no number,
 #: examples from a claim that is wrong nearly everywhere.
@@ -55,6 +55,7 @@ def checked_directions(
         unit_roundoff=measure.unit_roundoff,
         directions=rules.directions if isinstance(rules.directions, int) else None,
         seed=rules.seed,
+        blocks=[slice(leaf.start, leaf.stop) for leaf in subject.layout.leaves],
     )
     joint = conduct_one(addressed(inquiry, function=function), session.gate)
     second = second_answer(session, function, kind)
@@ -158,13 +159,15 @@ def _examples(claim: Array, joint: JointlyExamined, subject: Subject) -> IntArra
     chosen = [culprit.place for culprit in joint.culprits[:EXAMPLES]]
     broken = np.flatnonzero(~np.isfinite(claim) & ~subject.domain.integer)
     chosen += broken[:EXAMPLES].tolist()
-    if len(joint.parts) == 1:
-        moved = np.flatnonzero(joint.moves.group)
-        chosen += moved[((np.arange(EXAMPLES) + 0.5) * moved.size / EXAMPLES).astype(int)].tolist()
-    elif joint.parts:
-        parts = joint.parts[:: -(-len(joint.parts) // EXAMPLES)]
-        places = [part.start + np.flatnonzero(joint.moves.group[part.start : part.stop]) for part in parts]
-        chosen += [int(within[within.size // 2]) for within in places if within.size]
+    if joint.parts:
+        wrong = np.zeros(claim.size, bool)
+        for part in joint.parts:
+            wrong[part.start : part.stop] = True
+        for leaf in subject.layout.leaves:
+            wrong[leaf.start : leaf.stop] &= joint.blocks.get(leaf.start, True)
+        places = np.flatnonzero(wrong & (joint.moves.group != Group.LEFT_OUT))
+        # At random: places in even steps may all lie in one row of a matrix.
+        chosen += np.random.default_rng(0).permutation(places)[:EXAMPLES].tolist()
     if not joint.directions and not chosen:  # no variable has any room: entries tell the reason
         chosen = np.flatnonzero(~subject.domain.integer)[:EXAMPLES].tolist()
     return np.unique(np.array(chosen, dtype=np.intp))
@@ -265,6 +268,14 @@ def _everywhere(subject: Subject, joint: JointlyExamined) -> tuple[str, ...]:
         return (text,)
     if not joint.parts:
         return ()
+    if any(joint.blocks.values()):
+        named = {
+            mark: [leaf.path for leaf in subject.layout.leaves if joint.blocks.get(leaf.start) is mark]
+            for mark in (True, False)
+        }
+        right = f"; no error was seen in {listed(named[False])}" if named[False] else ""
+        text = f"more entries are wrong than can be named one by one, in {listed(named[True])}{right}. The entries told"
+        return (f"{text} are examples.",)
     runs: list[list[int]] = []
     for part in sorted(joint.parts, key=lambda part: part.start):
         if runs and part.start == runs[-1][1]:

@@ -19,6 +19,13 @@ INNER_JUMPS = (
     "the values jump a little as variables move (an inner iteration, an adaptive step), which explains the difference: "
     "the slope of the program is not that of the model; tighten its tolerance"
 )
+#: What is said of an entry whose slope very close to the point is what is claimed.
+NARROW_FEATURE = (
+    "the slope very close to the point is what is claimed, and another one around it: a narrow feature or a ripple, "
+    "which an optimizer takes for noise"
+)
+#: How well a slope close to the point must be known, beside the difference in question.
+NARROW_SHARE = 0.1
 #: A claim this close to the witness is nearly right.
 LITTLE = 1e-2
 #: What is said of an entry that is seen to be off, but by no more than rounding may do to honest code.
@@ -267,6 +274,21 @@ class Desk:
         reason = self.reason[part]
         reason[explained] = INNER_JUMPS
         self.reason[part] = reason
+
+    def hear_narrowly(self, columns: IntArray, slopes: Array, doubt: Array) -> None:
+        """Take back refutations where slopes very close to the point (d, k, m), each ± doubt, are what is claimed.
+
+        They must also be seen to differ from the witness, and the doubt be small beside what is in question.
+        """
+        part = self._part(columns)
+        claim, value, bound = (array[part].T[:, None, :] for array in (self.claim, self.value, self.bound))
+        with np.errstate(invalid="ignore"):
+            for_claim = (np.abs(slopes - claim) <= doubt) & (doubt <= NARROW_SHARE * np.abs(claim - value))
+            against = np.abs(slopes - value) > doubt + bound
+        spoken = (for_claim & against).any(axis=1).T & self.refuted[part]
+        self.refuted[part] &= ~spoken
+        self.closed[part] |= spoken
+        self.reason[part] = np.where(spoken, NARROW_FEATURE, self.reason[part])
 
     def run_out(self) -> None:
         """The budget or the time is over: what is open stays open."""

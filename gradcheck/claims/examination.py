@@ -12,7 +12,7 @@ import numpy as np
 from gradcheck.claims.desk import STAIRCASE, Desk, Examined
 from gradcheck.claims.inner_jumps import explained_by_jumps
 from gradcheck.claims.wide_plateaus import staircases
-from gradcheck.evaluation.protocol import Inquiry
+from gradcheck.evaluation.protocol import Inquiry, Request
 from gradcheck.records.arrays import Array, IntArray
 from gradcheck.witnesses.complex_step import complex_step
 from gradcheck.witnesses.finite_difference import finite_difference
@@ -27,6 +27,9 @@ OTHER_WIDTH = 0.3719
 #: Half-length of the lines along which a nearly right entry is looked at, in units of the variable's size, and how many
 #: of them.
 WIDE, WIDE_LOOKS_MOST = 0.5, 10
+#: Steps of a look very close to the point, in units of the variable's size, and what a slope may be off by rounding, in
+#: units in the last place.
+NARROW, NARROW_DEVIATIONS = 2.0 ** np.array([-20.0, -28.0, -36.0]), 30.0
 #: How many variables without influence are looked at for stairs.
 STAIRCASES_MOST = 10
 
@@ -92,6 +95,7 @@ def examine(
             whole = yield from finite_difference(base, columns[open_], _along(room, open_), centre)
             desk.hear(whole, open_, replacing=True)
             yield from _second_look(desk, base, columns, room, centre)
+            yield from _narrow_look(desk, base, columns, room, centre)
             yield from _wide_look(desk, base, columns, room)
     if COMPLEX_STEP in witnesses:
         open_ = desk.open_columns() if DIFFERENCES in witnesses else everything
@@ -115,6 +119,30 @@ def _second_look(desk: Desk, base: Array, columns: IntArray, room: Room, centre:
     other = _along(room, doubted)
     other = replace(other, scale=other.scale * OTHER_WIDTH, widest=other.widest * OTHER_WIDTH)
     desk.second((yield from finite_difference(base, columns[doubted], other, centre)), doubted)
+
+
+def _narrow_look(desk: Desk, base: Array, columns: IntArray, room: Room, centre: Array) -> Inquiry[None]:
+    """Refutations fall where the slope very close to the point is what is claimed.
+
+    Ripples and narrow features close to the point are noise to wide steps, and what those see is the slope around them.
+    """
+    doubted = desk.refuted_columns()
+    if doubted.size == 0:
+        return
+    x, part = base[columns[doubted]][:, None], _along(room, doubted)
+    steps = part.scale[:, None] * NARROW
+    up, down = (x + steps) - x, (x - steps) - x
+    allowed = (up <= part.above[:, None]) & (-down <= part.below[:, None]) & (up > 0) & (down < 0)
+    offsets = np.stack([np.where(allowed, up, 0.0), np.where(allowed, down, 0.0)], axis=2)
+    reply = yield Request(base=base, directions=columns[doubted], offsets=offsets.reshape(doubted.size, -1))
+    values = np.where(reply.finite[:, :, None], reply.values, np.nan)
+    width = np.where(allowed, up - down, np.nan)[:, :, None]
+    with np.errstate(over="ignore", invalid="ignore"):
+        slopes = (values[:, 0::2] - values[:, 1::2]) / width
+    with np.errstate(over="ignore"):
+        size = np.abs(centre) + np.abs(np.nan_to_num(desk.claim[:, doubted].T)) * np.abs(x)
+        doubt = NARROW_DEVIATIONS * np.finfo(float).eps * size[:, None, :] / (width / 2)
+    desk.hear_narrowly(doubted, slopes, doubt)
 
 
 def _wide_look(desk: Desk, base: Array, columns: IntArray, room: Room) -> Inquiry[None]:

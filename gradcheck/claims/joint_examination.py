@@ -6,6 +6,7 @@ is accused.
 """
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -41,6 +42,8 @@ QUIET, PASSES = 2, 8
 #: A claim that is off by this share of its terms or more may be a multiple of the derivative everywhere; so many
 #: directions must say so.
 LARGE, ALIKE = 0.1, 3
+#: Blocks of x that are looked at one by one.
+BLOCKS_MOST = 40
 #: Directions of later passes have other seeds.
 _PASS, _GROUP = 1000, 100
 APART = "the slope very close to the point is another one than around it: a narrow feature at the point"
@@ -114,6 +117,8 @@ class JointlyExamined:
         Directions of the claim with the culprits put right.
     parts : list of Part
         Parts that hold more wrong entries than can be named one by one.
+    blocks : dict of slice start -> bool
+        Where nearly everything may be wrong: which of the blocks hold wrong entries.
     ratio : float
         Where the claim is the same multiple of the derivative along several directions: that multiple; else NaN.
     refused : bool
@@ -128,6 +133,7 @@ class JointlyExamined:
     doubted: bool = False
     quiet: list[Direction] = field(default_factory=list)
     parts: list[Part] = field(default_factory=list)
+    blocks: dict[int, bool] = field(default_factory=dict)
     ratio: float = np.nan
     refused: bool = False
     noise: float = np.nan
@@ -144,6 +150,7 @@ def examine_jointly(
     unit_roundoff: float = np.finfo(float).eps / 2,
     directions: int | None = None,
     seed: int = 0,
+    blocks: Sequence[slice] = (),
 ) -> Inquiry[JointlyExamined]:
     """Check a gradient claim (n,) of a scalar function along random directions.
 
@@ -160,6 +167,8 @@ def examine_jointly(
         How many of each group; by default as many as their sizes ask for.
     seed : int
         Of the random directions.
+    blocks : sequence of slice
+        Parts of x with a name of their own: where too much is wrong to be named, the blocks that are wrong are told.
 
     Returns
     -------
@@ -167,7 +176,10 @@ def examine_jointly(
     """
     floor = unit_roundoff * (abs(float(centre[0])) or 1.0)
     examination = _Examination(base, claim, domain, centre, rel_tol, abs_tol, floor, directions, seed)
-    return (yield from examination.run())
+    result = yield from examination.run()
+    if result.parts and 1 < len(blocks) <= BLOCKS_MOST:
+        yield from examination.look_at_blocks(blocks)
+    return result
 
 
 class _Examination:
@@ -376,6 +388,22 @@ class _Examination:
             if self.mended is self.claim:
                 self.mended = self.claim.copy()
             self.mended[part.start] = value
+
+    def look_at_blocks(self, blocks: Sequence[slice]) -> Inquiry[None]:
+        """Which blocks hold wrong entries, by one direction each."""
+        result = self.result
+        for block in blocks:
+            wrong = False
+            for group in (Group.SCALED, Group.ZERO):
+                row = result.moves.row(group, self._seed_of(group, 1), block.start, block.stop)
+                if not row.any():
+                    continue
+                seen = yield from self.sight.along(row, self._allowed(row).plain / 3, self._spread(row))
+                gap = abs(float(np.dot(np.nan_to_num(self.claim), row)) - seen.value)
+                wrong |= gap > self._allowed(row).plain + REFUTING_BOUNDS * seen.bound
+                if seen.refused:
+                    return
+            result.blocks[block.start] = wrong
 
     def _close_look(self) -> Inquiry[None]:
         """Where all is confirmed: is the slope very close to the point the same?"""

@@ -744,3 +744,25 @@ def test_the_verdict_on_every_entry_is_a_verdict(claimed):
     )
     assert report.entries.verdict[0] == "undecided"
     assert all(type(verdict) is Verdict for verdict in report.entries.verdict)
+
+
+def test_a_claim_that_is_the_slope_of_a_ripple_close_to_the_point_is_not_refuted():
+    random = np.random.default_rng(0)
+    weights, at = random.uniform(0.5, 2.0, 1001), random.normal(size=1001)
+
+    def rippled(x):
+        return float(weights @ np.sin(x) + 1e-6 * np.sin(1e5 * x[3]))
+
+    def gradient(x):
+        slope = weights * np.cos(x)
+        slope[3] += 0.1 * np.cos(1e5 * x[3])
+        return slope
+
+    report = gradcheck.check(
+        rippled, at=at, gradient=gradient, directions="all", on_refuted="return", on_undecided="pass"
+    )
+
+    assert report.verdict == "undecided"
+    (place,) = [k for k, verdict in enumerate(report.entries.verdict) if verdict != "confirmed"]
+    assert report.entries.name[place] == "x[3]"
+    assert "very close to the point" in report.entries.reason[place]

@@ -78,3 +78,22 @@ def test_variables_without_any_effect_are_confirmed_and_an_effect_that_is_claime
     report = _check(few, wrong)
     assert report.verdict == Verdict.REFUTED
     assert report.entries.index.tolist() == [60_000]
+
+
+def test_where_one_part_of_a_nesting_is_wrong_everywhere_the_part_is_named():
+    random = np.random.default_rng(3)
+    params = {"weights": random.normal(size=(60, 40)), "offsets": random.normal(size=40), "scale": 1.5}
+
+    def loss(p):
+        return float(p["scale"] * np.sum(np.tanh(p["weights"] + p["offsets"]) ** 2))
+
+    def gradient(p):
+        held = np.tanh(p["weights"] + p["offsets"])
+        each = 2 * p["scale"] * held * (1 - held**2)
+        return {"weights": each * (1 + 0.3 * held), "offsets": each.sum(axis=0), "scale": np.sum(held**2)}
+
+    report = gradcheck.check(loss, at=params, gradient=gradient, on_refuted="return")
+
+    assert report.verdict == "refuted"
+    assert all(name.startswith('params["weights"]') or name.startswith('p["weights"]') for name in report.entries.name)
+    assert 'in p["weights"]; no error was seen in p["offsets"] and p["scale"]' in report.notices[0]
