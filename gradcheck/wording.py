@@ -298,7 +298,7 @@ def ends_kept(name: str, width: int) -> str:
     tail = tail if at else ""
     room = (width - len(tail) - len(" by ") * (len(parts) - 1)) // len(parts)
     if room < _LEAST_PART:
-        return shortened(name, width)
+        return shortened(" by ".join(parts), width - len(tail)) + tail
     return " by ".join(shortened(part, room) for part in parts) + tail
 
 

@@ -41,8 +41,9 @@ def claim_matrix(
     several = several_points_hint(layout)
     if kind == "gradient" and count != 1:
         raise DerivativeShapeError(
-            f"the model returns shape {output_shape} ({count} outputs), so a gradient cannot be checked: claim a "
-            f"Jacobian of shape ({count}, {layout.size}) with jacobian=..., or pick one output with output=...{several}",
+            f"the model returns shape {output_shape} ({count} outputs), so a gradient cannot be checked: claim "
+            f"a Jacobian of shape ({count}, {layout.size}) with jacobian=..., or pick one output with output=..."
+            f"{several}",
             name=kind,
             expected=(),
             found=output_shape,

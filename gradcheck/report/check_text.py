@@ -78,7 +78,11 @@ def headline(report: CheckReport, width: int = WIDTH) -> list[str]:
     # What gives way first: the bound, then digits, then the model's name; the entry's name comes last.
     ways = [(whole, whole, True, wording.MOST_DIGITS), (whole, whole, False, wording.MOST_DIGITS)]
     ways += [(function, whole, False, _FEW_DIGITS) for function in (whole, 40, 24, 16, 10)]
-    ways += [(function, name, False, wording.MOST_DIGITS) for function in (24, 10) for name in (40, 32, 24)]
+    ways += [
+        (function, name, False, wording.MOST_DIGITS)
+        for function, least in ((24, 24), (10, 16))
+        for name in range(60, least - 1, -2)
+    ]
     for function_width, name_width, bounded, digits in ways:
         function = wording.shortened(report.function, function_width)
         text = f"{report.kind} of {function} {report.verdict}: {_story(report, name_width, bounded, digits)}"
