@@ -287,7 +287,7 @@ def ends_kept(name: str, width: int) -> str:
     Examples
     --------
     >>> ends_kept("dynamic_defects[5] by initial_velocity[52] @ point 1", 36)
-    'dyn..cts[5] by ini..y[52] @ point 1'
+    'dyna..ts[5] by init..y[52] @ point 1'
     """
     name = clean(name)
     if len(name) <= width:
