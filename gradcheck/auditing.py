@@ -39,6 +39,7 @@ from gradcheck.health.sensitivity import FarMoves, far_moves
 from gradcheck.health.smoothness import examine_line
 from gradcheck.health.step_choice import StepChoice, step_choice
 from gradcheck.problem.domain import windows
+from gradcheck.problem.keywords import keywords_explained
 from gradcheck.problem.layout import Points
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
 from gradcheck.problem.sample_points import given_points, random_points, whole_number
@@ -66,6 +67,7 @@ AD_SOURCES: tuple[Source, ...] = ("jax", "autograd")
 _SEVERITY_ORDER = {Severity.BLOCKER: 0, Severity.HAZARD: 1, Severity.REMARK: 2}
 
 
+@keywords_explained
 def audit(
     problem_or_function: Any,
     *,

@@ -9,6 +9,7 @@ from gradcheck.claims.entries import merged
 from gradcheck.claims.policy import Policy, Rules
 from gradcheck.errors import UsageError
 from gradcheck.evaluation.pipeline import open_session
+from gradcheck.problem.keywords import keywords_explained
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
 from gradcheck.problem.sample_points import whole_number
 from gradcheck.problem.subject import CLAIM_KINDS, subject_of_problem, subjects_of_function
@@ -18,6 +19,7 @@ from gradcheck.records.report import CheckReport
 TRIED_MOST = 3
 
 
+@keywords_explained
 def check(
     function: Any,
     at: Any = None,
@@ -195,11 +197,13 @@ def check(
         pattern=pattern,
     )
     at_points = []
+    cause: BaseException | None = None
     for k, subject in enumerate(subjects):
         session = open_session(subject, budget=budget, time_limit=time_limit)
         at_points.append(checked_claims(session, rules if k < TRIED_MOST else replace(rules, trials=False)))
+        cause = cause or session.ledger.claim_error
     by_claim = [merged(reports) if len(reports) > 1 else reports[0] for reports in zip(*at_points, strict=True)]
-    return policy.carry_out(combined(by_claim))
+    return policy.carry_out(combined(by_claim), stacklevel=3, cause=cause)
 
 
 def _described_options(function: Any) -> dict[str, Any]:

@@ -3,6 +3,7 @@
 GradcheckError (Exception)
 ├── UsageError (ValueError)              the caller's mistake, told once, at the front door
 │   ├── DerivativeShapeError             a claim whose shape does not fit the model's
+│   ├── UnknownArgument (TypeError)      a keyword that the function does not take
 │   ├── ModelNotFound                    ``package.module:attribute`` leads nowhere
 │   └── MissingExtra                     an optional package is needed and not installed
 ├── ModelFailure (RuntimeError)          the model could not be evaluated at its start point
@@ -47,6 +48,10 @@ class DerivativeShapeError(UsageError):
 
     def __reduce__(self) -> tuple[Any, ...]:
         return type(self), (self.args[0], self.name, self.expected, self.found)
+
+
+class UnknownArgument(UsageError, TypeError):
+    """A keyword argument that the function does not take: which one, and which was meant."""
 
 
 class ModelNotFound(UsageError):
@@ -101,14 +106,17 @@ class DerivativeMismatch(GradcheckError, AssertionError):
     ----------
     report : CheckReport
         Everything that was found.
+    why : str
+        Why it is raised although nothing was refuted; the first line of the text. Empty for a refuted claim.
     """
 
-    def __init__(self, report: "CheckReport") -> None:
-        super().__init__(str(report))
+    def __init__(self, report: "CheckReport", why: str = "") -> None:
+        super().__init__(f"{why}\n{report}" if why else str(report))
         self.report = report
+        self.why = why
 
     def __reduce__(self) -> tuple[Any, ...]:
-        return type(self), (self.report,)
+        return type(self), (self.report, self.why)
 
 
 class UndecidedWarning(UserWarning):

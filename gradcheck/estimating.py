@@ -9,6 +9,7 @@ from gradcheck.errors import UsageError
 from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import Session, open_session
 from gradcheck.evaluation.protocol import Directions
+from gradcheck.problem.keywords import keywords_explained
 from gradcheck.problem.layout import Points, real_numbers
 from gradcheck.problem.subject import Subject, subjects_of_function
 from gradcheck.records.arrays import Array
@@ -22,6 +23,7 @@ from gradcheck.witnesses.testimony import Testimony
 from gradcheck.wording import count
 
 
+@keywords_explained
 def estimate(
     function: Any,
     at: Any,

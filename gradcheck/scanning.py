@@ -10,6 +10,7 @@ from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import open_session
 from gradcheck.evaluation.protocol import Directions
 from gradcheck.health.step_curve import step_curve
+from gradcheck.problem.keywords import keywords_explained
 from gradcheck.problem.layout import Points, real_numbers
 from gradcheck.problem.problem import SPEC_ATTRIBUTE, ModelSpec, Problem
 from gradcheck.problem.sample_points import whole_number
@@ -24,6 +25,7 @@ from gradcheck.witnesses.steps import room_along
 _OPTIONS = ("wrt", "output", "bounds", "names", "typical", "batched")
 
 
+@keywords_explained
 def scan(
     function: Any,
     at: Any = None,

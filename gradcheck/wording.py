@@ -22,6 +22,9 @@ _DIGITS_BESIDE_BOUND = 10
 #: Relative width of a bracket below which its two ends would look the same.
 _NARROW = 1e-4
 
+#: A part of a name is not cut to fewer characters than these.
+_LEAST_PART = 6
+
 SEVERITY_WORDS: dict[Severity, str] = {
     Severity.BLOCKER: "optimizing now wastes the run",
     Severity.HAZARD: "works, but badly or only in places",
@@ -276,6 +279,33 @@ def shortened(name: str, width: int) -> str:
     head = (width - 2) // 2
     tail = width - 2 - head
     return f"{name[:head]}..{name[-tail:]}"
+
+
+def ends_kept(name: str, width: int) -> str:
+    """`name` in at most `width` characters; where it says "by" or "@ point", each part keeps its own end.
+
+    Examples
+    --------
+    >>> ends_kept("dynamic_defects[5] by initial_velocity[52] @ point 1", 36)
+    'dyna..ts[5] by init..y[52] @ point 1'
+    """
+    name = clean(name)
+    if len(name) <= width:
+        return name
+    head, at, point = name.rpartition(" @ point ")
+    tail = f"{at}{point}"
+    parts = (head if at else name).split(" by ")
+    tail = tail if at else ""
+    room = (width - len(tail) - len(" by ") * (len(parts) - 1)) // len(parts)
+    if room < _LEAST_PART:
+        return shortened(" by ".join(parts), width - len(tail)) + tail
+    return " by ".join(shortened(part, room) for part in parts) + tail
+
+
+def shortened_end(text: str, width: int) -> str:
+    """`text` in at most `width` characters, cut at its end."""
+    text = clean(text)
+    return text if len(text) <= width else f"{text[: width - 3]}..."
 
 
 def shortened_apart(names: Sequence[str], width: int) -> list[str]:

@@ -7,7 +7,7 @@ import numpy as np
 from gradcheck.checks.asked_again import answered_again, asking, second_answer
 from gradcheck.checks.claimed import claimed_matrix
 from gradcheck.checks.measure import measure_of
-from gradcheck.checks.notices import few_digits, left_out, raised
+from gradcheck.checks.notices import few_digits, left_out, nothing_moves, raised
 from gradcheck.claims.entries import diagnoses_of, entries_of
 from gradcheck.claims.examination import examine
 from gradcheck.claims.policy import Rules
@@ -79,7 +79,12 @@ def checked_entries(
             ),
         ),
         findings=tuple(findings),
-        notices=(*session.ledger.notices, *left_out(subject), *few_digits(measure.precision, rules.rel_tol)),
+        notices=(
+            *session.ledger.notices,
+            *left_out(subject),
+            *few_digits(measure.precision, rules.rel_tol),
+            *nothing_moves(entries),
+        ),
         evaluations=session.ledger.evaluations - before,
         seconds=time.perf_counter() - began,
         renderer=check_text,

@@ -2,11 +2,14 @@
 
 import numpy as np
 
+from gradcheck.claims.desk import BY_ROUNDING
+from gradcheck.claims.entries import ALL_ZERO
 from gradcheck.claims.policy import REL_TOL
+from gradcheck.claims.rule import REFUTING_BOUNDS
 from gradcheck.problem.subject import Subject
 from gradcheck.records.finding import Finding
 from gradcheck.records.report import Diagnosis, Entries
-from gradcheck.records.verdict import DiagnosisCode
+from gradcheck.records.verdict import DiagnosisCode, Verdict
 from gradcheck.wording import listed
 
 
@@ -23,6 +26,14 @@ def few_digits(precision: str, rel_tol: float | None) -> tuple[str, ...]:
 def raised(failure: Finding, entries: Entries) -> tuple[Diagnosis, ...]:
     """The story of a claim that raised: it is no wrong derivative, it is none."""
     return (Diagnosis(code=DiagnosisCode.UNKNOWN, text=failure.text, entries=tuple(entries.name)),)
+
+
+def nothing_moves(entries: Entries) -> tuple[str, ...]:
+    """That all derivatives are zero at the point, where every one is confirmed by rounding alone."""
+    zero = (entries.claim == 0) | (np.abs(entries.witness) <= REFUTING_BOUNDS * entries.bound)
+    by_rounding = all(reason == BY_ROUNDING for reason in entries.reason)
+    confirmed = all(verdict == Verdict.CONFIRMED for verdict in entries.verdict)
+    return (ALL_ZERO,) if len(entries) and by_rounding and confirmed and zero.all() else ()
 
 
 def left_out(subject: Subject) -> tuple[str, ...]:

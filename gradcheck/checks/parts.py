@@ -97,11 +97,20 @@ def with_contradictions(entries: Entries, found: Sequence[Contradiction]) -> Ent
         right=np.full(left.shape, np.nan),
         verdict=_VERDICTS[np.full(left.shape, 2)],
         source=np.full(left.shape, IDENTITY, dtype=object),
-        reason=np.full(left.shape, "the claim contradicts itself; no value of the model is needed to see it", object),
+        reason=np.array([_itself(each) for each in found], dtype=object),
         noise=np.empty(0),
     )
     more = entries_from(lone, np.array([each.place for each in found]), [each.name for each in found])
     return appended(entries, more)
+
+
+def _itself(found: Contradiction) -> str:
+    """Why a broken identity refutes a claim."""
+    if found.broken.name == "symmetry":
+        return "asymmetric: H[i, j] and H[j, i] of the claim differ; no value of the model is needed to see it"
+    if "H·" in found.name:
+        return "asymmetric: the claimed H is not its own transpose; no value of the model is needed to see it"
+    return "the claim contradicts itself; no value of the model is needed to see it"
 
 
 def appended(entries: Entries, more: Entries) -> Entries:

@@ -40,6 +40,8 @@ SUSPECT = "suspect: the first look refutes it, but the budget or the time ended 
 
 #: Picked from by number: to fill an array with a member of an enumeration takes numpy ten times as long.
 _VERDICTS = np.array([Verdict.UNDECIDED, Verdict.CONFIRMED, Verdict.REFUTED], dtype=object)
+#: Why an entry is confirmed that only the allowance for rounding confirms.
+BY_ROUNDING = "confirmed within the rounding of the function's value"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -322,7 +324,7 @@ class Desk:
         tolerance = self.tolerance(columns)
         verdict = _VERDICTS[np.where(self.refuted, 2, np.where(self.confirmed, 1, 0))]
         by_floor = self.confirmed & tolerance.floor_decides(self.claim, self.value) & (self.reason == "")
-        self.reason[by_floor] = "confirmed within the rounding of the function's value"
+        self.reason[by_floor] = BY_ROUNDING
         undecided = ~self.confirmed & ~self.refuted & (self.reason == "")
         if undecided.any():
             self._explain_doubt(undecided)

@@ -122,6 +122,13 @@ def floor_of(subject: Subject, examined: Examined, columns: IntArray, abs_tol: f
     return np.asarray(abs_tol + ALLOWANCE * noise)
 
 
+#: Told where every derivative is zero, as at an optimum.
+ALL_ZERO = (
+    "all derivatives are zero at this point, so that a wrong sign, factor or order of the claim would not show; check "
+    "at another point as well"
+)
+
+
 def merged(reports: Sequence[CheckReport]) -> CheckReport:
     """One report on the same claim at several points; each entry's name says at which."""
     parts = [report.entries for report in reports]
@@ -143,8 +150,15 @@ def merged(reports: Sequence[CheckReport]) -> CheckReport:
         entries=entries,
         diagnoses=mistakes_at_points(reports),
         findings=tuple(f for report in reports for f in report.findings),
-        notices=tuple(dict.fromkeys(n for report in reports for n in report.notices)),
+        notices=_notices(reports),
         evaluations=sum(report.evaluations for report in reports),
         seconds=sum(report.seconds for report in reports),
         text="",
     )
+
+
+def _notices(reports: Sequence[CheckReport]) -> tuple[str, ...]:
+    """Each notice once; that all derivatives are zero only where that holds at every point."""
+    everywhere = all(ALL_ZERO in report.notices for report in reports)
+    told = dict.fromkeys(notice for report in reports for notice in report.notices)
+    return tuple(notice for notice in told if everywhere or notice != ALL_ZERO)

@@ -10,6 +10,7 @@ from gradcheck.claims.examination import WITNESSES
 from gradcheck.errors import DerivativeMismatch, UndecidedWarning, UsageError
 from gradcheck.records.report import CheckReport
 from gradcheck.records.verdict import Verdict
+from gradcheck.wording import shortened
 
 #: Relative tolerance by the precision of the values, where it is not the ordinary one.
 REL_TOL = {"float32": 1e-3, "float16": 1e-1}
@@ -93,16 +94,27 @@ class Policy:
         _one_of("on_undecided", on_undecided, ("warn", "raise", "pass"))
         return Policy(on_refuted=on_refuted, on_undecided=on_undecided)
 
-    def carry_out(self, report: CheckReport, *, stacklevel: int = 2) -> CheckReport:
-        """The report, unless its verdict raises; where every entry is undecided that raises too, unless it may pass."""
+    def carry_out(self, report: CheckReport, *, stacklevel: int = 2, cause: BaseException | None = None) -> CheckReport:
+        """The report, unless its verdict raises; where every entry is undecided that raises too, unless it may pass.
+
+        `cause` is what the claim itself raised.
+        """
         if report.verdict == Verdict.REFUTED and self.on_refuted == "raise":
-            raise DerivativeMismatch(report)
+            raise DerivativeMismatch(report) from cause
         if report.verdict == Verdict.UNDECIDED and self.on_undecided != "pass":
             everything = all(verdict == Verdict.UNDECIDED for verdict in report.verdicts)
             if self.on_undecided == "raise" or everything:
-                raise DerivativeMismatch(report)
+                raise DerivativeMismatch(report, _why_undecided_raises(report, everything)) from cause
             warnings.warn(str(report), UndecidedWarning, stacklevel=stacklevel + 1)
         return report
+
+
+def _why_undecided_raises(report: CheckReport, everything: bool) -> str:
+    """The first line of what is raised where nothing is refuted."""
+    open_ones = sum(verdict == Verdict.UNDECIDED for verdict in report.verdicts)
+    told = "nothing could be confirmed" if everything else f"{open_ones:,} of {len(report.verdicts):,} undecided"
+    option = "on_undecided='pass' returns it" if everything else "raised by on_undecided='raise'"
+    return f"{report.kind} of {shortened(report.function, 20)}: {told} ({option})"
 
 
 def _one_of(name: str, value: str, choices: tuple[str, ...]) -> None:

@@ -255,6 +255,8 @@ class Evaluator:
             raise
         except (Exception, SystemExit) as error:
             self.ledger.last_words[name, call.source] = last_words(error)
+            if call.source.startswith("claim:"):
+                self.ledger.claim_error = self.ledger.claim_error or error
             return Outcome(status={name: np.array([Status.CRASH], dtype=np.int8)}, spent=1)
         finally:
             self.ledger.seconds[call.kind] += time.perf_counter() - began
@@ -283,6 +285,7 @@ class Evaluator:
                 raise
             except (Exception, SystemExit) as error:
                 self.ledger.failed_vectors.setdefault((target.name, kind), {})[i] = last_words(error)
+                self.ledger.claim_error = self.ledger.claim_error or error
         return products
 
     def _claimed_matrix(self, kind: str, target: Target, point: Array) -> NDArray[Any]:

@@ -37,6 +37,8 @@ class Ledger:
         Functions that wrote into their input.
     last_words : dict of (function, source) -> str
         What the last failing call of a source said: the message of a claim or an AD library.
+    claim_error : exception or None
+        The first that a claim raised at the point.
     failed_vectors : dict of (function, kind of claim) -> dict of int -> str
         The vectors, by number, for which a claimed product raised, and its own last words.
     claimed_values : dict of function -> ndarray, shape (m,)
@@ -59,6 +61,7 @@ class Ledger:
     notices: list[str] = field(default_factory=list)
     refused: int = 0
     last_words: dict[tuple[str, str], str] = field(default_factory=dict)
+    claim_error: BaseException | None = None
 
     @property
     def evaluations(self) -> int:

@@ -38,10 +38,12 @@ def claim_matrix(
         If the claim is not numeric, or complex.
     """
     count = math.prod(output_shape)
+    several = several_points_hint(layout)
     if kind == "gradient" and count != 1:
         raise DerivativeShapeError(
-            f"the model returns shape {output_shape} ({count} outputs), so a gradient cannot be checked: claim a "
-            f"Jacobian of shape ({count}, {layout.size}) with jacobian=..., or pick one output with output=...",
+            f"the model returns shape {output_shape} ({count} outputs), so a gradient cannot be checked: claim "
+            f"a Jacobian of shape ({count}, {layout.size}) with jacobian=..., or pick one output with output=..."
+            f"{several}",
             name=kind,
             expected=(),
             found=output_shape,
@@ -94,6 +96,16 @@ def _leads(raw: Any, output_shape: tuple[int, ...], layout: Layout) -> bool:
     except Difference:
         return False
     return all(tuple(getattr(part, "shape", ())) == (*output_shape, *leaf.shape) for leaf, part in parts)
+
+
+def several_points_hint(layout: Layout) -> str:
+    """What rows of a table of numbers may have been meant as."""
+    if layout.single is None or len(layout.shape) != 2:
+        return ""
+    return (
+        f"; at= is one point of shape {layout.shape} here: if its rows are {layout.shape[0]} points, write "
+        "at=gradcheck.points(...) with one argument a row"
+    )
 
 
 def _refuse_pair(kind: str, raw: Any, layout: Layout) -> None:
@@ -164,4 +176,5 @@ def _mismatch(kind: str, found: tuple[int, ...], layout: Layout, output_shape: t
         text += f"; it has the right number of entries: reshape it to {expected}"
     elif kind == "jacobian" and output_shape == () and found == layout.shape:
         text += "; for a model that returns a number, claim it with gradient=..."
+    text += several_points_hint(layout)
     return DerivativeShapeError(text + ".", name=kind, expected=expected, found=found)

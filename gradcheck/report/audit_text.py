@@ -168,7 +168,7 @@ def _claims(claims: Sequence[CheckReport]) -> list[str]:
     ordered = sorted(claims, key=lambda claim: _WORST_FIRST.index(claim.verdict))
     lines: list[str] = []
     for position, claim in enumerate(ordered[:_ROWS]):
-        lines.append(f"  {headline(claim, WIDTH - 2)}")
+        lines += [f"  {line}" for line in headline(claim, WIDTH - 2)]
         if claim.verdict != Verdict.CONFIRMED and position < _STORIES:
             # The findings of a claim stand among the audit's own.
             lines += [*check_details(claim, indent=4, rows=_ENTRIES, findings=False), ""]

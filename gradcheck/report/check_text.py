@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from gradcheck import wording
+from gradcheck.records.finding import FindingCode
 from gradcheck.records.report import IDENTITY, CheckReport, Coverage, Diagnosis, Entries
 from gradcheck.records.verdict import Verdict
 from gradcheck.report.finding_text import finding_lines
@@ -26,6 +27,9 @@ _DIGITS_ELSEWHERE = 6
 _IN_WORDS = re.compile(
     r"\ball ([\d,]+ )?(entries|outputs|rows|columns)\b|\brows? \d|\bpoints? \d|\d+ entries\b|and [\d,]+ more\b"
 )
+
+#: Digits in a narrow headline, where claim and witness look different with so few.
+_FEW_DIGITS = 3
 
 _RANK = {Verdict.REFUTED: 0, Verdict.UNDECIDED: 1, Verdict.CONFIRMED: 2}
 
@@ -52,13 +56,13 @@ def check_text(report: CheckReport) -> str:
     """
     if report.parts:
         return _several(report)
-    return "\n".join([headline(report), *check_details(report)])
+    return "\n".join([*headline(report), *check_details(report)])
 
 
 def _several(report: CheckReport) -> str:
     """The claims of one call, worst first: what decides stands in the first line."""
     ordered = sorted(report.parts, key=lambda part: _RANK[part.verdict])
-    texts = ["\n".join([headline(part), *check_details(part)]) for part in ordered]
+    texts = ["\n".join([*headline(part), *check_details(part)]) for part in ordered]
     verdicts = _tally([part.verdict for part in ordered])
     together = (
         f"{wording.count(len(ordered), 'claim')}, {verdicts}: {wording.cost(report.evaluations, report.seconds)}."
@@ -66,17 +70,33 @@ def _several(report: CheckReport) -> str:
     return "\n\n".join([*texts, *paragraph(together, 0)])
 
 
-def headline(report: CheckReport, width: int = WIDTH) -> str:
-    """One line: which claim, of which model, the verdict, and the worst entry in words."""
-    # What gives way first: names beyond 24 characters, then the bound, then more of the names.
-    for name_width, bounded in ((40, True), (24, True), (24, False), (16, False), (8, False)):
-        function = wording.shortened(report.function, name_width)
-        text = f"{report.kind} of {function} {report.verdict}: {_story(report, name_width, bounded)}"
+def headline(report: CheckReport, width: int = WIDTH) -> list[str]:
+    """One line: which claim, of which model, the verdict, and the worst entry in words; a name too long for it follows
+    in a second line.
+    """
+    whole = 10 * width
+    # What gives way first: the bound, then digits, then the model's name; the entry's name comes last.
+    ways = [(whole, whole, True, wording.MOST_DIGITS), (whole, whole, False, wording.MOST_DIGITS)]
+    ways += [(function, whole, False, _FEW_DIGITS) for function in (whole, 40, 24, 16, 10)]
+    ways += [
+        (function, name, False, wording.MOST_DIGITS)
+        for function, least in ((24, 24), (10, 16))
+        for name in range(60, least - 1, -2)
+    ]
+    for function_width, name_width, bounded, digits in ways:
+        function = wording.shortened(report.function, function_width)
+        text = f"{report.kind} of {function} {report.verdict}: {_story(report, name_width, bounded, digits)}"
         if len(text) <= width:
-            return text
+            cut = name_width < whole and len(report.entries) > 0
+            return [text, *([f"  {_worst_name(report, width - 2)}"] if cut else [])]
     # Figures too long for one line: the table below has them.
     counts = f"of {wording.count(len(report.entries), 'entry', 'entries')}, {_tally(report.entries.verdict)}"
-    return wording.shortened(f"{report.kind} of {function} {report.verdict}: {counts}", width)
+    function = wording.shortened(report.function, 10)
+    return [wording.shortened(f"{report.kind} of {function} {report.verdict}: {counts}", width)]
+
+
+def _worst_name(report: CheckReport, width: int) -> str:
+    return wording.ends_kept(report.entries.name[int(worst_order(report.entries)[0])], width)
 
 
 def check_details(report: CheckReport, *, indent: int = 0, rows: int = WORST, findings: bool = True) -> list[str]:
@@ -84,10 +104,14 @@ def check_details(report: CheckReport, *, indent: int = 0, rows: int = WORST, fi
     inner = indent + 2
     confirmed = report.verdict == Verdict.CONFIRMED
     lines: list[str] = []
+    words = _raised_words(report)
     # Several points often give the same explanation.
     mistakes = list({(diagnosis.code, diagnosis.text): diagnosis for diagnosis in report.diagnoses}.values())
     for diagnosis in mistakes[:_MISTAKES]:
-        lines += ["", *_diagnosis_lines(diagnosis, indent)]
+        if words and words in diagnosis.text:
+            lines += ["", *paragraph(f"{wording.capitalised(diagnosis.text)}.", indent)]
+        else:
+            lines += ["", *_diagnosis_lines(diagnosis, indent)]
     if len(mistakes) > _MISTAKES:
         more = wording.count(len(mistakes) - _MISTAKES, "other likely mistake")
         lines += paragraph(f"and {more}, in the report's diagnoses", indent)
@@ -157,7 +181,7 @@ def _entry(entries: Entries, position: int) -> _Entry:
     )
 
 
-def _story(report: CheckReport, name_width: int, bounded: bool) -> str:
+def _story(report: CheckReport, name_width: int, bounded: bool, most: int) -> str:
     entries = report.entries
     if report.sparsity is not None:
         return sparse_story(report, name_width, bounded=bounded)
@@ -165,18 +189,44 @@ def _story(report: CheckReport, name_width: int, bounded: bool) -> str:
         return _direction_story(report)
     if report.verdict == Verdict.CONFIRMED:
         return _direction_story(report) if report.directions else _agreement(entries, brief=not bounded)
-    worst = _entry(entries, int(worst_order(entries)[0]))
+    position = int(worst_order(entries)[0])
+    worst = _entry(entries, position)
     if worst.verdict != report.verdict:  # the directions decided, and no single entry carries the verdict
         return _direction_story(report)
-    name = wording.shortened(worst.name, name_width)
+    words = _raised_words(report)
+    if words and np.isnan(worst.claim):
+        taken = len(f"{report.kind} of {report.function} {report.verdict}: ") + 2
+        return wording.shortened_end(f"the {report.kind} raised {words}", max(WIDTH - taken, 32))
+    if entries.source[position] == IDENTITY:
+        return _contradiction(worst, name_width)
+    name = wording.ends_kept(worst.name, name_width)
     if worst.verdict == Verdict.REFUTED and worst.agrees and worst.reason:
         return f"{name} is {worst.reason if bounded else worst.reason.partition(':')[0].partition(' (')[0]}"
-    claim, witness = _figures(worst, wording.MOST_DIGITS)
+    claim, witness = _figures(worst, most)
     if worst.verdict == Verdict.UNDECIDED and not np.isfinite([worst.witness, worst.bound]).all():
         return f"{name} is claimed {claim}, and no witness can tell"
     if worst.verdict == Verdict.UNDECIDED and worst.digits >= 1:
         return f"{name} agrees to {wording.count(int(worst.digits), 'digit')} only"
     return f"{name} is claimed {claim}, found {witness if bounded else witness.partition(' ± ')[0]}"
+
+
+def _raised_words(report: CheckReport) -> str:
+    """What the claim itself raised, in its own words; empty if it did not."""
+    opening = f"the {report.kind} of {report.function} raised at the point: "
+    told = (finding.text for finding in report.findings if finding.code == FindingCode.CRASH)
+    return next((text.removeprefix(opening) for text in told if text.startswith(opening)), "")
+
+
+def _contradiction(entry: _Entry, name_width: int = 10 * WIDTH) -> str:
+    """A broken identity as a sentence: of an asymmetric Hessian, the two entries that differ."""
+    left, right = wording.number(entry.claim), wording.number(entry.witness)
+    if left == right:
+        left, right = (wording.number(side, wording.MOST_DIGITS) for side in (entry.claim, entry.witness))
+    half = (len(entry.name) - 3) // 2
+    if entry.reason.startswith("asymmetric") and entry.name[half : half + 3] == " = " and entry.name.startswith("H["):
+        one, other = (wording.ends_kept(side, name_width) for side in (entry.name[:half], entry.name[half + 3 :]))
+        return f"asymmetric, {one} is {left}, {other} is {right}"
+    return f"{wording.ends_kept(entry.name, name_width)} fails, {left} against {right}"
 
 
 def _agreement(entries: Entries, *, brief: bool) -> str:
@@ -215,8 +265,12 @@ def _figures(entry: _Entry, most: int) -> tuple[str, str]:
     """Claim, and witness ± bound: where refuted, with enough digits to look different, but at most `most`."""
     # What something else than the witness refutes looks like it; digits would not tell it apart.
     refuted = entry.verdict == Verdict.REFUTED and not (entry.agrees and entry.reason)
-    digits = min(wording.digits_to_tell_apart(entry.digits) if refuted else _DIGITS_ELSEWHERE, most)
-    return wording.number(entry.claim, digits), wording.with_bound(entry.witness, entry.bound, max(digits, 4))
+    apart = wording.digits_to_tell_apart(entry.digits) if refuted else _DIGITS_ELSEWHERE
+    # Fewer digits than tell the two apart would be no story.
+    digits = min(apart, most) if most > _FEW_DIGITS or not entry.digits >= 1 else apart
+    return wording.number(entry.claim, digits), wording.with_bound(
+        entry.witness, entry.bound, max(digits, min(most, 4))
+    )
 
 
 def _diagnosis_lines(diagnosis: Diagnosis, indent: int) -> list[str]:
@@ -233,8 +287,19 @@ def _placed(diagnosis: Diagnosis) -> bool:
 
 
 def _worst_lines(entries: Entries, indent: int, rows: int) -> list[str]:
-    order = worst_order(entries)
-    shown = [_entry(entries, int(position)) for position in order[:rows]]
+    every = worst_order(entries)
+    order = [int(position) for position in every if entries.source[position] != IDENTITY]
+    itself = [_entry(entries, int(position)) for position in every if entries.source[position] == IDENTITY]
+    lines = _table_of_worst(entries, order, indent, rows) if order else []
+    if itself:
+        lines += [*([""] if order else []), " " * indent + "The claim contradicts itself:"]
+        for entry in itself:
+            lines += paragraph(f"{_contradiction(entry)}.", indent + 2)
+    return lines
+
+
+def _table_of_worst(entries: Entries, order: Sequence[int], indent: int, rows: int) -> list[str]:
+    shown = [_entry(entries, position) for position in order[:rows]]
     if len(order) == 1:
         head = "The only entry:"
     elif len(order) <= rows:
@@ -242,7 +307,7 @@ def _worst_lines(entries: Entries, indent: int, rows: int) -> list[str]:
     else:
         head = f"The {len(shown)} worst of {len(order):,} entries, worst first:"
     lines = [" " * indent + head, *_entry_table(shown, indent + 2)]
-    others = [entries.verdict[int(position)] for position in order[rows:]]
+    others = [entries.verdict[position] for position in order[rows:]]
     if others:
         lines += paragraph(f"The other {len(others):,}: {_tally(others)}.", indent + 2)
     return lines

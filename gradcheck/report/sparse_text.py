@@ -36,7 +36,7 @@ def sparse_story(report: CheckReport, name_width: int, *, bounded: bool) -> str:
     refuted = [i for i, verdict in enumerate(report.entries.verdict) if verdict == Verdict.REFUTED]
     if not refuted:
         return ", ".join(told)
-    name = wording.shortened(report.entries.name[refuted[0]], name_width)
+    name = wording.ends_kept(report.entries.name[refuted[0]], name_width)
     if len(refuted) == 1:
         claim, digits = (
             report.entries.claim[refuted[0]],

@@ -766,3 +766,61 @@ def test_a_claim_that_is_the_slope_of_a_ripple_close_to_the_point_is_not_refuted
     (place,) = [k for k, verdict in enumerate(report.entries.verdict) if verdict != "confirmed"]
     assert report.entries.name[place] == "x[3]"
     assert "very close to the point" in report.entries.reason[place]
+
+
+@pytest.mark.parametrize(
+    ("wrong", "meant"), [("grad", "gradient"), ("x0", "at"), ("rtol", "rel_tol"), ("kwargs", "gradcheck.args")]
+)
+def test_an_unknown_argument_is_answered_with_the_one_that_was_meant(wrong, meant):
+    for verb in (gradcheck.check, gradcheck.estimate, gradcheck.audit, gradcheck.scan):
+        if verb is gradcheck.check or meant in ("at", "gradcheck.args"):
+            with pytest.raises(gradcheck.UsageError, match=f"'{wrong}': did you mean .*{meant}") as caught:
+                verb(lambda x: x[0], **{wrong: 1})
+            assert isinstance(caught.value, TypeError)
+
+
+def test_a_claim_that_raises_is_told_first_and_is_the_cause():
+    def broken(x):
+        raise ValueError("no table")
+
+    with pytest.raises(
+        gradcheck.DerivativeMismatch, match="refuted: the gradient raised ValueError: no table"
+    ) as found:
+        gradcheck.check(lambda x: x[0] ** 2, at=[1.0], gradient=broken)
+
+    assert isinstance(found.value.__cause__, ValueError)
+    assert "none of the usual ones" not in str(found.value)
+
+
+def test_rows_of_a_table_that_were_meant_as_points_are_suspected_in_the_shape_error():
+    with pytest.raises(gradcheck.DerivativeShapeError, match=r"gradcheck\.points"):
+        gradcheck.check(lambda x: x[0] * x[1], at=[[1.0, 2.0], [5.0, 2.0]], gradient=lambda x: x)
+
+
+def test_where_all_derivatives_are_zero_another_point_is_asked_for():
+    def bowl(x):
+        return x[0] ** 2 + x[1] ** 2
+
+    def slopes(x):
+        return [2 * x[0], 2 * x[1]]
+
+    at_rest = gradcheck.check(bowl, at=[0.0, 0.0], gradient=slopes)
+    with_another = gradcheck.check(bowl, at=gradcheck.points([0.0, 0.0], [1.0, 2.0]), gradient=slopes)
+
+    assert any("all derivatives are zero" in notice for notice in at_rest.notices)
+    assert not any("all derivatives are zero" in notice for notice in with_another.notices)
+
+
+def test_what_is_raised_where_nothing_could_be_confirmed_says_so_first():
+    with pytest.raises(
+        gradcheck.DerivativeMismatch, match=r"^gradient of .*: nothing could be confirmed \(on_undecided"
+    ):
+        gradcheck.check(lambda x: abs(x[0]), at=[0.0], gradient=[0.5])
+
+
+def test_an_asymmetric_hessian_is_told_below_the_table_with_both_entries():
+    claimed = [[2.0, 0.5], [0.0, 2.0]]
+    with pytest.raises(gradcheck.DerivativeMismatch) as found:
+        gradcheck.check(lambda x: x[0] ** 2 + x[1] ** 2, at=[1.0, 2.0], hessian=claimed)
+
+    assert "asymmetric, H[x[0], x[1]] is 0.5, H[x[1], x[0]] is 0." in str(found.value)

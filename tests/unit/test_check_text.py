@@ -195,3 +195,19 @@ def test_many_explanations_are_cut_and_counted():
 
     assert text.count("Likely mistake") == 4
     assert "and 5 other likely mistakes, in the report's diagnoses" in text
+
+
+def test_the_name_in_the_first_line_has_all_the_room_that_bound_and_digits_leave():
+    name = "defects[5] by x[52]"
+    report = check_report(row(name, 4.2, 2.1, 3e-12, 0.0, REFUTED), kind="jacobian", function="defects")
+
+    assert first_line(report) == f"jacobian of defects refuted: {name} is claimed 4.2, found 2.1"
+
+
+def test_a_name_too_long_for_the_first_line_stands_alone_in_the_second_with_its_ends_whole():
+    name = "a_long_name_of_reynolds_numbers[5] by velocity_of_stage[52] @ point 1"
+    report = check_report(row(name, 4.2, 2.1, 3e-12, 0.0, REFUTED), function="a_long_name_of_reynolds_numbers")
+    first, second = check_text(report).splitlines()[:2]
+
+    assert "[52] @ point 1 is claimed 4.2, found 2.1" in first
+    assert second == f"  {name}"

@@ -33,6 +33,7 @@ EXAMPLES = [
     errors.GradcheckError("it broke"),
     errors.UsageError("`at` is empty; give a point"),
     errors.DerivativeShapeError("shape (1, 3), expected (3,)", name="gradient", expected=(3,), found=(1, 3)),
+    errors.UnknownArgument("check has no argument 'grad'"),
     errors.ModelNotFound("wing:drga leads nowhere"),
     errors.MissingExtra("a picture of the scan", "matplotlib", "report"),
     errors.ModelFailure("drag crashed at its start point", reason="timeout", last_words="no convergence"),
