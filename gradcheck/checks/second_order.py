@@ -9,7 +9,7 @@ import time
 
 import numpy as np
 
-from gradcheck.checks.confirmed_slopes import believed_slopes
+from gradcheck.checks.confirmed_slopes import FIRST, believed_slopes
 from gradcheck.checks.curvature import Curvatures, Seen
 from gradcheck.checks.curvature_by_slopes import by_slopes
 from gradcheck.checks.curvature_by_values import VALUES_MOST, by_values
@@ -159,8 +159,15 @@ def _diagnoses(look: Curvatures, seen: Seen, found: list[Contradiction]) -> tupl
     if units is not None and look.outputs == 1 and units.refuted.any() and not indifferent_to_size:
         return hessian_mistakes(units)
     if units is None and rest is not None and rest.refuted.any() and not indifferent_to_size and not conduct.broken:
-        return (scattered(rest),)
+        return (scattered(rest, _advice(look)),)
     return product_mistakes("hvp", units, rest, conduct) or tuple(_asymmetric(each) for each in found)
+
+
+def _advice(look: Curvatures) -> str:
+    """What would show which second derivatives are wrong; nothing that was done already."""
+    everything = "ask for all entries with directions='all'"
+    gradient = FIRST.intersection(look.session.subject.targets[look.function].claims)
+    return everything if gradient else f"claim a gradient in the same call, or {everything}"
 
 
 def _asymmetric(found: Contradiction) -> Diagnosis:
