@@ -1,6 +1,7 @@
 """Claimed second derivatives: what the claim gave, and the names and places of its entries."""
 
 from dataclasses import dataclass, field
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -14,13 +15,36 @@ from gradcheck.claims.policy import Rules
 from gradcheck.evaluation.pipeline import Session
 from gradcheck.problem.layout import Layout
 from gradcheck.records.arrays import Array, IntArray
-from gradcheck.records.report import Entries
+from gradcheck.records.report import DirectionChecks, Entries
 
 Names = NDArray[np.object_]
 
 
 def _no_names() -> Names:
     return np.empty((0, 0), dtype=object)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class WrongRows:
+    """Which entries of products with random vectors are wrong: those are rows of the Hessian.
+
+    Attributes
+    ----------
+    many, of : int
+        How many of how many.
+    vectors : int
+        Vectors that show it.
+    ratio : float
+        Claim over witness where that is one number for all of them; else NaN.
+    names : tuple of str
+        The first of them.
+    """
+
+    many: int
+    of: int
+    vectors: int
+    ratio: float
+    names: tuple[str, ...]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -36,7 +60,13 @@ class Seen:
         Products with random vectors (m·n, r).
     names, rest_names : ndarray of object
     narrowed : Examined or None
-        Whole columns (m·n, k) that were looked at because random directions had shown wrong rows; `names` are theirs.
+        Columns (r, k) that were looked at because random directions had shown wrong rows; `names` are theirs.
+    few : bool
+        Whether these are the columns of all wrong rows, and not examples.
+    wrong : WrongRows or None
+        What the products with random vectors show, where those are many entries and refuted.
+    directions : DirectionChecks or None
+        The products with random vectors, one by one, where they are many entries.
     notices : tuple of str
     """
 
@@ -46,10 +76,13 @@ class Seen:
     names: Names = field(default_factory=_no_names)
     rest_names: Names = field(default_factory=_no_names)
     narrowed: Examined | None = None
+    few: bool = True
+    wrong: WrongRows | None = None
+    directions: DirectionChecks | None = None
     notices: tuple[str, ...] = ()
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+@dataclass(frozen=True, kw_only=True, eq=False)
 class Curvatures:
     """A claimed Hessian, or claimed products with it.
 
@@ -80,7 +113,7 @@ class Curvatures:
     def outputs(self) -> int:
         return int(self.centre.size)
 
-    @property
+    @cached_property
     def places(self) -> IntArray:
         """Entries of a product that are judged: whole-number variables have no derivative."""
         return np.concatenate([output * self.layout.size + self.able for output in range(self.outputs)])
@@ -91,6 +124,12 @@ class Curvatures:
         if self.outputs == 1:
             return names
         return [f"{self.function}[{output}]: {name}" for output in range(self.outputs) for name in names]
+
+    def row_name(self, place: int) -> str:
+        """Name of one of the judged entries of a product."""
+        output, variable = divmod(int(self.places[place]), self.layout.size)
+        name = self.layout.name(variable)
+        return name if self.outputs == 1 else f"{self.function}[{output}]: {name}"
 
     def name(self, row: str, label: str, *, unit: bool) -> str:
         """Name of an entry of the product with the vector of this label."""

@@ -5,6 +5,7 @@ from dataclasses import replace
 import numpy as np
 
 from gradcheck.checks.along import places, shared_room
+from gradcheck.checks.confirmed_slopes import FIRST
 from gradcheck.checks.curvature import Curvatures, Seen
 from gradcheck.checks.parts import entries_from, stacked
 from gradcheck.claims.desk import Examined
@@ -135,7 +136,6 @@ def _visible(curvatures: Curvatures, examined: Examined, rows: Array, allowed: A
     seen = float(curvatures.visible(examined, reach, allowed).min())
     if not np.isfinite(seen):
         return looked
-    return (
-        f"{looked}; an error of {number(seen, 2)} in a single entry would have been seen, but not in which. A gradient "
-        "claimed in the same call shows it"
-    )
+    told = f"{looked}; an error of {number(seen, 2)} in a single entry would have been seen, but not in which"
+    claimed = FIRST.intersection(curvatures.session.subject.targets[curvatures.function].claims)
+    return told if claimed else f"{told}. A gradient claimed in the same call shows it"

@@ -17,7 +17,7 @@ from gradcheck.claims.rule import ALLOWANCE
 from gradcheck.counsel.claim_findings import mutation
 from gradcheck.evaluation.pipeline import Session
 from gradcheck.records.finding import Finding
-from gradcheck.records.report import IDENTITY, CheckReport, Diagnosis, Entries
+from gradcheck.records.report import IDENTITY, CheckReport, Diagnosis, DirectionChecks, Entries
 from gradcheck.records.verdict import DiagnosisCode, Verdict
 from gradcheck.report.check_text import check_text
 from gradcheck.wording import listed
@@ -141,6 +141,7 @@ def report_of(
     failure: Finding | None,
     notices: Sequence[str],
     findings: Sequence[Finding] = (),
+    directions: DirectionChecks | None = None,
     before: int,
     began: float,
 ) -> CheckReport:
@@ -157,6 +158,7 @@ def report_of(
         function=function,
         point=subject.start,
         entries=entries,
+        directions=directions,
         diagnoses=tuple(diagnoses),
         findings=(*([failure] if failure else []), *findings, *mutation(subject, session.ledger)),
         notices=(*session.ledger.notices, *_left_out(session), *_few_digits(measure), *notices),

@@ -9,7 +9,7 @@ import time
 
 import numpy as np
 
-from gradcheck.checks.confirmed_slopes import believed_slopes
+from gradcheck.checks.confirmed_slopes import FIRST, believed_slopes
 from gradcheck.checks.curvature import Curvatures, Seen
 from gradcheck.checks.curvature_by_slopes import by_slopes
 from gradcheck.checks.curvature_by_values import VALUES_MOST, by_values
@@ -20,6 +20,7 @@ from gradcheck.checks.parts import case_of, report_of, with_contradictions
 from gradcheck.checks.products import tried
 from gradcheck.checks.products_claimed import Claimed, claimed_products
 from gradcheck.checks.vectors import UNITS_MOST, vectors_of
+from gradcheck.checks.wrong_rows import wrong_rows
 from gradcheck.claims.examination import DIFFERENCES
 from gradcheck.claims.hessian_mistakes import hessian_mistakes, scattered
 from gradcheck.claims.identities import Broken, symmetry
@@ -71,8 +72,8 @@ def checked_second_order(
         claimed=claimed,
         measure=max(measures, key=lambda each: each.unit_roundoff),
     )
-    seen = by_values(curvatures) if slopes is None else by_slopes(curvatures, slopes)
     found = _contradictions(curvatures)
+    seen = by_values(curvatures) if slopes is None else by_slopes(curvatures, slopes, contradicted=bool(found))
     entries = with_contradictions(seen.entries, found)
     wrong = Verdict.REFUTED in entries.verdict and claimed.finding is None
     report = report_of(
@@ -84,6 +85,7 @@ def checked_second_order(
         curvatures.measure,
         failure=claimed.finding,
         notices=(*notices, *seen.notices, *_held(curvatures, found)),
+        directions=seen.directions,
         before=before,
         began=began,
     )
@@ -152,15 +154,25 @@ def _held(look: Curvatures, found: list[Contradiction]) -> tuple[str, ...]:
 def _diagnoses(look: Curvatures, seen: Seen, found: list[Contradiction]) -> tuple[Diagnosis, ...]:
     units = None if seen.matrix is None else case_of(seen.matrix, seen.names, look.measure)
     rest = None if seen.rest is None else case_of(seen.rest, seen.rest_names, look.measure)
-    if seen.narrowed is not None:
+    if seen.narrowed is not None and seen.few:
         return likely_mistakes(case_of(seen.narrowed, seen.names, look.measure, whole=False))
     conduct = _conduct(look, [each.broken for each in found])
+    if seen.wrong is not None and not conduct.same and not conduct.by_sign and not conduct.broken:
+        told = seen.names[seen.narrowed.verdict == Verdict.REFUTED] if seen.narrowed is not None else ()
+        return (wrong_rows(seen.wrong, seen.narrowed, tuple(told), found),)
     indifferent_to_size = bool(conduct.same or conduct.by_sign)
     if units is not None and look.outputs == 1 and units.refuted.any() and not indifferent_to_size:
         return hessian_mistakes(units)
     if units is None and rest is not None and rest.refuted.any() and not indifferent_to_size and not conduct.broken:
-        return (scattered(rest),)
+        return (scattered(rest, _advice(look)),)
     return product_mistakes("hvp", units, rest, conduct) or tuple(_asymmetric(each) for each in found)
+
+
+def _advice(look: Curvatures) -> str:
+    """What would show which second derivatives are wrong; nothing that was done already."""
+    everything = "ask for all entries with directions='all'"
+    gradient = FIRST.intersection(look.session.subject.targets[look.function].claims)
+    return everything if gradient else f"claim a gradient in the same call, or {everything}"
 
 
 def _asymmetric(found: Contradiction) -> Diagnosis:

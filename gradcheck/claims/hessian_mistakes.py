@@ -148,14 +148,17 @@ def _positive_part(case: Case) -> Diagnosis | None:
     return Diagnosis(code=DiagnosisCode.MISSING_PATH, text=text, entries=case.names(case.refuted))
 
 
-def scattered(case: Case) -> Diagnosis:
-    """A mistake that random directions show: one factor for all of them, or no more than that it is there."""
+def scattered(case: Case, advice: str) -> Diagnosis:
+    """A mistake that random directions show: one factor for all of them, or no more than that it is there.
+
+    `advice` says what would show in which entries.
+    """
     names = case.names(case.refuted)
     factor = _one_factor(case, case.refuted) if case.refuted.sum() > 1 else None
     if factor is None:
         text = (
             f"{case.refuted.sum()} of {case.refuted.size} products with random vectors are wrong, which does not show "
-            "in which entries: claim a gradient in the same call, or ask for all entries with directions='all'."
+            f"in which entries: {advice}."
         )
         return Diagnosis(code=DiagnosisCode.UNKNOWN, text=text, entries=names)
     flipped = abs(factor + 1) < 1e-6

@@ -252,6 +252,10 @@ def _direction_story(report: CheckReport) -> str:
     covered = sum(part.entries for part in report.directions.coverage)
     if report.verdict == Verdict.CONFIRMED and covered:
         return f"{covered:,} entries along {directions}"
+    if report.verdict == Verdict.CONFIRMED and len(report.entries):  # products, whose entries stand for them
+        digits = report.entries.digits[report.entries.digits >= 1]
+        to = f" to {wording.agreed_digits(float(digits.min()))} digits or more" if digits.size else " within the bounds"
+        return f"along {directions}{to}"
     if report.verdict == Verdict.REFUTED and Verdict.REFUTED not in verdicts:
         return "right as it stands, but see below"
     return f"of {directions}, {_tally(verdicts)}"

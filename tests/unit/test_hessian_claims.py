@@ -506,3 +506,11 @@ def test_a_hessian_that_raises_is_a_finding():
 
     assert told.verdict == Verdict.REFUTED
     assert "no second derivatives yet" in told.diagnoses[0].text
+
+
+def test_a_report_does_not_advise_what_was_done_already():
+    told = look(chain, MANY, gradient=lambda x: 1.1 * chain_slope(x), hessian=spoilt)
+
+    assert second(told).verdict == Verdict.REFUTED
+    assert "claim a gradient" not in str(told)
+    assert "A gradient claimed" not in str(told)
