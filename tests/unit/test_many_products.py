@@ -82,7 +82,8 @@ def test_of_many_wrong_entries_the_report_says_how_many_and_shows_examples():
     assert f"{N - 1:,} of {N:,} entries of H·v are wrong" in text
     assert "claim a gradient" not in str(told)
     assert told.diagnoses[0].code == DiagnosisCode.ZERO_ENTRY
-    examples = [place for place, source in zip(told.entries.index, told.entries.source, strict=True) if "diff" in source]
+    pairs = zip(told.entries.index, told.entries.source, strict=True)
+    examples = [place for place, source in pairs if "diff" in source]
     assert len(examples) >= 3
     for row, column in examples:
         assert row == column + 1
