@@ -5,7 +5,7 @@ examined in full; where the claim is refuted the rest is counted.
 """
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -51,6 +51,8 @@ class Product:
     ratio : float
         Claim over witness where that is the same in all these entries; else NaN.
     bound : ndarray, shape (m·n,)
+    allowed : ndarray, shape (m·n,)
+        What the entries may be off because errors of their terms add up.
     """
 
     number: int
@@ -60,6 +62,7 @@ class Product:
     off: BoolArray
     ratio: float
     bound: Array
+    allowed: Array
 
     @property
     def cut_short(self) -> bool:
@@ -83,12 +86,23 @@ class Witness:
     def __init__(self, look: Curvatures, slopes: Slopes, claims: Array, typical: Array) -> None:
         self.look, self.slopes = look, slopes
         self.centre = slopes.at_point[look.places]
-        size = np.zeros(self.centre.size)
+        size, squares = np.zeros(self.centre.size), np.zeros(self.centre.size)
         for claim, reach in zip(claims, typical.tolist(), strict=True):
             with np.errstate(invalid="ignore", over="ignore"):
-                size += np.nan_to_num(np.abs(claim[look.places]), nan=0.0, posinf=0.0) * reach
+                part = np.nan_to_num(np.abs(claim[look.places]), nan=0.0, posinf=0.0) * reach
+                size += part
+                squares += part**2 / len(typical)
+        #: Size of an entry's terms along a direction that reaches 1: the root of the mean square over all of them.
+        self.terms = np.sqrt(squares)
         size = np.fmax(size, np.abs(self.centre))
         self.size = np.where(size > 0, size, float(size.max(initial=0.0)) or 1.0)
+
+    def allowed(self, row: Array) -> Array:
+        """What the entries of a product may be off: errors of its terms add up, while the terms cancel by chance."""
+        reach = float(
+            room_along(self.look.session.subject.start, row[None], self.look.session.subject.domain).typical[0]
+        )
+        return np.asarray(self.look.measure.abs_tol + self.look.measure.rel_tol * self.terms / reach)
 
     def glance(self, claim: Array, *, row: Array | None = None, column: int | None = None) -> Glance:
         """A quick look at a claimed product (m·n,) of the judged entries."""
@@ -107,7 +121,7 @@ class Witness:
             self.centre,
             room.typical if row is not None else subject.domain.scale[direction],
             rel_tol=measure.rel_tol,
-            abs_tol=measure.abs_tol,
+            abs_tol=measure.abs_tol if row is None else self.allowed(row)[:, None],
             unit_roundoff=measure.unit_roundoff,
             magnitude=self.size,
         )
@@ -120,13 +134,15 @@ class Witness:
         self, claim: Array, which: IntArray, *, rows: Array | None = None, columns: IntArray | None = None
     ) -> Examined:
         """The whole examination of some of the judged entries, claimed (k, d) along d directions."""
-        look = self.look
+        look, measure = self.look, self.look.measure
+        if rows is not None:
+            measure = replace(measure, abs_tol=np.stack([self.allowed(row)[which] for row in rows], axis=1))
         return examined_by(
             look.session,
             look.function,
             claim,
             self.centre[which],
-            look.measure,
+            measure,
             look.rules,
             columns=columns,
             rows=rows,
@@ -160,9 +176,10 @@ def products_along(look: Curvatures, slopes: Slopes, *, contradicted: bool) -> I
 def _product(witness: Witness, number: int) -> Product:
     look = witness.look
     row, claim = look.claimed.vectors.random[number], look.claimed.random[number][look.places]
-    seen = witness.glance(claim, row=row)
+    seen, allowed = witness.glance(claim, row=row), witness.allowed(row)
     if seen.cut_short:
-        return _told(number, claim, seen, np.where(seen.confirmed, CONFIRMED, UNDECIDED), {}, np.zeros(1, np.intp))
+        code = np.where(seen.confirmed, CONFIRMED, UNDECIDED)
+        return _told(number, claim, seen, allowed, code, {}, np.zeros(1, np.intp))
     # A product of nothing but zeros may be the flat of a staircase, which the whole examination knows.
     blank = not claim.any() and not seen.value.any()
     code = np.where(seen.confirmed & (not blank), CONFIRMED, UNDECIDED)
@@ -171,7 +188,7 @@ def _product(witness: Witness, number: int) -> Product:
         return witness.examined(claim[which, None], which, rows=row[None])
 
     parts, last = _resolved(seen, code, examine)
-    return _told(number, claim, seen, code, parts, last)
+    return _told(number, claim, seen, allowed, code, parts, last)
 
 
 def _resolved(
@@ -211,6 +228,7 @@ def _told(
     number: int,
     claim: Array,
     seen: Glance,
+    allowed: Array,
     code: IntArray,
     parts: dict[int, tuple[Examined, int]],
     last: IntArray,
@@ -233,6 +251,7 @@ def _told(
         off=off,
         ratio=common_ratio(claim[off], seen.value[off], seen.bound[off]),
         bound=seen.bound,
+        allowed=allowed,
     )
 
 

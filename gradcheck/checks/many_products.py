@@ -94,7 +94,7 @@ def _visible(look: Curvatures, products: list[Product]) -> str:
         reach = float(np.abs(look.claimed.vectors.random[product.number, look.able]).min())
         claim = look.claimed.random[product.number][look.places]
         with np.errstate(invalid="ignore", over="ignore"):
-            off = look.measure.abs_tol + look.measure.rel_tol * np.abs(claim) + 4 * product.bound
+            off = product.allowed + look.measure.rel_tol * np.abs(claim) + 4 * product.bound
         least = np.fmin(least, off / reach)
     if not np.isfinite(least).any():
         return looked

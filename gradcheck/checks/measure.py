@@ -1,6 +1,7 @@
 """To how many digits a claim is judged: by what was asked for, and by the precision that the numbers come in."""
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -17,13 +18,14 @@ class Measure:
     ----------
     precision : str
         The dtype that values or claim come in.
-    unit_roundoff, rel_tol, abs_tol : float
+    unit_roundoff, rel_tol : float
+    abs_tol : float, or ndarray broadcastable to the claim
     """
 
     precision: str
     unit_roundoff: float
     rel_tol: float
-    abs_tol: float
+    abs_tol: Any
 
     @property
     def slack(self) -> Slack:

@@ -96,7 +96,7 @@ class Desk:
         centre: Array,
         typical: Array,
         rel_tol: float,
-        abs_tol: float,
+        abs_tol: float | Array,
         unit_roundoff: float,
         magnitude: Array | None = None,
     ) -> None:

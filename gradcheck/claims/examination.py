@@ -43,7 +43,7 @@ def examine(
     typical: Array,
     *,
     rel_tol: float,
-    abs_tol: float,
+    abs_tol: float | Array,
     unit_roundoff: float = np.finfo(float).eps / 2,
     witnesses: Sequence[str] = WITNESSES,
     magnitude: Array | None = None,

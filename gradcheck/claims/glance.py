@@ -48,7 +48,7 @@ def glance(
     typical: Array,
     *,
     rel_tol: float,
-    abs_tol: float,
+    abs_tol: float | Array,
     unit_roundoff: float,
     magnitude: Array,
 ) -> Inquiry[Glance]:
