@@ -4,6 +4,7 @@ A quick look confirms a right product as a whole. Only the entries that it leave
 examined in full; where the claim is refuted the rest is counted.
 """
 
+import itertools
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
 
@@ -26,8 +27,9 @@ from gradcheck.witnesses.steps import room_along
 
 #: Open entries that are examined in full before the others: enough to refute.
 WORST = 32
-#: Open entries that are examined in full at once; between them the time is looked at.
-AT_ONCE = 20_000
+#: Once entries stay open after the whole examination the product is no longer confirmed: no more than so many are
+#: examined then, for one that is refuted. Else all are, so many at once; between them the time is looked at.
+OPEN_MOST, AT_ONCE = 256, 20_000
 #: Refuted products, or broken identities, after which nothing more is looked at.
 ENOUGH = 2
 UNDECIDED, CONFIRMED, REFUTED = range(3)
@@ -50,6 +52,8 @@ class Product:
         Entries that were seen to differ, whether they were examined in full or not.
     ratio : float
         Claim over witness where that is the same in all these entries; else NaN.
+    left_open : int
+        Entries that are neither confirmed nor seen to differ.
     bound : ndarray, shape (m·n,)
     allowed : ndarray, shape (m·n,)
         What the entries may be off because errors of their terms add up.
@@ -61,6 +65,7 @@ class Product:
     examined: Examined
     off: BoolArray
     ratio: float
+    left_open: int
     bound: Array
     allowed: Array
 
@@ -208,20 +213,22 @@ def _resolved(
         verdict = part.verdict[:, 0]
         code[last[verdict == Verdict.CONFIRMED]] = CONFIRMED
         code[last[verdict == Verdict.REFUTED]] = REFUTED
-        seen.value[last], seen.bound[last] = part.value[:, 0], part.bound[:, 0]
+        known = np.isfinite(part.bound[:, 0])
+        seen.value[last[known]], seen.bound[last[known]] = part.value[known, 0], part.bound[known, 0]
         telling = np.flatnonzero(verdict != Verdict.CONFIRMED)[:WORST]
         found |= {int(last[i]): (part, int(i)) for i in telling}
         if (code == REFUTED).any() or (part.reason == SPENT).any():
+            break
+        if stop >= OPEN_MOST and (code[open_[:stop]] == UNDECIDED).any():
             break
     return found, last
 
 
 def _pieces(many: int) -> Iterator[tuple[int, int]]:
     """The worst ones, then the others in pieces."""
-    first, stop = 0, WORST
-    while first < many:
-        yield first, min(stop, many)
-        first, stop = stop, stop + AT_ONCE
+    edges = [0, WORST, *range(OPEN_MOST, many, AT_ONCE)]
+    edges = [edge for edge in edges if edge < many]
+    yield from itertools.pairwise([*edges, many] if many else [])
 
 
 def _told(
@@ -250,6 +257,7 @@ def _told(
         examined=examined,
         off=off,
         ratio=common_ratio(claim[off], seen.value[off], seen.bound[off]),
+        left_open=int(np.count_nonzero((code == UNDECIDED) & ~off)),
         bound=seen.bound,
         allowed=allowed,
     )

@@ -42,9 +42,9 @@ def equation(kind: str, identity: str) -> str:
 def contradictions(claimed: Claimed, measure: Measure, name: Callable[[int], str]) -> list[Contradiction]:
     """Where a claimed product is not linear in its vector; `name` names the entries of a product.
 
-    A claim that raised has another story to tell.
+    A claim that raised has another story to tell, one that was not asked has none.
     """
-    if claimed.finding is not None:
+    if claimed.finding is not None or claimed.refused:
         return []
     first, second = claimed.random[:2]
     order = ("scaling", "negation", "sum", "zero vector")

@@ -31,7 +31,8 @@ def along_vectors(look: Curvatures, slopes: Slopes, source: str, *, contradicted
     products = [_sourced(each, source) for each in products_along(look, slopes, contradicted=contradicted)]
     entries = _entries(look, products)
     refuted = [product for product in products if product.verdict == Verdict.REFUTED]
-    seen = Seen(entries=entries, directions=_directions(products), notices=(_visible(look, products),))
+    notices = (_visible(look, products), *_left_open(look, products))
+    seen = Seen(entries=entries, directions=_directions(products), notices=notices)
     if not refuted:
         return seen
     off = np.logical_or.reduce([product.off for product in refuted])
@@ -55,6 +56,15 @@ def _entries(look: Curvatures, products: list[Product]) -> Entries:
     for part in parts[1:]:
         whole = appended(whole, part)
     return whole
+
+
+def _left_open(look: Curvatures, products: list[Product]) -> tuple[str, ...]:
+    """How much of the undecided products is open: the report tells a few entries only."""
+    undecided = [product for product in products if product.verdict == Verdict.UNDECIDED]
+    most = max((product.left_open for product in undecided), default=0)
+    if most <= TOLD:
+        return ()
+    return (f"up to {most:,} of {count(look.places.size, 'entry', 'entries')} of a product H·v are left open",)
 
 
 def _directions(products: list[Product]) -> DirectionChecks:

@@ -28,12 +28,15 @@ class Claimed:
         One row a vector, those of the identities last; NaN where the claim raised.
     finding : Finding or None
         Where it raised.
+    refused : bool
+        Whether the budget or the time ended before it was asked; it has said nothing then.
     """
 
     kind: str
     vectors: Vectors
     products: Array
     finding: Finding | None
+    refused: bool = False
 
     @property
     def judged(self) -> Array:
@@ -87,7 +90,8 @@ def claimed_products(session: Session, function: str, kind: str, vectors: Vector
     if raised:
         which = f"for {len(raised)} of {count(len(rows), 'vector')}" if len(raised) < len(rows) else "for every vector"
         finding = failing_claim(subject, function, kind, f"{which}; the first time: {next(iter(raised.values()))}")
-    return Claimed(kind=kind, vectors=vectors, products=reply.values[:, 0], finding=finding)
+    refused = bool(reply.refused.any())
+    return Claimed(kind=kind, vectors=vectors, products=reply.values[:, 0], finding=finding, refused=refused)
 
 
 def _automatic(session: Session, function: str, kind: str, source: str, rows: Array) -> Array:

@@ -20,7 +20,8 @@ def wrong_rows(
 ) -> Diagnosis:
     """The diagnosis; `names` are those of the wrong second derivatives among the examples."""
     which = f" ({listed(wrong.names)})" if wrong.many <= NAMED else ""
-    text = f"{wrong.many:,} of {count(wrong.of, 'entry', 'entries')} of H·v are wrong{which}"
+    verb = "is" if wrong.many == 1 else "are"
+    text = f"{wrong.many:,} of {count(wrong.of, 'entry', 'entries')} of H·v {verb} wrong{which}"
     code = DiagnosisCode.UNKNOWN
     if np.isfinite(wrong.ratio):
         flipped = abs(wrong.ratio + 1) < 1e-6
