@@ -96,7 +96,7 @@ def _same(table: EntryTable, place: int, others: IntArray) -> BoolArray:
 def repetitions(kind: str, rows: IntArray, columns: IntArray) -> tuple[list[Repetition], BoolArray]:
     """Faults that repeat with a step of rows and columns, the longest first; and which faults these are.
 
-    A transcription over time, or a discretisation over cells, makes the same mistake in every step: rows r, r + s,
+    A model that is discretised in time or over cells makes the same mistake in every step: rows r, r + s,
     r + 2s, ... with columns c, c + t, c + 2t, ...
 
     Parameters
