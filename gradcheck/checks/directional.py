@@ -5,26 +5,22 @@ from dataclasses import replace
 
 import numpy as np
 
-from gradcheck.checks.asked_again import answered_again, asking, second_answer
+from gradcheck.checks.asked_again import answered_again, second_answer
 from gradcheck.checks.claimed import claimed_matrix
 from gradcheck.checks.measure import Measure, measure_of
-from gradcheck.checks.notices import few_digits, left_out, raised
+from gradcheck.checks.told import told
 from gradcheck.claims.desk import Examined
 from gradcheck.claims.directions import LEAST, Group
-from gradcheck.claims.entries import diagnoses_of, entries_of
 from gradcheck.claims.examination import examine
 from gradcheck.claims.joint_examination import APART, Culprit, JointlyExamined, examine_jointly
 from gradcheck.claims.policy import Rules
 from gradcheck.claims.rule import Tolerance, judge
-from gradcheck.counsel.claim_findings import kinks_at_point, levels_at_point, mutation
 from gradcheck.evaluation.conduct import addressed, conduct_one
 from gradcheck.evaluation.pipeline import Session
 from gradcheck.problem.subject import Subject
 from gradcheck.records.arrays import Array, IntArray
-from gradcheck.records.finding import Finding
 from gradcheck.records.report import CheckReport, Coverage, DirectionChecks
 from gradcheck.records.verdict import Verdict
-from gradcheck.report.check_text import check_text
 from gradcheck.witnesses.finite_difference import SOURCE
 from gradcheck.witnesses.steps import room_along
 from gradcheck.wording import count, listed, number
@@ -64,47 +60,17 @@ def checked_directions(
     if changed.size:  # entries were looked at in between
         second = second_answer(session, function, kind)
     repeated = answered_again(session, function, kind, examined, columns, measure, second)
-    examined = repeated.examined
-    findings: list[Finding] = [failure] if failure else []
-    findings += kinks_at_point(subject, function, examined.left, examined.right, columns)
-    findings += levels_at_point(subject, function, examined.jumps, examined.stairs, columns)
-    findings += mutation(subject, session.ledger)
-    entries = entries_of(subject, function, kind, examined, columns)
+    report = told(session, function, kind, repeated, columns, centre, measure, rules, failure)
+    entries = report.entries
     directions = _direction_checks(subject, claim, joint, any(v == Verdict.REFUTED for v in entries.verdict))
-    return CheckReport(
+    return replace(
+        report,
         verdict=Verdict.overall([*entries.verdict, *directions.verdict]),
-        kind=kind,
-        function=function,
-        point=subject.start,
-        entries=entries,
         directions=directions,
-        diagnoses=raised(failure, entries)
-        if failure
-        else (
-            *repeated.diagnoses,
-            *diagnoses_of(
-                subject,
-                function,
-                kind,
-                examined,
-                columns,
-                measure.rel_tol,
-                measure.abs_tol,
-                values=centre,
-                told=repeated.changed,
-                ask=asking(session, function, kind, columns),
-            ),
-        ),
-        findings=tuple(findings),
-        notices=(
-            *_everywhere(subject, joint),
-            *session.ledger.notices,
-            *left_out(subject),
-            *few_digits(measure.precision, rules.rel_tol),
-        ),
+        notices=(*_everywhere(subject, joint), *report.notices),
         evaluations=session.ledger.evaluations - before,
         seconds=time.perf_counter() - began,
-        renderer=check_text,
+        text="",
     )
 
 

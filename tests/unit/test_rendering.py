@@ -66,7 +66,7 @@ def test_a_text_is_made_once_and_only_when_it_is_read(made, rendered):
 def test_a_silent_check_or_estimate_renders_nothing(made, rendered, monkeypatch):
     renderer = Renderer()
     monkeypatch.setattr(
-        f"gradcheck.{'checks.entrywise' if rendered is check_text else 'estimating'}.{rendered.__name__}", renderer
+        f"gradcheck.{'checks.told' if rendered is check_text else 'estimating'}.{rendered.__name__}", renderer
     )
     made()
     assert renderer.asked == 0
